@@ -1,0 +1,2 @@
+/** The public library. */
+export { loadKernels } from "./kernels/module.js";

@@ -1,0 +1,112 @@
+/** The door to the WebAssembly kernels: one compiled module, and one memory for each job.
+ *
+ *     0 … __heap_base            the compiler's own tables
+ *     __heap_base … end          what a Workbench hands out, in order, each piece on a 64-byte boundary
+ *
+ * A Workbench is sized once and never grows, so its views stay valid for its whole life; it is released
+ * with the last reference to it. */
+import type { KernelExports } from "./exports.js";
+
+const PAGE_BYTES = 65536;
+const ALIGN_BYTES = 64;
+
+/** The compiled kernels. Cheap to keep; hold a Workbench only as long as its job lasts. */
+export class Kernels {
+  private readonly heapBase: number;
+
+  constructor(private readonly module: WebAssembly.Module) {
+    const probe = instantiate(module, new WebAssembly.Memory({ initial: 1 }));
+    this.heapBase = probe.__heap_base.value as number;
+  }
+
+  /** A fresh memory with room for `nBytes` handed out in at most `nPieces` pieces.
+   * @throws RangeError when the engine cannot give that much (WebAssembly addresses 4 GiB at the most). */
+  workbench(nBytes: number, nPieces = 64): Workbench {
+    const total = this.heapBase + nBytes + (nPieces + 1) * ALIGN_BYTES;
+    const pages = Math.ceil(total / PAGE_BYTES);
+    if (pages > 65536) throw new RangeError(`The job needs ${gib(total)} GiB of kernel memory; 4 GiB is the limit.`);
+    const memory = new WebAssembly.Memory({ initial: pages });
+    return new Workbench(instantiate(this.module, memory), memory, this.heapBase);
+  }
+}
+
+/** One job's memory: typed views into it, whose `byteOffset` is the pointer that a kernel takes. */
+export class Workbench {
+  private next: number;
+
+  constructor(
+    readonly call: KernelExports,
+    readonly memory: WebAssembly.Memory,
+    heapBase: number,
+  ) {
+    this.next = heapBase;
+  }
+
+  float32(n: number): Float32Array<ArrayBuffer> {
+    return new Float32Array(this.memory.buffer, this.reserve(4 * n), n);
+  }
+
+  float64(n: number): Float64Array<ArrayBuffer> {
+    return new Float64Array(this.memory.buffer, this.reserve(8 * n), n);
+  }
+
+  int32(n: number): Int32Array<ArrayBuffer> {
+    return new Int32Array(this.memory.buffer, this.reserve(4 * n), n);
+  }
+
+  uint8(n: number): Uint8Array<ArrayBuffer> {
+    return new Uint8Array(this.memory.buffer, this.reserve(n), n);
+  }
+
+  private reserve(nBytes: number): number {
+    const at = Math.ceil(this.next / ALIGN_BYTES) * ALIGN_BYTES;
+    if (at + nBytes > this.memory.buffer.byteLength) {
+      throw new RangeError(`Workbench of ${this.memory.buffer.byteLength} bytes has no room for ${nBytes} more.`);
+    }
+    this.next = at + nBytes;
+    return at;
+  }
+}
+
+let loading: Promise<Kernels> | undefined;
+
+/** Loads the kernels when first asked for and keeps them.
+ * `source`: where the module lies (default: beside this file), or its bytes.
+ * @throws Error when what is found there is not a WebAssembly module. */
+export function loadKernels(source?: URL | Uint8Array): Promise<Kernels> {
+  if (source !== undefined) return compile(source);
+  loading ??= compile(new URL("./hatchel.wasm", import.meta.url));
+  return loading;
+}
+
+async function compile(source: URL | Uint8Array): Promise<Kernels> {
+  const bytes = source instanceof Uint8Array ? source : await fetchBytes(source);
+  const magic = [0x00, 0x61, 0x73, 0x6d];
+  if (magic.some((byte, i) => bytes[i] !== byte)) {
+    const found = [...bytes.subarray(0, 4)].map((b) => b.toString(16).padStart(2, "0")).join(" ") || "nothing";
+    const where = source instanceof Uint8Array ? "the bytes given" : source.pathname;
+    throw new Error(`${where}: starts with ${found}, but a WebAssembly module starts with 00 61 73 6d; rebuild it.`);
+  }
+  return new Kernels(await WebAssembly.compile(bytes as BufferSource));
+}
+
+async function fetchBytes(url: URL): Promise<Uint8Array> {
+  if (url.protocol === "file:") {
+    const { readFile } = await import("node:fs/promises");
+    return readFile(url);
+  }
+  const response = await fetch(url);
+  if (!response.ok) throw new Error(`${url.href}: HTTP status ${response.status} instead of the kernel module.`);
+  return new Uint8Array(await response.arrayBuffer());
+}
+
+function instantiate(module: WebAssembly.Module, memory: WebAssembly.Memory): KernelExports {
+  const abort = () => {
+    throw new Error("A kernel stopped at an impossible state; this is a defect of the program, not of the data.");
+  };
+  return new WebAssembly.Instance(module, { env: { memory, abort } }).exports as unknown as KernelExports;
+}
+
+function gib(nBytes: number): string {
+  return (nBytes / 2 ** 30).toFixed(1);
+}

@@ -1,0 +1,38 @@
+/** Tramlines: where each fibre's light runs over the detector, and how it spreads across its line. */
+
+export type FibreState = "lit" | "dim" | "dead";
+
+/** Gaussian integrated over pixels; its width follows x as a Legendre series of its own for each fibre. */
+export interface GaussianProfile {
+  kind: "gaussian";
+  /** nFibre × (widthDegree + 1): σ(x), pixels. */
+  sigma: Float64Array;
+  widthDegree: number;
+  /** The profile's own relative error ε: how far data may stray from flux × profile before noise. */
+  relativeError: number;
+}
+
+export type Profile = GaussianProfile;
+
+export interface Tramlines {
+  nx: number;
+  ny: number;
+  nFibre: number;
+  degree: number;
+  /** nFibre, from 1 in slit order; a fibre is never renumbered, dead or not. */
+  fibre: Int32Array;
+  state: FibreState[];
+  /** nFibre, from 1. */
+  block: Int32Array;
+  /** nFibre × (degree + 1): y(x) in pixels, x ∈ [0, nx − 1] mapped to [−1, 1]. */
+  legendre: Float64Array;
+  /** nFibre: first and last column in which the fibre was seen. */
+  seenFrom: Int32Array;
+  seenTo: Int32Array;
+  /** nFibre: scatter of the measured centres about y(x), pixels; NaN for a fibre filled from its neighbours. */
+  rms: Float64Array;
+  /** nFibre: centres kept in the fit. */
+  nPoint: Int32Array;
+  profile: Profile;
+  geometryDigest: string;
+}
