@@ -1,6 +1,14 @@
 /** What the WebAssembly module exports, as TypeScript sees it: pointers are byte offsets into the memory. */
 export interface KernelExports {
-  readonly __heap_base: WebAssembly.Global;
+  /** assembly/index.ts: first byte that a workbench may hand out. */
+  heapBase(): number;
+
+  /** assembly/banded.ts */
+  bandedSystems32(bandPtr: number, n: number, b: number, rhsPtr: number, inversePtr: number): void;
+  bandedSystems64(bandPtr: number, n: number, b: number, rhsPtr: number, inversePtr: number): void;
+
+  /** assembly/erf.ts */
+  erf(x: number): number;
 
   /** assembly/legendre.ts */
   legendreValue(coefPtr: number, nCoef: number, t: number): number;

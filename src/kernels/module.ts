@@ -1,7 +1,7 @@
 /** The door to the WebAssembly kernels: one compiled module, and one memory for each job.
  *
- *     0 … __heap_base            the compiler's own tables
- *     __heap_base … end          what a Workbench hands out, in order, each piece on a 64-byte boundary
+ *     0 … heapBase()             the compiler's own tables
+ *     heapBase() … end           what a Workbench hands out, in order, each piece on a 64-byte boundary
  *
  * A Workbench is sized once and never grows, so its views stay valid for its whole life; it is released
  * with the last reference to it. */
@@ -15,8 +15,7 @@ export class Kernels {
   private readonly heapBase: number;
 
   constructor(private readonly module: WebAssembly.Module) {
-    const probe = instantiate(module, new WebAssembly.Memory({ initial: 1 }));
-    this.heapBase = probe.__heap_base.value as number;
+    this.heapBase = instantiate(module, new WebAssembly.Memory({ initial: 1 })).heapBase();
   }
 
   /** A fresh memory with room for `nBytes` handed out in at most `nPieces` pieces.
