@@ -12,4 +12,18 @@ export interface KernelExports {
 
   /** assembly/legendre.ts */
   legendreValue(coefPtr: number, nCoef: number, t: number): number;
+  legendreFitClipped(
+    tPtr: number,
+    yPtr: number,
+    weightPtr: number,
+    n: number,
+    nCoef: number,
+    kappa: number,
+    maxRounds: number,
+    coefPtr: number,
+    scratchPtr: number,
+  ): number;
+
+  /** assembly/centroid.ts */
+  centroid(dataPtr: number, goodPtr: number, n: number, centre: number, halfWidth: number, background: number): number;
 }
