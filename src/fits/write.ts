@@ -1,0 +1,106 @@
+/** Files written whole or not at all: to a temporary name in the same folder, then renamed. */
+import { randomBytes } from "node:crypto";
+import fs from "node:fs";
+import { basename, dirname, join } from "node:path";
+import { encodeHdus, type OutputHdu } from "./encode.js";
+import { FitsError } from "./errors.js";
+
+export interface WriteOptions {
+  /** Replace a file that is there already. */
+  force?: boolean | undefined;
+  /** Files that were read to make this one: they are never written on, `force` or not. */
+  inputs?: readonly string[] | undefined;
+}
+
+/** Writes `hdus` to `path`; "-" is standard output; what is no plain file (a pipe, a device) is written to directly.
+ * @throws FitsError when the file exists and `force` is not given, is one of the inputs, or cannot be written; nothing
+ * is left behind then. */
+export async function writeFits(path: string, hdus: readonly OutputHdu[], options: WriteOptions = {}): Promise<void> {
+  if (path === "-") return writeToStandardOutput(hdus);
+  refuseToHarm(path, options);
+  const there = fs.statSync(path, { throwIfNoEntry: false });
+  if (there !== undefined && !there.isFile()) return failingAsOutput(path, () => writePieces(path, "w", hdus));
+  // A link is followed: it is the file behind it that is replaced.
+  const target = there === undefined ? path : fs.realpathSync(path);
+  const temporary = join(dirname(target), `.${basename(target)}.${randomBytes(6).toString("hex")}.part`);
+  failingAsOutput(path, () => {
+    try {
+      writePieces(temporary, "wx", hdus);
+      refuseToHarm(path, options);
+      fs.renameSync(temporary, target);
+    } catch (error) {
+      fs.rmSync(temporary, { force: true });
+      throw error;
+    }
+  });
+}
+
+/** Checks, before any work is done, that `writeFits` would be allowed to write there.
+ * @throws FitsError as `writeFits`. */
+export function refuseToHarm(path: string, options: WriteOptions): void {
+  if (path === "-") return;
+  const there = failingAsOutput(path, () => fs.statSync(path, { throwIfNoEntry: false, bigint: true }));
+  if (there === undefined) return;
+  if (there.isDirectory()) throw new FitsError("output", "this is a folder", "name a file in it", { file: path });
+  for (const input of options.inputs ?? []) {
+    const other = fs.statSync(input, { throwIfNoEntry: false, bigint: true });
+    if (other !== undefined && other.dev === there.dev && other.ino === there.ino && there.isFile()) {
+      throw new FitsError("output", "the output would be written on an input", "give it another name", { file: path });
+    }
+  }
+  if (there.isFile() && options.force !== true) {
+    throw new FitsError("output", "this file exists already", "give another name, or --force to replace it", {
+      file: path,
+    });
+  }
+}
+
+function writePieces(path: string, flags: string, hdus: readonly OutputHdu[]): void {
+  const file = fs.openSync(path, flags);
+  try {
+    for (const piece of encodeHdus(hdus)) {
+      for (let at = 0; at < piece.length; ) at += fs.writeSync(file, piece, at);
+    }
+  } finally {
+    fs.closeSync(file);
+  }
+}
+
+async function writeToStandardOutput(hdus: readonly OutputHdu[]): Promise<void> {
+  for (const piece of encodeHdus(hdus)) {
+    await new Promise<void>((resolve, reject) => {
+      process.stdout.write(piece, (error) => (error ? reject(cannotWrite("standard output", error)) : resolve()));
+    });
+  }
+}
+
+function failingAsOutput<T>(path: string, work: () => T): T {
+  try {
+    return work();
+  } catch (error) {
+    if (error instanceof FitsError) {
+      throw error.file === undefined
+        ? new FitsError(error.code, error.finding, error.remedy, { ...error, file: path })
+        : error;
+    }
+    throw cannotWrite(path, error as NodeJS.ErrnoException);
+  }
+}
+
+const REASONS: Record<string, [finding: string, remedy: string]> = {
+  ENOENT: ["the folder does not exist", "make it first"],
+  ENOTDIR: ["a part of this path is not a folder", "give another name"],
+  EACCES: ["this place may not be written to", "give another name or change its permissions"],
+  EROFS: ["this place is read-only", "write elsewhere"],
+  ENOSPC: ["the disk is full", "make room or write elsewhere"],
+  ENAMETOOLONG: ["the name is too long", "shorten it"],
+  EPIPE: ["nobody reads the pipe any more", "keep its reader running"],
+};
+
+function cannotWrite(path: string, error: NodeJS.ErrnoException): FitsError {
+  const [finding, remedy] = REASONS[error.code ?? ""] ?? [
+    `writing failed (${error.code ?? error.message})`,
+    "write elsewhere",
+  ];
+  return new FitsError("output", finding, remedy, { file: path });
+}
