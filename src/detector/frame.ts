@@ -2,32 +2,10 @@
  *
  * Pixels count from 0 with centres on whole numbers; images are row-major, index = y · nx + x. */
 import type { Header } from "../fits/header.js";
+import type { NoiseIngredients } from "../reference/variance.js";
 
-/** Bits of `Frame.mask`. A pixel with any bit set takes no part in a fit. */
-export const MaskBit = {
-  bad: 1,
-  saturated: 2,
-  /** NaN, BLANK or a dropped readout: there is no value. */
-  missing: 4,
-} as const;
-
-/** Variance is never taken from the data. Its ingredients, for a pixel whose model is m electrons:
- *
- *     v = fixed + max(m, 0) / r + responseRelativeVariance · m²      e⁻²
- *
- * fixed = (readNoise² + dark·t) / r² + variance of bias and dark stacks; r the pixel response. */
-export interface NoiseIngredients {
-  /** ny: which row of `fixedVariance` holds for this row of the frame. */
-  bandOfRow: Uint8Array;
-  /** nBand × nx, e⁻²: used where no calibration image enters. */
-  fixedVariance: Float32Array;
-  /** ny × nx, e⁻²: replaces `fixedVariance` when present. */
-  fixedVarianceImage?: Float32Array;
-  /** ny × nx: 1/r; absent means 1. */
-  inverseResponse?: Float32Array;
-  /** ny × nx: (σ_r / r)²; absent means 0. */
-  responseRelativeVariance?: Float32Array;
-}
+export { MaskBit } from "../reference/bits.js";
+export type { NoiseIngredients } from "../reference/variance.js";
 
 /** Which pixels of which readout a frame is made of; frames and tramlines only go together when this agrees. */
 export interface DetectorGeometry {
