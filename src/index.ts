@@ -7,3 +7,16 @@ export { type Card, type CardValue, Header } from "./fits/header.js";
 export { formatSection, parseSection, type Section, sectionSize } from "./fits/sections.js";
 export { type WriteOptions, writeFits } from "./fits/write.js";
 export { loadKernels } from "./kernels/module.js";
+export { type SimulatedExposure, simulateExposure, type Truth } from "./simulate/exposure.js";
+export {
+  type SimulationFiles,
+  type SimulationOptions,
+  simulationFiles,
+  spectrographToml,
+  writeExposure,
+  writeObserverFiles,
+  writeSimulation,
+} from "./simulate/files.js";
+export { parseScene, readScene, type Scene, SceneError, type SceneExposure } from "./simulate/scene.js";
+export { SCENES } from "./simulate/scenes.js";
+export type { TrueLine } from "./simulate/spectra.js";

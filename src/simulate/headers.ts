@@ -1,8 +1,7 @@
 /** The cards that an observer finds in a raw frame. */
 import type { Card, CardValue } from "../fits/header.js";
-import type { ReadoutLayout } from "./readoutLayout.js";
+import { type ReadoutLayout, sectionOf } from "./readoutLayout.js";
 import type { ExposureKind, Scene, SceneExposure } from "./scene.js";
-import { formatSection } from "./sections.js";
 
 const IMAGE_TYPES: Record<ExposureKind, string> = {
   bias: "bias",
@@ -36,11 +35,9 @@ export function exposureCards(scene: Scene, exposure: SceneExposure, layout: Rea
     ...layout.amplifiers.flatMap(({ data, overscan, place }, i) => [
       card(`GAIN${i + 1}`, detector.amplifier[i].gain, "[electron/adu]"),
       card(`RDNOISE${i + 1}`, detector.amplifier[i].read_noise, "[electron]"),
-      card(`DATASEC${i + 1}`, formatSection(data), "its pixels in this file"),
-      ...(overscan.x1 > overscan.x0
-        ? [card(`BIASSEC${i + 1}`, formatSection(overscan), "its overscan in this file")]
-        : []),
-      card(`CCDSEC${i + 1}`, formatSection(place), "where its pixels go when assembled"),
+      card(`DATASEC${i + 1}`, sectionOf(data), "its pixels in this file"),
+      ...(overscan.x1 > overscan.x0 ? [card(`BIASSEC${i + 1}`, sectionOf(overscan), "its overscan in this file")] : []),
+      card(`CCDSEC${i + 1}`, sectionOf(place), "where its pixels go when assembled"),
     ]),
   ];
 }
