@@ -24,6 +24,26 @@ export interface KernelExports {
     scratchPtr: number,
   ): number;
 
+  /** assembly/centring.ts */
+  centringScratchBytes(nRow: number, nFibre: number, nPar: number, neighbours: number, reach: number, nBack: number): number;
+  centreFibres(
+    dataPtr: number,
+    weightPtr: number,
+    nRow: number,
+    centrePtr: number,
+    sigmaPtr: number,
+    nFibre: number,
+    nPar: number,
+    neighbours: number,
+    reach: number,
+    nBack: number,
+    solutionPtr: number,
+    variancePtr: number,
+    modelPtr: number,
+    backgroundPtr: number,
+    scratchPtr: number,
+  ): void;
+
   /** assembly/centroid.ts */
   centroid(dataPtr: number, goodPtr: number, n: number, centre: number, halfWidth: number, background: number): number;
 }
