@@ -1,0 +1,88 @@
+/** Amplifiers put together: counts above the zero level times gain, dispersion along x, before any calibration image.
+ *
+ *     dispersion along axis 1: x = axis 1, y = axis 2;   along axis 2: x = axis 2, y = axis 1 (transposed) */
+import type { Section } from "../fits/sections.js";
+import type { Amplifier, DetectorLayout } from "./amplifiers.js";
+import { MaskBit } from "./frame.js";
+import { type MissingFound, markMissing } from "./missing.js";
+import { type OverscanLevel, overscanLevel } from "./overscan.js";
+import type { RawImage } from "./raw.js";
+import { markSaturated } from "./saturation.js";
+
+/** Part of the turned frame that one amplifier read: x0 ≤ x < x1, y0 ≤ y < y1. */
+export interface Region {
+  x0: number;
+  x1: number;
+  y0: number;
+  y1: number;
+  /** e⁻²: read noise, the zero level's own variance (mean over the region) and jitter of lines. */
+  readVariance: number;
+  amplifier: Amplifier;
+  overscan?: OverscanLevel;
+}
+
+export interface Assembled {
+  name: string;
+  nx: number;
+  ny: number;
+  /** ny × nx, e⁻; NaN where there is no value. */
+  electrons: Float32Array;
+  /** ny × nx, bits of MaskBit. */
+  mask: Uint8Array;
+  regions: Region[];
+  layout: DetectorLayout;
+  missing: MissingFound;
+  nSaturated: number;
+}
+
+/** Takes the zero level off and multiplies by the gain. Saturation and missing values become mask bits first.
+ * Where there is neither overscan nor bias_level the pedestal stays in: the bias stack must take it off. */
+export function assemble(raw: RawImage, layout: DetectorLayout): Assembled {
+  const levels = layout.amplifiers.map((amplifier) => overscanLevel(raw, amplifier));
+  const fileMask = new Uint8Array(raw.nx * raw.ny);
+  const nSaturated = markSaturated(fileMask, raw, layout);
+  const missing = markMissing(fileMask, raw, layout, levels);
+  const { axis1, axis2 } = layout.geometry;
+  const turned = layout.dispersionAxis === 2;
+  const [nx, ny] = turned ? [axis2, axis1] : [axis1, axis2];
+  const electrons = new Float32Array(nx * ny).fill(Number.NaN);
+  const mask = new Uint8Array(nx * ny).fill(MaskBit.missing);
+  const stride1 = turned ? nx : 1;
+  const stride2 = turned ? 1 : nx;
+  layout.amplifiers.forEach((amplifier, i) => {
+    const { data, place } = amplifier;
+    for (let y = data.y1; y <= data.y2; y++) {
+      let to = (place.x1 - 1) * stride1 + (place.y1 - 1 + y - data.y1) * stride2;
+      for (let x = data.x1; x <= data.x2; x++, to += stride1) {
+        const from = (y - 1) * raw.nx + x - 1;
+        mask[to] = fileMask[from];
+        if (fileMask[from] & MaskBit.missing) continue;
+        electrons[to] = amplifier.gain * (raw.data[from] - zeroLevel(amplifier, levels[i], x, y));
+      }
+    }
+  });
+  const regions = layout.amplifiers.map((amplifier, i) => regionOf(amplifier, levels[i], turned));
+  return { name: raw.name, nx, ny, electrons, mask, regions, layout, missing, nSaturated };
+}
+
+function zeroLevel(amplifier: Amplifier, level: OverscanLevel | undefined, x: number, y: number): number {
+  if (level === undefined) return amplifier.biasLevelAdu ?? 0;
+  return level.level[amplifier.levelFor === "rows" ? y - amplifier.data.y1 : x - amplifier.data.x1];
+}
+
+function regionOf(amplifier: Amplifier, overscan: OverscanLevel | undefined, turned: boolean): Region {
+  const { x1, x2, y1, y2 }: Section = amplifier.place;
+  const [x0, xEnd, y0, yEnd] = turned ? [y1 - 1, y2, x1 - 1, x2] : [x1 - 1, x2, y1 - 1, y2];
+  const region: Region = { x0, x1: xEnd, y0, y1: yEnd, readVariance: readVarianceOf(amplifier, overscan), amplifier };
+  if (overscan) region.overscan = overscan;
+  return region;
+}
+
+function readVarianceOf(amplifier: Amplifier, overscan: OverscanLevel | undefined): number {
+  const { gain, readNoise } = amplifier;
+  const measured = overscan ? gain * overscan.readNoiseAdu : Number.NaN;
+  const readNoiseElectrons = Number.isNaN(readNoise) ? measured : readNoise;
+  if (overscan === undefined) return readNoiseElectrons ** 2;
+  const level = overscan.levelVariance.reduce((sum, value) => sum + value, 0) / overscan.levelVariance.length;
+  return readNoiseElectrons ** 2 + gain * gain * (level + overscan.jitterVariance);
+}

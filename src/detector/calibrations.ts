@@ -1,0 +1,207 @@
+/** Calibration images from stacks of frames: bias structure, dark current, pixel response, bad pixels.
+ *
+ *     bias     B  = mean over frames of gain·(ADU − overscan)
+ *     dark     D  = Σ(e − B) / Σ t          e⁻/s
+ *     response r  = flat / its large-scale shape, flats normalised to their levels first */
+import type { Spectrograph } from "../spectrograph.js";
+import { detectorLayout } from "./amplifiers.js";
+import { type Assembled, assemble, type Region } from "./assemble.js";
+import { badPixelMask } from "./badpixels.js";
+import { medianOf, thinned } from "./clip.js";
+import { combineFrames, type Stack } from "./combine.js";
+import { DetectorError } from "./detectorError.js";
+import { darkSeconds } from "./exposure.js";
+import type { DetectorGeometry } from "./frame.js";
+import { requireSameGeometry } from "./geometry.js";
+import type { RawImage } from "./raw.js";
+import { percent, refuseImpossible } from "./rawSanity.js";
+import { type PixelResponse, pixelResponse } from "./response.js";
+import { checkRole, MOST_RESPONSE_SCATTER, type Role } from "./roles.js";
+
+export interface DarkCurrent {
+  /** ny × nx, e⁻/s, and its variance without the bias stack's share. */
+  rate: Float32Array;
+  rateVariance: Float32Array;
+  /** Frames a second of dark time: how often the bias was taken off for each second, which ties its error to D's. */
+  biasPerSecond: number;
+  /** One a region: the rate where a pixel's own does not stand out of its noise, for variances only. */
+  typicalRate: number[];
+}
+
+/** All images are ny × nx of the turned frame. */
+export interface Calibrations {
+  /** Of which readout they are; absent when there is none. */
+  geometry?: DetectorGeometry;
+  /** A frame of that readout, for messages. */
+  geometryOf?: string;
+  bias?: Stack;
+  dark?: DarkCurrent;
+  response?: PixelResponse;
+  /** As it was read: image of the assembled frame, not 0 where a pixel is not to be used. */
+  badPixels?: RawImage;
+  /** Names of the frames that went in, by role: for HISTORY. */
+  names: { bias: string[]; dark: string[]; pixelFlat: string[]; badPixels: string[] };
+  assumptions: string[];
+  warnings: string[];
+}
+
+type Frames = Iterable<RawImage> | AsyncIterable<RawImage>;
+
+/** Raw frames by role; iterables are read one by one, so that a raw frame need not stay in memory. */
+export interface CalibrationFrames {
+  bias?: Frames;
+  dark?: Frames;
+  pixelFlat?: Frames;
+  badPixels?: RawImage;
+}
+
+/** More than this share of pixels clipped cannot be cosmic rays. */
+const MOST_CLIPPED = 0.02;
+
+/** Nothing given: nothing applied. */
+export function noCalibrations(): Calibrations {
+  return { names: { bias: [], dark: [], pixelFlat: [], badPixels: [] }, assumptions: [], warnings: [] };
+}
+
+/** Combines the frames of each role.
+ * @throws DetectorError for a frame that cannot play its role, and for frames of different readouts. */
+export async function makeCalibrations(frames: CalibrationFrames, spectrograph?: Spectrograph): Promise<Calibrations> {
+  const made = noCalibrations();
+  const bias = await assembled(frames.bias, "bias", made, spectrograph);
+  if (bias.length > 0) made.bias = stackBias(bias, made);
+  const dark = await assembled(frames.dark, "dark", made, spectrograph);
+  if (dark.length > 0) made.dark = stackDark(dark, made);
+  const flats = await assembled(frames.pixelFlat, "pixel flat", made, spectrograph);
+  if (flats.length > 0) made.response = stackFlats(flats, made);
+  if (frames.badPixels) {
+    if (made.geometry) badPixelMask(frames.badPixels, made.geometry); // complains early
+    made.badPixels = frames.badPixels;
+    made.names.badPixels.push(frames.badPixels.name);
+  }
+  return made;
+}
+
+interface CalibrationFrame extends Assembled {
+  seconds: number;
+}
+
+async function assembled(
+  frames: Frames | undefined,
+  role: Role,
+  made: Calibrations,
+  spectrograph: Spectrograph | undefined,
+): Promise<CalibrationFrame[]> {
+  const list: CalibrationFrame[] = [];
+  if (frames === undefined) return list;
+  const key = role === "pixel flat" ? "pixelFlat" : (role as "bias" | "dark");
+  for await (const raw of frames) {
+    refuseImpossible(raw, spectrograph);
+    const frame = assemble(raw, detectorLayout(raw, spectrograph));
+    if (made.geometry === undefined) {
+      made.geometry = frame.layout.geometry;
+      made.geometryOf = raw.name;
+    } else requireSameGeometry(made.geometry, made.geometryOf!, frame.layout.geometry, raw.name);
+    requireZeroLevel(frame, role, made);
+    // The check looks at the frame before bias structure is off: a few electrons do not matter to it.
+    made.warnings.push(...checkRole(raw, frame, role), ...frame.layout.warnings);
+    made.assumptions.push(...frame.layout.assumptions);
+    made.names[key].push(raw.name);
+    list.push({ ...frame, seconds: darkSeconds(raw) });
+  }
+  return list;
+}
+
+/** @throws DetectorError when nothing tells the zero level of a frame that is not itself a bias. */
+export function requireZeroLevel(frame: Assembled, role: Role | undefined, calibrations: Calibrations): void {
+  if (role === "bias" || calibrations.bias !== undefined) return;
+  const without = frame.regions.find(
+    ({ overscan, amplifier }) => overscan === undefined && amplifier.biasLevelAdu === undefined,
+  );
+  if (without === undefined) return;
+  throw new DetectorError(
+    `${frame.name}: amplifier ${without.amplifier.number} has no overscan and no bias frame was given, so its zero level is not known; give --bias, an overscan section, or bias_level in the spectrograph file.`,
+  );
+}
+
+function stackBias(frames: CalibrationFrame[], made: Calibrations): Stack {
+  const { nx, ny } = frames[0];
+  const stack = combineFrames(
+    frames.map((frame) => ({ ...frame, scale: 1 })),
+    nx,
+    ny,
+    false,
+  );
+  warnClipped(frames, stack, "bias", made);
+  return stack;
+}
+
+function stackDark(frames: CalibrationFrame[], made: Calibrations): DarkCurrent {
+  const { nx, ny, regions } = frames[0];
+  for (const frame of frames) subtractBias(frame, made.bias);
+  const stack = combineFrames(
+    frames.map((frame) => ({ ...frame, scale: frame.seconds })),
+    nx,
+    ny,
+    true,
+  );
+  warnClipped(frames, stack, "dark", made);
+  const seconds = frames.reduce((sum, frame) => sum + frame.seconds, 0);
+  return {
+    rate: stack.mean,
+    rateVariance: stack.variance,
+    biasPerSecond: made.bias ? frames.length / seconds : 0,
+    typicalRate: regions.map((region) => Math.max(0, medianOf(thinned(cutOut(stack.mean, nx, region))))),
+  };
+}
+
+function stackFlats(frames: CalibrationFrame[], made: Calibrations): PixelResponse {
+  const { nx, ny, regions } = frames[0];
+  for (const frame of frames) {
+    subtractBias(frame, made.bias);
+    subtractDark(frame, made.dark);
+  }
+  const stack = combineFrames(
+    frames.map((frame) => ({ ...frame, scale: levelOf(frame) })),
+    nx,
+    ny,
+    true,
+  );
+  warnClipped(frames, stack, "pixel flat", made);
+  const response = pixelResponse(stack, nx, ny, regions);
+  const worst = Math.max(...response.scatter);
+  if (!(worst < MOST_RESPONSE_SCATTER)) {
+    throw new DetectorError(
+      `${frames.map((frame) => frame.name).join(", ")}: given as pixel flats, but the pixels scatter by ${percent(worst)} about their large-scale shape where a few per cent are expected; ribbons or lines of light cannot serve, give frames of an evenly lit detector.`,
+    );
+  }
+  return response;
+}
+
+function levelOf(frame: CalibrationFrame): number {
+  return medianOf(thinned(frame.electrons));
+}
+
+function subtractBias(frame: CalibrationFrame, bias: Stack | undefined): void {
+  if (bias === undefined) return;
+  for (let i = 0; i < frame.electrons.length; i++) frame.electrons[i] -= bias.mean[i];
+}
+
+function subtractDark(frame: CalibrationFrame, dark: DarkCurrent | undefined): void {
+  if (dark === undefined || !(frame.seconds > 0)) return;
+  for (let i = 0; i < frame.electrons.length; i++) frame.electrons[i] -= dark.rate[i] * frame.seconds;
+}
+
+function cutOut(image: Float32Array, nx: number, { x0, x1, y0, y1 }: Region): Float32Array {
+  const out = new Float32Array((x1 - x0) * (y1 - y0));
+  for (let y = y0; y < y1; y++) out.set(image.subarray(y * nx + x0, y * nx + x1), (y - y0) * (x1 - x0));
+  return out;
+}
+
+function warnClipped(frames: CalibrationFrame[], { clippedShare }: Stack, role: Role, made: Calibrations): void {
+  clippedShare.forEach((share, i) => {
+    if (share <= MOST_CLIPPED) return;
+    made.warnings.push(
+      `${frames[i].name}: ${percent(share)} of its pixels disagree with the other ${role} frames by more than read noise and gain explain; the frame, or the gain or read noise in use, is wrong.`,
+    );
+  });
+}

@@ -1,0 +1,38 @@
+/** Levels of a picture in a few numbers: what a person looks at first, and what the sanity checks judge by. */
+import type { Assembled } from "./assemble.js";
+import { quantileOfSorted, sortedFinite, thinned } from "./clip.js";
+
+export interface Levels {
+  /** e⁻ above the zero level: 1, 5, 50, 95 and 99 % of the pixels lie below. */
+  p1: number;
+  p5: number;
+  median: number;
+  p95: number;
+  p99: number;
+  /** Share of pixels that saturated, before growing along bleeds. */
+  saturatedShare: number;
+  /** Share of pixels without a value. */
+  missingShare: number;
+}
+
+export function levelsOf(frame: Assembled): Levels {
+  const sorted = sortedFinite(thinned(frame.electrons));
+  const at = (q: number) => quantileOfSorted(sorted, q);
+  let nMissing = 0;
+  for (const value of frame.electrons) if (Number.isNaN(value)) nMissing++;
+  const n = frame.electrons.length;
+  return {
+    p1: at(0.01),
+    p5: at(0.05),
+    median: at(0.5),
+    p95: at(0.95),
+    p99: at(0.99),
+    saturatedShare: frame.nSaturated / n,
+    missingShare: nMissing / n,
+  };
+}
+
+/** The largest read noise among the amplifiers, e⁻: what "no light" is measured against. */
+export function largestReadNoise(frame: Assembled): number {
+  return Math.sqrt(Math.max(...frame.regions.map((region) => region.readVariance)));
+}

@@ -1,0 +1,202 @@
+/** A smooth curve through noisy samples: least squares with uniform cubic B-splines (de Boor, A Practical Guide to
+ * Splines, 1978), the number of intervals chosen by the data, wild samples clipped against the samples' own noise.
+ *
+ * The noise comes from differences of neighbouring samples, which a smooth drift hardly enters. Of 1, 2, 4, … intervals
+ * that one is taken which makes χ² + 4·(number of coefficients) least: an interval must earn its keep at 2 σ. */
+import { clippedScatter } from "./clip.js";
+
+const CLIP_SIGMAS = 5;
+const PRICE_OF_COEFFICIENT = 4;
+const MOST_INTERVALS = 64;
+
+export interface SmoothLevel {
+  /** n: the curve at every sample, also where there was none; held constant beyond the first and last sample. */
+  level: Float64Array;
+  /** n: its variance. */
+  variance: Float64Array;
+  /** Standard deviation of one sample about the curve. */
+  sampleSigma: number;
+  intervals: number;
+  nClipped: number;
+}
+
+/** Fits `samples` [n], NaN where there is none. Without any sample the level is NaN throughout. */
+export function fitSmoothLevel(samples: Float64Array): SmoothLevel {
+  const used = samples.slice();
+  const sampleSigma = noiseFromNeighbours(samples);
+  let fit = bestFit(used, sampleSigma);
+  let nClipped = 0;
+  for (let turn = 0; turn < 5; turn++) {
+    const clipped = clipAgainst(used, fit.level, CLIP_SIGMAS * sampleSigma);
+    nClipped += clipped;
+    if (clipped === 0) break;
+    fit = bestFit(used, sampleSigma);
+  }
+  return { ...fit, sampleSigma, nClipped };
+}
+
+/** σ of a sample: scatter of second differences s(i−1) − 2 s(i) + s(i+1), whose variance is 6 σ², blind to a slope. */
+function noiseFromNeighbours(samples: Float64Array): number {
+  if (samples.length < 3) return 0;
+  const differences = new Float64Array(samples.length - 2);
+  for (let i = 0; i < differences.length; i++) differences[i] = samples[i] - 2 * samples[i + 1] + samples[i + 2];
+  const sigma = clippedScatter(differences).sigma / Math.sqrt(6);
+  return Number.isFinite(sigma) ? sigma : 0;
+}
+
+function clipAgainst(used: Float64Array, level: Float64Array, reach: number): number {
+  let clipped = 0;
+  if (reach === 0) return 0;
+  for (let i = 0; i < used.length; i++) {
+    if (Math.abs(used[i] - level[i]) > reach) {
+      used[i] = Number.NaN;
+      clipped++;
+    }
+  }
+  return clipped;
+}
+
+interface Fit {
+  level: Float64Array;
+  variance: Float64Array;
+  intervals: number;
+}
+
+function bestFit(samples: Float64Array, sigma: number): Fit {
+  const [first, last] = extent(samples);
+  const n = samples.length;
+  let best: Fit = { level: new Float64Array(n).fill(Number.NaN), variance: new Float64Array(n), intervals: 0 };
+  if (last < first) return best;
+  if (last - first < 8) return constantFit(samples, sigma);
+  let bestCost = Number.POSITIVE_INFINITY;
+  for (let intervals = 1; intervals <= MOST_INTERVALS && (last - first) / intervals >= 4; intervals *= 2) {
+    const fit = splineFit(samples, first, last, intervals, sigma);
+    if (fit === undefined) break;
+    // Without noise every misfit counts; a unit of rounding keeps the cost finite.
+    const cost = fit.chi2 / Math.max(sigma * sigma, 1e-12) + PRICE_OF_COEFFICIENT * (intervals + 3);
+    if (cost < bestCost) {
+      bestCost = cost;
+      best = { level: fit.level, variance: fit.variance, intervals };
+    }
+  }
+  return best.intervals > 0 ? best : constantFit(samples, sigma);
+}
+
+function extent(samples: Float64Array): [number, number] {
+  let first = 0;
+  let last = samples.length - 1;
+  while (first < samples.length && Number.isNaN(samples[first])) first++;
+  while (last >= 0 && Number.isNaN(samples[last])) last--;
+  return [first, last];
+}
+
+function constantFit(samples: Float64Array, sigma: number): Fit {
+  let sum = 0;
+  let n = 0;
+  for (const sample of samples) {
+    if (Number.isNaN(sample)) continue;
+    sum += sample;
+    n++;
+  }
+  return {
+    level: new Float64Array(samples.length).fill(sum / n),
+    variance: new Float64Array(samples.length).fill((sigma * sigma) / n),
+    intervals: 0,
+  };
+}
+
+function splineFit(samples: Float64Array, first: number, last: number, intervals: number, sigma: number) {
+  const nCoef = intervals + 3;
+  const normal = new Float64Array(nCoef * nCoef);
+  const right = new Float64Array(nCoef);
+  const basis = new Float64Array(4);
+  // Levels ride on a pedestal of about a thousand counts: fit what is left of it, so that rounding stays small.
+  const pedestal = samples[first];
+  for (let i = first; i <= last; i++) {
+    if (Number.isNaN(samples[i])) continue;
+    const at = splineBasis(basis, ((i - first) / (last - first)) * intervals, intervals);
+    for (let a = 0; a < 4; a++) {
+      right[at + a] += basis[a] * (samples[i] - pedestal);
+      for (let b = 0; b < 4; b++) normal[(at + a) * nCoef + at + b] += basis[a] * basis[b];
+    }
+  }
+  const inverse = invertPositive(normal, nCoef);
+  if (inverse === undefined) return undefined;
+  const coef = new Float64Array(nCoef);
+  for (let a = 0; a < nCoef; a++) for (let b = 0; b < nCoef; b++) coef[a] += inverse[a * nCoef + b] * right[b];
+  return { ...evaluate(samples, first, last, intervals, coef, inverse, pedestal, sigma) };
+}
+
+function evaluate(
+  samples: Float64Array,
+  first: number,
+  last: number,
+  intervals: number,
+  coef: Float64Array,
+  inverse: Float64Array,
+  pedestal: number,
+  sigma: number,
+) {
+  const nCoef = coef.length;
+  const level = new Float64Array(samples.length);
+  const variance = new Float64Array(samples.length);
+  const basis = new Float64Array(4);
+  let chi2 = 0;
+  for (let i = 0; i < samples.length; i++) {
+    const inside = Math.min(Math.max(i, first), last);
+    const at = splineBasis(basis, ((inside - first) / (last - first)) * intervals, intervals);
+    let value = pedestal;
+    let leverage = 0;
+    for (let a = 0; a < 4; a++) {
+      value += basis[a] * coef[at + a];
+      for (let b = 0; b < 4; b++) leverage += basis[a] * basis[b] * inverse[(at + a) * nCoef + at + b];
+    }
+    level[i] = value;
+    variance[i] = sigma * sigma * leverage;
+    if (!Number.isNaN(samples[i])) chi2 += (samples[i] - value) ** 2;
+  }
+  return { level, variance, chi2 };
+}
+
+/** The four uniform cubic B-splines that are not 0 at t ∈ [0, intervals]; returns the index of the first. */
+function splineBasis(basis: Float64Array, t: number, intervals: number): number {
+  const at = Math.min(Math.floor(t), intervals - 1);
+  const u = t - at;
+  const v = 1 - u;
+  basis[0] = (v * v * v) / 6;
+  basis[1] = (3 * u * u * u - 6 * u * u + 4) / 6;
+  basis[2] = (3 * v * v * v - 6 * v * v + 4) / 6;
+  basis[3] = (u * u * u) / 6;
+  return at;
+}
+
+/** Inverse of a small symmetric positive matrix [n × n] by Cholesky; undefined when it is singular (a stretch of knots
+ * without samples). */
+export function invertPositive(matrix: Float64Array, n: number): Float64Array | undefined {
+  const root = new Float64Array(n * n);
+  for (let i = 0; i < n; i++) {
+    for (let j = 0; j <= i; j++) {
+      let sum = matrix[i * n + j];
+      for (let k = 0; k < j; k++) sum -= root[i * n + k] * root[j * n + k];
+      if (i === j) {
+        if (!(sum > 1e-12 * matrix[i * n + i])) return undefined;
+        root[i * n + i] = Math.sqrt(sum);
+      } else root[i * n + j] = sum / root[j * n + j];
+    }
+  }
+  const inverse = new Float64Array(n * n);
+  const column = new Float64Array(n);
+  for (let c = 0; c < n; c++) {
+    for (let i = 0; i < n; i++) {
+      let sum = i === c ? 1 : 0;
+      for (let k = 0; k < i; k++) sum -= root[i * n + k] * column[k];
+      column[i] = sum / root[i * n + i];
+    }
+    for (let i = n - 1; i >= 0; i--) {
+      let sum = column[i];
+      for (let k = i + 1; k < n; k++) sum -= root[k * n + i] * inverse[k * n + c];
+      inverse[i * n + c] = sum / root[i * n + i];
+    }
+  }
+  return inverse;
+}

@@ -1,0 +1,258 @@
+/** The spectrograph file: what an observer knows of detector, slit and lamps, in TOML. Every key may be left out. */
+import { readFile } from "node:fs/promises";
+import { basename, dirname, resolve } from "node:path";
+import { parse as parseToml, TomlError } from "smol-toml";
+import { z } from "zod";
+import { parseSection } from "./fits/sections.js";
+import { nearestKey } from "./nearestKey.js";
+
+const section = z.string().superRefine((text, context) => {
+  try {
+    parseSection(text);
+  } catch {
+    context.addIssue({ code: "custom", message: `a FITS section such as "[1:1024,1:910]"` });
+  }
+});
+const positive = z.number().positive();
+const count = z.int().positive();
+
+const amplifier = z.strictObject({
+  gain: positive.optional(),
+  read_noise: positive.optional(),
+  data: section.optional(),
+  overscan: z.union([section, z.array(section).min(1)]).optional(),
+  overscan_skip: z.int().nonnegative().optional(),
+  place: section.optional(),
+  bias_level: z.number().optional(),
+});
+
+const schema = z.strictObject({
+  name: z.string().optional(),
+  detector: z
+    .strictObject({
+      dispersion_axis: z.union([z.literal(1), z.literal(2)]).optional(),
+      saturation: positive.optional(),
+      bad_pixels: z.string().optional(),
+      amplifier: z.array(amplifier).optional(),
+    })
+    .optional(),
+  slit: z
+    .strictObject({
+      blocks: z.array(count).min(1).optional(),
+      pitch: positive.optional(),
+      gap: z.union([z.number().nonnegative(), z.array(z.number().nonnegative())]).optional(),
+      dead: z.array(count).optional(),
+      sky: z.array(count).optional(),
+    })
+    .optional(),
+  wavelength: z
+    .strictObject({
+      medium: z.enum(["air", "vacuum"]).optional(),
+      range: z.tuple([positive, positive]).optional(),
+      lamps: z.array(z.string()).optional(),
+    })
+    .optional(),
+});
+
+/** Keys of each table, and what a value must be, in words for a reader. */
+const KEYS: Record<string, Record<string, string>> = {
+  "": { name: "a string", detector: "a table", slit: "a table", wavelength: "a table" },
+  detector: {
+    dispersion_axis: "1 or 2",
+    saturation: "a number over 0, in ADU",
+    bad_pixels: "the name of a FITS file",
+    amplifier: "one or more [[detector.amplifier]] tables",
+  },
+  "detector.amplifier": {
+    gain: "a number over 0, in electrons per ADU",
+    read_noise: "a number over 0, in electrons",
+    data: 'a FITS section such as "[33:1056,1:910]"',
+    overscan: 'a FITS section such as "[1:32,1:910]", or a list of them',
+    overscan_skip: "a whole number of columns, 0 or more",
+    place: 'a FITS section such as "[1:1024,1:910]"',
+    bias_level: "a number, in ADU",
+  },
+  slit: {
+    blocks: "a list of whole numbers, the fibres of each block",
+    pitch: "a number over 0, in pixels",
+    gap: "a number of pixels, or a list with one for each gap between blocks",
+    dead: "a list of slit positions, counted from 1",
+    sky: "a list of slit positions, counted from 1",
+  },
+  wavelength: {
+    medium: '"air" or "vacuum"',
+    range: "two numbers over 0, in Å, at the first and at the last column",
+    lamps: 'a list of names such as ["Ne", "Ar"]',
+  },
+};
+
+/** One amplifier as the spectrograph file gives it; what is absent comes from the header. */
+export interface SpectrographAmplifier {
+  /** e⁻/ADU */
+  gain?: number;
+  /** e⁻ */
+  readNoise?: number;
+  /** FITS sections of the file. */
+  data?: string;
+  overscan?: string[];
+  /** Overscan columns beside the data that are left out. */
+  overscanSkip?: number;
+  /** FITS section of the assembled frame. */
+  place?: string;
+  /** ADU: taken off where there is no overscan. */
+  biasLevelAdu?: number;
+}
+
+export interface Spectrograph {
+  /** What to call the file in messages. */
+  file: string;
+  name?: string;
+  detector: {
+    dispersionAxis?: 1 | 2;
+    saturationAdu?: number;
+    /** Absolute path. */
+    badPixels?: string;
+    amplifiers: SpectrographAmplifier[];
+  };
+  /** Slit positions count from 1, from low y upwards. */
+  slit?: {
+    blocks?: number[];
+    /** px */
+    pitch?: number;
+    /** px beside one pitch, between blocks. */
+    gap?: number | number[];
+    dead: number[];
+    sky: number[];
+  };
+  wavelength?: { medium?: "air" | "vacuum" /** Å */; range?: [number, number]; lamps: string[] };
+}
+
+export class SpectrographError extends Error {
+  override name = "SpectrographError";
+}
+
+/** Reads a spectrograph file; paths inside are taken from its own folder.
+ * @throws SpectrographError naming file, key, what was found and what was expected. */
+export async function readSpectrograph(path: string): Promise<Spectrograph> {
+  let text: string;
+  try {
+    text = await readFile(path, "utf8");
+  } catch (error) {
+    const reason = (error as NodeJS.ErrnoException).code === "ENOENT" ? "there is no such file" : "it cannot be read";
+    throw new SpectrographError(`${path}: ${reason}, but a spectrograph file in TOML was expected; check its name.`);
+  }
+  return parseSpectrograph(text, { file: basename(path), folder: dirname(resolve(path)) });
+}
+
+/** The same from the text itself. `folder`: where its relative paths start. */
+export function parseSpectrograph(text: string, { file, folder }: { file: string; folder: string }): Spectrograph {
+  let tree: unknown;
+  try {
+    tree = parseToml(text);
+  } catch (error) {
+    if (!(error instanceof TomlError)) throw error;
+    const found = error.message.split("\n")[0].replace(/^Invalid TOML document: /, "");
+    throw new SpectrographError(`${file}, line ${error.line}: not valid TOML (${found}); correct that line.`);
+  }
+  const result = schema.safeParse(tree);
+  if (!result.success) throw new SpectrographError(sentence(file, tree, result.error.issues[0]));
+  const spectrograph = named(result.data, file, folder);
+  checkSlit(spectrograph, file);
+  return spectrograph;
+}
+
+type Issue = z.core.$ZodIssue;
+
+/** One sentence for the first thing that is wrong. */
+function sentence(file: string, tree: unknown, issue: Issue): string {
+  const table = issue.path.filter((step) => typeof step === "string").join(".");
+  if (issue.code === "unrecognized_keys") {
+    const key = issue.keys[0];
+    const known = Object.keys(KEYS[table] ?? {});
+    const near = nearestKey(key, known);
+    const remedy = near ? `did you mean '${near}'?` : `known there: ${known.join(", ")}.`;
+    return `${file}: unknown key '${spelled([...issue.path, key])}'; ${remedy}`;
+  }
+  const names = issue.path.filter((step): step is string => typeof step === "string");
+  const expected = KEYS[names.slice(0, -1).join(".")]?.[names[names.length - 1]] ?? "a table";
+  const found = JSON.stringify(valueAt(tree, issue.path)) ?? "nothing";
+  return `${file}: '${spelled(issue.path)}' is ${found}, but ${expected} was expected; correct it or leave the key out.`;
+}
+
+/** detector.amplifier[2].gain, counted from 1 as people do. */
+function spelled(path: readonly PropertyKey[]): string {
+  return path.reduce<string>((text, step) => {
+    if (typeof step === "number") return `${text}[${step + 1}]`;
+    return text === "" ? String(step) : `${text}.${String(step)}`;
+  }, "");
+}
+
+function valueAt(tree: unknown, path: readonly PropertyKey[]): unknown {
+  let here = tree;
+  for (const step of path) here = (here as Record<PropertyKey, unknown> | undefined)?.[step];
+  return here;
+}
+
+function named(tree: z.infer<typeof schema>, file: string, folder: string): Spectrograph {
+  const detector = tree.detector ?? {};
+  const { slit, wavelength } = tree;
+  return {
+    file,
+    ...given({ name: tree.name }),
+    detector: {
+      ...given({
+        dispersionAxis: detector.dispersion_axis,
+        saturationAdu: detector.saturation,
+        badPixels: detector.bad_pixels === undefined ? undefined : resolve(folder, detector.bad_pixels),
+      }),
+      amplifiers: (detector.amplifier ?? []).map((entry) => given(amplifierNamed(entry))),
+    },
+    ...given({
+      slit: slit && {
+        ...given({ blocks: slit.blocks, pitch: slit.pitch, gap: slit.gap }),
+        dead: slit.dead ?? [],
+        sky: slit.sky ?? [],
+      },
+      wavelength: wavelength && {
+        ...given({ medium: wavelength.medium, range: wavelength.range }),
+        lamps: wavelength.lamps ?? [],
+      },
+    }),
+  };
+}
+
+function amplifierNamed(entry: z.infer<typeof amplifier>) {
+  return {
+    gain: entry.gain,
+    readNoise: entry.read_noise,
+    data: entry.data,
+    overscan: typeof entry.overscan === "string" ? [entry.overscan] : entry.overscan,
+    overscanSkip: entry.overscan_skip,
+    place: entry.place,
+    biasLevelAdu: entry.bias_level,
+  };
+}
+
+type Given<T> = { [K in keyof T]?: Exclude<T[K], undefined> };
+
+/** Without the keys that have no value, so that "absent" has one form only. */
+function given<T extends object>(entries: T): Given<T> {
+  return Object.fromEntries(Object.entries(entries).filter(([, value]) => value !== undefined)) as Given<T>;
+}
+
+function checkSlit({ slit }: Spectrograph, file: string): void {
+  if (slit?.blocks === undefined) return;
+  const nFibre = slit.blocks.reduce((sum, n) => sum + n, 0);
+  if (Array.isArray(slit.gap) && slit.gap.length !== slit.blocks.length - 1) {
+    throw new SpectrographError(
+      `${file}: 'slit.gap' lists ${slit.gap.length} gaps, but ${slit.blocks.length} blocks have ${slit.blocks.length - 1} between them; give one number for each gap, or one for all.`,
+    );
+  }
+  for (const key of ["dead", "sky"] as const) {
+    const beyond = slit[key].find((position) => position > nFibre);
+    if (beyond === undefined) continue;
+    throw new SpectrographError(
+      `${file}: 'slit.${key}' names position ${beyond}, but 'slit.blocks' adds up to ${nFibre}; positions count from 1.`,
+    );
+  }
+}
