@@ -1,9 +1,12 @@
 // The module's whole interface. Pointers and counts in, numbers out; src/kernels/ is the only caller.
 export { bandedSystems32, bandedSystems64 } from "./banded";
-export { erf } from "./erf";
 export { centreFibres, centringScratchBytes } from "./centring";
 export { centroid } from "./centroid";
+export { erf } from "./erf";
+export { extractColumns32, extractColumns64, prepareExtraction32, prepareExtraction64 } from "./extract";
 export { legendreFitClipped, legendreValue } from "./legendre";
+export { pixelsToFloat32, pixelsToFloat64 } from "./pixels";
+export { gaussianWeights64 } from "./profile";
 
 /** First byte behind the compiler's own tables: where a workbench may begin. */
 export function heapBase(): usize {

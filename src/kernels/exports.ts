@@ -10,6 +10,15 @@ export interface KernelExports {
   /** assembly/erf.ts */
   erf(x: number): number;
 
+  /** assembly/extract.ts */
+  prepareExtraction32(jobPtr: number): void;
+  prepareExtraction64(jobPtr: number): void;
+  extractColumns32(jobPtr: number, x0: number, x1: number): void;
+  extractColumns64(jobPtr: number, x0: number, x1: number): void;
+
+  /** assembly/profile.ts */
+  gaussianWeights64(centre: number, sigma: number, first: number, n: number, outPtr: number): void;
+
   /** assembly/legendre.ts */
   legendreValue(coefPtr: number, nCoef: number, t: number): number;
   legendreFitClipped(
@@ -25,7 +34,14 @@ export interface KernelExports {
   ): number;
 
   /** assembly/centring.ts */
-  centringScratchBytes(nRow: number, nFibre: number, nPar: number, neighbours: number, reach: number, nBack: number): number;
+  centringScratchBytes(
+    nRow: number,
+    nFibre: number,
+    nPar: number,
+    neighbours: number,
+    reach: number,
+    nBack: number,
+  ): number;
   centreFibres(
     dataPtr: number,
     weightPtr: number,
@@ -46,4 +62,25 @@ export interface KernelExports {
 
   /** assembly/centroid.ts */
   centroid(dataPtr: number, goodPtr: number, n: number, centre: number, halfWidth: number, background: number): number;
+
+  /** assembly/pixels.ts */
+  pixelsToFloat32(
+    bitpix: number,
+    inPtr: number,
+    outPtr: number,
+    n: number,
+    zero: number,
+    hasBlank: number,
+    blank: bigint,
+  ): void;
+  pixelsToFloat64(
+    bitpix: number,
+    inPtr: number,
+    outPtr: number,
+    n: number,
+    scale: number,
+    zero: number,
+    hasBlank: number,
+    blank: bigint,
+  ): void;
 }
