@@ -153,7 +153,7 @@ const cosmicRays = z.strictObject({
 const KINDS = ["bias", "dark", "detector-flat", "fibre-flat", "arc", "twilight", "science"] as const;
 
 const exposure = z.strictObject({
-  name: z.string().regex(/^[A-Za-z0-9_-]{1,40}$/, "a file name of letters, digits, _ and -"),
+  name: z.string().regex(/^[A-Za-z0-9_-]{1,40}$/, "expected a file name of letters, digits, _ and -"),
   kind: z.enum(KINDS),
   seconds: z.number().min(0).default(0),
   object: z.string().max(60).optional(),
@@ -259,7 +259,26 @@ function complaintOf(issue: Issue): string {
   if (issue.code === "unrecognized_keys") {
     return `found the unknown ${issue.keys.length > 1 ? "keys" : "key"} ${issue.keys.join(", ")}; correct the spelling or leave it out`;
   }
-  const wanted = issue.message.replace(/^Invalid (input|option|string|number): /, "").replace(/^Too (big|small): /, "");
-  if (issue.input === undefined) return `missing, ${wanted.replace(/, received undefined$/, "")}; add it`;
-  return `found ${JSON.stringify(issue.input, (_key, value) => (typeof value === "bigint" ? String(value) : value))?.slice(0, 60)}, ${wanted.replace(/, received .*$/, "")}; correct the value`;
+  if (issue.input === undefined) return `missing, ${wantedOf(issue)}; add it`;
+  const found = JSON.stringify(issue.input, (_key, value) => (typeof value === "bigint" ? String(value) : value));
+  return `found ${found?.slice(0, 60)}, ${wantedOf(issue)}; correct the value`;
+}
+
+/** The schema's message in the words of a person who writes TOML. */
+function wantedOf(issue: Issue): string {
+  return issue.message
+    .replace(/^(Invalid|Too)[a-z ]*(: |$)/, "")
+    .replace(/, received .*$/, "")
+    .replace(/(number|int|array|string) to (be|have) (?=[<>])/, "")
+    .replace(/>=/, "at least ")
+    .replace(/<=/, "at most ")
+    .replace(/>/, "more than ")
+    .replace(/</, "less than ")
+    .replace(/expected (tuple|array)/, "expected a list")
+    .replace(/expected object/, "expected a table")
+    .replace(/expected int$/, "expected a whole number")
+    .replace(/expected number/, "expected a number")
+    .replace(/expected string/, "expected a text")
+    .replace(/expected boolean/, "expected true or false")
+    .replace(/^$/, "expected another kind of value");
 }

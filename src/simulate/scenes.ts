@@ -84,7 +84,7 @@ scattered_share = 0.03
 faintest = 10                 # e- per column in 900 s
 brightest = 1e5
 seconds = 900
-sky_level = 30
+sky_level = 5
 sky_line = 6000
 
 [cosmic_rays]
