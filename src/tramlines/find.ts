@@ -1,0 +1,289 @@
+/** Finding the fibres: a cut through the flat across the dispersion, its peaks, and their centres by the joint
+ * linearised centring of assembly/centring.ts, so that crowded and dim fibres stand where they are. */
+import { medianOf } from "../detector/clip.js";
+import { Centring } from "../kernels/centring.js";
+import type { Kernels } from "../kernels/module.js";
+import { TraceError } from "./errors.js";
+import { type ColumnGroup, type Flat, groupColumns } from "./flat.js";
+
+/** One ribbon of light where the cut meets it. */
+export interface Peak {
+  /** px */
+  position: number;
+  /** e⁻ of all its light in one column. */
+  light: number;
+  /** Its standard error, e⁻. */
+  lightError: number;
+  /** e⁻ above background in a pixel at the centre. */
+  height: number;
+  /** Gaussian σ, px. */
+  sigma: number;
+  /** e⁻ per pixel under it. */
+  background: number;
+}
+
+/** A robust mean over columns about the middle, tilted so that it follows the tramlines. Arrays [ny]. */
+export interface Cut {
+  /** Column that it stands for. */
+  x: number;
+  /** How the tramlines run there, px of y per px of x. */
+  slope: number;
+  mean: Float64Array;
+  fixedVariance: Float64Array;
+  variancePerElectron: Float64Array;
+}
+
+const STRIP_COLUMNS = 8;
+const MAX_STRIPS = 16;
+/** A strip's tramlines are sought this far up and down from the next strip's, px. */
+const MAX_STRIP_SHIFT = 3;
+
+/** @throws TraceError when the flat has no good pixel about its middle. */
+export function cutThrough(flat: Flat): Cut {
+  const nStrip = Math.max(1, Math.min(MAX_STRIPS, Math.floor(flat.nx / STRIP_COLUMNS)));
+  const columns = Math.min(STRIP_COLUMNS, flat.nx);
+  for (const share of [0.5, 0.4, 0.6, 0.3, 0.7, 0.2, 0.8]) {
+    const start = Math.round(share * flat.nx) - (nStrip * columns) / 2;
+    const first = Math.max(0, Math.min(flat.nx - nStrip * columns, Math.floor(start)));
+    const strips = Array.from({ length: nStrip }, (_, s) =>
+      groupColumns(flat, first + s * columns, first + (s + 1) * columns),
+    ).filter((strip) => strip.count.filter((n) => n > 0).length > 0.5 * flat.ny);
+    if (strips.length >= Math.max(1, nStrip / 2)) return mergeStrips(strips, flat.ny);
+  }
+  throw new TraceError(
+    `${flat.name}: hardly a pixel about the middle columns is good; give a flat that was read out whole.`,
+  );
+}
+
+/** Median over strips, each slid along the slope to the middle one. */
+function mergeStrips(strips: ColumnGroup[], ny: number): Cut {
+  const slopes = strips.slice(1).map((strip, s) => shiftBetween(strips[s], strip, ny) / (strip.x - strips[s].x));
+  const slope = slopes.length > 0 ? medianOf(slopes) : 0;
+  const x = strips[strips.length >> 1].x;
+  const cut: Cut = {
+    x,
+    slope,
+    mean: new Float64Array(ny).fill(Number.NaN),
+    fixedVariance: new Float64Array(ny),
+    variancePerElectron: new Float64Array(ny),
+  };
+  for (let y = 0; y < ny; y++) {
+    const values: number[] = [];
+    let fixed = 0;
+    let perElectron = 0;
+    for (const strip of strips) {
+      const value = between(strip.mean, y + slope * (strip.x - x));
+      if (Number.isNaN(value) || strip.count[y] === 0) continue;
+      values.push(value);
+      fixed += strip.fixedVariance[y];
+      perElectron += strip.variancePerElectron[y];
+    }
+    if (values.length === 0) continue;
+    cut.mean[y] = medianOf(values);
+    // The median of n values has π/2 times the variance of their mean.
+    cut.fixedVariance[y] = (0.5 * Math.PI * fixed) / values.length ** 2;
+    cut.variancePerElectron[y] = (0.5 * Math.PI * perElectron) / values.length ** 2;
+  }
+  return cut;
+}
+
+/** How far the light of `right` stands above that of `left`, px, by least squares on a grid of quarter pixels. */
+function shiftBetween(left: ColumnGroup, right: ColumnGroup, ny: number): number {
+  let best = Number.POSITIVE_INFINITY;
+  let bestShift = 0;
+  for (let shift = -MAX_STRIP_SHIFT; shift <= MAX_STRIP_SHIFT; shift += 0.25) {
+    let sum = 0;
+    let n = 0;
+    for (let y = MAX_STRIP_SHIFT; y < ny - MAX_STRIP_SHIFT; y++) {
+      // Both are taken off the grid by as much, so that interpolation blurs both alike.
+      const difference = between(right.mean, y + 0.5 * shift) - between(left.mean, y - 0.5 * shift);
+      if (Number.isNaN(difference)) continue;
+      sum += difference * difference;
+      n++;
+    }
+    if (n > 0 && sum / n < best) {
+      best = sum / n;
+      bestShift = shift;
+    }
+  }
+  return bestShift;
+}
+
+/** Linear between pixels; NaN outside or beside a pixel without value. */
+function between(values: Float64Array, y: number): number {
+  const low = Math.floor(y);
+  const share = y - low;
+  if (share === 0) return low >= 0 && low < values.length ? values[low] : Number.NaN;
+  if (low < 0 || low + 1 >= values.length) return Number.NaN;
+  return values[low] + share * (values[low + 1] - values[low]);
+}
+
+/** A first peak must stand out from the pixels this far up and down, px. */
+const FLANK = 2;
+/** … by this many σ, by this share of its level, and by this share of a typical peak. */
+const KAPPA_PEAK = 6;
+const LEVEL_SHARE = 0.03;
+const TYPICAL_SHARE = 0.03;
+/** Light that counts as a fibre's, against the median fibre. */
+const FAINTEST_SHARE = 0.02;
+const START_SIGMA = 1.1;
+const SIGMA_RANGE = [0.5, 2.6];
+/** Light beyond this many σ from a centre is not the Gaussian's. */
+export const REACH_SIGMAS = 4.5;
+
+/** Peaks of the cut from low y upwards; fibres at least 4 px apart and about 2 to 4 px wide (FWHM) are told apart, down to
+ * 5 % of the median one's light.
+ * @throws TraceError when there is no fibre's light. */
+export function findPeaks(kernels: Kernels, cut: Cut, name: string): Peak[] {
+  const first = firstPeaks(cut);
+  if (first.length === 0) {
+    throw new TraceError(
+      `${name}: no ribbon of light crosses column ${Math.round(cut.x)}; a fibre flat with the lamp on is needed to trace.`,
+    );
+  }
+  let peaks = centrePeaks(kernels, cut, first, START_SIGMA, 6, true);
+  peaks = keepReal(peaks);
+  const holes = holePositions(peaks, cut.mean.length);
+  if (holes.length > 0) {
+    const tried = [...peaks.map((peak) => peak.position), ...holes].sort((a, b) => a - b);
+    const still = new Set(holes);
+    const sigma = medianOf(peaks.map((peak) => peak.sigma));
+    const lights = centrePeaks(kernels, cut, tried, sigma, 1, false);
+    const typical = medianOf(peaks.map((peak) => peak.light));
+    const found = lights.filter(
+      (peak) =>
+        !still.has(peak.position) || (peak.light > 1.2 * FAINTEST_SHARE * typical && peak.light > 8 * peak.lightError),
+    );
+    if (found.length > peaks.length) {
+      const positions = found.map((peak) => peak.position);
+      peaks = keepReal(centrePeaks(kernels, cut, positions, sigma, 3, true));
+    }
+  }
+  return peaks;
+}
+
+/** Local maxima of what stands out from its flanks. */
+function firstPeaks(cut: Cut): number[] {
+  const { mean, fixedVariance, variancePerElectron } = cut;
+  const ny = mean.length;
+  const filled = mean.map((value, y) => (Number.isNaN(value) ? nearestGood(mean, y) : value));
+  const at = (y: number) => filled[Math.max(0, Math.min(ny - 1, y))];
+  const excess = Float64Array.from({ length: ny }, (_, y) => at(y) - 0.5 * (at(y - FLANK) + at(y + FLANK)));
+  const candidates: { y: number; excess: number }[] = [];
+  for (let y = 0; y < ny; y++) {
+    const e = excess[y];
+    if (!(e > 0) || e < (excess[y - 1] ?? 0) || e <= (excess[y + 1] ?? 0)) continue;
+    const noise = Math.sqrt(1.5 * (fixedVariance[y] + variancePerElectron[y] * Math.max(0, at(y))));
+    if (!(e > KAPPA_PEAK * noise && e > LEVEL_SHARE * at(y))) continue;
+    const [low, high] = [excess[y - 1] ?? 0, excess[y + 1] ?? 0];
+    candidates.push({ y: y + ((0.5 * (low - high)) / Math.min(-1e-9, low - 2 * e + high)) * -1, excess: e });
+  }
+  const strong = candidates.map((c) => c.excess).sort((a, b) => a - b);
+  const typical =
+    strong.length > 0 ? medianOf(strong.filter((e) => e > 0.2 * strong[Math.floor(0.9 * (strong.length - 1))])) : 0;
+  const kept = candidates.filter((c) => c.excess > TYPICAL_SHARE * typical);
+  return apart(kept).map((c) => c.y);
+}
+
+function nearestGood(values: Float64Array, y: number): number {
+  for (let d = 1; d < values.length; d++) {
+    const sides = [values[y - d], values[y + d]].filter((v) => Number.isFinite(v));
+    if (sides.length > 0) return sides.reduce((sum, v) => sum + v, 0) / sides.length;
+  }
+  return 0;
+}
+
+/** Of two maxima closer than 2.5 px only the stronger. */
+function apart(candidates: { y: number; excess: number }[]): { y: number; excess: number }[] {
+  const kept: { y: number; excess: number }[] = [];
+  for (const candidate of candidates) {
+    const last = kept[kept.length - 1];
+    if (last !== undefined && candidate.y - last.y < 2.5) {
+      if (candidate.excess > last.excess) kept[kept.length - 1] = candidate;
+    } else kept.push(candidate);
+  }
+  return kept;
+}
+
+/** Light that is certain and not negligible. */
+function keepReal(peaks: Peak[]): Peak[] {
+  const typical = medianOf(peaks.map((peak) => peak.light).filter((light) => light > 0));
+  return peaks.filter((peak) => peak.light > FAINTEST_SHARE * typical && peak.light > KAPPA_PEAK * peak.lightError);
+}
+
+/** Where fibres might be too dim to have been seen: the places one pitch apart in each hole of up to six pitches. */
+function holePositions(peaks: Peak[], ny: number): number[] {
+  const spacing = peaks.slice(1).map((peak, j) => peak.position - peaks[j].position);
+  if (spacing.length < 3) return [];
+  const pitch = medianOf(spacing);
+  const holes = spacing.flatMap((d, j) => {
+    const n = Math.round(d / pitch);
+    if (n < 2 || n > 6 || Math.abs(d / n - pitch) > 0.2 * pitch) return [];
+    return Array.from({ length: n - 1 }, (_, m) => peaks[j].position + ((m + 1) * d) / n);
+  });
+  return [peaks[0].position - pitch, ...holes, peaks[peaks.length - 1].position + pitch].filter(
+    (y) => y > 1 && y < ny - 2,
+  );
+}
+
+/** Fibres that overlap: how many places apart light of this reach can meet. */
+export function overlapping(reach: number, pitch: number): number {
+  return Math.max(1, Math.min(3, Math.floor((2 * reach) / pitch)));
+}
+
+/** Joint centring of given peaks; with `move`, centres follow the light, and one σ for all follows the widths. */
+function centrePeaks(
+  kernels: Kernels,
+  cut: Cut,
+  positions: number[],
+  startSigma: number,
+  nRound: number,
+  move: boolean,
+): Peak[] {
+  const ny = cut.mean.length;
+  const n = positions.length;
+  const spacing = positions.slice(1).map((y, k) => y - positions[k]);
+  const pitch = spacing.length > 0 ? medianOf(spacing) : 10;
+  const reach = Math.min(REACH_SIGMAS * 1.8, 1.5 * pitch);
+  const size = { nRow: ny, nFibre: n, neighbours: overlapping(reach, pitch), reach, nBack: 3 };
+  const centring = new Centring(kernels, size);
+  const centre = Float64Array.from(positions);
+  let sigma = startSigma;
+  let model = cut.mean;
+  let peaks: Peak[] = [];
+  for (let round = 0; round < nRound; round++) {
+    const weight = model.map((m, y) => {
+      const light = Math.max(0, Number.isNaN(m) ? 0 : m);
+      return 1 / (cut.fixedVariance[y] + cut.variancePerElectron[y] * light + (0.02 * light) ** 2);
+    });
+    const nPar = move ? 3 : 2;
+    const column = { data: cut.mean, weight, centre, sigma: new Float64Array(n).fill(sigma) };
+    const [{ solution, variance, model: next, background }] = centring.measure([column], nPar);
+    model = next;
+    const brightest = solution.reduce((best, value, i) => (i % nPar === 0 ? Math.max(best, value) : best), 0);
+    const widening: number[] = [];
+    for (let k = 0; k < n; k++) {
+      const a = solution[k * nPar];
+      if (!move || a <= 0.003 * brightest) continue;
+      const limit = 0.12 * pitch;
+      centre[k] += Math.max(-limit, Math.min(limit, solution[k * nPar + 1] / a));
+      if (a > 0.2 * brightest) widening.push(solution[k * nPar + 2] / a);
+    }
+    if (widening.length > 0) sigma += Math.max(-0.25, Math.min(0.25, medianOf(widening)));
+    sigma = Math.max(SIGMA_RANGE[0], Math.min(SIGMA_RANGE[1], sigma));
+    peaks = Array.from(centre, (position, k) => ({
+      position,
+      light: solution[k * nPar],
+      lightError: Math.sqrt(variance[k * nPar]),
+      height: (solution[k * nPar] * 0.3989422804014327) / sigma,
+      sigma,
+      background: backgroundAt(background, position, ny),
+    }));
+  }
+  return peaks.sort((a, b) => a.position - b.position);
+}
+
+function backgroundAt(background: Float64Array, y: number, ny: number): number {
+  const t = (2 * y) / (ny - 1) - 1;
+  return background[0] + background[1] * t + background[2] * (1.5 * t * t - 0.5);
+}
