@@ -47,3 +47,25 @@ function loadPixelsSingly<T extends number>(ptr: usize, nValid: i32): v128 {
   }
   return lanes;
 }
+
+/** The number at `ptr`, of the lanes' type, in every lane. */
+export function loadSpread<T extends number>(ptr: usize): v128 {
+  return sizeof<T>() == 4 ? v128.load32_splat(ptr) : v128.load64_splat(ptr);
+}
+
+/** One bit a lane, lowest lane lowest, made one byte a lane that holds `bit`. */
+export function bytesOfLanes(lanes: i32, bit: u32): u32 {
+  let bytes: u32 = 0;
+  for (let lane: i32 = 0; lane < 4; lane++) if ((lanes >> lane) & 1) bytes |= bit << (lane << 3);
+  return bytes;
+}
+
+/** Number of lane `lane` of the v128 at `ptr`. */
+export function laneAt<T extends number>(ptr: usize, lane: i32): T {
+  return load<T>(ptr + <usize>lane * sizeof<T>());
+}
+
+/** One bit for each lane of a comparison's result, lowest lane lowest. */
+export function lanesSet<T extends number>(comparison: v128): i32 {
+  return sizeof<T>() == 4 ? i32x4.bitmask(comparison) : i64x2.bitmask(comparison);
+}

@@ -1,0 +1,229 @@
+/** Door to assembly/extract.ts: lays out one extraction's memory, runs stretches of columns, shows the spectra. */
+import type { ExtractionInput, ExtractionOutput } from "../reference/extract.js";
+import type { Precision } from "./banded.js";
+import { MethodCode, Numbers, Word } from "./extraction-words.js";
+import type { Kernels, Workbench } from "./module.js";
+
+type Piece = Float32Array | Float64Array | Int32Array | Uint8Array;
+
+/** How many numbers of which type each piece of the memory holds; `lanes` are numbers of the lanes' type. */
+type Plan = [word: Word, type: "lanes" | "float32" | "float64" | "int32" | "uint8", length: number][];
+
+/** An extraction laid out in a memory of its own. Views stay valid as long as this lives. */
+export class ExtractionBench {
+  /** nSlit × nx images; rows that no fibre of the input writes to stay as they were laid out: NaN and flags 0. */
+  readonly output: ExtractionOutput;
+  /** ny × nx, bits of MaskBit: what was rejected so far. */
+  readonly rejected: Uint8Array;
+  private readonly bench: Workbench;
+  private readonly job: Int32Array;
+  private readonly numbers: Float64Array;
+  private readonly background: Float64Array;
+
+  /** `outputRow`: [nFibre] row of the images for each fibre of the input, of `nSlit` rows.
+   * @throws RangeError when lengths do not fit or the frame is larger than the memory can be. */
+  constructor(
+    kernels: Kernels,
+    private readonly input: ExtractionInput,
+    outputRow: Int32Array,
+    nSlit: number,
+    private readonly precision: Precision,
+  ) {
+    checkInput(input, outputRow, nSlit);
+    const plan = memoryPlan(input, nSlit, precision === "f32" ? 4 : 2);
+    const laneBytes = precision === "f32" ? 4 : 8;
+    const bytes = { lanes: laneBytes, float32: 4, float64: 8, int32: 4, uint8: 1 };
+    const total = plan.reduce((sum, [, type, length]) => sum + bytes[type] * length, 4 * Word.count);
+    this.bench = kernels.workbench(total, plan.length + 1);
+    this.job = this.bench.int32(Word.count);
+    const pieces = new Map<Word, Piece>();
+    for (const [word, type, length] of plan) {
+      const piece = this.bench[type === "lanes" ? (precision === "f32" ? "float32" : "float64") : type](length);
+      pieces.set(word, piece);
+      this.job[word] = piece.byteOffset;
+    }
+    this.numbers = pieces.get(Word.numbers) as Float64Array;
+    this.background = pieces.get(Word.background) as Float64Array;
+    this.rejected = pieces.get(Word.rejected) as Uint8Array;
+    this.output = viewOutput(pieces);
+    this.copyIn(pieces, outputRow);
+    const prepare = precision === "f32" ? this.bench.call.prepareExtraction32 : this.bench.call.prepareExtraction64;
+    prepare(this.job.byteOffset);
+  }
+
+  /** Extracts columns x0 … x1 − 1; x0 must begin a block of columns. */
+  run(x0 = 0, x1 = this.input.nx): void {
+    if (x0 % this.input.blockColumns !== 0) {
+      throw new RangeError(`Column ${x0} begins no block of ${this.input.blockColumns} columns.`);
+    }
+    const extract = this.precision === "f32" ? this.bench.call.extractColumns32 : this.bench.call.extractColumns64;
+    extract(this.job.byteOffset, x0, x1);
+  }
+
+  /** Rejection from here on: κ and the lower limit of suspects; κ = 0 takes what is rejected as it stands. */
+  setRejection(kappa: number, growKappa: number): void {
+    this.job[Word.reject] = kappa > 0 ? 1 : 0;
+    this.numbers[Numbers.kappaSquared] = kappa * kappa;
+    this.numbers[Numbers.growKappaSquared] = growKappa * growKappa;
+  }
+
+  /** Another background of the same orders. `coefficients`: [nX × nY] e⁻ per pixel. */
+  setBackground(coefficients: Float64Array): void {
+    this.background.set(coefficients);
+  }
+
+  private copyIn(pieces: Map<Word, Piece>, outputRow: Int32Array): void {
+    const { input, job, numbers } = this;
+    const { noise, background } = input;
+    const counts: [Word, number][] = [
+      [Word.nx, input.nx],
+      [Word.ny, input.ny],
+      [Word.nFibre, input.nFibre],
+      [Word.halfWindow, input.halfWindow],
+      [Word.bandwidth, input.bandwidth],
+      [Word.blockColumns, input.blockColumns],
+      [Word.nTrace, input.nTrace],
+      [Word.nWidth, input.nWidth],
+      [Word.nBackgroundX, background.nX],
+      [Word.nBackgroundY, background.nY],
+      [Word.method, MethodCode[input.method]],
+      [Word.crosstalk, input.crosstalk ? 1 : 0],
+      [Word.minRounds, input.minRounds],
+      [Word.maxRounds, input.maxRounds],
+    ];
+    for (const [word, value] of counts) job[word] = value;
+    const arrays: [Word, ArrayLike<number> | undefined][] = [
+      [Word.electrons, input.electrons],
+      [Word.mask, input.mask],
+      [Word.rejected, input.rejected],
+      [Word.bandOfRow, noise.bandOfRow],
+      [Word.fixedVariance, noise.fixedVariance],
+      [Word.fixedVarianceImage, noise.fixedVarianceImage],
+      [Word.inverseResponse, noise.inverseResponse],
+      [Word.responseRelativeVariance, noise.responseRelativeVariance],
+      [Word.trace, input.trace],
+      [Word.width, input.width],
+      [Word.seen, input.seen],
+      [Word.outputRow, outputRow],
+      [Word.background, background.coefficients],
+    ];
+    for (const [word, values] of arrays) if (values !== undefined) pieces.get(word)!.set(values);
+    for (const word of [Word.flux, Word.variance, Word.neighbourCovariance, Word.chi2, Word.backgroundUnder]) {
+      pieces.get(word)!.fill(Number.NaN);
+    }
+    numbers[Numbers.profileError] = input.profileError;
+    numbers[Numbers.halfAperture] = input.halfAperture;
+    this.setRejection(input.kappa, input.growKappa);
+  }
+}
+
+function memoryPlan(input: ExtractionInput, nSlit: number, nLane: number): Plan {
+  const { nx, ny, nFibre, bandwidth, noise, background } = input;
+  const nWindow = 2 * input.halfWindow + 1;
+  const nPixel = nx * ny;
+  const nRow = ny + 2 * nWindow;
+  const laneRows = [
+    Word.light,
+    Word.backgroundRows,
+    Word.fixed,
+    Word.inverseResponseRows,
+    Word.responseVarianceRows,
+    Word.inverseVariance,
+    Word.model,
+    Word.excess,
+  ];
+  const perFibre: [Word, number][] = [
+    [Word.weights, nWindow],
+    [Word.aperture, nWindow],
+    [Word.centre, 1],
+    [Word.fluxes, 1],
+    [Word.lastChange, 1],
+    [Word.variances, 1],
+    [Word.covariancesBelow, 1],
+    [Word.raw, 1],
+    [Word.band, bandwidth + 1],
+    [Word.normal, bandwidth + 1],
+    [Word.inverse, bandwidth + 1],
+    [Word.rawCovariance, bandwidth + 1],
+    [Word.crosstalkBand, 2 * bandwidth + 1],
+    [Word.system, 2 * (2 * bandwidth + 2)],
+    [Word.systemInverse, 2 * (2 * bandwidth + 2)],
+    [Word.systemRhs, 2],
+  ];
+  const images = [Word.flux, Word.variance, Word.neighbourCovariance, Word.chi2, Word.backgroundUnder];
+  return [
+    [Word.electrons, "float32", nPixel],
+    [Word.mask, "uint8", nPixel],
+    [Word.rejected, "uint8", nPixel],
+    [Word.bandOfRow, "uint8", ny],
+    [Word.fixedVariance, "float32", noise.fixedVariance.length],
+    ...optional(Word.fixedVarianceImage, noise.fixedVarianceImage),
+    ...optional(Word.inverseResponse, noise.inverseResponse),
+    ...optional(Word.responseRelativeVariance, noise.responseRelativeVariance),
+    [Word.trace, "float64", input.trace.length],
+    [Word.width, "float64", input.width.length],
+    [Word.seen, "int32", 2 * nFibre],
+    [Word.outputRow, "int32", nFibre],
+    [Word.background, "float64", background.coefficients.length],
+    ...images.map((word): Plan[number] => [word, "lanes", nSlit * nx]),
+    [Word.flags, "int32", nSlit * nx],
+    [Word.start, "int32", nFibre],
+    [Word.nodeCentre, "lanes", 4 * nFibre],
+    [Word.nodeWeights, "lanes", 4 * nFibre * nWindow],
+    [Word.nodeShares, "lanes", 4 * input.blockColumns],
+    [Word.rowPolynomials, "lanes", ny * background.nY],
+    [Word.backgroundSeries, "float64", 2 * background.nY + background.nX],
+    [Word.bits, "int32", nRow],
+    ...laneRows.map((word): Plan[number] => [word, "lanes", nRow * nLane]),
+    [Word.weighted, "lanes", nWindow * nLane],
+    ...perFibre.map(([word, n]): Plan[number] => [word, "lanes", nFibre * n * nLane]),
+    [Word.flagsOfLanes, "int32", nFibre * nLane],
+    [Word.numbers, "float64", Numbers.count],
+  ];
+}
+
+function optional(word: Word, image: Float32Array | undefined): Plan {
+  return image === undefined ? [] : [[word, "float32", image.length]];
+}
+
+function viewOutput(pieces: Map<Word, Piece>): ExtractionOutput {
+  const image = (word: Word) => pieces.get(word) as Float32Array | Float64Array;
+  return {
+    flux: image(Word.flux),
+    variance: image(Word.variance),
+    neighbourCovariance: image(Word.neighbourCovariance),
+    flags: pieces.get(Word.flags) as Int32Array,
+    chi2: image(Word.chi2),
+    background: image(Word.backgroundUnder),
+  };
+}
+
+function checkInput(input: ExtractionInput, outputRow: Int32Array, nSlit: number): void {
+  const { nx, ny, nFibre, noise, background } = input;
+  const lengths: [string, ArrayLike<number> | undefined, number][] = [
+    ["electrons", input.electrons, nx * ny],
+    ["mask", input.mask, nx * ny],
+    ["rejected", input.rejected, nx * ny],
+    ["bandOfRow", noise.bandOfRow, ny],
+    ["fixedVarianceImage", noise.fixedVarianceImage, nx * ny],
+    ["inverseResponse", noise.inverseResponse, nx * ny],
+    ["responseRelativeVariance", noise.responseRelativeVariance, nx * ny],
+    ["trace", input.trace, nFibre * input.nTrace],
+    ["width", input.width, nFibre * input.nWidth],
+    ["seen", input.seen, 2 * nFibre],
+    ["outputRow", outputRow, nFibre],
+    ["background", background.coefficients, background.nX * background.nY],
+  ];
+  for (const [name, values, length] of lengths) {
+    if (values !== undefined && values.length !== length) {
+      throw new RangeError(`${name} holds ${values.length} numbers, but this extraction needs ${length}.`);
+    }
+  }
+  const nBand = noise.fixedVariance.length / nx;
+  if (!Number.isInteger(nBand) || noise.bandOfRow.some((band) => band >= nBand)) {
+    throw new RangeError(`fixedVariance holds ${nBand} bands of ${nx} columns, fewer than bandOfRow names.`);
+  }
+  if (outputRow.some((row) => row < 0 || row >= nSlit)) {
+    throw new RangeError(`outputRow names a row outside the ${nSlit} of the slit.`);
+  }
+}
