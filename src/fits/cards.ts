@@ -153,8 +153,8 @@ function formatNumber(keyword: string, value: number): string {
   if (!Number.isFinite(value)) throw unwritable(keyword, `is ${value}`, "leave the card out where there is no value");
   if (Number.isSafeInteger(value)) return String(value);
   const [mantissa, exponent] = String(value).split("e");
-  if (exponent === undefined) return mantissa;
-  return `${mantissa.includes(".") ? mantissa : `${mantissa}.0`}E${exponent.replace("+", "")}`;
+  const real = mantissa.includes(".") ? mantissa : `${mantissa}.0`;
+  return exponent === undefined ? real : `${real}E${exponent.replace("+", "")}`;
 }
 
 function formatText(start: string, card: Card, value: string): string {
