@@ -1,7 +1,7 @@
 /** Amplifiers put together: counts above the zero level times gain, dispersion along x, before any calibration image.
  *
  *     dispersion along axis 1: x = axis 1, y = axis 2;   along axis 2: x = axis 2, y = axis 1 (transposed) */
-import type { Section } from "../fits/sections.js";
+import { type Section, sectionSize } from "../fits/sections.js";
 import type { Amplifier, DetectorLayout } from "./amplifiers.js";
 import { MaskBit } from "./frame.js";
 import { type MissingFound, markMissing } from "./missing.js";
@@ -50,14 +50,16 @@ export function assemble(raw: RawImage, layout: DetectorLayout): Assembled {
   const stride1 = turned ? nx : 1;
   const stride2 = turned ? 1 : nx;
   layout.amplifiers.forEach((amplifier, i) => {
-    const { data, place } = amplifier;
-    for (let y = data.y1; y <= data.y2; y++) {
-      let to = (place.x1 - 1) * stride1 + (place.y1 - 1 + y - data.y1) * stride2;
-      for (let x = data.x1; x <= data.x2; x++, to += stride1) {
-        const from = (y - 1) * raw.nx + x - 1;
-        mask[to] = fileMask[from];
-        if (fileMask[from] & MaskBit.missing) continue;
-        electrons[to] = amplifier.gain * (raw.data[from] - zeroLevel(amplifier, levels[i], x, y));
+    const { data, place, gain } = amplifier;
+    const zero = zeroLevels(amplifier, levels[i]);
+    for (let y = 0; y <= data.y2 - data.y1; y++) {
+      let to = (place.x1 - 1) * stride1 + (place.y1 - 1 + y) * stride2;
+      const start = (data.y1 - 1 + y) * raw.nx + data.x1 - 1;
+      for (let x = 0; x <= data.x2 - data.x1; x++, to += stride1) {
+        const bits = fileMask[start + x];
+        mask[to] = bits;
+        if (bits & MaskBit.missing) continue;
+        electrons[to] = gain * (raw.data[start + x] - (zero.forRow ? zero.level[y] : zero.level[x]));
       }
     }
   });
@@ -65,9 +67,11 @@ export function assemble(raw: RawImage, layout: DetectorLayout): Assembled {
   return { name: raw.name, nx, ny, electrons, mask, regions, layout, missing, nSaturated };
 }
 
-function zeroLevel(amplifier: Amplifier, level: OverscanLevel | undefined, x: number, y: number): number {
-  if (level === undefined) return amplifier.biasLevelAdu ?? 0;
-  return level.level[amplifier.levelFor === "rows" ? y - amplifier.data.y1 : x - amplifier.data.x1];
+/** ADU, for each row or each column of the data section. */
+function zeroLevels(amplifier: Amplifier, level: OverscanLevel | undefined) {
+  const { ny } = sectionSize(amplifier.data);
+  if (level === undefined) return { level: new Float64Array(ny).fill(amplifier.biasLevelAdu ?? 0), forRow: true };
+  return { level: level.level, forRow: amplifier.levelFor === "rows" };
 }
 
 function regionOf(amplifier: Amplifier, overscan: OverscanLevel | undefined, turned: boolean): Region {

@@ -123,7 +123,8 @@ class PixelStack {
 
   /** Median of value ÷ scale; the lower of two. */
   private centre(): number {
-    const sorted = this.ratio.subarray(0, this.n).sort();
+    const sorted = this.ratio;
+    sortFirst(sorted, this.n);
     if (this.n === 2) return sorted[0];
     const middle = this.n >> 1;
     return this.n % 2 === 1 ? sorted[middle] : (sorted[middle - 1] + sorted[middle]) / 2;
@@ -136,5 +137,15 @@ class PixelStack {
     }
     this.mean = this.value[best] / this.scale[best];
     this.variance = (this.readVariance[best] + this.shot(this.value[best])) / this.scale[best] ** 2;
+  }
+}
+
+/** Insertion sort of the first n: a stack is a few frames, and a library sort would allocate for every pixel. */
+function sortFirst(values: Float64Array, n: number): void {
+  for (let i = 1; i < n; i++) {
+    const value = values[i];
+    let at = i;
+    for (; at > 0 && values[at - 1] > value; at--) values[at] = values[at - 1];
+    values[at] = value;
   }
 }

@@ -60,7 +60,7 @@ export function correctFrame(
     exposureSeconds: exposureSeconds(raw),
     header: raw.primaryHeader ?? raw.header,
     assumptions: unique([...layout.assumptions, ...calibrations.assumptions, ...withoutCalibration(raw, calibrations)]),
-    warnings: unique(warnings),
+    warnings: [...new Set(warnings)],
   };
 }
 
@@ -152,6 +152,11 @@ function fixedVarianceImage(frame: Assembled, { bias, dark, response }: Calibrat
   return variance;
 }
 
+/** One of each, whatever frame it was said of: fifteen calibration frames share their assumptions. */
 function unique(sentences: string[]): string[] {
-  return [...new Set(sentences)];
+  const seen = new Set<string>();
+  return sentences.filter((sentence) => {
+    const text = sentence.slice(sentence.indexOf(": ") + 1);
+    return !seen.has(text) && seen.add(text);
+  });
 }

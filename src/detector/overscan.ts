@@ -10,6 +10,8 @@ import { fitSmoothLevel } from "./smoothLevel.js";
 const CLIP_SIGMAS = 5;
 /** Jitter of whole lines counts as real beyond this many of its own σ. */
 const JITTER_SIGMAS = 5;
+/** So many equal pixels in one line of an overscan are no chance. */
+const FEWEST_ALIKE = 12;
 
 export interface OverscanLevel {
   /** One for every row (or column) of the data section, ADU. */
@@ -33,7 +35,7 @@ export interface OverscanLevel {
  * @throws DetectorError when the overscan holds no finite pixel. */
 export function overscanLevel(raw: RawImage, amplifier: Amplifier): OverscanLevel | undefined {
   if (amplifier.overscan.length === 0) return undefined;
-  const lines = overscanLines(raw, amplifier);
+  const lines = withoutUnreadLines(overscanLines(raw, amplifier));
   const medians = Float64Array.from(lines, medianOf);
   const rough = fitSmoothLevel(medians);
   if (Number.isNaN(rough.level[0])) {
@@ -75,6 +77,15 @@ function overscanLines(raw: RawImage, amplifier: Amplifier): number[][] {
     }
   }
   return lines;
+}
+
+/** A line whose pixels are all the same was not read out: it has no level and no noise to give. Where most lines are so
+ * it is the frame that has no noise. */
+function withoutUnreadLines(lines: number[][]): number[][] {
+  const unread = (line: number[]) => line.length >= FEWEST_ALIKE && line.every((value) => value === line[0]);
+  const nUnread = lines.filter(unread).length;
+  if (nUnread === 0 || nUnread > 0.9 * lines.length) return lines;
+  return lines.map((line) => (unread(line) ? [] : line));
 }
 
 function offsets(lines: number[][], level: Float64Array): number[] {

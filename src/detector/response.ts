@@ -33,9 +33,10 @@ export function pixelResponse(stack: Stack, nx: number, ny: number, regions: Reg
     const shape = largeScaleShape(stack.mean, nx, region);
     const seen: number[] = [];
     for (let y = region.y0; y < region.y1; y++) {
+      const row = shape(y);
       for (let x = region.x0; x < region.x1; x++) {
         const at = y * nx + x;
-        const smooth = shape(x, y);
+        const smooth = row[x - region.x0];
         const r = stack.mean[at] / smooth;
         if (!(smooth > floor) || !(r >= LOWEST_RESPONSE && r <= 1 / LOWEST_RESPONSE)) continue;
         response[at] = r;
@@ -49,8 +50,9 @@ export function pixelResponse(stack: Stack, nx: number, ny: number, regions: Reg
   return { response, relativeVariance, unusable, scatter };
 }
 
-/** A two-dimensional Legendre series through medians of blocks, clipped; its degree follows the number of blocks. */
-function largeScaleShape(image: Float32Array, nx: number, region: Region): (x: number, y: number) => number {
+/** A two-dimensional Legendre series through medians of blocks, clipped; its degree follows the number of blocks.
+ * Returns what gives a row of it, [x1 − x0]. */
+function largeScaleShape(image: Float32Array, nx: number, region: Region): (y: number) => Float64Array {
   const blocks = blockMedians(image, nx, region);
   const { x0, x1, y0, y1 } = region;
   const degree = (size: number) => Math.max(0, Math.min(MOST_DEGREE, Math.floor(size / BLOCK / 3)));
@@ -76,7 +78,21 @@ function largeScaleShape(image: Float32Array, nx: number, region: Region): (x: n
     kept = next;
     coef = leastSquares(kept, basis, terms.length);
   }
-  return (x, y) => dot(coef, basis(x, y));
+  const columns = Array.from({ length: x1 - x0 }, (_, i) => {
+    legendreTerms(px, toUnit(x0 + i, x0, x1));
+    return px.slice();
+  });
+  const alongRow = new Float64Array(nTermX);
+  const row = new Float64Array(x1 - x0);
+  return (y) => {
+    legendreTerms(py, toUnit(y, y0, y1));
+    for (let a = 0; a < nTermX; a++) {
+      alongRow[a] = 0;
+      for (let b = 0; b < nTermY; b++) alongRow[a] += py[b] * coef[b * nTermX + a];
+    }
+    for (let i = 0; i < row.length; i++) row[i] = dot(alongRow, columns[i]);
+    return row;
+  };
 }
 
 interface Block {

@@ -20,6 +20,20 @@ const FITTING: Record<Role, ExposureKind[]> = {
   science: ["science", "twilight", "arc", "fibre flat", "flat"],
 };
 
+/** With their articles, for sentences. */
+const CALLED: Record<Role | ExposureKind, string> = {
+  bias: "a bias",
+  dark: "a dark",
+  "pixel flat": "a pixel flat",
+  "detector flat": "a detector flat",
+  "fibre flat": "a fibre flat",
+  flat: "a flat",
+  arc: "an arc",
+  twilight: "a twilight",
+  science: "a science frame",
+  unknown: "unknown",
+};
+
 /** A bias "exposure" may carry a shutter's rounding. */
 const LONGEST_BIAS_SECONDS = 1;
 /** A flat with less light than this is no flat. */
@@ -36,16 +50,20 @@ export function checkRole(raw: RawImage, frame: Assembled, role: Role): string[]
   const problem = problemOf(raw, frame, levels, role);
   const headerAgrees = kind === "unknown" || FITTING[role].includes(kind);
   if (problem !== undefined) {
-    const header = headerAgrees ? "" : ` and its ${said} is no ${role}`;
-    throw new DetectorError(`${raw.name} was given as a ${role}, but ${problem}${header}; check the list of frames.`);
+    const header = headerAgrees ? "" : ` and its ${said} is not ${CALLED[role]}`;
+    throw new DetectorError(
+      `${raw.name} was given as ${CALLED[role]}, but ${problem}${header}; check the list of frames.`,
+    );
   }
   if (headerAgrees) return [];
   if (mustAgree(role, kind)) {
     throw new DetectorError(
-      `${raw.name} was given as a ${role}, but its ${said} says that it is a ${kind}; check the list of frames, or correct the header.`,
+      `${raw.name} was given as ${CALLED[role]}, but its ${said} says that it is ${CALLED[kind]}; check the list of frames, or correct the header.`,
     );
   }
-  return [`${raw.name} is used as a ${role}, though its ${said} says ${kind}; its pixels do not contradict the role.`];
+  return [
+    `${raw.name} is used as ${CALLED[role]}, though its ${said} says ${CALLED[kind]}; its pixels do not contradict the role.`,
+  ];
 }
 
 /** Pairs that pixels cannot tell apart well enough to overrule the header. */
@@ -62,7 +80,7 @@ function problemOf(raw: RawImage, frame: Assembled, levels: Levels, role: Role):
     case "dark":
       return darkProblem(raw, frame, levels);
     case "pixel flat":
-      return flatProblem(frame, levels) ?? (levels.median < FAINTEST_FLAT_ELECTRONS ? noLight(levels) : undefined);
+      return flatProblem(frame, levels) ?? unevenProblem(levels);
     case "fibre flat":
       return flatProblem(frame, levels) ?? arcProblem(frame);
     default:
@@ -109,6 +127,12 @@ function flatProblem(frame: Assembled, levels: Levels): string | undefined {
     levels.median < FAINTEST_FLAT_ELECTRONS
     ? noLight(levels)
     : undefined;
+}
+
+/** Most of a detector lies in the dark under an arc or a science frame; a pixel flat lights all of it. */
+function unevenProblem({ median, p99 }: Levels): string | undefined {
+  if (median >= FAINTEST_FLAT_ELECTRONS) return undefined;
+  return `half of its pixels hold less than ${median.toFixed(0)} e⁻ while 1 % hold over ${p99.toFixed(0)} e⁻, and a pixel flat lights the detector evenly`;
 }
 
 function noLight(levels: Levels): string {
