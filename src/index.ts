@@ -1,5 +1,21 @@
 /** The public library. */
 
+export {
+  type CalibrationFrames,
+  type CalibrationInput,
+  type Calibrations,
+  makeCalibrations,
+  noCalibrations,
+} from "./detector/calibrations.js";
+export { type CorrectOptions, correctFrame } from "./detector/correct.js";
+export { DetectorError } from "./detector/detectorError.js";
+export { type DetectorGeometry, type Frame, MaskBit, type NoiseIngredients } from "./detector/frame.js";
+export { requireSameGeometry } from "./detector/geometry.js";
+export { type CalibrationPaths, loadCalibrations } from "./detector/loadCalibrations.js";
+export { type LookOptions, type LookReport, lookAt } from "./detector/look.js";
+export { type AmplifierNoise, measureNoise, type NoiseFrames, type NoiseMeasurement } from "./detector/noise.js";
+export type { RawImage } from "./detector/raw.js";
+export type { Role } from "./detector/roles.js";
 export { historyCards, inputCards } from "./fits/carry.js";
 export { encodeFits, type OutputColumn, type OutputHdu, type OutputImage, type PixelArray } from "./fits/encode.js";
 export { FitsError, type FitsErrorCode } from "./fits/errors.js";
@@ -22,3 +38,4 @@ export {
 export { parseScene, readScene, type Scene, SceneError, type SceneExposure } from "./simulate/scene.js";
 export { SCENES } from "./simulate/scenes.js";
 export type { TrueLine } from "./simulate/spectra.js";
+export { parseSpectrograph, readSpectrograph, type Spectrograph, SpectrographError } from "./spectrograph.js";

@@ -28,6 +28,13 @@ export interface DarkCurrent {
   typicalRate: number[];
 }
 
+export interface CalibrationInput {
+  role: "bias" | "dark" | "pixel flat" | "bad pixels";
+  name: string;
+  /** Of the file's HDU; empty for an image that came from no file. */
+  checksum: string;
+}
+
 /** All images are ny × nx of the turned frame. */
 export interface Calibrations {
   /** Of which readout they are; absent when there is none. */
@@ -39,8 +46,8 @@ export interface Calibrations {
   response?: PixelResponse;
   /** As it was read: image of the assembled frame, not 0 where a pixel is not to be used. */
   badPixels?: RawImage;
-  /** Names of the frames that went in, by role: for HISTORY. */
-  names: { bias: string[]; dark: string[]; pixelFlat: string[]; badPixels: string[] };
+  /** The frames that went in, in order: for HISTORY. */
+  inputs: CalibrationInput[];
   assumptions: string[];
   warnings: string[];
 }
@@ -60,7 +67,7 @@ const MOST_CLIPPED = 0.02;
 
 /** Nothing given: nothing applied. */
 export function noCalibrations(): Calibrations {
-  return { names: { bias: [], dark: [], pixelFlat: [], badPixels: [] }, assumptions: [], warnings: [] };
+  return { inputs: [], assumptions: [], warnings: [] };
 }
 
 /** Combines the frames of each role.
@@ -76,7 +83,7 @@ export async function makeCalibrations(frames: CalibrationFrames, spectrograph?:
   if (frames.badPixels) {
     if (made.geometry) badPixelMask(frames.badPixels, made.geometry); // complains early
     made.badPixels = frames.badPixels;
-    made.names.badPixels.push(frames.badPixels.name);
+    made.inputs.push(inputOf(frames.badPixels, "bad pixels"));
   }
   return made;
 }
@@ -87,13 +94,12 @@ interface CalibrationFrame extends Assembled {
 
 async function assembled(
   frames: Frames | undefined,
-  role: Role,
+  role: "bias" | "dark" | "pixel flat",
   made: Calibrations,
   spectrograph: Spectrograph | undefined,
 ): Promise<CalibrationFrame[]> {
   const list: CalibrationFrame[] = [];
   if (frames === undefined) return list;
-  const key = role === "pixel flat" ? "pixelFlat" : (role as "bias" | "dark");
   for await (const raw of frames) {
     refuseImpossible(raw, spectrograph);
     const frame = assemble(raw, detectorLayout(raw, spectrograph));
@@ -105,10 +111,14 @@ async function assembled(
     // The check looks at the frame before bias structure is off: a few electrons do not matter to it.
     made.warnings.push(...checkRole(raw, frame, role), ...frame.layout.warnings);
     made.assumptions.push(...frame.layout.assumptions);
-    made.names[key].push(raw.name);
+    made.inputs.push(inputOf(raw, role));
     list.push({ ...frame, seconds: darkSeconds(raw) });
   }
   return list;
+}
+
+function inputOf(raw: RawImage, role: CalibrationInput["role"]): CalibrationInput {
+  return { role, name: raw.name, checksum: raw.checksum ?? "" };
 }
 
 /** @throws DetectorError when nothing tells the zero level of a frame that is not itself a bias. */

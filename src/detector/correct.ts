@@ -14,7 +14,7 @@ import { darkSeconds, exposureSeconds } from "./exposure.js";
 import { type Frame, MaskBit, type NoiseIngredients } from "./frame.js";
 import { frameWarnings, refuseOtherAxis } from "./frameSanity.js";
 import { requireSameGeometry } from "./geometry.js";
-import type { RawImage } from "./raw.js";
+import { carriedHeader, type RawImage } from "./raw.js";
 import { refuseImpossible } from "./rawSanity.js";
 import { checkRole, type Role } from "./roles.js";
 
@@ -58,7 +58,7 @@ export function correctFrame(
     noise,
     geometry: layout.geometry,
     exposureSeconds: exposureSeconds(raw),
-    header: raw.primaryHeader ?? raw.header,
+    header: carriedHeader(raw),
     assumptions: unique([...layout.assumptions, ...calibrations.assumptions, ...withoutCalibration(raw, calibrations)]),
     warnings: [...new Set(warnings)],
   };

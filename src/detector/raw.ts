@@ -1,5 +1,6 @@
 /** A raw frame: what the detector wrote, in ADU, and its header. */
-import type { CardValue, Header } from "../fits/header.js";
+import { inputCards } from "../fits/carry.js";
+import { type CardValue, Header } from "../fits/header.js";
 import { DetectorError } from "./detectorError.js";
 
 /** What the detector stage needs of a FITS image; row-major, data[(row) · nx + column], row 0 is the first of the file. */
@@ -15,6 +16,8 @@ export interface RawImage {
   bitpix?: number;
   unit?: string | null | undefined;
   warnings?: string[];
+  /** Stands for the HDU in a product's HISTORY. */
+  checksum?: string;
 }
 
 /** The first of these keywords that has a value, in the image's header, then in the primary one. */
@@ -26,6 +29,14 @@ export function cardOf(raw: RawImage, keywords: string[]): { keyword: string; va
     }
   }
   return undefined;
+}
+
+/** The cards a product carries on: the primary header's, then what the image's own header adds to them. */
+export function carriedHeader(raw: RawImage): Header {
+  const { header, primaryHeader } = raw;
+  if (primaryHeader === undefined || primaryHeader === header) return header;
+  const own = inputCards(header).filter((card) => card.value !== undefined && !primaryHeader.has(card.keyword));
+  return new Header([...primaryHeader.cards, ...own], primaryHeader.place);
 }
 
 /** A number from the header, also when it was written as a string; undefined when no such card is there.
