@@ -20,6 +20,9 @@ export interface Peak {
   sigma: number;
   /** e⁻ per pixel under it. */
   background: number;
+  /** How far what is left without this fibre stands out from its flanks, as a share of what its light would: 1 for a
+   * fibre, 0 for a step or a slope of the background. */
+  standsOut: number;
 }
 
 /** A robust mean over columns about the middle, tilted so that it follows the tramlines. Arrays [ny]. */
@@ -148,11 +151,12 @@ export function findPeaks(kernels: Kernels, cut: Cut, name: string): Peak[] {
     const tried = [...peaks.map((peak) => peak.position), ...holes].sort((a, b) => a - b);
     const still = new Set(holes);
     const sigma = medianOf(peaks.map((peak) => peak.sigma));
-    const lights = centrePeaks(kernels, cut, tried, sigma, 1, false);
+    const lights = centrePeaks(kernels, cut, tried, sigma, 2, false);
     const typical = medianOf(peaks.map((peak) => peak.light));
     const found = lights.filter(
       (peak) =>
-        !still.has(peak.position) || (peak.light > 1.2 * FAINTEST_SHARE * typical && peak.light > 8 * peak.lightError),
+        !still.has(peak.position) ||
+        (peak.light > 1.2 * FAINTEST_SHARE * typical && peak.light > 8 * peak.lightError && peak.standsOut > 0.5),
     );
     if (found.length > peaks.length) {
       const positions = found.map((peak) => peak.position);
@@ -252,7 +256,9 @@ function centrePeaks(
   let model = cut.mean;
   let peaks: Peak[] = [];
   for (let round = 0; round < nRound; round++) {
+    const near = rowsNear(centre, 1.3 * pitch, ny);
     const weight = model.map((m, y) => {
+      if (near[y] === 0) return 0;
       const light = Math.max(0, Number.isNaN(m) ? 0 : m);
       return 1 / (cut.fixedVariance[y] + cut.variancePerElectron[y] * light + (0.02 * light) ** 2);
     });
@@ -278,12 +284,40 @@ function centrePeaks(
       height: (solution[k * nPar] * 0.3989422804014327) / sigma,
       sigma,
       background: backgroundAt(background, position, ny),
+      standsOut: standsOut(cut.mean, next, position, solution[k * nPar], sigma),
     }));
   }
   return peaks.sort((a, b) => a.position - b.position);
 }
 
+/** 1 for the rows at most `distance` px from a centre: what lies farther says nothing of the light between fibres. */
+export function rowsNear(centre: ArrayLike<number>, distance: number, ny: number): Uint8Array {
+  const near = new Uint8Array(ny);
+  for (let k = 0; k < centre.length; k++) {
+    const to = Math.min(ny - 1, Math.floor(centre[k] + distance));
+    for (let y = Math.max(0, Math.ceil(centre[k] - distance)); y <= to; y++) near[y] = 1;
+  }
+  return near;
+}
+
 function backgroundAt(background: Float64Array, y: number, ny: number): number {
   const t = (2 * y) / (ny - 1) - 1;
   return background[0] + background[1] * t + background[2] * (1.5 * t * t - 0.5);
+}
+
+function standsOut(data: Float64Array, model: Float64Array, centre: number, light: number, sigma: number): number {
+  const y = Math.round(centre);
+  const row = (at: number) => (at >= 0 && at < data.length ? data[at] - model[at] : Number.NaN);
+  // A Gaussian's light in a pixel, roughly; its share of the whole does not matter to a ratio near 1.
+  const unit = (at: number) => gaussianShape((at - centre) / sigma) / (sigma * 2.5066282746310002);
+  const expected = light * (unit(y) - 0.5 * (unit(y - FLANK) + unit(y + FLANK)));
+  const rest = row(y) - 0.5 * (row(y - FLANK) + row(y + FLANK));
+  return (rest + expected) / expected;
+}
+
+/** exp(−v²/2) as (1 + v²/16)⁻⁸: near enough to compare shapes, and the same bits on every engine. */
+function gaussianShape(v: number): number {
+  const base = 1 / (1 + (v * v) / 16);
+  const square = base * base * base * base;
+  return square * square;
 }

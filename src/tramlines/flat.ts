@@ -103,6 +103,8 @@ export function pixelVariance(frame: Frame, at: number, model: number): number {
 export interface ColumnGroup {
   /** Middle of the columns, pixels. */
   x: number;
+  /** Columns. */
+  width: number;
   /** e⁻ per pixel; NaN where no pixel is good. */
   mean: Float64Array;
   /** Pixels in the mean. */
@@ -119,52 +121,72 @@ const KAPPA_HIT = 8;
 
 /** Columns `from` … `to − 1`. */
 export function groupColumns(flat: Flat, from: number, to: number): ColumnGroup {
-  const { nx, ny, frame } = flat;
-  const rowMedian = new Float64Array(ny);
-  const values: number[] = [];
-  for (let y = 0; y < ny; y++) {
-    values.length = 0;
-    for (let x = from; x < to; x++) if (flat.nUsed[y * nx + x] > 0) values.push(flat.electrons[y * nx + x]);
-    rowMedian[y] = middle(values);
-  }
+  const { ny } = flat;
   const group: ColumnGroup = {
     x: 0.5 * (from + to - 1),
+    width: to - from,
     mean: new Float64Array(ny),
     count: new Uint16Array(ny),
     fixedVariance: new Float64Array(ny),
     variancePerElectron: new Float64Array(ny),
   };
+  const rowMedian = rowMedians(flat, from, to);
   for (let y = 0; y < ny; y++) {
     const slope = 0.5 * spread(rowMedian[Math.max(0, y - 1)], rowMedian[y], rowMedian[Math.min(ny - 1, y + 1)]);
-    let sum = 0;
-    let fixed = 0;
-    let perElectron = 0;
-    let n = 0;
-    for (let x = from; x < to; x++) {
-      const at = y * nx + x;
-      if (flat.nUsed[at] === 0) continue;
-      const variance = pixelVariance(frame, at, rowMedian[y]) / flat.nUsed[at];
-      const excess = flat.electrons[at] - rowMedian[y];
-      if (excess > slope && (excess - slope) ** 2 > KAPPA_HIT * KAPPA_HIT * variance) continue;
-      const dark = pixelVariance(frame, at, 0) / flat.nUsed[at];
-      sum += flat.electrons[at];
-      fixed += dark;
-      perElectron += (frame.noise.inverseResponse?.[at] ?? 1) / flat.nUsed[at];
-      n++;
-    }
-    group.count[y] = n;
-    group.mean[y] = n > 0 ? sum / n : Number.NaN;
-    group.fixedVariance[y] = n > 0 ? fixed / (n * n) : Number.NaN;
-    group.variancePerElectron[y] = n > 0 ? perElectron / (n * n) : Number.NaN;
+    averageRow(flat, from, to, y, rowMedian[y], slope, group);
   }
   return group;
 }
 
-/** Median of a short list, which is sorted in place; NaN when empty. */
-function middle(values: number[]): number {
-  values.sort((a, b) => a - b);
-  const half = values.length >> 1;
-  return values.length % 2 === 1 ? values[half] : 0.5 * (values[half - 1] + values[half]);
+function rowMedians(flat: Flat, from: number, to: number): Float64Array {
+  const { nx, ny, electrons, nUsed } = flat;
+  const medians = new Float64Array(ny);
+  const sorted = new Float64Array(to - from);
+  for (let y = 0; y < ny; y++) {
+    let n = 0;
+    for (let at = y * nx + from; at < y * nx + to; at++) {
+      if (nUsed[at] === 0) continue;
+      const value = electrons[at];
+      let place = n++;
+      for (; place > 0 && sorted[place - 1] > value; place--) sorted[place] = sorted[place - 1];
+      sorted[place] = value;
+    }
+    const half = n >> 1;
+    medians[y] = n === 0 ? Number.NaN : n % 2 === 1 ? sorted[half] : 0.5 * (sorted[half - 1] + sorted[half]);
+  }
+  return medians;
+}
+
+function averageRow(
+  flat: Flat,
+  from: number,
+  to: number,
+  y: number,
+  rowMedian: number,
+  slope: number,
+  group: ColumnGroup,
+): void {
+  const { nx, electrons, nUsed, frame } = flat;
+  const { inverseResponse } = frame.noise;
+  let sum = 0;
+  let fixed = 0;
+  let perElectron = 0;
+  let n = 0;
+  for (let x = from; x < to; x++) {
+    const at = y * nx + x;
+    if (nUsed[at] === 0) continue;
+    const excess = electrons[at] - rowMedian - slope;
+    if (excess > 0 && excess * excess * nUsed[at] > KAPPA_HIT * KAPPA_HIT * pixelVariance(frame, at, rowMedian))
+      continue;
+    sum += electrons[at];
+    fixed += pixelVariance(frame, at, 0) / nUsed[at];
+    perElectron += (inverseResponse === undefined ? 1 : inverseResponse[at]) / nUsed[at];
+    n++;
+  }
+  group.count[y] = n;
+  group.mean[y] = sum / n;
+  group.fixedVariance[y] = fixed / (n * n);
+  group.variancePerElectron[y] = perElectron / (n * n);
 }
 
 function spread(below: number, here: number, above: number): number {
