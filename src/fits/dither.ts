@@ -16,7 +16,7 @@ export type Dither = (
 
 /** By the name in ZQUANTIZ; `seed`: ZDITHER0. Undefined for a name that is not of the standard. */
 export function ditherOf(name: string, seed: number): Dither | undefined {
-  if (name === "NO_DITHER") {
+  if (name === "NO_DITHER" || name === "NONE") {
     return (stored, _row, scale, zero, blank) =>
       Float64Array.from(stored, (v) => (v === blank ? Number.NaN : v * scale + zero));
   }
