@@ -59,13 +59,16 @@ export function expectedElectrons(detector: Detector, exposure: SceneExposure, l
   return light.map((electrons, i) => detector.response[i] * electrons + dark + detector.bad[i] * BAD_COLUMN_ELECTRONS);
 }
 
+/** Over any full well: brighter light is drawn as this, and clipped by the converter all the same. */
+const MOST_ELECTRONS = 1e9;
+
 /** Poisson electrons, a stream a row: a change of the light in one row leaves the others' noise alone. */
 export function countElectrons(detector: Detector, exposure: SceneExposure, expected: Float64Array): Float64Array {
   const { nx, ny, scene } = detector;
   const counted = new Float64Array(nx * ny);
   for (let y = 0; y < ny; y++) {
     const stream = openStream(scene.seed, exposure.name, "photons", y);
-    for (let i = y * nx; i < (y + 1) * nx; i++) counted[i] = poisson(stream, expected[i]);
+    for (let i = y * nx; i < (y + 1) * nx; i++) counted[i] = poisson(stream, Math.min(expected[i], MOST_ELECTRONS));
   }
   return counted;
 }

@@ -5,8 +5,10 @@
  * Mathematics and Economics 12, 39. */
 import type { Stream } from "./streams.js";
 
-/** A Poisson number of this mean (finite, ≥ 0; a mean of 0 or less gives 0 and takes nothing from the stream). */
+/** A Poisson number of this mean; a mean of 0 or less, or none, gives 0 and takes nothing from the stream.
+ * @throws RangeError above 1e12, where rounding in the rejection's logarithms begins to matter. */
 export function poisson(stream: Stream, mean: number): number {
+  if (mean > 1e12) throw new RangeError(`Poisson mean: found ${mean}, at most 1e12 can be drawn; lower it`);
   if (!(mean > 0)) return 0;
   return mean < 10 ? byInversion(stream, mean) : byTransformedRejection(stream, mean);
 }

@@ -6,18 +6,27 @@ import { parse, TomlError } from "smol-toml";
 import { z } from "zod";
 import { checkScene } from "./sceneChecks.js";
 
-const positive = z.number().positive();
+// The upper ends keep every product of them finite; none is near anything that a detector sees.
+const positive = z.number().positive().max(1e9);
+const amount = z.number().min(0).max(1e9);
+const pixels = z.number().min(-1e6).max(1e6);
+const ascii = (most: number) =>
+  z
+    .string()
+    .min(1)
+    .regex(/^[ -~]*$/, "expected plain ASCII, since it goes into FITS headers")
+    .max(most);
 const share = z.number().min(0).max(0.9);
 const whole = z.int();
 
 const amplifier = z.strictObject({
   /** e⁻/ADU and e⁻. */
   gain: positive,
-  read_noise: z.number().min(0),
+  read_noise: amount,
   /** ADU. */
-  bias: z.number().min(0).default(1000),
+  bias: amount.default(1000),
   /** ADU: how far the level wanders along the readout. */
-  drift: z.number().min(0).default(0),
+  drift: amount.default(0),
   /** Columns of overscan in the file. */
   overscan: whole.min(0).max(512).default(32),
   /** FITS section of the assembled frame; absent: all of it. */
@@ -31,11 +40,11 @@ const detector = z.strictObject({
   /** ADU; the converter clips here. */
   saturation: whole.min(1).max(65535).default(65535),
   /** e⁻ per pixel and second. */
-  dark: z.number().min(0).default(0),
+  dark: amount.default(0),
   /** Relative rms of the pixels' response about 1. */
   response_rms: z.number().min(0).max(0.2).default(0),
   /** ADU rms of a fixed column pattern in the bias. */
-  bias_pattern: z.number().min(0).default(0),
+  bias_pattern: amount.default(0),
   /** Columns of the assembled file, from 1. */
   bad_columns: z.array(whole.min(1)).default([]),
   amplifier: z.array(amplifier).min(1).max(16),
@@ -44,35 +53,35 @@ const detector = z.strictObject({
 const slit = z.strictObject({
   blocks: z.array(whole.min(1)).min(1),
   pitch: positive,
-  gap: z.union([z.number().min(0), z.array(z.number().min(0))]).default(0),
+  gap: z.union([amount, z.array(amount)]).default(0),
   /** y of the first fibre in the middle column; absent: the slit is centred. */
-  first: z.number().optional(),
+  first: pixels.optional(),
   dead: z.array(whole.min(1)).default([]),
   sky: z.array(whole.min(1)).default([]),
 });
 
 /** Coefficients of Legendre polynomials in t, the column mapped to [−1, 1]; s is the slit position mapped to [−1, 1]. */
 const tramlines = z.strictObject({
-  tilt: z.number().default(0), // P1
-  fan: z.number().default(0), // s · P1
-  bow: z.number().default(0), // P2
-  bow_fan: z.number().default(0), // s · P2
-  curl: z.number().default(0), // P3
-  quartic: z.number().default(0), // P4
+  tilt: pixels.default(0), // P1
+  fan: pixels.default(0), // s · P1
+  bow: pixels.default(0), // P2
+  bow_fan: pixels.default(0), // s · P2
+  curl: pixels.default(0), // P3
+  quartic: pixels.default(0), // P4
   /** Each fibre's own, rms, pixels. */
-  own_place: z.number().min(0).default(0),
-  own_tilt: z.number().min(0).default(0),
-  own_bow: z.number().min(0).default(0),
+  own_place: amount.default(0),
+  own_tilt: amount.default(0),
+  own_bow: amount.default(0),
 });
 
 const profile = z.strictObject({
   /** Of the core. */
   fwhm: z.number().min(0.5).max(50),
   /** Relative: width = 1 + tilt·P1(t) + bow·P2(t) + across·s + across_bow·s². */
-  tilt: z.number().default(0),
-  bow: z.number().default(0),
-  across: z.number().default(0),
-  across_bow: z.number().default(0),
+  tilt: pixels.default(0),
+  bow: pixels.default(0),
+  across: pixels.default(0),
+  across_bow: pixels.default(0),
   /** Each fibre's own width, relative rms. */
   own_width: z.number().min(0).max(0.2).default(0),
   second_share: share.default(0),
@@ -96,11 +105,11 @@ const wavelength = z.strictObject({
   /** Å at the first and the last column, in the middle of the slit; may fall. */
   range: z.tuple([positive, positive]),
   /** Å: P2(t), P3(t), and s² (lines bowed along the slit). */
-  curve: z.number().default(0),
-  cubic: z.number().default(0),
-  slit_bow: z.number().default(0),
+  curve: pixels.default(0),
+  cubic: pixels.default(0),
+  slit_bow: pixels.default(0),
   /** Each fibre's own, pixels rms. */
-  own_place: z.number().min(0).default(0),
+  own_place: amount.default(0),
   /** Pixels: width of an unresolved line. */
   fwhm: z.number().min(0.8).max(30).default(2.2),
   lamps: z.array(z.enum(["Ne", "Ar", "Hg", "Cu"])).default(["Ne", "Ar", "Hg", "Cu"]),
@@ -126,7 +135,7 @@ const science = z.strictObject({
   brightest: positive.default(1e5),
   seconds: positive.default(900),
   /** One level a slit position instead, repeated when shorter. */
-  levels: z.array(z.number().min(0)).min(1).optional(),
+  levels: z.array(amount).min(1).optional(),
   /** Relative size of the continuum's slow changes. */
   colour: z.number().min(0).max(0.9).default(0.3),
   /** Absorption lines a target, and their greatest depth. */
@@ -136,18 +145,18 @@ const science = z.strictObject({
   emission_share: z.number().min(0).max(1).default(0.5),
   emission_brightest: positive.default(1e5),
   /** Electrons per column in `seconds`; and of the brightest night-sky line. */
-  sky_level: z.number().min(0).default(0),
-  sky_line: z.number().min(0).default(0),
+  sky_level: amount.default(0),
+  sky_line: amount.default(0),
 });
 
 const cosmicRays = z.strictObject({
   /** Hits on the frame in 1000 s. */
-  rate: z.number().min(0).max(1e6),
+  rate: z.number().min(0).max(1e5),
   /** Pixels, of the mean track; electrons of the median hit. */
-  length: positive.default(4),
+  length: z.number().positive().max(1000).default(4),
   electrons: positive.default(2000),
   /** Seconds that the detector waits on top of the exposure while it is read. */
-  readout_seconds: z.number().min(0).default(30),
+  readout_seconds: amount.default(30),
 });
 
 const KINDS = ["bias", "dark", "detector-flat", "fibre-flat", "arc", "twilight", "science"] as const;
@@ -155,20 +164,20 @@ const KINDS = ["bias", "dark", "detector-flat", "fibre-flat", "arc", "twilight",
 const exposure = z.strictObject({
   name: z.string().regex(/^[A-Za-z0-9_-]{1,40}$/, "expected a file name of letters, digits, _ and -"),
   kind: z.enum(KINDS),
-  seconds: z.number().min(0).default(0),
-  object: z.string().max(60).optional(),
+  seconds: amount.default(0),
+  object: ascii(60).optional(),
   /** Of all the light. */
-  brightness: z.number().min(0).default(1),
+  brightness: amount.default(1),
   /** Pixels, of the light along the slit against the tramlines; `stretch` per pixel from the middle row. */
-  shift: z.number().default(0),
+  shift: pixels.default(0),
   stretch: z.number().min(-0.01).max(0.01).default(0),
   /** Pixels, along dispersion: a wavelength moves to a column higher by this. */
-  dispersion_shift: z.number().default(0),
+  dispersion_shift: pixels.default(0),
   cosmic_rays: z.boolean().default(true),
 });
 
 const sceneSchema = z.strictObject({
-  name: z.string().min(1).max(60),
+  name: ascii(60),
   seed: whole.min(0),
   /** One Gaussian, nothing else: no second Gaussian, wings, scattered light, cosmic rays, response or bad columns. */
   clean: z.boolean().default(false),

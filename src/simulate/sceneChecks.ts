@@ -10,9 +10,13 @@ export function checkScene(scene: Scene): string | undefined {
   );
 }
 
-function checkSlit({ slit }: Scene): string | undefined {
+function checkSlit({ slit, detector }: Scene): string | undefined {
   const nFibre = slit.blocks.reduce((sum, n) => sum + n, 0);
   if (nFibre > 5000) return `slit.blocks: ${nFibre} fibres, but at most 5000 can be simulated; take some out`;
+  const nx = detector.size[detector.dispersion_axis - 1];
+  if (nFibre * nx > 2e7) {
+    return `slit.blocks: ${nFibre} fibres on ${nx} columns, but at most 2e7 points of spectra can be simulated; take some out`;
+  }
   for (const key of ["dead", "sky"] as const) {
     const outside = slit[key].find((fibre) => fibre > nFibre);
     if (outside !== undefined)

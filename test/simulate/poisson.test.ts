@@ -16,6 +16,12 @@ describe("Poisson numbers", () => {
     expect([poisson(stream, 0), poisson(stream, -3), poisson(stream, Number.NaN)]).toEqual([0, 0, 0]);
   });
 
+  test("a mean beyond all counting is refused", () => {
+    expect(() => poisson(openStream(1, "x"), Infinity)).toThrow(
+      "Poisson mean: found Infinity, at most 1e12 can be drawn; lower it",
+    );
+  });
+
   // 9.999 and 10.001 stand on either side of the change of method.
   test.each([0.03, 0.7, 3.2, 9.999, 10.001, 37.4, 812.6, 9.1e4, 3.3e6])(
     "mean, variance and third moment for λ = %f",

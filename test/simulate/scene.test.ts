@@ -85,6 +85,16 @@ describe("scenes", () => {
       "s.toml: exposure[1].seconds: found 0 for a dark; only a bias takes no time",
     ],
     [
+      "a name that no FITS header holds",
+      sceneText({}).replace("test bench", "Prüfstand"),
+      's.toml: name: found "Prüfstand", expected plain ASCII, since it goes into FITS headers; correct the value',
+    ],
+    [
+      "a level beyond all counting",
+      `${sceneText({})}\n[science]\nlevels = [1e12]`,
+      "s.toml: science.levels[1]: found 1000000000000, expected at most 1000000000; correct the value",
+    ],
+    [
       "a name that is a path",
       sceneText({}).replace('"sci_01"', '"../x"'),
       's.toml: exposure[1].name: found "../x", expected a file name of letters, digits, _ and -; correct the value',
