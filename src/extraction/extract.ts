@@ -1,0 +1,132 @@
+/** From a frame and its tramlines to spectra: background, a first pass that finds cosmic rays, their growth, and a second
+ * pass over the columns that it touched. */
+import type { Frame } from "../detector/frame.js";
+import type { Precision } from "../kernels/banded.js";
+import { ExtractionBench } from "../kernels/extraction.js";
+import { loadKernels } from "../kernels/module.js";
+import { Flag, MaskBit } from "../reference/bits.js";
+import type { ExtractionInput, ExtractionOutput, Method } from "../reference/extract.js";
+import { checkGeometry } from "../tramlines/file.js";
+import type { Tramlines } from "../tramlines/tramlines.js";
+import { type BackgroundFit, fitBackground, noBackground } from "./background.js";
+import { runPasses } from "./passes.js";
+import { type ExtractionPlan, planExtraction } from "./plan.js";
+import type { Spectra } from "./spectra.js";
+
+export interface ExtractionOptions {
+  /** Default joint. */
+  method?: Method;
+  /** Give back to each fibre what boxcar or optimal let its neighbours take; joint always does. Default true. */
+  crosstalk?: boolean;
+  /** Type of the kernels' numbers. Default f64; f32 is faster and serves well-separated fibres. */
+  precision?: Precision;
+  /** Reject cosmic rays. Default true. */
+  cosmicRays?: boolean;
+  /** Excess over noise, in σ, from which on a pixel is rejected. Default 5. */
+  kappa?: number;
+  /** The same for pixels beside a rejected one. Default 2.5. */
+  growKappa?: number;
+  /** Half of the boxcar's aperture, pixels. Default half of the smallest pitch. */
+  halfAperture?: number;
+  /** Take off a smooth background seen between the fibres. Default true. */
+  background?: boolean;
+  /** Called with the share of columns done, 0 to 1. */
+  onProgress?: (share: number) => void;
+}
+
+export interface Extraction {
+  spectra: Spectra;
+  plan: ExtractionPlan;
+  background: BackgroundFit | null;
+  /** ny × nx, bits of MaskBit: cosmic, grown (and suspect, which were kept). */
+  rejected: Uint8Array;
+  nRejected: number;
+  warnings: string[];
+}
+
+/** Extracts every fibre of `frame` that `tramlines` hold.
+ * @throws RangeError when the two come from different readout windows, or no fibre is lit. */
+export async function extractFrame(
+  frame: Frame,
+  tramlines: Tramlines,
+  options: ExtractionOptions = {},
+): Promise<Extraction> {
+  checkGeometry(frame, tramlines);
+  const kernels = await loadKernels();
+  const plan = planExtraction(tramlines);
+  const fit = options.background === false ? null : fitBackground(frame, tramlines);
+  const input = extractionInput(frame, tramlines, plan, fit, options);
+  const bench = new ExtractionBench(
+    kernels,
+    input,
+    Int32Array.from(plan.active),
+    tramlines.nFibre,
+    options.precision ?? "f64",
+  );
+  runPasses(bench, input, options.onProgress);
+  const spectra = finishSpectra(bench.output, tramlines, input);
+  const nRejected = bench.rejected.reduce((n, bits) => n + (bits & (MaskBit.cosmic | MaskBit.grown) ? 1 : 0), 0);
+  return { spectra, plan, background: fit, rejected: bench.rejected, nRejected, warnings: fit?.warnings ?? [] };
+}
+
+/** What the kernel, and its reference, need for this frame. */
+export function extractionInput(
+  frame: Frame,
+  tramlines: Tramlines,
+  plan: ExtractionPlan,
+  background: BackgroundFit | null,
+  options: ExtractionOptions,
+): ExtractionInput {
+  const { active } = plan;
+  const { profile, degree } = tramlines;
+  const method = options.method ?? "joint";
+  const rejecting = options.cosmicRays !== false;
+  return {
+    nx: frame.nx,
+    ny: frame.ny,
+    nFibre: active.length,
+    halfWindow: plan.halfWindow,
+    blockColumns: plan.blockColumns,
+    trace: pickRows(tramlines.legendre, degree + 1, active),
+    nTrace: degree + 1,
+    width: pickRows(profile.sigma, profile.widthDegree + 1, active),
+    nWidth: profile.widthDegree + 1,
+    electrons: frame.electrons,
+    mask: frame.mask,
+    noise: frame.noise,
+    background: background ?? noBackground(),
+    seen: Int32Array.from(active.flatMap((k) => [tramlines.seenFrom[k], tramlines.seenTo[k]])),
+    bandwidth: plan.bandwidth,
+    method,
+    crosstalk: method !== "joint" && options.crosstalk !== false,
+    halfAperture: options.halfAperture ?? plan.smallestPitch / 2,
+    profileError: profile.relativeError,
+    kappa: rejecting ? (options.kappa ?? 5) : 0,
+    growKappa: options.growKappa ?? 2.5,
+    minRounds: 2,
+    maxRounds: 8,
+    rejected: new Uint8Array(frame.nx * frame.ny),
+  };
+}
+
+function finishSpectra(output: ExtractionOutput, tramlines: Tramlines, input: ExtractionInput): Spectra {
+  const { nFibre, nx } = tramlines;
+  tramlines.state.forEach((state, k) => {
+    if (state === "dead") output.flags.fill(Flag.dead, k * nx, (k + 1) * nx);
+  });
+  return {
+    ...output,
+    nFibre,
+    nx,
+    method: input.method,
+    crosstalkCorrected: input.crosstalk || input.method === "joint",
+  };
+}
+
+function pickRows(rows: Float64Array, length: number, which: number[]): Float64Array {
+  const picked = new Float64Array(which.length * length);
+  which.forEach((k, i) => {
+    picked.set(rows.subarray(k * length, (k + 1) * length), i * length);
+  });
+  return picked;
+}
