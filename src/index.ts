@@ -35,7 +35,8 @@ export {
   writeObserverFiles,
   writeSimulation,
 } from "./simulate/files.js";
-export { parseScene, readScene, type Scene, SceneError, type SceneExposure } from "./simulate/scene.js";
+export { parseScene, readScene, type Scene, type SceneExposure } from "./simulate/scene.js";
+export { SceneError } from "./simulate/sceneMessages.js";
 export { SCENES } from "./simulate/scenes.js";
 export type { TrueLine } from "./simulate/spectra.js";
 export { parseSpectrograph, readSpectrograph, type Spectrograph, SpectrographError } from "./spectrograph.js";

@@ -15,7 +15,7 @@ import { scatteredLight, spreadFibres } from "./image.js";
 import { buildOptics, type Optics } from "./optics.js";
 import { profileWeights } from "./profile.js";
 import type { ExposureKind, Scene, SceneExposure } from "./scene.js";
-import { SceneError } from "./scene.js";
+import { SceneError } from "./sceneMessages.js";
 import { columnArgument } from "./series.js";
 import { makeSpectra, type TrueLine } from "./spectra.js";
 

@@ -11,7 +11,8 @@ import { refuseToHarm, type WriteOptions, writeFits } from "../fits/write.js";
 import { buildDetector, type Detector } from "./detector.js";
 import { type SimulatedExposure, simulateExposure, type Truth } from "./exposure.js";
 import { sectionOf } from "./readoutLayout.js";
-import { type Scene, SceneError } from "./scene.js";
+import type { Scene } from "./scene.js";
+import { SceneError } from "./sceneMessages.js";
 
 export interface SimulationFiles {
   spectrograph: string;

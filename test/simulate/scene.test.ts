@@ -3,7 +3,8 @@ import { tmpdir } from "node:os";
 import { join } from "node:path";
 import fc from "fast-check";
 import { describe, expect, test } from "vitest";
-import { parseScene, readScene, SceneError } from "../../src/simulate/scene.js";
+import { parseScene, readScene } from "../../src/simulate/scene.js";
+import { SceneError } from "../../src/simulate/sceneMessages.js";
 import { SCENES } from "../../src/simulate/scenes.js";
 import { sceneText } from "./benches.js";
 
