@@ -124,7 +124,7 @@ class ColumnReader {
     const kinds: Record<string, string> = { X: "bits", C: "complex numbers", M: "complex numbers" };
     const kind = kinds[type] ?? "arrays of variable length";
     const finding = `column ${this.place.name || this.place.number} holds ${kind} (${this.place.format}), which are not read`;
-    throw new FitsError("unsupported", finding, "leave it out", this.hdu.header.place);
+    throw new FitsError("unsupported", finding, "ask for the other columns by name", this.hdu.header.place);
   }
 
   /** Offsets of the column's fields. */
@@ -164,7 +164,7 @@ class ColumnReader {
       out[i] = Number(value);
       if (BigInt(out[i]) !== value) {
         const finding = `column ${name} holds ${value}, beyond what a double counts exactly`;
-        throw new FitsError("unsupported", finding, "leave it out", this.hdu.header.place);
+        throw new FitsError("unsupported", finding, "ask for the other columns by name", this.hdu.header.place);
       }
     }
     return out;
