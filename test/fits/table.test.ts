@@ -123,11 +123,12 @@ hdu = fits.BinTableHDU.from_columns([
     fits.Column('W', 'K', array=np.array([0, 1, 2**53, 2**63], 'u8'), bzero=2**63),
     fits.Column('S', '2I', array=np.array([[0, 2], [4, 6], [8, 10], [12, -14]], 'i2')),
     fits.Column('N', 'J', array=np.array([5, -99, 7, 8]), null=-99),
-    fits.Column('M', 'B', array=np.array([-128, -1, 0, 127], 'i1'), bzero=-128),
+    fits.Column('M', 'B', array=np.array([0, 127, 128, 255], 'u1')),
     fits.Column('T', '3A', array=['abc', 'd', '', ' e']),
 ])
 hdu.header['TSCAL4'] = 0.5
 hdu.header['TZERO4'] = 1
+hdu.header['TZERO6'] = -128
 hdu.writeto(sys.argv[1], checksum=True)
 `;
 
