@@ -40,3 +40,14 @@ export { SceneError } from "./simulate/sceneMessages.js";
 export { SCENES } from "./simulate/scenes.js";
 export type { TrueLine } from "./simulate/spectra.js";
 export { parseSpectrograph, readSpectrograph, type Spectrograph, SpectrographError } from "./spectrograph.js";
+export { NamingError, TraceError } from "./tramlines/errors.js";
+export {
+  checkGeometry,
+  readTramlines,
+  type TramlinesFileOptions,
+  tramlinesHdus,
+  writeTramlines,
+} from "./tramlines/file.js";
+export type { SlitLayout } from "./tramlines/name.js";
+export { type TraceOptions, type Tracing, traceFlat } from "./tramlines/trace.js";
+export type { FibreState, GaussianProfile, Profile, Tramlines } from "./tramlines/tramlines.js";
