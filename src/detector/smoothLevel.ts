@@ -1,13 +1,14 @@
 /** A smooth curve through noisy samples: least squares with uniform cubic B-splines (de Boor, A Practical Guide to
  * Splines, 1978), the number of intervals chosen by the data, wild samples clipped against the samples' own noise.
  *
- * The noise comes from differences of neighbouring samples, which a smooth drift hardly enters. Of 1, 2, 4, … intervals
- * that one is taken which makes χ² + 4·(number of coefficients) least: an interval must earn its keep at 2 σ. */
-import { clippedScatter } from "./clip.js";
+ * The noise comes from differences of neighbouring samples, which a smooth drift hardly enters. Of 1, 2, 3, 4, 5, 7, …
+ * intervals that number is taken which makes χ² + 2·(number of coefficients) least (Akaike 1974, IEEE TAC 19, 716). */
+import { clippedScatter, medianOf } from "./clip.js";
 
 const CLIP_SIGMAS = 5;
-const PRICE_OF_COEFFICIENT = 4;
-const MOST_INTERVALS = 64;
+const PRICE_OF_COEFFICIENT = 2;
+const MOST_INTERVALS = 96;
+const RUNNING = 11;
 
 export interface SmoothLevel {
   /** n: the curve at every sample, also where there was none; held constant beyond the first and last sample. */
@@ -22,17 +23,18 @@ export interface SmoothLevel {
 
 /** Fits `samples` [n], NaN where there is none. Without any sample the level is NaN throughout. */
 export function fitSmoothLevel(samples: Float64Array): SmoothLevel {
-  const used = samples.slice();
   const sampleSigma = noiseFromNeighbours(samples);
-  let fit = bestFit(used, sampleSigma);
-  let nClipped = 0;
+  const reach = CLIP_SIGMAS * sampleSigma;
+  // A wild sample would bend the first curve away from its good neighbours: a running median is not bent.
+  let used = keptWithin(samples, runningMedian(samples), reach);
+  let fit = bestFit(used.values, sampleSigma);
   for (let turn = 0; turn < 5; turn++) {
-    const clipped = clipAgainst(used, fit.level, CLIP_SIGMAS * sampleSigma);
-    nClipped += clipped;
-    if (clipped === 0) break;
-    fit = bestFit(used, sampleSigma);
+    const next = keptWithin(samples, fit.level, reach);
+    if (next.values.every((value, i) => Object.is(value, used.values[i]))) break;
+    used = next;
+    fit = bestFit(used.values, sampleSigma);
   }
-  return { ...fit, sampleSigma, nClipped };
+  return { ...fit, sampleSigma, nClipped: used.nClipped };
 }
 
 /** σ of a sample: scatter of second differences s(i−1) − 2 s(i) + s(i+1), whose variance is 6 σ², blind to a slope. */
@@ -44,16 +46,20 @@ function noiseFromNeighbours(samples: Float64Array): number {
   return Number.isFinite(sigma) ? sigma : 0;
 }
 
-function clipAgainst(used: Float64Array, level: Float64Array, reach: number): number {
-  let clipped = 0;
-  if (reach === 0) return 0;
-  for (let i = 0; i < used.length; i++) {
-    if (Math.abs(used[i] - level[i]) > reach) {
-      used[i] = Number.NaN;
-      clipped++;
-    }
-  }
-  return clipped;
+/** Median of up to RUNNING samples about each; fewer at the ends. */
+function runningMedian(samples: Float64Array): Float64Array {
+  const half = RUNNING >> 1;
+  return samples.map((_, i) => medianOf(samples.subarray(Math.max(0, i - half), i + half + 1)));
+}
+
+function keptWithin(samples: Float64Array, level: Float64Array, reach: number) {
+  let nClipped = 0;
+  const values = samples.map((sample, i) => {
+    if (reach === 0 || !(Math.abs(sample - level[i]) > reach)) return sample;
+    nClipped++;
+    return Number.NaN;
+  });
+  return { values, nClipped };
 }
 
 interface Fit {
@@ -69,7 +75,11 @@ function bestFit(samples: Float64Array, sigma: number): Fit {
   if (last < first) return best;
   if (last - first < 8) return constantFit(samples, sigma);
   let bestCost = Number.POSITIVE_INFINITY;
-  for (let intervals = 1; intervals <= MOST_INTERVALS && (last - first) / intervals >= 4; intervals *= 2) {
+  for (
+    let intervals = 1;
+    intervals <= MOST_INTERVALS && (last - first) / intervals >= 4;
+    intervals = Math.ceil(1.25 * intervals)
+  ) {
     const fit = splineFit(samples, first, last, intervals, sigma);
     if (fit === undefined) break;
     // Without noise every misfit counts; a unit of rounding keeps the cost finite.
