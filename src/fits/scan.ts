@@ -125,9 +125,19 @@ class HduScan {
       const end = this.endOf(text, texts.length * 36);
       texts.push(text.slice(0, end * CARD_BYTES));
       if (end * CARD_BYTES < BLOCK_BYTES) {
+        this.requireNothingAfter(text.slice((end + 1) * CARD_BYTES), texts.length * 36 - 35 + end);
         this.text = texts.join("");
         return at + BLOCK_BYTES;
       }
+    }
+  }
+
+  /** A card that slipped behind END would be lost in silence, BZERO for one. Some writers fill with NUL instead of blanks. */
+  private requireNothingAfter(rest: string, firstCard: number): void {
+    const at = rest.search(/[^ \0]/);
+    if (at >= 0) {
+      const card = firstCard + Math.floor(at / CARD_BYTES);
+      throw this.error("structure", "the header goes on after its END card", "move END behind the last card", card);
     }
   }
 
