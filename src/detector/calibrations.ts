@@ -156,12 +156,31 @@ function stackDark(frames: CalibrationFrame[], made: Calibrations): DarkCurrent 
   );
   warnClipped(frames, stack, "dark", made);
   const seconds = frames.reduce((sum, frame) => sum + frame.seconds, 0);
-  return {
+  const dark: DarkCurrent = {
     rate: stack.mean,
     rateVariance: stack.variance,
     biasPerSecond: made.bias ? frames.length / seconds : 0,
     typicalRate: regions.map((region) => Math.max(0, medianOf(thinned(cutOut(stack.mean, nx, region))))),
   };
+  regions.forEach((region, k) => {
+    forEachPixel(region, nx, (at) => {
+      if (hasOwnRate(dark, at)) return;
+      dark.rateVariance[at] += (dark.typicalRate[k] - Math.max(0, dark.rate[at])) / seconds;
+    });
+  });
+  return dark;
+}
+
+/** A rate counts as a pixel's own, in variances, from this many of its σ: below it the noise of the rate would make the
+ * variance follow the data. */
+const OWN_RATE_SIGMAS = 5;
+
+export function hasOwnRate(dark: DarkCurrent, at: number): boolean {
+  return dark.rate[at] > OWN_RATE_SIGMAS * Math.sqrt(dark.rateVariance[at]);
+}
+
+function forEachPixel({ x0, x1, y0, y1 }: Region, nx: number, visit: (at: number) => void): void {
+  for (let y = y0; y < y1; y++) for (let at = y * nx + x0; at < y * nx + x1; at++) visit(at);
 }
 
 function stackFlats(frames: CalibrationFrame[], made: Calibrations): PixelResponse {

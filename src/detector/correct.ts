@@ -8,7 +8,7 @@ import type { Spectrograph } from "../spectrograph.js";
 import { detectorLayout } from "./amplifiers.js";
 import { type Assembled, assemble } from "./assemble.js";
 import { badPixelMask } from "./badpixels.js";
-import { type Calibrations, requireZeroLevel } from "./calibrations.js";
+import { type Calibrations, hasOwnRate, requireZeroLevel } from "./calibrations.js";
 import { DetectorError } from "./detectorError.js";
 import { darkSeconds, exposureSeconds } from "./exposure.js";
 import { type Frame, MaskBit, type NoiseIngredients } from "./frame.js";
@@ -17,9 +17,6 @@ import { requireSameGeometry } from "./geometry.js";
 import { carriedHeader, type RawImage } from "./raw.js";
 import { refuseImpossible } from "./rawSanity.js";
 import { checkRole, type Role } from "./roles.js";
-
-/** A dark rate counts as a pixel's own, in variances, from this many of its σ. */
-const OWN_DARK_SIGMAS = 5;
 
 export interface CorrectOptions {
   /** What the frame is to be used as; checked against header and pixels when given. */
@@ -142,8 +139,8 @@ function fixedVarianceImage(frame: Assembled, { bias, dark, response }: Calibrat
         let v = region.readVariance;
         if (bias) v += biasShare * bias.variance[at];
         if (dark) {
-          const own = dark.rate[at] > OWN_DARK_SIGMAS * Math.sqrt(dark.rateVariance[at]);
-          v += (own ? dark.rate[at] : dark.typicalRate[k]) * seconds + dark.rateVariance[at] * seconds * seconds;
+          const rate = hasOwnRate(dark, at) ? dark.rate[at] : dark.typicalRate[k];
+          v += rate * seconds + dark.rateVariance[at] * seconds * seconds;
         }
         variance[at] = response ? v / response.response[at] ** 2 : v;
       }

@@ -56,7 +56,7 @@ function markConstant(mask: Uint8Array, raw: RawImage, data: Section, which: "co
   if (n < SHORTEST_LINE) return 0;
   const lines: number[] = [];
   for (let line = 0; line < nLine; line++) {
-    if (isConstant(raw.data, start + line * stride, step, n, ceiling)) lines.push(start + line * stride);
+    if (isConstant(raw.data, mask, start + line * stride, step, n, ceiling)) lines.push(start + line * stride);
   }
   // When most lines are constant it is the picture that is so (without noise), not the readout that failed.
   if (2 * lines.length > nLine) {
@@ -67,13 +67,21 @@ function markConstant(mask: Uint8Array, raw: RawImage, data: Section, which: "co
   return lines.length;
 }
 
-/** All finite pixels equal and below the ceiling (a bleed may fill a column), with enough of them to tell. */
-function isConstant(data: ArrayLike<number>, from: number, step: number, n: number, ceiling: number): boolean {
+/** All finite pixels that are not yet known to be missing equal, and below the ceiling (a bleed may fill a column), with
+ * enough of them to tell. */
+function isConstant(
+  data: ArrayLike<number>,
+  mask: Uint8Array,
+  from: number,
+  step: number,
+  n: number,
+  ceiling: number,
+): boolean {
   let first = Number.NaN;
   let count = 0;
   for (let k = 0; k < n; k++) {
     const value = data[from + k * step];
-    if (!Number.isFinite(value)) continue;
+    if (!Number.isFinite(value) || mask[from + k * step] & MaskBit.missing) continue;
     if (count === 0) first = value;
     if (value !== first) return false;
     count++;

@@ -46,10 +46,12 @@ function noiseFromNeighbours(samples: Float64Array): number {
   return Number.isFinite(sigma) ? sigma : 0;
 }
 
-/** Median of up to RUNNING samples about each; fewer at the ends. */
+/** Median of RUNNING samples about each; fewer towards the ends, as many before as behind, so that a slope stays. */
 function runningMedian(samples: Float64Array): Float64Array {
-  const half = RUNNING >> 1;
-  return samples.map((_, i) => medianOf(samples.subarray(Math.max(0, i - half), i + half + 1)));
+  return samples.map((_, i) => {
+    const half = Math.min(RUNNING >> 1, i, samples.length - 1 - i);
+    return medianOf(samples.subarray(i - half, i + half + 1));
+  });
 }
 
 function keptWithin(samples: Float64Array, level: Float64Array, reach: number) {
