@@ -67,11 +67,16 @@ function writePieces(path: string, flags: string, hdus: readonly OutputHdu[]): v
 }
 
 async function writeToStandardOutput(hdus: readonly OutputHdu[]): Promise<void> {
+  const { stdout } = process;
+  // A broken pipe is told twice: to the callback, which is heard, and later as an event, which must not end the process.
+  const deaf = () => {};
+  stdout.on("error", deaf);
   for (const piece of encodeHdus(hdus)) {
     await new Promise<void>((resolve, reject) => {
-      process.stdout.write(piece, (error) => (error ? reject(cannotWrite("standard output", error)) : resolve()));
+      stdout.write(piece, (error) => (error ? reject(cannotWrite("standard output", error)) : resolve()));
     });
   }
+  stdout.off("error", deaf);
 }
 
 function failingAsOutput<T>(path: string, work: () => T): T {
