@@ -22,8 +22,8 @@ export interface SimulationFiles {
 }
 
 export interface SimulationOptions extends WriteOptions {
-  /** Called before each exposure. */
-  onExposure?: (name: string, done: number, total: number) => void;
+  /** Called before each exposure, and waited for. */
+  onExposure?: (name: string, done: number, total: number) => unknown;
 }
 
 /** Simulates every exposure of the scene and writes all of it under `dir`, which is made when missing.
@@ -40,7 +40,7 @@ export async function writeSimulation(
   for (const path of [files.spectrograph, files.badPixels, ...all]) refuseToHarm(path, options);
   await writeObserverFiles(dir, scene, options);
   for (const [i, { name }] of files.exposures.entries()) {
-    options.onExposure?.(name, i, files.exposures.length);
+    await options.onExposure?.(name, i, files.exposures.length);
     await writeExposure(dir, simulateExposure(scene, name), options);
   }
   return files;

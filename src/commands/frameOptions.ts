@@ -1,0 +1,140 @@
+/** The options that commands share, with what their values may be. */
+import { type Command, Option } from "commander";
+import type { Precision } from "../kernels/banded.js";
+import type { Method } from "../reference/extract.js";
+import type { CommonOptions } from "./perform.js";
+import { UsageError } from "./usage.js";
+
+/** What a raw frame is corrected with. */
+export interface FrameOptions extends CommonOptions {
+  spectrograph?: string;
+  bias?: string[];
+  dark?: string[];
+  pixelFlat?: string[];
+  badPixels?: string;
+  hdu?: number;
+}
+
+/** Where the tramlines come from: one of the two. */
+export interface TramlineOptions {
+  flat?: string[];
+  tramlines?: string;
+}
+
+/** How light is gathered. */
+export interface MethodOptions {
+  method: Method;
+  crosstalk: boolean;
+  precision: Precision;
+  cosmicRays: boolean;
+  halfAperture?: number;
+}
+
+export function addCommonOptions(command: Command): Command {
+  return command
+    .option("--json", "print one JSON object on standard output instead of the report")
+    .option("--quiet", "say nothing but errors");
+}
+
+export function addFrameOptions(command: Command): Command {
+  return command
+    .option("--spectrograph <file>", "what is known of detector and slit, in TOML")
+    .option("--bias <file...>", "bias frames, combined and taken off")
+    .option("--dark <file...>", "dark frames, combined and taken off by the exposure's time")
+    .option("--pixel-flat <file...>", "frames of an evenly lit detector, divided by")
+    .option("--bad-pixels <file>", "image of the assembled frame, not 0 where a pixel is bad")
+    .addOption(hduOption());
+}
+
+export function hduOption(): Option {
+  return new Option("--hdu <n>", "which HDU of the raw frames holds the image, from 0").argParser(wholeNumber("--hdu"));
+}
+
+export function addTramlineOptions(command: Command): Command {
+  return command
+    .option("--flat <file...>", "fibre flats to trace on the way")
+    .option("--tramlines <file>", "tramlines that 'hatchel trace' wrote");
+}
+
+export function addMethodOptions(command: Command): Command {
+  const methods: Method[] = ["joint", "optimal", "boxcar"];
+  return addKernelOptions(
+    command.addOption(
+      new Option("--method <name>", "joint, optimal or boxcar").default("joint").argParser(oneOf("--method", methods)),
+    ),
+  ).addOption(
+    new Option("--crosstalk <on|off>", "give back what optimal and boxcar let neighbours take; joint always does")
+      .default(true, "on")
+      .argParser(onOff("--crosstalk")),
+  );
+}
+
+/** Those that hold for all methods alike. */
+export function addKernelOptions(command: Command): Command {
+  return command
+    .addOption(
+      new Option("--precision <type>", "numbers that the kernels reckon with, f32 or f64")
+        .default("f64")
+        .argParser(oneOf<Precision>("--precision", ["f32", "f64"])),
+    )
+    .addOption(
+      new Option("--cosmic-rays <on|off>", "reject pixels hit by cosmic rays")
+        .default(true, "on")
+        .argParser(onOff("--cosmic-rays")),
+    )
+    .addOption(
+      new Option("--half-aperture <px>", "half of the boxcar's width (default: half of the smallest pitch)").argParser(
+        positive("--half-aperture"),
+      ),
+    );
+}
+
+export function outputOption(product: string, standardOutput = true): Option {
+  const dash = standardOutput ? "; - is standard output" : "";
+  return new Option("-o, --output <file>", `where the ${product} go${dash}`);
+}
+
+export function forceOption(): Option {
+  return new Option("--force", "replace files that are there already");
+}
+
+/** The methods' options as the lines that a product's HISTORY keeps. */
+export function methodLines(options: MethodOptions): string[] {
+  const lines = [`method ${options.method}`];
+  if (options.method !== "joint") lines.push(`crosstalk ${onOrOff(options.crosstalk)}`);
+  lines.push(`precision ${options.precision}`, `cosmic-rays ${onOrOff(options.cosmicRays)}`);
+  if (options.halfAperture !== undefined) lines.push(`half-aperture ${options.halfAperture}`);
+  return lines;
+}
+
+export function onOrOff(value: boolean): string {
+  return value ? "on" : "off";
+}
+
+function onOff(option: string): (text: string) => boolean {
+  const parse = oneOf(option, ["on", "off"]);
+  return (text) => parse(text) === "on";
+}
+
+function oneOf<T extends string>(option: string, known: readonly T[]): (text: string) => T {
+  return (text) => {
+    if ((known as readonly string[]).includes(text)) return text as T;
+    const choice = `${known.slice(0, -1).join(", ")} or ${known[known.length - 1]}`;
+    throw new UsageError(`hatchel: ${option} is '${text}'; it must be ${choice}.`);
+  };
+}
+
+function positive(option: string): (text: string) => number {
+  return (text) => {
+    const value = Number(text);
+    if (text.trim() !== "" && Number.isFinite(value) && value > 0) return value;
+    throw new UsageError(`hatchel: ${option} is '${text}'; it must be a number of pixels over 0.`);
+  };
+}
+
+function wholeNumber(option: string): (text: string) => number {
+  return (text) => {
+    if (/^\d{1,6}$/.test(text)) return Number(text);
+    throw new UsageError(`hatchel: ${option} is '${text}'; it must be a whole number, 0 or more.`);
+  };
+}
