@@ -1,14 +1,21 @@
 /** Cosmic rays in a group of columns, in lanes; src/reference/cosmic.ts tells the rule. */
 import { MaskBit } from "../src/reference/bits";
-import { laneRows, Numbers, number, pointer, Word } from "./job";
+import { count, laneRows, Numbers, number, pointer, Word, windowRows } from "./job";
+import { windowOffset, windowWeights } from "./joint";
 import { bytesOfLanes, lanesSet, lanesWithout, spread } from "./lanes";
 import { pixelVariance } from "./variance";
 
 /** Rows each side within which only the worst pixel goes in one round. */
 const clusterRows: i32 = 2;
 
+/** A profile's misfit further out than reachRows: share of the fibre's light on any pixel of its window. */
+const wingShare: f64 = 0.02;
+/** Rows by which a misfit may displace light. */
+const reachRows: i32 = 2;
+
 /** Squared excess over noise on every row, 0 where the pixel is not good or lies below the model: Word.excess. */
 export function squaredExcess<T extends number>(job: usize): void {
+  lightInReach<T>(job);
   const background = pointer(job, Word.backgroundRows);
   const model = pointer(job, Word.model);
   const light = pointer(job, Word.light);
@@ -18,7 +25,7 @@ export function squaredExcess<T extends number>(job: usize): void {
     const expected = v128.load(model + at);
     const excess = v128.pmax<T>(v128.sub<T>(v128.load(light + at), expected), spread<T>(0));
     const variance = pixelVariance<T>(job, at, v128.add<T>(expected, v128.load(background + at)));
-    const slack = v128.mul<T>(error, expected);
+    const slack = v128.mul<T>(error, v128.load(pointer(job, Word.reach) + at));
     const ratio = v128.div<T>(v128.mul<T>(excess, excess), v128.add<T>(variance, v128.mul<T>(slack, slack)));
     const good = lanesWithout<T>(load<u32>(pointer(job, Word.bits) + ((<usize>row) << 2)));
     v128.store(pointer(job, Word.excess) + at, v128.and(ratio, good));
@@ -45,6 +52,27 @@ export function suspects<T extends number>(job: usize, row: i32): u32 {
   const limit = spread<T>(number(job, Numbers.growKappaSquared));
   const beyond = v128.gt<T>(v128.load(pointer(job, Word.excess) + ((<usize>row) << 4)), limit);
   return v128.any_true(beyond) ? bytesOfLanes(lanesSet<T>(beyond), MaskBit.suspect) : 0;
+}
+
+/** Σ |f_k| · (largest weight within ± reachRows + wingShare) on every row: Word.reach, what a misfit is a share of. */
+function lightInReach<T extends number>(job: usize): void {
+  const nWindow = windowRows(job);
+  const reach = pointer(job, Word.reach);
+  memory.fill(reach, 0, (<usize>laneRows(job)) << 4);
+  for (let k: i32 = 0; k < count(job, Word.nFibre); k++) {
+    const flux = v128.abs<T>(v128.load(pointer(job, Word.fluxes) + ((<usize>k) << 4)));
+    const own = windowWeights(job, k);
+    const first = reach + windowOffset(job, k);
+    for (let i: i32 = 0; i < nWindow; i++) {
+      let largest = spread<T>(0);
+      for (let j = max(i - reachRows, 0); j <= min(i + reachRows, nWindow - 1); j++) {
+        largest = v128.pmax<T>(largest, v128.load(own + ((<usize>j) << 4)));
+      }
+      const at = first + ((<usize>i) << 4);
+      const light = v128.mul<T>(flux, v128.add<T>(largest, spread<T>(wingShare)));
+      v128.store(at, v128.add<T>(v128.load(at), light));
+    }
+  }
 }
 
 function worstAround<T extends number>(job: usize, row: i32): v128 {

@@ -71,13 +71,13 @@ function extractGroup<T extends number>(job: usize, x: i32, nValid: i32): void {
     if (!v128.any_true(active)) break;
     refine<T>(job, active);
   }
+  if (rejecting) {
+    squaredExcess<T>(job); // before the estimate, which puts the method's fluxes in place of the fit's
+    storeRejected<T>(job, x, nValid);
+  }
   estimate<T>(job);
   groupFlags<T>(job, x);
   storeGroup<T>(job, x, nValid);
-  if (rejecting) {
-    squaredExcess<T>(job);
-    storeRejected<T>(job, x, nValid);
-  }
 }
 
 /** New variances from the model, and the fit again; what the fluxes changed by is kept for the lanes that moved. */

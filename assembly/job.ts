@@ -1,5 +1,5 @@
 /** What one extraction works on; src/kernels/extraction-words.ts draws the layout. */
-import { type Numbers, Word } from "../src/kernels/extraction-words";
+import { Numbers, Word } from "../src/kernels/extraction-words";
 
 export { MethodCode, Numbers, Word } from "../src/kernels/extraction-words";
 

@@ -9,6 +9,7 @@ import type { ExtractionInput, ExtractionOutput, Method } from "../reference/ext
 import { checkGeometry } from "../tramlines/file.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { type BackgroundFit, fitBackground, noBackground } from "./background.js";
+import { measureMisfit } from "./misfit.js";
 import { runPasses } from "./passes.js";
 import { type ExtractionPlan, planExtraction } from "./plan.js";
 import type { Spectra } from "./spectra.js";
@@ -41,6 +42,8 @@ export interface Extraction {
   /** ny × nx, bits of MaskBit: cosmic, grown (and suspect, which were kept). */
   rejected: Uint8Array;
   nRejected: number;
+  /** ε as measured on this frame: share of the light nearby by which pixels miss the profiles beyond noise. */
+  profileError: number;
   warnings: string[];
 }
 
@@ -63,10 +66,27 @@ export async function extractFrame(
     tramlines.nFibre,
     options.precision ?? "f64",
   );
+  const profileError = settleProfileError(bench, input);
   runPasses(bench, input, options.onProgress);
   const spectra = finishSpectra(bench.output, tramlines, input);
   const nRejected = bench.rejected.reduce((n, bits) => n + (bits & (MaskBit.cosmic | MaskBit.grown) ? 1 : 0), 0);
-  return { spectra, plan, background: fit, rejected: bench.rejected, nRejected, warnings: fit?.warnings ?? [] };
+  return {
+    spectra,
+    plan,
+    background: fit,
+    rejected: bench.rejected,
+    nRejected,
+    profileError,
+    warnings: fit?.warnings ?? [],
+  };
+}
+
+/** Measures ε on the frame itself and has the bench use it from here on. */
+export function settleProfileError(bench: ExtractionBench, input: ExtractionInput): number {
+  if (input.kappa === 0) return input.profileError;
+  const profileError = measureMisfit(bench, input.nx, input.blockColumns, input.kappa, input.profileError);
+  bench.setProfileError(profileError);
+  return profileError;
 }
 
 /** What the kernel, and its reference, need for this frame. */

@@ -119,7 +119,7 @@ function primaryCards(extraction: Extraction, frame: Frame, tramlines: Tramlines
     { keyword: "XTALKCOR", value: spectra.crosstalkCorrected, comment: "neighbours' light given back" },
     { keyword: "TRAMGEOM", value: tramlines.geometryDigest, comment: "digest of the detector's geometry" },
     { keyword: "NREJECT", value: extraction.nRejected, comment: "pixels rejected as cosmic rays" },
-    { keyword: "PROFERR", value: tramlines.profile.relativeError, comment: "relative error of the profile" },
+    { keyword: "PROFERR", value: extraction.profileError, comment: "share of light nearby missed by profiles" },
   ];
   if (background !== null && Number.isFinite(background.rms)) {
     own.push({ keyword: "BGRMS", value: background.rms, comment: "[electron] scatter of background medians" });

@@ -63,6 +63,7 @@ export enum Word {
   responseVarianceRows,
   inverseVariance,
   model,
+  reach,
   excess,
   weights, // v128, nFibre × nWindow
   aperture, // v128, nFibre × nWindow

@@ -9,6 +9,20 @@ type Piece = Float32Array | Float64Array | Int32Array | Uint8Array;
 /** How many numbers of which type each piece of the memory holds; `lanes` are numbers of the lanes' type. */
 type Plan = [word: Word, type: "lanes" | "float32" | "float64" | "int32" | "uint8", length: number][];
 
+/** Rows of the frame, nLane numbers each; the first nColumn lanes hold columns. */
+export interface GroupRows {
+  nLane: number;
+  nColumn: number;
+  /** e⁻, background taken off; 0 where the pixel is not good. */
+  light: Float32Array | Float64Array;
+  /** e⁻ */
+  model: Float32Array | Float64Array;
+  /** e⁻: light nearby, that a misfit of the profile is a share of. */
+  reach: Float32Array | Float64Array;
+  /** e⁻⁻²; 0 where the pixel is not good. */
+  inverseVariance: Float32Array | Float64Array;
+}
+
 /** An extraction laid out in a memory of its own. Views stay valid as long as this lives. */
 export class ExtractionBench {
   /** nSlit × nx images; rows that no fibre of the input writes to stay as they were laid out: NaN and flags 0. */
@@ -19,6 +33,7 @@ export class ExtractionBench {
   private readonly job: Int32Array;
   private readonly numbers: Float64Array;
   private readonly background: Float64Array;
+  private readonly pieces = new Map<Word, Piece>();
 
   /** `outputRow`: [nFibre] row of the images for each fibre of the input, of `nSlit` rows.
    * @throws RangeError when lengths do not fit or the frame is larger than the memory can be. */
@@ -36,7 +51,7 @@ export class ExtractionBench {
     const total = plan.reduce((sum, [, type, length]) => sum + bytes[type] * length, 4 * Word.count);
     this.bench = kernels.workbench(total, plan.length + 1);
     this.job = this.bench.int32(Word.count);
-    const pieces = new Map<Word, Piece>();
+    const { pieces } = this;
     for (const [word, type, length] of plan) {
       const piece = this.bench[type === "lanes" ? (precision === "f32" ? "float32" : "float64") : type](length);
       pieces.set(word, piece);
@@ -46,7 +61,7 @@ export class ExtractionBench {
     this.background = pieces.get(Word.background) as Float64Array;
     this.rejected = pieces.get(Word.rejected) as Uint8Array;
     this.output = viewOutput(pieces);
-    this.copyIn(pieces, outputRow);
+    this.copyIn(outputRow);
     const prepare = precision === "f32" ? this.bench.call.prepareExtraction32 : this.bench.call.prepareExtraction64;
     prepare(this.job.byteOffset);
   }
@@ -63,8 +78,35 @@ export class ExtractionBench {
   /** Rejection from here on: κ and the lower limit of suspects; κ = 0 takes what is rejected as it stands. */
   setRejection(kappa: number, growKappa: number): void {
     this.job[Word.reject] = kappa > 0 ? 1 : 0;
+    // A κ whose square overflows rejects nothing.
     this.numbers[Numbers.kappaSquared] = kappa * kappa;
     this.numbers[Numbers.growKappaSquared] = growKappa * growKappa;
+  }
+
+  /** ε from here on: share of the light nearby by which data may miss the model before noise. */
+  setProfileError(profileError: number): void {
+    this.numbers[Numbers.profileError] = profileError;
+  }
+
+  /** How one group of columns looks once its variances have settled, without any rejection: the lanes of the columns
+   * from `x0` on, which must begin a block. Writes the group's spectra too. */
+  inspect(x0: number): GroupRows {
+    this.setRejection(Number.MAX_VALUE, Number.MAX_VALUE);
+    const nLane = this.precision === "f32" ? 4 : 2;
+    const x1 = Math.min(x0 + nLane, this.input.nx);
+    this.run(x0, x1);
+    this.setRejection(this.input.kappa, this.input.growKappa);
+    const margin = 2 * this.input.halfWindow + 1;
+    const rows = (word: Word) =>
+      this.pieces.get(word)!.slice(margin * nLane, (margin + this.input.ny) * nLane) as Float32Array | Float64Array;
+    return {
+      nLane,
+      nColumn: x1 - x0,
+      light: rows(Word.light),
+      model: rows(Word.model),
+      reach: rows(Word.reach),
+      inverseVariance: rows(Word.inverseVariance),
+    };
   }
 
   /** Another background of the same orders. `coefficients`: [nX × nY] e⁻ per pixel. */
@@ -72,8 +114,8 @@ export class ExtractionBench {
     this.background.set(coefficients);
   }
 
-  private copyIn(pieces: Map<Word, Piece>, outputRow: Int32Array): void {
-    const { input, job, numbers } = this;
+  private copyIn(outputRow: Int32Array): void {
+    const { input, job, numbers, pieces } = this;
     const { noise, background } = input;
     const counts: [Word, number][] = [
       [Word.nx, input.nx],
@@ -130,6 +172,7 @@ function memoryPlan(input: ExtractionInput, nSlit: number, nLane: number): Plan 
     Word.responseVarianceRows,
     Word.inverseVariance,
     Word.model,
+    Word.reach,
     Word.excess,
   ];
   const perFibre: [Word, number][] = [

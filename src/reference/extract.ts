@@ -38,7 +38,7 @@ export interface ExtractionInput extends ProfileInput {
   crosstalk: boolean;
   /** Pixels each side of the tramline that the boxcar sums. */
   halfAperture: number;
-  /** ε: share of the model by which data may miss it before noise. */
+  /** ε: share of the light nearby by which data may miss the model before noise. */
   profileError: number;
   /** Reject pixels beyond `kappa`, mark suspects beyond `growKappa`; 0 takes `rejected` as it is. */
   kappa: number;
@@ -87,7 +87,7 @@ function extractColumn(input: ExtractionInput, column: Column, output: Extractio
   let model = modelLight(column, flux);
   for (let round = 0; round < input.maxRounds; round++) {
     const outliers =
-      input.kappa > 0 ? worstOutliers(squaredExcess(column, model, input.profileError), input.kappa ** 2) : [];
+      input.kappa > 0 ? worstOutliers(squaredExcess(column, flux, model, input.profileError), input.kappa ** 2) : [];
     if (round >= input.minRounds && outliers.length === 0) break;
     for (const row of outliers) column.bits[row] |= MaskBit.cosmic;
     for (let row = 0; row < column.nRow; row++) weigh(column, row, model[row] + column.background[row]);
@@ -105,7 +105,7 @@ function extractColumn(input: ExtractionInput, column: Column, output: Extractio
     (k) => x >= input.seen[2 * k] && x <= input.seen[2 * k + 1],
   );
   writeColumn(column, estimate, flags, model, output, input.nx, x);
-  if (input.kappa > 0) writeRejected(input, column, squaredExcess(column, model, input.profileError), x);
+  if (input.kappa > 0) writeRejected(input, column, squaredExcess(column, flux, model, input.profileError), x);
 }
 
 function estimateBy(input: ExtractionInput, column: Column, normal: Normal): Estimate {

@@ -10,8 +10,9 @@ import { legendreArgument, legendreValue } from "./legendre.js";
 export type BlockColumns = 4 | 8 | 16;
 
 /** Furthest that a tramline may move within a block, pixels: keeps the cubic's error in a weight below 1e-6
- * for σ ≥ 0.8 px (remainder of interpolation: max|P⁗| / 4! · (movement/2)⁴ / 2³). */
-export const largestMovementPixels = 0.2;
+ * for σ ≥ 0.8 px (remainder of interpolation: max|P⁗| / 4! · (movement/2)⁴ / 2³; P⁗ of the Gaussian on pixels, not
+ * of its value at the middle: 2.6 px⁻⁴ at σ = 0.8 px). */
+export const largestMovementPixels = 0.18;
 
 const rootHalf = Math.SQRT1_2;
 
