@@ -27,7 +27,7 @@ export function disagreement(
 ): string {
   const unit = what === "gain" ? "e⁻/ADU" : "e⁻";
   const digits = Math.max(2, 1 - Math.floor(orderOf(measured.error)));
-  return `${name}: the ${what} of amplifier ${amplifier} is given as ${given} ${unit}, but ${measured.value.toFixed(digits)} ± ${measured.error.toFixed(digits)} ${unit} is measured; every error bar hangs on it, so give the right one in the spectrograph file.`;
+  return `${name}: the ${what} of amplifier ${amplifier} is given as ${Number(given.toPrecision(6))} ${unit}, but ${measured.value.toFixed(digits)} ± ${measured.error.toFixed(digits)} ${unit} is measured; every error bar hangs on it, so give the right one in the spectrograph file.`;
 }
 
 /** Read noise of each amplifier against its overscan. Converters add a twelfth of a count squared; that is part of it. */

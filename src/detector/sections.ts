@@ -14,17 +14,16 @@ export function readSection(raw: RawImage, text: string, from: string): Section 
     return parseSection(text, `${raw.name}: ${from}`, raw.nx, raw.ny);
   } catch (error) {
     if (!(error instanceof RangeError)) throw error;
-    throw new DetectorError(error.message + turnedHint(raw, text));
+    throw new DetectorError(error.message + (/leaves|ends at/.test(error.message) ? turnedHint(raw, text) : ""));
   }
 }
 
+/** A picture turned without its sections: they leave it along one axis, and nearly fill the other's length instead. */
 function turnedHint(raw: RawImage, text: string): string {
-  try {
-    parseSection(text, "", raw.ny, raw.nx);
-  } catch {
-    return "";
-  }
-  return raw.nx === raw.ny
+  const { x2, y2 } = parseSection(text);
+  const fits = x2 <= raw.ny && y2 <= raw.nx;
+  const fills = (x2 > raw.nx && x2 > 0.75 * raw.ny) || (y2 > raw.ny && y2 > 0.75 * raw.nx);
+  return !(fits && fills)
     ? ""
     : " It would fit with the axes exchanged: if the picture was turned, give data, overscan, place and dispersion_axis in the spectrograph file.";
 }
