@@ -12,7 +12,7 @@ export function solveCrosstalk<T extends number>(job: usize): void {
   const system = pointer(job, Word.system);
   const inverse = pointer(job, Word.systemInverse);
   const rhs = pointer(job, Word.systemRhs);
-  interleave(job);
+  interleave<T>(job);
   factorBand<T>(system, 2 * nFibre, half);
   for (let k: i32 = 0; k < nFibre; k++) {
     v128.store(rhs + ((<usize>k) << 5), v128.load(pointer(job, Word.raw) + ((<usize>k) << 4)));
@@ -49,8 +49,8 @@ export function withoutCrosstalk<T extends number>(job: usize): void {
   }
 }
 
-/** Rows y0 x0 y1 x1 … of the symmetric system, half-bandwidth 2·bandwidth + 1. */
-function interleave(job: usize): void {
+/** Rows y0 x0 y1 x1 … of the symmetric system, half-bandwidth 2·bandwidth + 1; unmeasured fibres left out of C. */
+function interleave<T extends number>(job: usize): void {
   const nFibre = count(job, Word.nFibre);
   const bandwidth = count(job, Word.bandwidth);
   const half = 2 * bandwidth + 1;
@@ -66,14 +66,22 @@ function interleave(job: usize): void {
       const above = crosstalk + ((<usize>(k * half + bandwidth - j)) << 4);
       const below = crosstalk + ((<usize>((k - j) * half + bandwidth + j)) << 4);
       v128.store(yRow + ((<usize>(2 * j)) << 4), v128.load(covariance + ((<usize>(k * (bandwidth + 1) + j)) << 4)));
-      if (j > 0) v128.store(yRow + ((<usize>(2 * j - 1)) << 4), v128.load(above));
-      v128.store(xRow + ((<usize>(2 * j + 1)) << 4), v128.load(below));
+      if (j > 0) v128.store(yRow + ((<usize>(2 * j - 1)) << 4), v128.and(v128.load(above), measured<T>(job, k - j)));
+      v128.store(xRow + ((<usize>(2 * j + 1)) << 4), v128.and(v128.load(below), measured<T>(job, k)));
     }
   }
 }
 
 function inverseOwnShare<T extends number>(job: usize, k: i32): v128 {
+  return v128.and(v128.div<T>(spread<T>(1), ownShare(job, k)), measured<T>(job, k));
+}
+
+/** Lanes in which the estimator caught any of fibre k's light. */
+function measured<T extends number>(job: usize, k: i32): v128 {
+  return v128.gt<T>(ownShare(job, k), spread<T>(0));
+}
+
+function ownShare(job: usize, k: i32): v128 {
   const bandwidth = count(job, Word.bandwidth);
-  const own = v128.load(pointer(job, Word.crosstalkBand) + ((<usize>(k * (2 * bandwidth + 1) + bandwidth)) << 4));
-  return v128.and(v128.div<T>(spread<T>(1), own), v128.gt<T>(own, spread<T>(0)));
+  return v128.load(pointer(job, Word.crosstalkBand) + ((<usize>(k * (2 * bandwidth + 1) + bandwidth)) << 4));
 }

@@ -50,17 +50,19 @@ export function withoutCrosstalk(estimate: RawEstimate, nFibre: number, bandwidt
   };
 }
 
-/** Rows y0 x0 y1 x1 … of the symmetric system, half-bandwidth 2·bandwidth + 1. */
+/** Rows y0 x0 y1 x1 … of the symmetric system, half-bandwidth 2·bandwidth + 1. A fibre that W does not measure is left
+ * out of C, or its light, told by rounding alone, would spoil all others; what it spilled on them stays there. */
 function interleave({ crosstalk, covariance }: RawEstimate, nFibre: number, bandwidth: number): Float64Array {
   const half = 2 * bandwidth + 1;
+  const measured = (k: number) => crosstalk[k * half + bandwidth] > 0;
   const band = new Float64Array(2 * nFibre * (half + 1));
   for (let k = 0; k < nFibre; k++) {
     const yRow = 2 * k * (half + 1);
     const xRow = yRow + half + 1;
     for (let j = 0; j <= Math.min(k, bandwidth); j++) {
       band[yRow + 2 * j] = covariance[k * (bandwidth + 1) + j];
-      if (j > 0) band[yRow + 2 * j - 1] = crosstalk[k * half + bandwidth - j];
-      band[xRow + 2 * j + 1] = crosstalk[(k - j) * half + bandwidth + j];
+      if (j > 0 && measured(k - j)) band[yRow + 2 * j - 1] = crosstalk[k * half + bandwidth - j];
+      if (measured(k)) band[xRow + 2 * j + 1] = crosstalk[(k - j) * half + bandwidth + j];
     }
   }
   return band;
