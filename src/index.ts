@@ -21,6 +21,7 @@ export { encodeFits, type OutputColumn, type OutputHdu, type OutputImage, type P
 export { FitsError, type FitsErrorCode } from "./fits/errors.js";
 export { type Card, type CardValue, Header } from "./fits/header.js";
 export { type FitsImage, type ReadOptions, readImage } from "./fits/image.js";
+export { type ChecksumState, type HduSummary, listHdus } from "./fits/open.js";
 export { formatSection, parseSection, type Section, sectionSize } from "./fits/sections.js";
 export { type FitsColumn, type FitsTable, readTable, type TableOptions } from "./fits/table.js";
 export { type WriteOptions, writeFits } from "./fits/write.js";

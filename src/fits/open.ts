@@ -3,6 +3,7 @@ import { createHash } from "node:crypto";
 import { addChecksums, checksum } from "./checksum.js";
 import { FitsError } from "./errors.js";
 import { type GatedData, passGate } from "./gate.js";
+import type { Header } from "./header.js";
 import { type ScannedHdu, scanFits } from "./scan.js";
 import { openSource, type Source } from "./source.js";
 
@@ -86,4 +87,36 @@ export function readData(fits: OpenFits, hdu: ScannedHdu): Uint8Array {
   const bytes = new Uint8Array(data?.nBytes ?? 0);
   if (data) fits.source.readInto(bytes, data.offset);
   return bytes;
+}
+
+/** One line of a file's table of contents. */
+export interface HduSummary {
+  index: number;
+  /** "PRIMARY", "IMAGE", "BINTABLE", "TABLE", or what else XTENSION says. */
+  type: string;
+  /** EXTNAME; empty when there is none. */
+  name: string;
+  bitpix: number;
+  /** NAXIS1, NAXIS2, … as stored: of a compressed image, those of its table. */
+  axes: number[];
+  header: Header;
+}
+
+/** What is in a file, without reading any data. `input`, `name`: as for `withFits`.
+ * @throws FitsError when the file is not sound. */
+export function listHdus(
+  input: string | Uint8Array,
+  name?: string,
+): Promise<{ hdus: HduSummary[]; warnings: string[] }> {
+  return withFits(input, name, ({ hdus, warnings }) => ({
+    hdus: hdus.map((hdu) => ({
+      index: hdu.index,
+      type: hdu.type,
+      name: hdu.name,
+      bitpix: hdu.bitpix,
+      axes: hdu.axes,
+      header: hdu.header,
+    })),
+    warnings,
+  }));
 }

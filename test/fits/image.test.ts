@@ -328,6 +328,8 @@ for name, data in {
     'i2': (rng.poisson(smooth) - 300).astype('i2'),
     'u2': np.where(x % 17 == 3, 65535, rng.poisson(smooth)).astype('u2'),
     'i4': rng.integers(-2**31, 2**31, size=smooth.shape).astype('i4'),
+    'n1': rng.integers(0, 256, size=smooth.shape).astype('u1'),
+    'n2': rng.integers(-2**15, 2**15, size=smooth.shape).astype('i2'),
     'i4s': (rng.poisson(smooth) * 1000).astype('i4'),
     'f4': np.where(x + y == 20, np.nan, rng.normal(smooth, 5)).astype('f4'),
     'f8': rng.normal(smooth, 5),
@@ -339,7 +341,7 @@ for name, data in {
 describe.skipIf(judgeMissing("fpack") || judgeMissing("funpack") || judgeMissing("astropy"))(
   "tiles packed by fpack",
   () => {
-    const kinds = ["u1", "i2", "u2", "i4", "i4s", "f4", "f8", "zero"];
+    const kinds = ["u1", "n1", "i2", "n2", "u2", "i4", "i4s", "f4", "f8", "zero"];
     const ways = [
       ["-r"],
       ["-g1"],
