@@ -1,6 +1,7 @@
 /** What --json prints: one object for each command, described key by key. Numbers that do not exist are null. Keys may be
  * added under the same `format`; none is renamed or removed. */
 import { z } from "zod";
+import { Flag } from "../reference/bits.js";
 
 const number = z.number().nullable();
 const count = z.int().min(0);
@@ -76,6 +77,117 @@ const simulate = z.strictObject({
   ...tail,
 });
 
+const fibres = z
+  .strictObject({
+    positions: count,
+    blocks: count,
+    lit: count,
+    dim: count,
+    dead: count,
+    dimPositions: z.array(count),
+    deadPositions: z.array(count),
+  })
+  .describe("slit positions and what was seen of them; positions count from 1");
+
+const tracing = {
+  fibres,
+  degree: count.describe("of the tramlines' Legendre series"),
+  rmsPixels: number.describe("scatter of all fibres' measured centres about their tramlines"),
+  worstRmsPixels: number,
+  worstFibre: count,
+  naming: z
+    .strictObject({ score: z.number(), runnerUpScore: number, readings: z.array(z.string()) })
+    .describe("logarithms of likelihood of the naming chosen and of the best other one"),
+  profile: z.strictObject({ kind: z.string(), medianFwhmPixels: number, relativeError: number }),
+};
+
+const trace = z.strictObject({ ...head("trace"), output: z.string(), ...tracing, ...tail });
+
+const flags = z
+  .strictObject(
+    Object.fromEntries(
+      Object.keys(Flag)
+        .filter((name) => Number.isNaN(Number(name)))
+        .map((name) => [name, count]),
+    ),
+  )
+  .describe("spectrum points with each flag, dead fibres aside");
+
+const extract = z.strictObject({
+  ...head("extract"),
+  output: z.string(),
+  frame: z.string(),
+  method: z.enum(["joint", "optimal", "boxcar"]),
+  crosstalkCorrected: z.boolean(),
+  precision: z.enum(["f32", "f64"]),
+  cosmicRays: z.boolean(),
+  tracing: z.strictObject(tracing).nullable().describe("null when the tramlines came from a file"),
+  fibres,
+  columns: count.describe("of each spectrum"),
+  rejectedPixels: count.describe("as cosmic rays"),
+  backgroundRmsElectrons: number.describe("scatter of the light between the fibres about its smooth fit"),
+  points: count.describe("spectrum points of fibres that are not dead"),
+  usablePoints: count.describe("of those, without a flag that forbids their use"),
+  flags,
+  signalToNoise: z
+    .strictObject({ faintest: number, median: number, brightest: number })
+    .describe("per pixel, over the fibres' own medians"),
+  spectra: z.array(
+    z.strictObject({
+      fibre: count,
+      state: z.enum(["lit", "dim", "dead"]),
+      block: count,
+      medianSignalToNoise: number,
+      usableShare: number,
+    }),
+  ),
+  ...tail,
+});
+
+const compare = z.strictObject({
+  ...head("compare"),
+  frame: z.string(),
+  points: count.describe("good in every method"),
+  witnesses: count.describe("of those, beside a fibre 30 times brighter"),
+  methods: z.array(
+    z.strictObject({
+      method: z.enum(["joint", "optimal", "boxcar"]),
+      crosstalkCorrected: z.boolean(),
+      medianSignalToNoise: number,
+      equivalentExposure: number.describe("time the corrected boxcar would need for the same error bars"),
+      equivalentExposureFaint: number.describe("the same over the faintest quarter of the points"),
+      fluxRatio: number.describe("median flux over joint's"),
+      leakedShare: number.describe("share of a bright neighbour's light counted twice, against joint"),
+      seconds: z.number().optional().describe("wall clock; not in the file that -o writes"),
+    }),
+  ),
+  cautions: z.array(z.string()),
+  ...tail,
+});
+
+const verify = z.strictObject({
+  ...head("verify"),
+  frame: z.string(),
+  worstWeight: number.describe("largest difference of a pixel's weight"),
+  checks: z.array(
+    z.strictObject({
+      method: z.enum(["joint", "optimal", "boxcar"]),
+      crosstalkCorrected: z.boolean(),
+      precision: z.enum(["f32", "f64"]),
+      nPoint: count,
+      worstRelative: number,
+      worstSigma: number,
+      worstOverBound: number.describe("above 1 the check fails"),
+      worstVariance: number,
+      rejectedDiffer: count,
+      flagsDiffer: count,
+      passed: z.boolean(),
+    }),
+  ),
+  passed: z.boolean(),
+  ...tail,
+});
+
 const failure = z.strictObject({
   hatchel: z.string(),
   format: z.literal(1),
@@ -88,10 +200,15 @@ const failure = z.strictObject({
 });
 
 /** By command; `failure` is what any of them prints instead when it fails. */
-export const jsonSchemas = { look, simulate, failure };
+export const jsonSchemas = { simulate, look, trace, extract, compare, verify, failure };
+
+export type CommandName = Exclude<keyof typeof jsonSchemas, "failure">;
+
+/** What a command fills in; the first three keys are the same for all. */
+export type JsonOf<C extends CommandName> = Omit<z.infer<(typeof jsonSchemas)[C]>, "hatchel" | "format" | "command">;
 
 /** A command's keys, for its help. */
-export function jsonHelp(command: keyof typeof jsonSchemas): string {
+export function jsonHelp(command: CommandName): string {
   const keys = Object.keys(jsonSchemas[command].shape);
   const list = keys.reduce<string[]>((lines, key, i) => {
     const word = `${key}${i + 1 < keys.length ? "," : ""}`;

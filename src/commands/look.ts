@@ -4,7 +4,7 @@ import { type LookReport, lookAt } from "../detector/look.js";
 import type { AmplifierNoise } from "../detector/noise.js";
 import { readSpectrograph } from "../spectrograph.js";
 import { addCommonOptions, hduOption } from "./frameOptions.js";
-import { jsonHelp } from "./json.js";
+import { type JsonOf, jsonHelp } from "./json.js";
 import { type CommonOptions, type Outcome, perform } from "./perform.js";
 import { counted, fixed, percentage, textPairs, textTable } from "./textTable.js";
 
@@ -32,7 +32,7 @@ export function addLook(program: Command): void {
     .action((frame: string, options: LookOptions) => perform("look", options, () => look(frame, options)));
 }
 
-async function look(frame: string, options: LookOptions): Promise<Outcome> {
+async function look(frame: string, options: LookOptions): Promise<Outcome<"look">> {
   const spectrograph = options.spectrograph === undefined ? undefined : await readSpectrograph(options.spectrograph);
   const report = await lookAt(frame, spectrograph, {
     bias: options.bias ?? [],
@@ -42,7 +42,7 @@ async function look(frame: string, options: LookOptions): Promise<Outcome> {
   return { json: lookJson(report), text: page(report) };
 }
 
-function lookJson(report: LookReport) {
+function lookJson(report: LookReport): JsonOf<"look"> {
   const { geometry } = report;
   return {
     frame: report.name,

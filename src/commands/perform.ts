@@ -1,5 +1,6 @@
 /** Runs a command's work and says what came of it: a report for people or one JSON object on standard output, what was
  * assumed and what looks wrong on standard error. */
+import type { CommandName, JsonOf } from "./json.js";
 import { openProgress, type Progress } from "./progress.js";
 import { UsageError } from "./usage.js";
 import { version } from "./version.js";
@@ -11,23 +12,29 @@ export interface CommonOptions {
   output?: string;
 }
 
-export interface Outcome {
-  /** Its keys are those of the command's schema in json.ts, without the first three. */
-  json: { assumptions: string[]; warnings: string[] };
+export interface Outcome<C extends CommandName> {
+  json: JsonOf<C>;
   /** For people; ends without a line break. */
   text: string;
+  /** Why the report is bad news, in one sentence without its full stop: exit code 1. */
+  failed?: string;
 }
 
-export async function perform(
-  command: string,
+/** The report has been printed; what it reports is a failure. */
+export class ReportedFailure extends Error {
+  override readonly name = "ReportedFailure";
+}
+
+export async function perform<C extends CommandName>(
+  command: C,
   options: CommonOptions,
-  work: (progress: Progress) => Promise<Outcome>,
+  work: (progress: Progress) => Promise<Outcome<C>>,
 ): Promise<void> {
   if (options.json && options.output === "-") {
     throw new UsageError(`hatchel ${command}: --json and -o - both write to standard output; give -o a file's name.`);
   }
   const progress = openProgress(options.quiet === true);
-  let outcome: Outcome;
+  let outcome: Outcome<C>;
   try {
     outcome = await work(progress);
   } finally {
@@ -40,6 +47,7 @@ export async function perform(
   }
   if (options.json) process.stdout.write(jsonText(command, json));
   else if (!options.quiet) (options.output === "-" ? process.stderr : process.stdout).write(`${text}\n`);
+  if (outcome.failed !== undefined) throw new ReportedFailure(outcome.failed);
 }
 
 /** The object as it is printed; NaN, which JSON lacks, becomes null. */

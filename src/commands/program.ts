@@ -3,11 +3,15 @@
  * Exit codes: 0 done; 1 the job failed (a bad file, a refusal); 2 wrong use, the bare command without arguments too, which
  * prints its help: a script that calls it so has lost its arguments. */
 import { Command, CommanderError } from "commander";
+import { addCompare } from "./compare.js";
+import { addExtract } from "./extract.js";
 import { failureOf } from "./failures.js";
 import { addLook } from "./look.js";
-import { jsonText } from "./perform.js";
+import { jsonText, ReportedFailure } from "./perform.js";
 import { addSimulate } from "./simulate.js";
+import { addTrace } from "./trace.js";
 import { UsageError, usageError } from "./usage.js";
+import { addVerify } from "./verify.js";
 import { version } from "./version.js";
 
 /** Runs one command line (without node and script); returns the exit code. Never throws. */
@@ -34,7 +38,7 @@ function makeProgram(): Command {
     .helpOption("--help", "print this help")
     .helpCommand("help [command]", "print the help of a command")
     .addHelpText("after", ENDING);
-  for (const add of [addSimulate, addLook]) add(program);
+  for (const add of [addSimulate, addLook, addTrace, addExtract, addCompare, addVerify]) add(program);
   for (const command of [program, ...program.commands]) {
     command.helpOption("--help", "print this help");
     command.configureOutput({ outputError() {} });
@@ -50,6 +54,10 @@ Exit codes: 0 done; 1 the job failed, with the reason in one sentence; 2 wrong u
 Every command takes --json; 'hatchel COMMAND --help' lists the keys. Set HATCHEL_DEBUG=1 to see where a defect lies.`;
 
 function tell(error: unknown, args: readonly string[], program: Command): number {
+  if (error instanceof ReportedFailure) {
+    process.stderr.write(`hatchel: ${error.message}.\n`);
+    return 1;
+  }
   const failure = failureOf(error);
   if (args.includes("--json")) {
     const known = program.commands.some((command) => command.name() === args[0]);

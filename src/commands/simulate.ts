@@ -30,7 +30,7 @@ export function addSimulate(program: Command): void {
     );
 }
 
-async function simulate(path: string, options: SimulateOptions, progress: Progress): Promise<Outcome> {
+async function simulate(path: string, options: SimulateOptions, progress: Progress): Promise<Outcome<"simulate">> {
   const scene = readScene(path);
   const files = await simulateInto(options.output, scene, options.force === true, [path], progress);
   return {

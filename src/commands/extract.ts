@@ -1,0 +1,157 @@
+/** hatchel extract: a frame to spectra. */
+import type { Command } from "commander";
+import type { Frame } from "../detector/frame.js";
+import { type Extraction, extractFrame } from "../extraction/extract.js";
+import { writeSpectra } from "../extraction/file.js";
+import { countFibres, type SpectraSummary, summariseSpectra } from "../report/summary.js";
+import {
+  addCommonOptions,
+  addFrameOptions,
+  addMethodOptions,
+  addTramlineOptions,
+  type FrameOptions,
+  forceOption,
+  type MethodOptions,
+  methodLines,
+  onOrOff,
+  outputOption,
+  type TramlineOptions,
+} from "./frameOptions.js";
+import {
+  frameLines,
+  inputPaths,
+  oneOfEach,
+  openBench,
+  readFrame,
+  requireTramlineSource,
+  type Traced,
+  tramlinesFor,
+} from "./frames.js";
+import { jsonHelp } from "./json.js";
+import { checkOutput, uninterrupted } from "./output.js";
+import { type Outcome, perform } from "./perform.js";
+import type { Progress } from "./progress.js";
+import { counted, fixed, percentage, textPairs } from "./textTable.js";
+import { fibresText, tracingFacts, tracingJson } from "./trace.js";
+import { version } from "./version.js";
+
+interface ExtractOptions extends FrameOptions, TramlineOptions, MethodOptions {
+  output: string;
+  force?: boolean;
+}
+
+export function addExtract(program: Command): void {
+  const command = program
+    .command("extract")
+    .summary("one spectrum per fibre from a frame")
+    .description("Extracts one spectrum per fibre, with its variance, from a raw frame.")
+    .argument("<FRAME>", "the raw frame; - is standard input")
+    .addOption(outputOption("spectra").makeOptionMandatory());
+  addTramlineOptions(command);
+  addMethodOptions(command).addOption(forceOption());
+  addCommonOptions(addFrameOptions(command))
+    .addHelpText("after", jsonHelp("extract"))
+    .action((frame: string, options: ExtractOptions) =>
+      perform("extract", options, (progress) => extract(frame, options, progress)),
+    );
+}
+
+async function extract(path: string, options: ExtractOptions, progress: Progress): Promise<Outcome<"extract">> {
+  requireTramlineSource("extract", options);
+  const { output, force } = options;
+  const paths = inputPaths([path], options);
+  checkOutput(output, { force, inputs: paths });
+  const bench = await openBench(paths, options, progress);
+  const frame = await readFrame(path, "science", bench);
+  const traced = await tramlinesFor(frame, options, bench, progress);
+  progress.stage(`extracting ${frame.name}`);
+  const extraction = await extractFrame(frame, traced.tramlines, {
+    ...extractionOptions(options),
+    onProgress: progress.share,
+  });
+  const lines = [...methodLines(options), ...frameLines(options)];
+  const history = { version, options: lines, inputs: bench.inputs, sky: bench.spectrograph?.slit?.sky };
+  await uninterrupted(() =>
+    writeSpectra(output, extraction, frame, traced.tramlines, history, { force: force === true, inputs: paths }),
+  );
+  const summary = summariseSpectra(extraction.spectra, traced.tramlines);
+  return {
+    json: { output, ...extractJson(frame, traced, extraction, summary, options), ...notes(frame, traced, extraction) },
+    text: `${output === "-" ? "standard output" : output}: spectra of ${frame.name}\n${textPairs(facts(traced, extraction, summary, options))}`,
+  };
+}
+
+/** The method's options as the library takes them. */
+export function extractionOptions({ method, crosstalk, precision, cosmicRays, halfAperture }: MethodOptions) {
+  return { method, crosstalk, precision, cosmicRays, ...(halfAperture === undefined ? {} : { halfAperture }) };
+}
+
+function notes(frame: Frame, traced: Traced, extraction: Extraction) {
+  return {
+    assumptions: oneOfEach([...frame.assumptions, ...traced.assumptions]),
+    warnings: oneOfEach([...frame.warnings, ...traced.warnings, ...extraction.warnings]),
+  };
+}
+
+function extractJson(
+  frame: Frame,
+  traced: Traced,
+  extraction: Extraction,
+  summary: SpectraSummary,
+  options: ExtractOptions,
+) {
+  const { tramlines, tracing } = traced;
+  return {
+    frame: frame.name,
+    method: extraction.spectra.method,
+    crosstalkCorrected: extraction.spectra.crosstalkCorrected,
+    precision: options.precision,
+    cosmicRays: options.cosmicRays,
+    tracing: tracing === undefined ? null : tracingJson(tracing),
+    fibres: countFibres(tramlines),
+    columns: extraction.spectra.nx,
+    rejectedPixels: extraction.nRejected,
+    backgroundRmsElectrons: extraction.background?.rms ?? null,
+    points: summary.nPoint,
+    usablePoints: summary.nUsable,
+    flags: summary.flags,
+    signalToNoise: summary.signalToNoise,
+    spectra: Array.from(tramlines.fibre, (fibre, k) => ({
+      fibre,
+      state: tramlines.state[k],
+      block: tramlines.block[k],
+      medianSignalToNoise: summary.fibreSignalToNoise[k],
+      usableShare: summary.fibreUsableShare[k],
+    })),
+  };
+}
+
+function facts(
+  { tramlines, tracing }: Traced,
+  extraction: Extraction,
+  summary: SpectraSummary,
+  options: ExtractOptions,
+): [string, string][] {
+  const { method } = extraction.spectra;
+  const crosstalk = method === "joint" ? "" : `, cross-talk correction ${onOrOff(options.crosstalk)}`;
+  const raised = Object.entries(summary.flags).filter(([, n]) => n > 0);
+  const { faintest, median, brightest } = summary.signalToNoise;
+  return [
+    ...(tracing === undefined
+      ? ([["fibres", fibresText(countFibres(tramlines))]] as [string, string][])
+      : tracingFacts(tracing)),
+    ["method", `${method}${crosstalk}, ${options.precision}`],
+    ["cosmic rays", options.cosmicRays ? `${counted(extraction.nRejected, "pixel")} rejected` : "not looked for"],
+    ["usable points", `${summary.nUsable} of ${summary.nPoint} (${percentage(summary.nUsable / summary.nPoint, 2)})`],
+    ["flags", raised.length === 0 ? "none" : raised.map(([name, n]) => `${flagWords(name)} ${n}`).join(", ")],
+    [
+      "median S/N",
+      `${fixed(median, 1)} per pixel (faintest fibre ${fixed(faintest, 1)}, brightest ${fixed(brightest, 1)})`,
+    ],
+  ];
+}
+
+/** weightLost → weight lost */
+function flagWords(name: string): string {
+  return name.replace(/[A-Z]/g, (letter) => ` ${letter.toLowerCase()}`);
+}

@@ -1,0 +1,192 @@
+/** From file names on the command line to frames and tramlines. */
+import { createHash } from "node:crypto";
+import { createReadStream, existsSync, statSync } from "node:fs";
+import { basename } from "node:path";
+import type { Calibrations } from "../detector/calibrations.js";
+import { correctFrame } from "../detector/correct.js";
+import type { Frame } from "../detector/frame.js";
+import { loadCalibrations } from "../detector/loadCalibrations.js";
+import type { Role } from "../detector/roles.js";
+import { planExtraction } from "../extraction/plan.js";
+import { FitsError } from "../fits/errors.js";
+import type { Header } from "../fits/header.js";
+import { readImage } from "../fits/image.js";
+import { readSpectrograph, type Spectrograph } from "../spectrograph.js";
+import { checkGeometry, readTramlines } from "../tramlines/file.js";
+import type { SlitLayout } from "../tramlines/name.js";
+import { type Tracing, traceFlat } from "../tramlines/trace.js";
+import type { Tramlines } from "../tramlines/tramlines.js";
+import { RefusalError } from "./failures.js";
+import type { FrameOptions, TramlineOptions } from "./frameOptions.js";
+import type { Progress } from "./progress.js";
+import { UsageError } from "./usage.js";
+
+/** All that goes into a job. */
+export interface Bench {
+  options: FrameOptions;
+  spectrograph: Spectrograph | undefined;
+  calibrations: Calibrations;
+  /** Every file that is read, for HISTORY. */
+  inputs: { name: string; checksum: string }[];
+}
+
+/** The tramlines of a job; `tracing` when they were traced on the way. */
+export interface Traced {
+  tramlines: Tramlines;
+  tracing?: Tracing;
+  /** The first flat's. */
+  header?: Header;
+  assumptions: string[];
+  warnings: string[];
+}
+
+/** Every file named on the command line: none of them may be written on. `frames`: those without an option. */
+export function inputPaths(frames: string[], options: FrameOptions & TramlineOptions): string[] {
+  const { spectrograph, bias, dark, pixelFlat, badPixels, flat, tramlines } = options;
+  const lists = [frames, flat, tramlines, spectrograph, bias, dark, pixelFlat, badPixels].flatMap((one) => one ?? []);
+  const paths = lists.filter((path) => path !== "-");
+  if (lists.length - paths.length > 1) {
+    throw new UsageError("hatchel: - stands for several files, but standard input holds one; name the others.");
+  }
+  return paths;
+}
+
+/** Reads spectrograph file and calibration frames. A name without a file is refused before anything is read. */
+export async function openBench(paths: string[], options: FrameOptions, progress: Progress): Promise<Bench> {
+  const missing = paths.find((path) => !existsSync(path));
+  if (missing !== undefined) {
+    throw new FitsError("unreadable", "there is no such file", "check the name", { file: missing });
+  }
+  const { spectrograph: file, bias, dark, pixelFlat, badPixels, hdu } = options;
+  const spectrograph = file === undefined ? undefined : await readSpectrograph(file);
+  const known = spectrograph?.detector.badPixels;
+  const all = badPixels === undefined && known !== undefined ? [...paths, known] : paths;
+  progress.stage("reading calibration frames");
+  const given = Object.entries({ bias, dark, pixelFlat, badPixels, hdu }).filter(([, value]) => value !== undefined);
+  const calibrations = await loadCalibrations(Object.fromEntries(given), spectrograph);
+  const inputs = [];
+  for (const path of all.filter((one) => !isPiped(one))) {
+    inputs.push({ name: basename(path), checksum: await fileChecksum(path) });
+  }
+  return { options, spectrograph, calibrations, inputs };
+}
+
+/** One raw frame, corrected. "-" is standard input. */
+export async function readFrame(path: string, role: Role, bench: Bench): Promise<Frame> {
+  const raw = await readImage(path, { hdu: bench.options.hdu });
+  if (isPiped(path)) bench.inputs.unshift({ name: raw.name, checksum: raw.checksum });
+  return correctFrame(raw, bench.calibrations, bench.spectrograph, { role });
+}
+
+/** Traces the flats.
+ * @throws TraceError, NamingError. */
+export async function traceFlats(flats: string[], bench: Bench, progress: Progress): Promise<Traced> {
+  const frames: Frame[] = [];
+  for (const flat of flats) {
+    progress.stage(`reading ${basename(flat)}`);
+    frames.push(await readFrame(flat, "fibre flat", bench));
+  }
+  progress.stage("tracing the flat");
+  const { layout, warning } = slitLayout(bench.spectrograph);
+  const tracing = await traceFlat(frames, layout);
+  return {
+    tramlines: tracing.tramlines,
+    tracing,
+    header: frames[0].header,
+    assumptions: [...frames.flatMap((frame) => frame.assumptions), ...tracing.assumptions],
+    warnings: [...warning, ...frames.flatMap((frame) => frame.warnings), ...tracing.warnings],
+  };
+}
+
+/** --tramlines or --flat, whichever was given, for `frame`.
+ * @throws UsageError for none or both, TraceError when they come from another readout window. */
+export async function tramlinesFor(
+  frame: Frame,
+  options: TramlineOptions,
+  bench: Bench,
+  progress: Progress,
+): Promise<Traced> {
+  const { flat, tramlines: file } = options;
+  const traced =
+    file === undefined
+      ? await traceFlats(flat ?? [], bench, progress)
+      : { tramlines: await readTramlines(file), assumptions: [], warnings: [] };
+  checkGeometry(frame, traced.tramlines, file === undefined ? flat?.join(", ") : file);
+  requireExtractable(traced.tramlines, file ?? flat?.join(", ") ?? "");
+  return traced;
+}
+
+export function requireTramlineSource(command: string, { flat, tramlines }: TramlineOptions): void {
+  if ((flat === undefined) !== (tramlines === undefined)) return;
+  const finding =
+    flat === undefined ? "neither --flat nor --tramlines is given" : "both --flat and --tramlines are given";
+  throw new UsageError(`hatchel ${command}: ${finding}; give one of them, to tell where the fibres' light runs.`);
+}
+
+/** What the calibration options come to, as lines for HISTORY. */
+export function frameLines(options: FrameOptions & TramlineOptions): string[] {
+  const { spectrograph, bias, dark, pixelFlat, badPixels, hdu, flat, tramlines } = options;
+  const roles = { flat, tramlines, spectrograph, bias, dark, "pixel-flat": pixelFlat, "bad-pixels": badPixels };
+  const lines = Object.entries(roles).flatMap(([role, files]) =>
+    [files ?? []].flat().map((path) => `${role} ${basename(path)}`),
+  );
+  return hdu === undefined ? lines : [...lines, `hdu ${hdu}`];
+}
+
+/** One of each, in order. What was said of several frames in the same words is said once, of all of them. */
+export function oneOfEach(sentences: string[]): string[] {
+  const saidOf = new Map<string, string[]>();
+  for (const sentence of sentences) {
+    const end = sentence.indexOf(": ");
+    const [name, text] = end < 0 ? ["", sentence] : [sentence.slice(0, end), sentence.slice(end)];
+    const names = saidOf.get(text) ?? [];
+    if (!names.includes(name)) saidOf.set(text, [...names, name]);
+  }
+  return Array.from(saidOf, ([text, names]) => {
+    const more = names.length > 4 ? [...names.slice(0, 3), `${names.length - 3} more`] : names;
+    return `${more.join(", ")}${text}`;
+  });
+}
+
+function slitLayout(spectrograph: Spectrograph | undefined): { layout?: SlitLayout; warning: string[] } {
+  const slit = spectrograph?.slit;
+  if (slit === undefined) return { warning: [] };
+  const { blocks, pitch, gap, dead, sky } = slit;
+  const missing = blocks === undefined ? "blocks" : pitch === undefined ? "pitch" : undefined;
+  if (missing !== undefined) {
+    const sentence = `${spectrograph!.file}: 'slit.${missing}' is missing, so the fibres are numbered as they are found; add it to have them named.`;
+    return { warning: [sentence] };
+  }
+  return { layout: { blocks: blocks!, pitch: pitch!, gap: gap ?? 0, dead, sky }, warning: [] };
+}
+
+function requireExtractable(tramlines: Tramlines, name: string): void {
+  try {
+    planExtraction(tramlines);
+  } catch (error) {
+    if (!(error instanceof RangeError)) throw error;
+    throw new RefusalError(`${name}: ${error.message}`);
+  }
+}
+
+/** What can be read only once. */
+function isPiped(path: string): boolean {
+  const found = path === "-" ? undefined : statSync(path, { throwIfNoEntry: false });
+  return found === undefined || found.isFIFO() || found.isCharacterDevice() || found.isSocket();
+}
+
+/** First 16 digits of the SHA-256 of the file as it lies on disk. */
+async function fileChecksum(path: string): Promise<string> {
+  const hash = createHash("sha256");
+  try {
+    for await (const piece of createReadStream(path)) hash.update(piece as Buffer);
+  } catch (error) {
+    const { code, message } = error as NodeJS.ErrnoException;
+    const [finding, remedy] =
+      code === "EISDIR"
+        ? ["this is a folder", "name a file in it"]
+        : [`reading failed (${code ?? message})`, "check it"];
+    throw new FitsError("unreadable", finding, remedy, { file: path });
+  }
+  return hash.digest("hex").slice(0, 16);
+}
