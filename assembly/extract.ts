@@ -60,6 +60,7 @@ function extractGroup<T extends number>(job: usize, x: i32, nValid: i32): void {
   normalEquations<T>(job);
   solveNormal<T>(job);
   modelLight<T>(job);
+  let unsettled = everyLane;
   memory.fill(pointer(job, Word.lastChange), 0, (<usize>count(job, Word.nFibre)) << 4);
   for (let round: i32 = 0; round < count(job, Word.maxRounds); round++) {
     let marked = spread<T>(0);
@@ -67,9 +68,9 @@ function extractGroup<T extends number>(job: usize, x: i32, nValid: i32): void {
       squaredExcess<T>(job);
       marked = rejectWorst<T>(job);
     }
-    const active = round < minRounds ? everyLane : marked;
+    const active = round < minRounds ? everyLane : v128.or(marked, unsettled);
     if (!v128.any_true(active)) break;
-    refine<T>(job, active);
+    unsettled = refine<T>(job, active);
   }
   if (rejecting) {
     squaredExcess<T>(job); // before the estimate, which puts the method's fluxes in place of the fit's
@@ -80,25 +81,40 @@ function extractGroup<T extends number>(job: usize, x: i32, nValid: i32): void {
   storeGroup<T>(job, x, nValid);
 }
 
-/** New variances from the model, and the fit again; what the fluxes changed by is kept for the lanes that moved. */
-function refine<T extends number>(job: usize, active: v128): void {
+/** Change of a flux, in units of the σ it would have alone, up to which its column has settled. */
+const settledSigma: f64 = 0.1;
+
+/** New variances from the model, and the fit again; what the fluxes changed by is kept for the lanes that moved. Returns
+ * the lanes in which any fibre has not settled: all ones. */
+function refine<T extends number>(job: usize, active: v128): v128 {
   const bytes = (<usize>count(job, Word.nFibre)) << 4;
   const before = pointer(job, Word.covariancesBelow); // free until the estimate
   memory.copy(before, pointer(job, Word.fluxes), bytes);
   weighRows<T>(job, pointer(job, Word.model), active);
   normalEquations<T>(job);
   solveNormal<T>(job);
+  const limit = spread<T>(settledSigma * settledSigma);
+  let unsettled = spread<T>(0);
+  let normal = pointer(job, Word.normal);
   for (let at: usize = 0; at < bytes; at += 16) {
+    const lastAt = pointer(job, Word.lastChange) + at;
     const change = v128.sub<T>(v128.load(pointer(job, Word.fluxes) + at), v128.load(before + at));
-    const last = pointer(job, Word.lastChange) + at;
-    v128.store(last, v128.bitselect(change, v128.load(last), active));
+    const last = v128.bitselect(change, v128.load(lastAt), active);
+    v128.store(lastAt, last);
+    const squared = v128.mul<T>(v128.mul<T>(last, last), v128.load(normal));
+    unsettled = v128.or(unsettled, v128.gt<T>(squared, limit));
+    normal += (<usize>(count(job, Word.bandwidth) + 1)) << 4;
   }
   modelLight<T>(job);
+  return unsettled;
 }
 
 function estimate<T extends number>(job: usize): void {
   const method = count(job, Word.method);
-  if (method == MethodCode.joint) return jointCovariance<T>(job);
+  if (method == MethodCode.joint) {
+    jointCovariance<T>(job);
+    return;
+  }
   if (method == MethodCode.optimal) optimal<T>(job);
   else boxcar<T>(job);
   if (count(job, Word.crosstalk)) solveCrosstalk<T>(job);

@@ -1,7 +1,7 @@
 /** How well the profiles fit this very frame: ε, the share of the light nearby by which pixels miss the model beyond noise.
  *
  * A shift since the flat or a profile that is not quite the model's leaves excesses that follow the light; cosmic rays are
- * far rarer than one pixel in a hundred. So ε is taken such that κ·ε covers all but that hundredth of the excesses, and
+ * far rarer than one pixel in five hundred. So ε is taken such that κ·ε covers all but those few of the excesses, and
  * half as much again. With a bad profile ε is large and only strong hits are found; that is the price of keeping lines. */
 import type { ExtractionBench } from "../kernels/extraction.js";
 
@@ -9,7 +9,7 @@ import type { ExtractionBench } from "../kernels/extraction.js";
 const nGroup = 32;
 /** Only pixels whose noise is below this share of the light nearby can tell. */
 const tellingNoise = 0.02;
-const quantile = 0.99;
+const quantile = 0.998;
 const margin = 1.5;
 
 /** ε of the frame that `bench` holds, at least `floor`. `kappa`: threshold that the excesses must stay below, σ. */

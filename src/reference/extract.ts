@@ -65,6 +65,9 @@ export interface ExtractionOutput {
   background: Float32Array | Float64Array;
 }
 
+/** Change of a flux, in σ, up to which its column has settled. */
+const settledSigma = 0.1;
+
 /** Extracts columns x0 … x1 − 1 into `output`; x0 must begin a block. */
 export function extractColumns(input: ExtractionInput, output: ExtractionOutput, x0: number, x1: number): void {
   for (let blockStart = x0; blockStart < x1; blockStart += input.blockColumns) {
@@ -88,7 +91,7 @@ function extractColumn(input: ExtractionInput, column: Column, output: Extractio
   for (let round = 0; round < input.maxRounds; round++) {
     const outliers =
       input.kappa > 0 ? worstOutliers(squaredExcess(column, flux, model, input.profileError), input.kappa ** 2) : [];
-    if (round >= input.minRounds && outliers.length === 0) break;
+    if (round >= input.minRounds && outliers.length === 0 && hasSettled(lastChange, normal, bandwidth)) break;
     for (const row of outliers) column.bits[row] |= MaskBit.cosmic;
     for (let row = 0; row < column.nRow; row++) weigh(column, row, model[row] + column.background[row]);
     normal = normalEquations(column);
@@ -106,6 +109,13 @@ function extractColumn(input: ExtractionInput, column: Column, output: Extractio
   );
   writeColumn(column, estimate, flags, model, output, input.nx, x);
   if (input.kappa > 0) writeRejected(input, column, squaredExcess(column, flux, model, input.profileError), x);
+}
+
+/** Whether every flux moved by less than 0.1 of the σ it would have alone, 1/√M[k][k]. */
+function hasSettled(lastChange: Float64Array, normal: Normal, bandwidth: number): boolean {
+  return lastChange.every(
+    (change, k) => !(change * change * normal.band[k * (bandwidth + 1)] > settledSigma * settledSigma),
+  );
 }
 
 function estimateBy(input: ExtractionInput, column: Column, normal: Normal): Estimate {
