@@ -13,6 +13,11 @@ const STRUCTURAL = new Set(
 const STRUCTURAL_INDEXED =
   /^(NAXIS|TTYPE|TFORM|TUNIT|TNULL|TSCAL|TZERO|TDISP|TDIM|TBCOL|TDMIN|TDMAX|TLMIN|TLMAX|PTYPE|PSCAL|PZERO|ZNAXIS|ZTILE|ZNAME|ZVAL|ZFORM|ZCTYP)\d+$/;
 
+/** World coordinates of the input's pixels or columns (FITS Standard 4.0, section 8): a spectrum has other axes. */
+const COORDINATES =
+  /^(WCSAXES|CRPIX\d+|CRVAL\d+|CDELT\d+|CROTA\d+|CTYPE\d+|CUNIT\d+|CNAME\d+|CRDER\d+|CSYER\d+|(PC|CD|PV|PS)\d+_\d+)[A-Z]?$/;
+const COLUMN_COORDINATES = /^(TCTYP|TCUNI|TCRVL|TCDLT|TCRPX|TCROT|TCNA|TCRD|TCSY|TPC|TCD)\d+(_\d+)?[A-Z]?$/;
+
 /** True for keywords that the writer sets itself. */
 export function isStructural(keyword: string): boolean {
   return STRUCTURAL.has(keyword) || STRUCTURAL_INDEXED.test(keyword);
@@ -20,16 +25,18 @@ export function isStructural(keyword: string): boolean {
 
 const BOILERPLATE = /FITS \(Flexible Image Transport System\)|Astronomy and Astrophysics', volume 376/;
 
-/** The input's own cards, without those of structure, scaling, compression and checksums, those without a value, the
- * boilerplate comments that point to the FITS papers, and all but the first of keywords that came twice. */
+/** The input's own cards, without those of structure, scaling, compression, checksums and coordinates of its pixels, those
+ * without a value, the boilerplate comments that point to the FITS papers, and all but the first of keywords that came
+ * twice. A number under the deprecated EPOCH is carried as EQUINOX. */
 export function inputCards(header: Header): Card[] {
-  const seen = new Set<string>();
-  return header.cards.filter((card) => {
-    if (isStructural(card.keyword)) return false;
-    if (card.value === undefined) return !BOILERPLATE.test(card.comment);
-    if (card.value === null || seen.has(card.keyword)) return false;
-    seen.add(card.keyword);
-    return true;
+  const seen = new Set<string>(header.has("EQUINOX") ? ["EPOCH"] : []);
+  return header.cards.flatMap((card) => {
+    const { keyword, value } = card;
+    if (isStructural(keyword) || COORDINATES.test(keyword) || COLUMN_COORDINATES.test(keyword)) return [];
+    if (value === undefined) return BOILERPLATE.test(card.comment) ? [] : [card];
+    if (value === null || seen.has(keyword)) return [];
+    seen.add(keyword);
+    return keyword === "EPOCH" && typeof value === "number" ? [{ ...card, keyword: "EQUINOX" }] : [card];
   });
 }
 

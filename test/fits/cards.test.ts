@@ -210,6 +210,11 @@ describe("typed access", () => {
       "OBJECT  = 'second'",
       "ZTILE1  = 5",
       "ZENITH  = 5",
+      "CRPIX1  = 5",
+      "CD1_2A  = 5",
+      "TCRVL3  = 5",
+      "EPOCH   = 2000.0 / of coordinates",
+      "GAIN1   = 5",
       "NOVALUE =",
       "CHECKSUM= 'abc'",
       "COMMENT   FITS (Flexible Image Transport System) format is defined in 'Astronomy",
@@ -220,6 +225,8 @@ describe("typed access", () => {
     expect(kept).toEqual([
       ["OBJECT", "first"],
       ["ZENITH", 5],
+      ["EQUINOX", 2000],
+      ["GAIN1", 5],
       ["COMMENT", "mine"],
       ["COMMENT", "mine"],
     ]);
