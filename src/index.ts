@@ -49,6 +49,6 @@ export {
   tramlinesHdus,
   writeTramlines,
 } from "./tramlines/file.js";
-export type { SlitLayout } from "./tramlines/name.js";
+export type { SlitLayout } from "./tramlines/layout.js";
 export { type TraceOptions, type Tracing, traceFlat } from "./tramlines/trace.js";
 export type { FibreState, GaussianProfile, Profile, Tramlines } from "./tramlines/tramlines.js";

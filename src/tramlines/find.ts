@@ -1,10 +1,10 @@
-/** Finding the fibres: a cut through the flat across the dispersion, its peaks, and their centres by the joint
- * linearised centring of assembly/centring.ts, so that crowded and dim fibres stand where they are. */
+/** Finding the fibres: the peaks of a cut across the dispersion, and their centres by the joint linearised centring of
+ * assembly/centring.ts, so that crowded and dim fibres stand where they are. */
 import { medianOf } from "../detector/clip.js";
-import { Centring } from "../kernels/centring.js";
+import { Centring, type CentringResult } from "../kernels/centring.js";
 import type { Kernels } from "../kernels/module.js";
+import type { Cut } from "./cut.js";
 import { TraceError } from "./errors.js";
-import { type ColumnGroup, type Flat, groupColumns } from "./flat.js";
 
 /** One ribbon of light where the cut meets it. */
 export interface Peak {
@@ -25,102 +25,6 @@ export interface Peak {
   standsOut: number;
 }
 
-/** A robust mean over columns about the middle, tilted so that it follows the tramlines. Arrays [ny]. */
-export interface Cut {
-  /** Column that it stands for. */
-  x: number;
-  /** How the tramlines run there, px of y per px of x. */
-  slope: number;
-  mean: Float64Array;
-  fixedVariance: Float64Array;
-  variancePerElectron: Float64Array;
-}
-
-const STRIP_COLUMNS = 8;
-const MAX_STRIPS = 16;
-/** A strip's tramlines are sought this far up and down from the next strip's, px. */
-const MAX_STRIP_SHIFT = 3;
-
-/** @throws TraceError when the flat has no good pixel about its middle. */
-export function cutThrough(flat: Flat): Cut {
-  const nStrip = Math.max(1, Math.min(MAX_STRIPS, Math.floor(flat.nx / STRIP_COLUMNS)));
-  const columns = Math.min(STRIP_COLUMNS, flat.nx);
-  for (const share of [0.5, 0.4, 0.6, 0.3, 0.7, 0.2, 0.8]) {
-    const start = Math.round(share * flat.nx) - (nStrip * columns) / 2;
-    const first = Math.max(0, Math.min(flat.nx - nStrip * columns, Math.floor(start)));
-    const strips = Array.from({ length: nStrip }, (_, s) =>
-      groupColumns(flat, first + s * columns, first + (s + 1) * columns),
-    ).filter((strip) => strip.count.filter((n) => n > 0).length > 0.5 * flat.ny);
-    if (strips.length >= Math.max(1, nStrip / 2)) return mergeStrips(strips, flat.ny);
-  }
-  throw new TraceError(
-    `${flat.name}: hardly a pixel about the middle columns is good; give a flat that was read out whole.`,
-  );
-}
-
-/** Median over strips, each slid along the slope to the middle one. */
-function mergeStrips(strips: ColumnGroup[], ny: number): Cut {
-  const slopes = strips.slice(1).map((strip, s) => shiftBetween(strips[s], strip, ny) / (strip.x - strips[s].x));
-  const slope = slopes.length > 0 ? medianOf(slopes) : 0;
-  const x = strips[strips.length >> 1].x;
-  const cut: Cut = {
-    x,
-    slope,
-    mean: new Float64Array(ny).fill(Number.NaN),
-    fixedVariance: new Float64Array(ny),
-    variancePerElectron: new Float64Array(ny),
-  };
-  for (let y = 0; y < ny; y++) {
-    const values: number[] = [];
-    let fixed = 0;
-    let perElectron = 0;
-    for (const strip of strips) {
-      const value = between(strip.mean, y + slope * (strip.x - x));
-      if (Number.isNaN(value) || strip.count[y] === 0) continue;
-      values.push(value);
-      fixed += strip.fixedVariance[y];
-      perElectron += strip.variancePerElectron[y];
-    }
-    if (values.length === 0) continue;
-    cut.mean[y] = medianOf(values);
-    // The median of n values has π/2 times the variance of their mean.
-    cut.fixedVariance[y] = (0.5 * Math.PI * fixed) / values.length ** 2;
-    cut.variancePerElectron[y] = (0.5 * Math.PI * perElectron) / values.length ** 2;
-  }
-  return cut;
-}
-
-/** How far the light of `right` stands above that of `left`, px, by least squares on a grid of quarter pixels. */
-function shiftBetween(left: ColumnGroup, right: ColumnGroup, ny: number): number {
-  let best = Number.POSITIVE_INFINITY;
-  let bestShift = 0;
-  for (let shift = -MAX_STRIP_SHIFT; shift <= MAX_STRIP_SHIFT; shift += 0.25) {
-    let sum = 0;
-    let n = 0;
-    for (let y = MAX_STRIP_SHIFT; y < ny - MAX_STRIP_SHIFT; y++) {
-      // Both are taken off the grid by as much, so that interpolation blurs both alike.
-      const difference = between(right.mean, y + 0.5 * shift) - between(left.mean, y - 0.5 * shift);
-      if (Number.isNaN(difference)) continue;
-      sum += difference * difference;
-      n++;
-    }
-    if (n > 0 && sum / n < best) {
-      best = sum / n;
-      bestShift = shift;
-    }
-  }
-  return bestShift;
-}
-
-/** Linear between pixels; NaN outside or beside a pixel without value. */
-function between(values: Float64Array, y: number): number {
-  const low = Math.floor(y);
-  const share = y - low;
-  if (share === 0) return low >= 0 && low < values.length ? values[low] : Number.NaN;
-  if (low < 0 || low + 1 >= values.length) return Number.NaN;
-  return values[low] + share * (values[low + 1] - values[low]);
-}
-
 /** A first peak must stand out from the pixels this far up and down, px. */
 const FLANK = 2;
 /** … by this many σ, by this share of its level, and by this share of a typical peak. */
@@ -129,7 +33,7 @@ const LEVEL_SHARE = 0.03;
 const TYPICAL_SHARE = 0.03;
 /** Light that counts as a fibre's, against the median fibre. */
 const FAINTEST_SHARE = 0.02;
-const START_SIGMA = 1.1;
+const START_SIGMAS = [0.85, 1.1, 1.4, 1.7];
 const SIGMA_RANGE = [0.5, 2.6];
 /** Light beyond this many σ from a centre is not the Gaussian's. */
 export const REACH_SIGMAS = 4.5;
@@ -141,11 +45,18 @@ export function findPeaks(kernels: Kernels, cut: Cut, name: string): Peak[] {
   const first = firstPeaks(cut);
   if (first.length === 0) {
     throw new TraceError(
-      `${name}: no ribbon of light crosses column ${Math.round(cut.x)}; a fibre flat with the lamp on is needed to trace.`,
+      `${name}: no ribbon of light crosses column ${Math.round(cut.x)} (${medianOf(cut.mean).toFixed(0)} e⁻ per pixel in the median, without ` +
+        "narrow peaks); a fibre flat, not a flat of the detector and with the lamp on, is needed to trace.",
     );
   }
-  let peaks = centrePeaks(kernels, cut, first, START_SIGMA, 6, true);
+  let peaks = centrePeaks(kernels, cut, first, bestSigma(kernels, cut, first), 6, true);
   peaks = keepReal(peaks);
+  if (peaks.length < 0.5 * first.length) {
+    throw new TraceError(
+      `${name}: ${first.length} ribbons of light cross column ${Math.round(cut.x)}, but only ${peaks.length} of them can be told from ` +
+        "their neighbours and the background; fibres must stand about 1.3 times their FWHM apart to be traced.",
+    );
+  }
   const holes = holePositions(peaks, cut.mean.length);
   if (holes.length > 0) {
     const tried = [...peaks.map((peak) => peak.position), ...holes].sort((a, b) => a - b);
@@ -156,7 +67,9 @@ export function findPeaks(kernels: Kernels, cut: Cut, name: string): Peak[] {
     const found = lights.filter(
       (peak) =>
         !still.has(peak.position) ||
-        (peak.light > 1.2 * FAINTEST_SHARE * typical && peak.light > 8 * peak.lightError && peak.standsOut > 0.5),
+        (Math.min(1, peak.standsOut) * peak.light > 1.2 * FAINTEST_SHARE * typical &&
+          peak.light > 8 * peak.lightError &&
+          peak.standsOut > 0.5),
     );
     if (found.length > peaks.length) {
       const positions = found.map((peak) => peak.position);
@@ -164,6 +77,15 @@ export function findPeaks(kernels: Kernels, cut: Cut, name: string): Peak[] {
     }
   }
   return peaks;
+}
+
+/** The σ that leaves least, of a few: crowded fibres that nearly melt are only told from background by the right one. */
+function bestSigma(kernels: Kernels, cut: Cut, positions: number[]): number {
+  const rest = START_SIGMAS.map((sigma) => {
+    const { model } = centreOnce(kernels, cut, Float64Array.from(positions), sigma, cut.mean, 2);
+    return cut.mean.reduce((sum, d, y) => sum + (Number.isNaN(d) || model[y] === 0 ? 0 : Math.abs(d - model[y])), 0);
+  });
+  return START_SIGMAS[rest.indexOf(Math.min(...rest))];
 }
 
 /** Local maxima of what stands out from its flanks. */
@@ -244,34 +166,21 @@ function centrePeaks(
   nRound: number,
   move: boolean,
 ): Peak[] {
-  const ny = cut.mean.length;
-  const n = positions.length;
-  const spacing = positions.slice(1).map((y, k) => y - positions[k]);
-  const pitch = spacing.length > 0 ? medianOf(spacing) : 10;
-  const reach = Math.min(REACH_SIGMAS * 1.8, 1.5 * pitch);
-  const size = { nRow: ny, nFibre: n, neighbours: overlapping(reach, pitch), reach, nBack: 3 };
-  const centring = new Centring(kernels, size);
   const centre = Float64Array.from(positions);
+  const limit = 0.12 * pitchOf(centre);
+  const nPar = move ? 3 : 2;
   let sigma = startSigma;
   let model = cut.mean;
   let peaks: Peak[] = [];
   for (let round = 0; round < nRound; round++) {
-    const near = rowsNear(centre, 1.3 * pitch, ny);
-    const weight = model.map((m, y) => {
-      if (near[y] === 0) return 0;
-      const light = Math.max(0, Number.isNaN(m) ? 0 : m);
-      return 1 / (cut.fixedVariance[y] + cut.variancePerElectron[y] * light + (0.02 * light) ** 2);
-    });
-    const nPar = move ? 3 : 2;
-    const column = { data: cut.mean, weight, centre, sigma: new Float64Array(n).fill(sigma) };
-    const [{ solution, variance, model: next, background }] = centring.measure([column], nPar);
-    model = next;
+    const result = centreOnce(kernels, cut, centre, sigma, model, nPar);
+    const { solution, variance, background } = result;
+    model = result.model;
     const brightest = solution.reduce((best, value, i) => (i % nPar === 0 ? Math.max(best, value) : best), 0);
     const widening: number[] = [];
-    for (let k = 0; k < n; k++) {
+    for (let k = 0; k < centre.length; k++) {
       const a = solution[k * nPar];
       if (!move || a <= 0.003 * brightest) continue;
-      const limit = 0.12 * pitch;
       centre[k] += Math.max(-limit, Math.min(limit, solution[k * nPar + 1] / a));
       if (a > 0.2 * brightest) widening.push(solution[k * nPar + 2] / a);
     }
@@ -283,11 +192,38 @@ function centrePeaks(
       lightError: Math.sqrt(variance[k * nPar]),
       height: (solution[k * nPar] * 0.3989422804014327) / sigma,
       sigma,
-      background: backgroundAt(background, position, ny),
-      standsOut: standsOut(cut.mean, next, position, solution[k * nPar], sigma),
+      background: backgroundAt(background, position, cut.mean.length),
+      standsOut: standsOut(cut.mean, model, position, solution[k * nPar], sigma),
     }));
   }
   return peaks.sort((a, b) => a.position - b.position);
+}
+
+/** One joint centring of the cut, all widths alike; `model`: what the variance is taken from. */
+function centreOnce(
+  kernels: Kernels,
+  cut: Cut,
+  centre: Float64Array,
+  sigma: number,
+  model: Float64Array,
+  nPar: 2 | 3,
+): CentringResult {
+  const ny = cut.mean.length;
+  const pitch = pitchOf(centre);
+  const reach = Math.min(REACH_SIGMAS * 1.8, 1.5 * pitch);
+  const size = { nRow: ny, nFibre: centre.length, neighbours: overlapping(reach, pitch), reach, nBack: 3 };
+  const near = rowsNear(centre, 1.3 * pitch, ny);
+  const weight = model.map((m, y) => {
+    const light = Math.max(0, Number.isNaN(m) ? 0 : m);
+    const variance = cut.fixedVariance[y] + cut.variancePerElectron[y] * light + (0.02 * light) ** 2;
+    return near[y] === 0 || Number.isNaN(cut.mean[y]) ? 0 : 1 / variance;
+  });
+  const column = { data: cut.mean, weight, centre, sigma: new Float64Array(centre.length).fill(sigma) };
+  return new Centring(kernels, size).measure([column], nPar)[0];
+}
+
+function pitchOf(positions: Float64Array): number {
+  return positions.length > 1 ? medianOf(positions.slice(1).map((y, k) => y - positions[k])) : 10;
 }
 
 /** 1 for the rows at most `distance` px from a centre: what lies farther says nothing of the light between fibres. */
@@ -310,8 +246,9 @@ function standsOut(data: Float64Array, model: Float64Array, centre: number, ligh
   const row = (at: number) => (at >= 0 && at < data.length ? data[at] - model[at] : Number.NaN);
   // A Gaussian's light in a pixel, roughly; its share of the whole does not matter to a ratio near 1.
   const unit = (at: number) => gaussianShape((at - centre) / sigma) / (sigma * 2.5066282746310002);
-  const expected = light * (unit(y) - 0.5 * (unit(y - FLANK) + unit(y + FLANK)));
-  const rest = row(y) - 0.5 * (row(y - FLANK) + row(y + FLANK));
+  // One pixel to either side and no more: there the neighbours' tails, whose shape is not a Gaussian's, are still faint.
+  const expected = light * (unit(y) - 0.5 * (unit(y - 1) + unit(y + 1)));
+  const rest = row(y) - 0.5 * (row(y - 1) + row(y + 1));
   return (rest + expected) / expected;
 }
 

@@ -92,7 +92,7 @@ export class Meter {
       relativeError,
       nRejected: 0,
     };
-    const misfit = { excess: 0, model: 0 };
+    const misfit: Misfit = { residual: 0, noise: 0, light: 0, nPixel: 0, nUnknown: 0 };
     for (let g = 0; g < this.groups.length; g += 2) {
       const pair = g + 1 < this.groups.length ? [g, g + 1] : [g];
       let columns = pair.map((i) => this.column(i, guess, undefined, relativeError));
@@ -109,10 +109,10 @@ export class Meter {
       }
       pair.forEach((i, lane) => {
         this.keep(i, guess, results[lane], nPar, measured);
-        this.addMisfit(i, results[lane], guess.centre[i], misfit);
+        this.addMisfit(columns[lane], this.groups[i], results[lane], misfit);
       });
     }
-    measured.relativeError = Math.sqrt(Math.max(0, misfit.excess / Math.max(1e-300, misfit.model)));
+    measured.relativeError = profileError(misfit);
     return measured;
   }
 
@@ -170,22 +170,31 @@ export class Meter {
     }
   }
 
-  /** Σ (residual² − noise) and Σ light² over the pixels at the fibres' cores. */
-  private addMisfit(
-    g: number,
-    result: CentringResult,
-    centre: Float64Array,
-    misfit: { excess: number; model: number },
-  ): void {
-    const group = this.groups[g];
-    for (let k = 0; k < this.nFibre; k++) {
-      const middle = Math.round(centre[k]);
-      for (let y = Math.max(0, middle - 2); y <= Math.min(this.ny - 1, middle + 2); y++) {
-        if (this.good[g][y] === 0) continue;
-        const light = Math.max(0, result.model[y]);
-        misfit.excess += (group.mean[y] - result.model[y]) ** 2 - this.variance(group, y, light, 0);
-        misfit.model += light * light;
-      }
+  private addMisfit({ weight }: CentringColumn, group: ColumnGroup, result: CentringResult, misfit: Misfit): void {
+    for (let y = 0; y < this.ny; y++) {
+      if (weight[y] === 0) continue;
+      const light = Math.max(0, result.model[y]);
+      misfit.residual += (group.mean[y] - result.model[y]) ** 2;
+      misfit.noise += this.variance(group, y, light, 0);
+      misfit.light += light * light;
+      misfit.nPixel++;
     }
+    misfit.nUnknown += result.solution.reduce((n, value) => n + (value !== 0 ? 1 : 0), BACKGROUND_TERMS);
   }
+}
+
+/** Sums over pixels, Σ r², Σ v (noise alone) and Σ m², and counts. */
+interface Misfit {
+  residual: number;
+  noise: number;
+  light: number;
+  nPixel: number;
+  nUnknown: number;
+}
+
+/** ε of v + (ε m)² that explains the residuals, E[Σ r²] = (1 − unknowns/pixels) · Σ (v + ε² m²), every pixel taken to carry
+ * its share of the unknowns. Sums without weights: it is bright pixels whose misfit matters. */
+function profileError({ residual, noise, light, nPixel, nUnknown }: Misfit): number {
+  if (!(light > 0) || nPixel <= nUnknown) return 0;
+  return Math.sqrt(Math.max(0, (residual / (1 - nUnknown / nPixel) - noise) / light));
 }

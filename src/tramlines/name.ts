@@ -6,26 +6,11 @@
  * fibres are then what the alignment decides, by gaps, slit ends and dead fibres. Scores are natural logarithms of
  * likelihood, roughly: 0 is a perfect match. */
 import { medianOf } from "../detector/clip.js";
+import { type Alignment, align, DIM_SHARE, type NamedLight, type Ruler } from "./align.js";
 import { NamingError } from "./errors.js";
+import { type Slit, type SlitLayout, unfold } from "./layout.js";
 
-/** The slit as the spectrograph file tells it; slit positions count from 1, from low y upwards. */
-export interface SlitLayout {
-  blocks: number[];
-  /** px */
-  pitch: number;
-  /** px beside one pitch, between blocks. */
-  gap: number | number[];
-  dead: number[];
-  sky: number[];
-}
-
-/** What naming needs to know of a peak. */
-export interface NamedLight {
-  /** px */
-  position: number;
-  /** e⁻ of all its light, or anything proportional to it. */
-  light: number;
-}
+export type { SlitLayout } from "./layout.js";
 
 export interface Naming {
   /** A slit position a peak, from 1; 0 for light that is no fibre's. */
@@ -47,17 +32,6 @@ export interface Naming {
 
 /** Readings closer than this are not told apart: a factor e⁸ ≈ 3000 in likelihood. */
 const CLEAR_MARGIN = 8;
-/** Costs, in the same logarithms. */
-const MISSING_FIRST = 5;
-const MISSING_NEXT = 0.7;
-const EXTRA_BRIGHT = 6;
-const EXTRA_DIM = 2.5;
-const LIGHT_IN_DEAD = 5;
-const DIM_IN_DEAD = 2;
-/** Below this share of the median a peak counts as dim. */
-const DIM_SHARE = 0.2;
-const MAX_EXTRAS_SKIPPED = 3;
-
 /** @throws NamingError when the layout does not fit, or when two readings fit about as well. */
 export function nameFibres(peaks: NamedLight[], layout: SlitLayout, name = "the flat"): Naming {
   const slit = unfold(layout);
@@ -65,60 +39,6 @@ export function nameFibres(peaks: NamedLight[], layout: SlitLayout, name = "the 
   const alignment = align(slit, ruler, peaks);
   judge(alignment, slit, peaks, name);
   return describe(alignment, slit, peaks, ruler, name);
-}
-
-interface Slit {
-  n: number;
-  /** n: distance from the first position, in pitches. */
-  at: Float64Array;
-  /** n: gaps, in pitches, passed from the first position on. */
-  gapsPassed: Float64Array;
-  block: Int32Array;
-  dead: Uint8Array;
-  /** n + 1: positions listed as lit below this index. */
-  litBelow: Int32Array;
-}
-
-function unfold(layout: SlitLayout): Slit {
-  const n = layout.blocks.reduce((sum, count) => sum + count, 0);
-  const gaps = layout.blocks.slice(1).map((_, b) => (typeof layout.gap === "number" ? layout.gap : layout.gap[b]));
-  if (n < 1 || !(layout.pitch > 0) || gaps.some((gap) => !(gap >= 0))) {
-    throw new NamingError(
-      `The slit layout has ${layout.blocks.length} blocks with ${n} fibres, pitch ${layout.pitch} px and gaps [${gaps.join(", ")}] px; ` +
-        "it needs fibres, a pitch over 0 and one gap of 0 or more between each two blocks.",
-    );
-  }
-  const wrong = layout.dead.find((position) => !(position >= 1 && position <= n));
-  if (wrong !== undefined) {
-    throw new NamingError(`The slit layout lists position ${wrong} as dead, but its positions run from 1 to ${n}.`);
-  }
-  const slit: Slit = {
-    n,
-    at: new Float64Array(n),
-    gapsPassed: new Float64Array(n),
-    block: new Int32Array(n),
-    dead: new Uint8Array(n),
-    litBelow: new Int32Array(n + 1),
-  };
-  for (const position of layout.dead) slit.dead[position - 1] = 1;
-  let i = 0;
-  layout.blocks.forEach((count, b) => {
-    for (let k = 0; k < count; k++, i++) {
-      const gap = k === 0 && b > 0 ? gaps[b - 1] / layout.pitch : 0;
-      slit.at[i] = i === 0 ? 0 : slit.at[i - 1] + 1 + gap;
-      slit.gapsPassed[i] = (i === 0 ? 0 : slit.gapsPassed[i - 1]) + gap;
-      slit.block[i] = b + 1;
-      slit.litBelow[i + 1] = slit.litBelow[i] + (slit.dead[i] ? 0 : 1);
-    }
-  });
-  return slit;
-}
-
-interface Ruler {
-  /** nPeak: distance from the first peak, in local pitches. */
-  at: Float64Array;
-  /** nPeak: px. */
-  pitch: Float64Array;
 }
 
 /** Spacings within this share of the pitch are taken as one pitch. */
@@ -129,6 +49,13 @@ function measureInPitches(peaks: NamedLight[], layoutPitch: number, name: string
   const spacing = peaks.slice(1).map((peak, j) => peak.position - peaks[j].position);
   const singles = spacing.filter((d) => Math.abs(d / layoutPitch - 1) < PITCH_RANGE);
   if (peaks.length > 1 && singles.length < 0.4 * spacing.length) {
+    const pitches = medianOf(spacing) / layoutPitch;
+    if (pitches > 1.5 && Math.abs(pitches - Math.round(pitches)) < 0.15) {
+      throw new NamingError(
+        `${name}: the ${peaks.length} ribbons of light stand ${Math.round(pitches)} pitches apart in the median, so that most fibres are ` +
+          "dark or much fainter than others; give a fibre flat in which all fibres are lit alike.",
+      );
+    }
     throw new NamingError(
       `${name}: neighbouring ribbons of light stand ${medianOf(spacing).toFixed(2)} px apart (median of ${spacing.length}), ` +
         `but the slit layout's pitch is ${layoutPitch} px; correct the pitch in the spectrograph file.`,
@@ -144,119 +71,6 @@ function measureInPitches(peaks: NamedLight[], layoutPitch: number, name: string
   return { at, pitch };
 }
 
-interface Alignment {
-  /** nPeak: slit index, or −1. */
-  slitIndex: Int32Array;
-  score: number;
-  /** nPeak: best score with that peak on another slit position, and which. */
-  otherScore: Float64Array;
-  otherIndex: Int32Array;
-}
-
-/** All alignments at once: forward[i, j] is the best score of everything up to peak j on position i, backward[i, j] of
- * everything after; their sum is the best score of any reading that puts peak j on position i. */
-function align(slit: Slit, ruler: Ruler, peaks: NamedLight[]): Alignment {
-  const nPeak = peaks.length;
-  const size = slit.n * nPeak;
-  const forward = new Float64Array(size).fill(Number.NEGATIVE_INFINITY);
-  const backward = new Float64Array(size).fill(Number.NEGATIVE_INFINITY);
-  const from = new Int32Array(size).fill(-1);
-  const typical = medianOf(peaks.map((peak) => peak.light));
-  const dim = peaks.map((peak) => peak.light < DIM_SHARE * typical);
-  const extraBelow = new Float64Array(nPeak + 1);
-  for (let j = 0; j < nPeak; j++) extraBelow[j + 1] = extraBelow[j] + (dim[j] ? EXTRA_DIM : EXTRA_BRIGHT);
-  const emission = (i: number, j: number) => (slit.dead[i] ? -(dim[j] ? DIM_IN_DEAD : LIGHT_IN_DEAD) : 0);
-
-  const eachStep = (i: number, j: number, visit: (i2: number, j2: number, score: number) => void) => {
-    for (let j2 = j + 1; j2 < Math.min(nPeak, j + 2 + MAX_EXTRAS_SKIPPED); j2++) {
-      const distance = ruler.at[j2] - ruler.at[j];
-      const tolerance = Math.max(0.45, 0.035 * distance);
-      for (let i2 = firstFrom(slit.at, slit.at[i] + distance - tolerance, i + 1); i2 < slit.n; i2++) {
-        const expected = slit.at[i2] - slit.at[i];
-        if (expected > distance + tolerance) break;
-        const gaps = slit.gapsPassed[i2] - slit.gapsPassed[i];
-        const sigma2 = 0.06 ** 2 + (0.012 * expected) ** 2 + (gaps > 0 ? (0.06 + 0.08 * gaps) ** 2 : 0);
-        const off = Math.min(10, (0.5 * (expected - distance) ** 2) / sigma2);
-        visit(i2, j2, -off - missingCost(slit, i + 1, i2) - (extraBelow[j2] - extraBelow[j + 1]));
-      }
-    }
-  };
-
-  for (let j = 0; j < nPeak; j++) {
-    for (let i = 0; i < slit.n; i++) {
-      const here = i * nPeak + j;
-      const start = -missingCost(slit, 0, i) - extraBelow[j];
-      const best = Math.max(start, forward[here]);
-      if (best === start) from[here] = -1;
-      forward[here] = best + emission(i, j);
-      eachStep(i, j, (i2, j2, score) => {
-        const there = i2 * nPeak + j2;
-        if (forward[here] + score > forward[there]) {
-          forward[there] = forward[here] + score;
-          from[there] = here;
-        }
-      });
-    }
-  }
-  for (let j = nPeak - 1; j >= 0; j--) {
-    for (let i = slit.n - 1; i >= 0; i--) {
-      const here = i * nPeak + j;
-      let best = -missingCost(slit, i + 1, slit.n) - (extraBelow[nPeak] - extraBelow[j + 1]);
-      eachStep(i, j, (i2, j2, score) => {
-        best = Math.max(best, score + emission(i2, j2) + backward[i2 * nPeak + j2]);
-      });
-      backward[here] = best;
-    }
-  }
-  const end = (j: number, i: number) => -missingCost(slit, i + 1, slit.n) - (extraBelow[nPeak] - extraBelow[j + 1]);
-  let last = -1;
-  let score = -missingCost(slit, 0, slit.n) - extraBelow[nPeak];
-  for (let here = 0; here < size; here++) {
-    const total = forward[here] + end(here % nPeak, Math.floor(here / nPeak));
-    if (total > score) {
-      score = total;
-      last = here;
-    }
-  }
-  const slitIndex = new Int32Array(nPeak).fill(-1);
-  for (let here = last; here >= 0; here = from[here]) slitIndex[here % nPeak] = Math.floor(here / nPeak);
-  return { slitIndex, score, ...otherReadings(slitIndex, slit.n, forward, backward) };
-}
-
-/** For each peak the best score of a reading that gives it another slit position. */
-function otherReadings(slitIndex: Int32Array, nFibre: number, forward: Float64Array, backward: Float64Array) {
-  const nPeak = slitIndex.length;
-  const otherScore = new Float64Array(nPeak).fill(Number.NEGATIVE_INFINITY);
-  const otherIndex = new Int32Array(nPeak).fill(-1);
-  for (let i = 0; i < nFibre; i++) {
-    for (let j = 0; j < nPeak; j++) {
-      const score = forward[i * nPeak + j] + backward[i * nPeak + j];
-      if (i === slitIndex[j] || slitIndex[j] < 0 || !(score > otherScore[j])) continue;
-      otherScore[j] = score;
-      otherIndex[j] = i;
-    }
-  }
-  return { otherScore, otherIndex };
-}
-
-/** Cost of no light at the positions `from` … `to − 1`: those listed as dead cost nothing; a run costs little more than its
- * first one, since shutters and broken bundles take neighbours together. */
-function missingCost(slit: Slit, from: number, to: number): number {
-  const n = slit.litBelow[to] - slit.litBelow[from];
-  return n > 0 ? MISSING_FIRST + MISSING_NEXT * (n - 1) : 0;
-}
-
-/** First index ≥ `low` with sorted[index] ≥ value. */
-function firstFrom(sorted: Float64Array, value: number, low: number): number {
-  let high = sorted.length;
-  while (low < high) {
-    const mid = (low + high) >> 1;
-    if (sorted[mid] < value) low = mid + 1;
-    else high = mid;
-  }
-  return low;
-}
-
 /** Refuses what does not fit and what can be read in two ways. */
 function judge(alignment: Alignment, slit: Slit, peaks: NamedLight[], name: string): void {
   const { slitIndex, otherScore, otherIndex, score } = alignment;
@@ -264,13 +78,14 @@ function judge(alignment: Alignment, slit: Slit, peaks: NamedLight[], name: stri
   const nNamed = slitIndex.filter((i) => i >= 0).length;
   const typical = medianOf(peaks.map((peak) => peak.light));
   const strangers = peaks.filter((peak, j) => slitIndex[j] < 0 && peak.light >= DIM_SHARE * typical);
-  if (nNamed < 3 || nNamed < 0.25 * nLit || strangers.length > Math.max(1, 0.02 * slit.n)) {
+  if (nNamed < Math.min(3, nLit) || nNamed < 0.25 * nLit || strangers.length > Math.max(1, 0.02 * slit.n)) {
     const where = strangers.length > 0 ? ` (light that no fibre explains at y = ${positions(strangers)})` : "";
     throw new NamingError(
       `${name}: ${peaks.length} ribbons of light were found, of which the slit layout's ${nLit} lit fibres explain ${nNamed}${where}; ` +
         "correct blocks, gap and dead fibres in the spectrograph file, or give another flat.",
     );
   }
+  refuseContradictions(alignment, slit, peaks, typical, name);
   let closest = -1;
   for (let j = 0; j < peaks.length; j++) {
     if (slitIndex[j] >= 0 && (closest < 0 || otherScore[j] > otherScore[closest])) closest = j;
@@ -287,6 +102,46 @@ function judge(alignment: Alignment, slit: Slit, peaks: NamedLight[], name: stri
       `${rangeOf(otherIndex[first], otherIndex[last])} (score ${otherScore[closest].toFixed(1)}), too close to decide: list all dead ` +
       "fibres in the spectrograph file, or give a flat in which the whole slit is lit and on the detector.",
   );
+}
+
+/** Light is a fibre's when it stands this near to one pitch from a named one. */
+const FIBRE_LIKE = 0.25;
+
+/** Two signs of a layout that is off by one, however well the rest fits: bright light one pitch from a named fibre where the
+ * layout has none, and light in a fibre listed as dead beside a dark one that is not. */
+function refuseContradictions(
+  { slitIndex }: Alignment,
+  slit: Slit,
+  peaks: NamedLight[],
+  typical: number,
+  name: string,
+): void {
+  const spacing = medianOf(peaks.slice(1).map((peak, j) => peak.position - peaks[j].position));
+  const isNamedAt = (j: number, y: number) =>
+    slitIndex[j] >= 0 && Math.abs(Math.abs(peaks[j].position - y) / spacing - 1) < FIBRE_LIKE;
+  const extra = peaks.find(
+    (peak, j) =>
+      slitIndex[j] < 0 &&
+      peak.light >= DIM_SHARE * typical &&
+      (isNamedAt(j - 1, peak.position) || isNamedAt(j + 1, peak.position)),
+  );
+  if (extra !== undefined) {
+    throw new NamingError(
+      `${name}: light like a fibre's at y = ${extra.position.toFixed(1)}, one pitch beside a fibre, where the slit layout has none; ` +
+        "correct the counts of fibres in the blocks in the spectrograph file.",
+    );
+  }
+  const isLit = new Uint8Array(slit.n);
+  for (const i of slitIndex) if (i >= 0) isLit[i] = 1;
+  const isDark = (i: number) => i >= 0 && i < slit.n && isLit[i] === 0 && slit.dead[i] === 0;
+  const swapped = slit.dead.findIndex((dead, i) => dead === 1 && isLit[i] === 1 && (isDark(i - 1) || isDark(i + 1)));
+  if (swapped >= 0) {
+    const dark = isDark(swapped - 1) ? swapped : swapped + 2;
+    throw new NamingError(
+      `${name}: fibre ${swapped + 1} is listed as dead but has light, and fibre ${dark} beside it is dark but not listed; correct the ` +
+        "list of dead fibres (positions count from 1, from low y upwards) or the counts of fibres in the blocks.",
+    );
+  }
 }
 
 function rangeOf(first: number, last: number): string {

@@ -58,6 +58,20 @@ export function walkOutward(
   return path;
 }
 
+/** Where the walk saw all fibres in column x, linear between its steps. */
+export function pathAt(path: Path, nFibre: number, x: number): Float64Array {
+  const n = path.x.length;
+  let step = 0;
+  while (step < n - 2 && path.x[step + 1] < x) step++;
+  const next = Math.min(n - 1, step + 1);
+  const span = path.x[next] - path.x[step];
+  const share = span > 0 ? (x - path.x[step]) / span : 0;
+  return Float64Array.from({ length: nFibre }, (_, k) => {
+    const here = path.centre[step * nFibre + k];
+    return here + share * (path.centre[next * nFibre + k] - here);
+  });
+}
+
 /** Measures how far all fibres stand from where they are thought. */
 class MotionMeter {
   private readonly centroider: Centroider;

@@ -1,0 +1,163 @@
+/** From the walk to series: centres and widths of all lit fibres over the whole flat, in rounds that each start from the
+ * series through the last one's. */
+import { medianOf } from "../detector/clip.js";
+import type { Kernels } from "../kernels/module.js";
+import { legendreArgument, legendreValue } from "../reference/legendre.js";
+import type { ColumnGroup, Flat } from "./flat.js";
+import { cutIntoGroups, type Guess, type Measured, Meter, START_ERROR } from "./measure.js";
+import type { Naming } from "./name.js";
+import { type Points, SeriesFitter, type SeriesSet } from "./series.js";
+import { type Path, pathAt } from "./walk.js";
+
+const MAX_DEGREE = 8;
+/** Degree of the series that guide the rounds in between. */
+const GUIDE_DEGREE = 6;
+const WIDTH_DEGREE = 3;
+const WIDTH_ROUNDS = 2;
+/** Errors of centre and width that no noise model knows of, px. */
+const CENTRE_FLOOR = 0.003;
+const WIDTH_FLOOR = 0.005;
+/** A point counts when its light is this many σ, and this share of the fibre's median. */
+const KAPPA_SEEN = 6;
+const SEEN_SHARE = 0.1;
+export interface Refined {
+  centres: SeriesSet;
+  widths: SeriesSet;
+  groups: ColumnGroup[];
+  /** [lit fibre][group]: 1 where the fibre was seen. */
+  seen: Uint8Array[];
+  /** Median light of each lit fibre, e⁻ a column. */
+  light: Float64Array;
+  relativeError: number;
+}
+
+/** Three rounds over the whole flat: centres about the walk; centres and widths about the series through them, with pixels
+ * off the model rejected; centres again, with each fibre's own width. */
+export function refine(
+  kernels: Kernels,
+  flat: Flat,
+  path: Path,
+  naming: Naming,
+  lit: number[],
+  pitch: number,
+  sigma: number,
+  degree: number | undefined,
+): Refined {
+  const { nx, ny } = flat;
+  const groups = cutIntoGroups(flat, steepest(path, naming.nFibre));
+  const meter = new Meter(kernels, groups, ny, lit.length, pitch, sigma);
+  const fitter = (points: Points) => new SeriesFitter(kernels, points, MAX_DEGREE);
+  const walked = guessFromPath(path, groups, naming.nFibre, lit, sigma);
+
+  let measured = meter.measure(walked, false, START_ERROR, false);
+  const guideDegree = Math.min(GUIDE_DEGREE, Math.max(1, Math.floor(groups.length / 6)));
+  let centres = fitter(centrePoints(measured, groups, nx, naming, lit)).fit(guideDegree);
+  let guess = guessFromSeries(centres, undefined, groups, nx, lit, sigma);
+  const widthDegree = Math.min(WIDTH_DEGREE, Math.max(0, Math.floor(groups.length / 8)));
+  let widths: SeriesSet | undefined;
+  for (let round = 0; round < WIDTH_ROUNDS; round++) {
+    measured = meter.measure(guess, true, START_ERROR, round > 0);
+    widths = fitter(widthPoints(measured, groups, nx, naming, lit)).fit(widthDegree);
+    centres = fitter(centrePoints(measured, groups, nx, naming, lit)).fit(guideDegree);
+    guess = guessFromSeries(centres, widths, groups, nx, lit, sigma);
+  }
+  measured = meter.measure(guess, false, Math.max(0.002, measured.relativeError), true);
+
+  const points = centrePoints(measured, groups, nx, naming, lit);
+  const last = fitter(points);
+  const most = Math.min(MAX_DEGREE, Math.max(1, Math.floor(groups.length / 4)));
+  const chosen = degree ?? last.chooseDegree(1, most);
+  return {
+    centres: last.fit(chosen),
+    widths: widths as SeriesSet,
+    groups,
+    seen: lit.map((k) => Uint8Array.from(points.weight[k], (w) => (w > 0 ? 1 : 0))),
+    light: Float64Array.from(lit, (_, i) => medianOf(measured.light.map((light) => light[i]))),
+    relativeError: measured.relativeError,
+  };
+}
+
+function steepest(path: Path, nFibre: number): number {
+  let most = 0;
+  for (let step = 1; step < path.x.length; step++) {
+    const run = path.x[step] - path.x[step - 1];
+    for (let k = 0; k < nFibre; k += 7) {
+      const climb = Math.abs(path.centre[step * nFibre + k] - path.centre[(step - 1) * nFibre + k]) / run;
+      most = Math.max(most, climb);
+    }
+  }
+  return most;
+}
+
+function guessFromPath(path: Path, groups: ColumnGroup[], nFibre: number, lit: number[], sigma: number): Guess {
+  const at = groups.map((group) => pathAt(path, nFibre, group.x));
+  const ahead = groups.map((group) => pathAt(path, nFibre, group.x + 16));
+  const behind = groups.map((group) => pathAt(path, nFibre, group.x - 16));
+  return {
+    centre: at.map((all) => Float64Array.from(lit, (k) => all[k])),
+    sigma: groups.map(() => new Float64Array(lit.length).fill(sigma)),
+    slope: at.map((_, g) => Float64Array.from(lit, (k) => (ahead[g][k] - behind[g][k]) / 32)),
+  };
+}
+
+function guessFromSeries(
+  centres: SeriesSet,
+  widths: SeriesSet | undefined,
+  groups: ColumnGroup[],
+  nx: number,
+  lit: number[],
+  sigma: number,
+): Guess {
+  const value = (set: SeriesSet, k: number, x: number) => legendreValue(set.coef[k], legendreArgument(x, nx));
+  return {
+    centre: groups.map(({ x }) => Float64Array.from(lit, (k) => value(centres, k, x))),
+    sigma: groups.map(({ x }) =>
+      Float64Array.from(lit, (k) =>
+        widths === undefined ? sigma : Math.max(0.6 * sigma, Math.min(1.8 * sigma, value(widths, k, x))),
+      ),
+    ),
+    slope: groups.map(({ x }) =>
+      Float64Array.from(lit, (k) => 0.5 * (value(centres, k, x + 1) - value(centres, k, x - 1))),
+    ),
+  };
+}
+
+function centrePoints(measured: Measured, groups: ColumnGroup[], nx: number, naming: Naming, lit: number[]): Points {
+  return pointsOf(measured, measured.centre, measured.centreVariance, CENTRE_FLOOR, groups, nx, naming, lit);
+}
+
+function widthPoints(measured: Measured, groups: ColumnGroup[], nx: number, naming: Naming, lit: number[]): Points {
+  return pointsOf(measured, measured.sigma, measured.sigmaVariance, WIDTH_FLOOR, groups, nx, naming, lit);
+}
+
+/** Values of all fibres, [fibre][group], with weight where the fibre's light is certain. */
+function pointsOf(
+  measured: Measured,
+  value: Float64Array[],
+  variance: Float64Array[],
+  floor: number,
+  groups: ColumnGroup[],
+  nx: number,
+  naming: Naming,
+  lit: number[],
+): Points {
+  const nGroup = groups.length;
+  const points: Points = {
+    x: Float64Array.from(groups, (group) => group.x),
+    nx,
+    value: Array.from({ length: naming.nFibre }, () => new Float64Array(nGroup)),
+    weight: Array.from({ length: naming.nFibre }, () => new Float64Array(nGroup)),
+    slit: naming.centre,
+  };
+  lit.forEach((k, i) => {
+    const faintest = SEEN_SHARE * medianOf(measured.light.map((light) => light[i]));
+    for (let g = 0; g < nGroup; g++) {
+      const light = measured.light[g][i];
+      const isSeen = light > faintest && light > KAPPA_SEEN * Math.sqrt(measured.lightVariance[g][i]);
+      if (!isSeen || !Number.isFinite(value[g][i]) || !(variance[g][i] < 0.04)) continue;
+      points.value[k][g] = value[g][i];
+      points.weight[k][g] = 1 / (variance[g][i] + floor * floor);
+    }
+  });
+  return points;
+}
