@@ -1,10 +1,10 @@
-import { execFileSync } from "node:child_process";
 import fc from "fast-check";
 import { beforeAll, describe, expect, it } from "vitest";
 import { Centring, type CentringColumn } from "../src/kernels/centring.js";
 import { type Kernels, loadKernels } from "../src/kernels/module.js";
 import { centreFibres } from "../src/reference/centring.js";
 import { erf } from "../src/reference/erf.js";
+import { judgeMissing, python } from "./judges.js";
 
 let kernels: Kernels;
 beforeAll(async () => {
@@ -107,22 +107,11 @@ describe("joint centring", () => {
   });
 });
 
-const judge = "/usr/bin/python3";
-function haveJudge(): boolean {
-  try {
-    execFileSync(judge, ["-c", "import scipy"], { stdio: "ignore" });
-    return true;
-  } catch {
-    if (process.env.HATCHEL_REQUIRE_JUDGES === "1") throw new Error(`${judge} with scipy is required as a judge.`);
-    return false;
-  }
-}
-
 const script = `
 import json, sys, numpy as np
 from scipy.linalg import lstsq
 from scipy.stats import norm
-a = json.load(sys.stdin)
+a = json.loads(sys.argv[1])
 y = np.arange(len(a['data'])); w = np.sqrt(a['weight'])
 P = lambda c, s: np.where(abs(y - c) <= a['reach'], norm.cdf(y + .5, c, s) - norm.cdf(y - .5, c, s), 0)
 h = 1e-3
@@ -138,12 +127,12 @@ A = np.array(cols).T * w[:, None]
 print(json.dumps(lstsq(A, np.array(a['data']) * w)[0].tolist()))
 `;
 
-describe.skipIf(!haveJudge())("joint centring against scipy", () => {
+describe.skipIf(judgeMissing("scipy"))("joint centring against scipy", () => {
   it("solves the same weighted least squares as linalg.lstsq on columns by numerical differentiation", () => {
     const c = column(11, 8, 0.12, -0.04);
     const reach = 5.5;
     const input = JSON.stringify({ ...c, reach });
-    const expected: number[] = JSON.parse(execFileSync(judge, ["-c", script], { input, encoding: "utf8" }));
+    const expected: number[] = JSON.parse(python(script, [input]));
     const door = new Centring(kernels, { nRow: c.data.length, nFibre: 11, neighbours: 3, reach, nBack: 2 });
     const [{ solution, background }] = door.measure([c], 3);
     // The five-point derivative with h = 1e-3 is good to 1e-12 or so; cancellation in it leaves 1e-12 / h.

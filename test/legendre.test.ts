@@ -1,9 +1,9 @@
-import { execFileSync } from "node:child_process";
 import fc from "fast-check";
 import { beforeAll, describe, expect, it } from "vitest";
 import { LegendreFitter } from "../src/kernels/legendre.js";
 import { type Kernels, loadKernels } from "../src/kernels/module.js";
 import { legendreFit, legendreFitClipped, legendreValue } from "../src/reference/legendre.js";
+import { judgeMissing, python } from "./judges.js";
 
 let kernels: Kernels;
 beforeAll(async () => {
@@ -94,29 +94,16 @@ describe("Legendre fit against NIST StRD linear regression (certified coefficien
   });
 });
 
-const judge = "/usr/bin/python3";
-function haveJudge(): boolean {
-  try {
-    execFileSync(judge, ["-c", "import numpy"], { stdio: "ignore" });
-    return true;
-  } catch {
-    if (process.env.HATCHEL_REQUIRE_JUDGES === "1") throw new Error(`${judge} with numpy is required as a judge.`);
-    return false;
-  }
-}
-
-describe.skipIf(!haveJudge())("Legendre series against numpy.polynomial.legendre", () => {
+describe.skipIf(judgeMissing("scipy"))("Legendre series against numpy.polynomial.legendre", () => {
   it("fits weighted data as legfit does (whose weights multiply residuals: √weight)", () => {
     const t = Array.from({ length: 57 }, (_, i) => -0.97 + (i * 1.91) / 56 + 0.003 * ((i * 7) % 5));
     const y = t.map((v, i) => 412.7 + 31 * v - 8 * v * v + 0.6 * v ** 3 + 0.05 * ((i * 37) % 11));
     const w = t.map((_, i) => 1 + ((i * 13) % 7));
     const script =
-      "import json,sys,numpy as np;a=json.load(sys.stdin);" +
+      "import json,sys,numpy as np;a=json.loads(sys.argv[1]);" +
       "c=np.polynomial.legendre.legfit(a['t'],a['y'],7,w=np.sqrt(a['w']));" +
       "print(json.dumps([c.tolist(),np.polynomial.legendre.legval(0.3172,c)]))";
-    const [coef, value] = JSON.parse(
-      execFileSync(judge, ["-c", script], { input: JSON.stringify({ t, y, w }), encoding: "utf8" }),
-    );
+    const [coef, value] = JSON.parse(python(script, [JSON.stringify({ t, y, w })]));
     const own = new LegendreFitter(kernels, 57, 8).fit(t, y, w, 8).coef;
     const scale = 412.7;
     for (let j = 0; j < 8; j++) expect(Math.abs(own[j] - coef[j])).toBeLessThan(1e-12 * scale);
