@@ -13,7 +13,7 @@ import type { Header } from "../fits/header.js";
 import { readImage } from "../fits/image.js";
 import { readSpectrograph, type Spectrograph } from "../spectrograph.js";
 import { checkGeometry, readTramlines } from "../tramlines/file.js";
-import type { SlitLayout } from "../tramlines/name.js";
+import type { SlitLayout } from "../tramlines/layout.js";
 import { type Tracing, traceFlat } from "../tramlines/trace.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { RefusalError } from "./failures.js";
@@ -65,9 +65,7 @@ export async function openBench(paths: string[], options: FrameOptions, progress
   const given = Object.entries({ bias, dark, pixelFlat, badPixels, hdu }).filter(([, value]) => value !== undefined);
   const calibrations = await loadCalibrations(Object.fromEntries(given), spectrograph);
   const inputs = [];
-  for (const path of all.filter((one) => !isPiped(one))) {
-    inputs.push({ name: basename(path), checksum: await fileChecksum(path) });
-  }
+  for (const path of all.filter((one) => !isPiped(one))) inputs.push(await inputOf(path));
   return { options, spectrograph, calibrations, inputs };
 }
 
@@ -175,8 +173,8 @@ function isPiped(path: string): boolean {
   return found === undefined || found.isFIFO() || found.isCharacterDevice() || found.isSocket();
 }
 
-/** First 16 digits of the SHA-256 of the file as it lies on disk. */
-async function fileChecksum(path: string): Promise<string> {
+/** A file's name and the first 16 digits of the SHA-256 of its bytes on disk. */
+export async function inputOf(path: string): Promise<{ name: string; checksum: string }> {
   const hash = createHash("sha256");
   try {
     for await (const piece of createReadStream(path)) hash.update(piece as Buffer);
@@ -188,5 +186,5 @@ async function fileChecksum(path: string): Promise<string> {
         : [`reading failed (${code ?? message})`, "check it"];
     throw new FitsError("unreadable", finding, remedy, { file: path });
   }
-  return hash.digest("hex").slice(0, 16);
+  return { name: basename(path), checksum: hash.digest("hex").slice(0, 16) };
 }

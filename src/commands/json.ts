@@ -188,6 +188,53 @@ const verify = z.strictObject({
   ...tail,
 });
 
+const demo = z.strictObject({
+  ...head("demo"),
+  folder: z.string(),
+  products: z.array(z.string()).describe("files in the folder, beside the simulated frames"),
+  tracing: z.strictObject(tracing),
+  traceAgainstTruth: z
+    .strictObject({ offset: number, rms: number, worstRms: number, worstFibre: count, nMisnamed: count })
+    .describe("pixels; rms about the offset that all fibres share"),
+  runs: z.array(
+    z.strictObject({
+      frame: z.string(),
+      method: z.enum(["joint", "optimal", "boxcar"]),
+      crosstalkCorrected: z.boolean(),
+      shiftPixels: z.number().describe("how far the frame's light has moved since the flat"),
+      decades: z
+        .array(
+          z.strictObject({
+            from: z.number(),
+            to: z.number(),
+            nPoint: count,
+            usableShare: z.number(),
+            bias: number.describe("median of (flux - truth) / truth"),
+            pull: number.describe("robust standard deviation of (flux - truth) / sigma about 0"),
+            beyond5Sigma: number,
+          }),
+        )
+        .describe("by true flux, e- per column"),
+      leak: z.strictObject({
+        contrast: z.number().describe("how many times brighter the neighbour is"),
+        nFibre: count,
+        nPoint: count,
+        meanShare: number.describe("of the neighbour's light that ends up in the fibre"),
+        worstShare: number,
+        worstFibre: count,
+      }),
+      cosmicRays: z.strictObject({
+        nHit: count.describe("points hit by over 5 sigma"),
+        foundShare: number,
+        spoiltShare: number.describe("neither flagged nor within 5 sigma of the truth"),
+        nClean: count,
+        falseShare: number,
+      }),
+    }),
+  ),
+  ...tail,
+});
+
 const failure = z.strictObject({
   hatchel: z.string(),
   format: z.literal(1),
@@ -200,7 +247,7 @@ const failure = z.strictObject({
 });
 
 /** By command; `failure` is what any of them prints instead when it fails. */
-export const jsonSchemas = { simulate, look, trace, extract, compare, verify, failure };
+export const jsonSchemas = { demo, simulate, look, trace, extract, compare, verify, failure };
 
 export type CommandName = Exclude<keyof typeof jsonSchemas, "failure">;
 

@@ -4,6 +4,7 @@
  * prints its help: a script that calls it so has lost its arguments. */
 import { Command, CommanderError } from "commander";
 import { addCompare } from "./compare.js";
+import { addDemo } from "./demo.js";
 import { addExtract } from "./extract.js";
 import { failureOf } from "./failures.js";
 import { addLook } from "./look.js";
@@ -38,7 +39,7 @@ function makeProgram(): Command {
     .helpOption("--help", "print this help")
     .helpCommand("help [command]", "print the help of a command")
     .addHelpText("after", ENDING);
-  for (const add of [addSimulate, addLook, addTrace, addExtract, addCompare, addVerify]) add(program);
+  for (const add of [addDemo, addSimulate, addLook, addTrace, addExtract, addCompare, addVerify]) add(program);
   for (const command of [program, ...program.commands]) {
     command.helpOption("--help", "print this help");
     command.configureOutput({ outputError() {} });

@@ -1,7 +1,7 @@
 /** What came of a tracing or an extraction, in a few numbers. */
 import { medianSignalToNoise } from "../extraction/snr.js";
 import { Flag, type Spectra, UNUSABLE } from "../extraction/spectra.js";
-import { legendreValue } from "../reference/legendre.js";
+import { legendreArgument, legendreValue } from "../reference/legendre.js";
 import { median } from "../reference/median.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 
@@ -39,6 +39,14 @@ export function medianFwhm({ profile, state }: Tramlines): number {
   const nCoef = profile.widthDegree + 1;
   const widths = state.flatMap((one, k) => (one === "dead" ? [] : [legendreValue(profile.sigma, 0, k * nCoef, nCoef)]));
   return FWHM_PER_SIGMA * median(widths);
+}
+
+/** y(x) of every fibre in every column: [nFibre × nx], pixels. */
+export function tramlineHeights({ legendre, degree, nFibre, nx }: Tramlines): Float64Array {
+  const nCoef = degree + 1;
+  return Float64Array.from({ length: nFibre * nx }, (_, i) =>
+    legendreValue(legendre, legendreArgument(i % nx, nx), Math.floor(i / nx) * nCoef, nCoef),
+  );
 }
 
 export type FlagCounts = Record<keyof typeof Flag, number>;
