@@ -111,7 +111,11 @@ function cautions({ methods, nWitness }: Comparison): string[] {
   if (nWitness === 0) {
     said.push("no fibre stands beside one 30 times brighter, so this frame says nothing about leaked light.");
   } else said.push("leak is measured against joint, so light that joint itself misplaces does not show.");
+  const joint = methods.find(({ method }) => method === "joint");
   for (const one of methods) {
+    if (!one.crosstalkCorrected && joint && one.medianSignalToNoise > joint.medianSignalToNoise) {
+      said.push(`${methodName(one)} takes neighbours' light for signal, so its higher S/N is no gain.`);
+    }
     if (!one.crosstalkCorrected && Math.abs(one.leakedShare) > 0.01) {
       said.push(
         `${methodName(one)} counts ${percentage(one.leakedShare)} of a bright neighbour's light as the faint fibre's own: its S/N beside bright fibres is not that of the target.`,

@@ -64,7 +64,7 @@ function tell(error: unknown, args: readonly string[], program: Command): number
     const known = program.commands.some((command) => command.name() === args[0]);
     process.stdout.write(jsonText(known ? args[0] : null, { error: failure }));
   }
-  process.stderr.write(`${failure.message.startsWith("hatchel") ? "" : "hatchel: "}${failure.message}\n`);
+  process.stderr.write(`${/^hatchel[ :]/.test(failure.message) ? "" : "hatchel: "}${failure.message}\n`);
   if (process.env.HATCHEL_DEBUG === "1" && error instanceof Error) process.stderr.write(`${error.stack}\n`);
   return failure.exitCode;
 }

@@ -19,12 +19,12 @@ export function fixed(value: number | null | undefined, digits: number): string 
   return value === null || value === undefined || !Number.isFinite(value) ? "–" : value.toFixed(digits);
 }
 
-/** A share as a percentage; small ones keep two significant digits. */
+/** A share as a percentage; small ones keep two significant digits, what rounding left is 0. */
 export function percentage(share: number | null | undefined, digits = 1): string {
   if (share === null || share === undefined || !Number.isFinite(share)) return "–";
   const percent = 100 * share;
-  if (percent !== 0 && Math.abs(percent) < 10 ** -digits) return `${percent.toPrecision(2)} %`;
-  return `${percent.toFixed(digits)} %`;
+  if (Math.abs(percent) > 1e-9 && Math.abs(percent) < 10 ** -digits) return `${percent.toPrecision(2)} %`;
+  return `${(Math.abs(percent) > 1e-9 ? percent : 0).toFixed(digits)} %`;
 }
 
 /** "1 fibre", "168 fibres". */
