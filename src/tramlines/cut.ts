@@ -1,5 +1,5 @@
-/** A cut through the flat across the dispersion. Strips of columns about the middle are slid along the tramlines' course,
- * slope and curvature, before they are merged, so that steep or strongly curved fibres are not blurred. */
+/** A cut through the flat across the dispersion: a robust mean over columns about the middle, each moved along the
+ * tramlines' course by whole rows, so that steep or strongly curved fibres are not blurred. */
 import { medianOf } from "../detector/clip.js";
 import { TraceError } from "./errors.js";
 import { type ColumnGroup, type Flat, groupColumns } from "./flat.js";
@@ -17,33 +17,99 @@ export interface Cut {
 
 const STRIP_COLUMNS = 8;
 const MAX_STRIPS = 16;
+const MIN_STRIPS = 4;
+/** At most this share of the columns: over more of them the fibres no longer move alike. */
+const CUT_SHARE = 0.125;
 /** A strip's tramlines are sought this far up and down from the next strip's, px. */
 const MAX_STRIP_SHIFT = 3;
 
+/** Light is merged only from columns whose tramlines stand this near to a whole number of rows above or below the middle
+ * one's, px: moved by whole rows it is neither blurred nor interpolated. */
+const MAX_OFF_ROW = 0.15;
+/** Two groups that differ by more than this many σ: the lower one counts. */
+const KAPPA_PAIR = 6;
+
 /** @throws TraceError when the flat has no good pixel about its middle. */
 export function cutThrough(flat: Flat): Cut {
-  const nStrip = Math.max(1, Math.min(MAX_STRIPS, Math.floor(flat.nx / STRIP_COLUMNS)));
+  const most = Math.floor(flat.nx / STRIP_COLUMNS);
+  const nStrip = Math.max(1, Math.min(MAX_STRIPS, most, Math.max(MIN_STRIPS, Math.ceil(CUT_SHARE * most))));
   const columns = Math.min(STRIP_COLUMNS, flat.nx);
   for (const share of [0.5, 0.4, 0.6, 0.3, 0.7, 0.2, 0.8]) {
     const start = Math.round(share * flat.nx) - (nStrip * columns) / 2;
     const first = Math.max(0, Math.min(flat.nx - nStrip * columns, Math.floor(start)));
     const strips = Array.from({ length: nStrip }, (_, s) =>
       groupColumns(flat, first + s * columns, first + (s + 1) * columns),
-    ).filter((strip) => strip.count.filter((n) => n > 0).length > 0.5 * flat.ny);
-    if (strips.length >= Math.max(1, nStrip / 2)) return mergeStrips(strips, flat.ny);
+    ).filter((strip) => isWhole(strip, flat.ny));
+    if (strips.length < Math.max(1, nStrip / 2)) continue;
+    const path = course(strips, flat.ny);
+    const groups = groupsOnRows(flat, path, first, first + nStrip * columns).filter(({ group }) =>
+      isWhole(group, flat.ny),
+    );
+    if (groups.length > 0) return merge(groups, path, flat.ny);
   }
   throw new TraceError(
     `${flat.name}: hardly a pixel about the middle columns is good; give a flat that was read out whole.`,
   );
 }
 
-/** Median over strips, each slid along the tramlines' course to the middle one. */
-function mergeStrips(strips: ColumnGroup[], ny: number): Cut {
-  const middle = strips.length >> 1;
-  const { slope, offset } = course(strips, ny, middle);
+function isWhole(group: ColumnGroup, ny: number): boolean {
+  return group.count.reduce((n, count) => n + (count > 0 ? 1 : 0), 0) > 0.5 * ny;
+}
+
+/** How the tramlines run about the middle: y(x) − y(x0) = slope · (x − x0) + curvature/2 · (x − x0)². */
+interface Course {
+  x0: number;
+  slope: number;
+  curvature: number;
+}
+
+/** From the shifts between neighbouring strips; the medians of their two halves tell the step and how it grows. */
+function course(strips: ColumnGroup[], ny: number): Course {
+  const x0 = strips[strips.length >> 1].x;
+  const steps = strips.slice(1).map((strip, s) => ({
+    x: 0.5 * (strip.x + strips[s].x),
+    slope: shiftBetween(strips[s], strip, ny) / (strip.x - strips[s].x),
+  }));
+  if (steps.length < 4)
+    return { x0, slope: steps.length > 0 ? medianOf(steps.map((step) => step.slope)) : 0, curvature: 0 };
+  const half = steps.length >> 1;
+  const [early, late] = [steps.slice(0, half), steps.slice(-half)].map((part) => ({
+    x: medianOf(part.map((step) => step.x)),
+    slope: medianOf(part.map((step) => step.slope)),
+  }));
+  const curvature = (late.slope - early.slope) / (late.x - early.x);
+  return { x0, slope: early.slope + curvature * (x0 - early.x), curvature };
+}
+
+interface ShiftedGroup {
+  group: ColumnGroup;
+  /** Rows that its light stands above the middle's. */
+  rows: number;
+}
+
+/** Runs of columns that stand a whole number of rows off the middle, in groups of at most STRIP_COLUMNS. */
+function groupsOnRows(flat: Flat, { x0, slope, curvature }: Course, from: number, to: number): ShiftedGroup[] {
+  const groups: ShiftedGroup[] = [];
+  const offset = (x: number) => slope * (x - x0) + 0.5 * curvature * (x - x0) ** 2;
+  const rowsOf = (x: number) => {
+    const rows = Math.round(offset(x));
+    return Math.abs(offset(x) - rows) <= MAX_OFF_ROW ? rows : Number.NaN;
+  };
+  for (let x = from; x < to; ) {
+    const rows = rowsOf(x);
+    let end = x + 1;
+    while (end < to && end - x < STRIP_COLUMNS && rowsOf(end) === rows) end++;
+    if (!Number.isNaN(rows)) groups.push({ group: groupColumns(flat, x, end), rows });
+    x = end;
+  }
+  return groups;
+}
+
+/** Median over groups, each moved by its whole rows. */
+function merge(groups: ShiftedGroup[], path: Course, ny: number): Cut {
   const cut: Cut = {
-    x: strips[middle].x,
-    slope,
+    x: path.x0,
+    slope: path.slope,
     mean: new Float64Array(ny).fill(Number.NaN),
     fixedVariance: new Float64Array(ny),
     variancePerElectron: new Float64Array(ny),
@@ -52,39 +118,23 @@ function mergeStrips(strips: ColumnGroup[], ny: number): Cut {
     const values: number[] = [];
     let fixed = 0;
     let perElectron = 0;
-    strips.forEach((strip, s) => {
-      const value = between(strip.mean, y + offset[s]);
-      if (Number.isNaN(value) || strip.count[y] === 0) return;
-      values.push(value);
-      fixed += strip.fixedVariance[y];
-      perElectron += strip.variancePerElectron[y];
-    });
+    for (const { group, rows } of groups) {
+      const at = y + rows;
+      if (at < 0 || at >= ny || group.count[at] === 0) continue;
+      values.push(group.mean[at]);
+      fixed += group.fixedVariance[at];
+      perElectron += group.variancePerElectron[at];
+    }
     if (values.length === 0) continue;
-    cut.mean[y] = medianOf(values);
+    const lowest = Math.min(...values);
+    const pairVariance = fixed + perElectron * Math.max(0, lowest) + (0.05 * lowest) ** 2;
+    const disagree = values.length === 2 && (values[0] - values[1]) ** 2 > KAPPA_PAIR ** 2 * pairVariance;
+    cut.mean[y] = disagree ? lowest : medianOf(values);
     // The median of n values has π/2 times the variance of their mean.
     cut.fixedVariance[y] = (0.5 * Math.PI * fixed) / values.length ** 2;
     cut.variancePerElectron[y] = (0.5 * Math.PI * perElectron) / values.length ** 2;
   }
   return cut;
-}
-
-/** How far each strip's light stands above the middle strip's, px, as a parabola: curvature within the cut would blur it. */
-function course(strips: ColumnGroup[], ny: number, middle: number): { slope: number; offset: number[] } {
-  const steps = strips.slice(1).map((strip, s) => shiftBetween(strips[s], strip, ny));
-  if (steps.length === 0) return { slope: 0, offset: [0] };
-  // Two halves, robustly: their medians give the step in the middle and how it grows along the cut.
-  const half = steps.length >> 1;
-  const [early, late] =
-    half > 1 ? [medianOf(steps.slice(0, half)), medianOf(steps.slice(-half))] : [steps[0], steps[0]];
-  const growth = half > 1 ? (late - early) / (steps.length - half) : 0;
-  const step = half > 1 ? 0.5 * (early + late) : medianOf(steps);
-  const centre = 0.5 * (steps.length - 1);
-  const at = (s: number) => step * s + growth * (0.5 * s * (s - 1) - centre * s);
-  const dx = (strips[strips.length - 1].x - strips[0].x) / steps.length;
-  return {
-    slope: (step + growth * (middle - 0.5 - centre)) / dx,
-    offset: strips.map((_, s) => at(s) - at(middle)),
-  };
 }
 
 /** How far the light of `right` stands above that of `left`, px, by least squares on a grid of quarter pixels and the
