@@ -52,8 +52,11 @@ export function cutThrough(flat: Flat): Cut {
   );
 }
 
+/** A cut needs a value in this share of its rows. */
+const GOOD_SHARE = 0.2;
+
 function isWhole(group: ColumnGroup, ny: number): boolean {
-  return group.count.reduce((n, count) => n + (count > 0 ? 1 : 0), 0) > 0.5 * ny;
+  return group.count.reduce((n, count) => n + (count > 0 ? 1 : 0), 0) > GOOD_SHARE * ny;
 }
 
 /** How the tramlines run about the middle: y(x) − y(x0) = slope · (x − x0) + curvature/2 · (x − x0)². */

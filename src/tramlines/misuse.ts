@@ -44,7 +44,7 @@ function columnContrasts(flat: Flat): Float64Array {
   for (let x = 0; x < nx; x += step) {
     const values: number[] = [];
     for (let y = 0; y < ny; y += rowStep) if (flat.nUsed[y * nx + x] > 0) values.push(flat.electrons[y * nx + x]);
-    if (values.length < 0.3 * (ny / rowStep)) continue;
+    if (values.length < 0.2 * (ny / rowStep)) continue;
     const sorted = sortedFinite(values);
     contrasts.push(quantileOfSorted(sorted, 0.95) - quantileOfSorted(sorted, 0.05));
   }
