@@ -16,7 +16,6 @@ export function checkOutput(path: string, options: WriteOptions): void {
   const parent = fs.statSync(folder, { throwIfNoEntry: false });
   const refusal = (finding: string, remedy: string) => new FitsError("output", finding, remedy, { file: path });
   if (parent === undefined) throw refusal(`the folder ${folder} does not exist`, "make it first");
-  if (!parent.isDirectory()) throw refusal(`${folder} is not a folder`, "give another name");
   try {
     fs.accessSync(folder, fs.constants.W_OK);
   } catch {
