@@ -4,8 +4,8 @@ import { makeCalibrations, noCalibrations } from "../../src/detector/calibration
 import { correctFrame } from "../../src/detector/correct.js";
 import { type Frame, MaskBit } from "../../src/detector/frame.js";
 import type { RawImage } from "../../src/detector/raw.js";
-import { normalDeviate, poissonDeviate, seeded } from "../scene.js";
-import { type Cards, momentsOf, rawFrame } from "./rawFrames.js";
+import { normalDeviate, poissonDeviate } from "../scene.js";
+import { type Cards, momentsOf, rawFrame, seeded } from "./rawFrames.js";
 
 const NX = 120;
 const NY = 96;
@@ -175,6 +175,22 @@ describe("one frame through the whole equation", () => {
       "sci.fits: no dark frames, so dark current is taken as 0.",
       "sci.fits: no pixel flats, so all pixels are taken to respond alike.",
     ]);
+  });
+
+  it("divides light and its noise by the response, each as often as it must", () => {
+    const raw = expose(LAYOUT, SKY, 8);
+    const plain = correctFrame(raw, noCalibrations());
+    const half = {
+      response: new Float32Array(NX * NY).fill(0.5),
+      relativeVariance: new Float32Array(NX * NY).fill(1e-5),
+      unusable: new Uint8Array(NX * NY),
+      scatter: [0.01],
+    };
+    const { electrons, noise } = correctFrame(raw, { ...noCalibrations(), response: half });
+    const at = 70 * NX + 61;
+    expect(electrons[at]).toBe(2 * plain.electrons[at]);
+    expect(noise.fixedVarianceImage![at]).toBeCloseTo(4 * plain.noise.fixedVariance[NX + 61], 4);
+    expect([noise.inverseResponse![at], noise.responseRelativeVariance![at]]).toEqual([2, Math.fround(1e-5)]);
   });
 
   it("is exact without noise, drift included, to what the spline can follow", () => {

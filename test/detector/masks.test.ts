@@ -4,8 +4,8 @@ import { assemble } from "../../src/detector/assemble.js";
 import { badPixelMask } from "../../src/detector/badpixels.js";
 import { MaskBit } from "../../src/detector/frame.js";
 import { frameWarnings } from "../../src/detector/frameSanity.js";
-import { normalDeviate, seeded } from "../scene.js";
-import { type Cards, ONE_AMPLIFIER, rawFrame } from "./rawFrames.js";
+import { normalDeviate } from "../scene.js";
+import { type Cards, ONE_AMPLIFIER, rawFrame, seeded } from "./rawFrames.js";
 
 function noisy(change: (x: number, y: number) => number | undefined, cards: Cards = ONE_AMPLIFIER, seed = 1) {
   const next = seeded(seed);

@@ -3,8 +3,8 @@ import { clippedScatter, medianOf, quantileOfSorted } from "../../src/detector/c
 import { overscanLevel } from "../../src/detector/overscan.js";
 import { fitSmoothLevel } from "../../src/detector/smoothLevel.js";
 import { judgeMissing, python } from "../judges.js";
-import { normalDeviate, seeded } from "../scene.js";
-import { amplifierOf, momentsOf, rawFrame } from "./rawFrames.js";
+import { normalDeviate } from "../scene.js";
+import { amplifierOf, momentsOf, rawFrame, seeded } from "./rawFrames.js";
 
 /** A level that drifts by several counts while the frame is read, neither symmetric nor a polynomial. */
 const drift = (y: number) => 1040 + 3.1 * Math.sin(y / 37 + 0.4) + 0.004 * y + 1.7 * Math.cos(y / 11);
@@ -26,6 +26,16 @@ describe("robust numbers", () => {
     // Wild samples fall on 0…900, 900·(1/33)/900·22 of them inside ±4 σ: under 0.1 %, which widens σ by under 0.4 %.
     expect(Math.abs(mean - 12)).toBeLessThan(4 * (2.7 / Math.sqrt(n)) + 0.02);
     expect(Math.abs(sigma / 2.7 - 1)).toBeLessThan(4 / Math.sqrt(2 * n) + 0.004);
+  });
+
+  it.skipIf(judgeMissing("scipy"))("scatter of exact normal quantiles is 1 (scipy's norm.ppf)", () => {
+    const n = 20000;
+    const script = `
+import json, numpy as np
+from scipy.stats import norm
+print(json.dumps(norm.ppf((np.arange(${n}) + 0.5) / ${n}).tolist()))`;
+    // A grid of 20 000 lacks what lies beyond 4.06 σ; its second moment is low by some 5e-4, so σ by half of that.
+    expect(Math.abs(clippedScatter(JSON.parse(python(script))).sigma - 1)).toBeLessThan(5e-4);
   });
 
   it("scatter of whole counts includes the converter's twelfth (σ² + 1/12, uniform rounding)", () => {
@@ -126,6 +136,14 @@ describe("overscan", () => {
     expect(Math.abs(level.readNoiseAdu - expected)).toBeLessThan(4 * level.readNoiseErrorAdu);
     expect(level.readNoiseErrorAdu / expected).toBeCloseTo(1 / Math.sqrt(2 * 21 * 300), 3);
     expect(level.jitterVariance).toBe(0);
+  });
+
+  it("counts each line's mean as a freedom lost", () => {
+    const level = overscanLevel(drifting(27, 3000), amplifierOf("[1:100,1:3000]", ["[115:124,1:3000]"]))!;
+    // Ten pixels a line: without the lost freedom the read noise would be 5 % low, 17 of its errors.
+    const expected = Math.sqrt(2.2 ** 2 + 1 / 12);
+    expect(Math.abs(level.readNoiseAdu - expected)).toBeLessThan(4 * level.readNoiseErrorAdu);
+    expect(level.readNoiseErrorAdu / expected).toBeLessThan(0.005);
   });
 
   it("goes wrong when trailing charge is not skipped, which is why it is", () => {

@@ -1,8 +1,8 @@
 import { describe, expect, it } from "vitest";
 import type { Region } from "../../src/detector/assemble.js";
 import { pixelResponse } from "../../src/detector/response.js";
-import { normalDeviate, seeded } from "../scene.js";
-import { amplifierOf, momentsOf } from "./rawFrames.js";
+import { normalDeviate } from "../scene.js";
+import { amplifierOf, momentsOf, seeded } from "./rawFrames.js";
 
 const NX = 200;
 const NY = 130;

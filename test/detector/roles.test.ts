@@ -6,8 +6,8 @@ import { exposureKind } from "../../src/detector/exposure.js";
 import type { RawImage } from "../../src/detector/raw.js";
 import type { Role } from "../../src/detector/roles.js";
 import { Header } from "../../src/fits/header.js";
-import { normalDeviate, seeded } from "../scene.js";
-import { type Cards, ONE_AMPLIFIER, rawFrame, without } from "./rawFrames.js";
+import { normalDeviate } from "../scene.js";
+import { type Cards, ONE_AMPLIFIER, rawFrame, seeded, without } from "./rawFrames.js";
 
 /** Ribbons 5 px apart along x, 79 rows. */
 const ribbon = (y: number) => Math.exp(-(((y % 5) - 2) ** 2) / 2);
@@ -17,6 +17,7 @@ const LIGHT: Record<string, (x: number, y: number) => number> = {
   fibres: (x, y) => 9000 * ribbon(y) * (1 - 0.002 * x),
   lines: (x, y) => (isLine(x) ? 12000 * ribbon(y) : 3),
   even: (x, y) => 15000 - 8 * x + 11 * y,
+  comb: (x) => ([3, 5, 12, 14, 21, 30, 33, 41, 55, 58, 70, 72, 85, 96].includes(x) ? 9000 : 40),
   spots: (x, y) => (x % 10 === 3 && y % 9 === 4 ? 20000 : 300),
 };
 
@@ -258,6 +259,7 @@ describe("no raw frame", () => {
   });
 
   it("neither even light nor lines contradict an axis", () => {
+    expect(asRole(frame("comb"), "science")().geometry.dispersionAxis).toBe(1);
     for (const light of ["even", "lines", "spots", "dark"]) {
       expect(asRole(frame(light, { DISPAXIS: 2 }), "science")().geometry.dispersionAxis).toBe(2);
     }
