@@ -108,6 +108,7 @@ async function assembled(
       made.geometryOf = raw.name;
     } else requireSameGeometry(made.geometry, made.geometryOf!, frame.layout.geometry, raw.name);
     requireZeroLevel(frame, role, made);
+    requireReadNoise(frame);
     // The check looks at the frame before bias structure is off: a few electrons do not matter to it.
     made.warnings.push(...checkRole(raw, frame, role), ...frame.layout.warnings);
     made.assumptions.push(...frame.layout.assumptions);
@@ -130,6 +131,16 @@ export function requireZeroLevel(frame: Assembled, role: Role | undefined, calib
   if (without === undefined) return;
   throw new DetectorError(
     `${frame.name}: amplifier ${without.amplifier.number} has no overscan and no bias frame was given, so its zero level is not known; give --bias, an overscan section, or bias_level in the spectrograph file.`,
+  );
+}
+
+/** @throws DetectorError when a read noise that had to be measured could not be (an overscan of one column, or without
+ * noise). */
+export function requireReadNoise({ name, regions }: Assembled): void {
+  const without = regions.find(({ readVariance }) => !(readVariance > 0));
+  if (without === undefined) return;
+  throw new DetectorError(
+    `${name}: amplifier ${without.amplifier.number}: its read noise is not given and cannot be measured from its overscan; give read_noise (e⁻) in the spectrograph file.`,
   );
 }
 

@@ -8,7 +8,7 @@ import type { Spectrograph } from "../spectrograph.js";
 import { detectorLayout } from "./amplifiers.js";
 import { type Assembled, assemble } from "./assemble.js";
 import { badPixelMask } from "./badpixels.js";
-import { type Calibrations, hasOwnRate, requireZeroLevel } from "./calibrations.js";
+import { type Calibrations, hasOwnRate, requireReadNoise, requireZeroLevel } from "./calibrations.js";
 import { DetectorError } from "./detectorError.js";
 import { darkSeconds, exposureSeconds } from "./exposure.js";
 import { type Frame, MaskBit, type NoiseIngredients } from "./frame.js";
@@ -39,6 +39,7 @@ export function correctFrame(
   }
   const frame = assemble(raw, layout);
   requireZeroLevel(frame, undefined, calibrations);
+  requireReadNoise(frame);
   refuseOtherAxis(frame, spectrograph);
   const warnings = [...(raw.warnings ?? []), ...layout.warnings, ...calibrations.warnings, ...frameWarnings(frame)];
   if (options.role) warnings.push(...checkRole(raw, frame, options.role));

@@ -142,6 +142,13 @@ describe("noise, measured", () => {
     );
   });
 
+  it("a read noise that is neither given nor measurable is asked for", () => {
+    const narrow = { ...without(CARDS, "RDNOISE2"), BIASSEC2: "[258:260,1:150]" };
+    expect(() => correctFrame(exposed("s.fits", 9, 300, narrow), noCalibrations())).toThrow(
+      "s.fits: amplifier 2: its read noise is not given and cannot be measured from its overscan; give read_noise (e⁻) in the spectrograph file.",
+    );
+  });
+
   it("a missing read noise is measured and said", () => {
     const raw = exposed("s.fits", 9, 300, without(CARDS, "RDNOISE2"));
     const frame = correctFrame(raw, noCalibrations());
