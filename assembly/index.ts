@@ -5,8 +5,10 @@ export { centroid } from "./centroid";
 export { erf } from "./erf";
 export { extractColumns32, extractColumns64, prepareExtraction32, prepareExtraction64 } from "./extract";
 export { legendreFitClipped, legendreValue } from "./legendre";
+export { median } from "./median";
 export { pixelsToFloat32, pixelsToFloat64 } from "./pixels";
 export { gaussianWeights64 } from "./profile";
+export { rankUpdate } from "./rankUpdate";
 
 /** First byte behind the compiler's own tables: where a workbench may begin. */
 export function heapBase(): usize {

@@ -1,6 +1,6 @@
 import fc from "fast-check";
 import { beforeAll, describe, expect, it } from "vitest";
-import { Centring, type CentringColumn } from "../src/kernels/centring.js";
+import { Centring } from "../src/kernels/centring.js";
 import { type Kernels, loadKernels } from "../src/kernels/module.js";
 import { centreFibres } from "../src/reference/centring.js";
 import { erf } from "../src/reference/erf.js";
@@ -12,7 +12,7 @@ beforeAll(async () => {
 });
 
 /** A column of pixel-integrated Gaussians over a sloping background, every fibre, weight and row different. */
-function column(nFibre: number, seed: number, shift: number, widening: number): CentringColumn & { light: number[] } {
+function column(nFibre: number, seed: number, shift: number, widening: number) {
   const uneven = (i: number) => ((i * 7919 + seed * 104729) % 1013) / 1013;
   const pitch = 4.3 + uneven(1);
   const centre = Array.from({ length: nFibre }, (_, k) => 6 + k * pitch + 0.3 * uneven(k + 2));

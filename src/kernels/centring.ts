@@ -94,13 +94,11 @@ export class Centring {
       v.background.byteOffset,
       v.scratch.byteOffset,
     );
-    const lane = (view: Float64Array, n: number, l: number) =>
-      Float64Array.from({ length: n }, (_, i) => view[2 * i + l]);
     return columns.map((_, l) => ({
-      solution: lane(v.solution, nFibre * nPar, l),
-      variance: lane(v.variance, nFibre * nPar, l),
-      model: lane(v.model, nRow, l),
-      background: lane(v.background, nBack, l),
+      solution: laneOf(v.solution, nFibre * nPar, l),
+      variance: laneOf(v.variance, nFibre * nPar, l),
+      model: laneOf(v.model, nRow, l),
+      background: laneOf(v.background, nBack, l),
     }));
   }
 
@@ -128,4 +126,11 @@ export class Centring {
       this.views.sigma[2 * k + lane] = sigma[k];
     }
   }
+}
+
+/** Every second number, from `lane` on. */
+function laneOf(view: Float64Array, n: number, lane: number): Float64Array<ArrayBuffer> {
+  const out = new Float64Array(n);
+  for (let i = 0; i < n; i++) out[i] = view[2 * i + lane];
+  return out;
 }

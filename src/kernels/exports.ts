@@ -16,6 +16,9 @@ export interface KernelExports {
   extractColumns32(jobPtr: number, x0: number, x1: number): void;
   extractColumns64(jobPtr: number, x0: number, x1: number): void;
 
+  /** assembly/rankUpdate.ts */
+  rankUpdate(gPtr: number, weightPtr: number, nRow: number, n: number, outPtr: number): void;
+
   /** assembly/profile.ts */
   gaussianWeights64(centre: number, sigma: number, first: number, n: number, outPtr: number): void;
 
@@ -83,4 +86,7 @@ export interface KernelExports {
     hasBlank: number,
     blank: bigint,
   ): void;
+
+  /** assembly/median.ts: loses the order of what lies at `ptr`. */
+  median(ptr: number, n: number): number;
 }

@@ -190,6 +190,8 @@ function averageRow(
 }
 
 function spread(below: number, here: number, above: number): number {
-  const [b, h, a] = [below, here, above].map((v) => (Number.isNaN(v) ? 0 : v));
+  const b = Number.isNaN(below) ? 0 : below;
+  const h = Number.isNaN(here) ? 0 : here;
+  const a = Number.isNaN(above) ? 0 : above;
   return Math.max(b, h, a) - Math.min(b, h, a);
 }

@@ -1,7 +1,9 @@
 /** Centres and widths of all lit fibres in groups of columns over the whole flat, by joint linearised centring about
  * where the fibres are thought to be. */
 import { Centring, type CentringColumn, type CentringResult } from "../kernels/centring.js";
+import { Centroider } from "../kernels/centroid.js";
 import type { Kernels } from "../kernels/module.js";
+import { legendreArgument, legendreValue } from "../reference/legendre.js";
 import { overlapping, REACH_SIGMAS, rowsNear } from "./find.js";
 import { type ColumnGroup, type Flat, groupColumns } from "./flat.js";
 
@@ -11,6 +13,7 @@ const MIN_COLUMNS = 8;
 /** Within a group a tramline may climb by this, px; steeper ones get groups of fewer columns. */
 const MAX_CLIMB = 0.4;
 const BACKGROUND_TERMS = 4;
+const CENTROID_ROUNDS = 4;
 /** Light in the background is trusted this many pitches from a fibre. */
 const BACKGROUND_PITCHES = 1.3;
 /** A pixel this many σ off the model is left out, σ with the profile's own error in it. */
@@ -50,6 +53,8 @@ export interface Measured {
   /** σ, px; NaN when widths were not asked for. */
   sigma: Float64Array[];
   sigmaVariance: Float64Array[];
+  /** [group][row]: e⁻ per pixel of the smooth background. */
+  background: Float64Array[];
   /** The profile's own relative error: what residuals scatter beyond noise, as a share of the model. */
   relativeError: number;
   /** Pixels left out as cosmic rays or the like. */
@@ -89,6 +94,7 @@ export class Meter {
       centreVariance: perGroup(),
       sigma: perGroup(),
       sigmaVariance: perGroup(),
+      background: [],
       relativeError,
       nRejected: 0,
     };
@@ -109,11 +115,41 @@ export class Meter {
       }
       pair.forEach((i, lane) => {
         this.keep(i, guess, results[lane], nPar, measured);
+        measured.background.push(backgroundRows(results[lane].background, this.ny));
         this.addMisfit(columns[lane], this.groups[i], results[lane], misfit);
       });
     }
     measured.relativeError = profileError(misfit);
     return measured;
+  }
+
+  /** Centres by window centroids instead, for wide pitches: the joint rounds before tell light, widths and background. */
+  centroids(kernels: Kernels, guess: Guess, joint: Measured, halfWidth: number): Measured {
+    const centroider = new Centroider(kernels, this.ny);
+    const centre = this.groups.map((group, g) => {
+      centroider.load(group.mean, this.good[g]);
+      return guess.centre[g].map((y) => this.centroidOf(centroider, g, y, halfWidth, joint.background[g]));
+    });
+    return { ...joint, centre };
+  }
+
+  private centroidOf(
+    centroider: Centroider,
+    g: number,
+    start: number,
+    halfWidth: number,
+    background: Float64Array,
+  ): number {
+    const from = Math.round(start - halfWidth);
+    const to = Math.round(start + halfWidth);
+    // A window with a hole, or over the edge, has no centroid.
+    for (let y = from; y <= to; y++) if (this.good[g][y] !== 1) return Number.NaN;
+    let centre = start;
+    for (let round = 0; round < CENTROID_ROUNDS; round++) {
+      centre = centroider.measure(centre, halfWidth, background[Math.round(start)]);
+      if (!(Math.abs(centre - start) < 0.5 * halfWidth)) return Number.NaN;
+    }
+    return centre;
   }
 
   private column(g: number, guess: Guess, model: Float64Array | undefined, relativeError: number): CentringColumn {
@@ -181,6 +217,10 @@ export class Meter {
     }
     misfit.nUnknown += result.solution.reduce((n, value) => n + (value !== 0 ? 1 : 0), BACKGROUND_TERMS);
   }
+}
+
+function backgroundRows(coef: Float64Array, ny: number): Float64Array {
+  return Float64Array.from({ length: ny }, (_, y) => legendreValue(coef, legendreArgument(y, ny)));
 }
 
 /** Sums over pixels, Σ r², Σ v (noise alone) and Σ m², and counts. */

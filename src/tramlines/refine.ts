@@ -20,6 +20,16 @@ const WIDTH_FLOOR = 0.005;
 /** A point counts when its light is this many σ, and this share of the fibre's median. */
 const KAPPA_SEEN = 6;
 const SEEN_SHARE = 0.1;
+export interface RefineOptions {
+  /** Degree of the tramlines' series; default: the data choose, up to 8. */
+  degree?: number;
+  /** How the last centres are taken; "joint" unless fibres stand wide apart and the centroid itself is wanted. */
+  centring?: "joint" | "centroid";
+}
+
+/** Window of the centroids, ± this share of the pitch. */
+const CENTROID_SHARE = 0.5;
+
 export interface Refined {
   centres: SeriesSet;
   widths: SeriesSet;
@@ -41,7 +51,7 @@ export function refine(
   lit: number[],
   pitch: number,
   sigma: number,
-  degree: number | undefined,
+  options: RefineOptions,
 ): Refined {
   const { nx, ny } = flat;
   const groups = cutIntoGroups(flat, steepest(path, naming.nFibre));
@@ -63,10 +73,13 @@ export function refine(
   }
   measured = meter.measure(guess, false, Math.max(0.002, measured.relativeError), true);
 
+  if (options.centring === "centroid") {
+    measured = meter.centroids(kernels, guess, measured, CENTROID_SHARE * pitch);
+  }
   const points = centrePoints(measured, groups, nx, naming, lit);
   const last = fitter(points);
   const most = Math.min(MAX_DEGREE, Math.max(1, Math.floor(groups.length / 4)));
-  const chosen = degree ?? last.chooseDegree(1, most);
+  const chosen = options.degree ?? last.chooseDegree(1, most);
   return {
     centres: last.fit(chosen),
     widths: widths as SeriesSet,

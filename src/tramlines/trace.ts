@@ -9,15 +9,12 @@ import { combineFlats, type Flat } from "./flat.js";
 import type { SlitLayout } from "./layout.js";
 import { flatWarnings, requireFlat } from "./misuse.js";
 import { fibres, type Naming, nameFibres, numberFibres } from "./name.js";
-import { type Refined, refine } from "./refine.js";
+import { type Refined, type RefineOptions, refine } from "./refine.js";
 import type { SeriesSet } from "./series.js";
 import type { FibreState, Tramlines } from "./tramlines.js";
 import { pathAt, walkOutward } from "./walk.js";
 
-export interface TraceOptions {
-  /** Degree of the tramlines' series; default: the data choose, up to 8. */
-  degree?: number;
-}
+export type TraceOptions = RefineOptions;
 
 export interface Tracing {
   tramlines: Tramlines;
@@ -52,7 +49,7 @@ export async function traceFlat(
   const pitch = typicalPitch(lit.map((k) => naming.centre[k]));
   const path = walkOutward(kernels, combined, naming.centre, lit, cut.x, cut.slope, pitch);
   const warnings = [...naming.warnings, ...flatWarnings(combined, peaks, (x) => pathAt(path, naming.nFibre, x))];
-  const refined = refine(kernels, combined, path, naming, lit, pitch, peaks[0].sigma, options.degree);
+  const refined = refine(kernels, combined, path, naming, lit, pitch, peaks[0].sigma, options);
   const tramlines = assemble(combined, naming, refined, lit);
   return summarise(combined.name, tramlines, naming, warnings);
 }

@@ -1,5 +1,7 @@
 /** Tramlines: where each fibre's light runs over the detector, and how it spreads across its line. */
 
+import type { ShapeTable } from "../reference/shape.js";
+
 export type FibreState = "lit" | "dim" | "dead";
 
 /** Gaussian integrated over pixels; its width follows x as a Legendre series of its own for each fibre. */
@@ -12,7 +14,16 @@ export interface GaussianProfile {
   relativeError: number;
 }
 
-export type Profile = GaussianProfile;
+/** Any form, from a table; its widths stretch it. */
+export interface ShapeProfile {
+  kind: "empirical";
+  sigma: Float64Array;
+  widthDegree: number;
+  relativeError: number;
+  shape: ShapeTable;
+}
+
+export type Profile = GaussianProfile | ShapeProfile;
 
 export interface Tramlines {
   nx: number;

@@ -97,6 +97,15 @@ describe("tracing flats of known truth", () => {
     expect(both.rms).toBeLessThan(alone.tracing.rms);
   });
 
+  it("takes window centroids when asked, which stand on the centroid of skewed light at a wide pitch", async () => {
+    const wide = { ...layout, pitch: 10, gap: 6 };
+    const drawn = drawFlat({ ...scene, layout: wide, skew: 0.9 });
+    const joint = distances(await traceFlat(drawn.frame, wide), drawn);
+    const centroid = distances(await traceFlat(drawn.frame, wide, { centring: "centroid" }), drawn);
+    expect(centroid.rms).toBeLessThan(0.005);
+    expect(joint.rms).toBeGreaterThan(2 * centroid.rms);
+  });
+
   it("finds dim fibres, says so, and traces them", async () => {
     const { tracing, worst } = await trace(drawFlat({ ...scene, lightOf: { 3: 0.05, 4: 0.2, 20: 0.06, 36: 0.05 } }));
     expect(statesOf(tracing, "dim")).toEqual([3, 4, 20, 36]);

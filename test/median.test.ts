@@ -1,0 +1,40 @@
+import fc from "fast-check";
+import { beforeAll, describe, expect, it } from "vitest";
+import { type Kernels, loadKernels } from "../src/kernels/module.js";
+import { median } from "../src/reference/median.js";
+
+let kernels: Kernels;
+beforeAll(async () => {
+  kernels = await loadKernels();
+});
+
+function inKernel(values: number[]): number {
+  const bench = kernels.workbench(8 * values.length);
+  const view = bench.float64(values.length);
+  view.set(values);
+  return bench.call.median(view.byteOffset, values.length);
+}
+
+describe("median", () => {
+  it("is the middle value, or the mean of the middle two", () => {
+    for (const of of [inKernel, median]) {
+      expect(of([7])).toBe(7);
+      expect(of([9, -4, 2])).toBe(2);
+      expect(of([8, 1, 5, 2])).toBe(3.5);
+      expect(of([3, 3, 3, 9, 3, 1])).toBe(3);
+    }
+  });
+
+  it("agrees between kernel and reference on any list, ties and order included", () => {
+    const list = fc.array(fc.oneof(fc.double({ noNaN: true, min: -1e9, max: 1e9 }), fc.integer({ min: -3, max: 3 })), {
+      minLength: 1,
+      maxLength: 70,
+    });
+    // −0 and 0 are equal to a comparison of sizes, so that either may come out.
+    fc.assert(
+      fc.property(list, (values) => {
+        expect(inKernel(values) + 0).toBe(median(values) + 0);
+      }),
+    );
+  });
+});
