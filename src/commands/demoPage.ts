@@ -90,8 +90,8 @@ function closingWords(still: Run[], moved: Run[]): string {
 function errorBarWords(run: Run): string {
   const pulls = decadesOf(run).map(({ pull }) => number(pull));
   const [least, most] = [Math.min(...pulls), Math.max(...pulls)];
-  if (most < TRUE_PULL) return "true within a quarter at every level of light";
-  return `${fixed(least, 1)} to ${fixed(most, 1)} times too small, by the level of light`;
+  if (most < TRUE_PULL && least > 1 / TRUE_PULL) return "true within a quarter at every level of light";
+  return `not true: the scatter about the truth is ${fixed(least, 1)} to ${fixed(most, 1)} times what they say, by the level of light`;
 }
 
 function decadesOf(run: Run): Run["decades"] {

@@ -22,6 +22,8 @@ const LIT = Array.from({ length: 19 }, (_, k) => k !== 8);
 
 beforeAll(() => {
   cwd = smallNight();
+  good(["trace", ...FLATS, "-o", "tramlines.fits", ...KNOWN, "--quiet"]);
+  good(["extract", FRAME, "--tramlines", "tramlines.fits", "-o", "spectra.fits", ...KNOWN, "--quiet"]);
 });
 afterAll(() => rmSync(cwd, { recursive: true }));
 
@@ -37,7 +39,7 @@ function bytes(path: string): Buffer {
 
 describe("simulate", () => {
   test("lists what it wrote", () => {
-    const run = good(["simulate", "scene.toml", "-o", "again", "--json"]);
+    const run = good(["simulate", "scene.toml", "-o", "again", "--force", "--json"]);
     const json = jsonSchemas.simulate.parse(JSON.parse(run.stdout));
     expect(json).toMatchObject({
       command: "simulate",
@@ -103,7 +105,7 @@ describe("look", () => {
 
 describe("trace", () => {
   test("names the fibres by the slit and tells how sure it is", async () => {
-    const run = good(["trace", ...FLATS, "-o", "tramlines.fits", ...KNOWN, "--json"]);
+    const run = good(["trace", ...FLATS, "-o", "tramlines.fits", ...KNOWN, "--force", "--json"]);
     const json = jsonSchemas.trace.parse(JSON.parse(run.stdout));
     expect(json.fibres).toEqual({
       ...{ positions: 19, blocks: 3, lit: 18, dim: 0, dead: 1 },
@@ -149,7 +151,10 @@ describe("extract", () => {
   });
 
   test("gives the light that the simulation put in, with error bars that hold", async () => {
-    const run = good(["extract", FRAME, "--tramlines", "tramlines.fits", "-o", "spectra.fits", ...KNOWN, "--json"]);
+    const before = bytes("spectra.fits");
+    const args = ["extract", FRAME, "--tramlines", "tramlines.fits", "-o", "spectra.fits", ...KNOWN];
+    const run = good([...args, "--force", "--json"]);
+    expect(bytes("spectra.fits").equals(before)).toBe(true);
     const json = jsonSchemas.extract.parse(JSON.parse(run.stdout));
     expect(json).toMatchObject({ method: "joint", precision: "f64", tracing: null, columns: 200, points: 3600 });
     const spectra = await readSpectra(join(cwd, "spectra.fits"));
@@ -169,7 +174,7 @@ describe("extract", () => {
   });
 
   test("takes a flat or its tramlines to the same spectra", async () => {
-    good(["extract", FRAME, "--flat", ...FLATS, "-o", "by-flat.fits", ...KNOWN, "--quiet"]);
+    good(["extract", FRAME, "--flat", ...FLATS, "-o", "by-flat.fits", ...KNOWN, "--force", "--quiet"]);
     const [a, b] = [await readSpectra(join(cwd, "by-flat.fits")), await readSpectra(join(cwd, "spectra.fits"))];
     expect(a.flux).toEqual(b.flux);
     expect(a.variance).toEqual(b.variance);
