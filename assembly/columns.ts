@@ -145,6 +145,20 @@ export function storeGroup<T extends number>(job: usize, x: i32, nValid: i32): v
   }
 }
 
+/** Light of all fibres in the group's pixels into Word.modelImage, when that is there. */
+export function storeModel<T extends number>(job: usize, x: i32, nValid: i32): void {
+  const image = pointer(job, Word.modelImage);
+  if (image == 0) return;
+  const nx = <usize>count(job, Word.nx);
+  for (let y: i32 = 0; y < count(job, Word.ny); y++) {
+    const from = pointer(job, Word.model) + ((<usize>(windowRows(job) + y)) << 4);
+    const to = image + ((<usize>y * nx + <usize>x) << 2);
+    for (let lane: i32 = 0; lane < nValid; lane++) {
+      store<f32>(to + ((<usize>lane) << 2), <f32>laneAt<T>(from, lane));
+    }
+  }
+}
+
 /** What this group rejected, and its suspects, into Word.rejected. */
 export function storeRejected<T extends number>(job: usize, x: i32, nValid: i32): void {
   const nx = <usize>count(job, Word.nx);

@@ -6,7 +6,7 @@
  * A lane's answer never depends on the lanes beside it: a lane that has settled keeps its variances, so that further
  * rounds, run for the others' sake, give it the same bits again. */
 import { boxcar } from "./boxcar";
-import { loadGroup, prepareRowPolynomials, storeGroup, storeRejected } from "./columns";
+import { loadGroup, prepareRowPolynomials, storeGroup, storeModel, storeRejected } from "./columns";
 import { rejectWorst, squaredExcess } from "./cosmic";
 import { solveCrosstalk, withoutCrosstalk } from "./crosstalk";
 import { groupFlags } from "./flags";
@@ -76,6 +76,7 @@ function extractGroup<T extends number>(job: usize, x: i32, nValid: i32): void {
     squaredExcess<T>(job); // before the estimate, which puts the method's fluxes in place of the fit's
     storeRejected<T>(job, x, nValid);
   }
+  storeModel<T>(job, x, nValid);
   estimate<T>(job);
   groupFlags<T>(job, x);
   storeGroup<T>(job, x, nValid);

@@ -4,6 +4,7 @@ import { erf } from "./erf";
 import { count, pointer, Word, windowRows } from "./job";
 import { loadSpread, spread } from "./lanes";
 import { legendreValue } from "./legendre";
+import { shapeWeights } from "./shape";
 
 const rootHalf: f64 = 0.7071067811865476;
 
@@ -55,7 +56,6 @@ export function blockProfiles<T extends number>(job: usize, x0: i32): void {
   const nWidth = count(job, Word.nWidth);
   const nWindow = windowRows(job);
   const blockColumns = count(job, Word.blockColumns);
-  const span = <f64>max(count(job, Word.nx) - 1, 1);
   let weightsAt = pointer(job, Word.nodeWeights);
   let centreAt = pointer(job, Word.nodeCentre);
   for (let k: i32 = 0; k < count(job, Word.nFibre); k++) {
@@ -63,19 +63,39 @@ export function blockProfiles<T extends number>(job: usize, x0: i32): void {
     const width = pointer(job, Word.width) + ((<usize>(k * nWidth)) << 3);
     let sum: f64 = 0.0;
     for (let node: i32 = 0; node < 4; node++) {
-      sum += legendreValue(trace, nTrace, (2.0 * (<f64>x0 + nodeOffset(blockColumns, node))) / span - 1.0);
+      sum += legendreValue(trace, nTrace, nodeArgument(job, x0, node));
     }
     const start = windowStart(sum / 4.0, job);
     store<i32>(pointer(job, Word.start) + ((<usize>k) << 2), start);
     for (let node: i32 = 0; node < 4; node++) {
-      const t = (2.0 * (<f64>x0 + nodeOffset(blockColumns, node))) / span - 1.0;
+      const t = nodeArgument(job, x0, node);
       const y = legendreValue(trace, nTrace, t);
       store<T>(centreAt, <T>(y - <f64>start));
-      gaussianWeights<T>(y, legendreValue(width, nWidth, t), start, nWindow, weightsAt);
+      nodeWeights<T>(job, t, y, legendreValue(width, nWidth, t), start, weightsAt);
       centreAt += sizeof<T>();
       weightsAt += <usize>nWindow * sizeof<T>();
     }
   }
+}
+
+/** One window of one fibre under the job's profile model. */
+function nodeWeights<T extends number>(job: usize, t: f64, y: f64, width: f64, start: i32, outPtr: usize): void {
+  const shape = pointer(job, Word.shape);
+  const nWindow = windowRows(job);
+  if (shape == 0) {
+    gaussianWeights<T>(y, width, start, nWindow, outPtr);
+    return;
+  }
+  const ny = count(job, Word.ny);
+  const across: f64 = ny > 1 ? (2.0 * y) / <f64>(ny - 1) - 1.0 : 0.0;
+  shapeWeights<T>(shape, t, across, y, width, start, nWindow, outPtr, pointer(job, Word.shapeTerms));
+}
+
+/** Where a node lies on the series' interval [−1, 1]; a single column sits at 0. */
+function nodeArgument(job: usize, x0: i32, node: i32): f64 {
+  const nx = count(job, Word.nx);
+  if (nx < 2) return 0.0;
+  return (2.0 * (<f64>x0 + nodeOffset(count(job, Word.blockColumns), node))) / <f64>(nx - 1) - 1.0;
 }
 
 /** Weights and centres of the group of columns that begins `offset` columns into the block. */

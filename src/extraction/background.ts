@@ -1,6 +1,5 @@
 /** A smooth background under the fibres, through the pixels that no fibre reaches: slit ends, gaps between blocks,
- * dead fibres. A low-order Legendre surface, clipped; light that the profiles' far wings put into the gaps is taken
- * for background, so that faint fibres beside bright ones keep an error of that size. */
+ * dead fibres. A low-order Legendre surface, clipped. */
 import type { Frame } from "../detector/frame.js";
 import { factorBand, solveBand } from "../reference/banded.js";
 import type { SmoothBackground } from "../reference/extract.js";
@@ -11,7 +10,7 @@ import type { Tramlines } from "../tramlines/tramlines.js";
 /** A fibre's light at this distance, in σ, is below 1e-5 of it on a pixel. */
 const gapSigma = 4.3;
 /** Columns that one median is taken over. */
-const cellColumns = 16;
+export const cellColumns = 16;
 const largestX = 3;
 const largestY = 5;
 const clipSigma = 3;
@@ -39,9 +38,10 @@ export function noBackground(): SmoothBackground {
   return { nX: 1, nY: 1, coefficients: Float64Array.of(0) };
 }
 
-/** Fits the background of `frame` between the tramlines. Without gaps to see it in it is 0, and a warning says so. */
-export function fitBackground(frame: Frame, tramlines: Tramlines): BackgroundFit {
-  const cells = gapCells(frame, tramlines);
+/** Fits the background of `frame` between the tramlines. Without gaps to see it in it is 0, and a warning says so.
+ * `light`: [ny × nx] e⁻, the frame without its fibres' light as far as that is known; NaN where not to be used. */
+export function fitBackground(frame: Frame, tramlines: Tramlines, light = frame.electrons): BackgroundFit {
+  const cells = gapCells(frame, tramlines, light);
   const nY = Math.min(largestY, countStripes(cells, frame.ny));
   const nX = Math.min(largestX, 1 + Math.floor(frame.nx / (4 * cellColumns)));
   if (nY < 1 || cells.length < 4 * nX * nY) {
@@ -52,7 +52,7 @@ export function fitBackground(frame: Frame, tramlines: Tramlines): BackgroundFit
 }
 
 /** Medians over `cellColumns` columns of rows that stay clear of every lit fibre. */
-function gapCells(frame: Frame, tramlines: Tramlines): Cell[] {
+function gapCells(frame: Frame, tramlines: Tramlines, light: Float32Array): Cell[] {
   const cells: Cell[] = [];
   for (let x0 = 0; x0 + cellColumns <= frame.nx; x0 += cellColumns) {
     const free = freeRows(tramlines, frame, x0);
@@ -60,7 +60,7 @@ function gapCells(frame: Frame, tramlines: Tramlines): Cell[] {
       const levels: number[] = [];
       for (let x = x0; free[y] && x < x0 + cellColumns; x++) {
         const at = y * frame.nx + x;
-        if (frame.mask[at] === 0) levels.push(frame.electrons[at]);
+        if (frame.mask[at] === 0 && !Number.isNaN(light[at])) levels.push(light[at]);
       }
       if (2 * levels.length < cellColumns) continue;
       const middle = x0 + (cellColumns - 1) / 2;

@@ -9,9 +9,9 @@ import type { ExtractionInput, ExtractionOutput, Method } from "../reference/ext
 import { checkGeometry } from "../tramlines/file.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { type BackgroundFit, fitBackground, noBackground } from "./background.js";
-import { measureMisfit } from "./misfit.js";
 import { runPasses } from "./passes.js";
 import { type ExtractionPlan, planExtraction } from "./plan.js";
+import { settleFrame } from "./settle.js";
 import type { Spectra } from "./spectra.js";
 
 export interface ExtractionOptions {
@@ -57,8 +57,7 @@ export async function extractFrame(
   checkGeometry(frame, tramlines);
   const kernels = await loadKernels();
   const plan = planExtraction(tramlines);
-  const fit = options.background === false ? null : fitBackground(frame, tramlines);
-  const input = extractionInput(frame, tramlines, plan, fit, options);
+  const input = extractionInput(frame, tramlines, plan, options);
   const bench = new ExtractionBench(
     kernels,
     input,
@@ -66,27 +65,19 @@ export async function extractFrame(
     tramlines.nFibre,
     options.precision ?? "f64",
   );
-  const profileError = settleProfileError(bench, input);
+  const { background, profileError } = settleFrame(bench, input, frame, tramlines, options);
   runPasses(bench, input, options.onProgress);
   const spectra = finishSpectra(bench.output, tramlines, input);
   const nRejected = bench.rejected.reduce((n, bits) => n + (bits & (MaskBit.cosmic | MaskBit.grown) ? 1 : 0), 0);
   return {
     spectra,
     plan,
-    background: fit,
+    background,
     rejected: bench.rejected,
     nRejected,
     profileError,
-    warnings: fit?.warnings ?? [],
+    warnings: background?.warnings ?? [],
   };
-}
-
-/** Measures ε on the frame itself and has the bench use it from here on. */
-export function settleProfileError(bench: ExtractionBench, input: ExtractionInput): number {
-  if (input.kappa === 0) return input.profileError;
-  const profileError = measureMisfit(bench, input.nx, input.blockColumns, input.kappa, input.profileError);
-  bench.setProfileError(profileError);
-  return profileError;
 }
 
 /** What the kernel, and its reference, need for this frame. */
@@ -94,7 +85,6 @@ export function extractionInput(
   frame: Frame,
   tramlines: Tramlines,
   plan: ExtractionPlan,
-  background: BackgroundFit | null,
   options: ExtractionOptions,
 ): ExtractionInput {
   const { active } = plan;
@@ -111,10 +101,11 @@ export function extractionInput(
     nTrace: degree + 1,
     width: pickRows(profile.sigma, profile.widthDegree + 1, active),
     nWidth: profile.widthDegree + 1,
+    ...(profile.kind === "gaussian" ? {} : { shape: profile.shape }),
     electrons: frame.electrons,
     mask: frame.mask,
     noise: frame.noise,
-    background: background ?? noBackground(),
+    background: options.background === false ? noBackground() : fitBackground(frame, tramlines),
     seen: Int32Array.from(active.flatMap((k) => [tramlines.seenFrom[k], tramlines.seenTo[k]])),
     bandwidth: plan.bandwidth,
     method,

@@ -5,6 +5,8 @@ import type { Tramlines } from "../tramlines/tramlines.js";
 
 /** A Gaussian's light beyond this many σ is less than 6e-7 of it. */
 const windowSigma = 5;
+/** A profile with wings: further out they are taken for background. */
+const shapeWindowSigma = 13;
 /** Columns at which the tramlines are looked at for the plan; between them they are smooth. */
 const nSample = 65;
 
@@ -23,7 +25,8 @@ export function planExtraction(tramlines: Tramlines): ExtractionPlan {
   const active = tramlines.state.flatMap((state, k) => (state === "dead" ? [] : [k]));
   if (active.length === 0) throw new RangeError("The tramlines hold no lit fibre; there is nothing to extract.");
   const centres = sampledCentres(tramlines, active);
-  const halfWindow = Math.ceil(windowSigma * widestSigma(tramlines, active) + 0.5);
+  const reach = tramlines.profile.kind === "gaussian" ? windowSigma : shapeWindowSigma;
+  const halfWindow = Math.ceil(reach * widestSigma(tramlines, active) + 0.5);
   const step = (tramlines.nx - 1) / (nSample - 1);
   let steepest = 0;
   let smallestPitch = Number.POSITIVE_INFINITY;

@@ -8,10 +8,10 @@ import { type ExtractionInput, type ExtractionOutput, extractColumns, type Metho
 import { legendreArgument, legendreValue } from "../reference/legendre.js";
 import { gaussianWeights } from "../reference/profile.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
-import { fitBackground } from "./background.js";
-import { type ExtractionOptions, extractionInput, settleProfileError } from "./extract.js";
+import { type ExtractionOptions, extractionInput } from "./extract.js";
 import { type ColumnRunner, runPasses } from "./passes.js";
 import { planExtraction } from "./plan.js";
+import { settleFrame } from "./settle.js";
 
 export interface MethodCheck {
   method: Method;
@@ -55,7 +55,6 @@ export async function verifyExtraction(
 ): Promise<Verification> {
   const kernels = await loadKernels();
   const plan = planExtraction(tramlines);
-  const background = options.background === false ? null : fitBackground(frame, tramlines);
   const cases: [Method, boolean][] = [
     ["joint", false],
     ["optimal", true],
@@ -65,8 +64,10 @@ export async function verifyExtraction(
   ];
   const checks: MethodCheck[] = [];
   for (const [method, crosstalk] of cases) {
-    const input = extractionInput(frame, tramlines, plan, background, { ...options, method, crosstalk });
-    input.profileError = settleProfileError(openBench(kernels, input, "f64"), input);
+    const input = extractionInput(frame, tramlines, plan, { ...options, method, crosstalk });
+    const settled = settleFrame(openBench(kernels, input, "f64"), input, frame, tramlines, options);
+    input.profileError = settled.profileError;
+    if (settled.background !== null) input.background = settled.background;
     const share = checks.length / (2 * cases.length);
     const expected = runReference(input, (done) => options.onProgress?.(share + done / cases.length));
     for (const precision of ["f64", "f32"] as const) checks.push(compareRuns(kernels, input, expected, precision));

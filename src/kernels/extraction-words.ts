@@ -38,6 +38,7 @@ export enum Word {
   width, // f64, nFibre × nWidth
   seen, // i32, nFibre × 2
   outputRow, // i32, nFibre: row of the images below
+  shape, // f64, a table as assembly/shape.ts draws it; absent: Gaussians
   background, // f64, nX × nY
 
   // the spectra: nSlit × nx
@@ -47,9 +48,11 @@ export enum Word {
   flags, // i32
   chi2, // T
   backgroundUnder, // T
+  modelImage, // f32, ny × nx, or absent: light of all fibres, without background
 
   // scratch of one worker
   start, // i32, nFibre
+  shapeTerms, // f64, 7
   nodeCentre, // T, nFibre × 4
   nodeWeights, // T, nFibre × 4 × nWindow
   nodeShares, // T, 4 × blockColumns

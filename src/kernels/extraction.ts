@@ -1,5 +1,6 @@
 /** Door to assembly/extract.ts: lays out one extraction's memory, runs stretches of columns, shows the spectra. */
-import type { ExtractionInput, ExtractionOutput } from "../reference/extract.js";
+import type { ExtractionInput, ExtractionOutput, SmoothBackground } from "../reference/extract.js";
+import type { ShapeTable } from "../reference/shape.js";
 import type { Precision } from "./banded.js";
 import { MethodCode, Numbers, Word } from "./extraction-words.js";
 import type { Kernels, Workbench } from "./module.js";
@@ -29,6 +30,8 @@ export class ExtractionBench {
   readonly output: ExtractionOutput;
   /** ny × nx, bits of MaskBit: what was rejected so far. */
   readonly rejected: Uint8Array;
+  /** ny × nx, e⁻: light of all fibres in the columns that were extracted, without background. */
+  readonly model: Float32Array;
   private readonly bench: Workbench;
   private readonly job: Int32Array;
   private readonly numbers: Float64Array;
@@ -60,6 +63,7 @@ export class ExtractionBench {
     this.numbers = pieces.get(Word.numbers) as Float64Array;
     this.background = pieces.get(Word.background) as Float64Array;
     this.rejected = pieces.get(Word.rejected) as Uint8Array;
+    this.model = pieces.get(Word.modelImage) as Float32Array;
     this.output = viewOutput(pieces);
     this.copyIn(outputRow);
     const prepare = precision === "f32" ? this.bench.call.prepareExtraction32 : this.bench.call.prepareExtraction64;
@@ -109,9 +113,16 @@ export class ExtractionBench {
     };
   }
 
-  /** Another background of the same orders. `coefficients`: [nX × nY] e⁻ per pixel. */
-  setBackground(coefficients: Float64Array): void {
-    this.background.set(coefficients);
+  /** Another background, of orders not above the first one's. */
+  setBackground({ nX, nY, coefficients }: SmoothBackground): void {
+    const { nX: mostX, nY: mostY } = this.input.background;
+    if (nX > mostX || nY > mostY) {
+      throw new RangeError(`A background of orders ${nX} × ${nY}, but there is room for ${mostX} × ${mostY}.`);
+    }
+    this.background.fill(0);
+    for (let i = 0; i < nX; i++) {
+      for (let j = 0; j < nY; j++) this.background[i * mostY + j] = coefficients[i * nY + j];
+    }
   }
 
   private copyIn(outputRow: Int32Array): void {
@@ -150,6 +161,7 @@ export class ExtractionBench {
       [Word.background, background.coefficients],
     ];
     for (const [word, values] of arrays) if (values !== undefined) pieces.get(word)!.set(values);
+    if (input.shape) pieces.get(Word.shape)!.set(packShape(input.shape));
     for (const word of [Word.flux, Word.variance, Word.neighbourCovariance, Word.chi2, Word.backgroundUnder]) {
       pieces.get(word)!.fill(Number.NaN);
     }
@@ -157,6 +169,12 @@ export class ExtractionBench {
     numbers[Numbers.halfAperture] = input.halfAperture;
     this.setRejection(input.kappa, input.growKappa);
   }
+}
+
+/** A shape as assembly/shape.ts reads it. */
+function packShape(shape: ShapeTable): Float64Array {
+  const { start, step, n, referenceWidth, centroid, values } = shape;
+  return Float64Array.of(start, step, n, referenceWidth, ...centroid, ...values);
 }
 
 function memoryPlan(input: ExtractionInput, nSlit: number, nLane: number): Plan {
@@ -207,9 +225,12 @@ function memoryPlan(input: ExtractionInput, nSlit: number, nLane: number): Plan 
     [Word.width, "float64", input.width.length],
     [Word.seen, "int32", 2 * nFibre],
     [Word.outputRow, "int32", nFibre],
+    ...(input.shape ? [[Word.shape, "float64", 11 + input.shape.values.length] as Plan[number]] : []),
+    [Word.shapeTerms, "float64", 7],
     [Word.background, "float64", background.coefficients.length],
     ...images.map((word): Plan[number] => [word, "lanes", nSlit * nx]),
     [Word.flags, "int32", nSlit * nx],
+    [Word.modelImage, "float32", nPixel],
     [Word.start, "int32", nFibre],
     [Word.nodeCentre, "lanes", 4 * nFibre],
     [Word.nodeWeights, "lanes", 4 * nFibre * nWindow],

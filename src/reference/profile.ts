@@ -5,6 +5,7 @@
  * the cost does not depend on the model; where lines run steeply the blocks are narrower. */
 import { erf } from "./erf.js";
 import { legendreArgument, legendreValue } from "./legendre.js";
+import { type ShapeTable, shapeTerms, shapeWeights } from "./shape.js";
 
 /** Columns of a block; four nodes each. With 4 the nodes are the columns themselves and nothing is interpolated. */
 export type BlockColumns = 4 | 8 | 16;
@@ -70,6 +71,8 @@ export interface ProfileInput {
   /** nFibre × nWidth: Legendre series of σ(x), pixels. */
   width: Float64Array;
   nWidth: number;
+  /** Absent: Gaussians of those widths. */
+  shape?: ShapeTable;
 }
 
 /** Profiles of all fibres at the nodes of the block that begins with column `x0`. */
@@ -86,10 +89,25 @@ export function blockProfiles(input: ProfileInput, x0: number): BlockProfiles {
     nodes.forEach((t, i) => {
       const sigma = legendreValue(input.width, t, k * nWidth, nWidth);
       centre[4 * k + i] = y[i] - start[k];
-      weights.set(gaussianWeights(y[i], sigma, start[k], nWindow), (4 * k + i) * nWindow);
+      weights.set(profileWeights(input, t, y[i], sigma, start[k], nWindow), (4 * k + i) * nWindow);
     });
   }
   return { start, centre, weights };
+}
+
+/** One window under the input's profile model; `t`: x on [−1, 1]. */
+function profileWeights(
+  input: ProfileInput,
+  t: number,
+  y: number,
+  sigma: number,
+  first: number,
+  n: number,
+): Float64Array {
+  const { shape } = input;
+  if (shape === undefined) return gaussianWeights(y, sigma, first, n);
+  const terms = shapeTerms(t, legendreArgument(y, input.ny), sigma, shape.referenceWidth);
+  return shapeWeights(shape, terms, y, sigma, first, n);
 }
 
 /** First row of a window around `y`; a window never lies further out than just beyond the frame. */

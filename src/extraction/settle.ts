@@ -1,0 +1,67 @@
+/** What the frame itself tells before its spectra are taken: the background, fitted in turns with the fibres on a sample of
+ * the columns, since fibres' wings reach into every gap; and how well the profiles fit. */
+import type { Frame } from "../detector/frame.js";
+import type { ExtractionBench } from "../kernels/extraction.js";
+import { MaskBit } from "../reference/bits.js";
+import type { ExtractionInput } from "../reference/extract.js";
+import type { Tramlines } from "../tramlines/tramlines.js";
+import { type BackgroundFit, cellColumns, fitBackground } from "./background.js";
+import type { ExtractionOptions } from "./extract.js";
+import { measureMisfit } from "./misfit.js";
+
+/** Fits in turns; the light that a turn moves between fibres and background falls at least tenfold each time. */
+const turns = 3;
+/** Of so many groups of columns one is looked at. */
+const sampleStep = 2;
+
+export interface SettledFrame {
+  /** Null when none was asked for. */
+  background: BackgroundFit | null;
+  /** ε: share of the light nearby by which pixels miss the profiles beyond noise. */
+  profileError: number;
+}
+
+/** Measures both and has `bench` use them from here on; leaves its spectra and rejections as if nothing had been run. */
+export function settleFrame(
+  bench: ExtractionBench,
+  input: ExtractionInput,
+  frame: Frame,
+  tramlines: Tramlines,
+  options: ExtractionOptions,
+): SettledFrame {
+  let background: BackgroundFit | null = null;
+  let profileError = settleProfileError(bench, input);
+  if (options.background !== false) {
+    for (let turn = 0; turn < turns; turn++) {
+      background = fitBackground(frame, tramlines, lightBetweenFibres(bench, input));
+      bench.setBackground(background);
+    }
+    profileError = settleProfileError(bench, input);
+  }
+  return { background, profileError };
+}
+
+function settleProfileError(bench: ExtractionBench, input: ExtractionInput): number {
+  if (input.kappa === 0) return input.profileError;
+  const profileError = measureMisfit(bench, input.nx, input.blockColumns, input.kappa, input.profileError);
+  bench.setProfileError(profileError);
+  return profileError;
+}
+
+/** The frame without its fibres' light in a sample of columns, NaN elsewhere and where a cosmic ray hit. */
+function lightBetweenFibres(bench: ExtractionBench, input: ExtractionInput): Float32Array {
+  const { nx, ny, electrons } = input;
+  const light = new Float32Array(nx * ny).fill(Number.NaN);
+  bench.rejected.fill(0);
+  for (let x0 = 0; x0 < nx; x0 += sampleStep * cellColumns) {
+    const x1 = Math.min(x0 + cellColumns, nx);
+    bench.run(x0, x1);
+    for (let y = 0; y < ny; y++) {
+      for (let at = y * nx + x0; at < y * nx + x1; at++) {
+        if ((bench.rejected[at] & MaskBit.cosmic) === 0) light[at] = electrons[at] - bench.model[at];
+      }
+    }
+  }
+  bench.rejected.fill(0);
+  return light;
+}

@@ -1,0 +1,128 @@
+/** A profile of any form from the fibre flat itself: shape and geometry in turns, each with everything else eliminated. */
+import type { Kernels } from "../../kernels/module.js";
+import { factorBand, solveBand } from "../../reference/banded.js";
+import { median } from "../../reference/median.js";
+import { nShapeTerm, type ShapeTable } from "../../reference/shape.js";
+import { type Flat, pixelVariance } from "../flat.js";
+import type { Tramlines } from "../tramlines.js";
+import { type ShapeBasis, shapeBasis, tabulate } from "./basis.js";
+import type { ColumnData, Lines } from "./column.js";
+import { applyGeometry, measureColumn } from "./geometry.js";
+import { nBackground, ShapeNormal, type ShapeState } from "./step.js";
+
+const rounds = 4;
+const shapeColumns = 40;
+const geometryColumns = 64;
+/** Share of the light with which the wings begin, before anything is measured. */
+const startWing = 0.02;
+
+export interface MeasuredShape {
+  table: ShapeTable;
+  lines: Lines;
+  basis: ShapeBasis;
+  state: ShapeState;
+  /** χ² per degree of freedom before each step. */
+  history: number[];
+}
+
+export function measureShape(kernels: Kernels, flat: Flat, tramlines: Tramlines): MeasuredShape {
+  const active = tramlines.state.flatMap((state, k) => (state === "dead" ? [] : [k]));
+  const lines = linesOf(tramlines, active);
+  const referenceWidth = median(active.map((_, k) => lines.width[k * lines.nWidth]));
+  const basis = shapeBasis(referenceWidth);
+  let state: ShapeState = {
+    coefficients: startCoefficients(kernels, basis),
+    background: new Float64Array(nBackground),
+  };
+  let table = tabulate(basis, state.coefficients);
+  const history: number[] = [];
+  for (let round = 0; round < rounds; round++) {
+    const normal = new ShapeNormal(kernels, basis, flat.ny, lines.nFibre);
+    for (const x of spreadColumns(flat.nx, shapeColumns, round)) {
+      normal.add(lines, table, state.background, flatColumn(flat, x), false, round > 0 ? 6 : 0);
+    }
+    const step = normal.solve(state, table);
+    history.push(step.chi2 / step.freedom);
+    state = step;
+    table = tabulate(basis, state.coefficients);
+    const columns = spreadColumns(flat.nx, geometryColumns, round).map((x) =>
+      measureColumn(lines, table, state.background, flatColumn(flat, x)),
+    );
+    applyGeometry(kernels, lines, columns);
+  }
+  return { table, lines, basis, state, history };
+}
+
+/** `n` columns spread evenly, another set each round, none at the very ends. */
+function spreadColumns(nx: number, n: number, round: number): number[] {
+  const step = nx / n;
+  const offset = ((round * 0.38) % 1) * 0.8 + 0.1;
+  return Array.from({ length: n }, (_, i) => Math.min(nx - 1, Math.floor((i + offset) * step)));
+}
+
+/** One column of a combined flat, with what makes its variances. */
+export function flatColumn(flat: Flat, x: number): ColumnData {
+  const { nx, ny, frame } = flat;
+  const data: ColumnData = {
+    x,
+    light: new Float64Array(ny),
+    good: new Uint8Array(ny),
+    fixedVariance: new Float64Array(ny),
+    variancePerElectron: new Float64Array(ny),
+    inverseVariance: new Float64Array(ny),
+  };
+  for (let y = 0; y < ny; y++) {
+    const at = y * nx + x;
+    const n = flat.nUsed[at];
+    data.good[y] = flat.mask[at] === 0 && n > 0 && Number.isFinite(flat.electrons[at]) ? 1 : 0;
+    data.light[y] = data.good[y] ? flat.electrons[at] : 0;
+    data.fixedVariance[y] = pixelVariance(frame, at, 0) / Math.max(n, 1);
+    data.variancePerElectron[y] = (frame.noise.inverseResponse?.[at] ?? 1) / Math.max(n, 1);
+  }
+  return data;
+}
+
+function linesOf(tramlines: Tramlines, active: number[]): Lines {
+  const nTrace = tramlines.degree + 1;
+  const nOld = tramlines.profile.widthDegree + 1;
+  const nWidth = Math.max(nOld, 4);
+  const lines: Lines = {
+    nx: tramlines.nx,
+    ny: tramlines.ny,
+    nFibre: active.length,
+    trace: new Float64Array(active.length * nTrace),
+    nTrace,
+    width: new Float64Array(active.length * nWidth),
+    nWidth,
+  };
+  active.forEach((k, i) => {
+    lines.trace.set(tramlines.legendre.subarray(k * nTrace, (k + 1) * nTrace), i * nTrace);
+    lines.width.set(tramlines.profile.sigma.subarray(k * nOld, (k + 1) * nOld), i * nWidth);
+  });
+  return lines;
+}
+
+/** A Gaussian with a little wing, as far as splines can follow: least squares on the cumulative profile. */
+function startCoefficients(kernels: Kernels, basis: ShapeBasis): Float64Array {
+  const { nSpline, n, start, step, referenceWidth } = basis;
+  const call = kernels.workbench(0).call;
+  const band = new Float64Array(nSpline * nSpline);
+  const rhs = new Float64Array(nSpline);
+  for (let i = 0; i < n; i += 4) {
+    const v = start + i * step;
+    const core = 0.5 + 0.5 * call.erf((v / referenceWidth) * Math.SQRT1_2);
+    const u = 1 / (1 + Math.abs(v) / (5 * referenceWidth));
+    const wing = v > 0 ? 1 - 0.5 * u * u * u : 0.5 * u * u * u;
+    const target = (1 - startWing) * core + startWing * wing;
+    const row = basis.values.subarray(i * 2 * nSpline, i * 2 * nSpline + nSpline);
+    for (let j = 0; j < nSpline; j++) {
+      rhs[j] += row[j] * target;
+      for (let m = 0; m <= j; m++) band[j * nSpline + j - m] += row[j] * row[m];
+    }
+  }
+  factorBand(band, nSpline, nSpline - 1);
+  solveBand(band, nSpline, nSpline - 1, rhs);
+  const coefficients = new Float64Array(nSpline * nShapeTerm);
+  for (let j = 0; j < nSpline; j++) coefficients[j * nShapeTerm] = rhs[j];
+  return coefficients;
+}

@@ -1,0 +1,324 @@
+/** The profile step: all coefficients of a shape and a smooth background at once, by linear least squares over some columns,
+ * with every fibre's flux, shift and width in each column eliminated exactly (Schur complement). Fluxes fitted in
+ * turns with the shape would never converge: wings, neighbours and background trade light too well. */
+import type { Kernels } from "../../kernels/module.js";
+import { NormalMatrix } from "../../kernels/rankUpdate.js";
+import { factorBand, solveBand } from "../../reference/banded.js";
+import { legendreArgument } from "../../reference/legendre.js";
+import { centroidOf, nShapeTerm, type ShapeTable } from "../../reference/shape.js";
+import { basisAt, type ShapeBasis } from "./basis.js";
+import {
+  type ColumnData,
+  type ColumnProfiles,
+  columnFlux,
+  columnModel,
+  columnProfiles,
+  forRows,
+  type Lines,
+  type LocalSystem,
+  localSystem,
+  weighColumn,
+} from "./column.js";
+
+/** Orders of the background in x and y. */
+const nBackgroundX = 3;
+const nBackgroundY = 5;
+export const nBackground = nBackgroundX * nBackgroundY;
+/** Pixels, at the basis's width, to which fibres' local unknowns reach. */
+const localReach = 14;
+/** Terms beyond the first may reach these shares of it: in the core, and in the wings, which hardly change. */
+const coreShare = 0.2;
+const wingShare = 0.05;
+const wingBegins = 4.2;
+
+/** Unknowns: shape coefficients [nSpline × nShapeTerm], then background. */
+export interface ShapeState {
+  coefficients: Float64Array;
+  background: Float64Array;
+}
+
+export interface StepResult extends ShapeState {
+  /** Before this step. */
+  chi2: number;
+  freedom: number;
+}
+
+/** Normal equations of many columns in the shape's unknowns; several frames may add to one. */
+export class ShapeNormal {
+  readonly nUnknown: number;
+  chi2 = 0;
+  freedom = 0;
+  private readonly matrix: NormalMatrix;
+  private readonly n: number;
+
+  constructor(
+    kernels: Kernels,
+    private readonly basis: ShapeBasis,
+    private readonly ny: number,
+    nFibre: number,
+  ) {
+    this.nUnknown = basis.nSpline * nShapeTerm + nBackground;
+    // One column more holds the residuals: their products with the design are the right-hand side.
+    this.n = this.nUnknown + 1 + ((this.nUnknown + 1) % 2);
+    this.matrix = new NormalMatrix(kernels, this.n, Math.max(ny, 3 * nFibre));
+  }
+
+  /** Adds one column. `holdCentres`: eliminate fluxes alone. */
+  add(
+    lines: Lines,
+    table: ShapeTable,
+    background: Float64Array,
+    data: ColumnData,
+    holdCentres: boolean,
+    clip = 0,
+  ): void {
+    const profiles = columnProfiles(lines, table, data.x, -table.start * widest(lines, table));
+    const near = columnProfiles(lines, table, data.x, nearReach(lines, table));
+    const smooth = backgroundColumn(background, data.x, lines);
+    const level = data.light.map((light, y) => light - smooth[y]);
+    const { flux, model } = settleColumn(near, profiles, data, level, smooth);
+    const residual = level.map((light, y) => light - model[y]);
+    for (let y = 0; clip > 0 && y < this.ny; y++) {
+      if (residual[y] * residual[y] * data.inverseVariance[y] > clip * clip) data.inverseVariance[y] = 0;
+    }
+    const local = localSystem(near, flux, residual, data.inverseVariance, holdCentres ? 1 : 3);
+    this.fillDesign(profiles, table, flux, data.x, residual, lines);
+    const cross = this.crossProducts(near, local, flux, data.inverseVariance);
+    for (let y = 0; y < this.ny; y++) {
+      this.matrix.weights[y] = data.inverseVariance[y];
+      this.chi2 += residual[y] * residual[y] * data.inverseVariance[y];
+      this.freedom += data.inverseVariance[y] > 0 ? 1 : 0;
+    }
+    this.freedom -= local.rhs.length;
+    this.matrix.add(this.ny);
+    this.eliminate(local, cross);
+  }
+
+  /** Steps of all unknowns from `state`, priors and gauges applied.
+   * The gauges keep a step from changing the norm, from shifting the shape and from widening it: those belong to flux,
+   * centre and width of the fibres. */
+  solve(state: ShapeState, table: ShapeTable): StepResult {
+    const { nUnknown, n } = this;
+    const normal = this.matrix.normal.slice();
+    const rhs = normal.slice(nUnknown * n, nUnknown * n + nUnknown);
+    this.addPriors(normal, rhs, state);
+    this.addGauges(normal, table);
+    const band = new Float64Array(nUnknown * nUnknown);
+    for (let i = 0; i < nUnknown; i++) {
+      for (let j = 0; j <= i; j++) band[i * nUnknown + i - j] = normal[i * n + j];
+      band[i * nUnknown] *= 1 + 1e-12;
+    }
+    factorBand(band, nUnknown, nUnknown - 1);
+    solveBand(band, nUnknown, nUnknown - 1, rhs);
+    const nShape = this.basis.nSpline * nShapeTerm;
+    const coefficients = state.coefficients.map((c, i) => c + rhs[i]);
+    normalise(coefficients, this.basis);
+    return {
+      coefficients,
+      background: state.background.map((b, i) => b + rhs[nShape + i]),
+      chi2: this.chi2,
+      freedom: this.freedom,
+    };
+  }
+
+  /** Derivatives of every row by the unknowns, and the residual in the last column. */
+  private fillDesign(
+    profiles: ColumnProfiles,
+    table: ShapeTable,
+    flux: Float64Array,
+    x: number,
+    residual: Float64Array,
+    lines: Lines,
+  ): void {
+    const { n, basis, ny } = this;
+    const { nSpline } = basis;
+    const rows = this.matrix.rows;
+    rows.fill(0, 0, ny * n);
+    let [below, above] = [new Float64Array(nSpline), new Float64Array(nSpline)];
+    for (let k = 0; k < profiles.nFibre; k++) {
+      const scale = table.referenceWidth / profiles.width[k];
+      const origin = centroidOf(table, profiles.terms[k]);
+      const v = (row: number) => (row - profiles.centre[k]) * scale + origin;
+      let lastRow = Number.NaN;
+      forRows(profiles, k, (row) => {
+        if (row !== lastRow) basisAt(basis, v(row - 0.5), below);
+        basisAt(basis, v(row + 0.5), above);
+        for (let j = 0; j < nSpline; j++) {
+          const light = flux[k] * (above[j] - below[j]);
+          if (light === 0) continue;
+          for (let m = 0; m < nShapeTerm; m++) rows[row * n + j * nShapeTerm + m] += light * profiles.terms[k][m];
+        }
+        [below, above] = [above, below];
+        lastRow = row + 1;
+      });
+    }
+    const inX = polynomials(legendreArgument(x, lines.nx), nBackgroundX);
+    for (let y = 0; y < ny; y++) {
+      const inY = polynomials(legendreArgument(y, ny), nBackgroundY);
+      for (let i = 0; i < nBackground; i++) {
+        rows[y * n + nSpline * nShapeTerm + i] = inX[Math.floor(i / nBackgroundY)] * inY[i % nBackgroundY];
+      }
+      rows[y * n + this.nUnknown] = residual[y];
+    }
+  }
+
+  /** Local unknowns × (shape's unknowns and residual): Σ w · local · design. */
+  private crossProducts(
+    near: ColumnProfiles,
+    local: LocalSystem,
+    flux: Float64Array,
+    inverseVariance: Float64Array,
+  ): Float64Array {
+    const { n } = this;
+    const rows = this.matrix.rows;
+    const cross = new Float64Array(local.rhs.length * n);
+    for (let k = 0; k < near.nFibre; k++) {
+      forRows(near, k, (row, at) => {
+        const w = inverseVariance[row];
+        if (w === 0) return;
+        for (let p = 0; p < local.nPar; p++) {
+          const own = w * (p === 0 ? near.weights[at] : flux[k] * (p === 1 ? near.byCentre[at] : near.byWidth[at]));
+          const out = (k * local.nPar + p) * n;
+          for (let i = 0; i <= this.nUnknown; i++) cross[out + i] += own * rows[row * n + i];
+        }
+      });
+    }
+    return cross;
+  }
+
+  /** normal −= Xᵀ D⁻¹ X with X = L⁻¹ · cross, from the local system's factors L D Lᵀ. */
+  private eliminate(local: LocalSystem, cross: Float64Array): void {
+    const { n } = this;
+    const nLocal = local.rhs.length;
+    const b = local.halfBandwidth;
+    factorBand(local.band, nLocal, b);
+    for (let i = 0; i < nLocal; i++) {
+      for (let j = 1; j <= Math.min(i, b); j++) {
+        const l = local.band[i * (b + 1) + j];
+        if (l === 0) continue;
+        const [to, from] = [i * n, (i - j) * n];
+        for (let c = 0; c <= this.nUnknown; c++) cross[to + c] -= l * cross[from + c];
+      }
+      this.matrix.weights[i] = -local.band[i * (b + 1)];
+    }
+    this.matrix.rows.set(cross);
+    this.matrix.add(nLocal);
+  }
+
+  private addPriors(normal: Float64Array, rhs: Float64Array, state: ShapeState): void {
+    const { n, basis } = this;
+    const c = state.coefficients;
+    for (let j = 0; j < basis.nSpline; j++) {
+      const share = Math.abs(basis.middle[j]) > wingBegins ? wingShare : coreShare;
+      const sigma = share * Math.max(Math.abs(c[j * nShapeTerm]), 1e-6);
+      for (let m = 1; m < nShapeTerm; m++) {
+        const i = j * nShapeTerm + m;
+        normal[i * n + i] += 1 / (sigma * sigma);
+        rhs[i] -= c[i] / (sigma * sigma);
+      }
+    }
+  }
+
+  private addGauges(normal: Float64Array, table: ShapeTable): void {
+    const { n, basis } = this;
+    const gauges = [basis.whole, ...shiftAndWidth(basis, table)];
+    for (let m = 0; m < nShapeTerm; m++) {
+      let strength = 0;
+      for (let j = 0; j < basis.nSpline; j++) {
+        const i = j * nShapeTerm + m;
+        strength = Math.max(strength, normal[i * n + i]);
+      }
+      for (const gauge of gauges) {
+        const size = gauge.reduce((sum, g) => sum + g * g, 0);
+        for (let j = 0; j < basis.nSpline; j++) {
+          for (let i = 0; i <= j; i++) {
+            normal[(j * nShapeTerm + m) * n + i * nShapeTerm + m] += (1e3 * strength * gauge[j] * gauge[i]) / size;
+          }
+        }
+      }
+    }
+  }
+}
+
+/** ∫ β_j c₀′ dv and ∫ β_j (v c₀)′ dv for every spline: directions of a shift and of a change of width. */
+function shiftAndWidth(basis: ShapeBasis, table: ShapeTable): [Float64Array, Float64Array] {
+  const { nSpline, n, step, start } = basis;
+  const [shift, width] = [new Float64Array(nSpline), new Float64Array(nSpline)];
+  const slope = (i: number) => table.values[i * 2 * nShapeTerm + nShapeTerm];
+  for (let i = 1; i < n - 1; i++) {
+    const curvature = (slope(i + 1) - slope(i - 1)) / (2 * step);
+    const v = start + i * step;
+    for (let j = 0; j < nSpline; j++) {
+      const value = basis.values[i * 2 * nSpline + nSpline + j];
+      shift[j] += value * curvature * step;
+      width[j] += value * (v * curvature + slope(i)) * step;
+    }
+  }
+  return [shift, width];
+}
+
+/** The first term to unit integral, the others to zero integral. */
+function normalise(c: Float64Array, basis: ShapeBasis): void {
+  const integral = (m: number) => basis.whole.reduce((sum, whole, j) => sum + whole * c[j * nShapeTerm + m], 0);
+  const unit = integral(0);
+  for (let j = 0; j < basis.nSpline; j++) c[j * nShapeTerm] /= unit;
+  for (let m = 1; m < nShapeTerm; m++) {
+    const excess = integral(m);
+    for (let j = 0; j < basis.nSpline; j++) c[j * nShapeTerm + m] -= excess * c[j * nShapeTerm];
+  }
+}
+
+/** The background on every row of column x: [ny] e⁻. */
+export function backgroundColumn(background: Float64Array, x: number, lines: Lines): Float64Array {
+  const inX = polynomials(legendreArgument(x, lines.nx), nBackgroundX);
+  return Float64Array.from({ length: lines.ny }, (_, y) => {
+    const inY = polynomials(legendreArgument(y, lines.ny), nBackgroundY);
+    let sum = 0;
+    for (let i = 0; i < nBackground; i++)
+      sum += background[i] * inX[Math.floor(i / nBackgroundY)] * inY[i % nBackgroundY];
+    return sum;
+  });
+}
+
+/** P_0 … P_{n−1} at t. */
+function polynomials(t: number, n: number): Float64Array {
+  const p = new Float64Array(n).fill(1);
+  if (n > 1) p[1] = t;
+  for (let j = 2; j < n; j++) p[j] = ((2 * j - 1) * t * p[j - 1] - (j - 1) * p[j - 2]) / j;
+  return p;
+}
+
+/** Fluxes and model of a column, with the weights that follow from them: from the data's noise first, then twice from the
+ * model's. */
+export function settleColumn(
+  near: ColumnProfiles,
+  whole: ColumnProfiles,
+  data: ColumnData,
+  level: Float64Array,
+  smooth: Float64Array,
+): { flux: Float64Array; model: Float64Array } {
+  weighColumn(data, data.light);
+  let flux = columnFlux(near, level, data.inverseVariance);
+  let model = columnModel(whole, flux);
+  for (let round = 0; round < 2; round++) {
+    weighColumn(
+      data,
+      model.map((light, y) => light + smooth[y]),
+    );
+    flux = columnFlux(near, level, data.inverseVariance);
+    model = columnModel(whole, flux);
+  }
+  return { flux, model };
+}
+
+/** Pixels to which fibres' local unknowns reach. */
+export function nearReach(lines: Lines, table: ShapeTable): number {
+  return localReach * (table.referenceWidth / 1.04) * widest(lines, table);
+}
+
+/** The widest fibre's width over the reference. */
+function widest(lines: Lines, table: ShapeTable): number {
+  let most = 0;
+  for (let k = 0; k < lines.nFibre; k++) most = Math.max(most, lines.width[k * lines.nWidth]);
+  return (1.1 * most) / table.referenceWidth;
+}
