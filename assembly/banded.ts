@@ -7,13 +7,13 @@
  *     row i of a band with half-bandwidth b, each entry a v128:   M[i][i]  M[i][i−1]  …  M[i][i−b]
  *     after factorBand:                                           1/D[i]   L[i][i−1]  …  L[i][i−b]
  *
- * A pivot that is 0, or lost in the rounding of its diagonal, drops its unknown: 1/D = 0, so that the unknown
- * and its variance come out as exactly 0, and the others as if it were not there. */
+ * A pivot that is 0, or lost in the rounding of what it is the difference of, drops its unknown: 1/D = 0, so that the
+ * unknown and its variance come out as exactly 0, and the others as if it were not there. */
 import { spread } from "./lanes";
 
-/** A pivot below this share of its diagonal carries no digit. */
+/** A pivot below this share of its terms (diagonal and what is taken from it, without signs) carries no digit. */
 function smallestPivotShare<T extends number>(): f64 {
-  return sizeof<T>() == 4 ? 1e-5 : 1e-12;
+  return sizeof<T>() == 4 ? 1e-5 : 1e-8;
 }
 
 /** M = L D Lᵀ in place. `bandPtr`: n × (b+1) v128. */
@@ -32,15 +32,17 @@ export function factorBand<T extends number>(bandPtr: usize, n: i32, b: i32): vo
       }
       v128.store(here + ((<usize>j) << 4), u);
     }
-    const diagonal = v128.load(here);
-    let pivot = diagonal;
+    let pivot = v128.load(here);
+    let size = v128.abs<T>(pivot);
     for (let j = 1; j <= reach; j++) {
       const u = v128.load(here + ((<usize>j) << 4));
       const l = v128.mul<T>(u, v128.load(here - <usize>j * rowBytes));
+      const taken = v128.mul<T>(u, l);
       v128.store(here + ((<usize>j) << 4), l);
-      pivot = v128.sub<T>(pivot, v128.mul<T>(u, l));
+      pivot = v128.sub<T>(pivot, taken);
+      size = v128.add<T>(size, v128.abs<T>(taken));
     }
-    v128.store(here, inversePivot<T>(pivot, diagonal, share));
+    v128.store(here, inversePivot<T>(pivot, size, share));
   }
 }
 
@@ -86,8 +88,8 @@ export function inverseBand<T extends number>(bandPtr: usize, n: i32, b: i32, in
   }
 }
 
-function inversePivot<T extends number>(pivot: v128, diagonal: v128, share: v128): v128 {
-  const kept = v128.gt<T>(v128.abs<T>(pivot), v128.mul<T>(v128.abs<T>(diagonal), share));
+function inversePivot<T extends number>(pivot: v128, size: v128, share: v128): v128 {
+  const kept = v128.gt<T>(v128.abs<T>(pivot), v128.mul<T>(size, share));
   return v128.and(v128.div<T>(spread<T>(1), pivot), kept);
 }
 

@@ -2,6 +2,7 @@
  * system; src/reference/crosstalk.ts derives it. */
 import { factorBand, inverseBand, solveBand } from "./banded";
 import { count, pointer, Word } from "./job";
+import { leastShare } from "./joint";
 import { spread } from "./lanes";
 
 /** Fluxes, variances and covariances from Word.raw, Word.crosstalkBand and Word.rawCovariance. */
@@ -73,12 +74,13 @@ function interleave<T extends number>(job: usize): void {
 }
 
 function inverseOwnShare<T extends number>(job: usize, k: i32): v128 {
-  return v128.and(v128.div<T>(spread<T>(1), ownShare(job, k)), measured<T>(job, k));
+  const own = ownShare(job, k);
+  return v128.and(v128.div<T>(spread<T>(1), own), v128.gt<T>(own, spread<T>(0)));
 }
 
-/** Lanes in which the estimator caught any of fibre k's light. */
+/** Lanes in which the estimator caught enough of fibre k's light to tell it. */
 function measured<T extends number>(job: usize, k: i32): v128 {
-  return v128.gt<T>(ownShare(job, k), spread<T>(0));
+  return v128.ge<T>(ownShare(job, k), spread<T>(leastShare));
 }
 
 function ownShare(job: usize, k: i32): v128 {

@@ -39,9 +39,9 @@ function fibreFlags<T extends number>(job: usize, k: i32, x: i32, lane: i32): i3
   const row = <f64>windowStartOf(job, k) + <f64>laneAt<T>(pointer(job, Word.centre) + at, lane);
   const seen = pointer(job, Word.seen) + ((<usize>k) << 3);
   let flags: i32 = x + lane >= load<i32>(seen) && x + lane <= load<i32>(seen, 4) ? 0 : Flag.extrapolated;
-  if (change * change > unsettledSigma * unsettledSigma * variance) flags |= Flag.varianceUnsettled;
   if (!(row >= -0.5 && row < <f64>count(job, Word.ny) - 0.5)) flags |= Flag.outside;
   if (!(variance > 0)) flags |= Flag.weightLost;
+  else if (change * change > unsettledSigma * unsettledSigma * variance) flags |= Flag.varianceUnsettled;
   return flags;
 }
 

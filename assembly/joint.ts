@@ -4,6 +4,9 @@ import { factorBand, inverseBand, solveBand } from "./banded";
 import { count, laneRows, pointer, Word, windowRows } from "./job";
 import { spread } from "./lanes";
 
+/** Share of its light that a fibre must have on good pixels to take part; src/reference/joint.ts says why. */
+export const leastShare: f64 = 0.01;
+
 /** Fills Word.normal and Word.raw (the right-hand side) from weights, light and inverse variances. */
 export function normalEquations<T extends number>(job: usize): void {
   const nWindow = windowRows(job);
@@ -12,20 +15,32 @@ export function normalEquations<T extends number>(job: usize): void {
   const light = pointer(job, Word.light);
   const ivar = pointer(job, Word.inverseVariance);
   const weighted = pointer(job, Word.weighted);
+  const zero = spread<T>(0);
+  const rowBytes = (<usize>(bandwidth + 1)) << 4;
   let bandAt = pointer(job, Word.normal);
   let rhsAt = pointer(job, Word.raw);
   for (let k: i32 = 0; k < nFibre; k++) {
     const own = windowWeights(job, k);
     const first = windowOffset(job, k);
-    let rhs = spread<T>(0);
+    let rhs = zero;
+    let share = zero;
     for (let at: usize = 0; at < (<usize>nWindow) << 4; at += 16) {
-      const u = v128.mul<T>(v128.load(own + at), v128.load(ivar + first + at));
+      const inverse = v128.load(ivar + first + at);
+      const u = v128.mul<T>(v128.load(own + at), inverse);
       v128.store(weighted + at, u);
       rhs = v128.add<T>(rhs, v128.mul<T>(u, v128.load(light + first + at)));
+      share = v128.add<T>(share, v128.and(v128.load(own + at), v128.gt<T>(inverse, zero)));
     }
-    v128.store(rhsAt, rhs);
+    const measured = v128.ge<T>(share, spread<T>(leastShare));
+    v128.store(rhsAt, v128.and(rhs, measured));
     for (let j: i32 = 0; j <= bandwidth; j++) {
-      v128.store(bandAt, j <= k ? overlap<T>(job, k, k - j, weighted, windowWeights(job, k - j)) : spread<T>(0));
+      let sum = zero;
+      if (j <= k) sum = v128.and(overlap<T>(job, k, k - j, weighted, windowWeights(job, k - j)), measured);
+      if (j > 0 && j <= k) {
+        const diagonalBelow = v128.load(bandAt - ((<usize>j) << 4) - <usize>j * rowBytes);
+        sum = v128.and(sum, v128.gt<T>(diagonalBelow, zero)); // 0 there: not measured
+      }
+      v128.store(bandAt, sum);
       bandAt += 16;
     }
     rhsAt += 16;

@@ -4,11 +4,11 @@
  *     band[i·(b+1) + j] = M[i][i−j], j = 0 … b
  *     after factorBand:  j = 0: 1/D[i];  j > 0: L[i][i−j]
  *
- * A pivot that is 0, or below `smallestPivotShare` of its diagonal, drops its unknown: 1/D = 0, so that the
- * unknown and its variance come out as exactly 0, and the others as if it were not there. */
+ * A pivot that is 0, or below `smallestPivotShare` of what it is the difference of, drops its unknown: 1/D = 0, so
+ * that the unknown and its variance come out as exactly 0, and the others as if it were not there. */
 
-/** A pivot below this share of its diagonal carries no digit. */
-const smallestPivotShare = 1e-12;
+/** A pivot below this share of its terms (diagonal and what is taken from it, without signs) carries no digit. */
+const smallestPivotShare = 1e-8;
 
 /** M = L D Lᵀ in place. `band`: [n × (b+1)]. */
 export function factorBand(band: Float64Array, n: number, b: number): void {
@@ -21,12 +21,15 @@ export function factorBand(band: Float64Array, n: number, b: number): void {
       }
     }
     let pivot = band[i * row];
+    let size = Math.abs(pivot);
     for (let j = 1; j <= reach; j++) {
       const u = band[i * row + j];
       band[i * row + j] = u * band[(i - j) * row];
-      pivot -= u * band[i * row + j];
+      const taken = u * band[i * row + j];
+      pivot -= taken;
+      size += Math.abs(taken);
     }
-    band[i * row] = Math.abs(pivot) > smallestPivotShare * Math.abs(band[i * row]) ? 1 / pivot : 0;
+    band[i * row] = Math.abs(pivot) > smallestPivotShare * size ? 1 / pivot : 0;
   }
 }
 

@@ -8,7 +8,7 @@
  *
  * (block inversion, Golub & Van Loan, Matrix Computations, §2.1). */
 import { factorBand, inverseBand, solveBand } from "./banded.js";
-import type { Estimate } from "./joint.js";
+import { type Estimate, leastShare } from "./joint.js";
 
 /** What an estimator W makes of a column. */
 export interface RawEstimate {
@@ -50,11 +50,11 @@ export function withoutCrosstalk(estimate: RawEstimate, nFibre: number, bandwidt
   };
 }
 
-/** Rows y0 x0 y1 x1 … of the symmetric system, half-bandwidth 2·bandwidth + 1. A fibre that W does not measure is left
- * out of C, or its light, told by rounding alone, would spoil all others; what it spilled on them stays there. */
+/** Rows y0 x0 y1 x1 … of the symmetric system, half-bandwidth 2·bandwidth + 1. A fibre of which W catches next to
+ * nothing is left out of C, or its light, told by rounding alone, would spoil all others; what it spills stays there. */
 function interleave({ crosstalk, covariance }: RawEstimate, nFibre: number, bandwidth: number): Float64Array {
   const half = 2 * bandwidth + 1;
-  const measured = (k: number) => crosstalk[k * half + bandwidth] > 0;
+  const measured = (k: number) => crosstalk[k * half + bandwidth] >= leastShare;
   const band = new Float64Array(2 * nFibre * (half + 1));
   for (let k = 0; k < nFibre; k++) {
     const yRow = 2 * k * (half + 1);

@@ -19,12 +19,12 @@ export function columnFlags(
   const flags = new Int32Array(column.nFibre);
   for (let k = 0; k < column.nFibre; k++) {
     flags[k] = pixelFlags(column, k) | (seen(k) ? 0 : Flag.extrapolated);
-    if (lastChange[k] * lastChange[k] > unsettledSigma * unsettledSigma * variance[k]) {
-      flags[k] |= Flag.varianceUnsettled;
-    }
     const row = column.start[k] + column.centre[k];
     if (!(row >= -0.5 && row < column.nRow - 2 * column.margin - 0.5)) flags[k] |= Flag.outside;
     if (!(variance[k] > 0)) flags[k] |= Flag.weightLost;
+    else if (lastChange[k] * lastChange[k] > unsettledSigma * unsettledSigma * variance[k]) {
+      flags[k] |= Flag.varianceUnsettled;
+    }
   }
   return flags.map((own, k) => (saturatedBeside(column, flags, k) ? own | Flag.neighbourSaturated : own));
 }

@@ -21,13 +21,19 @@ export interface Estimate {
   covarianceBelow: Float64Array;
 }
 
-/** Normal equations of the column with its present inverse variances. */
+/** Share of its light that a fibre must have on good pixels to take part. One with less (off the frame, under a bleed)
+ * says nothing of its own flux, but left free it would take the pixels of its far wing away from its neighbours. */
+export const leastShare = 0.01;
+
+/** Normal equations of the column with its present inverse variances; row and column of a fibre without its share are 0. */
 export function normalEquations(column: Column): Normal {
   const { nFibre, bandwidth, weights } = column;
   const band = new Float64Array(nFibre * (bandwidth + 1));
   const rhs = new Float64Array(nFibre);
+  const measured = Array.from({ length: nFibre }, (_, k) => goodShare(column, k) >= leastShare);
   for (let k = 0; k < nFibre; k++) {
     for (let j = 0; j <= Math.min(k, bandwidth); j++) {
+      if (!measured[k] || !measured[k - j]) continue;
       const [from, to] = sharedRows(column, k, k - j);
       for (let row = from; row < to; row++) {
         const weighted = weightAt(column, weights, k, row) * column.inverseVariance[row];
@@ -37,6 +43,16 @@ export function normalEquations(column: Column): Normal {
     }
   }
   return { band, rhs };
+}
+
+/** Share of fibre k's light that falls on good pixels. */
+function goodShare(column: Column, k: number): number {
+  const first = column.margin + column.start[k];
+  let share = 0;
+  for (let i = 0; i < column.nWindow; i++) {
+    if (column.inverseVariance[first + i] > 0) share += column.weights[k * column.nWindow + i];
+  }
+  return share;
 }
 
 /** Fluxes alone, for the rounds in which variances and rejections settle. e⁻. */
