@@ -16,7 +16,7 @@ import { writeTramlines } from "../tramlines/file.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { demoPage } from "./demoPage.js";
 import { addCommonOptions, forceOption, methodLines } from "./frameOptions.js";
-import { type Bench, frameLines, inputOf, oneOfEach, openBench, readFrame, traceFlats } from "./frames.js";
+import { type Bench, frameLines, oneOfEach, openBench, readFrame, traceFlats } from "./frames.js";
 import { type JsonOf, jsonHelp } from "./json.js";
 import { uninterrupted } from "./output.js";
 import { type CommonOptions, type Outcome, perform } from "./perform.js";
@@ -133,14 +133,15 @@ async function extractAndScore(
 ): Promise<DemoJson["runs"][number]> {
   const { method, crosstalk } = run;
   const { raw, truth, name } = ofKind(night, "science")[run.science];
-  const frame = await readFrame(raw, "science", bench);
+  const own = { ...bench, inputs: [...bench.inputs] };
+  const frame = await readFrame(raw, "science", own);
   night.progress.stage(`extracting ${name}, ${method}`);
   const options = { method, crosstalk, precision: "f64", cosmicRays: true } as const;
   const extraction = await extractFrame(frame, tramlines, { ...options, onProgress: night.progress.share });
   const sky = bench.spectrograph?.slit?.sky;
   const history = {
     ...{ version, options: [...methodLines(options), ...benchLines], sky },
-    inputs: [await inputOf(raw), ...bench.inputs],
+    inputs: own.inputs,
   };
   await uninterrupted(() =>
     writeSpectra(spectraFile(run, night), extraction, frame, tramlines, history, { force: night.force }),

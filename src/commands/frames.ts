@@ -1,6 +1,6 @@
 /** From file names on the command line to frames and tramlines. */
 import { createHash } from "node:crypto";
-import { createReadStream, existsSync, statSync } from "node:fs";
+import { existsSync, readFileSync, statSync } from "node:fs";
 import { basename } from "node:path";
 import type { Calibrations } from "../detector/calibrations.js";
 import { correctFrame } from "../detector/correct.js";
@@ -59,20 +59,17 @@ export async function openBench(paths: string[], options: FrameOptions, progress
   }
   const { spectrograph: file, bias, dark, pixelFlat, badPixels, hdu } = options;
   const spectrograph = file === undefined ? undefined : await readSpectrograph(file);
-  const known = spectrograph?.detector.badPixels;
-  const all = badPixels === undefined && known !== undefined ? [...paths, known] : paths;
   progress.stage("reading calibration frames");
   const given = Object.entries({ bias, dark, pixelFlat, badPixels, hdu }).filter(([, value]) => value !== undefined);
   const calibrations = await loadCalibrations(Object.fromEntries(given), spectrograph);
-  const inputs = [];
-  for (const path of all.filter((one) => !isPiped(one))) inputs.push(await inputOf(path));
+  const inputs = [...fileInputs(file), ...calibrations.inputs];
   return { options, spectrograph, calibrations, inputs };
 }
 
-/** One raw frame, corrected. "-" is standard input. */
+/** One raw frame, corrected, and counted among the bench's inputs. "-" is standard input. */
 export async function readFrame(path: string, role: Role, bench: Bench): Promise<Frame> {
   const raw = await readImage(path, { hdu: bench.options.hdu });
-  if (isPiped(path)) bench.inputs.unshift({ name: raw.name, checksum: raw.checksum });
+  bench.inputs.push({ name: raw.name, checksum: raw.checksum });
   return correctFrame(raw, bench.calibrations, bench.spectrograph, { role });
 }
 
@@ -108,7 +105,8 @@ export async function tramlinesFor(
   const traced =
     file === undefined
       ? await traceFlats(flat ?? [], bench, progress)
-      : { tramlines: await readTramlines(file), assumptions: [], warnings: [] };
+      : { tramlines: await readTramlines(readOnce(file), file), assumptions: [], warnings: [] };
+  bench.inputs.push(...fileInputs(file));
   checkGeometry(frame, traced.tramlines, file === undefined ? flat?.join(", ") : file);
   requireExtractable(traced.tramlines, file ?? flat?.join(", ") ?? "");
   return traced;
@@ -167,24 +165,16 @@ function requireExtractable(tramlines: Tramlines, name: string): void {
   }
 }
 
-/** What can be read only once. */
-function isPiped(path: string): boolean {
-  const found = path === "-" ? undefined : statSync(path, { throwIfNoEntry: false });
-  return found === undefined || found.isFIFO() || found.isCharacterDevice() || found.isSocket();
+/** A path as it is; what can be read only once, as bytes: a pipe, or standard input. */
+function readOnce(path: string): string | Uint8Array {
+  if (path === "-") return readFileSync(process.stdin.fd);
+  return statSync(path).isFIFO() ? readFileSync(path) : path;
 }
 
-/** A file's name and the first 16 digits of the SHA-256 of its bytes on disk. */
-export async function inputOf(path: string): Promise<{ name: string; checksum: string }> {
-  const hash = createHash("sha256");
-  try {
-    for await (const piece of createReadStream(path)) hash.update(piece as Buffer);
-  } catch (error) {
-    const { code, message } = error as NodeJS.ErrnoException;
-    const [finding, remedy] =
-      code === "EISDIR"
-        ? ["this is a folder", "name a file in it"]
-        : [`reading failed (${code ?? message})`, "check it"];
-    throw new FitsError("unreadable", finding, remedy, { file: path });
-  }
-  return { name: basename(path), checksum: hash.digest("hex").slice(0, 16) };
+/** A file that is no image: its name and the first 16 digits of the SHA-256 of its bytes. None for a pipe. */
+function fileInputs(path: string | undefined): { name: string; checksum: string }[] {
+  if (path === undefined || path === "-" || !statSync(path).isFile()) return [];
+  return [
+    { name: basename(path), checksum: createHash("sha256").update(readFileSync(path)).digest("hex").slice(0, 16) },
+  ];
 }

@@ -249,6 +249,17 @@ describe("extract", () => {
     expect(history.join("\n")).not.toContain("/");
   });
 
+  test("takes frame or tramlines from a pipe to the same spectra", async () => {
+    const tramlines = ["--tramlines", "tramlines.fits"];
+    const byFrame = good(["extract", "-", ...tramlines, ...KNOWN, "-o", "-", "--quiet"], bytes(FRAME));
+    writeFileSync(join(cwd, "by-frame.fits"), byFrame.bytes);
+    const byLines = good(["extract", FRAME, "--tramlines", "-", ...KNOWN, "-o", "-"], bytes("tramlines.fits"));
+    writeFileSync(join(cwd, "by-lines.fits"), byLines.bytes);
+    const { flux } = await readSpectra(join(cwd, "spectra.fits"));
+    expect((await readSpectra(join(cwd, "by-frame.fits"))).flux).toEqual(flux);
+    expect((await readSpectra(join(cwd, "by-lines.fits"))).flux).toEqual(flux);
+  });
+
   test("is silent when its reader goes away", () => {
     const bin = new URL("../../bin/hatchel.js", import.meta.url).pathname;
     const command = `"${process.execPath}" "${bin}" extract ${FRAME} --tramlines tramlines.fits -o - --quiet | sh -c 'exec 0<&-; sleep 2'`;
