@@ -6,9 +6,10 @@ import { nShapeTerm, type ShapeTable } from "../../reference/shape.js";
 import { type Flat, pixelVariance } from "../flat.js";
 import type { Tramlines } from "../tramlines.js";
 import { type ShapeBasis, shapeBasis, tabulate } from "./basis.js";
+import { referToCentroid } from "./centroid.js";
 import type { ColumnData, Lines } from "./column.js";
 import { applyGeometry, measureColumn } from "./geometry.js";
-import { nBackground, ShapeNormal, type ShapeState } from "./step.js";
+import { type KnownShape, nBackground, ShapeNormal, type ShapeState } from "./step.js";
 
 const rounds = 4;
 const shapeColumns = 40;
@@ -21,6 +22,8 @@ export interface MeasuredShape {
   lines: Lines;
   basis: ShapeBasis;
   state: ShapeState;
+  /** The flat's own word on the shape, for frames that refine it. */
+  known: KnownShape;
   /** χ² per degree of freedom before each step. */
   history: number[];
 }
@@ -36,6 +39,7 @@ export function measureShape(kernels: Kernels, flat: Flat, tramlines: Tramlines)
   };
   let table = tabulate(basis, state.coefficients);
   const history: number[] = [];
+  let information: Float64Array = new Float64Array(0);
   for (let round = 0; round < rounds; round++) {
     const normal = new ShapeNormal(kernels, basis, flat.ny, lines.nFibre);
     for (const x of spreadColumns(flat.nx, shapeColumns, round)) {
@@ -43,6 +47,7 @@ export function measureShape(kernels: Kernels, flat: Flat, tramlines: Tramlines)
     }
     const step = normal.solve(state, table);
     history.push(step.chi2 / step.freedom);
+    information = normal.shapeInformation();
     state = step;
     table = tabulate(basis, state.coefficients);
     const columns = spreadColumns(flat.nx, geometryColumns, round).map((x) =>
@@ -50,7 +55,8 @@ export function measureShape(kernels: Kernels, flat: Flat, tramlines: Tramlines)
     );
     applyGeometry(kernels, lines, columns);
   }
-  return { table, lines, basis, state, history };
+  const known = { best: state.coefficients, information };
+  return { ...referToCentroid(kernels, lines, table), basis, state, known, history };
 }
 
 /** `n` columns spread evenly, another set each round, none at the very ends. */

@@ -21,8 +21,8 @@ import {
 } from "./column.js";
 
 /** Orders of the background in x and y. */
-const nBackgroundX = 3;
-const nBackgroundY = 5;
+export const nBackgroundX = 3;
+export const nBackgroundY = 5;
 export const nBackground = nBackgroundX * nBackgroundY;
 /** Pixels, at the basis's width, to which fibres' local unknowns reach. */
 const localReach = 14;
@@ -35,6 +35,13 @@ const wingBegins = 4.2;
 export interface ShapeState {
   coefficients: Float64Array;
   background: Float64Array;
+}
+
+/** What earlier frames said of a shape: the best coefficients and how firmly they stand. */
+export interface KnownShape {
+  best: Float64Array;
+  /** nShape × nShape, lower triangle. */
+  information: Float64Array;
 }
 
 export interface StepResult extends ShapeState {
@@ -94,14 +101,54 @@ export class ShapeNormal {
     this.eliminate(local, cross);
   }
 
+  /** What these columns alone say of the shape, at the state that they were added at: second derivatives of χ²/2 in the
+   * shape's unknowns, the background eliminated. [nShape × nShape], lower triangle. */
+  shapeInformation(): Float64Array {
+    const { n, nUnknown } = this;
+    const nShape = nUnknown - nBackground;
+    const full = this.matrix.normal;
+    const band = new Float64Array(nBackground * nBackground);
+    for (let i = 0; i < nBackground; i++) {
+      for (let j = 0; j <= i; j++) band[i * nBackground + i - j] = full[(nShape + i) * n + nShape + j];
+    }
+    factorBand(band, nBackground, nBackground - 1);
+    const information = new Float64Array(nShape * nShape);
+    const solved = new Float64Array(nBackground);
+    for (let i = 0; i < nShape; i++) {
+      for (let b = 0; b < nBackground; b++) solved[b] = full[(nShape + b) * n + i];
+      solveBand(band, nBackground, nBackground - 1, solved);
+      for (let j = 0; j <= i; j++) {
+        let sum = full[i * n + j];
+        for (let b = 0; b < nBackground; b++) sum -= solved[b] * full[(nShape + b) * n + j];
+        information[i * nShape + j] = sum;
+      }
+    }
+    return information;
+  }
+
+  /** Adds what other frames said: `information` about the shape around the coefficients `best`, both as they left them. */
+  private addInformation(normal: Float64Array, rhs: Float64Array, state: ShapeState, known: KnownShape): void {
+    const { n } = this;
+    const nShape = this.nUnknown - nBackground;
+    for (let i = 0; i < nShape; i++) {
+      for (let j = 0; j <= i; j++) {
+        const value = known.information[i * nShape + j];
+        normal[i * n + j] += value;
+        rhs[i] += value * (known.best[j] - state.coefficients[j]);
+        if (j < i) rhs[j] += value * (known.best[i] - state.coefficients[i]);
+      }
+    }
+  }
+
   /** Steps of all unknowns from `state`, priors and gauges applied.
    * The gauges keep a step from changing the norm, from shifting the shape and from widening it: those belong to flux,
    * centre and width of the fibres. */
-  solve(state: ShapeState, table: ShapeTable): StepResult {
+  solve(state: ShapeState, table: ShapeTable, known?: KnownShape): StepResult {
     const { nUnknown, n } = this;
     const normal = this.matrix.normal.slice();
     const rhs = normal.slice(nUnknown * n, nUnknown * n + nUnknown);
     this.addPriors(normal, rhs, state);
+    if (known !== undefined) this.addInformation(normal, rhs, state, known);
     this.addGauges(normal, table);
     const band = new Float64Array(nUnknown * nUnknown);
     for (let i = 0; i < nUnknown; i++) {

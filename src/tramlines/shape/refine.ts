@@ -1,0 +1,68 @@
+/** The shape refined on the science frame itself: focus and scattering are never quite what they were in the flat. The frame's
+ * own columns are added to what the flat said, centres held, cosmic rays left out. */
+import type { Frame } from "../../detector/frame.js";
+import type { Kernels } from "../../kernels/module.js";
+import { MaskBit } from "../../reference/bits.js";
+import type { SmoothBackground } from "../../reference/extract.js";
+import type { ShapeTable } from "../../reference/shape.js";
+import { type ShapeBasis, tabulate } from "./basis.js";
+import type { ColumnData, Lines } from "./column.js";
+import { type KnownShape, nBackground, nBackgroundY, ShapeNormal, type ShapeState } from "./step.js";
+
+const steps = 2;
+const columns = 48;
+const clip = 6;
+
+/** Refines `table` on `frame`. `rejected`: ny × nx bits of MaskBit; `lines`: moved to where the frame's light sits. */
+export function refineShape(
+  kernels: Kernels,
+  basis: ShapeBasis,
+  known: KnownShape,
+  table: ShapeTable,
+  lines: Lines,
+  frame: Frame,
+  background: SmoothBackground,
+  rejected: Uint8Array,
+): ShapeTable {
+  let state: ShapeState = { coefficients: known.best, background: widenBackground(background) };
+  let refined = table;
+  for (let round = 0; round < steps; round++) {
+    const normal = new ShapeNormal(kernels, basis, frame.ny, lines.nFibre);
+    for (let i = 0; i < columns; i++) {
+      const x = Math.floor(((i + 0.3 + 0.4 * round) * frame.nx) / columns);
+      normal.add(lines, refined, state.background, frameColumn(frame, rejected, x), true, clip);
+    }
+    state = normal.solve(state, refined, known);
+    refined = { ...tabulate(basis, state.coefficients), centroid: table.centroid };
+  }
+  return refined;
+}
+
+/** One column of a frame, with what makes its variances. */
+export function frameColumn(frame: Frame, rejected: Uint8Array | null, x: number): ColumnData {
+  const { nx, ny, noise } = frame;
+  const data: ColumnData = {
+    x,
+    light: new Float64Array(ny),
+    good: new Uint8Array(ny),
+    fixedVariance: new Float64Array(ny),
+    variancePerElectron: new Float64Array(ny),
+    inverseVariance: new Float64Array(ny),
+  };
+  for (let y = 0; y < ny; y++) {
+    const at = y * nx + x;
+    const hit = rejected !== null && (rejected[at] & (MaskBit.cosmic | MaskBit.grown)) !== 0;
+    data.good[y] = frame.mask[at] === 0 && !hit ? 1 : 0;
+    data.light[y] = data.good[y] ? frame.electrons[at] : 0;
+    data.fixedVariance[y] = noise.fixedVarianceImage?.[at] ?? noise.fixedVariance[noise.bandOfRow[y] * nx + x];
+    data.variancePerElectron[y] = noise.inverseResponse?.[at] ?? 1;
+  }
+  return data;
+}
+
+/** The same surface in the orders of the shape's background. */
+function widenBackground({ nX, nY, coefficients }: SmoothBackground): Float64Array {
+  const wide = new Float64Array(nBackground);
+  for (let i = 0; i < nX; i++) for (let j = 0; j < nY; j++) wide[i * nBackgroundY + j] = coefficients[i * nY + j];
+  return wide;
+}
