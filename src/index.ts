@@ -16,6 +16,18 @@ export { type LookOptions, type LookReport, lookAt } from "./detector/look.js";
 export { type AmplifierNoise, measureNoise, type NoiseFrames, type NoiseMeasurement } from "./detector/noise.js";
 export type { RawImage } from "./detector/raw.js";
 export type { Role } from "./detector/roles.js";
+export { type Comparison, compareMethods, type MethodComparison } from "./extraction/compare.js";
+export { type Extraction, type ExtractionOptions, extractFrame } from "./extraction/extract.js";
+export {
+  readPositions,
+  readSpectra,
+  type SpectraFileOptions,
+  spectraHdus,
+  writeSpectra,
+} from "./extraction/file.js";
+export { medianSignalToNoise } from "./extraction/snr.js";
+export { Flag, type Method, type Spectra, UNUSABLE } from "./extraction/spectra.js";
+export { type MethodCheck, type Verification, verifyExtraction } from "./extraction/verify.js";
 export { historyCards, inputCards } from "./fits/carry.js";
 export { encodeFits, type OutputColumn, type OutputHdu, type OutputImage, type PixelArray } from "./fits/encode.js";
 export { FitsError, type FitsErrorCode } from "./fits/errors.js";
@@ -26,6 +38,27 @@ export { formatSection, parseSection, type Section, sectionSize } from "./fits/s
 export { type FitsColumn, type FitsTable, readTable, type TableOptions } from "./fits/table.js";
 export { type WriteOptions, writeFits } from "./fits/write.js";
 export { loadKernels } from "./kernels/module.js";
+export {
+  countFibres,
+  type FibreCounts,
+  type FlagCounts,
+  medianFwhm,
+  type SpectraSummary,
+  summariseSpectra,
+  tramlineHeights,
+} from "./report/summary.js";
+export {
+  type CosmicScore,
+  type CosmicTruth,
+  type DecadeScore,
+  type LeakScore,
+  scoreByDecade,
+  scoreCosmicRays,
+  scoreLeak,
+  scoreTrace,
+  type TraceScore,
+  type TrueFlux,
+} from "./report/truth.js";
 export { type SimulatedExposure, simulateExposure, type Truth } from "./simulate/exposure.js";
 export {
   type SimulationFiles,

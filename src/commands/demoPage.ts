@@ -21,7 +21,7 @@ export function demoPage(json: DemoJson, tracing: [string, string][]): string {
     `Light of neighbours over ${still[0].leak.contrast} times brighter that ends up in a fibre; cosmic rays`,
     outcomeTable(json.runs),
     "",
-    closingWords(still, moved),
+    closingWords(still, moved, json.tracing.profile.kind),
   ].join("\n");
 }
 
@@ -65,7 +65,7 @@ const TRUE_PULL = 1.25;
 const TRUE_BIAS = 0.02;
 
 /** What someone should take home, from the numbers alone: nothing is said that they do not bear out. */
-function closingWords(still: Run[], moved: Run[]): string {
+function closingWords(still: Run[], moved: Run[], profile: string): string {
   const [joint, sum] = [still[0], still[still.length - 1]];
   const faint = decadesOf(joint)[0];
   const faintSum = decadesOf(sum).find(({ from }) => from === faint.from);
@@ -80,8 +80,9 @@ function closingWords(still: Run[], moved: Run[]): string {
     ({ pull, bias }) => number(pull) < TRUE_PULL && Math.abs(number(bias)) < TRUE_BIAS,
   );
   if (!isTrue) {
+    const name = profile === "gaussian" ? "fitted Gaussian" : "measured profile";
     words.push(
-      "The fitted Gaussian is not quite the light's own profile: check faint fibres beside bright ones before you trust them.",
+      `The ${name} is not quite the light's own profile: check faint fibres beside bright ones before you trust them.`,
     );
   }
   return words.join("\n");

@@ -34,7 +34,7 @@ export function countFibres({ nFibre, state, block, fibre }: Tramlines): FibreCo
 /** FWHM of a Gaussian: 2√(2 ln 2) σ. */
 const FWHM_PER_SIGMA = 2.3548200450309493;
 
-/** Median over lit fibres of the profile's full width at half maximum in the middle column, pixels. */
+/** Full width at half maximum of a Gaussian as wide as the profile, pixels: median over lit fibres in the middle column. */
 export function medianFwhm({ profile, state }: Tramlines): number {
   const nCoef = profile.widthDegree + 1;
   const widths = state.flatMap((one, k) => (one === "dead" ? [] : [legendreValue(profile.sigma, 0, k * nCoef, nCoef)]));

@@ -1,0 +1,54 @@
+/** The public surface, name by name: whoever changes it changes this list too, knowingly. */
+import { readFileSync } from "node:fs";
+import ts from "typescript";
+import { describe, expect, test } from "vitest";
+import * as library from "../src/index.js";
+
+const VALUES = `
+  DetectorError FitsError Flag Header MaskBit NamingError SCENES SceneError SpectrographError
+  TraceError UNUSABLE checkGeometry compareMethods correctFrame countFibres encodeFits extractFrame
+  formatSection historyCards inputCards listHdus loadCalibrations loadKernels lookAt
+  makeCalibrations measureNoise medianFwhm medianSignalToNoise noCalibrations parseScene
+  parseSection parseSpectrograph readImage readPositions readScene readSpectra readSpectrograph
+  readTable readTramlines requireSameGeometry scoreByDecade scoreCosmicRays scoreLeak scoreTrace
+  sectionSize simulateExposure simulationFiles spectraHdus spectrographToml summariseSpectra
+  traceFlat tramlineHeights tramlinesHdus verifyExtraction writeExposure writeFits
+  writeObserverFiles writeSimulation writeSpectra writeTramlines
+`;
+
+const TYPES = `
+  AmplifierNoise CalibrationFrames CalibrationInput CalibrationPaths Calibrations Card CardValue
+  ChecksumState Comparison CorrectOptions CosmicScore CosmicTruth DecadeScore DetectorGeometry
+  Extraction ExtractionOptions FibreCounts FibreState FitsColumn FitsErrorCode FitsImage FitsTable
+  FlagCounts Frame GaussianProfile HduSummary LeakScore LookOptions LookReport Method MethodCheck
+  MethodComparison NoiseFrames NoiseIngredients NoiseMeasurement OutputColumn OutputHdu OutputImage
+  PixelArray Profile RawImage ReadOptions Role Scene SceneExposure Section SimulatedExposure
+  SimulationFiles SimulationOptions SlitLayout Spectra SpectraFileOptions SpectraSummary
+  Spectrograph TableOptions TraceOptions TraceScore Tracing Tramlines TramlinesFileOptions TrueFlux
+  TrueLine Truth Verification WriteOptions
+`;
+
+const words = (text: string) => text.trim().split(/\s+/);
+
+/** Types leave no trace when the program runs, so they are read from the text. */
+function exportedTypes(): string[] {
+  const text = readFileSync(new URL("../src/index.ts", import.meta.url), "utf8");
+  const file = ts.createSourceFile("index.ts", text, ts.ScriptTarget.Latest);
+  return file.statements.flatMap((statement) => {
+    if (!ts.isExportDeclaration(statement) || !statement.exportClause || !ts.isNamedExports(statement.exportClause)) {
+      throw new Error("src/index.ts holds something else than named exports.");
+    }
+    const whole = statement.isTypeOnly;
+    return statement.exportClause.elements.flatMap((one) => (whole || one.isTypeOnly ? [one.name.text] : []));
+  });
+}
+
+describe("the public library", () => {
+  test("exports these values", () => {
+    expect(Object.keys(library).sort()).toEqual(words(VALUES));
+  });
+
+  test("exports these types", () => {
+    expect(exportedTypes().sort()).toEqual(words(TYPES));
+  });
+});
