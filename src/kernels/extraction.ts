@@ -75,6 +75,9 @@ export class ExtractionBench {
     if (x0 % this.input.blockColumns !== 0) {
       throw new RangeError(`Column ${x0} begins no block of ${this.input.blockColumns} columns.`);
     }
+    if (!(x0 >= 0 && x1 <= this.input.nx)) {
+      throw new RangeError(`Columns ${x0} … ${x1 - 1} asked for, but the frame has 0 … ${this.input.nx - 1}.`);
+    }
     const extract = this.precision === "f32" ? this.bench.call.extractColumns32 : this.bench.call.extractColumns64;
     extract(this.job.byteOffset, x0, x1);
   }
