@@ -168,4 +168,18 @@ describe("joint extraction", () => {
       }
     });
   });
+
+  it("does not let a fibre beyond the frame's edge, of which next to nothing is seen, cost its neighbour anything", () => {
+    const edge = { ...crowded, ny: 45, centres: [9.3, 20.4, 40.6], sigmas: [1, 1, 1], slope: 0 };
+    const alone = runBoth(columnsInput(edge));
+    // At 48.2 px, 1.1e-4 of the fibre's light falls on the frame, under the wing of the fibre at 40.6 px.
+    const beside = runBoth(columnsInput({ ...edge, centres: [...edge.centres, 48.2], sigmas: [1, 1, 1, 1] }));
+    beside.forEach(([name, { flux, variance }], i) => {
+      for (let x = 0; x < 6; x++) {
+        const at = 2 * 6 + x;
+        expect(Math.abs(variance[at] / alone[i][1].variance[at] - 1), name).toBeLessThan(1e-9);
+        expect(flux[3 * 6 + x], name).toBeNaN();
+      }
+    });
+  });
 });
