@@ -4,6 +4,7 @@ import { factorBand, solveBand } from "../../reference/banded.js";
 import { median } from "../../reference/median.js";
 import { nShapeTerm, type ShapeTable } from "../../reference/shape.js";
 import { type Flat, pixelVariance } from "../flat.js";
+import { activeFibres, linesOf } from "../profileTable.js";
 import type { Tramlines } from "../tramlines.js";
 import { type ShapeBasis, shapeBasis, tabulate } from "./basis.js";
 import { referToCentroid } from "./centroid.js";
@@ -14,6 +15,7 @@ import { type KnownShape, nBackground, ShapeNormal, type ShapeState } from "./st
 const rounds = 4;
 const shapeColumns = 40;
 const geometryColumns = 64;
+const leastWidthTerms = 4;
 /** Share of the light with which the wings begin, before anything is measured. */
 const startWing = 0.02;
 
@@ -29,9 +31,9 @@ export interface MeasuredShape {
 }
 
 export function measureShape(kernels: Kernels, flat: Flat, tramlines: Tramlines): MeasuredShape {
-  const active = tramlines.state.flatMap((state, k) => (state === "dead" ? [] : [k]));
-  const lines = linesOf(tramlines, active);
-  const referenceWidth = median(active.map((_, k) => lines.width[k * lines.nWidth]));
+  const lines = widthRoom(linesOf(tramlines, activeFibres(tramlines)), leastWidthTerms);
+  const middleWidths = Array.from({ length: lines.nFibre }, (_, k) => lines.width[k * lines.nWidth]);
+  const referenceWidth = median(middleWidths);
   const basis = shapeBasis(referenceWidth);
   let state: ShapeState = {
     coefficients: startCoefficients(kernels, basis),
@@ -88,24 +90,14 @@ export function flatColumn(flat: Flat, x: number): ColumnData {
   return data;
 }
 
-function linesOf(tramlines: Tramlines, active: number[]): Lines {
-  const nTrace = tramlines.degree + 1;
-  const nOld = tramlines.profile.widthDegree + 1;
-  const nWidth = Math.max(nOld, 4);
-  const lines: Lines = {
-    nx: tramlines.nx,
-    ny: tramlines.ny,
-    nFibre: active.length,
-    trace: new Float64Array(active.length * nTrace),
-    nTrace,
-    width: new Float64Array(active.length * nWidth),
-    nWidth,
-  };
-  active.forEach((k, i) => {
-    lines.trace.set(tramlines.legendre.subarray(k * nTrace, (k + 1) * nTrace), i * nTrace);
-    lines.width.set(tramlines.profile.sigma.subarray(k * nOld, (k + 1) * nOld), i * nWidth);
-  });
-  return lines;
+/** Series of the active fibres, their widths with room for `nWidth` terms at least. */
+function widthRoom(lines: Lines, nWidth: number): Lines {
+  if (lines.nWidth >= nWidth) return lines;
+  const width = new Float64Array(lines.nFibre * nWidth);
+  for (let k = 0; k < lines.nFibre; k++) {
+    width.set(lines.width.subarray(k * lines.nWidth, (k + 1) * lines.nWidth), k * nWidth);
+  }
+  return { ...lines, width, nWidth };
 }
 
 /** A Gaussian with a little wing, as far as splines can follow: least squares on the cumulative profile. */

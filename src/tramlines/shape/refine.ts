@@ -61,7 +61,7 @@ export function frameColumn(frame: Frame, rejected: Uint8Array | null, x: number
 }
 
 /** The same surface in the orders of the shape's background. */
-function widenBackground({ nX, nY, coefficients }: SmoothBackground): Float64Array {
+export function widenBackground({ nX, nY, coefficients }: SmoothBackground): Float64Array {
   const wide = new Float64Array(nBackground);
   for (let i = 0; i < nX; i++) for (let j = 0; j < nY; j++) wide[i * nBackgroundY + j] = coefficients[i * nY + j];
   return wide;
