@@ -1,7 +1,7 @@
 /** Cosmic rays: straight tracks of charge through the detector, laid down in steps finer than a pixel. */
-import { poisson } from "./poisson.js";
+import { poisson } from "../random/poisson.js";
+import { openStream, type Stream } from "../random/streams.js";
 import type { Scene, SceneExposure } from "./scene.js";
-import { openStream, type Stream } from "./streams.js";
 
 const STEP_PIXELS = 0.1;
 

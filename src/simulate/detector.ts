@@ -1,10 +1,10 @@
 /** The detector: response, bad columns, bias levels and the readout into ADU.
  *
  *     ADU = (electrons + read noise) / gain + bias(row) + pattern(column), rounded, clipped at saturation */
-import { poisson } from "./poisson.js";
+import { poisson } from "../random/poisson.js";
+import { openStream } from "../random/streams.js";
 import { type AmplifierLayout, layOutReadout, type ReadoutLayout } from "./readoutLayout.js";
 import type { Scene, SceneExposure } from "./scene.js";
-import { openStream } from "./streams.js";
 
 /** A bad column keeps this share of its light and adds this many electrons. */
 const BAD_COLUMN_RESPONSE = 0.3;

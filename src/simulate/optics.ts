@@ -1,9 +1,10 @@
 /** Where the light of each fibre falls: tramlines, widths, wavelengths. All exact Legendre series in the column, so that
  * the truth can be handed on as coefficients. */
+
+import { openStream } from "../random/streams.js";
 import { buildProfileTable, type ProfileTable } from "./profile.js";
 import type { Scene, SceneExposure } from "./scene.js";
 import { series, seriesOnColumns } from "./series.js";
-import { openStream } from "./streams.js";
 
 export const TRACE_TERMS = 5;
 export const SIGMA_TERMS = 3;

@@ -1,10 +1,11 @@
 /** The light that each fibre brings to each column, electrons, before it is spread over pixels. */
+
+import { openStream } from "../random/streams.js";
 import { normalCumulative } from "./gaussian.js";
 import { LAMP_LINES, NIGHT_SKY_LINES } from "./lines.js";
 import { columnOf, type Optics } from "./optics.js";
 import type { Scene, SceneExposure } from "./scene.js";
 import { columnArgument } from "./series.js";
-import { openStream } from "./streams.js";
 
 export interface TrueLine {
   /** From 0. */

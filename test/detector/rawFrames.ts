@@ -3,7 +3,7 @@ import type { Amplifier } from "../../src/detector/amplifiers.js";
 import type { RawImage } from "../../src/detector/raw.js";
 import { type CardValue, Header } from "../../src/fits/header.js";
 import { parseSection } from "../../src/fits/sections.js";
-import { openStream } from "../../src/simulate/streams.js";
+import { openStream } from "../../src/random/streams.js";
 
 /** Uniform numbers in [0, 1), good enough that differences of neighbouring pixels show no trace of their making. */
 export function seeded(seed: number): () => number {

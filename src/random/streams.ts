@@ -1,6 +1,6 @@
 /** Streams of random numbers, one for each ingredient of a frame.
  *
- * A stream is named by words and numbers (`["sci_01", "cosmic rays"]`); the same scene seed and the same name give the
+ * A stream is named by words and numbers (`["sci_01", "cosmic rays"]`); the same seed and the same name give the
  * same numbers, whatever other streams were used: leaving out the cosmic rays does not move the read noise. The name is
  * hashed with FNV-1a (Fowler, Noll & Vo; offset and prime of IETF draft-eastlake-fnv) and finished with the mixer of
  * SplitMix32-like generators; the generator is pure-rand's xoroshiro128+. */

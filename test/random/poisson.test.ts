@@ -1,6 +1,6 @@
 import { describe, expect, test } from "vitest";
-import { logFactorial, poisson } from "../../src/simulate/poisson.js";
-import { openStream } from "../../src/simulate/streams.js";
+import { logFactorial, poisson } from "../../src/random/poisson.js";
+import { openStream } from "../../src/random/streams.js";
 import { judgeMissing, python } from "../judges.js";
 
 const N = 200_000;

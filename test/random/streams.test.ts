@@ -1,5 +1,5 @@
 import { describe, expect, test } from "vitest";
-import { openStream } from "../../src/simulate/streams.js";
+import { openStream } from "../../src/random/streams.js";
 
 const N = 200_000;
 
