@@ -7,7 +7,7 @@ import { legendreArgument, legendreValue } from "../reference/legendre.js";
 import { median } from "../reference/median.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 
-/** A fibre's light at this distance, in σ, is below 1e-5 of it on a pixel. */
+/** A pixel at this distance, in σ, holds 4e-5 to 7e-5 of a fibre's light: wider would leave no gap between most blocks. */
 const gapSigma = 4.3;
 /** Columns that one median is taken over. */
 export const cellColumns = 16;
@@ -42,7 +42,7 @@ export function noBackground(): SmoothBackground {
  * `light`: [ny × nx] e⁻, the frame without its fibres' light as far as that is known; NaN where not to be used. */
 export function fitBackground(frame: Frame, tramlines: Tramlines, light = frame.electrons): BackgroundFit {
   const cells = gapCells(frame, tramlines, light);
-  const nY = Math.min(largestY, countStripes(cells, frame.ny));
+  const nY = supportedOrders(cells, frame.ny);
   const nX = Math.min(largestX, 1 + Math.floor(frame.nx / (4 * cellColumns)));
   if (nY < 1 || cells.length < 4 * nX * nY) {
     const warning = `${frame.name}: no gap between fibres is wide enough to see scattered light in, so none is taken off; faint fibres may hold some.`;
@@ -97,9 +97,13 @@ function medianVariance(frame: Frame, x: number, y: number, n: number): number {
   return ((Math.PI / 2) * fixed) / n;
 }
 
-/** Stripes of the slit, one fortieth of the frame each, in which there are cells. */
-function countStripes(cells: Cell[], ny: number): number {
-  return new Set(cells.map((cell) => Math.floor((40 * cell.y) / ny))).size;
+/** How many terms in y the cells support: the most for which every one of as many equal zones of the frame holds cells.
+ * With fewer, as when only the slit's ends are seen, a surface would swing where the fibres are. */
+function supportedOrders(cells: Cell[], ny: number): number {
+  for (let n = largestY; n > 0; n--) {
+    if (new Set(cells.map((cell) => Math.floor((n * cell.y) / ny))).size === n) return n;
+  }
+  return 0;
 }
 
 function fitSurface(cells: Cell[], nX: number, nY: number, frame: Frame): BackgroundFit {
