@@ -7,6 +7,7 @@ import { MaskBit } from "../reference/bits.js";
 import { type ExtractionInput, type ExtractionOutput, extractColumns, type Method } from "../reference/extract.js";
 import { legendreArgument, legendreValue } from "../reference/legendre.js";
 import { gaussianWeights } from "../reference/profile.js";
+import { checkGeometry } from "../tramlines/file.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { type ExtractionOptions, extractionInput } from "./extract.js";
 import { type ColumnRunner, runPasses } from "./passes.js";
@@ -44,6 +45,9 @@ export interface Verification {
 /** f64: what rounding leaves of sums over a window, with room for the frame's worst conditioning. */
 const relativeBound64 = 1e-10;
 const weightBound = 1e-14;
+/** Relative, on variances: they bring the matrix's rounding alone. */
+const varianceBound64 = 1e-9;
+const varianceBound32 = 1e-3;
 const unitRoundoff32 = 2 ** -24;
 
 /** Runs every method through kernel and reference, first pass, growth and second pass included.
@@ -53,6 +57,7 @@ export async function verifyExtraction(
   tramlines: Tramlines,
   options: ExtractionOptions = {},
 ): Promise<Verification> {
+  checkGeometry(frame, tramlines);
   const kernels = await loadKernels();
   const plan = planExtraction(tramlines);
   const cases: [Method, boolean][] = [
@@ -126,9 +131,20 @@ function compareRuns(kernels: Kernels, input: ExtractionInput, expected: Run, pr
     if (found.flags[i] !== expected.output.flags[i]) check.flagsDiffer++;
     comparePoint(check, found, expected.output, i, errorBound(input, expected.output, i, precision));
   }
-  check.passed =
-    precision === "f64" ? check.worstOverBound <= 1 && check.rejectedDiffer === 0 : check.worstOverBound <= 1;
+  check.passed = hasPassed(check, expected);
   return check;
+}
+
+/** f64 must agree in every flag and rejection. f32 may fall to the other side of a threshold now and then, but in no more
+ * than one in a hundred rejections: columns that differ are not compared, and must stay rare. */
+function hasPassed(check: MethodCheck, expected: Run): boolean {
+  const fluxesAgree = check.nPoint > 0 && check.worstOverBound <= 1;
+  if (check.precision === "f64") {
+    const alike = check.rejectedDiffer === 0 && check.flagsDiffer === 0;
+    return fluxesAgree && alike && check.worstVariance <= varianceBound64;
+  }
+  const nRejected = expected.rejected.reduce((n, bits) => n + (isRejected(bits) ? 1 : 0), 0);
+  return fluxesAgree && check.rejectedDiffer <= 2 + nRejected / 100 && check.worstVariance <= varianceBound32;
 }
 
 function openBench(kernels: Kernels, input: ExtractionInput, precision: "f32" | "f64"): ExtractionBench {
