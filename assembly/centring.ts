@@ -13,7 +13,7 @@
 import { factorBand, inverseBand, solveBand } from "./banded";
 import { erf } from "./erf";
 
-const sqrtHalf: f64 = 0.7071067811865476;
+const sqrtHalf: f64 = Math.SQRT1_2;
 const inverseSqrtTwoPi: f64 = 0.3989422804014327;
 
 /** Rows that a window of ± reach can touch. */
