@@ -1,7 +1,10 @@
 /** The methods side by side on one frame, without truth: what weighting gains, and what a plain sum leaks. */
 import type { Frame } from "../detector/frame.js";
+import { loadKernels } from "../kernels/module.js";
 import { median } from "../reference/median.js";
+import { checkGeometry } from "../tramlines/file.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
+import { adaptTramlines } from "./adapt.js";
 import { type ExtractionOptions, extractFrame } from "./extract.js";
 import { type Method, type Spectra, UNUSABLE } from "./spectra.js";
 
@@ -51,14 +54,24 @@ export async function compareMethods(
     ["boxcar", true],
     ["boxcar", false],
   ];
+  checkGeometry(frame, tramlines);
+  // What the methods share is done once: the time of each is its own.
+  const adapted = adaptTramlines(await loadKernels(), frame, tramlines, options);
   const runs: { spectra: Spectra; seconds: number }[] = [];
   let warnings: string[] = [];
   for (const [i, [method, crosstalk]] of cases.entries()) {
     const onProgress = (share: number) => options.onProgress?.((i + share) / cases.length);
     const begin = performance.now();
-    const extraction = await extractFrame(frame, tramlines, { ...options, method, crosstalk, onProgress });
+    const extraction = await extractFrame(frame, adapted.tramlines, {
+      ...options,
+      method,
+      crosstalk,
+      onProgress,
+      shift: false,
+      refine: false,
+    });
     runs.push({ spectra: extraction.spectra, seconds: (performance.now() - begin) / 1000 });
-    warnings = extraction.warnings;
+    warnings = [...adapted.warnings, ...extraction.warnings];
   }
   const [joint, boxcar] = [runs[0].spectra, runs[3].spectra];
   const good = goodEverywhere(runs.map((run) => run.spectra));

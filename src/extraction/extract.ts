@@ -2,16 +2,17 @@
  * pass over the columns that it touched. */
 import type { Frame } from "../detector/frame.js";
 import type { Precision } from "../kernels/banded.js";
-import { ExtractionBench } from "../kernels/extraction.js";
 import { loadKernels } from "../kernels/module.js";
 import { Flag, MaskBit } from "../reference/bits.js";
 import type { ExtractionInput, ExtractionOutput, Method } from "../reference/extract.js";
 import { checkGeometry } from "../tramlines/file.js";
+import type { Shift } from "../tramlines/shift.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
+import { adaptTramlines } from "./adapt.js";
 import { type BackgroundFit, fitBackground, noBackground } from "./background.js";
 import { runPasses } from "./passes.js";
-import { type ExtractionPlan, planExtraction } from "./plan.js";
-import { settleFrame } from "./settle.js";
+import type { ExtractionPlan } from "./plan.js";
+import { openFrame } from "./settle.js";
 import type { Spectra } from "./spectra.js";
 
 export interface ExtractionOptions {
@@ -31,12 +32,20 @@ export interface ExtractionOptions {
   halfAperture?: number;
   /** Take off a smooth background seen between the fibres. Default true. */
   background?: boolean;
+  /** Measure where the frame's light sits against the tramlines, and extract it there. Default true. */
+  shift?: boolean;
+  /** Refine a measured profile on the frame itself. Default true. */
+  refine?: boolean;
   /** Called with the share of columns done, 0 to 1. */
   onProgress?: (share: number) => void;
 }
 
 export interface Extraction {
   spectra: Spectra;
+  /** Where the frame's light sat against the tramlines; null when not measured. */
+  shift: Shift | null;
+  /** Whether the profile was refined on this frame. */
+  refined: boolean;
   plan: ExtractionPlan;
   background: BackgroundFit | null;
   /** ny × nx, bits of MaskBit: cosmic, grown (and suspect, which were kept). */
@@ -56,27 +65,21 @@ export async function extractFrame(
 ): Promise<Extraction> {
   checkGeometry(frame, tramlines);
   const kernels = await loadKernels();
-  const plan = planExtraction(tramlines);
-  const input = extractionInput(frame, tramlines, plan, options);
-  const bench = new ExtractionBench(
-    kernels,
-    input,
-    Int32Array.from(plan.active),
-    tramlines.nFibre,
-    options.precision ?? "f64",
-  );
-  const { background, profileError } = settleFrame(bench, input, frame, tramlines, options);
+  const adapted = adaptTramlines(kernels, frame, tramlines, options);
+  const { bench, input, plan, background, profileError } = openFrame(kernels, frame, adapted.tramlines, options);
   runPasses(bench, input, options.onProgress);
   const spectra = finishSpectra(bench.output, tramlines, input);
   const nRejected = bench.rejected.reduce((n, bits) => n + (bits & (MaskBit.cosmic | MaskBit.grown) ? 1 : 0), 0);
   return {
     spectra,
+    shift: adapted.shift,
+    refined: adapted.refined,
     plan,
     background,
     rejected: bench.rejected,
     nRejected,
     profileError,
-    warnings: background?.warnings ?? [],
+    warnings: [...adapted.warnings, ...(background?.warnings ?? [])],
   };
 }
 

@@ -1,13 +1,15 @@
 /** What the frame itself tells before its spectra are taken: the background, fitted in turns with the fibres on a sample of
  * the columns, since fibres' wings reach into every gap; and how well the profiles fit. */
 import type { Frame } from "../detector/frame.js";
-import type { ExtractionBench } from "../kernels/extraction.js";
+import { ExtractionBench } from "../kernels/extraction.js";
+import type { Kernels } from "../kernels/module.js";
 import { MaskBit } from "../reference/bits.js";
 import type { ExtractionInput } from "../reference/extract.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { type BackgroundFit, cellColumns, fitBackground } from "./background.js";
-import type { ExtractionOptions } from "./extract.js";
+import { type ExtractionOptions, extractionInput } from "./extract.js";
 import { measureMisfit } from "./misfit.js";
+import { type ExtractionPlan, planExtraction } from "./plan.js";
 
 /** Fits in turns; the light that a turn moves between fibres and background falls at least tenfold each time. */
 const turns = 3;
@@ -19,6 +21,23 @@ export interface SettledFrame {
   background: BackgroundFit | null;
   /** ε: share of the light nearby by which pixels miss the profiles beyond noise. */
   profileError: number;
+}
+
+/** An extraction ready to run: memory laid out, background and misfit settled. */
+export interface OpenFrame extends SettledFrame {
+  bench: ExtractionBench;
+  input: ExtractionInput;
+  plan: ExtractionPlan;
+}
+
+/** Opens `frame` with `tramlines` as they stand.
+ * @throws RangeError when no fibre is lit, or tramlines cross. */
+export function openFrame(kernels: Kernels, frame: Frame, tramlines: Tramlines, options: ExtractionOptions): OpenFrame {
+  const plan = planExtraction(tramlines);
+  const input = extractionInput(frame, tramlines, plan, options);
+  const rows = Int32Array.from(plan.active);
+  const bench = new ExtractionBench(kernels, input, rows, tramlines.nFibre, options.precision ?? "f64");
+  return { bench, input, plan, ...settleFrame(bench, input, frame, tramlines, options) };
 }
 
 /** Measures both and has `bench` use them from here on; leaves its spectra and rejections as if nothing had been run. */

@@ -2,17 +2,15 @@
 import type { Frame } from "../detector/frame.js";
 import { ExtractionBench } from "../kernels/extraction.js";
 import { type Kernels, loadKernels } from "../kernels/module.js";
-import { gaussianWeights as kernelWeights } from "../kernels/profile.js";
 import { MaskBit } from "../reference/bits.js";
 import { type ExtractionInput, type ExtractionOutput, extractColumns, type Method } from "../reference/extract.js";
-import { legendreArgument, legendreValue } from "../reference/legendre.js";
-import { gaussianWeights } from "../reference/profile.js";
+import { blockProfiles } from "../reference/profile.js";
 import { checkGeometry } from "../tramlines/file.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
-import { type ExtractionOptions, extractionInput } from "./extract.js";
+import { adaptTramlines } from "./adapt.js";
+import type { ExtractionOptions } from "./extract.js";
 import { type ColumnRunner, runPasses } from "./passes.js";
-import { planExtraction } from "./plan.js";
-import { settleFrame } from "./settle.js";
+import { openFrame } from "./settle.js";
 
 export interface MethodCheck {
   method: Method;
@@ -45,6 +43,8 @@ export interface Verification {
 /** f64: what rounding leaves of sums over a window, with room for the frame's worst conditioning. */
 const relativeBound64 = 1e-10;
 const weightBound = 1e-14;
+/** Blocks of columns whose weights are compared. */
+const weightBlocks = 32;
 /** Relative, on variances: they bring the matrix's rounding alone. */
 const varianceBound64 = 1e-9;
 const varianceBound32 = 1e-3;
@@ -59,7 +59,7 @@ export async function verifyExtraction(
 ): Promise<Verification> {
   checkGeometry(frame, tramlines);
   const kernels = await loadKernels();
-  const plan = planExtraction(tramlines);
+  const adapted = adaptTramlines(kernels, frame, tramlines, options).tramlines;
   const cases: [Method, boolean][] = [
     ["joint", false],
     ["optimal", true],
@@ -68,16 +68,16 @@ export async function verifyExtraction(
     ["boxcar", false],
   ];
   const checks: MethodCheck[] = [];
+  let worstWeight = 0;
   for (const [method, crosstalk] of cases) {
-    const input = extractionInput(frame, tramlines, plan, { ...options, method, crosstalk });
-    const settled = settleFrame(openBench(kernels, input, "f64"), input, frame, tramlines, options);
-    input.profileError = settled.profileError;
-    if (settled.background !== null) input.background = settled.background;
+    const opened = openFrame(kernels, frame, adapted, { ...options, method, crosstalk, precision: "f64" });
+    const background = opened.background ?? opened.input.background;
+    const input = { ...opened.input, profileError: opened.profileError, background };
+    if (checks.length === 0) worstWeight = compareWeights(opened.bench, input);
     const share = checks.length / (2 * cases.length);
     const expected = runReference(input, (done) => options.onProgress?.(share + done / cases.length));
     for (const precision of ["f64", "f32"] as const) checks.push(compareRuns(kernels, input, expected, precision));
   }
-  const worstWeight = compareWeights(kernels, tramlines);
   return { worstWeight, checks, passed: worstWeight < weightBound && checks.every((check) => check.passed) };
 }
 
@@ -203,21 +203,15 @@ function isRejected(bits: number): boolean {
   return (bits & (MaskBit.cosmic | MaskBit.grown)) !== 0;
 }
 
-/** Weights of every lit fibre at every 16th column. */
-function compareWeights(kernels: Kernels, tramlines: Tramlines): number {
-  const { profile, degree, nx } = tramlines;
+/** Weights of every fibre at the nodes of some blocks. */
+function compareWeights(bench: ExtractionBench, input: ExtractionInput): number {
   let worst = 0;
-  tramlines.state.forEach((state, k) => {
-    for (let x = 0; state !== "dead" && x < nx; x += 16) {
-      const t = legendreArgument(x, nx);
-      const y = legendreValue(tramlines.legendre, t, k * (degree + 1), degree + 1);
-      const sigma = legendreValue(profile.sigma, t, k * (profile.widthDegree + 1), profile.widthDegree + 1);
-      const first = Math.floor(y + 0.5) - 6;
-      const found = kernelWeights(kernels, y, sigma, first, 13);
-      gaussianWeights(y, sigma, first, 13).forEach((weight, i) => {
-        worst = Math.max(worst, Math.abs(found[i] - weight));
-      });
-    }
-  });
+  const step = input.blockColumns * Math.max(1, Math.floor(input.nx / (input.blockColumns * weightBlocks)));
+  for (let x0 = 0; x0 < input.nx; x0 += step) {
+    const found = bench.nodeWeights(x0);
+    blockProfiles(input, x0).weights.forEach((weight, i) => {
+      worst = Math.max(worst, Math.abs(found[i] - weight));
+    });
+  }
   return worst;
 }

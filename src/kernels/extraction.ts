@@ -116,6 +116,13 @@ export class ExtractionBench {
     };
   }
 
+  /** Weights of all fibres at the four nodes of the block that begins with `x0`: [nFibre × 4 × nWindow]. Extracts the
+   * block on the way. */
+  nodeWeights(x0: number): Float32Array | Float64Array {
+    this.run(x0, Math.min(x0 + this.input.blockColumns, this.input.nx));
+    return this.pieces.get(Word.nodeWeights)!.slice() as Float32Array | Float64Array;
+  }
+
   /** Another background, of orders not above the first one's. */
   setBackground({ nX, nY, coefficients }: SmoothBackground): void {
     const { nX: mostX, nY: mostY } = this.input.background;

@@ -8,7 +8,8 @@ import type { Card, Header } from "../fits/header.js";
 import { type FitsTable, readTable } from "../fits/table.js";
 import { writeFits } from "../fits/write.js";
 import { TraceError } from "./errors.js";
-import type { FibreState, GaussianProfile, Tramlines } from "./tramlines.js";
+import { readShape, shapeHdus } from "./shape/file.js";
+import type { FibreState, Profile, Tramlines } from "./tramlines.js";
 
 /** Raised when a reader of the file would have to change. */
 const FORMAT_VERSION = 1;
@@ -72,6 +73,7 @@ export function tramlinesHdus(tramlines: Tramlines, options: TramlinesFileOption
         { name: "SIGMA", format: `${profile.widthDegree + 1}D`, data: profile.sigma, unit: "pixel" },
       ],
     },
+    ...(profile.kind === "gaussian" ? [] : shapeHdus(profile)),
   ];
 }
 
@@ -131,26 +133,30 @@ export async function readTramlines(input: string | Uint8Array, name?: string): 
     seenTo: Int32Array.from(column("SEEN_TO") as ArrayLike<number>),
     rms: Float64Array.from(column("RMS") as ArrayLike<number>),
     nPoint: Int32Array.from(column("NPOINT") as ArrayLike<number>),
-    profile: readGaussian(profileTable, file),
+    profile: await readProfile(input, profileTable, file, name),
     geometryDigest: String(primary.get("TRAMGEOM") ?? ""),
   };
   checkContent(tramlines, file);
   return tramlines;
 }
 
-function readGaussian(table: FitsTable, file: string): GaussianProfile {
+async function readProfile(
+  input: string | Uint8Array,
+  table: FitsTable,
+  file: string,
+  name: string | undefined,
+): Promise<Profile> {
   const kind = table.header.get("PROFKIND");
-  if (kind !== "gaussian") {
-    const finding = `profile model ${String(kind)}, but only gaussian is known`;
-    throw new FitsError("unsupported", finding, "trace the flat again with this program", { file });
-  }
   const sigma = table.columns.find((column) => column.name === "SIGMA");
-  return {
-    kind,
+  const common = {
     sigma: Float64Array.from(columnsOf(table, file)("SIGMA") as ArrayLike<number>),
     widthDegree: (sigma?.repeat ?? 1) - 1,
     relativeError: Number(table.header.get("PROFERR") ?? 0),
   };
+  if (kind === "gaussian") return { kind, ...common };
+  if (kind === "empirical") return { kind, ...common, ...(await readShape(input, name)) };
+  const finding = `profile model ${String(kind)}, but only gaussian and empirical are known`;
+  throw new FitsError("unsupported", finding, "trace the flat again with this program", { file });
 }
 
 function columnsOf(table: FitsTable, file: string) {

@@ -14,13 +14,25 @@ export interface GaussianProfile {
   relativeError: number;
 }
 
+/** What earlier frames said of a shape: its best coefficients, and how firmly they stand (second derivatives of χ²/2). */
+export interface KnownShape {
+  /** nShape */
+  best: Float64Array;
+  /** nShape × nShape; column ≤ row counts. */
+  information: Float64Array;
+}
+
 /** Any form, from a table; its widths stretch it. */
 export interface ShapeProfile {
   kind: "empirical";
+  /** nFibre × (widthDegree + 1): σ(x), pixels. */
   sigma: Float64Array;
   widthDegree: number;
+  /** The profile's own relative error ε. */
   relativeError: number;
   shape: ShapeTable;
+  /** The flat's word on the shape, for frames that refine it. */
+  known: KnownShape;
 }
 
 export type Profile = GaussianProfile | ShapeProfile;

@@ -5,12 +5,12 @@ import { median } from "../../reference/median.js";
 import { nShapeTerm, type ShapeTable } from "../../reference/shape.js";
 import { type Flat, pixelVariance } from "../flat.js";
 import { activeFibres, linesOf } from "../profileTable.js";
-import type { Tramlines } from "../tramlines.js";
+import type { KnownShape, Tramlines } from "../tramlines.js";
 import { type ShapeBasis, shapeBasis, tabulate } from "./basis.js";
 import { referToCentroid } from "./centroid.js";
 import type { ColumnData, Lines } from "./column.js";
 import { applyGeometry, measureColumn } from "./geometry.js";
-import { type KnownShape, nBackground, ShapeNormal, type ShapeState } from "./step.js";
+import { nBackground, ShapeNormal, type ShapeState } from "./step.js";
 
 const rounds = 4;
 const shapeColumns = 40;

@@ -5,9 +5,10 @@ import type { Kernels } from "../../kernels/module.js";
 import { MaskBit } from "../../reference/bits.js";
 import type { SmoothBackground } from "../../reference/extract.js";
 import type { ShapeTable } from "../../reference/shape.js";
-import { type ShapeBasis, tabulate } from "./basis.js";
+import type { KnownShape } from "../tramlines.js";
+import { shapeBasis, tabulate } from "./basis.js";
 import type { ColumnData, Lines } from "./column.js";
-import { type KnownShape, nBackground, nBackgroundY, ShapeNormal, type ShapeState } from "./step.js";
+import { nBackground, nBackgroundY, ShapeNormal, type ShapeState } from "./step.js";
 
 const steps = 2;
 const columns = 48;
@@ -16,7 +17,6 @@ const clip = 6;
 /** Refines `table` on `frame`. `rejected`: ny × nx bits of MaskBit; `lines`: moved to where the frame's light sits. */
 export function refineShape(
   kernels: Kernels,
-  basis: ShapeBasis,
   known: KnownShape,
   table: ShapeTable,
   lines: Lines,
@@ -24,6 +24,7 @@ export function refineShape(
   background: SmoothBackground,
   rejected: Uint8Array,
 ): ShapeTable {
+  const basis = shapeBasis(table.referenceWidth);
   let state: ShapeState = { coefficients: known.best, background: widenBackground(background) };
   let refined = table;
   for (let round = 0; round < steps; round++) {

@@ -6,6 +6,7 @@ import { NormalMatrix } from "../../kernels/rankUpdate.js";
 import { factorBand, solveBand } from "../../reference/banded.js";
 import { legendreArgument } from "../../reference/legendre.js";
 import { centroidOf, nShapeTerm, type ShapeTable } from "../../reference/shape.js";
+import type { KnownShape } from "../tramlines.js";
 import { basisAt, type ShapeBasis } from "./basis.js";
 import {
   type ColumnData,
@@ -35,13 +36,6 @@ const wingBegins = 4.2;
 export interface ShapeState {
   coefficients: Float64Array;
   background: Float64Array;
-}
-
-/** What earlier frames said of a shape: the best coefficients and how firmly they stand. */
-export interface KnownShape {
-  best: Float64Array;
-  /** nShape × nShape, lower triangle. */
-  information: Float64Array;
 }
 
 export interface StepResult extends ShapeState {

@@ -1,0 +1,58 @@
+/** The flat's tramlines and profile made the frame's own: moved to where its light sits, and refined on its light. */
+import type { Frame } from "../detector/frame.js";
+import type { Kernels } from "../kernels/module.js";
+import { activeFibres, linesOf } from "../tramlines/profileTable.js";
+import { refineShape } from "../tramlines/shape/refine.js";
+import { measureShift, type Shift, shiftTramlines } from "../tramlines/shift.js";
+import type { Tramlines } from "../tramlines/tramlines.js";
+import { fitBackground, noBackground } from "./background.js";
+import type { ExtractionOptions } from "./extract.js";
+import { openFrame } from "./settle.js";
+
+export interface Adapted {
+  tramlines: Tramlines;
+  shift: Shift | null;
+  refined: boolean;
+  warnings: string[];
+}
+
+export function adaptTramlines(
+  kernels: Kernels,
+  frame: Frame,
+  tramlines: Tramlines,
+  options: ExtractionOptions,
+): Adapted {
+  const warnings: string[] = [];
+  let [adapted, shift]: [Tramlines, Shift | null] = [tramlines, null];
+  if (options.shift !== false) {
+    const background = options.background === false ? noBackground() : fitBackground(frame, tramlines);
+    shift = measureShift(kernels, frame, tramlines, background);
+    if (shift === null) {
+      warnings.push(
+        `${frame.name}: too little light to measure its shift against the flat, so none is applied; spectra are right only if nothing moved since the flat.`,
+      );
+    } else adapted = shiftTramlines(tramlines, shift);
+  }
+  if (options.refine === false || adapted.profile.kind === "gaussian")
+    return { tramlines: adapted, shift, refined: false, warnings };
+  return { tramlines: refineOn(kernels, frame, adapted, options), shift, refined: true, warnings };
+}
+
+/** The profile refined on what a first look at the frame leaves after background and cosmic rays. */
+function refineOn(kernels: Kernels, frame: Frame, tramlines: Tramlines, options: ExtractionOptions): Tramlines {
+  const { profile } = tramlines;
+  if (profile.kind === "gaussian") return tramlines;
+  const { bench, input, background } = openFrame(kernels, frame, tramlines, options);
+  bench.run(0, input.nx);
+  const lines = linesOf(tramlines, activeFibres(tramlines));
+  const shape = refineShape(
+    kernels,
+    profile.known,
+    profile.shape,
+    lines,
+    frame,
+    background ?? noBackground(),
+    bench.rejected,
+  );
+  return { ...tramlines, profile: { ...profile, shape } };
+}
