@@ -50,7 +50,7 @@ export function checkRole(raw: RawImage, frame: Assembled, role: Role): string[]
   const problem = problemOf(raw, frame, levels, role);
   const headerAgrees = kind === "unknown" || FITTING[role].includes(kind);
   if (problem !== undefined) {
-    const header = headerAgrees ? "" : ` and its ${said} is not ${CALLED[role]}`;
+    const header = headerAgrees ? "" : `, and its ${said} is not ${CALLED[role]}`;
     throw new DetectorError(
       `${raw.name} was given as ${CALLED[role]}, but ${problem}${header}; check the list of frames.`,
     );

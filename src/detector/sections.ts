@@ -14,7 +14,8 @@ export function readSection(raw: RawImage, text: string, from: string): Section 
     return parseSection(text, `${raw.name}: ${from}`, raw.nx, raw.ny);
   } catch (error) {
     if (!(error instanceof RangeError)) throw error;
-    throw new DetectorError(error.message + (/leaves|ends at/.test(error.message) ? turnedHint(raw, text) : ""));
+    const hint = /leaves|ends at/.test(error.message) ? turnedHint(raw, text) : "";
+    throw new DetectorError(hint === "" ? error.message : error.message.replace(/correct it\.$/, hint));
   }
 }
 
@@ -25,7 +26,7 @@ function turnedHint(raw: RawImage, text: string): string {
   const fills = (x2 > raw.nx && x2 > 0.75 * raw.ny) || (y2 > raw.ny && y2 > 0.75 * raw.nx);
   return !(fits && fills)
     ? ""
-    : " It would fit with the axes exchanged: if the picture was turned, give data, overscan, place and dispersion_axis in the spectrograph file.";
+    : "it would fit with the axes exchanged: if the picture was turned, give data, overscan, place and dispersion_axis in the spectrograph file.";
 }
 
 export interface OverscanFound {

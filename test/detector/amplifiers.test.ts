@@ -168,7 +168,7 @@ describe("what cannot be right", () => {
     [
       "data of the turned frame",
       { ...ONE_AMPLIFIER, DATASEC: "[1:80,1:100]" },
-      "It would fit with the axes exchanged: if the picture was turned, give data, overscan, place and dispersion_axis in the spectrograph file.",
+      "; it would fit with the axes exchanged: if the picture was turned, give data, overscan, place and dispersion_axis in the spectrograph file.",
     ],
     [
       "overscan leaves the frame",

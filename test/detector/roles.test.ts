@@ -71,7 +71,7 @@ describe("calibrations of another kind", () => {
       "an exposed bias",
       frame("dark", { EXPTIME: 300, IMAGETYP: "dark" }),
       "bias",
-      "dark.fits was given as a bias, but it was exposed for 300 s and its IMAGETYP 'dark' is not a bias; check the list of frames.",
+      "dark.fits was given as a bias, but it was exposed for 300 s, and its IMAGETYP 'dark' is not a bias; check the list of frames.",
     ],
     [
       "a dark of 0 s",

@@ -118,7 +118,7 @@ describe.skipIf(!here)("frames to be survived", () => {
   it.each([
     [
       "axis2.fits",
-      'axis2.fits: DATASEC: "[1:1024,1:476]" ends at x = 1024, but the image ends at 476; correct it. It would fit with the axes exchanged',
+      'axis2.fits: DATASEC: "[1:1024,1:476]" ends at x = 1024, but the image ends at 476; it would fit with the axes exchanged',
     ],
     ["cropped.fits", 'cropped.fits: DATASEC: "[1:1024,1:476]" ends at y = 476, but the image ends at 430; correct it.'],
     [
