@@ -12,7 +12,15 @@ import {
   outputOption,
   type TramlineOptions,
 } from "./frameOptions.js";
-import { inputPaths, oneOfEach, openBench, readFrame, requireTramlineSource, tramlinesFor } from "./frames.js";
+import {
+  inputPaths,
+  oneOfEach,
+  openBench,
+  readFrame,
+  requireAperture,
+  requireTramlineSource,
+  tramlinesFor,
+} from "./frames.js";
 import { jsonHelp } from "./json.js";
 import { checkOutput, uninterrupted, writeText } from "./output.js";
 import { jsonText, type Outcome, perform } from "./perform.js";
@@ -43,10 +51,11 @@ async function compare(path: string, options: CompareOptions, progress: Progress
   requireTramlineSource("compare", options);
   const { output, force } = options;
   const inputs = inputPaths([path], options);
-  if (output !== undefined) checkOutput(output, { force, inputs });
+  if (output !== undefined && output !== "-") checkOutput(output, { force, inputs });
   const bench = await openBench(inputs, options, progress);
   const frame = await readFrame(path, "science", bench);
   const traced = await tramlinesFor(frame, options, bench, progress);
+  requireAperture(options.halfAperture, traced);
   progress.stage(`comparing on ${frame.name}`);
   const { precision, cosmicRays, halfAperture } = options;
   const comparison = await compareMethods(frame, traced.tramlines, {

@@ -15,6 +15,7 @@ import {
   methodLines,
   onOrOff,
   outputOption,
+  requireFittingMethod,
   type TramlineOptions,
 } from "./frameOptions.js";
 import {
@@ -23,6 +24,7 @@ import {
   oneOfEach,
   openBench,
   readFrame,
+  requireAperture,
   requireTramlineSource,
   type Traced,
   tramlinesFor,
@@ -58,12 +60,14 @@ export function addExtract(program: Command): void {
 
 async function extract(path: string, options: ExtractOptions, progress: Progress): Promise<Outcome<"extract">> {
   requireTramlineSource("extract", options);
+  requireFittingMethod("extract", options);
   const { output, force } = options;
   const paths = inputPaths([path], options);
   checkOutput(output, { force, inputs: paths });
   const bench = await openBench(paths, options, progress);
   const frame = await readFrame(path, "science", bench);
   const traced = await tramlinesFor(frame, options, bench, progress);
+  requireAperture(options.halfAperture, traced);
   progress.stage(`extracting ${frame.name}`);
   const extraction = await extractFrame(frame, traced.tramlines, {
     ...extractionOptions(options),
@@ -76,7 +80,11 @@ async function extract(path: string, options: ExtractOptions, progress: Progress
   );
   const summary = summariseSpectra(extraction.spectra, traced.tramlines);
   return {
-    json: { output, ...extractJson(frame, traced, extraction, summary, options), ...notes(frame, traced, extraction) },
+    json: {
+      output,
+      ...extractJson(frame, traced, extraction, summary, options),
+      ...notes(frame, traced, extraction, summary),
+    },
     text: `${output === "-" ? "standard output" : output}: spectra of ${frame.name}\n${textPairs(facts(traced, extraction, summary, options))}`,
   };
 }
@@ -86,10 +94,12 @@ export function extractionOptions({ method, crosstalk, precision, cosmicRays, ha
   return { method, crosstalk, precision, cosmicRays, ...(halfAperture === undefined ? {} : { halfAperture }) };
 }
 
-function notes(frame: Frame, traced: Traced, extraction: Extraction) {
+function notes(frame: Frame, traced: Traced, extraction: Extraction, { nUsable, nPoint }: SpectraSummary) {
+  const share = nUsable / nPoint;
+  const few = `${frame.name}: only ${percentage(share)} of the spectrum points can be trusted; their flags tell why.`;
   return {
     assumptions: oneOfEach([...frame.assumptions, ...traced.assumptions]),
-    warnings: oneOfEach([...frame.warnings, ...traced.warnings, ...extraction.warnings]),
+    warnings: oneOfEach([...frame.warnings, ...traced.warnings, ...extraction.warnings, ...(share < 0.5 ? [few] : [])]),
   };
 }
 

@@ -98,6 +98,21 @@ export function forceOption(): Option {
   return new Option("--force", "replace files that are there already");
 }
 
+/** Options that the method would pass over in silence.
+ * @throws UsageError */
+export function requireFittingMethod(command: string, { method, crosstalk, halfAperture }: MethodOptions): void {
+  if (method === "joint" && !crosstalk) {
+    throw new UsageError(
+      `hatchel ${command}: --crosstalk off, but joint always parts neighbours' light; choose --method optimal or boxcar with it.`,
+    );
+  }
+  if (method !== "boxcar" && halfAperture !== undefined) {
+    throw new UsageError(
+      `hatchel ${command}: --half-aperture is the boxcar's, but the method is ${method}; choose --method boxcar with it.`,
+    );
+  }
+}
+
 /** The methods' options as the lines that a product's HISTORY keeps. */
 export function methodLines(options: MethodOptions): string[] {
   const lines = [`method ${options.method}`];

@@ -7,7 +7,7 @@ import { correctFrame } from "../detector/correct.js";
 import type { Frame } from "../detector/frame.js";
 import { loadCalibrations } from "../detector/loadCalibrations.js";
 import type { Role } from "../detector/roles.js";
-import { planExtraction } from "../extraction/plan.js";
+import { type ExtractionPlan, planExtraction } from "../extraction/plan.js";
 import { FitsError } from "../fits/errors.js";
 import type { Header } from "../fits/header.js";
 import { readImage } from "../fits/image.js";
@@ -38,6 +38,11 @@ export interface Traced {
   header?: Header;
   assumptions: string[];
   warnings: string[];
+}
+
+/** Tramlines that a frame can be extracted with. */
+export interface TracedFor extends Traced {
+  plan: ExtractionPlan;
 }
 
 /** Every file named on the command line: none of them may be written on. `frames`: those without an option. */
@@ -100,7 +105,7 @@ export async function tramlinesFor(
   options: TramlineOptions,
   bench: Bench,
   progress: Progress,
-): Promise<Traced> {
+): Promise<TracedFor> {
   const { flat, tramlines: file } = options;
   const traced =
     file === undefined
@@ -108,8 +113,7 @@ export async function tramlinesFor(
       : { tramlines: await readTramlines(readOnce(file), file), assumptions: [], warnings: [] };
   bench.inputs.push(...fileInputs(file));
   checkGeometry(frame, traced.tramlines, file === undefined ? flat?.join(", ") : file);
-  requireExtractable(traced.tramlines, file ?? flat?.join(", ") ?? "");
-  return traced;
+  return { ...traced, plan: planFor(traced.tramlines, file ?? flat?.join(", ") ?? "") };
 }
 
 export function requireTramlineSource(command: string, { flat, tramlines }: TramlineOptions): void {
@@ -156,9 +160,17 @@ function slitLayout(spectrograph: Spectrograph | undefined): { layout?: SlitLayo
   return { layout: { blocks: blocks!, pitch: pitch!, gap: gap ?? 0, dead, sky }, warning: [] };
 }
 
-function requireExtractable(tramlines: Tramlines, name: string): void {
+/** @throws RefusalError for an aperture that reaches further than the pixels that are looked at. */
+export function requireAperture(halfAperture: number | undefined, { plan }: TracedFor): void {
+  if (halfAperture === undefined || halfAperture <= plan.halfWindow) return;
+  throw new RefusalError(
+    `--half-aperture is ${halfAperture} px, but only ${plan.halfWindow} px to either side of a fibre are looked at; give at most that`,
+  );
+}
+
+function planFor(tramlines: Tramlines, name: string): ExtractionPlan {
   try {
-    planExtraction(tramlines);
+    return planExtraction(tramlines);
   } catch (error) {
     if (!(error instanceof RangeError)) throw error;
     throw new RefusalError(`${name}: ${error.message}`);

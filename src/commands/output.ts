@@ -4,11 +4,16 @@ import fs from "node:fs";
 import { basename, dirname, join } from "node:path";
 import { FitsError } from "../fits/errors.js";
 import { refuseToHarm, type WriteOptions } from "../fits/write.js";
+import { UsageError } from "./usage.js";
 
 /** Refuses early what writing would refuse late.
- * @throws FitsError when the file is there and may not be replaced, is one of the inputs, or has no folder to go to. */
+ * @throws FitsError when the file is there and may not be replaced, is one of the inputs, or has no folder to go to; UsageError
+ * for a terminal. */
 export function checkOutput(path: string, options: WriteOptions): void {
-  if (path === "-") return;
+  if (path === "-") {
+    refuseTerminal();
+    return;
+  }
   refuseToHarm(path, options);
   const there = fs.statSync(path, { throwIfNoEntry: false });
   if (there !== undefined && !there.isFile()) return;
@@ -21,6 +26,13 @@ export function checkOutput(path: string, options: WriteOptions): void {
   } catch {
     throw refusal(`the folder ${folder} may not be written to`, "give another name or change its permissions");
   }
+}
+
+function refuseTerminal(): void {
+  if (!process.stdout.isTTY) return;
+  throw new UsageError(
+    "hatchel: standard output is a terminal, which cannot show a FITS file; give -o a file's name, or pipe it on.",
+  );
 }
 
 /** Writes while interrupts wait, so that what is begun gets finished. Several files are written with a call of `pause`

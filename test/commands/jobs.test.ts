@@ -213,6 +213,11 @@ describe("extract", () => {
     const share = sum(narrow.spectra) / sum(wide.spectra);
     expect(share).toBeGreaterThan(0.99);
     expect(share).toBeLessThan(0.998);
+    const pinhole = await withOptions("--method", "boxcar", "--half-aperture", "0.01");
+    expect(pinhole.json.usablePoints).toBe(0);
+    expect(pinhole.json.warnings).toContain(
+      "sci_01.fits: only 0.0 % of the spectrum points can be trusted; their flags tell why.",
+    );
     const uncleaned = await withOptions("--cosmic-rays", "off");
     expect(uncleaned.json).toMatchObject({ cosmicRays: false, rejectedPixels: 0 });
     expect(sum(uncleaned.spectra)).toBeGreaterThan(sum(await readSpectra(join(cwd, "spectra.fits"))) + 500);

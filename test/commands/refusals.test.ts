@@ -98,6 +98,10 @@ const REFUSED: [args: string[], sentence: string | RegExp][] = [
     /^hatchel: night\/raw\/fflat_01\.fits: there is no HDU "TRAMLINES"; .+\.\n$/,
   ],
   [
+    [...extractTo("s.fits"), "--method", "boxcar", "--half-aperture", "50"],
+    /^hatchel: --half-aperture is 50 px, but only \d px to either side of a fibre are looked at; give at most that\.\n$/,
+  ],
+  [
     ["compare", FRAME, "--flat", FLAT, "-o", "no/c.json"],
     "hatchel: no/c.json: the folder no does not exist; make it first.\n",
   ],

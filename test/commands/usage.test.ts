@@ -68,6 +68,14 @@ const WRONG: [args: string[], sentence: string][] = [
     "hatchel: --half-aperture is '0'; it must be a number of pixels over 0.",
   ],
   [
+    ["extract", "a.fits", "--flat", "f.fits", "-o", "b.fits", "--half-aperture", "2"],
+    "hatchel extract: --half-aperture is the boxcar's, but the method is joint; choose --method boxcar with it.",
+  ],
+  [
+    ["extract", "a.fits", "--flat", "f.fits", "-o", "b.fits", "--crosstalk", "off"],
+    "hatchel extract: --crosstalk off, but joint always parts neighbours' light; choose --method optimal or boxcar with it.",
+  ],
+  [
     ["extract", "-", "--flat", "-", "-o", "b.fits"],
     "hatchel: - stands for several files, but standard input holds one; name the others.",
   ],
