@@ -39,10 +39,14 @@ export function fitsverify(path: string): string[] {
   return complaints;
 }
 
-/** Runs a script given as text with `args`; returns what it printed.
+/** Runs a script given as text with `args` and, for much data, `input` on its standard input; returns what it printed.
  * @throws Error with the script's own complaint when it fails. */
-export function python(script: string, args: string[] = []): string {
-  const run = spawnSync(PYTHON, ["-W", "ignore", "-c", script, ...args], { encoding: "utf8", maxBuffer: 1 << 28 });
+export function python(script: string, args: string[] = [], input = ""): string {
+  const run = spawnSync(PYTHON, ["-W", "ignore", "-c", script, ...args], {
+    encoding: "utf8",
+    input,
+    maxBuffer: 1 << 28,
+  });
   if (run.error) throw run.error;
   if (run.status !== 0) throw new Error(`python3 failed: ${run.stderr}`);
   return run.stdout;
