@@ -3,6 +3,7 @@ export { bandedSystems32, bandedSystems64 } from "./banded";
 export { centreFibres, centringScratchBytes } from "./centring";
 export { centroid } from "./centroid";
 export { erf } from "./erf";
+export { exp } from "./exp";
 export { extractColumns32, extractColumns64, prepareExtraction32, prepareExtraction64 } from "./extract";
 export { legendreFitClipped, legendreValue } from "./legendre";
 export { median } from "./median";

@@ -10,6 +10,9 @@ export interface KernelExports {
   /** assembly/erf.ts */
   erf(x: number): number;
 
+  /** assembly/exp.ts */
+  exp(x: number): number;
+
   /** assembly/extract.ts */
   prepareExtraction32(jobPtr: number): void;
   prepareExtraction64(jobPtr: number): void;
