@@ -5,9 +5,9 @@ import { type Kernels, loadKernels } from "../kernels/module.js";
 import type { ShapeTable } from "../reference/shape.js";
 import { combineFlats, type Flat } from "./flat.js";
 import { activeFibres, linesOf, profileTable } from "./profileTable.js";
-import { columnProfiles, type Lines } from "./shape/column.js";
+import type { Lines } from "./shape/column.js";
 import { flatColumn, type MeasuredShape, measureShape } from "./shape/measure.js";
-import { backgroundColumn, nBackground, nearReach, settleColumn } from "./shape/step.js";
+import { backgroundColumn, nBackground, settleColumn, wholeProfiles } from "./shape/step.js";
 import type { Profile, ShapeProfile, Tramlines } from "./tramlines.js";
 
 export type ProfileKind = Profile["kind"];
@@ -75,11 +75,10 @@ interface Residuals {
 function* judge(flat: Flat, lines: Lines, table: ShapeTable, background: Float64Array): Generator<Residuals> {
   for (let i = 0; i < judgingColumns; i++) {
     const data = flatColumn(flat, Math.floor(((i + 0.93) * flat.nx) / judgingColumns) - 1);
-    const near = columnProfiles(lines, table, data.x, nearReach(lines, table));
-    const whole = columnProfiles(lines, table, data.x, -table.start * 1.1);
+    const profiles = wholeProfiles(lines, table, data.x);
     const under = backgroundColumn(background, data.x, lines);
     const level = data.light.map((light, y) => light - under[y]);
-    const { model } = settleColumn(near, whole, data, level, under);
+    const { model } = settleColumn(profiles, data, level, under);
     yield { residual: level.map((light, y) => light - model[y]), inverseVariance: data.inverseVariance, model };
   }
 }

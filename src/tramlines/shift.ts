@@ -12,9 +12,9 @@ import { legendreArgument, legendreValue } from "../reference/legendre.js";
 import { median } from "../reference/median.js";
 import type { ShapeTable } from "../reference/shape.js";
 import { activeFibres, linesOf, profileTable } from "./profileTable.js";
-import { columnProfiles, type Lines, localSystem } from "./shape/column.js";
+import { type Lines, localDesign, localSystem } from "./shape/column.js";
 import { frameColumn, widenBackground } from "./shape/refine.js";
-import { backgroundColumn, nearReach, settleColumn } from "./shape/step.js";
+import { backgroundColumn, settleColumn, wholeProfiles } from "./shape/step.js";
 import type { Tramlines } from "./tramlines.js";
 
 export interface Shift {
@@ -129,12 +129,18 @@ function lightAlong(frame: Frame, lines: Lines, shift: number): number {
 /** Shifts of the fibres with light enough, in one column. */
 function columnShifts(frame: Frame, lines: Lines, table: ShapeTable, smooth: Float64Array, x: number): Point[] {
   const data = frameColumn(frame, null, x);
-  const profiles = columnProfiles(lines, table, x, nearReach(lines, table));
+  const profiles = wholeProfiles(lines, table, x);
   const under = backgroundColumn(smooth, x, lines);
   const level = data.light.map((light, y) => light - under[y]);
-  const { flux, model } = settleColumn(profiles, profiles, data, level, under);
+  const { flux, model } = settleColumn(profiles, data, level, under);
   const residual = level.map((light, y) => light - model[y]);
-  const { band, rhs, halfBandwidth } = localSystem(profiles, flux, residual, data.inverseVariance, 2);
+  const { band, rhs, halfBandwidth } = localSystem(
+    profiles,
+    localDesign(profiles, flux, 2),
+    residual,
+    data.inverseVariance,
+    2,
+  );
   factorBand(band, rhs.length, halfBandwidth);
   solveBand(band, rhs.length, halfBandwidth, rhs);
   const inverse = inverseBand(band, rhs.length, halfBandwidth);

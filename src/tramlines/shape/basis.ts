@@ -11,8 +11,13 @@ const knotWidth = 1.04;
 /** Points of the table per pixel at `knotWidth`. */
 const pointsPerPixel = 32;
 const order = 4;
+/** Terms beyond the first may reach these shares of it: in the core, and in the wings, which hardly change.
+ * Distance in pixels at `knotWidth`. */
+const coreShare = 0.2;
+const wingShare = 0.05;
+const wingBegins = 4.2;
 
-/** Splines on a table of v: values and integrals. */
+/** Splines, or whatever functions a shape is made of, on a table of v: values and integrals. */
 export interface ShapeBasis {
   nSpline: number;
   start: number;
@@ -22,9 +27,15 @@ export interface ShapeBasis {
   values: Float64Array;
   /** nSpline: integral over all v. */
   whole: Float64Array;
-  /** nSpline: distance of the spline's middle from the centre, pixels at `knotWidth`. */
-  middle: Float64Array;
+  /** nSpline: how far the coefficients of terms beyond the first may stray from 0, as a share of the first term's
+   * coefficient, and at the least. */
+  priorShare: Float64Array;
+  priorSpread: Float64Array;
+  /** Whether the functions can shift and widen the shape, which steps must then be kept from. */
+  canMove: boolean;
   referenceWidth: number;
+  /** 2 · (n − 1): for each cell of the table, the first spline that is not yet whole and the last that has begun. */
+  begun: Int32Array;
 }
 
 /** `referenceWidth`: σ of the profile, pixels; the knots scale with it. */
@@ -41,22 +52,26 @@ export function shapeBasis(referenceWidth: number): ShapeBasis {
   const scale = referenceWidth / knotWidth;
   const extended = [...mirrored, last + 1, last + 2, last + 3, last + 4, last + 5];
   const n = 2 * last * pointsPerPixel + 1;
-  const basis: ShapeBasis = {
+  const basis = {
     nSpline,
     start: -last * scale,
     step: scale / pointsPerPixel,
     n,
     values: new Float64Array(n * 2 * nSpline),
     whole: Float64Array.from({ length: nSpline }, (_, j) => ((mirrored[j + order] - mirrored[j]) / order) * scale),
-    middle: Float64Array.from({ length: nSpline }, (_, j) => mirrored[j + 2]),
+    priorShare: Float64Array.from({ length: nSpline }, (_, j) =>
+      Math.abs(mirrored[j + order / 2]) > wingBegins ? wingShare : coreShare,
+    ),
+    priorSpread: new Float64Array(nSpline).fill(wingShare * 1e-6),
+    canMove: true,
     referenceWidth,
   };
   for (let i = 0; i < n; i++) fillPoint(basis, extended, i);
-  return basis;
+  return { ...basis, begun: begunSplines(basis) };
 }
 
 /** Values by the recurrence of Cox and de Boor; integral of spline j = (t_{j+4} − t_j)/4 · Σ_{i ≥ j} N_{i,5}. */
-function fillPoint(basis: ShapeBasis, knots: number[], i: number): void {
+function fillPoint(basis: Omit<ShapeBasis, "begun">, knots: number[], i: number): void {
   const { nSpline } = basis;
   const v = -knots[nSpline + order - 1] + i / pointsPerPixel;
   let interval = 0;
@@ -109,20 +124,50 @@ export function tabulate(basis: ShapeBasis, c: Float64Array): ShapeTable {
   return { start: basis.start, step: basis.step, n, values, referenceWidth: basis.referenceWidth, centroid };
 }
 
-/** Integrals of all splines up to v, and the run of them that is neither all 0 nor all whole: fills `out` [nSpline]. */
-export function basisAt(basis: ShapeBasis, v: number, out: Float64Array): void {
-  const { n, nSpline, step } = basis;
+/** Integrals of all splines up to some v. */
+export interface BasisEdge {
+  /** nSpline */
+  integral: Float64Array;
+  /** Splines before the first are whole here, those behind the last have not begun. */
+  first: number;
+  last: number;
+}
+
+export function emptyEdge(basis: ShapeBasis): BasisEdge {
+  return { integral: new Float64Array(basis.nSpline), first: 0, last: basis.nSpline - 1 };
+}
+
+/** Integrals of all splines up to v, between the table's points by Hermite's cubic: fills `edge`. */
+export function basisAt(basis: ShapeBasis, v: number, edge: BasisEdge): void {
+  const { n, nSpline, step, values } = basis;
   const at = (v - basis.start) / step;
   const cell = Math.min(Math.max(Math.floor(at), 0), n - 2);
   const t = Math.min(Math.max(at - cell, 0), 1);
   const u = 1 - t;
-  const row = cell * 2 * nSpline;
   const smooth = t * t * (3 - 2 * t);
-  for (let j = 0; j < nSpline; j++) {
-    const c0 = basis.values[row + j];
-    const c1 = basis.values[row + 2 * nSpline + j];
-    const d0 = basis.values[row + nSpline + j];
-    const d1 = basis.values[row + 3 * nSpline + j];
-    out[j] = c0 + smooth * (c1 - c0) + step * t * u * (u * d0 - t * d1);
+  const [riseHere, riseThere] = [step * t * u * u, step * t * u * t];
+  const row = cell * 2 * nSpline;
+  edge.first = basis.begun[2 * cell];
+  edge.last = basis.begun[2 * cell + 1];
+  edge.integral.set(basis.whole.subarray(0, edge.first));
+  edge.integral.fill(0, edge.last + 1);
+  for (let j = edge.first; j <= edge.last; j++) {
+    const c0 = values[row + j];
+    const rise = riseHere * values[row + nSpline + j] - riseThere * values[row + 3 * nSpline + j];
+    edge.integral[j] = c0 + smooth * (values[row + 2 * nSpline + j] - c0) + rise;
   }
+}
+
+/** For each cell of the table, the first spline that is not yet whole and the last that has begun: [2 · (n − 1)]. */
+export function begunSplines({ n, nSpline, values, whole }: Omit<ShapeBasis, "begun">): Int32Array {
+  const begun = new Int32Array(2 * (n - 1));
+  for (let cell = 0; cell < n - 1; cell++) {
+    let first = 0;
+    while (first < nSpline - 1 && values[cell * 2 * nSpline + first] === whole[first]) first++;
+    let last = nSpline - 1;
+    while (last > 0 && values[(cell + 1) * 2 * nSpline + last] === 0) last--;
+    begun[2 * cell] = Math.min(first, last);
+    begun[2 * cell + 1] = Math.max(first, last);
+  }
+  return begun;
 }

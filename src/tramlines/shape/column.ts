@@ -48,6 +48,8 @@ export interface ColumnProfiles {
   nFibre: number;
   /** Rows of a window. */
   n: number;
+  /** Rows at each end of a window that the fibres' local unknowns do not reach. */
+  margin: number;
   ny: number;
   /** nFibre: first row of the window, may lie outside the frame. */
   first: Int32Array;
@@ -61,13 +63,20 @@ export interface ColumnProfiles {
   byWidth: Float64Array;
 }
 
-/** Evaluates all profiles in column `x` out to `reach` pixels. */
-export function columnProfiles(lines: Lines, table: ShapeTable, x: number, reach: number): ColumnProfiles {
+/** Evaluates all profiles in column `x` out to `reach` pixels, `localReach` of them for local unknowns. */
+export function columnProfiles(
+  lines: Lines,
+  table: ShapeTable,
+  x: number,
+  reach: number,
+  localReach = reach,
+): ColumnProfiles {
   const { nFibre, ny } = lines;
   const n = 2 * Math.ceil(reach) + 1;
   const profiles: ColumnProfiles = {
     nFibre,
     n,
+    margin: Math.max(0, Math.ceil(reach) - Math.ceil(localReach)),
     ny,
     first: new Int32Array(nFibre),
     centre: new Float64Array(nFibre),
@@ -127,36 +136,57 @@ export interface LocalSystem {
   rhs: Float64Array;
 }
 
+/** Derivatives of a column's pixels by the local unknowns: [nFibre × nPar × n], 0 beyond the local reach and off the frame. */
+export function localDesign(profiles: ColumnProfiles, flux: Float64Array, nPar: number): Float64Array {
+  const { nFibre, n, margin, first, ny } = profiles;
+  const design = new Float64Array(nFibre * nPar * n);
+  for (let k = 0; k < nFibre; k++) {
+    const from = Math.max(margin, -first[k]);
+    const to = Math.min(n - margin, ny - first[k]);
+    const at = k * nPar * n;
+    for (let i = from; i < to; i++) {
+      design[at + i] = profiles.weights[k * n + i];
+      if (nPar > 1) design[at + n + i] = flux[k] * profiles.byCentre[k * n + i];
+      if (nPar > 2) design[at + 2 * n + i] = flux[k] * profiles.byWidth[k * n + i];
+    }
+  }
+  return design;
+}
+
 /** Normal equations of the column's residuals [ny] in the fibres' local unknowns. `nPar`: 1 flux, 2 and shift, 3 and width. */
 export function localSystem(
   profiles: ColumnProfiles,
-  flux: Float64Array,
+  design: Float64Array,
   residual: Float64Array,
   inverseVariance: Float64Array,
   nPar: number,
 ): LocalSystem {
-  const { nFibre, n, first } = profiles;
+  const { nFibre, n, margin, first, ny } = profiles;
   const neighbours = overlapping(profiles);
   const halfBandwidth = nPar * (neighbours + 1) - 1;
   const row = halfBandwidth + 1;
   const band = new Float64Array(nFibre * nPar * row);
   const rhs = new Float64Array(nFibre * nPar);
-  const design = (k: number, p: number, at: number) =>
-    p === 0 ? profiles.weights[at] : flux[k] * (p === 1 ? profiles.byCentre[at] : profiles.byWidth[at]);
+  const weighted = new Float64Array(n);
   for (let k = 0; k < nFibre; k++) {
-    for (let m = Math.max(0, k - neighbours); m <= k; m++) {
-      const from = Math.max(first[k], first[m], 0);
-      const to = Math.min(first[m] + n, profiles.ny);
-      for (let y = from; y < to; y++) {
-        const w = inverseVariance[y];
-        if (w === 0) continue;
-        const [atK, atM] = [k * n + y - first[k], m * n + y - first[m]];
-        for (let p = 0; p < nPar; p++) {
-          const own = w * design(k, p, atK);
-          for (let q = 0; q < nPar && m * nPar + q <= k * nPar + p; q++) {
-            band[(k * nPar + p) * row + (k - m) * nPar + p - q] += own * design(m, q, atM);
-          }
-          if (m === k) rhs[k * nPar + p] += own * residual[y];
+    const low = Math.max(margin, -first[k]);
+    const high = Math.min(n - margin, ny - first[k]);
+    for (let p = 0; p < nPar; p++) {
+      const own = (k * nPar + p) * n;
+      let sum = 0;
+      for (let i = low; i < high; i++) {
+        weighted[i] = design[own + i] * inverseVariance[first[k] + i];
+        sum += weighted[i] * residual[first[k] + i];
+      }
+      rhs[k * nPar + p] = sum;
+      for (let m = Math.max(0, k - neighbours); m <= k; m++) {
+        const ahead = first[k] - first[m];
+        const to = Math.min(high, n - margin - ahead);
+        for (let q = 0; q < nPar && m * nPar + q <= k * nPar + p; q++) {
+          const other = (m * nPar + q) * n + ahead;
+          let product = 0;
+          for (let i = low; i < to; i++) product += weighted[i] * design[other + i];
+          band[(k * nPar + p) * row + (k - m) * nPar + p - q] = product;
         }
       }
     }
@@ -166,8 +196,8 @@ export function localSystem(
 
 /** Joint fluxes of the column: [nFibre] e⁻. */
 export function columnFlux(profiles: ColumnProfiles, light: Float64Array, inverseVariance: Float64Array): Float64Array {
-  const unit = new Float64Array(profiles.nFibre).fill(1);
-  const { band, rhs, halfBandwidth } = localSystem(profiles, unit, light, inverseVariance, 1);
+  const design = localDesign(profiles, profiles.centre, 1);
+  const { band, rhs, halfBandwidth } = localSystem(profiles, design, light, inverseVariance, 1);
   factorBand(band, profiles.nFibre, halfBandwidth);
   solveBand(band, profiles.nFibre, halfBandwidth, rhs);
   return rhs;
@@ -180,9 +210,11 @@ export function forRows(profiles: ColumnProfiles, k: number, visit: (row: number
   for (let row = Math.max(first[k], 0); row < to; row++) visit(row, k * n + row - first[k]);
 }
 
-/** How many fibres further the last one stands whose window meets a fibre's own. */
-function overlapping({ first, n, nFibre }: ColumnProfiles): number {
+/** How many fibres further the last one stands whose local window meets a fibre's own. */
+function overlapping({ first, n, margin, nFibre }: ColumnProfiles): number {
   let most = 0;
-  for (let k = 0; k < nFibre; k++) while (k - most - 1 >= 0 && first[k] - first[k - most - 1] < n) most++;
+  for (let k = 0; k < nFibre; k++) {
+    while (k - most - 1 >= 0 && first[k] - first[k - most - 1] < n - 2 * margin) most++;
+  }
   return most;
 }

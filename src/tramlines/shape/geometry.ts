@@ -6,8 +6,8 @@ import type { Kernels } from "../../kernels/module.js";
 import { factorBand, inverseBand, solveBand } from "../../reference/banded.js";
 import { legendreArgument } from "../../reference/legendre.js";
 import type { ShapeTable } from "../../reference/shape.js";
-import { type ColumnData, columnProfiles, type Lines, localSystem } from "./column.js";
-import { backgroundColumn, nearReach, settleColumn } from "./step.js";
+import { type ColumnData, type Lines, localDesign, localSystem } from "./column.js";
+import { backgroundColumn, settleColumn, wholeProfiles } from "./step.js";
 
 /** Shifts and changes of width of all fibres in one column, pixels, with their variances. */
 export interface LocalGeometry {
@@ -26,12 +26,18 @@ export function measureColumn(
   background: Float64Array,
   data: ColumnData,
 ): LocalGeometry {
-  const profiles = columnProfiles(lines, table, data.x, nearReach(lines, table));
+  const profiles = wholeProfiles(lines, table, data.x);
   const smooth = backgroundColumn(background, data.x, lines);
   const level = data.light.map((light, y) => light - smooth[y]);
-  const { flux, model } = settleColumn(profiles, profiles, data, level, smooth);
+  const { flux, model } = settleColumn(profiles, data, level, smooth);
   const residual = level.map((light, y) => light - model[y]);
-  const { band, rhs, halfBandwidth } = localSystem(profiles, flux, residual, data.inverseVariance, 3);
+  const { band, rhs, halfBandwidth } = localSystem(
+    profiles,
+    localDesign(profiles, flux, 3),
+    residual,
+    data.inverseVariance,
+    3,
+  );
   factorBand(band, rhs.length, halfBandwidth);
   solveBand(band, rhs.length, halfBandwidth, rhs);
   const inverse = inverseBand(band, rhs.length, halfBandwidth);

@@ -4,19 +4,19 @@
 import type { Kernels } from "../../kernels/module.js";
 import { NormalMatrix } from "../../kernels/rankUpdate.js";
 import { factorBand, solveBand } from "../../reference/banded.js";
-import { legendreArgument } from "../../reference/legendre.js";
+import { legendreArgument, legendreValue } from "../../reference/legendre.js";
 import { centroidOf, nShapeTerm, type ShapeTable } from "../../reference/shape.js";
 import type { KnownShape } from "../tramlines.js";
-import { basisAt, type ShapeBasis } from "./basis.js";
+import { basisAt, emptyEdge, type ShapeBasis } from "./basis.js";
 import {
   type ColumnData,
   type ColumnProfiles,
   columnFlux,
   columnModel,
   columnProfiles,
-  forRows,
   type Lines,
   type LocalSystem,
+  localDesign,
   localSystem,
   weighColumn,
 } from "./column.js";
@@ -27,10 +27,6 @@ export const nBackgroundY = 5;
 export const nBackground = nBackgroundX * nBackgroundY;
 /** Pixels, at the basis's width, to which fibres' local unknowns reach. */
 const localReach = 14;
-/** Terms beyond the first may reach these shares of it: in the core, and in the wings, which hardly change. */
-const coreShare = 0.2;
-const wingShare = 0.05;
-const wingBegins = 4.2;
 
 /** Unknowns: shape coefficients [nSpline × nShapeTerm], then background. */
 export interface ShapeState {
@@ -51,6 +47,8 @@ export class ShapeNormal {
   freedom = 0;
   private readonly matrix: NormalMatrix;
   private readonly n: number;
+  /** ny × nBackgroundY: Legendre polynomials of the rows. */
+  private readonly inY: Float64Array;
 
   constructor(
     kernels: Kernels,
@@ -61,6 +59,8 @@ export class ShapeNormal {
     this.nUnknown = basis.nSpline * nShapeTerm + nBackground;
     // One column more holds the residuals: their products with the design are the right-hand side.
     this.n = this.nUnknown + 1 + ((this.nUnknown + 1) % 2);
+    this.inY = new Float64Array(ny * nBackgroundY);
+    for (let y = 0; y < ny; y++) this.inY.set(polynomials(legendreArgument(y, ny), nBackgroundY), y * nBackgroundY);
     this.matrix = new NormalMatrix(kernels, this.n, Math.max(ny, 3 * nFibre));
   }
 
@@ -73,18 +73,19 @@ export class ShapeNormal {
     holdCentres: boolean,
     clip = 0,
   ): void {
-    const profiles = columnProfiles(lines, table, data.x, -table.start * widest(lines, table));
-    const near = columnProfiles(lines, table, data.x, nearReach(lines, table));
+    const profiles = wholeProfiles(lines, table, data.x);
     const smooth = backgroundColumn(background, data.x, lines);
     const level = data.light.map((light, y) => light - smooth[y]);
-    const { flux, model } = settleColumn(near, profiles, data, level, smooth);
+    const { flux, model } = settleColumn(profiles, data, level, smooth);
     const residual = level.map((light, y) => light - model[y]);
     for (let y = 0; clip > 0 && y < this.ny; y++) {
       if (residual[y] * residual[y] * data.inverseVariance[y] > clip * clip) data.inverseVariance[y] = 0;
     }
-    const local = localSystem(near, flux, residual, data.inverseVariance, holdCentres ? 1 : 3);
+    const nPar = holdCentres ? 1 : 3;
+    const design = localDesign(profiles, flux, nPar);
+    const local = localSystem(profiles, design, residual, data.inverseVariance, nPar);
     this.fillDesign(profiles, table, flux, data.x, residual, lines);
-    const cross = this.crossProducts(near, local, flux, data.inverseVariance);
+    const cross = this.crossProducts(profiles, design, nPar, data.inverseVariance);
     for (let y = 0; y < this.ny; y++) {
       this.matrix.weights[y] = data.inverseVariance[y];
       this.chi2 += residual[y] * residual[y] * data.inverseVariance[y];
@@ -171,33 +172,32 @@ export class ShapeNormal {
     residual: Float64Array,
     lines: Lines,
   ): void {
-    const { n, basis, ny } = this;
-    const { nSpline } = basis;
+    const { n, basis, ny, inY } = this;
+    const nShape = basis.nSpline * nShapeTerm;
     const rows = this.matrix.rows;
     rows.fill(0, 0, ny * n);
-    let [below, above] = [new Float64Array(nSpline), new Float64Array(nSpline)];
+    let [below, above] = [emptyEdge(basis), emptyEdge(basis)];
     for (let k = 0; k < profiles.nFibre; k++) {
+      const terms = profiles.terms[k];
       const scale = table.referenceWidth / profiles.width[k];
-      const origin = centroidOf(table, profiles.terms[k]);
-      const v = (row: number) => (row - profiles.centre[k]) * scale + origin;
-      let lastRow = Number.NaN;
-      forRows(profiles, k, (row) => {
-        if (row !== lastRow) basisAt(basis, v(row - 0.5), below);
-        basisAt(basis, v(row + 0.5), above);
-        for (let j = 0; j < nSpline; j++) {
-          const light = flux[k] * (above[j] - below[j]);
-          if (light === 0) continue;
-          for (let m = 0; m < nShapeTerm; m++) rows[row * n + j * nShapeTerm + m] += light * profiles.terms[k][m];
+      const origin = centroidOf(table, terms);
+      const from = Math.max(profiles.first[k], 0);
+      const to = Math.min(profiles.first[k] + profiles.n, ny);
+      basisAt(basis, (from - 0.5 - profiles.centre[k]) * scale + origin, below);
+      for (let row = from; row < to; row++) {
+        basisAt(basis, (row + 0.5 - profiles.centre[k]) * scale + origin, above);
+        for (let j = below.first; j <= above.last; j++) {
+          const light = flux[k] * (above.integral[j] - below.integral[j]);
+          const at = row * n + j * nShapeTerm;
+          for (let m = 0; m < nShapeTerm; m++) rows[at + m] += light * terms[m];
         }
         [below, above] = [above, below];
-        lastRow = row + 1;
-      });
+      }
     }
     const inX = polynomials(legendreArgument(x, lines.nx), nBackgroundX);
     for (let y = 0; y < ny; y++) {
-      const inY = polynomials(legendreArgument(y, ny), nBackgroundY);
       for (let i = 0; i < nBackground; i++) {
-        rows[y * n + nSpline * nShapeTerm + i] = inX[Math.floor(i / nBackgroundY)] * inY[i % nBackgroundY];
+        rows[y * n + nShape + i] = inX[(i / nBackgroundY) | 0] * inY[y * nBackgroundY + (i % nBackgroundY)];
       }
       rows[y * n + this.nUnknown] = residual[y];
     }
@@ -205,24 +205,24 @@ export class ShapeNormal {
 
   /** Local unknowns × (shape's unknowns and residual): Σ w · local · design. */
   private crossProducts(
-    near: ColumnProfiles,
-    local: LocalSystem,
-    flux: Float64Array,
+    profiles: ColumnProfiles,
+    local: Float64Array,
+    nPar: number,
     inverseVariance: Float64Array,
   ): Float64Array {
-    const { n } = this;
+    const { n, nUnknown } = this;
+    const { first, margin, ny } = profiles;
     const rows = this.matrix.rows;
-    const cross = new Float64Array(local.rhs.length * n);
-    for (let k = 0; k < near.nFibre; k++) {
-      forRows(near, k, (row, at) => {
-        const w = inverseVariance[row];
-        if (w === 0) return;
-        for (let p = 0; p < local.nPar; p++) {
-          const own = w * (p === 0 ? near.weights[at] : flux[k] * (p === 1 ? near.byCentre[at] : near.byWidth[at]));
-          const out = (k * local.nPar + p) * n;
-          for (let i = 0; i <= this.nUnknown; i++) cross[out + i] += own * rows[row * n + i];
-        }
-      });
+    const cross = new Float64Array(profiles.nFibre * nPar * n);
+    for (let unknown = 0; unknown < profiles.nFibre * nPar; unknown++) {
+      const start = first[(unknown / nPar) | 0];
+      const to = Math.min(profiles.n - margin, ny - start);
+      for (let i = Math.max(margin, -start); i < to; i++) {
+        const own = inverseVariance[start + i] * local[unknown * profiles.n + i];
+        if (own === 0) continue;
+        const [out, from] = [unknown * n, (start + i) * n];
+        for (let c = 0; c <= nUnknown; c++) cross[out + c] += own * rows[from + c];
+      }
     }
     return cross;
   }
@@ -250,8 +250,7 @@ export class ShapeNormal {
     const { n, basis } = this;
     const c = state.coefficients;
     for (let j = 0; j < basis.nSpline; j++) {
-      const share = Math.abs(basis.middle[j]) > wingBegins ? wingShare : coreShare;
-      const sigma = share * Math.max(Math.abs(c[j * nShapeTerm]), 1e-6);
+      const sigma = Math.max(basis.priorShare[j] * Math.abs(c[j * nShapeTerm]), basis.priorSpread[j]);
       for (let m = 1; m < nShapeTerm; m++) {
         const i = j * nShapeTerm + m;
         normal[i * n + i] += 1 / (sigma * sigma);
@@ -262,7 +261,7 @@ export class ShapeNormal {
 
   private addGauges(normal: Float64Array, table: ShapeTable): void {
     const { n, basis } = this;
-    const gauges = [basis.whole, ...shiftAndWidth(basis, table)];
+    const gauges = [basis.whole, ...(basis.canMove ? shiftAndWidth(basis, table) : [])];
     for (let m = 0; m < nShapeTerm; m++) {
       let strength = 0;
       for (let j = 0; j < basis.nSpline; j++) {
@@ -312,13 +311,10 @@ function normalise(c: Float64Array, basis: ShapeBasis): void {
 /** The background on every row of column x: [ny] e⁻. */
 export function backgroundColumn(background: Float64Array, x: number, lines: Lines): Float64Array {
   const inX = polynomials(legendreArgument(x, lines.nx), nBackgroundX);
-  return Float64Array.from({ length: lines.ny }, (_, y) => {
-    const inY = polynomials(legendreArgument(y, lines.ny), nBackgroundY);
-    let sum = 0;
-    for (let i = 0; i < nBackground; i++)
-      sum += background[i] * inX[Math.floor(i / nBackgroundY)] * inY[i % nBackgroundY];
-    return sum;
-  });
+  const series = Float64Array.from({ length: nBackgroundY }, (_, j) =>
+    inX.reduce((sum, p, i) => sum + p * background[i * nBackgroundY + j], 0),
+  );
+  return Float64Array.from({ length: lines.ny }, (_, y) => legendreValue(series, legendreArgument(y, lines.ny)));
 }
 
 /** P_0 … P_{n−1} at t. */
@@ -329,32 +325,32 @@ function polynomials(t: number, n: number): Float64Array {
   return p;
 }
 
+/** Profiles out to their last trace of light; local unknowns as far as they matter. */
+export function wholeProfiles(lines: Lines, table: ShapeTable, x: number): ColumnProfiles {
+  const stretch = widest(lines, table);
+  return columnProfiles(lines, table, x, -table.start * stretch, localReach * (table.referenceWidth / 1.04) * stretch);
+}
+
 /** Fluxes and model of a column, with the weights that follow from them: from the data's noise first, then twice from the
- * model's. */
+ * model's. `level`: the light without the background `smooth`. */
 export function settleColumn(
-  near: ColumnProfiles,
-  whole: ColumnProfiles,
+  profiles: ColumnProfiles,
   data: ColumnData,
   level: Float64Array,
   smooth: Float64Array,
 ): { flux: Float64Array; model: Float64Array } {
   weighColumn(data, data.light);
-  let flux = columnFlux(near, level, data.inverseVariance);
-  let model = columnModel(whole, flux);
+  let flux = columnFlux(profiles, level, data.inverseVariance);
+  let model = columnModel(profiles, flux);
   for (let round = 0; round < 2; round++) {
     weighColumn(
       data,
       model.map((light, y) => light + smooth[y]),
     );
-    flux = columnFlux(near, level, data.inverseVariance);
-    model = columnModel(whole, flux);
+    flux = columnFlux(profiles, level, data.inverseVariance);
+    model = columnModel(profiles, flux);
   }
   return { flux, model };
-}
-
-/** Pixels to which fibres' local unknowns reach. */
-export function nearReach(lines: Lines, table: ShapeTable): number {
-  return localReach * (table.referenceWidth / 1.04) * widest(lines, table);
 }
 
 /** The widest fibre's width over the reference. */
