@@ -1,4 +1,5 @@
-/** Calibration images from stacks of frames: bias structure, dark current, pixel response, bad pixels.
+/** Calibration images from stacks of frames: bias structure, dark current, pixel response, bad pixels. Bias and dark are
+ * smooth images where their pixels show nothing of their own (`quiet.ts`).
  *
  *     bias     B  = mean over frames of gain·(ADU − overscan)
  *     dark     D  = Σ(e − B) / Σ t          e⁻/s
@@ -13,6 +14,9 @@ import { DetectorError } from "./detectorError.js";
 import { darkSeconds } from "./exposure.js";
 import type { DetectorGeometry } from "./frame.js";
 import { requireSameGeometry } from "./geometry.js";
+import type { NoiseFrames } from "./noise.js";
+import { noiseWarnings } from "./noiseWarnings.js";
+import { halvesOf, type Quiet, quietImage } from "./quiet.js";
 import type { RawImage } from "./raw.js";
 import { percent, refuseImpossible } from "./rawSanity.js";
 import { type PixelResponse, pixelResponse } from "./response.js";
@@ -24,6 +28,8 @@ export interface DarkCurrent {
   rateVariance: Float32Array;
   /** Frames a second of dark time: how often the bias was taken off for each second, which ties its error to D's. */
   biasPerSecond: number;
+  /** ny × nx: 0 where the smooth rate of the amplifier stands in for the pixel's own; no bias error is left in that. */
+  own: Uint8Array;
   /** One a region: the rate where a pixel's own does not stand out of its noise, for variances only. */
   typicalRate: number[];
 }
@@ -42,6 +48,8 @@ export interface Calibrations {
   /** A frame of that readout, for messages. */
   geometryOf?: string;
   bias?: Stack;
+  /** ADU, one an amplifier: the bias frames' level above the overscan, or above 0 where there is none. */
+  zeroLevelAdu?: number[];
   dark?: DarkCurrent;
   response?: PixelResponse;
   /** As it was read: image of the assembled frame, not 0 where a pixel is not to be used. */
@@ -75,10 +83,16 @@ export function noCalibrations(): Calibrations {
 export async function makeCalibrations(frames: CalibrationFrames, spectrograph?: Spectrograph): Promise<Calibrations> {
   const made = noCalibrations();
   const bias = await assembled(frames.bias, "bias", made, spectrograph);
-  if (bias.length > 0) made.bias = stackBias(bias, made);
+  if (bias.length > 0) {
+    made.bias = stackBias(bias, made);
+    made.zeroLevelAdu = zeroLevels(made.bias, bias[0]);
+  }
   const dark = await assembled(frames.dark, "dark", made, spectrograph);
   if (dark.length > 0) made.dark = stackDark(dark, made);
   const flats = await assembled(frames.pixelFlat, "pixel flat", made, spectrograph);
+  const pairs: NoiseFrames = { bias: firstTwo(bias), flats: firstTwo(flats) };
+  if (made.zeroLevelAdu) pairs.zeroLevelAdu = made.zeroLevelAdu;
+  made.warnings.push(...noiseWarnings(pairs, spectrograph));
   if (flats.length > 0) made.response = stackFlats(flats, made);
   if (frames.badPixels) {
     if (made.geometry) badPixelMask(frames.badPixels, made.geometry); // complains early
@@ -90,6 +104,17 @@ export async function makeCalibrations(frames: CalibrationFrames, spectrograph?:
 
 interface CalibrationFrame extends Assembled {
   seconds: number;
+  /** The first two of a role: for gain and read noise. */
+  raw?: RawImage;
+}
+
+function firstTwo(frames: CalibrationFrame[]): RawImage[] {
+  return frames.flatMap(({ raw }) => (raw ? [raw] : []));
+}
+
+/** ADU, one an amplifier. */
+function zeroLevels({ mean }: Stack, { nx, regions }: CalibrationFrame): number[] {
+  return regions.map((region) => medianOf(thinned(cutOut(mean, nx, region))) / region.amplifier.gain);
 }
 
 async function assembled(
@@ -113,7 +138,8 @@ async function assembled(
     made.warnings.push(...checkRole(raw, frame, role), ...frame.layout.warnings);
     made.assumptions.push(...frame.layout.assumptions);
     made.inputs.push(inputOf(raw, role));
-    list.push({ ...frame, seconds: darkSeconds(raw) });
+    const kept = role !== "dark" && list.length < 2 ? { raw } : {};
+    list.push({ ...frame, ...kept, seconds: darkSeconds(raw) });
   }
   return list;
 }
@@ -145,41 +171,48 @@ export function requireReadNoise({ name, regions }: Assembled): void {
 }
 
 function stackBias(frames: CalibrationFrame[], made: Calibrations): Stack {
-  const { nx, ny } = frames[0];
-  const stack = combineFrames(
-    frames.map((frame) => ({ ...frame, scale: 1 })),
-    nx,
-    ny,
-    false,
-  );
+  const { nx, ny, regions } = frames[0];
+  const scaled = frames.map((frame) => ({ ...frame, scale: 1 }));
+  const stack = combineFrames(scaled, nx, ny, false);
   warnClipped(frames, stack, "bias", made);
+  const quiet = quietImage({ nx, ny, ...stack, regions, halves: halvesOf(scaled), shared: regions.map(() => 0) });
+  tellQuiet(frames, quiet, "bias", 1, made);
   return stack;
 }
 
 function stackDark(frames: CalibrationFrame[], made: Calibrations): DarkCurrent {
   const { nx, ny, regions } = frames[0];
   for (const frame of frames) subtractBias(frame, made.bias);
-  const stack = combineFrames(
-    frames.map((frame) => ({ ...frame, scale: frame.seconds })),
-    nx,
-    ny,
-    true,
-  );
+  const scaled = frames.map((frame) => ({ ...frame, scale: frame.seconds }));
+  const stack = combineFrames(scaled, nx, ny, true);
   warnClipped(frames, stack, "dark", made);
   const seconds = frames.reduce((sum, frame) => sum + frame.seconds, 0);
-  const dark: DarkCurrent = {
-    rate: stack.mean,
-    rateVariance: stack.variance,
-    biasPerSecond: made.bias ? frames.length / seconds : 0,
-    typicalRate: regions.map((region) => Math.max(0, medianOf(thinned(cutOut(stack.mean, nx, region))))),
-  };
+  const biasPerSecond = made.bias ? frames.length / seconds : 0;
+  const typicalRate = regions.map((region) => Math.max(0, medianOf(thinned(cutOut(stack.mean, nx, region)))));
+  const shared = regions.map((region) =>
+    made.bias ? biasPerSecond ** 2 * medianOf(thinned(cutOut(made.bias.variance, nx, region))) : 0,
+  );
+  const quiet = quietImage({ nx, ny, ...stack, regions, halves: halvesOf(scaled), shared });
+  tellQuiet(frames, quiet, "dark", seconds / frames.length, made);
+  const { own } = quiet;
+  const dark: DarkCurrent = { rate: stack.mean, rateVariance: stack.variance, biasPerSecond, own, typicalRate };
   regions.forEach((region, k) => {
     forEachPixel(region, nx, (at) => {
-      if (hasOwnRate(dark, at)) return;
+      if (own[at] === 0 || hasOwnRate(dark, at)) return;
       dark.rateVariance[at] += (dark.typicalRate[k] - Math.max(0, dark.rate[at])) / seconds;
     });
   });
   return dark;
+}
+
+function tellQuiet(frames: CalibrationFrame[], quiet: Quiet, role: "bias" | "dark", scale: number, made: Calibrations) {
+  const told = frames[0].regions.filter((_, k) => quiet.isQuiet[k]).map(({ amplifier }) => amplifier.number);
+  if (told.length === 0) return;
+  const worst = scale * Math.max(...quiet.patternBelow.filter((_, k) => quiet.isQuiet[k]));
+  const called = told.length === 1 ? `amplifier ${told[0]}` : `amplifiers ${told.join(", ")}`;
+  made.assumptions.push(
+    `${frames[0].name}: ${called}: the ${role} frames agree on no difference between pixels over ${worst.toFixed(2)} e⁻ rms, so a smooth ${role}, with the pixels that stand out, is taken off instead of each pixel's own noise.`,
+  );
 }
 
 /** A rate counts as a pixel's own, in variances, from this many of its σ: below it the noise of the rate would make the

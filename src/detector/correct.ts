@@ -3,12 +3,12 @@
  *     fixed = (readNoise² + zero level + dark·t + (1 − t·k)²·σ²(bias) + t²·σ²(dark)) / r²        e⁻²
  *
  * where k is how often the bias was taken off for each second of dark time: bias and dark share their bias stack, and
- * its error enters once. */
+ * its error enters once. Where a smooth dark stands in for the pixel's own, none of it is in the dark: k = 0. */
 import type { Spectrograph } from "../spectrograph.js";
 import { detectorLayout } from "./amplifiers.js";
 import { type Assembled, assemble } from "./assemble.js";
 import { badPixelMask } from "./badpixels.js";
-import { type Calibrations, hasOwnRate, requireReadNoise, requireZeroLevel } from "./calibrations.js";
+import { type Calibrations, type DarkCurrent, hasOwnRate, requireReadNoise, requireZeroLevel } from "./calibrations.js";
 import { DetectorError } from "./detectorError.js";
 import { darkSeconds, exposureSeconds } from "./exposure.js";
 import { type Frame, MaskBit, type NoiseIngredients } from "./frame.js";
@@ -133,14 +133,14 @@ function readNoiseBands(frame: Assembled): NoiseIngredients {
 function fixedVarianceImage(frame: Assembled, { bias, dark, response }: Calibrations, seconds: number): Float32Array {
   const { nx, ny, regions } = frame;
   const variance = new Float32Array(nx * ny).fill(Number.NaN);
-  const biasShare = dark ? (1 - seconds * dark.biasPerSecond) ** 2 : 1;
+  const biasShareOfOwn = dark ? (1 - seconds * dark.biasPerSecond) ** 2 : 1;
   regions.forEach((region, k) => {
     for (let y = region.y0; y < region.y1; y++) {
       for (let at = y * nx + region.x0; at < y * nx + region.x1; at++) {
         let v = region.readVariance;
-        if (bias) v += biasShare * bias.variance[at];
+        if (bias) v += (dark?.own[at] ? biasShareOfOwn : 1) * bias.variance[at];
         if (dark) {
-          const rate = hasOwnRate(dark, at) ? dark.rate[at] : dark.typicalRate[k];
+          const rate = varianceRate(dark, at, k);
           v += rate * seconds + dark.rateVariance[at] * seconds * seconds;
         }
         variance[at] = response ? v / response.response[at] ** 2 : v;
@@ -148,6 +148,12 @@ function fixedVarianceImage(frame: Assembled, { bias, dark, response }: Calibrat
     }
   });
   return variance;
+}
+
+/** e⁻/s: never a rate that follows the noise of the dark frames. */
+function varianceRate(dark: DarkCurrent, at: number, region: number): number {
+  if (dark.own[at] === 0) return Math.max(0, dark.rate[at]);
+  return hasOwnRate(dark, at) ? dark.rate[at] : dark.typicalRate[region];
 }
 
 /** One of each, whatever frame it was said of: fifteen calibration frames share their assumptions. */

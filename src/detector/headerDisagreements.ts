@@ -17,17 +17,24 @@ export function disagrees(given: number, measured: Measured): boolean {
   return off > MOST_OFF * measured.value && off > SURE_SIGMAS * measured.error;
 }
 
-/** "gain of amplifier 1 is 1.3 e⁻/ADU, but 1.18 ± 0.01 was measured": one sentence. */
+/** One sentence: what is given, what is measured, and what error bars `tooLarge` times the true ones come of it. */
 export function disagreement(
   name: string,
   amplifier: number,
   what: "gain" | "read noise",
   given: number,
   measured: Measured,
+  tooLarge: number,
 ): string {
   const unit = what === "gain" ? "e⁻/ADU" : "e⁻";
   const digits = Math.max(2, 1 - Math.floor(orderOf(measured.error)));
-  return `${name}: the ${what} of amplifier ${amplifier} is given as ${Number(given.toPrecision(6))} ${unit}, but ${measured.value.toFixed(digits)} ± ${measured.error.toFixed(digits)} ${unit} is measured; every error bar hangs on it, so give the right one in the spectrograph file.`;
+  const light = what === "gain" ? "bright" : "faint";
+  const fluxes = what === "gain" ? ` and every flux ${timesOff(given / measured.value)}` : "";
+  return `${name}: the ${what} of amplifier ${amplifier} is given as ${Number(given.toPrecision(6))} ${unit}, but ${measured.value.toFixed(digits)} ± ${measured.error.toFixed(digits)} ${unit} is measured; it makes the error bars of ${light} light ${timesOff(tooLarge)}${fluxes}, so give the right one in the spectrograph file.`;
+}
+
+function timesOff(ratio: number): string {
+  return ratio > 1 ? `${ratio.toFixed(2)} times too large` : `${(1 / ratio).toFixed(2)} times too small`;
 }
 
 /** Read noise of each amplifier against its overscan. Converters add a twelfth of a count squared; that is part of it. */
@@ -39,7 +46,8 @@ export function headerDisagreements(name: string, regions: Region[]): string[] {
       error: amplifier.gain * overscan.readNoiseErrorAdu,
     };
     if (!disagrees(amplifier.readNoise, measured)) return [];
-    return [disagreement(name, amplifier.number, "read noise", amplifier.readNoise, measured)];
+    const tooLarge = amplifier.readNoise / measured.value;
+    return [disagreement(name, amplifier.number, "read noise", amplifier.readNoise, measured, tooLarge)];
   });
 }
 

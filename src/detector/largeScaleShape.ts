@@ -127,3 +127,18 @@ function dot(a: Float64Array, b: Float64Array): number {
   for (let i = 0; i < a.length; i++) sum += a[i] * b[i];
   return sum;
 }
+
+/** Variance of the shape at a pixel for unit variance of every pixel, were all used: Legendre series are nearly orthogonal
+ * on an even grid, Σ (2j + 1) P_j(t)² / n along each axis. The shape's edges are worse known than its middle. */
+export function largeScaleLeverage(region: Region): (x: number, y: number) => number {
+  const alongX = leverages(region.x0, region.x1);
+  const alongY = leverages(region.y0, region.y1);
+  return (x, y) => alongX[x - region.x0] * alongY[y - region.y0];
+}
+
+function leverages(from: number, to: number): Float64Array {
+  const { terms } = axisTerms(from, to);
+  return Float64Array.from({ length: to - from }, (_, i) =>
+    terms(from + i).reduce((sum, value, j) => sum + ((2 * j + 1) * value * value) / (to - from), 0),
+  );
+}

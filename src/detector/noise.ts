@@ -43,6 +43,8 @@ export interface NoiseFrames {
   bias?: RawImage[];
   /** Two or more of the same light: neighbours are paired. */
   flats?: RawImage[];
+  /** ADU, one an amplifier: the level of frames without light, for amplifiers without overscan when no bias is given. */
+  zeroLevelAdu?: number[];
 }
 
 export interface NoiseOptions {
@@ -53,7 +55,7 @@ export interface NoiseOptions {
 /** Measures what the frames allow; errors are one σ.
  * @throws DetectorError when no frame is given, or a pair is of different layouts. */
 export function measureNoise(
-  { frames = [], bias = [], flats = [] }: NoiseFrames,
+  { frames = [], bias = [], flats = [], zeroLevelAdu = [] }: NoiseFrames,
   spectrograph?: Spectrograph,
   { mostPixels = Number.POSITIVE_INFINITY }: NoiseOptions = {},
 ): NoiseMeasurement {
@@ -63,10 +65,11 @@ export function measureNoise(
   const first = layouts.get(all[0])!;
   for (const raw of all) requireSameSections(all[0], first, raw, layouts.get(raw)!);
   const result: NoiseMeasurement = { amplifiers: [], disagreements: [], warnings: [] };
-  for (const amplifier of first.amplifiers) {
+  for (const [i, amplifier] of first.amplifiers.entries()) {
+    if (amplifier.biasLevelAdu === undefined && zeroLevelAdu[i] !== undefined) amplifier.biasLevelAdu = zeroLevelAdu[i];
     const noise = measureAmplifier(amplifier, first, all, bias, flats, mostPixels, result.warnings);
     result.amplifiers.push(noise);
-    result.disagreements.push(...disagreementsOf(all[0].name, noise));
+    result.disagreements.push(...noiseDisagreements({ frames, bias, flats }, noise));
   }
   return result;
 }
@@ -117,7 +120,7 @@ function measureAmplifier(
   if (gain) noise.gain = gain;
   else if (gains.length > 0) {
     warnings.push(
-      `${flats[0].name}: amplifier ${amplifier.number}: too little light, or too few pixels, in the pair of flats to measure its gain.`,
+      `${flats[0].name}: amplifier ${amplifier.number}: too little light, or not the same light, in the pair of flats to measure its gain.`,
     );
   }
   const used = gain ?? { value: amplifier.gain, error: 0 };
@@ -129,12 +132,24 @@ function measureAmplifier(
   return noise;
 }
 
-function disagreementsOf(name: string, noise: AmplifierNoise): string[] {
+/** Sentences for an amplifier whose gain or read noise is off by over 10 %. Error bars of bright light go as √gain over
+ * the light's e⁻, those of faint light as the read noise over the scatter in e⁻ of the given gain.
+ * @param withReadNoise whether the read noise is told too. */
+export function noiseDisagreements(
+  { frames = [], bias = [], flats = [] }: NoiseFrames,
+  { amplifier, givenGain, givenReadNoise, gain, readNoise, readNoiseAdu }: AmplifierNoise,
+  withReadNoise = true,
+): string[] {
   const sentences: string[] = [];
-  const { amplifier, givenGain, givenReadNoise, gain, readNoise } = noise;
-  if (gain && disagrees(givenGain, gain)) sentences.push(disagreement(name, amplifier, "gain", givenGain, gain));
-  if (readNoise && disagrees(givenReadNoise, readNoise)) {
-    sentences.push(disagreement(name, amplifier, "read noise", givenReadNoise, readNoise));
+  if (gain && disagrees(givenGain, gain)) {
+    const tooLarge = Math.sqrt(gain.value / givenGain);
+    sentences.push(disagreement(flats[0].name, amplifier, "gain", givenGain, gain, tooLarge));
+  }
+  if (withReadNoise && readNoise && readNoiseAdu && disagrees(givenReadNoise, readNoise)) {
+    const { name } = [...bias, ...frames, ...flats][0];
+    const scatter = Number.isNaN(givenGain) ? readNoise.value : readNoiseAdu.value * givenGain;
+    const tooLarge = givenReadNoise / scatter;
+    sentences.push(disagreement(name, amplifier, "read noise", givenReadNoise, readNoise, tooLarge));
   }
   return sentences;
 }

@@ -61,12 +61,20 @@ interface Exposure {
   seconds: number;
   electrons: (x: number, y: number) => number;
   noise?: boolean;
+  /** Bias and dark differ from pixel to pixel, by 3 ADU and 0.012 e⁻/s rms. */
+  rough?: boolean;
 }
+
+/** A pattern without rows, columns or slopes: white, rms 1, from −√3 to √3. */
+const pattern = (x: number, y: number, seed: number) => {
+  const wave = Math.sin(12.9898 * x + 78.233 * y + seed) * 43758.5453;
+  return Math.sqrt(12) * (wave - Math.floor(wave) - 0.5);
+};
 
 /** Forward model: electrons × response + dark, Poisson, read noise, gain, bias structure, drifting level, whole counts. */
 function expose(layout: Layout, exposure: Exposure, seed: number, drift = 1): RawImage {
   const next = seeded(seed);
-  const { name, kind, seconds, electrons, noise = true } = exposure;
+  const { name, kind, seconds, electrons, noise = true, rough = false } = exposure;
   const cards = { ...layout.cards, IMAGETYP: kind, EXPTIME: seconds };
   return rawFrame(name, layout.nx, layout.ny, cards, (fx, fy) => {
     const place = layout.placeOf(fx, fy);
@@ -75,9 +83,10 @@ function expose(layout: Layout, exposure: Exposure, seed: number, drift = 1): Ra
     const mean = place
       ? electrons(place.x, place.y) * response(place.x, place.y) + darkRate(place.x, place.y) * seconds
       : 0;
-    const structure = place ? biasAdu(place.x, place.y) : 0;
+    const roughDark = place && rough ? 0.06 * (1 + 0.2 * pattern(place.x, place.y, 1)) * seconds : 0;
+    const structure = place ? biasAdu(place.x, place.y) + (rough ? 3 * pattern(place.x, place.y, 2) : 0) : 0;
     if (!noise) return level + structure + mean / GAINS[amplifier];
-    const counts = poissonDeviate(mean, next) + NOISES[amplifier] * normalDeviate(next);
+    const counts = poissonDeviate(mean + roughDark, next) + NOISES[amplifier] * normalDeviate(next);
     return Math.round(level + structure + counts / GAINS[amplifier]);
   });
 }
@@ -100,13 +109,13 @@ function pullsOf(frame: Frame, truth: (x: number, y: number) => number): number[
 
 const LAYOUT = quadrants();
 const SKY: Exposure = { name: "sci.fits", kind: "object", seconds: 1500, electrons: light };
-const biasFrames = (n: number, seed = 100) =>
+const biasFrames = (n: number, seed = 100, rough = false) =>
   Array.from({ length: n }, (_, i) =>
-    expose(LAYOUT, { name: `bias${i}.fits`, kind: "bias", seconds: 0, electrons: () => 0 }, seed + i),
+    expose(LAYOUT, { name: `bias${i}.fits`, kind: "bias", seconds: 0, electrons: () => 0, rough }, seed + i),
   );
-const darkFrames = (n: number, seconds: number, seed = 200) =>
+const darkFrames = (n: number, seconds: number, seed = 200, rough = false) =>
   Array.from({ length: n }, (_, i) =>
-    expose(LAYOUT, { name: `dark${i}.fits`, kind: "dark", seconds, electrons: () => 0 }, seed + i),
+    expose(LAYOUT, { name: `dark${i}.fits`, kind: "dark", seconds, electrons: () => 0, rough }, seed + i),
   );
 const flatFrames = (n: number, seed = 300) =>
   Array.from({ length: n }, (_, i) => {
@@ -148,17 +157,45 @@ describe("one frame through the whole equation", () => {
 
   it("counts the bias stack's variance once though dark and frame share it", async () => {
     // Two bias frames, two darks of 500 s, a frame of 1500 s: the bias enters 1 − 1500·2/1000 = −2 times.
-    const calibrations = await makeCalibrations({ bias: biasFrames(2, 500), dark: darkFrames(2, 500, 600) });
+    const calibrations = await makeCalibrations({
+      bias: biasFrames(2, 500, true),
+      dark: darkFrames(2, 500, 600, true),
+    });
     expect(calibrations.dark!.biasPerSecond).toBeCloseTo(2 / 1000, 12);
-    const frame = correctFrame(expose(LAYOUT, { ...SKY, electrons: () => 0 }, 9), calibrations);
-    const at = 3 * NX + 10;
+    // Every pixel differs, so every one keeps its own.
+    expect(calibrations.dark!.own.every((own) => own === 1)).toBe(true);
+    const frame = correctFrame(expose(LAYOUT, { ...SKY, electrons: () => 0, rough: true }, 9), calibrations);
+    const median = (values: Float32Array) => values.slice().sort()[values.length >> 1];
+    const ofFirst = frame.noise.fixedVarianceImage!.filter((_, at) => at % NX < 50 && at < 40 * NX);
     const read = NOISES[0] ** 2;
-    // read noise + 4 × bias variance + dark variance × t²: 1 + 4/2 + 2·9/4 = 7.5 read noise variances, and dark shot noise.
-    expect(frame.noise.fixedVarianceImage![at] / read).toBeGreaterThan(7.5);
-    expect(frame.noise.fixedVarianceImage![at] / read).toBeLessThan(9.5);
+    // Read noise + 4 × bias variance + dark variance × t²: 1 + 4/2 + 2·9/4 = 7.5 read noise variances; and dark of
+    // 0.064 e⁻/s, 96 e⁻ in the frame and 96 · 1500/1000 in what is taken off: 240 e⁻² more.
+    expect(Math.abs(median(ofFirst) / (7.5 * read + 240) - 1)).toBeLessThan(0.06);
     const { sigma, mean, n } = momentsOf(pullsOf(frame, () => 0));
+    expect(Math.abs(sigma - 1)).toBeLessThan(0.04);
+    expect(Math.abs(mean)).toBeLessThan(5 / Math.sqrt(n));
+  });
+
+  it("adds no noise of bias and dark frames whose pixels show nothing of their own, hot ones aside", async () => {
+    const calibrations = await makeCalibrations({ bias: biasFrames(2, 500), dark: darkFrames(2, 1500, 600) });
+    const hot = (x: number, y: number) => (x * 7 + y * 13) % 97 === 0;
+    calibrations.dark!.own.forEach((own, at) => {
+      if (hot(at % NX, Math.floor(at / NX))) expect(own).toBe(1);
+    });
+    expect(calibrations.dark!.own.reduce((sum, own) => sum + own, 0)).toBeLessThan((NX * NY) / 90);
+    expect(calibrations.assumptions.filter((text) => text.includes("so a smooth "))).toHaveLength(2);
+    const frame = correctFrame(expose(LAYOUT, { ...SKY, electrons: () => 0 }, 9), calibrations);
+    const at = 20 * NX + 25;
+    // Dark of 0.004 e⁻/s in 1500 s has 6 e⁻; one by one the stacks would add (1 − 1)² of the bias and half of read² + 6.
+    expect(frame.noise.fixedVarianceImage![at] / (NOISES[0] ** 2 + 6)).toBeGreaterThan(0.97);
+    expect(frame.noise.fixedVarianceImage![at] / (NOISES[0] ** 2 + 6)).toBeLessThan(1.15);
+    const pulls = pullsOf(frame, () => 0);
+    const { sigma, mean, n } = momentsOf(pulls);
     expect(Math.abs(sigma - 1)).toBeLessThan(0.03);
     expect(Math.abs(mean)).toBeLessThan(5 / Math.sqrt(n));
+    const ofHot = momentsOf(pulls.filter((_, i) => hot(i % NX, Math.floor(i / NX))));
+    expect(Math.abs(ofHot.mean)).toBeLessThan(5 / Math.sqrt(ofHot.n));
+    expect(Math.abs(ofHot.sigma - 1)).toBeLessThan(4 / Math.sqrt(2 * ofHot.n));
   });
 
   it("without calibration images keeps its variance in a table of bands", () => {
@@ -272,10 +309,12 @@ describe("one frame through the whole equation", () => {
     const { mean, sigma, n } = momentsOf(
       frame.electrons.map((value, at) => value - 150 * (1 + (Math.floor(at / 60) % 5))),
     );
-    const expected = Math.sqrt((16 + 1.5 ** 2 / 12) * 1.25);
+    // The four bias frames' pixels are alike, so their mean level is taken off and adds next to nothing.
+    const expected = Math.sqrt(16 + 1.5 ** 2 / 12);
     expect(Math.abs(mean)).toBeLessThan((4 * expected) / Math.sqrt(n));
     expect(Math.abs(sigma / expected - 1)).toBeLessThan(4 / Math.sqrt(2 * n));
-    expect(frame.noise.fixedVarianceImage![0]).toBeCloseTo(16 * 1.25, 3);
+    expect(frame.noise.fixedVarianceImage![30 + 25 * 60]).toBeGreaterThan(16);
+    expect(frame.noise.fixedVarianceImage![30 + 25 * 60]).toBeLessThan(16.5);
     const told = { file: "s.toml", detector: { amplifiers: [{ biasLevelAdu: 700 }] } };
     expect(Math.abs(momentsOf(correctFrame(science, noCalibrations(), told).electrons).mean - 450)).toBeLessThan(0.4);
   });

@@ -90,11 +90,12 @@ describe("noise, measured", () => {
       flats: [exposed("f1.fits", 3, 15000, off), exposed("f2.fits", 4, 15000, off)],
     });
     expect(disagreements).toHaveLength(2);
+    // √1.25 = 1.118; a scatter of 5.93 e⁻ (converter included) is one of 6.29 at a gain given 1.06 times too large: 1.33 × 4.72.
     expect(disagreements[0]).toMatch(
-      /^b1\.fits: the gain of amplifier 1 is given as 1\.6875 e⁻\/ADU, but 1\.3\d+ ± 0\.0\d+ e⁻\/ADU is measured; every error bar hangs on it, so give the right one in the spectrograph file\.$/,
+      /^f1\.fits: the gain of amplifier 1 is given as 1\.6875 e⁻\/ADU, but 1\.3\d+ ± 0\.0\d+ e⁻\/ADU is measured; it makes the error bars of bright light 1\.1[0-3] times too small and every flux 1\.2[1-9] times too large, so give the right one in the spectrograph file\.$/,
     );
     expect(disagreements[1]).toMatch(
-      /^b1\.fits: the read noise of amplifier 2 is given as 4\.72 e⁻, but [56]\.\d+ ± 0\.\d+ e⁻ is/,
+      /^b1\.fits: the read noise of amplifier 2 is given as 4\.72 e⁻, but [56]\.\d+ ± 0\.\d+ e⁻ is measured; it makes the error bars of faint light 1\.3[1-5] times too small, so give/,
     );
   });
 
@@ -117,7 +118,7 @@ describe("noise, measured", () => {
   it("says when flats are too faint, of another layout, or without a zero level", () => {
     const faint = measureNoise({ flats: [exposed("f1.fits", 3, 8), exposed("f2.fits", 4, 8)] });
     expect(faint.warnings[0]).toBe(
-      "f1.fits: amplifier 1: too little light, or too few pixels, in the pair of flats to measure its gain.",
+      "f1.fits: amplifier 1: too little light, or not the same light, in the pair of flats to measure its gain.",
     );
     expect(() => measureNoise({ bias: [bias[0], exposed("x.fits", 1, 0, { ...CARDS, XBINNING: 2 })] })).toThrow(
       "b1.fits and x.fits have different sections or sizes; noise is measured between frames of one readout.",
