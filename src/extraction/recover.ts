@@ -12,23 +12,25 @@
  *   are seen only in gaps and at slit ends.
  * - Read noise and gain that are wrong show in the frame's own dark positions only: elsewhere the frame's noise cancels. */
 import type { Frame } from "../detector/frame.js";
+import { loadKernels } from "../kernels/module.js";
 import { median } from "../reference/median.js";
 import { checkGeometry } from "../tramlines/file.js";
 import { combineFlats } from "../tramlines/flat.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
+import { adaptTramlines } from "./adapt.js";
 import { type Extraction, type ExtractionOptions, extractFrame } from "./extract.js";
 import { planExtraction } from "./plan.js";
 import { type WidenedTramlines, widenTramlines, withoutBackground } from "./recover/dark.js";
+import { type DarkScore, injectedLight, ownLight, scoreDark } from "./recover/darkScore.js";
 import { type FlatLight, measureFlatLight } from "./recover/flatLight.js";
 import { injectLight, type MovedLight, makePatterns, type Pattern } from "./recover/inject.js";
-import { injectedLight, type LeakScore, ownLight, scoreLeak } from "./recover/leak.js";
 import { ProfileLight } from "./recover/light.js";
-import { movementOf, moveToFrame } from "./recover/move.js";
+import { flatLines, movementOf, moveToFrame } from "./recover/move.js";
 import { type CellScore, type FibreBias, type PatternScore, scorePattern } from "./recover/score.js";
 import { judge, type Verdict } from "./recover/verdict.js";
 import { planZones, slitPlaces, type ZonePlan } from "./recover/zones.js";
 
-export type { LeakScore } from "./recover/leak.js";
+export type { DarkScore } from "./recover/darkScore.js";
 export type { CellScore, FibreBias } from "./recover/score.js";
 export type { Finding, Verdict } from "./recover/verdict.js";
 
@@ -41,7 +43,7 @@ export interface Recovery {
   verdict: Verdict;
   /** By level and place. */
   cells: CellScore[];
-  leak: LeakScore[];
+  dark: DarkScore[];
   /** The fibre whose injected light comes back worst, at the highest level; null when nothing was injected. */
   worstFibre: FibreBias | null;
   /** e⁻ per column: median of what the flat's fibres are known to hold. */
@@ -56,6 +58,7 @@ export interface Recovery {
 
 interface Injection {
   frame: Frame;
+  /** The frame's own: moved to its light, and refined on it, without the injection. */
   tramlines: Tramlines;
   options: ExtractionOptions;
   zones: ZonePlan;
@@ -75,14 +78,18 @@ export async function recoverInjected(
 ): Promise<Recovery> {
   const { seed = 1, onProgress, ...extraction } = options;
   for (const one of [frame, ...flats]) checkGeometry(one, tramlines);
-  const plan = planExtraction(tramlines);
-  const zones = planZones(tramlines, plan.active);
+  const kernels = await loadKernels();
+  const adapted = adaptTramlines(kernels, frame, tramlines, extraction);
+  const plan = planExtraction(adapted.tramlines);
   const combined = combineFlats(flats);
-  const without = await extractFrame(frame, tramlines, extraction);
-  const movement = await movementOf(combined, tramlines, without, extraction);
-  const flat = measureFlatLight(combined, zones, new ProfileLight(tramlines, plan));
-  const moved = moveToFrame(flat, combined.nUsed, movement, tramlines, plan);
-  const injection: Injection = { frame, tramlines, options: extraction, zones, flat, moved, seed };
+  const movement = movementOf(kernels, combined, tramlines, adapted.shift);
+  const lines = flatLines(adapted.tramlines, movement);
+  const zones = planZones(lines, plan.active);
+  const flat = measureFlatLight(combined, zones, new ProfileLight(lines, plan));
+  const moved = moveToFrame(flat, combined.nUsed, movement, adapted.tramlines, plan);
+  const fixed = { ...extraction, shift: false, refine: false };
+  const injection: Injection = { frame, tramlines: adapted.tramlines, options: fixed, zones, flat, moved, seed };
+  const without = await extractFrame(frame, adapted.tramlines, fixed);
 
   const flatElectrons = median(flat.known.filter((light) => light > 0));
   const { patterns, left } = makePatterns(flatElectrons, frame.nx);
@@ -95,14 +102,14 @@ export async function recoverInjected(
     scores.push(scoreAdded(injection, last, without));
   }
   onProgress?.(1 - step);
-  const leak = await measureLeak(injection, last, without);
+  const dark = await measureDark(injection, last, without);
   onProgress?.(1);
   const cells = scores.flatMap((score) => score.cells).filter(({ nPoint }) => nPoint > 0);
   const worstFibre = findWorst(scores.at(-1), zones);
   return {
-    verdict: judge(cells, leak, worstFibre),
-    ...{ cells, leak, worstFibre, flatElectrons, flawedPixels: flat.nFlaw, movedPixels: movement.largest, seed },
-    warnings: [...without.warnings, ...left],
+    verdict: judge(cells, dark, worstFibre),
+    ...{ cells, dark, worstFibre, flatElectrons, flawedPixels: flat.nFlaw, movedPixels: movement?.largest ?? 0, seed },
+    warnings: [...adapted.warnings, ...without.warnings, ...left],
   };
 }
 
@@ -132,17 +139,17 @@ function scoreAdded({ zones, flat }: Injection, { pattern, extraction }: Added, 
 }
 
 /** Dark positions with the frame's own light and with the brightest injection. The background is the one seen without them. */
-async function measureLeak(injection: Injection, brightest: Added | null, without: Extraction): Promise<LeakScore[]> {
+async function measureDark(injection: Injection, brightest: Added | null, without: Extraction): Promise<DarkScore[]> {
   const { frame, options, zones, flat } = injection;
-  const widened = widenTramlines(zones);
+  const widened = widenTramlines({ ...zones, tramlines: injection.tramlines });
   if (widened.dark.length === 0) return [];
   const own = await extractDark(frame, without, widened, options);
-  const scores = scoreLeak("own", ownLight(own.spectra, widened.rows), widened);
+  const scores = scoreDark("own", ownLight(own.spectra, widened.rows), widened);
   if (brightest === null) return scores;
   const { pattern } = brightest;
   const added = await extractDark(brightest.frame, brightest.extraction, widened, options);
   const light = (k: number, x: number) => (pattern.continuum + pattern.line[x]) * flat.known[k * frame.nx + x];
-  return [...scoreLeak("injected", injectedLight(own.spectra, added.spectra, light), widened), ...scores];
+  return [...scoreDark("injected", injectedLight(own.spectra, added.spectra, light), widened), ...scores];
 }
 
 function extractDark(

@@ -9,72 +9,63 @@
  * a few per cent of it. Without a shift the pixels stay as they are, to the last bit. */
 
 import type { Frame } from "../../detector/frame.js";
-import { legendreArgument } from "../../reference/legendre.js";
+import type { Kernels } from "../../kernels/module.js";
 import type { Flat } from "../../tramlines/flat.js";
+import { type Shift, shiftAt, shiftTramlines } from "../../tramlines/shift.js";
 import type { Tramlines } from "../../tramlines/tramlines.js";
-import { type Extraction, type ExtractionOptions, extractFrame } from "../extract.js";
+import { adaptTramlines } from "../adapt.js";
 import type { ExtractionPlan } from "../plan.js";
 import { columnOf, type FlatLight } from "./flatLight.js";
 import type { MovedLight } from "./inject.js";
 import { ProfileLight } from "./light.js";
 
-/** px: a movement smaller than this everywhere is none. */
-const leastMovement = 0.002;
-
-/** Plane δ = c₀ + c₁·x + c₂·y, x, y ∈ [−1, 1] over the frame, px; where a frame's light sits against the tramlines. */
-type Plane = [number, number, number];
+/** px: what moves less than this everywhere is left where it is, so that placing it is put to the test too. */
+const leastMovement = 0.02;
 
 export interface Movement {
-  /** From the tramlines to the flat's light, and on from there to the frame's. */
-  toFlat: Plane;
-  onwards: Plane;
-  /** px: the largest movement from flat to frame; 0 for none. */
+  /** From the flat's light to the frame's. */
+  shift: Shift;
+  /** px: the largest anywhere. */
   largest: number;
 }
 
-/** How the flat's light must move, by the shifts that the extraction measures of both. */
-export async function movementOf(
-  flat: Flat,
-  tramlines: Tramlines,
-  extraction: Extraction,
-  options: ExtractionOptions,
-): Promise<Movement> {
-  const toFrame = planeOf(extraction);
+/** How the flat's light must move, by the shifts that the extraction measures of both; null for not at all. */
+export function movementOf(kernels: Kernels, flat: Flat, tramlines: Tramlines, toFrame: Shift | null): Movement | null {
+  if (toFrame === null) return null;
   const whole: Frame = { ...flat.frame, name: flat.name, electrons: flat.electrons, mask: flat.mask };
-  const toFlat = planeOf(await extractFrame(whole, tramlines, options));
-  const onwards = toFrame.map((c, i) => c - toFlat[i]) as Plane;
-  const largest = onwards.reduce((sum, c) => sum + Math.abs(c), 0);
-  if (largest >= leastMovement) return { toFlat, onwards, largest };
-  return { toFlat, onwards: [0, 0, 0], largest: 0 };
+  const toFlat = adaptTramlines(kernels, whole, tramlines, { refine: false }).shift;
+  const [c0, c1, c2] = toFrame.coefficients.map((c, i) => c - (toFlat?.coefficients[i] ?? 0));
+  const largest = Math.abs(c0) + Math.abs(c1) + Math.abs(c2);
+  return largest < leastMovement ? null : { shift: { ...toFrame, coefficients: [c0, c1, c2] }, largest };
 }
 
-function planeOf(extraction: Extraction): Plane {
-  const { shift } = extraction as { shift?: { coefficients: Plane } | null };
-  return shift?.coefficients ?? [0, 0, 0];
+/** Where the flat's light runs, given where the frame's does: the movement backwards, but for its square. */
+export function flatLines(frameLines: Tramlines, movement: Movement | null): Tramlines {
+  if (movement === null) return frameLines;
+  const [c0, c1, c2] = movement.shift.coefficients;
+  return shiftTramlines(frameLines, { ...movement.shift, coefficients: [-c0, -c1, -c2] });
 }
 
 /** The flat's pixels where the frame's light sits. `nUsed`: flats in the mean of each pixel. */
 export function moveToFrame(
   light: FlatLight,
   nUsed: Uint8Array,
-  { toFlat, onwards, largest }: Movement,
-  tramlines: Tramlines,
+  movement: Movement | null,
+  frameLines: Tramlines,
   plan: ExtractionPlan,
 ): MovedLight {
   const { pixels: still, known, level } = light;
-  if (largest === 0) return { pixels: still, noiseLeft: null, nUsed, level };
-  const { nx, ny } = tramlines;
-  const here = new ProfileLight(movedTramlines(tramlines, toFlat), plan);
-  const there = new ProfileLight(movedTramlines(tramlines, toFlat.map((c, i) => c + onwards[i]) as Plane), plan);
+  if (movement === null) return { pixels: still, noiseLeft: null, nUsed, level };
+  const { nx, ny } = frameLines;
+  const here = new ProfileLight(flatLines(frameLines, movement), plan);
+  const there = new ProfileLight(frameLines, plan);
   const pixels = new Float32Array(nx * ny);
   const noiseLeft = new Float32Array(nx * ny);
   const squares = new Float64Array(ny);
   for (let x = 0; x < nx; x++) {
     const drawn = here.column(x, known, nx);
     const unexplained = columnOf(still, nx, ny, x).map((electrons, y) => electrons - drawn[y]);
-    const tx = legendreArgument(x, nx);
-    const shift = (y: number) => onwards[0] + onwards[1] * tx + onwards[2] * legendreArgument(y, ny);
-    const left = moveColumn(unexplained, shift, squares);
+    const left = moveColumn(unexplained, (y) => shiftAt(movement.shift, x, y, nx, ny), squares);
     const anew = there.column(x, known, nx);
     for (let y = 0; y < ny; y++) {
       pixels[y * nx + x] = anew[y] + left[y];
@@ -82,19 +73,6 @@ export function moveToFrame(
     }
   }
   return { pixels, noiseLeft, nUsed, level };
-}
-
-/** The tramlines with y + δ(x, y) for y. */
-function movedTramlines(tramlines: Tramlines, [c0, c1, c2]: Plane): Tramlines {
-  const legendre = tramlines.legendre.slice();
-  const nCoef = tramlines.degree + 1;
-  for (let at = 0; at < legendre.length; at += nCoef) {
-    // y ∈ [0, ny − 1] on [−1, 1]: δ is linear in y, so every coefficient of y(x) changes alike.
-    for (let j = 0; j < nCoef; j++) legendre[at + j] *= 1 + (2 * c2) / (tramlines.ny - 1);
-    legendre[at] += c0 - c2;
-    if (nCoef > 1) legendre[at + 1] += c1;
-  }
-  return { ...tramlines, legendre };
 }
 
 /** Lagrange's weights for the value at `share` ∈ [0, 1) between the third and the fourth of six points. */

@@ -67,7 +67,7 @@ interface Tally {
   lines: { flagged: boolean; clipped: boolean }[];
 }
 
-export interface Comparison {
+export interface InjectedSpectra {
   without: Spectra;
   added: Spectra;
   /** Rows of the spectra that hold the active fibres. */
@@ -79,7 +79,7 @@ export interface Comparison {
   pattern: Pattern;
 }
 
-export function scorePattern(comparison: Comparison): PatternScore {
+export function scorePattern(comparison: InjectedSpectra): PatternScore {
   const { without, rows, known, pattern } = comparison;
   const { nx } = without;
   const tallies = places.map(() => emptyTally(rows.length));
@@ -106,7 +106,12 @@ function emptyTally(n: number): Tally {
 }
 
 /** Index into `places`. Fibres across a gap or a dead one are no neighbours. */
-function placeOf({ without, rows, slit, known, pattern }: Comparison, k: number, x: number, level: number): number {
+function placeOf(
+  { without, rows, slit, known, pattern }: InjectedSpectra,
+  k: number,
+  x: number,
+  level: number,
+): number {
   const { nx, flux } = without;
   const own = level + Math.max(flux[rows[k] * nx + x], 0);
   let place = places.indexOf("far");
@@ -126,7 +131,13 @@ function nearLine({ line }: Pattern, x: number): boolean {
   return false;
 }
 
-function tallyPoint({ without, added, rows }: Comparison, k: number, x: number, level: number, tally: Tally): void {
+function tallyPoint(
+  { without, added, rows }: InjectedSpectra,
+  k: number,
+  x: number,
+  level: number,
+  tally: Tally,
+): void {
   const at = rows[k] * without.nx + x;
   tally.nPoint++;
   if (added.flags[at] & Flag.cosmicRay) tally.falselyFlagged++;
@@ -143,7 +154,7 @@ function tallyPoint({ without, added, rows }: Comparison, k: number, x: number, 
   tally.variance[k] += variance;
 }
 
-function tallyLine(comparison: Comparison, k: number, x: number, tally: Tally): void {
+function tallyLine(comparison: InjectedSpectra, k: number, x: number, tally: Tally): void {
   const { without, added, rows, known, pattern } = comparison;
   const { nx } = without;
   const at = rows[k] * nx + x;

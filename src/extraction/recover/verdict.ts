@@ -2,7 +2,7 @@
  *
  * The limits are choices, not published ones, save that leaked light under 1 % is what crowded fibre spectrographs aim at (common
  * practice). A bias counts when it lies beyond its limit by three of its standard errors. */
-import type { LeakScore } from "./leak.js";
+import type { DarkScore } from "./darkScore.js";
 import type { CellScore, FibreBias } from "./score.js";
 
 export type Grade = "good" | "doubtful" | "bad";
@@ -40,7 +40,7 @@ const tellingPoints = 200;
 const tellingLines = 30;
 const significance = 3;
 
-export function judge(cells: CellScore[], leak: LeakScore[], worstFibre: FibreBias | null): Verdict {
+export function judge(cells: CellScore[], leak: DarkScore[], worstFibre: FibreBias | null): Verdict {
   const findings = [
     ...judgeFlux(cells, worstFibre),
     ...judgeErrors(cells),
@@ -105,7 +105,7 @@ function judgeErrors(cells: CellScore[]): Finding[] {
   return [{ about: "error bars", grade, sentence }];
 }
 
-function judgeLeak(leak: LeakScore[]): Finding[] {
+function judgeLeak(leak: DarkScore[]): Finding[] {
   const injected = leak.filter(({ light }) => light === "injected");
   return injected.map(({ distance, nPosition, meanShare, meanError, worstShare, worstError, worstPosition }) => {
     const mean = gradeOf(significant({ bias: meanShare, biasError: meanError }, limits.leak), limits.leak);
@@ -136,7 +136,7 @@ function judgeLines(cells: CellScore[]): Finding[] {
   ];
 }
 
-function judgeDark(leak: LeakScore[]): Finding[] {
+function judgeDark(leak: DarkScore[]): Finding[] {
   const own = leak.filter(({ light }) => light === "own");
   if (own.length === 0) return [];
   const worst = own.reduce((a, b) => (b.pull > a.pull ? b : a));

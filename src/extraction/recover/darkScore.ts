@@ -3,7 +3,7 @@ import { median } from "../../reference/median.js";
 import { Flag, type Spectra, UNUSABLE } from "../spectra.js";
 import type { WidenedTramlines } from "./dark.js";
 
-export interface LeakScore {
+export interface DarkScore {
   /** Of the injected light, or the frame's own. */
   light: "injected" | "own";
   /** 1: beside a lit fibre; 2: next but one. */
@@ -56,7 +56,7 @@ export function injectedLight(without: Spectra, added: Spectra, light: (k: numbe
 }
 
 /** By distance; distances without a position are left out. */
-export function scoreLeak(name: LeakScore["light"], spectra: DarkSpectra, widened: WidenedTramlines): LeakScore[] {
+export function scoreDark(name: DarkScore["light"], spectra: DarkSpectra, widened: WidenedTramlines): DarkScore[] {
   const { nx } = widened.tramlines;
   return [1, 2].flatMap((distance) => {
     const shares: { share: number; error: number; name: string }[] = [];
