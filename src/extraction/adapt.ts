@@ -1,6 +1,7 @@
 /** The flat's tramlines and profile made the frame's own: moved to where its light sits, and refined on its light. */
 import type { Frame } from "../detector/frame.js";
 import type { Kernels } from "../kernels/module.js";
+import { compareOneOff, type OneOff, requireNamesFit } from "../tramlines/oneOff.js";
 import { activeFibres, linesOf } from "../tramlines/profileTable.js";
 import { refineShape } from "../tramlines/shape/refine.js";
 import { measureShift, type Shift, shiftTramlines } from "../tramlines/shift.js";
@@ -12,10 +13,13 @@ import { openFrame } from "./settle.js";
 export interface Adapted {
   tramlines: Tramlines;
   shift: Shift | null;
+  /** Null when no shift was measured. */
+  oneOff: OneOff | null;
   refined: boolean;
   warnings: string[];
 }
 
+/** @throws TraceError when the frame's light does not tell that fibres are named rightly. */
 export function adaptTramlines(
   kernels: Kernels,
   frame: Frame,
@@ -24,6 +28,7 @@ export function adaptTramlines(
 ): Adapted {
   const warnings: string[] = [];
   let [adapted, shift]: [Tramlines, Shift | null] = [tramlines, null];
+  let oneOff: OneOff | null = null;
   if (options.shift !== false) {
     const background = options.background === false ? noBackground() : fitBackground(frame, tramlines);
     shift = measureShift(kernels, frame, tramlines, background);
@@ -31,11 +36,15 @@ export function adaptTramlines(
       warnings.push(
         `${frame.name}: too little light to measure its shift against the flat, so none is applied; spectra are right only if nothing moved since the flat.`,
       );
-    } else adapted = shiftTramlines(tramlines, shift);
+    } else {
+      adapted = shiftTramlines(tramlines, shift);
+      oneOff = compareOneOff(kernels, frame, adapted, background);
+      if (options.checkNames !== false) requireNamesFit(frame, oneOff);
+    }
   }
   if (options.refine === false || adapted.profile.kind === "gaussian")
-    return { tramlines: adapted, shift, refined: false, warnings };
-  return { tramlines: refineOn(kernels, frame, adapted, options), shift, refined: true, warnings };
+    return { tramlines: adapted, shift, oneOff, refined: false, warnings };
+  return { tramlines: refineOn(kernels, frame, adapted, options), shift, oneOff, refined: true, warnings };
 }
 
 /** The profile refined on what a first look at the frame leaves after background and cosmic rays. */

@@ -6,10 +6,12 @@ import { loadKernels } from "../kernels/module.js";
 import { Flag, MaskBit } from "../reference/bits.js";
 import type { ExtractionInput, ExtractionOutput, Method } from "../reference/extract.js";
 import { checkGeometry } from "../tramlines/file.js";
+import type { OneOff } from "../tramlines/oneOff.js";
 import type { Shift } from "../tramlines/shift.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { adaptTramlines } from "./adapt.js";
 import { type BackgroundFit, fitBackground, noBackground } from "./background.js";
+import type { FrameFit } from "./modelColumn.js";
 import { runPasses } from "./passes.js";
 import type { ExtractionPlan } from "./plan.js";
 import { openFrame } from "./settle.js";
@@ -34,8 +36,12 @@ export interface ExtractionOptions {
   background?: boolean;
   /** Measure where the frame's light sits against the tramlines, and extract it there. Default true. */
   shift?: boolean;
+  /** Refuse a frame whose light does not tell that its fibres are named rightly. Default true. */
+  checkNames?: boolean;
   /** Refine a measured profile on the frame itself. Default true. */
   refine?: boolean;
+  /** ny × nx, not 0 where a cosmic ray is known to have hit: those pixels are left out from the start. */
+  knownHits?: Uint8Array;
   /** Called with the share of columns done, 0 to 1. */
   onProgress?: (share: number) => void;
 }
@@ -44,6 +50,8 @@ export interface Extraction {
   spectra: Spectra;
   /** Where the frame's light sat against the tramlines; null when not measured. */
   shift: Shift | null;
+  /** How clearly the fibres' names fit; null when no shift was measured. */
+  oneOff: OneOff | null;
   /** Whether the profile was refined on this frame. */
   refined: boolean;
   plan: ExtractionPlan;
@@ -51,6 +59,8 @@ export interface Extraction {
   /** ny × nx, bits of MaskBit: cosmic, grown (and suspect, which were kept). */
   rejected: Uint8Array;
   nRejected: number;
+  /** The fit behind the spectra, for whoever asks what its estimators do. */
+  fit: FrameFit;
   /** ε as measured on this frame: share of the light nearby by which pixels miss the profiles beyond noise. */
   profileError: number;
   warnings: string[];
@@ -59,28 +69,46 @@ export interface Extraction {
 /** Extracts every fibre of `frame` that `tramlines` hold.
  * @throws RangeError when the two come from different readout windows, or no fibre is lit. */
 export async function extractFrame(
-  frame: Frame,
+  given: Frame,
   tramlines: Tramlines,
   options: ExtractionOptions = {},
 ): Promise<Extraction> {
-  checkGeometry(frame, tramlines);
+  checkGeometry(given, tramlines);
+  const frame = withHits(given, options.knownHits);
   const kernels = await loadKernels();
   const adapted = adaptTramlines(kernels, frame, tramlines, options);
   const { bench, input, plan, background, profileError } = openFrame(kernels, frame, adapted.tramlines, options);
   runPasses(bench, input, options.onProgress);
   const spectra = finishSpectra(bench.output, tramlines, input);
+  options.knownHits?.forEach((hit, i) => {
+    if (hit !== 0) bench.rejected[i] |= MaskBit.cosmic;
+  });
   const nRejected = bench.rejected.reduce((n, bits) => n + (bits & (MaskBit.cosmic | MaskBit.grown) ? 1 : 0), 0);
   return {
     spectra,
     shift: adapted.shift,
+    oneOff: adapted.oneOff,
     refined: adapted.refined,
     plan,
     background,
     rejected: bench.rejected,
     nRejected,
+    fit: { input, background: background ?? noBackground(), model: bench.model },
     profileError,
     warnings: [...adapted.warnings, ...(background?.warnings ?? [])],
   };
+}
+
+/** The same frame with known hits in its mask, so that every step that looks at the frame passes them over.
+ * @throws RangeError when `hits` is of another size. */
+function withHits(frame: Frame, hits: Uint8Array | undefined): Frame {
+  if (hits === undefined) return frame;
+  if (hits.length !== frame.mask.length) {
+    throw new RangeError(
+      `${frame.name}: ${hits.length} pixels are marked as hit or not, but the frame has ${frame.mask.length}; give one number a pixel.`,
+    );
+  }
+  return { ...frame, mask: frame.mask.map((bits, i) => (hits[i] === 0 ? bits : bits | MaskBit.cosmic)) };
 }
 
 /** What the kernel, and its reference, need for this frame. */
