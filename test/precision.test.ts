@@ -14,7 +14,14 @@ const methods: [Method, boolean][] = [
 /** Largest |Δflux|/σ and |Δvariance|/variance of f32 against the reference. */
 function cost(pitch: number, bright: number, faint: number, method: Method, crosstalk: boolean) {
   const flux = (k: number, x: number) => (k % 2 ? faint : bright) * (1 + 0.001 * x);
-  const scene = makeScene({ pitch, sigma, nx: 64, nFibre: 20, ny: 30 + Math.ceil(20 * pitch), flux });
+  const scene = makeScene({
+    pitch,
+    sigma,
+    nx: 66, // the last group of four lanes holds two columns
+    nFibre: 20,
+    ny: 30 + Math.ceil(20 * pitch),
+    flux,
+  });
   const input = {
     ...scene.input,
     method,

@@ -37,6 +37,7 @@ describe("plan of an extraction", () => {
     // σ reaches 1.02 at one end: 5.1 + 0.5 rounds up to 6, a window of 13 rows; rows can be shared up to 14 px apart.
     const plan = planExtraction(lines([50.2, 55.1, 60.3, 64.1, 80, 93.9], 0.01));
     expect(plan.halfWindow).toBe(6);
+    expect(planExtraction(lines([50.2, 60.3], 0.01, 1.09)).halfWindow).toBe(7); // σ up to 1.11: 5.55 + 0.5
     expect(plan.bandwidth).toBe(3); // 50.2 and 64.1: 13.9 px
     expect(planExtraction(lines([50, 55.1, 60.3, 64.1, 80, 93.9], 0.01)).bandwidth).toBe(2); // 14.1 px
     expect(plan.smallestPitch).toBeCloseTo(3.8, 10);
