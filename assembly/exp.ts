@@ -2,10 +2,10 @@
  * series (Abramowitz & Stegun 4.2.1), of which the terms left out are below 5e-18.
  * Relative error below 4e-16; 0 below −708, ∞ above 709. */
 
-const perLn2: f64 = 1.4426950408889634;
+const perLn2: f64 = Math.LOG2E;
 /** ln 2 in two parts, the first with so few bits that its multiples are exact (Cody & Waite 1980, chapter 6). */
 const ln2Head: f64 = 0.693359375;
-const ln2Tail: f64 = -2.121944400546905827679e-4;
+const ln2Tail: f64 = -2.1219444005469057e-4;
 const nTerm: i32 = 13;
 
 export function exp(x: f64): f64 {

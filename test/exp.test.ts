@@ -6,7 +6,7 @@ import { judgeMissing, python } from "./judges.js";
 
 // Abramowitz & Stegun, Handbook of Mathematical Functions, table 4.4 (from memory; more digits there).
 const handbook: [number, number][] = [
-  [1, 2.718281828],
+  [2, 7.389056099],
   [0.5, 1.648721271],
   [-1, 0.3678794412],
   [-2.5, 0.0820849986],

@@ -154,8 +154,8 @@ async function readProfile(
     relativeError: Number(table.header.get("PROFERR") ?? 0),
   };
   if (kind === "gaussian") return { kind, ...common };
-  if (kind === "empirical") return { kind, ...common, ...(await readShape(input, name)) };
-  const finding = `profile model ${String(kind)}, but only gaussian and empirical are known`;
+  if (kind === "hermite" || kind === "empirical") return { kind, ...common, ...(await readShape(input, name, kind)) };
+  const finding = `profile model ${String(kind)}, but only gaussian, hermite and empirical are known`;
   throw new FitsError("unsupported", finding, "trace the flat again with this program", { file });
 }
 

@@ -1,50 +1,98 @@
-/** The profile model, chosen by measurement: each is fitted to some columns of the flat and judged on others. */
+/** The profile model, chosen by measurement: each is fitted to some columns of the flat and judged on others.
+ *
+ * Held-out columns of the combined flat judge, not a second flat: two flats share each pixel's response and each fibre's
+ * form, so that a model that had learned those of the columns it was fitted to would look right on the second one too.
+ * All models are judged alike, with a smooth background under them and nothing but the fluxes fitted. The tracing has seen
+ * all columns; its few numbers for each fibre learn nothing of a single one. */
 import { medianOf } from "../detector/clip.js";
 import type { Frame } from "../detector/frame.js";
 import { type Kernels, loadKernels } from "../kernels/module.js";
-import type { ShapeTable } from "../reference/shape.js";
 import { combineFlats, type Flat } from "./flat.js";
 import { activeFibres, linesOf, profileTable } from "./profileTable.js";
-import type { Lines } from "./shape/column.js";
-import { flatColumn, type MeasuredShape, measureShape } from "./shape/measure.js";
-import { backgroundColumn, nBackground, settleColumn, wholeProfiles } from "./shape/step.js";
+import { backgroundUnder, heldOutMisfits, judgeColumns, meanWithError } from "./shape/judge.js";
+import { type MeasuredShape, measureShape } from "./shape/measure.js";
 import type { Profile, ShapeProfile, Tramlines } from "./tramlines.js";
 
 export type ProfileKind = Profile["kind"];
 
-export interface ProfileChoice {
-  tramlines: Tramlines;
-  /** How each model that was tried fits columns that it was not made from, best first. */
-  tried: { kind: ProfileKind; misfit: number }[];
+/** How a model fits columns that it was not made from: χ² per degree of freedom, with the error that the scatter
+ * between columns gives. */
+export interface TriedProfile {
+  kind: ProfileKind;
+  misfit: number;
+  error: number;
 }
 
-/** Columns that judge; those that fit stand elsewhere. */
-const judgingColumns = 24;
+export interface ProfileChoice {
+  tramlines: Tramlines;
+  /** The models that were tried, simplest first; all of them for auto, else the one asked for. */
+  tried: TriedProfile[];
+}
+
+interface Candidate {
+  kind: ProfileKind;
+  tramlines: Tramlines;
+  /** One for each held-out column. */
+  misfits: Float64Array;
+}
+
+const simplestFirst: ProfileKind[] = ["gaussian", "hermite", "empirical"];
+/** A model counts as better only by more than so many errors of the difference. */
+const significantErrors = 2;
 /** A pixel whose noise is below this share of its light can tell of ε. */
 const tellingNoise = 0.01;
 
-/** Gives `tramlines`, traced with Gaussians, the profile of `kind`; auto: the one that fits held-out columns best. */
+/** Gives `tramlines`, traced with Gaussians, the profile of `kind`; auto: of the models that fit held-out columns as well
+ * as the best one, within the error of the difference, the simplest. */
 export async function chooseProfile(
   flats: Frame[],
   tramlines: Tramlines,
   kind: ProfileKind | "auto" = "auto",
 ): Promise<ProfileChoice> {
-  if (kind === "gaussian") return { tramlines, tried: [] };
   const kernels = await loadKernels();
   const flat = combineFlats(flats);
-  const measured = measureShape(kernels, flat, tramlines);
-  const empirical = withShape(tramlines, measured, flat);
-  const tried = [
-    { kind: "empirical" as const, tramlines: empirical, misfit: misfitOf(kernels, flat, empirical) },
-    { kind: "gaussian" as const, tramlines, misfit: misfitOf(kernels, flat, tramlines) },
-  ];
-  tried.sort((a, b) => a.misfit - b.misfit);
-  const best = kind === "auto" ? tried[0] : tried.find((model) => model.kind === kind)!;
-  return { tramlines: best.tramlines, tried: tried.map(({ kind, misfit }) => ({ kind, misfit })) };
+  const candidates = (kind === "auto" ? simplestFirst : [kind]).map((model) =>
+    model === "gaussian" ? gaussianCandidate(kernels, flat, tramlines) : candidate(kernels, flat, tramlines, model),
+  );
+  const tried = candidates.map((model) => {
+    const { mean, error } = meanWithError(model.misfits);
+    return { kind: model.kind, misfit: mean, error };
+  });
+  return { tramlines: simplestOfTheBest(candidates, tried).tramlines, tried };
+}
+
+/** Columns are compared one by one: what is hard about a column is so for every model. */
+function simplestOfTheBest(candidates: Candidate[], tried: TriedProfile[]): Candidate {
+  let best = 0;
+  tried.forEach(({ misfit }, i) => {
+    if (misfit < tried[best].misfit) best = i;
+  });
+  const asGood = candidates.find(({ misfits }) => {
+    const { mean, error } = meanWithError(misfits.map((misfit, i) => misfit - candidates[best].misfits[i]));
+    return mean <= significantErrors * error;
+  });
+  return asGood ?? candidates[best];
+}
+
+function gaussianCandidate(kernels: Kernels, flat: Flat, tramlines: Tramlines): Candidate {
+  const lines = linesOf(tramlines, activeFibres(tramlines));
+  const table = profileTable(kernels, tramlines.profile);
+  const background = backgroundUnder(kernels, flat, lines, table);
+  return { kind: "gaussian", tramlines, misfits: heldOutMisfits(flat, lines, table, background) };
+}
+
+function candidate(kernels: Kernels, flat: Flat, tramlines: Tramlines, kind: ShapeProfile["kind"]): Candidate {
+  const measured = measureShape(kernels, flat, tramlines, kind);
+  const { lines, table, state } = measured;
+  return {
+    kind,
+    tramlines: withShape(tramlines, measured, flat, kind),
+    misfits: heldOutMisfits(flat, lines, table, state.background),
+  };
 }
 
 /** Tramlines with the measured shape; a dead fibre keeps its line, and takes the median width. */
-function withShape(tramlines: Tramlines, measured: MeasuredShape, flat: Flat): Tramlines {
+function withShape(tramlines: Tramlines, measured: MeasuredShape, flat: Flat, kind: ShapeProfile["kind"]): Tramlines {
   const { lines, table, known } = measured;
   const active = activeFibres(tramlines);
   const legendre = tramlines.legendre.slice();
@@ -55,7 +103,7 @@ function withShape(tramlines: Tramlines, measured: MeasuredShape, flat: Flat): T
     sigma.set(lines.width.subarray(i * lines.nWidth, (i + 1) * lines.nWidth), k * lines.nWidth);
   });
   const profile: ShapeProfile = {
-    kind: "empirical",
+    kind,
     sigma,
     widthDegree: lines.nWidth - 1,
     relativeError: relativeError(measured, flat),
@@ -65,48 +113,12 @@ function withShape(tramlines: Tramlines, measured: MeasuredShape, flat: Flat): T
   return { ...tramlines, legendre, profile };
 }
 
-interface Residuals {
-  residual: Float64Array;
-  inverseVariance: Float64Array;
-  model: Float64Array;
-}
-
-/** Residuals of the judging columns when only the fluxes are fitted. */
-function* judge(flat: Flat, lines: Lines, table: ShapeTable, background: Float64Array): Generator<Residuals> {
-  for (let i = 0; i < judgingColumns; i++) {
-    const data = flatColumn(flat, Math.floor(((i + 0.93) * flat.nx) / judgingColumns) - 1);
-    const profiles = wholeProfiles(lines, table, data.x);
-    const under = backgroundColumn(background, data.x, lines);
-    const level = data.light.map((light, y) => light - under[y]);
-    const { model } = settleColumn(profiles, data, level, under);
-    yield { residual: level.map((light, y) => light - model[y]), inverseVariance: data.inverseVariance, model };
-  }
-}
-
-/** Median of squared residuals over their variance, over that of a perfect model (the median of χ² with one degree of
- * freedom, 0.4549: Abramowitz & Stegun, table 26.8). */
-function misfitOf(kernels: Kernels, flat: Flat, tramlines: Tramlines): number {
-  const lines = linesOf(tramlines, activeFibres(tramlines));
-  const squared: number[] = [];
-  const table = profileTable(kernels, tramlines.profile);
-  for (const { residual, inverseVariance } of judge(flat, lines, table, new Float64Array(nBackground))) {
-    for (let y = 0; y < flat.ny; y++) {
-      if (inverseVariance[y] > 0) squared.push(residual[y] * residual[y] * inverseVariance[y]);
-    }
-  }
-  return medianOf(squared) / 0.4549;
-}
-
-/** ε: robust scatter of bright pixels about the model beyond what noise explains, as a share of it. */
-function relativeError(measured: MeasuredShape, flat: Flat): number {
+/** ε: robust scatter of bright pixels about the model beyond what noise explains, as a share of it. The median of χ² with
+ * one degree of freedom is 0.4549 (Abramowitz & Stegun, table 26.8). */
+function relativeError({ lines, table, state }: MeasuredShape, flat: Flat): number {
   const squares: number[] = [];
   const noise: number[] = [];
-  for (const { residual, inverseVariance, model } of judge(
-    flat,
-    measured.lines,
-    measured.table,
-    measured.state.background,
-  )) {
+  for (const { residual, inverseVariance, model } of judgeColumns(flat, lines, table, state.background)) {
     for (let y = 0; y < flat.ny; y++) {
       const variance = 1 / inverseVariance[y];
       if (!(variance < (tellingNoise * model[y]) ** 2)) continue;

@@ -11,6 +11,7 @@ const knotWidth = 1.04;
 /** Points of the table per pixel at `knotWidth`. */
 const pointsPerPixel = 32;
 const order = 4;
+export const nSpline = 2 * knots.length - 1 - order;
 /** Terms beyond the first may reach these shares of it: in the core, and in the wings, which hardly change.
  * Distance in pixels at `knotWidth`. */
 const coreShare = 0.2;
@@ -34,6 +35,8 @@ export interface ShapeBasis {
   /** Whether the functions can shift and widen the shape, which steps must then be kept from. */
   canMove: boolean;
   referenceWidth: number;
+  /** Length of the exponential wing, σ, where there is one. */
+  wingScale?: number;
   /** 2 · (n − 1): for each cell of the table, the first spline that is not yet whole and the last that has begun. */
   begun: Int32Array;
 }
@@ -47,7 +50,6 @@ export function shapeBasis(referenceWidth: number): ShapeBasis {
       .map((x) => -x),
     ...knots,
   ];
-  const nSpline = mirrored.length - order;
   const last = mirrored[mirrored.length - 1];
   const scale = referenceWidth / knotWidth;
   const extended = [...mirrored, last + 1, last + 2, last + 3, last + 4, last + 5];

@@ -5,6 +5,8 @@ import { FitsError } from "../../fits/errors.js";
 import { type FitsImage, readImage } from "../../fits/image.js";
 import { nShapeTerm, type ShapeTable } from "../../reference/shape.js";
 import type { KnownShape, ShapeProfile } from "../tramlines.js";
+import { nSpline } from "./basis.js";
+import { nHermiteFunction } from "./hermiteBasis.js";
 
 export function shapeHdus({ shape, known }: ShapeProfile): OutputHdu[] {
   const nShape = known.best.length;
@@ -40,25 +42,30 @@ export function shapeHdus({ shape, known }: ShapeProfile): OutputHdu[] {
       ny: nShape + 1,
       data: packed,
       cards: [
+        ...(known.wingScale === undefined
+          ? []
+          : [{ keyword: "SHWING", value: known.wingScale, comment: "[sigma] length of the exponential wing" }]),
         {
           keyword: "COMMENT",
-          comment: "First row: coefficients of the shape's splines; then the flat's information on them.",
+          comment: "First row: coefficients of the shape's functions; then the flat's information on them.",
         },
       ],
     },
   ];
 }
 
-/** @throws FitsError when the HDUs are missing or do not fit each other. */
+/** @throws FitsError when the HDUs are missing or do not fit each other or the profile's kind. */
 export async function readShape(
   input: string | Uint8Array,
   name: string | undefined,
+  kind: ShapeProfile["kind"],
 ): Promise<{ shape: ShapeTable; known: KnownShape }> {
   const table = await readImage(input, { hdu: "PROFILE_SHAPE", name });
   const packed = await readImage(input, { hdu: "PROFILE_KNOWN", name });
   const nShape = packed.nx;
-  if (table.nx !== 2 * nShapeTerm || packed.ny !== nShape + 1 || nShape % nShapeTerm !== 0) {
-    const finding = `a profile of ${table.nx} columns and ${nShape} coefficients is none of this program's`;
+  const expected = nShapeTerm * (kind === "hermite" ? nHermiteFunction : nSpline);
+  if (table.nx !== 2 * nShapeTerm || packed.ny !== nShape + 1 || nShape !== expected) {
+    const finding = `a profile ${kind} of ${table.nx} columns and ${nShape} coefficients, but ${2 * nShapeTerm} and ${expected} are expected`;
     throw new FitsError("data", finding, "trace the flat again", { file: table.name });
   }
   const known = Float64Array.from(packed.data);
@@ -71,7 +78,11 @@ export async function readShape(
       referenceWidth: required(table, "SHWIDTH"),
       centroid: Float64Array.from({ length: nShapeTerm }, (_, m) => required(table, `SHCENT${m}`)),
     },
-    known: { best: known.slice(0, nShape), information: known.slice(nShape) },
+    known: {
+      ...(kind === "hermite" ? { wingScale: required(packed, "SHWING") } : {}),
+      best: known.slice(0, nShape),
+      information: known.slice(nShape),
+    },
   };
 }
 

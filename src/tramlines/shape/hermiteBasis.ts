@@ -13,9 +13,10 @@ import type { ShapeBasis } from "./basis.js";
 const reachSigma = 20;
 const pointsPerSigma = 32;
 /** Gaussian, H_3 … H_6, wing, change of its length. */
-const nFunction = 7;
+export const nHermiteFunction = 7;
+const nFunction = nHermiteFunction;
 const highestOrder = 6;
-export const wingAt = 5;
+const wingAt = 5;
 /** Prior departures over the detector: a share of the Gaussian, of every H_j against the Gaussian, of the wing. */
 const gaussianShare = 0.2;
 const hermiteSpread = 0.05;
@@ -23,7 +24,7 @@ const wingShare = 0.05;
 const lengthSpread = 5e-4;
 /** Before anything is measured: share of the light in the wing, and its length, σ. */
 const startWing = 0.02;
-export const startWingScale = 4;
+const startWingScale = 4;
 /** σ: a shorter wing would be the core itself, a longer one scattered light. */
 const shortestWing = 1.5;
 const longestWing = 10;
@@ -31,7 +32,7 @@ const longestWing = 10;
 const largestChange = 0.3;
 
 /** `referenceWidth`: σ, pixels; `wingScale`: L, σ. */
-export function hermiteBasis(kernels: Kernels, referenceWidth: number, wingScale: number): ShapeBasis {
+export function hermiteBasis(kernels: Kernels, referenceWidth: number, wingScale = startWingScale): ShapeBasis {
   const { exp, erf } = kernels.workbench(0).call;
   const n = 2 * reachSigma * pointsPerSigma + 1;
   const values = new Float64Array(n * 2 * nFunction);
@@ -64,6 +65,7 @@ export function hermiteBasis(kernels: Kernels, referenceWidth: number, wingScale
     priorSpread: Float64Array.of(0, hermiteSpread, hermiteSpread, hermiteSpread, hermiteSpread, 1e-6, lengthSpread),
     canMove: false,
     referenceWidth,
+    wingScale,
     begun: Int32Array.from({ length: 2 * (n - 1) }, (_, i) => (i % 2 === 0 ? 0 : nFunction - 1)),
   };
 }
@@ -104,18 +106,17 @@ export function hermiteStart(): Float64Array {
   return coefficients;
 }
 
-/** Length of the wing that `coefficients` on a basis of `wingScale` ask for, σ. */
-export function followWing(wingScale: number, coefficients: Float64Array): number {
+/** The basis with the wing's length that `coefficients` ask for, and the coefficients there. */
+export function followWing(
+  kernels: Kernels,
+  basis: ShapeBasis,
+  coefficients: Float64Array,
+): { basis: ShapeBasis; coefficients: Float64Array } {
+  const { wingScale = startWingScale, referenceWidth } = basis;
   const share = coefficients[wingAt * nShapeTerm];
+  if (!(share > 0)) return { basis, coefficients };
   const change = coefficients[(wingAt + 1) * nShapeTerm] / share;
-  if (!(share > 0)) return wingScale;
   const next = wingScale * (1 + Math.min(Math.max(change, -largestChange), largestChange));
-  return Math.min(Math.max(next, shortestWing), longestWing);
-}
-
-/** The same coefficients for a basis whose wing has the length that they asked for. */
-export function afterFollowing(coefficients: Float64Array): Float64Array {
-  const moved = coefficients.slice();
-  moved.fill(0, (wingAt + 1) * nShapeTerm);
-  return moved;
+  const followed = hermiteBasis(kernels, referenceWidth, Math.min(Math.max(next, shortestWing), longestWing));
+  return { basis: followed, coefficients: coefficients.slice().fill(0, (wingAt + 1) * nShapeTerm) };
 }

@@ -5,16 +5,18 @@ import { median } from "../../reference/median.js";
 import { nShapeTerm, type ShapeTable } from "../../reference/shape.js";
 import { type Flat, pixelVariance } from "../flat.js";
 import { activeFibres, linesOf } from "../profileTable.js";
-import type { KnownShape, Tramlines } from "../tramlines.js";
+import type { KnownShape, ShapeProfile, Tramlines } from "../tramlines.js";
 import { type ShapeBasis, shapeBasis, tabulate } from "./basis.js";
 import { referToCentroid } from "./centroid.js";
 import type { ColumnData, Lines } from "./column.js";
+import { fittingColumns } from "./columns.js";
 import { applyGeometry, measureColumn } from "./geometry.js";
+import { followWing, hermiteBasis, hermiteStart } from "./hermiteBasis.js";
 import { nBackground, ShapeNormal, type ShapeState } from "./step.js";
 
-const rounds = 4;
-const shapeColumns = 40;
-const geometryColumns = 64;
+/** Columns of the flat that each round looks at, for the shape and for the geometry; the last round's numbers stand. */
+const shapeColumns = [32, 32, 32, 96];
+const geometryColumns = [48, 48, 64, 128];
 const leastWidthTerms = 4;
 /** Share of the light with which the wings begin, before anything is measured. */
 const startWing = 0.02;
@@ -30,21 +32,32 @@ export interface MeasuredShape {
   history: number[];
 }
 
-export function measureShape(kernels: Kernels, flat: Flat, tramlines: Tramlines): MeasuredShape {
+export function measureShape(
+  kernels: Kernels,
+  flat: Flat,
+  tramlines: Tramlines,
+  kind: ShapeProfile["kind"],
+): MeasuredShape {
   const lines = widthRoom(linesOf(tramlines, activeFibres(tramlines)), leastWidthTerms);
   const middleWidths = Array.from({ length: lines.nFibre }, (_, k) => lines.width[k * lines.nWidth]);
   const referenceWidth = median(middleWidths);
-  const basis = shapeBasis(referenceWidth);
+  let basis = kind === "hermite" ? hermiteBasis(kernels, referenceWidth) : shapeBasis(referenceWidth);
   let state: ShapeState = {
-    coefficients: startCoefficients(kernels, basis),
+    coefficients: kind === "hermite" ? hermiteStart() : startCoefficients(kernels, basis),
     background: new Float64Array(nBackground),
   };
   let table = tabulate(basis, state.coefficients);
   const history: number[] = [];
   let information: Float64Array = new Float64Array(0);
-  for (let round = 0; round < rounds; round++) {
+  for (let round = 0; round < shapeColumns.length; round++) {
+    if (kind === "hermite" && round > 0) {
+      const followed = followWing(kernels, basis, state.coefficients);
+      basis = followed.basis;
+      state = { ...state, coefficients: followed.coefficients };
+      table = tabulate(basis, state.coefficients);
+    }
     const normal = new ShapeNormal(kernels, basis, flat.ny, lines.nFibre);
-    for (const x of spreadColumns(flat.nx, shapeColumns, round)) {
+    for (const x of fittingColumns(flat.nx, shapeColumns, round)) {
       normal.add(lines, table, state.background, flatColumn(flat, x), false, round > 0 ? 6 : 0);
     }
     const step = normal.solve(state, table);
@@ -52,20 +65,14 @@ export function measureShape(kernels: Kernels, flat: Flat, tramlines: Tramlines)
     information = normal.shapeInformation();
     state = step;
     table = tabulate(basis, state.coefficients);
-    const columns = spreadColumns(flat.nx, geometryColumns, round).map((x) =>
+    const columns = fittingColumns(flat.nx, geometryColumns, round).map((x) =>
       measureColumn(lines, table, state.background, flatColumn(flat, x)),
     );
     applyGeometry(kernels, lines, columns);
   }
-  const known = { best: state.coefficients, information };
+  const { wingScale } = basis;
+  const known = { ...(wingScale === undefined ? {} : { wingScale }), best: state.coefficients, information };
   return { ...referToCentroid(kernels, lines, table), basis, state, known, history };
-}
-
-/** `n` columns spread evenly, another set each round, none at the very ends. */
-function spreadColumns(nx: number, n: number, round: number): number[] {
-  const step = nx / n;
-  const offset = ((round * 0.38) % 1) * 0.8 + 0.1;
-  return Array.from({ length: n }, (_, i) => Math.min(nx - 1, Math.floor((i + offset) * step)));
 }
 
 /** One column of a combined flat, with what makes its variances. */

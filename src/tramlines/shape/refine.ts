@@ -6,8 +6,9 @@ import { MaskBit } from "../../reference/bits.js";
 import type { SmoothBackground } from "../../reference/extract.js";
 import type { ShapeTable } from "../../reference/shape.js";
 import type { KnownShape } from "../tramlines.js";
-import { shapeBasis, tabulate } from "./basis.js";
+import { type ShapeBasis, shapeBasis, tabulate } from "./basis.js";
 import type { ColumnData, Lines } from "./column.js";
+import { hermiteBasis } from "./hermiteBasis.js";
 import { nBackground, nBackgroundY, ShapeNormal, type ShapeState } from "./step.js";
 
 const steps = 2;
@@ -24,7 +25,7 @@ export function refineShape(
   background: SmoothBackground,
   rejected: Uint8Array,
 ): ShapeTable {
-  const basis = shapeBasis(table.referenceWidth);
+  const basis = basisOf(kernels, known, table.referenceWidth);
   let state: ShapeState = { coefficients: known.best, background: widenBackground(background) };
   let refined = table;
   for (let round = 0; round < steps; round++) {
@@ -37,6 +38,11 @@ export function refineShape(
     refined = { ...tabulate(basis, state.coefficients), centroid: table.centroid };
   }
   return refined;
+}
+
+/** What the flat's shape was made of. */
+function basisOf(kernels: Kernels, { wingScale }: KnownShape, referenceWidth: number): ShapeBasis {
+  return wingScale === undefined ? shapeBasis(referenceWidth) : hermiteBasis(kernels, referenceWidth, wingScale);
 }
 
 /** One column of a frame, with what makes its variances. */
