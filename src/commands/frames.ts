@@ -4,8 +4,10 @@ import { existsSync, readFileSync, statSync } from "node:fs";
 import { basename } from "node:path";
 import type { Calibrations } from "../detector/calibrations.js";
 import { correctFrame } from "../detector/correct.js";
+import { flatWarnings } from "../detector/flatWarnings.js";
 import type { Frame } from "../detector/frame.js";
 import { loadCalibrations } from "../detector/loadCalibrations.js";
+import type { RawImage } from "../detector/raw.js";
 import type { Role } from "../detector/roles.js";
 import { type ExtractionPlan, planExtraction } from "../extraction/plan.js";
 import { FitsError } from "../fits/errors.js";
@@ -73,28 +75,37 @@ export async function openBench(paths: string[], options: FrameOptions, progress
 
 /** One raw frame, corrected, and counted among the bench's inputs. "-" is standard input. */
 export async function readFrame(path: string, role: Role, bench: Bench): Promise<Frame> {
+  return correctFrame(await readRaw(path, bench), bench.calibrations, bench.spectrograph, { role });
+}
+
+async function readRaw(path: string, bench: Bench): Promise<RawImage> {
   const raw = await readImage(path, { hdu: bench.options.hdu });
   bench.inputs.push({ name: raw.name, checksum: raw.checksum });
-  return correctFrame(raw, bench.calibrations, bench.spectrograph, { role });
+  return raw;
 }
 
 /** Traces the flats.
  * @throws TraceError, NamingError. */
 export async function traceFlats(flats: string[], bench: Bench, progress: Progress): Promise<Traced> {
+  const { calibrations, spectrograph } = bench;
   const frames: Frame[] = [];
+  const raws: RawImage[] = [];
   for (const flat of flats) {
     progress.stage(`reading ${basename(flat)}`);
-    frames.push(await readFrame(flat, "fibre flat", bench));
+    const raw = await readRaw(flat, bench);
+    frames.push(correctFrame(raw, calibrations, spectrograph, { role: "fibre flat" }));
+    if (raws.length < 2) raws.push(raw);
   }
+  const detector = flatWarnings(raws, frames, calibrations, spectrograph);
   progress.stage("tracing the flat");
-  const { layout, warning } = slitLayout(bench.spectrograph);
+  const { layout, warning } = slitLayout(spectrograph);
   const tracing = await traceFlat(frames, layout);
   return {
     tramlines: tracing.tramlines,
     tracing,
     header: frames[0].header,
     assumptions: [...frames.flatMap((frame) => frame.assumptions), ...tracing.assumptions],
-    warnings: [...warning, ...frames.flatMap((frame) => frame.warnings), ...tracing.warnings],
+    warnings: [...warning, ...frames.flatMap((frame) => frame.warnings), ...detector, ...tracing.warnings],
   };
 }
 

@@ -45,6 +45,9 @@ const look = z.strictObject({
       }),
     )
     .describe("gain in e-/ADU and read noise in e-, as given and as measured, from 1"),
+  seams: z
+    .array(z.strictObject({ before: count, after: count, axis: z.enum(["x", "y"]), at: count, step: measured }))
+    .describe("light just behind a seam between amplifiers over that before it, less 1; `at`: its first pixel, from 1"),
   levelUnit: z.enum(["electron", "adu"]),
   levels: z
     .strictObject({

@@ -66,6 +66,7 @@ function lookJson(report: LookReport): JsonOf<"look"> {
       readNoiseAdu: amplifier.readNoiseAdu ?? null,
       readNoiseFrom: amplifier.readNoiseFrom ?? null,
     })),
+    seams: report.seams.map(({ before, after, axis, at, step }) => ({ before, after, axis, at: at + 1, step })),
     levelUnit: report.levelUnit,
     levels: report.levels ?? null,
     ribbons: report.ribbons ?? null,
@@ -93,6 +94,13 @@ function page(report: LookReport): string {
     facts.push(["saturated", percentage(levels.saturatedShare)], ["without value", percentage(levels.missingShare)]);
   }
   if (ribbons) facts.push(["ribbons", ribbonsText(ribbons)]);
+  for (const { before, after, step } of report.seams) {
+    const percent = (value: number) => fixed(100 * value, 2);
+    facts.push([
+      `seam ${before}|${after}`,
+      `amplifier ${after} shows ${percent(step.value)} ± ${percent(step.error)} % more light`,
+    ]);
+  }
   return [report.name, textPairs(facts), ...amplifierLines(report)].join("\n");
 }
 

@@ -74,6 +74,11 @@ function zeroLevels(amplifier: Amplifier, level: OverscanLevel | undefined) {
   return { level: level.level, forRow: amplifier.levelFor === "rows" };
 }
 
+/** Where each amplifier's pixels lie in the turned frame. */
+export function regionsOf({ amplifiers, dispersionAxis }: DetectorLayout): Region[] {
+  return amplifiers.map((amplifier) => regionOf(amplifier, undefined, dispersionAxis === 2));
+}
+
 function regionOf(amplifier: Amplifier, overscan: OverscanLevel | undefined, turned: boolean): Region {
   const { x1, x2, y1, y2 }: Section = amplifier.place;
   const [x0, xEnd, y0, yEnd] = turned ? [y1 - 1, y2, x1 - 1, x2] : [x1 - 1, x2, y1 - 1, y2];

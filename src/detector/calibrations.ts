@@ -12,7 +12,7 @@ import { medianOf, thinned } from "./clip.js";
 import { combineFrames, type Stack } from "./combine.js";
 import { DetectorError } from "./detectorError.js";
 import { darkSeconds } from "./exposure.js";
-import type { DetectorGeometry } from "./frame.js";
+import { type DetectorGeometry, MaskBit } from "./frame.js";
 import { requireSameGeometry } from "./geometry.js";
 import type { NoiseFrames } from "./noise.js";
 import { noiseWarnings } from "./noiseWarnings.js";
@@ -21,6 +21,7 @@ import type { RawImage } from "./raw.js";
 import { percent, refuseImpossible } from "./rawSanity.js";
 import { type PixelResponse, pixelResponse } from "./response.js";
 import { checkRole, MOST_RESPONSE_SCATTER, type Role } from "./roles.js";
+import { seamWarnings } from "./seams.js";
 
 export interface DarkCurrent {
   /** ny × nx, e⁻/s, and its variance without the bias stack's share. */
@@ -50,6 +51,8 @@ export interface Calibrations {
   bias?: Stack;
   /** ADU, one an amplifier: the bias frames' level above the overscan, or above 0 where there is none. */
   zeroLevelAdu?: number[];
+  /** What was asked of the pixel flats; gains take two of them. */
+  toldByPixelFlats?: "seams" | "gains and seams";
   dark?: DarkCurrent;
   response?: PixelResponse;
   /** As it was read: image of the assembled frame, not 0 where a pixel is not to be used. */
@@ -93,7 +96,10 @@ export async function makeCalibrations(frames: CalibrationFrames, spectrograph?:
   const pairs: NoiseFrames = { bias: firstTwo(bias), flats: firstTwo(flats) };
   if (made.zeroLevelAdu) pairs.zeroLevelAdu = made.zeroLevelAdu;
   made.warnings.push(...noiseWarnings(pairs, spectrograph));
-  if (flats.length > 0) made.response = stackFlats(flats, made);
+  if (flats.length > 0) {
+    made.response = stackFlats(flats, made);
+    made.toldByPixelFlats = flats.length > 1 ? "gains and seams" : "seams";
+  }
   if (frames.badPixels) {
     if (made.geometry) badPixelMask(frames.badPixels, made.geometry); // complains early
     made.badPixels = frames.badPixels;
@@ -240,6 +246,8 @@ function stackFlats(frames: CalibrationFrame[], made: Calibrations): PixelRespon
     true,
   );
   warnClipped(frames, stack, "pixel flat", made);
+  const whole = { name: frames[0].name, nx, ny, electrons: stack.mean, mask: withoutValue(stack.mean), regions };
+  made.warnings.push(...seamWarnings(whole, true));
   const response = pixelResponse(stack, nx, ny, regions);
   const worst = Math.max(...response.scatter);
   if (!(worst < MOST_RESPONSE_SCATTER)) {
@@ -248,6 +256,10 @@ function stackFlats(frames: CalibrationFrame[], made: Calibrations): PixelRespon
     );
   }
   return response;
+}
+
+function withoutValue(image: Float32Array): Uint8Array {
+  return Uint8Array.from(image, (value) => (Number.isNaN(value) ? MaskBit.missing : 0));
 }
 
 function levelOf(frame: CalibrationFrame): number {

@@ -41,7 +41,12 @@ export function correctFrame(
   requireZeroLevel(frame, undefined, calibrations);
   requireReadNoise(frame);
   refuseOtherAxis(frame, spectrograph);
-  const warnings = [...(raw.warnings ?? []), ...layout.warnings, ...calibrations.warnings, ...frameWarnings(frame)];
+  const warnings = [
+    ...(raw.warnings ?? []),
+    ...layout.warnings,
+    ...calibrations.warnings,
+    ...untold(frameWarnings(frame), calibrations),
+  ];
   if (options.role) warnings.push(...checkRole(raw, frame, options.role));
   const seconds = darkTime(raw, calibrations);
   const noise = noiseIngredients(frame, calibrations, seconds);
@@ -60,6 +65,13 @@ export function correctFrame(
     assumptions: unique([...layout.assumptions, ...calibrations.assumptions, ...withoutCalibration(raw, calibrations)]),
     warnings: [...new Set(warnings)],
   };
+}
+
+/** Without what the bias frames have told better: the read noise of an amplifier. */
+function untold(warnings: string[], calibrations: Calibrations): string[] {
+  const subject = (sentence: string) => /the read noise of amplifier \d+/.exec(sentence)?.[0];
+  const told = calibrations.warnings.map(subject);
+  return warnings.filter((sentence) => subject(sentence) === undefined || !told.includes(subject(sentence)));
 }
 
 function darkTime(raw: RawImage, { dark }: Calibrations): number {

@@ -2,7 +2,7 @@
 import { readImage } from "../fits/image.js";
 import type { Spectrograph } from "../spectrograph.js";
 import { detectorLayout } from "./amplifiers.js";
-import { assemble } from "./assemble.js";
+import { type Assembled, assemble } from "./assemble.js";
 import { DetectorError } from "./detectorError.js";
 import { type ExposureKind, exposureKind, exposureSeconds } from "./exposure.js";
 import type { DetectorGeometry } from "./frame.js";
@@ -12,6 +12,7 @@ import { type AmplifierNoise, measureNoise, type NoiseFrames } from "./noise.js"
 import type { RawImage } from "./raw.js";
 import { refuseImpossible } from "./rawSanity.js";
 import { type Ribbons, ribbonAxis, ribbonsAlong } from "./ribbons.js";
+import { amplifierSeams, type Seam, seamWarnings } from "./seams.js";
 
 export interface LookReport {
   name: string;
@@ -29,6 +30,8 @@ export interface LookReport {
   /** ADU */
   saturation?: number;
   amplifiers: AmplifierNoise[];
+  /** Steps of the light between amplifiers, where a flat shows them. */
+  seams: Seam[];
   /** e⁻, or ADU above zero where no gain is known. */
   levels?: Levels;
   levelUnit: "electron" | "adu";
@@ -69,6 +72,7 @@ export async function lookAt(
     kindFrom: said,
     exposureSeconds: Number.isNaN(seconds) ? null : seconds,
     amplifiers: [],
+    seams: [],
     levelUnit: "electron",
     dispersionAxisSeen: null,
     assumptions: [],
@@ -109,6 +113,7 @@ function describe(report: LookReport, raw: RawImage, spectrograph: Spectrograph 
   const frame = assemble(raw, layout);
   report.levels = levelsOf(frame);
   report.warnings.push(...frameWarnings(frame));
+  addSeams(report, frame);
   report.ribbons = ribbonsAlong("x", frame.electrons, frame.nx, frame.ny);
   const seen = ribbonAxis(frame.electrons, frame.nx, frame.ny);
   if (seen === undefined) return;
@@ -119,6 +124,14 @@ function describe(report: LookReport, raw: RawImage, spectrograph: Spectrograph 
   report.warnings.push(
     `${raw.name}: wavelength is said to run along axis ${axis}, but the ribbons of light run along axis ${3 - axis}; give dispersion_axis in the spectrograph file.`,
   );
+}
+
+/** Lamp light is smooth across a seam; sky, arc and twilight have lines there. */
+function addSeams(report: LookReport, frame: Assembled): void {
+  if (!["flat", "fibre flat", "detector flat"].includes(report.kind)) return;
+  const evenLight = report.kind === "detector flat";
+  report.seams = amplifierSeams(frame, evenLight);
+  report.warnings.push(...seamWarnings(frame, evenLight));
 }
 
 function addNoise(report: LookReport, frames: NoiseFrames, spectrograph: Spectrograph | undefined): void {

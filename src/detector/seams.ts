@@ -4,6 +4,7 @@
  * hits, bad pixels and structure are in it.
  *
  *     sum(t) = c₀ + c₁ t + c₂ t² + c₃ t³ + d · [t > 0],   step = d / c₀ */
+import type { Region } from "./assemble.js";
 import { clippedScatter, medianOf } from "./clip.js";
 import type { Measured } from "./headerDisagreements.js";
 import { invertPositive } from "./smoothLevel.js";
@@ -11,8 +12,9 @@ import { invertPositive } from "./smoothLevel.js";
 /** Pixels on each side of the seam. */
 const REACH = 48;
 const FEWEST_PIXELS = 16;
-/** Rows summed: more than a pitch or two, so that a tilted fibre's light leaves a strip slowly. */
+/** Rows summed, under fibres and under even light: several pitches, so that a tilted fibre's light leaves a strip slowly. */
 const STRIP = 24;
+const EVEN_STRIP = 12;
 const FEWEST_STRIPS = 4;
 /** Steps below this are as good as none: gains are given to three digits. */
 const LEAST_STEP = 0.01;
@@ -27,7 +29,7 @@ export interface SeamFrame {
   electrons: Float32Array;
   mask: Uint8Array;
   /** Which part each amplifier read: x0 ≤ x < x1, y0 ≤ y < y1. */
-  regions: { x0: number; x1: number; y0: number; y1: number; number: number }[];
+  regions: Pick<Region, "x0" | "x1" | "y0" | "y1" | "amplifier">[];
 }
 
 export interface Seam {
@@ -46,21 +48,22 @@ export interface Seam {
  * @param evenLight the whole detector is lit, as by a detector flat. */
 export function amplifierSeams(frame: SeamFrame, evenLight: boolean): Seam[] {
   const seams: Seam[] = [];
+  const strip = evenLight ? EVEN_STRIP : STRIP;
   for (const a of frame.regions) {
     for (const b of frame.regions) {
       if (a.x1 === b.x0) {
         const from = Math.max(a.y0, b.y0);
         const to = Math.min(a.y1, b.y1);
         const reach = Math.min(REACH, a.x1 - a.x0, b.x1 - b.x0);
-        const step = stepOf(frame, "x", b.x0, reach, from, to);
-        if (step) seams.push({ before: a.number, after: b.number, axis: "x", at: b.x0, step });
+        const step = stepOf(frame, "x", b.x0, reach, from, to, strip);
+        if (step) seams.push({ before: a.amplifier.number, after: b.amplifier.number, axis: "x", at: b.x0, step });
       }
       if (a.y1 === b.y0 && evenLight) {
         const from = Math.max(a.x0, b.x0);
         const to = Math.min(a.x1, b.x1);
         const reach = Math.min(REACH, a.y1 - a.y0, b.y1 - b.y0);
-        const step = stepOf(frame, "y", b.y0, reach, from, to);
-        if (step) seams.push({ before: a.number, after: b.number, axis: "y", at: b.y0, step });
+        const step = stepOf(frame, "y", b.y0, reach, from, to, strip);
+        if (step) seams.push({ before: a.amplifier.number, after: b.amplifier.number, axis: "y", at: b.y0, step });
       }
     }
   }
@@ -92,15 +95,16 @@ function stepOf(
   reach: number,
   from: number,
   to: number,
+  strip: number,
 ): Measured | undefined {
   if (reach < FEWEST_PIXELS) return undefined;
-  const nStrip = Math.floor((to - from) / STRIP);
+  const nStrip = Math.floor((to - from) / strip);
   if (nStrip < FEWEST_STRIPS) return undefined;
   const design = designOf(reach);
   const strips: { level: number; step: number }[] = [];
   for (let s = 0; s < nStrip; s++) {
-    const start = from + Math.floor((s * (to - from - STRIP)) / Math.max(1, nStrip - 1));
-    const sums = stripSums(frame, axis, seam - reach, 2 * reach, start);
+    const start = from + Math.floor((s * (to - from - strip)) / Math.max(1, nStrip - 1));
+    const sums = stripSums(frame, axis, seam - reach, 2 * reach, start, strip);
     const coef = clippedFit(design, sums);
     if (coef && coef[0] > 0 && coef[0] + coef[4] > 0) strips.push({ level: coef[0], step: coef[4] / coef[0] });
   }
@@ -114,15 +118,22 @@ function stepOf(
 
 /** Mean over the strip's good pixels, pixel by pixel across the seam. A lost pixel would take its ribbon's light with it:
  * its place across the seam is left out (NaN). */
-function stripSums(frame: SeamFrame, axis: "x" | "y", first: number, n: number, start: number): Float64Array {
+function stripSums(
+  frame: SeamFrame,
+  axis: "x" | "y",
+  first: number,
+  n: number,
+  start: number,
+  strip: number,
+): Float64Array {
   const { nx, electrons, mask } = frame;
   return Float64Array.from({ length: n }, (_, i) => {
     let sum = 0;
-    for (let k = start; k < start + STRIP; k++) {
+    for (let k = start; k < start + strip; k++) {
       const at = axis === "x" ? k * nx + first + i : (first + i) * nx + k;
       sum += mask[at] === 0 ? electrons[at] : Number.NaN;
     }
-    return sum / STRIP;
+    return sum / strip;
   });
 }
 

@@ -206,3 +206,58 @@ describe("a look at a frame", () => {
     );
   });
 });
+
+describe("errors of gain and read noise", () => {
+  /** A small detector, so that hundreds of pairs are drawn in seconds: 46 × 60 pixels, 12 columns of overscan. */
+  const SMALL: Cards = { DATASEC: "[1:46,1:60]", BIASSEC: "[47:58,1:60]", GAIN: 1.6, RDNOISE: 5.2, SATURATE: 65535 };
+  const small = (seed: number, level: number, reddening = 0) => {
+    const next = seeded(seed);
+    return rawFrame(`f${seed}.fits`, 58, 60, { ...SMALL, DISPAXIS: 1 }, (x, y) => {
+      const response = 1 + 0.01 * Math.sin(12.9 * x + 78.2 * y);
+      const mean =
+        x < 46 ? level * (1.3 + Math.sin((y + 0.01 * x) * 1.28)) * response * (1 + reddening * Math.sin(x)) : 0;
+      return Math.round(
+        1000 + Math.sin(y / 20 + seed) + (poissonDeviate(mean, next) + 5.2 * normalDeviate(next)) / 1.6,
+      );
+    });
+  };
+  const spread = (pulls: number[]) => {
+    const mean = pulls.reduce((sum, pull) => sum + pull, 0) / pulls.length;
+    return { mean, std: Math.sqrt(pulls.reduce((sum, pull) => sum + (pull - mean) ** 2, 0) / (pulls.length - 1)) };
+  };
+
+  it.each([
+    ["bright", 8000],
+    ["where read noise has a fifth of the variance", 110],
+  ])("cover the truth in 160 pairs of flats, %s", (_, level) => {
+    const gains: number[] = [];
+    const noises: number[] = [];
+    for (let run = 0; run < 160; run++) {
+      const seed = 10_000 + 8 * run + level;
+      const { amplifiers } = measureNoise({
+        bias: [small(seed, 0), small(seed + 1, 0)],
+        flats: [small(seed + 2, level), small(seed + 3, level)],
+      });
+      const { gain, readNoiseAdu } = amplifiers[0];
+      gains.push((gain!.value - 1.6) / gain!.error);
+      noises.push((readNoiseAdu!.value - Math.sqrt((5.2 / 1.6) ** 2 + 1 / 12)) / readNoiseAdu!.error);
+    }
+    // The std of 160 pulls is itself good to 1/√320 = 0.056, their mean to 0.08.
+    for (const { mean, std } of [spread(gains), spread(noises)]) {
+      expect(Math.abs(std - 1)).toBeLessThan(0.15);
+      expect(Math.abs(mean)).toBeLessThan(0.32);
+    }
+  });
+
+  it("grow when structure does not cancel, and flats of different light measure nothing", () => {
+    const clean = measureNoise({ flats: [small(1, 8000), small(2, 8000)] }).amplifiers[0].gain!;
+    const tinted = measureNoise({ flats: [small(1, 8000), small(2, 8000, 0.02)] }).amplifiers[0].gain!;
+    expect(tinted.value).toBeLessThan(1.6 - 4 * clean.error);
+    expect(tinted.error).toBeGreaterThan(3 * clean.error);
+    const { amplifiers, warnings } = measureNoise({ flats: [small(1, 8000), small(2, 8000, 0.9)] });
+    expect([amplifiers[0].gain, warnings]).toEqual([
+      undefined,
+      ["f1.fits: amplifier 1: too little light, or not the same light, in the pair of flats to measure its gain."],
+    ]);
+  });
+});
