@@ -24,7 +24,7 @@ export interface RawEstimate {
 export function solveCrosstalk(estimate: RawEstimate, nFibre: number, bandwidth: number): Estimate {
   const half = 2 * bandwidth + 1;
   const n = 2 * nFibre;
-  const system = interleave(estimate, nFibre, bandwidth);
+  const system = crosstalkSystem(estimate, nFibre, bandwidth);
   factorBand(system, n, half);
   const solution = new Float64Array(n);
   for (let k = 0; k < nFibre; k++) solution[2 * k] = estimate.raw[k];
@@ -52,7 +52,11 @@ export function withoutCrosstalk(estimate: RawEstimate, nFibre: number, bandwidt
 
 /** Rows y0 x0 y1 x1 … of the symmetric system, half-bandwidth 2·bandwidth + 1. A fibre of which W catches next to
  * nothing is left out of C, or its light, told by rounding alone, would spoil all others; what it spills stays there. */
-function interleave({ crosstalk, covariance }: RawEstimate, nFibre: number, bandwidth: number): Float64Array {
+export function crosstalkSystem(
+  { crosstalk, covariance }: RawEstimate,
+  nFibre: number,
+  bandwidth: number,
+): Float64Array {
   const half = 2 * bandwidth + 1;
   const measured = (k: number) => crosstalk[k * half + bandwidth] >= leastShare;
   const band = new Float64Array(2 * nFibre * (half + 1));
