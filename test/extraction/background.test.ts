@@ -15,7 +15,7 @@ function surface(x: number, y: number): number {
 
 /** 24 fibres with gaps where some are dead; their light is taken out and the surface put in. */
 function gappedScene(dead: number[]): FrameScene {
-  const flux = (k: number) => (dead.includes(k) ? 0 : 300 + 40 * k);
+  const flux = (k: number) => 300 + 40 * k;
   const scene = frameScene({ nx, ny, nFibre: 24, pitch: 10.1, sigma: 1.04, bow: 0.5, background: 0, flux }, dead);
   scene.frame.electrons.forEach((_, i) => {
     scene.frame.electrons[i] += surface(i % nx, Math.floor(i / nx));
@@ -94,7 +94,9 @@ describe("background between the fibres", () => {
     ]);
     expect([...fit.coefficients]).toEqual([0]);
     expect(fit.rms).toBeNaN();
-    expect((await extractFrame(frame, tramlines)).warnings).toEqual(fit.warnings);
+    // The lines are not where the light is, which is beside the point here.
+    const options = { shift: false, checkNames: false };
+    expect((await extractFrame(frame, tramlines, options)).warnings).toEqual(fit.warnings);
   });
 
   it("is written under each fibre in a whole extraction, fibres' wings told apart from it", async () => {

@@ -2,7 +2,7 @@
 import type { Frame } from "../../src/detector/frame.js";
 import { Header } from "../../src/fits/header.js";
 import type { Tramlines } from "../../src/tramlines/tramlines.js";
-import { makeScene, type SceneOptions } from "../scene.js";
+import { defaults, makeScene, type SceneOptions } from "../scene.js";
 
 export interface FrameScene {
   frame: Frame;
@@ -11,9 +11,10 @@ export interface FrameScene {
   flux: Float64Array;
 }
 
-/** `dead`: fibres, from 0, that the tramlines call dead (their light is left as the scene has it). */
+/** `dead`: fibres, from 0, that hold no light and that the tramlines call dead. */
 export function frameScene(change: Partial<SceneOptions> = {}, dead: number[] = []): FrameScene {
-  const { input, flux } = makeScene(change);
+  const lit = change.flux ?? defaults.flux;
+  const { input, flux } = makeScene({ ...change, flux: (k, x) => (dead.includes(k) ? 0 : lit(k, x)) });
   const { nx, ny, nFibre } = input;
   const frame: Frame = {
     name: "scene.fits",
