@@ -152,6 +152,7 @@ async function extractAndScore(
     method,
     crosstalkCorrected: extraction.spectra.crosstalkCorrected,
     shiftPixels: night.scene.exposure.find((exposure) => exposure.name === name)!.shift,
+    measuredShiftPixels: extraction.shift?.coefficients[0] ?? null,
     decades: scoreByDecade(extraction.spectra, known),
     leak: scoreLeak(extraction.spectra, known, CONTRAST),
     cosmicRays: scoreCosmicRays(extraction.spectra, known),

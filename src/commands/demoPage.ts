@@ -18,7 +18,7 @@ export function demoPage(json: DemoJson, tracing: [string, string][]): string {
     "Spectra against the truth: median bias, and the scatter of (flux − truth) / σ, which is 1 when error bars are true",
     decadeTable(json.runs),
     "",
-    `Light of neighbours over ${still[0].leak.contrast} times brighter that ends up in a fibre; cosmic rays`,
+    `Shift that was measured and applied; light of neighbours over ${still[0].leak.contrast} times brighter that ends up in a fibre; cosmic rays`,
     outcomeTable(json.runs),
     "",
     closingWords(still, moved, json.tracing.profile.kind),
@@ -40,11 +40,21 @@ function decadeTable(runs: Run[]): string {
 }
 
 function outcomeTable(runs: Run[]): string {
-  const heading = ["method", "mean leak", "worst", "hits", "found", "spoilt unflagged", "clean points flagged"];
+  const heading = [
+    "method",
+    "shift px",
+    "mean leak",
+    "worst",
+    "hits",
+    "found",
+    "spoilt unflagged",
+    "clean points flagged",
+  ];
   return textTable([
     heading,
     ...runs.map(({ leak, cosmicRays, ...run }) => [
       runName({ leak, cosmicRays, ...run }),
+      fixed(run.measuredShiftPixels, 4),
       percentage(leak.meanShare, 2),
       percentage(leak.worstShare, 2),
       String(cosmicRays.nHit),

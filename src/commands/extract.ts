@@ -4,6 +4,7 @@ import type { Frame } from "../detector/frame.js";
 import { type Extraction, extractFrame } from "../extraction/extract.js";
 import { writeSpectra } from "../extraction/file.js";
 import { countFibres, type SpectraSummary, summariseSpectra } from "../report/summary.js";
+import type { Shift } from "../tramlines/shift.js";
 import {
   addCommonOptions,
   addFrameOptions,
@@ -120,6 +121,9 @@ function extractJson(
     tracing: tracing === undefined ? null : tracingJson(tracing),
     fibres: countFibres(tramlines),
     columns: extraction.spectra.nx,
+    shift: shiftJson(extraction.shift),
+    profileError: extraction.profileError,
+    refinedProfile: extraction.refined,
     rejectedPixels: extraction.nRejected,
     backgroundRmsElectrons: extraction.background?.rms ?? null,
     points: summary.nPoint,
@@ -136,6 +140,12 @@ function extractJson(
   };
 }
 
+function shiftJson(shift: Shift | null) {
+  if (shift === null) return null;
+  const [pixels, alongDispersion, alongSlit] = shift.coefficients;
+  return { pixels, error: shift.errors[0], alongDispersion, alongSlit, rmsPixels: shift.rms };
+}
+
 function facts(
   { tramlines, tracing }: Traced,
   extraction: Extraction,
@@ -150,6 +160,7 @@ function facts(
     ...(tracing === undefined
       ? ([["fibres", fibresText(countFibres(tramlines))]] as [string, string][])
       : tracingFacts(tracing)),
+    ["shift", shiftText(extraction.shift)],
     ["method", `${method}${crosstalk}, ${options.precision}`],
     ["cosmic rays", options.cosmicRays ? `${counted(extraction.nRejected, "pixel")} rejected` : "not looked for"],
     ["usable points", `${summary.nUsable} of ${summary.nPoint} (${percentage(summary.nUsable / summary.nPoint, 2)})`],
@@ -159,6 +170,13 @@ function facts(
       `${fixed(median, 1)} per pixel (faintest fibre ${fixed(faintest, 1)}, brightest ${fixed(brightest, 1)})`,
     ],
   ];
+}
+
+function shiftText(shift: Shift | null): string {
+  if (shift === null) return "not measurable, none applied";
+  const [middle, alongDispersion, alongSlit] = shift.coefficients;
+  const ends = `${fixed(alongDispersion, 4)} px to the last column, ${fixed(alongSlit, 4)} px to the last row`;
+  return `${fixed(middle, 4)} ± ${fixed(shift.errors[0], 4)} px against the tramlines, changing by ${ends}; applied`;
 }
 
 /** weightLost → weight lost */

@@ -127,6 +127,18 @@ const extract = z.strictObject({
   tracing: z.strictObject(tracing).nullable().describe("null when the tramlines came from a file"),
   fibres,
   columns: count.describe("of each spectrum"),
+  shift: z
+    .strictObject({
+      pixels: z.number().describe("of the frame's light against the tramlines, in the middle of the frame"),
+      error: number,
+      alongDispersion: z.number().describe("its change from the middle to the last column"),
+      alongSlit: z.number().describe("its change from the middle to the last row"),
+      rmsPixels: number,
+    })
+    .nullable()
+    .describe("applied before extracting; null when there was too little light to measure it"),
+  profileError: number.describe("share of the light nearby by which pixels miss the profiles beyond noise"),
+  refinedProfile: z.boolean().describe("whether the profile was refined on this frame"),
   rejectedPixels: count.describe("as cosmic rays"),
   backgroundRmsElectrons: number.describe("scatter of the light between the fibres about its smooth fit"),
   points: count.describe("spectrum points of fibres that are not dead"),
@@ -205,6 +217,7 @@ const demo = z.strictObject({
       method: z.enum(["joint", "optimal", "boxcar"]),
       crosstalkCorrected: z.boolean(),
       shiftPixels: z.number().describe("how far the frame's light has moved since the flat"),
+      measuredShiftPixels: number.describe("the same as the extraction measured and applied it"),
       decades: z
         .array(
           z.strictObject({

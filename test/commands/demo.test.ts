@@ -32,6 +32,9 @@ describe("the demo", () => {
       ...["tramlines.fits", "sci_01-joint.fits", "sci_01-optimal-uncorrected.fits", "sci_01-boxcar.fits"],
       ...["sci_01-boxcar-uncorrected.fits", "sci_02-joint.fits"],
     ]);
+    for (const { shiftPixels, measuredShiftPixels } of json.runs) {
+      expect(Math.abs(measuredShiftPixels! - shiftPixels)).toBeLessThan(0.01);
+    }
     for (const { decades } of json.runs) expect(decades.filter(({ from }) => from >= 10 && from < 1e5)).toHaveLength(4);
   });
 

@@ -170,6 +170,8 @@ describe("extract", () => {
     expect(json.signalToNoise.faintest).toBeLessThan(json.signalToNoise.median!);
     expect(json.spectra[8]).toMatchObject({ fibre: 9, state: "dead", usableShare: 0, medianSignalToNoise: null });
     expect(json.rejectedPixels).toBeGreaterThan(0);
+    // The scene moves nothing between flat and science frame.
+    expect(Math.abs(json.shift!.pixels)).toBeLessThan(0.02);
     expect((await readPositions(join(cwd, "spectra.fits"))).role[2]).toBe("sky");
   });
 
