@@ -15,7 +15,6 @@ const BIAS = "night/raw/bias_01.fits";
 const KNOWN = ["--spectrograph", "night/spectrograph.toml"];
 
 let cwd: string;
-let written = false;
 
 beforeAll(async () => {
   cwd = smallNight();
@@ -42,10 +41,7 @@ beforeAll(async () => {
   copy(SCIENCE, "no-section.fits", { DATASEC1: "'1-200'" });
   await reduced();
 });
-afterEach(() => {
-  if (written) rmSync(join(cwd, "out.fits"));
-  written = false;
-});
+afterEach(() => rmSync(join(cwd, "out.fits"), { force: true }));
 afterAll(() => rmSync(cwd, { recursive: true }));
 
 function done(args: string[]): void {
@@ -377,8 +373,7 @@ function refused(args: string[], sentence: RegExp): void {
 
 /** The warnings of a run that gives its product all the same. */
 function warned(args: string[]): string[] {
-  const run = hatchel([...args, "--force"], { cwd });
+  const run = hatchel(args, { cwd });
   expect(run.code, run.stderr).toBe(0);
-  written = true;
   return lines(run.stderr).filter((line) => line.startsWith("warning: "));
 }
