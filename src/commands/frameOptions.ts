@@ -2,6 +2,7 @@
 import { type Command, Option } from "commander";
 import type { Precision } from "../kernels/banded.js";
 import type { Method } from "../reference/extract.js";
+import type { ProfileKind } from "../tramlines/profiles.js";
 import type { CommonOptions } from "./perform.js";
 import { UsageError } from "./usage.js";
 
@@ -19,6 +20,8 @@ export interface FrameOptions extends CommonOptions {
 export interface TramlineOptions {
   flat?: string[];
   tramlines?: string;
+  /** For flats that are traced on the way; tramlines have theirs. */
+  profile?: ProfileKind | "auto";
 }
 
 /** How light is gathered. */
@@ -53,7 +56,16 @@ export function hduOption(): Option {
 export function addTramlineOptions(command: Command): Command {
   return command
     .option("--flat <file...>", "fibre flats to trace on the way")
-    .option("--tramlines <file>", "tramlines that 'hatchel trace' wrote");
+    .option("--tramlines <file>", "tramlines that 'hatchel trace' wrote")
+    .addOption(profileOption());
+}
+
+export function profileOption(): Option {
+  const kinds = ["auto", "gaussian", "hermite", "empirical"] as const;
+  return new Option(
+    "--profile <model>",
+    "how light spreads across a tramline: auto, gaussian, hermite or empirical; auto takes what fits columns of the flat best that it was not made from (default: auto)",
+  ).argParser(oneOf("--profile", kinds));
 }
 
 export function addMethodOptions(command: Command): Command {

@@ -16,6 +16,7 @@ import { readImage } from "../fits/image.js";
 import { readSpectrograph, type Spectrograph } from "../spectrograph.js";
 import { checkGeometry, readTramlines } from "../tramlines/file.js";
 import type { SlitLayout } from "../tramlines/layout.js";
+import { chooseProfile, type ProfileKind, type TriedProfile } from "../tramlines/profiles.js";
 import { type Tracing, traceFlat } from "../tramlines/trace.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { RefusalError } from "./failures.js";
@@ -32,10 +33,15 @@ export interface Bench {
   inputs: { name: string; checksum: string }[];
 }
 
+/** A tracing whose tramlines have the profile that was asked for. */
+export interface ProfiledTracing extends Tracing {
+  tried: TriedProfile[];
+}
+
 /** The tramlines of a job; `tracing` when they were traced on the way. */
 export interface Traced {
   tramlines: Tramlines;
-  tracing?: Tracing;
+  tracing?: ProfiledTracing;
   /** The first flat's. */
   header?: Header;
   assumptions: string[];
@@ -84,9 +90,14 @@ async function readRaw(path: string, bench: Bench): Promise<RawImage> {
   return raw;
 }
 
-/** Traces the flats.
+/** Traces the flats and measures their profile.
  * @throws TraceError, NamingError. */
-export async function traceFlats(flats: string[], bench: Bench, progress: Progress): Promise<Traced> {
+export async function traceFlats(
+  flats: string[],
+  bench: Bench,
+  progress: Progress,
+  profile: ProfileKind | "auto" = "auto",
+): Promise<Traced> {
   const { calibrations, spectrograph } = bench;
   const frames: Frame[] = [];
   const raws: RawImage[] = [];
@@ -99,13 +110,16 @@ export async function traceFlats(flats: string[], bench: Bench, progress: Progre
   const detector = flatWarnings(raws, frames, calibrations, spectrograph);
   progress.stage("tracing the flat");
   const { layout, warning } = slitLayout(spectrograph);
-  const tracing = await traceFlat(frames, layout);
+  const traced = await traceFlat(frames, layout);
+  progress.stage("measuring the profile");
+  const { tramlines, tried } = await chooseProfile(frames, traced.tramlines, profile);
+  const tracing = { ...traced, tramlines, tried };
   return {
-    tramlines: tracing.tramlines,
+    tramlines,
     tracing,
     header: frames[0].header,
-    assumptions: [...frames.flatMap((frame) => frame.assumptions), ...tracing.assumptions],
-    warnings: [...warning, ...frames.flatMap((frame) => frame.warnings), ...detector, ...tracing.warnings],
+    assumptions: [...frames.flatMap((frame) => frame.assumptions), ...traced.assumptions],
+    warnings: [...warning, ...frames.flatMap((frame) => frame.warnings), ...detector, ...traced.warnings],
   };
 }
 
@@ -120,7 +134,7 @@ export async function tramlinesFor(
   const { flat, tramlines: file } = options;
   const traced =
     file === undefined
-      ? await traceFlats(flat ?? [], bench, progress)
+      ? await traceFlats(flat ?? [], bench, progress, options.profile)
       : { tramlines: await readTramlines(readOnce(file), file), assumptions: [], warnings: [] };
   bench.inputs.push(...fileInputs(file));
   checkGeometry(frame, traced.tramlines, file === undefined ? flat?.join(", ") : file);
@@ -141,6 +155,7 @@ export function frameLines(options: FrameOptions & TramlineOptions): string[] {
   const lines = Object.entries(roles).flatMap(([role, files]) =>
     [files ?? []].flat().map((path) => `${role} ${basename(path)}`),
   );
+  if (flat !== undefined) lines.push(`profile ${options.profile ?? "auto"}`);
   return hdu === undefined ? lines : [...lines, `hdu ${hdu}`];
 }
 

@@ -101,7 +101,14 @@ const tracing = {
   naming: z
     .strictObject({ score: z.number(), runnerUpScore: number, readings: z.array(z.string()) })
     .describe("logarithms of likelihood of the naming chosen and of the best other one"),
-  profile: z.strictObject({ kind: z.string(), medianFwhmPixels: number, relativeError: number }),
+  profile: z.strictObject({
+    kind: z.string(),
+    medianFwhmPixels: number,
+    relativeError: number,
+    tried: z
+      .array(z.strictObject({ kind: z.string(), misfit: number, error: number }))
+      .describe("models tried, with their misfit per degree of freedom on columns held out of every fit"),
+  }),
 };
 
 const trace = z.strictObject({ ...head("trace"), output: z.string(), ...tracing, ...tail });
@@ -203,6 +210,72 @@ const verify = z.strictObject({
   ...tail,
 });
 
+const grade = z.enum(["good", "doubtful", "bad"]);
+
+const recover = z.strictObject({
+  ...head("recover"),
+  frame: z.string(),
+  method: z.enum(["joint", "optimal", "boxcar"]),
+  profile: z.string().describe("kind of the profiles under test"),
+  injectedFrom: z.array(z.string()).describe("the flats whose pixels were injected"),
+  seed: count,
+  flatElectrons: number.describe("median light of the flat's fibres, e- per column"),
+  flawedPixels: count.describe("of the flat, bad or hit by a cosmic ray, replaced by the median of their neighbours"),
+  movedPixels: z.number().describe("how far the flat's light was moved to the frame's, pixels at most"),
+  verdict: z.strictObject({
+    grade,
+    sentence: z.string(),
+    findings: z.array(
+      z.strictObject({
+        about: z.enum(["flux", "error bars", "leaked light", "emission lines", "dark positions"]),
+        grade,
+        sentence: z.string(),
+      }),
+    ),
+  }),
+  cells: z
+    .array(
+      z.strictObject({
+        from: z.number(),
+        to: z.number(),
+        place: z
+          .enum(["adjacent", "next but one", "far"])
+          .describe("to a fibre 30 times brighter than all the light in this one"),
+        nPoint: count,
+        nFibre: count,
+        bias: number.describe("(sum of found - sum of known) / sum of known"),
+        biasError: number,
+        pull: number.describe("robust standard deviation of (found - known) / sigma about 0"),
+        beyond5Sigma: number,
+        falselyFlaggedShare: number.describe("newly flagged as hit by a cosmic ray"),
+        nLine: count.describe("unresolved emission lines injected"),
+        lineFlaggedShare: number.describe("that had a pixel rejected at their peak"),
+        lineClippedShare: number.describe("that lost over a fifth of their light, beyond 5 sigma"),
+      }),
+    )
+    .describe("by injected light, e- per column, and place"),
+  dark: z
+    .array(
+      z.strictObject({
+        light: z.enum(["injected", "own"]),
+        distance: count.describe("1 beside a lit fibre, 2 next but one"),
+        nPosition: count,
+        meanShare: number.describe("of the brighter lit neighbour's light that is found at dark positions"),
+        meanError: number,
+        worstShare: number,
+        worstError: number,
+        worstPosition: z.string(),
+        pull: number.describe("robust standard deviation of found / sigma about 0"),
+      }),
+    )
+    .describe("places without a fibre, extracted like fibres: the right answer is 0"),
+  worstFibre: z
+    .strictObject({ fibre: count, bias: number, error: number })
+    .nullable()
+    .describe("of the highest level injected"),
+  ...tail,
+});
+
 const demo = z.strictObject({
   ...head("demo"),
   folder: z.string(),
@@ -263,7 +336,7 @@ const failure = z.strictObject({
 });
 
 /** By command; `failure` is what any of them prints instead when it fails. */
-export const jsonSchemas = { demo, simulate, look, trace, extract, compare, verify, failure };
+export const jsonSchemas = { demo, simulate, look, trace, extract, compare, verify, recover, failure };
 
 export type CommandName = Exclude<keyof typeof jsonSchemas, "failure">;
 

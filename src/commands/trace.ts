@@ -2,9 +2,17 @@
 import type { Command } from "commander";
 import { countFibres, medianFwhm } from "../report/summary.js";
 import { writeTramlines } from "../tramlines/file.js";
+import type { ProfileKind } from "../tramlines/profiles.js";
 import type { Tracing } from "../tramlines/trace.js";
-import { addCommonOptions, addFrameOptions, type FrameOptions, forceOption, outputOption } from "./frameOptions.js";
-import { frameLines, inputPaths, oneOfEach, openBench, traceFlats } from "./frames.js";
+import {
+  addCommonOptions,
+  addFrameOptions,
+  type FrameOptions,
+  forceOption,
+  outputOption,
+  profileOption,
+} from "./frameOptions.js";
+import { frameLines, inputPaths, oneOfEach, openBench, type ProfiledTracing, traceFlats } from "./frames.js";
 import { jsonHelp } from "./json.js";
 import { checkOutput, uninterrupted } from "./output.js";
 import { type Outcome, perform } from "./perform.js";
@@ -13,6 +21,7 @@ import { counted, fixed, ranges, textPairs } from "./textTable.js";
 import { version } from "./version.js";
 
 interface TraceCommandOptions extends FrameOptions {
+  profile?: ProfileKind | "auto";
   output: string;
   force?: boolean;
 }
@@ -24,6 +33,7 @@ export function addTrace(program: Command): void {
     .description("Finds, names and traces the fibres of one or more fibre flats.")
     .argument("<FLAT...>", "fibre flats of one readout window; - is standard input")
     .addOption(outputOption("tramlines").makeOptionMandatory())
+    .addOption(profileOption())
     .addOption(forceOption());
   addCommonOptions(addFrameOptions(command))
     .addHelpText("after", jsonHelp("trace"))
@@ -37,7 +47,12 @@ async function trace(flats: string[], options: TraceCommandOptions, progress: Pr
   const inputs = inputPaths(flats, options);
   checkOutput(output, { force, inputs });
   const bench = await openBench(inputs, options, progress);
-  const { tracing, tramlines, header, assumptions, warnings } = await traceFlats(flats, bench, progress);
+  const { tracing, tramlines, header, assumptions, warnings } = await traceFlats(
+    flats,
+    bench,
+    progress,
+    options.profile,
+  );
   const lines = frameLines({ ...options, flat: flats });
   const file = { version, options: lines, inputs: bench.inputs, header };
   await uninterrupted(() => writeTramlines(output, tramlines, file, { force, inputs }));
@@ -53,7 +68,7 @@ async function trace(flats: string[], options: TraceCommandOptions, progress: Pr
 }
 
 /** Part of the JSON object of every command that traces. */
-export function tracingJson(tracing: Tracing) {
+export function tracingJson(tracing: ProfiledTracing) {
   const { tramlines, naming } = tracing;
   return {
     fibres: countFibres(tramlines),
@@ -66,12 +81,13 @@ export function tracingJson(tracing: Tracing) {
       kind: tramlines.profile.kind,
       medianFwhmPixels: medianFwhm(tramlines),
       relativeError: tramlines.profile.relativeError,
+      tried: tracing.tried,
     },
   };
 }
 
 /** The same for people. */
-export function tracingFacts(tracing: Tracing): [string, string][] {
+export function tracingFacts(tracing: ProfiledTracing): [string, string][] {
   const { tramlines, naming } = tracing;
   return [
     ["fibres", fibresText(countFibres(tramlines))],
@@ -79,7 +95,7 @@ export function tracingFacts(tracing: Tracing): [string, string][] {
     ["trace", traceText(tracing)],
     [
       "profile",
-      `${tramlines.profile.kind}, median FWHM ${fixed(medianFwhm(tramlines), 2)} px, strays from the light by ${fixed(100 * tramlines.profile.relativeError, 1)} %`,
+      `${tramlines.profile.kind}, median FWHM ${fixed(medianFwhm(tramlines), 2)} px, strays from the light by ${fixed(100 * tramlines.profile.relativeError, 1)} %; misfit on held-out columns: ${tracing.tried.map(({ kind, misfit, error }) => `${kind} ${fixed(misfit, 2)} ± ${fixed(error, 2)}`).join(", ")}`,
     ],
   ];
 }

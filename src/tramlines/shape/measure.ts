@@ -57,7 +57,7 @@ export function measureShape(
       table = tabulate(basis, state.coefficients);
     }
     const normal = new ShapeNormal(kernels, basis, flat.ny, lines.nFibre);
-    for (const x of fittingColumns(flat.nx, shapeColumns, round)) {
+    for (const x of fittingColumns(flat.nx, shapeColumns[round], round)) {
       normal.add(lines, table, state.background, flatColumn(flat, x), false, round > 0 ? 6 : 0);
     }
     const step = normal.solve(state, table);
@@ -65,7 +65,7 @@ export function measureShape(
     information = normal.shapeInformation();
     state = step;
     table = tabulate(basis, state.coefficients);
-    const columns = fittingColumns(flat.nx, geometryColumns, round).map((x) =>
+    const columns = fittingColumns(flat.nx, geometryColumns[round], round).map((x) =>
       measureColumn(lines, table, state.background, flatColumn(flat, x)),
     );
     applyGeometry(kernels, lines, columns);
