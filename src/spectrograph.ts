@@ -43,6 +43,7 @@ const schema = z.strictObject({
       gap: z.union([z.number().nonnegative(), z.array(z.number().nonnegative())]).optional(),
       dead: z.array(count).optional(),
       sky: z.array(count).optional(),
+      targets: z.record(z.string(), z.array(count).min(1)).optional(),
     })
     .optional(),
   wavelength: z
@@ -78,7 +79,9 @@ const KEYS: Record<string, Record<string, string>> = {
     gap: "a number of pixels, or a list with one for each gap between blocks",
     dead: "a list of slit positions, counted from 1",
     sky: "a list of slit positions, counted from 1",
+    targets: "a table of names, each with its list of slit positions",
   },
+  "slit.targets": { "*": "a list of slit positions, counted from 1" },
   wavelength: {
     medium: '"air" or "vacuum"',
     range: "two numbers over 0, in Å, at the first and at the last column",
@@ -123,6 +126,8 @@ export interface Spectrograph {
     gap?: number | number[];
     dead: number[];
     sky: number[];
+    /** Fibres that are summed, by the target's name. */
+    targets?: { name: string; fibres: number[] }[];
   };
   wavelength?: { medium?: "air" | "vacuum" /** Å */; range?: [number, number]; lamps: string[] };
 }
@@ -174,7 +179,8 @@ function sentence(file: string, tree: unknown, issue: Issue): string {
     return `${file}: unknown key '${spelled([...issue.path, key])}'; ${remedy}`;
   }
   const names = issue.path.filter((step): step is string => typeof step === "string");
-  const expected = KEYS[names.slice(0, -1).join(".")]?.[names[names.length - 1]] ?? "a table";
+  const known = KEYS[names.slice(0, -1).join(".")];
+  const expected = known?.[names[names.length - 1]] ?? known?.["*"] ?? "a table";
   const found = JSON.stringify(valueAt(tree, issue.path)) ?? "nothing";
   return `${file}: '${spelled(issue.path)}' is ${found}, but ${expected} was expected; correct it or leave the key out.`;
 }
@@ -212,6 +218,7 @@ function named(tree: z.infer<typeof schema>, file: string, folder: string): Spec
         ...given({ blocks: slit.blocks, pitch: slit.pitch, gap: slit.gap }),
         dead: slit.dead ?? [],
         sky: slit.sky ?? [],
+        ...given({ targets: slit.targets && Object.entries(slit.targets).map(([name, fibres]) => ({ name, fibres })) }),
       },
       wavelength: wavelength && {
         ...given({ medium: wavelength.medium, range: wavelength.range }),
@@ -241,6 +248,7 @@ function given<T extends object>(entries: T): Given<T> {
 }
 
 function checkSlit({ slit }: Spectrograph, file: string): void {
+  for (const target of slit?.targets ?? []) checkTarget(target, file);
   if (slit?.blocks === undefined) return;
   const nFibre = slit.blocks.reduce((sum, n) => sum + n, 0);
   if (Array.isArray(slit.gap) && slit.gap.length !== slit.blocks.length - 1) {
@@ -248,11 +256,30 @@ function checkSlit({ slit }: Spectrograph, file: string): void {
       `${file}: 'slit.gap' lists ${slit.gap.length} gaps, but ${slit.blocks.length} blocks have ${slit.blocks.length - 1} between them; give one number for each gap, or one for all.`,
     );
   }
-  for (const key of ["dead", "sky"] as const) {
-    const beyond = slit[key].find((position) => position > nFibre);
+  const lists: [key: string, positions: number[]][] = [
+    ["dead", slit.dead],
+    ["sky", slit.sky],
+    ...(slit.targets ?? []).map(({ name, fibres }): [string, number[]] => [`targets.${name}`, fibres]),
+  ];
+  for (const [key, positions] of lists) {
+    const beyond = positions.find((position) => position > nFibre);
     if (beyond === undefined) continue;
     throw new SpectrographError(
       `${file}: 'slit.${key}' names position ${beyond}, but 'slit.blocks' adds up to ${nFibre}; positions count from 1.`,
     );
   }
+}
+
+/** Names go into FITS tables; a fibre counts once. */
+function checkTarget({ name, fibres }: { name: string; fibres: number[] }, file: string): void {
+  if (!/^[ -~]{1,68}$/.test(name)) {
+    throw new SpectrographError(
+      `${file}: 'slit.targets' has a target called '${name}', but 1 to 68 characters of plain ASCII were expected; rename it.`,
+    );
+  }
+  const twice = fibres.find((fibre, i) => fibres.indexOf(fibre) < i);
+  if (twice === undefined) return;
+  throw new SpectrographError(
+    `${file}: 'slit.targets.${name}' names position ${twice} twice, but a fibre counts once in a sum; leave one out.`,
+  );
 }

@@ -6,6 +6,17 @@ import { writeSpectra } from "../extraction/file.js";
 import { countFibres, type SpectraSummary, summariseSpectra } from "../report/summary.js";
 import type { Shift } from "../tramlines/shift.js";
 import {
+  addExtraOptions,
+  type ExtraOptions,
+  extraLines,
+  extraPaths,
+  extrasFacts,
+  extrasJson,
+  measureExtras,
+  pairHits,
+  requireFittingExtras,
+} from "./extractExtras.js";
+import {
   addCommonOptions,
   addFrameOptions,
   addMethodOptions,
@@ -38,7 +49,7 @@ import { counted, fixed, percentage, textPairs } from "./textTable.js";
 import { fibresText, tracingFacts, tracingJson } from "./trace.js";
 import { version } from "./version.js";
 
-interface ExtractOptions extends FrameOptions, TramlineOptions, MethodOptions {
+interface ExtractOptions extends FrameOptions, TramlineOptions, MethodOptions, ExtraOptions {
   output: string;
   force?: boolean;
 }
@@ -51,7 +62,7 @@ export function addExtract(program: Command): void {
     .argument("<FRAME>", "the raw frame; - is standard input")
     .addOption(outputOption("spectra").makeOptionMandatory());
   addTramlineOptions(command);
-  addMethodOptions(command).addOption(forceOption());
+  addExtraOptions(addMethodOptions(command)).addOption(forceOption());
   addCommonOptions(addFrameOptions(command))
     .addHelpText("after", jsonHelp("extract"))
     .action((frame: string, options: ExtractOptions) =>
@@ -62,31 +73,41 @@ export function addExtract(program: Command): void {
 async function extract(path: string, options: ExtractOptions, progress: Progress): Promise<Outcome<"extract">> {
   requireTramlineSource("extract", options);
   requireFittingMethod("extract", options);
+  requireFittingExtras(options);
   const { output, force } = options;
-  const paths = inputPaths([path], options);
+  const paths = inputPaths([path, ...extraPaths(options)], options);
   checkOutput(output, { force, inputs: paths });
   const bench = await openBench(paths, options, progress);
   const frame = await readFrame(path, "science", bench);
   const traced = await tramlinesFor(frame, options, bench, progress);
   requireAperture(options.halfAperture, traced);
+  const pair = await pairHits(frame, traced.tramlines, options, bench, progress);
   progress.stage(`extracting ${frame.name}`);
   const extraction = await extractFrame(frame, traced.tramlines, {
     ...extractionOptions(options),
+    ...(pair === undefined ? {} : { knownHits: pair.hits }),
     onProgress: progress.share,
   });
-  const lines = [...methodLines(options), ...frameLines(options)];
-  const history = { version, options: lines, inputs: bench.inputs, sky: bench.spectrograph?.slit?.sky };
+  const extras = await measureExtras(frame, traced.tramlines, extraction, options, bench, progress);
+  const history = {
+    ...{ version, inputs: bench.inputs, sky: bench.spectrograph?.slit?.sky, extra: extras.hdus },
+    options: [...methodLines(options), ...frameLines(options), ...extraLines(options)],
+  };
   await uninterrupted(() =>
     writeSpectra(output, extraction, frame, traced.tramlines, history, { force: force === true, inputs: paths }),
   );
   const summary = summariseSpectra(extraction.spectra, traced.tramlines);
+  const { assumptions, warnings } = notes(frame, traced, extraction, summary);
+  const said = [...facts(traced, extraction, summary, options), ...extrasFacts(pair, extras)];
   return {
     json: {
       output,
       ...extractJson(frame, traced, extraction, summary, options),
-      ...notes(frame, traced, extraction, summary),
+      ...extrasJson(pair, extras),
+      assumptions,
+      warnings: oneOfEach([...warnings, ...(pair?.warnings ?? []), ...extras.warnings]),
     },
-    text: `${output === "-" ? "standard output" : output}: spectra of ${frame.name}\n${textPairs(facts(traced, extraction, summary, options))}`,
+    text: `${output === "-" ? "standard output" : output}: spectra of ${frame.name}\n${textPairs(said)}`,
   };
 }
 

@@ -123,6 +123,25 @@ const flags = z
   )
   .describe("spectrum points with each flag, dead fibres aside");
 
+const crosstalk = z.strictObject({
+  estimator: z.enum(["boxcar", "optimal"]),
+  halfAperturePixels: number.describe("null for optimal"),
+  modelByDistance: z
+    .array(z.strictObject({ distance: count, share: number }))
+    .describe(
+      "from the profile model: median share of a fibre's light that the fibre so many slit positions away counts",
+    ),
+  seen: z
+    .array(
+      z.strictObject({
+        frame: z.string(),
+        disagreeing: count.describe("leaks over 4 sigma from the model"),
+        leaks: z.array(z.strictObject({ lit: count, fibre: count, share: number, error: number, model: number })),
+      }),
+    )
+    .describe("from frames with single lit fibres: light at a dark fibre over that at the lit one"),
+});
+
 const extract = z.strictObject({
   ...head("extract"),
   output: z.string(),
@@ -163,6 +182,27 @@ const extract = z.strictObject({
       usableShare: number,
     }),
   ),
+  pair: z
+    .strictObject({
+      hitPixels: count,
+      scale: number.describe("light of the frame over that of the second one"),
+      profileError: number.describe("share of the light nearby by which the two differ beyond noise"),
+      lineError: number.describe("share of a spectrum's change along x by which the two differ beyond noise"),
+    })
+    .nullable()
+    .describe("cosmic rays found by a second frame; null without --pair"),
+  crosstalk: crosstalk.nullable().describe("null for joint unless asked for"),
+  targets: z
+    .array(
+      z.strictObject({
+        name: z.string(),
+        fibres: z.array(count),
+        used: z.array(count).describe("without the dead ones"),
+        medianSignalToNoise: number.describe("of the sum, per pixel"),
+        neglectedShare: number.describe("largest share of the variance that covariances beyond next neighbours add"),
+      }),
+    )
+    .describe("sums of fibres, as 'slit.targets' of the spectrograph file names them"),
   ...tail,
 });
 

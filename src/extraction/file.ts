@@ -25,6 +25,8 @@ export interface SpectraFileOptions {
   inputs: { name: string; checksum: string }[];
   /** Slit positions, from 1, whose fibres see sky only. */
   sky?: number[] | undefined;
+  /** HDUs that follow the spectra (extraHdus.ts). */
+  extra?: OutputHdu[] | undefined;
 }
 
 /** All HDUs of the product, for `writeFits` or `encodeFits`. */
@@ -58,6 +60,7 @@ export function spectraHdus(
     image("CHI2", undefined, single(spectra.chi2), "Reduced chi-square of the profile fit in the fibre's window."),
     image("BACKGROUND", "electron", single(spectra.background), "Scattered light under the fibre, per pixel."),
     { kind: "table", name: "POSITIONS", columns: positionColumns(spectra, tramlines, options.sky ?? []) },
+    ...(options.extra ?? []),
   ];
 }
 
