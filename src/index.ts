@@ -14,6 +14,7 @@ export { requireSameGeometry } from "./detector/geometry.js";
 export { type CalibrationPaths, loadCalibrations } from "./detector/loadCalibrations.js";
 export { type LookOptions, type LookReport, lookAt } from "./detector/look.js";
 export { type AmplifierNoise, measureNoise, type NoiseFrames, type NoiseMeasurement } from "./detector/noise.js";
+export { noiseWarnings } from "./detector/noiseWarnings.js";
 export type { RawImage } from "./detector/raw.js";
 export type { Role } from "./detector/roles.js";
 export { type Comparison, compareMethods, type MethodComparison } from "./extraction/compare.js";

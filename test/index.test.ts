@@ -8,7 +8,7 @@ const VALUES = `
   DetectorError FitsError Flag Header MaskBit NamingError SCENES SceneError SpectrographError
   TraceError UNUSABLE checkGeometry compareMethods correctFrame countFibres encodeFits extractFrame
   formatSection historyCards inputCards listHdus loadCalibrations loadKernels lookAt
-  makeCalibrations measureNoise medianFwhm medianSignalToNoise noCalibrations parseScene
+  makeCalibrations measureNoise medianFwhm medianSignalToNoise noCalibrations noiseWarnings parseScene
   parseSection parseSpectrograph readImage readPositions readScene readSpectra readSpectrograph
   readTable readTramlines requireSameGeometry scoreByDecade scoreCosmicRays scoreLeak scoreTrace
   sectionSize simulateExposure simulationFiles spectraHdus spectrographToml summariseSpectra

@@ -104,6 +104,46 @@ describe.skipIf(!here).each(["crowded", "night"])("frames '%s'", (scene) => {
   });
 });
 
+describe.skipIf(!here)("dark frames of the night", () => {
+  it("add no noise: fixed variance is read noise and dark, and the third dark scatters by it", async () => {
+    const files = { bias: series("night", "bias", 1, 5), dark: series("night", "dark", 1, 2) };
+    const calibrations = await loadCalibrations({ ...files, badPixels: `${FRAMES}night/badmask.fits` });
+    const frame = correctFrame(await readImage(path("night", "dark_03")), calibrations);
+    const variance = frame.noise.fixedVarianceImage!;
+    // 3.7² + 900 s · 0.0015 e⁻/s = 15.04 e⁻²; pixel by pixel the two darks added half of that and more.
+    const median = variance.slice().sort()[variance.length >> 1];
+    expect(median).toBeGreaterThan(15.0);
+    expect(median).toBeLessThan(15.4);
+    const good = (_: number, at: number) => frame.mask[at] === 0;
+    const pulls = frame.electrons.map((value, at) => value / Math.sqrt(variance[at])).filter(good);
+    // Whole counts add 1.42²/12 e⁻² to what the header's read noise says: 0.6 % in σ.
+    const { mean, sigma } = clippedScatter(pulls);
+    expect(Math.abs(sigma - 1.006)).toBeLessThan(0.006);
+    expect(Math.abs(mean)).toBeLessThan(0.04);
+    const hot = pulls.filter((_, at) => calibrations.dark!.own[at] === 1);
+    expect(hot.length).toBeGreaterThan(100);
+    expect(hot.length).toBeLessThan(0.005 * pulls.length);
+  });
+});
+
+describe.skipIf(!here)("the seam between the two amplifiers", () => {
+  it.each(["dflat_01", "fflat_01"])(
+    "of %s shows no step, and 3 % when one gain is given 3 % too large",
+    async (name) => {
+      const right = await lookAt(path("crowded", name));
+      expect(right.seams.map(({ before, after, axis, at }) => [before, after, axis, at])).toEqual([[1, 2, "x", 1024]]);
+      expect(Math.abs(right.seams[0].step.value)).toBeLessThan(0.002);
+      expect(right.warnings).toEqual([]);
+      const amplifiers = truthOf("crowded").detector.amplifiers.map(({ gain_e_per_adu: gain }, k) => ({
+        gain: k === 0 ? gain : 1.03 * gain,
+      }));
+      const wrong = await lookAt(path("crowded", name), { file: "s.toml", detector: { amplifiers } });
+      expect(Math.abs(wrong.seams[0].step.value - 0.03)).toBeLessThan(0.002);
+      expect(wrong.warnings.filter((text) => text.includes("at the seam between them"))).toHaveLength(1);
+    },
+  );
+});
+
 describe.skipIf(!here)("frames to be survived", () => {
   const night = loadOnce(() =>
     loadCalibrations({
