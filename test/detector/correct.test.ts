@@ -62,7 +62,7 @@ interface Exposure {
   electrons: (x: number, y: number) => number;
   noise?: boolean;
   /** Bias and dark differ from pixel to pixel, by 3 ADU and 0.012 e⁻/s rms. */
-  rough?: boolean;
+  rough?: boolean | "bias";
 }
 
 /** A pattern without rows, columns or slopes: white, rms 1, from −√3 to √3. */
@@ -83,7 +83,7 @@ function expose(layout: Layout, exposure: Exposure, seed: number, drift = 1): Ra
     const mean = place
       ? electrons(place.x, place.y) * response(place.x, place.y) + darkRate(place.x, place.y) * seconds
       : 0;
-    const roughDark = place && rough ? 0.06 * (1 + 0.2 * pattern(place.x, place.y, 1)) * seconds : 0;
+    const roughDark = place && rough === true ? 0.06 * (1 + 0.2 * pattern(place.x, place.y, 1)) * seconds : 0;
     const structure = place ? biasAdu(place.x, place.y) + (rough ? 3 * pattern(place.x, place.y, 2) : 0) : 0;
     if (!noise) return level + structure + mean / GAINS[amplifier];
     const counts = poissonDeviate(mean + roughDark, next) + NOISES[amplifier] * normalDeviate(next);
@@ -109,11 +109,11 @@ function pullsOf(frame: Frame, truth: (x: number, y: number) => number): number[
 
 const LAYOUT = quadrants();
 const SKY: Exposure = { name: "sci.fits", kind: "object", seconds: 1500, electrons: light };
-const biasFrames = (n: number, seed = 100, rough = false) =>
+const biasFrames = (n: number, seed = 100, rough: Exposure["rough"] = false) =>
   Array.from({ length: n }, (_, i) =>
     expose(LAYOUT, { name: `bias${i}.fits`, kind: "bias", seconds: 0, electrons: () => 0, rough }, seed + i),
   );
-const darkFrames = (n: number, seconds: number, seed = 200, rough = false) =>
+const darkFrames = (n: number, seconds: number, seed = 200, rough: Exposure["rough"] = false) =>
   Array.from({ length: n }, (_, i) =>
     expose(LAYOUT, { name: `dark${i}.fits`, kind: "dark", seconds, electrons: () => 0, rough }, seed + i),
   );
@@ -196,6 +196,19 @@ describe("one frame through the whole equation", () => {
     const ofHot = momentsOf(pulls.filter((_, i) => hot(i % NX, Math.floor(i / NX))));
     expect(Math.abs(ofHot.mean)).toBeLessThan(5 / Math.sqrt(ofHot.n));
     expect(Math.abs(ofHot.sigma - 1)).toBeLessThan(4 / Math.sqrt(2 * ofHot.n));
+  });
+
+  it("counts the bias stack's variance in full where a smooth dark holds none of it", async () => {
+    const bias = biasFrames(2, 500, "bias");
+    const calibrations = await makeCalibrations({ bias, dark: darkFrames(2, 1500, 600, "bias") });
+    const frame = correctFrame(expose(LAYOUT, { ...SKY, electrons: () => 0, rough: "bias" }, 9), calibrations);
+    // Read noise, dark of 6 e⁻, and half a read noise variance of the two bias frames; the dark's share would be −1 of it.
+    const at = 20 * NX + 25;
+    expect(calibrations.dark!.own[at]).toBe(0);
+    const half = NOISES[0] ** 2 / 2;
+    expect((frame.noise.fixedVarianceImage![at] - 2 * half - 6) / half).toBeGreaterThan(0.9);
+    const { sigma, n } = momentsOf(pullsOf(frame, () => 0));
+    expect(Math.abs(sigma - 1)).toBeLessThan(0.02 + 4 / Math.sqrt(2 * n));
   });
 
   it("without calibration images keeps its variance in a table of bands", () => {
