@@ -9,6 +9,7 @@ import { addExtract } from "./extract.js";
 import { failureOf } from "./failures.js";
 import { addLook } from "./look.js";
 import { jsonText, ReportedFailure } from "./perform.js";
+import { addRecover } from "./recover.js";
 import { addSimulate } from "./simulate.js";
 import { addTrace } from "./trace.js";
 import { UsageError, usageError } from "./usage.js";
@@ -39,7 +40,8 @@ function makeProgram(): Command {
     .helpOption("--help", "print this help")
     .helpCommand("help [command]", "print the help of a command")
     .addHelpText("after", ENDING);
-  for (const add of [addDemo, addSimulate, addLook, addTrace, addExtract, addCompare, addVerify]) add(program);
+  for (const add of [addDemo, addSimulate, addLook, addTrace, addExtract, addCompare, addVerify, addRecover])
+    add(program);
   for (const command of [program, ...program.commands]) {
     command.helpOption("--help", "print this help");
     command.configureOutput({ outputError() {} });

@@ -8,16 +8,24 @@ import { traceFlat } from "../../src/tramlines/trace.js";
 import type { Tramlines } from "../../src/tramlines/tramlines.js";
 import { frameFromTruth } from "./fromTruth.js";
 
-/** The demo's spectrograph, smaller: three blocks, a dead fibre. */
+/** The demo's spectrograph, smaller: three blocks, two dead fibres. */
 export const BENCH = SCENES.demo
-  .replace("size = [1200, 640]", "size = [600, 300]")
-  .replace('"[1:600,1:640]"', '"[1:300,1:300]"')
-  .replace('"[601:1200,1:640]"', '"[301:600,1:300]"')
-  .replace("bad_columns = [287, 911]", "bad_columns = [287]")
-  .replace("blocks = [20, 20, 20, 20, 20]", "blocks = [15, 15, 14]")
+  .replace("size = [1200, 640]", "size = [400, 240]")
+  .replace('"[1:600,1:640]"', '"[1:200,1:240]"')
+  .replace('"[601:1200,1:640]"', '"[201:400,1:240]"')
+  .replace("bad_columns = [287, 911]", "bad_columns = [87]")
+  .replace("blocks = [20, 20, 20, 20, 20]", "blocks = [12, 11, 10]")
   .replace("gap = [17, 16.5, 17, 16.5]", "gap = [17, 16.5]")
-  .replace("dead = [8, 41, 77]", "dead = [8, 26]")
+  .replace("dead = [8, 41, 77]", "dead = [8, 20]")
   .replace("sky = [3, 16, 27, 38, 49, 58, 69, 83, 96]", "sky = [3]");
+const LAYOUT = { blocks: [12, 11, 10], pitch: 5.1, gap: [17, 16.5], dead: [8, 20], sky: [] };
+
+/** Pure Gaussians, and flats to trace and to inject. */
+export const CLEAN = SCENES.clean
+  .replace("size = [400, 330]", "size = [300, 190]")
+  .replace("blocks = [20, 20, 20]", "blocks = [11, 10, 11]")
+  .replace("dead = [11]", "dead = [5]")
+  .replace('name = "fflat_01"', 'name = "fflat_02"\nkind = "fibre-flat"\nseconds = 13\n[[exposure]]\nname = "fflat_01"');
 export const readNoise = 3.1;
 
 export function exposureOf(scene: string, name: string): SimulatedExposure {
@@ -31,8 +39,7 @@ export function correctedFrame(exposure: SimulatedExposure): Frame {
 }
 
 export async function gaussianLines(flat: Frame): Promise<Tramlines> {
-  return (await traceFlat([flat], { blocks: [15, 15, 14], pitch: 5.1, gap: [17, 16.5], dead: [8, 26], sky: [] }))
-    .tramlines;
+  return (await traceFlat([flat], LAYOUT)).tramlines;
 }
 
 /** The spline profile measured on the same flat. */

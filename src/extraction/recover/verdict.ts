@@ -1,7 +1,8 @@
 /** What the numbers of a recovery test come to, in plain words.
  *
  * The limits are choices, not published ones, save that leaked light under 1 % is what crowded fibre spectrographs aim at (common
- * practice). A bias counts when it lies beyond its limit by three of its standard errors. */
+ * practice). A bias counts when it is beyond its limit and beyond
+ * three of its standard errors. */
 import type { DarkScore } from "./darkScore.js";
 import type { CellScore, FibreBias } from "./score.js";
 
@@ -23,7 +24,7 @@ export interface Verdict {
 /** Up to the first: good; beyond the second: bad. */
 export const limits = {
   bias: [0.01, 0.03],
-  fibreBias: [0.03, 0.08],
+  fibreBias: [0.005, 0.03],
   pull: [1.2, 2],
   /** Mean over the positions, and the worst of them. */
   leak: [0.001, 0.005],
@@ -65,10 +66,9 @@ function summary(grade: Grade, told: boolean, findings: Finding[]): string {
 function judgeFlux(cells: CellScore[], worstFibre: FibreBias | null): Finding[] {
   const telling = cells.filter(({ bias, biasError }) => Number.isFinite(bias) && Number.isFinite(biasError));
   if (telling.length === 0) return [];
-  const sure = ({ bias, biasError }: { bias: number; biasError: number }) =>
-    Math.max(Math.abs(bias) - significance * biasError, 0);
+  const sure = (cell: CellScore) => significant(cell, limits.bias);
   const worst = telling.reduce((a, b) => (sure(b) > sure(a) ? b : a));
-  const grade = gradeOf(significant(worst, limits.bias), limits.bias);
+  const grade = gradeOf(sure(worst), limits.bias);
   const best = telling.reduce((a, b) => (b.biasError < a.biasError ? b : a));
   const findings: Finding[] = [
     {
@@ -76,7 +76,7 @@ function judgeFlux(cells: CellScore[], worstFibre: FibreBias | null): Finding[] 
       grade,
       sentence:
         grade === "good"
-          ? `Injected light comes back to ${percent(best.bias)} ± ${percent(best.biasError)} (${levelOf(best)}), and nowhere is it off by over ${percent(limits.bias[0])} with certainty.`
+          ? `Injected light comes back to ${percent(best.bias)} ± ${percent(best.biasError)} (${levelOf(best)}), and is nowhere surely off by over ${percent(limits.bias[0])}.`
           : `Injected light comes back ${worst.bias > 0 ? "too bright" : "too faint"} by ${percent(Math.abs(worst.bias))} ± ${percent(worst.biasError)} (${levelOf(worst)}): the profiles are of a wrong width or miss light.`,
     },
   ];
@@ -94,9 +94,8 @@ function judgeFlux(cells: CellScore[], worstFibre: FibreBias | null): Finding[] 
 function judgeErrors(cells: CellScore[]): Finding[] {
   const telling = cells.filter(({ nPoint, pull }) => nPoint >= tellingPoints && Number.isFinite(pull));
   if (telling.length === 0) return [];
-  const off = ({ pull }: CellScore) => Math.max(pull, 1 / pull);
-  const worst = telling.reduce((a, b) => (off(b) > off(a) ? b : a));
-  const grade = worst.pull < timidPull ? "doubtful" : gradeOf(worst.pull, limits.pull);
+  const worst = telling.reduce((a, b) => (Math.abs(surePull(b) - 1) > Math.abs(surePull(a) - 1) ? b : a));
+  const grade = surePull(worst) < timidPull ? "doubtful" : gradeOf(surePull(worst), limits.pull);
   const range = `${Math.min(...telling.map(({ pull }) => pull)).toFixed(2)} to ${Math.max(...telling.map(({ pull }) => pull)).toFixed(2)}`;
   const sentence =
     grade === "good"
@@ -148,12 +147,19 @@ function judgeDark(leak: DarkScore[]): Finding[] {
   return [{ about: "dark positions", grade, sentence }];
 }
 
-/** The bias where it lies beyond the first limit with certainty, 0 where it does not. */
+/** The scatter brought towards 1 by what chance may do in three of a thousand such samples; the robust scatter of n normal deviates
+ * is itself uncertain by 1.17 / √n of it. */
+function surePull({ pull, nPoint }: CellScore): number {
+  const chance = (significance * 1.17) / Math.sqrt(nPoint);
+  return pull > 1 ? Math.max(pull * (1 - chance), 1) : Math.min(pull * (1 + chance), 1);
+}
+
+/** The bias where it is beyond the first limit and surely none of chance, 0 where it is not. */
 function significant(
   { bias, biasError }: { bias: number; biasError: number },
   [first]: readonly [number, number],
 ): number {
-  return Math.abs(bias) - significance * biasError > first || !(biasError >= 0) ? Math.abs(bias) : 0;
+  return Math.abs(bias) > first && !(Math.abs(bias) <= significance * biasError) ? Math.abs(bias) : 0;
 }
 
 function gradeOf(value: number, [good, bad]: readonly [number, number]): Grade {
