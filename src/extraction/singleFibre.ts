@@ -70,20 +70,20 @@ export async function measureSingleFibre(
 ): Promise<SingleFibreCheck> {
   checkGeometry(frame, tramlines);
   const { active, bandwidth: reach } = extraction.plan;
+  const estimator = extraction.spectra.method === "optimal" ? "optimal" : "boxcar";
   const lit = findLit(frame, tramlines, extraction);
   const bare = onlyLit(
     tramlines,
     lit.map((k) => active[k]),
   );
   const pairs = pairsOf(lit, active.length, reach);
-  const sums = takeSums(frame, await placeLines(frame, tramlines, bare), bare, extraction, pairs);
+  const sums = takeSums(frame, await placeLines(frame, tramlines, bare), bare, extraction, estimator, pairs);
   const baseline = farLevel(sums, lit, active.length, reach);
   const leaks = pairs.flatMap(([k, m], i) => {
     const leak = leakBetween(k, m, sums.model.subarray(i * frame.nx, (i + 1) * frame.nx), sums, baseline);
     return leak === null ? [] : [{ lit: active[m] + 1, fibre: active[k] + 1, ...leak }];
   });
   const disagreeing = leaks.filter(({ share, error, model }) => Math.abs(share - model) > disagreeSigma * error);
-  const estimator = estimatorOf(extraction);
   return {
     frame: frame.name,
     estimator,
@@ -100,14 +100,10 @@ function disagreement({ name }: Frame, leaks: SeenLeak[], n: number): string {
   return `${name}: light at ${leaks.length} of ${n} dark fibres differs from the cross-talk matrix by over ${disagreeSigma} σ; worst, fibre ${worst.fibre} holds ${percent(worst.share)} ± ${percent(worst.error)} of fibre ${worst.lit}'s light where the profile has ${percent(worst.model)}, so do not trust the matrix that far.`;
 }
 
-function estimatorOf({ spectra }: Extraction): LoneEstimator {
-  return spectra.method === "optimal" ? "optimal" : "boxcar";
-}
-
 /** Lit fibres as indices into `active`, from plain sums on the tramlines as they stand. */
 function findLit(frame: Frame, tramlines: Tramlines, extraction: Extraction): number[] {
   const { active } = extraction.plan;
-  const sums = takeSums(frame, tramlines, onlyLit(tramlines, []), extraction, []);
+  const sums = takeSums(frame, tramlines, onlyLit(tramlines, []), extraction, "boxcar", []);
   const level = active.map((_, k) => typical(sums.raw.subarray(k * sums.nx, (k + 1) * sums.nx)));
   const noise = active.map((_, k) => Math.sqrt(typical(sums.variance.subarray(k * sums.nx, (k + 1) * sums.nx))));
   const brightest = Math.max(...level.filter((value) => !Number.isNaN(value)));
@@ -151,11 +147,17 @@ function pairsOf(lit: number[], nFibre: number, reach: number): Pair[] {
 }
 
 /** `bare`: the tramlines without the dark fibres, between which the background shows. */
-function takeSums(frame: Frame, tramlines: Tramlines, bare: Tramlines, extraction: Extraction, pairs: Pair[]): Sums {
+function takeSums(
+  frame: Frame,
+  tramlines: Tramlines,
+  bare: Tramlines,
+  extraction: Extraction,
+  estimator: LoneEstimator,
+  pairs: Pair[],
+): Sums {
   const { plan, fit } = extraction;
   const { nx } = frame;
   const { width, shape, halfAperture } = fit.input;
-  const estimator = estimatorOf(extraction);
   const input = extractionInput(frame, tramlines, plan, { background: false });
   const own = profileColumns(
     { ...input, width, ...(shape === undefined ? {} : { shape }) },
@@ -171,7 +173,7 @@ function takeSums(frame: Frame, tramlines: Tramlines, bare: Tramlines, extractio
   };
   for (let x = 0; x < nx; x++) {
     const column = own(x);
-    const weights = scienceWeights(column, science(x), estimator, halfAperture);
+    const weights = estimatorWeights(scienceWeighed(column, science(x), estimator), estimator, halfAperture);
     for (let k = 0; k < column.nFibre; k++) sumPixels(frame, column, weights, k, x, sums);
     pairs.forEach(([k, m], i) => {
       sums.model[i * nx + x] = sharedLight(column, weights, k, m) / sharedLight(column, weights, m, m);
@@ -180,12 +182,15 @@ function takeSums(frame: Frame, tramlines: Tramlines, bare: Tramlines, extractio
   return sums;
 }
 
-/** The estimator's weights on this frame's tramlines, with the variances that the science frame's light has there. */
-function scienceWeights(column: Column, science: Column, estimator: LoneEstimator, halfAperture: number): Float64Array {
-  const flux = solveNormal(normalEquations(science), science.nFibre, science.bandwidth);
+/** The column with the variances that the science frame's light has on these tramlines. A boxcar does not ask for them. */
+function scienceWeighed(column: Column, science: Column, estimator: LoneEstimator): Column {
   const moved: Column = { ...column, noise: science.noise, background: science.background };
+  const dark = estimator === "boxcar";
+  const flux = dark
+    ? new Float64Array(science.nFibre)
+    : solveNormal(normalEquations(science), science.nFibre, science.bandwidth);
   weighByModel(moved, lightOf(moved, flux));
-  return estimatorWeights(moved, estimator, halfAperture);
+  return moved;
 }
 
 /** (W d)_k in one column and its variance; left NaN when a pixel that counts is not good. The pixels' own counts stand in
