@@ -37,13 +37,15 @@ interface Candidate {
 }
 
 const simplestFirst: ProfileKind[] = ["gaussian", "hermite", "empirical"];
-/** A model counts as better only by more than so many errors of the difference. */
-const significantErrors = 2;
+/** Gaussians stay unless another model fits better by more than so many errors of the difference. */
+const gaussianErrors = 2;
+/** Of the two shapes the freer one is taken unless the other fits better by more than so many. */
+const shapeErrors = 1;
 /** A pixel whose noise is below this share of its light can tell of ε. */
 const tellingNoise = 0.01;
 
-/** Gives `tramlines`, traced with Gaussians, the profile of `kind`; auto: of the models that fit held-out columns as well
- * as the best one, within the error of the difference, the simplest. */
+/** Gives `tramlines`, traced with Gaussians, the profile of `kind`; auto: Gaussians unless a shape fits held-out columns
+ * significantly better, and of the shapes the empirical one unless the Gauss–Hermite series fits them better. */
 export async function chooseProfile(
   flats: Frame[],
   tramlines: Tramlines,
@@ -58,20 +60,25 @@ export async function chooseProfile(
     const { mean, error } = meanWithError(model.misfits);
     return { kind: model.kind, misfit: mean, error };
   });
-  return { tramlines: simplestOfTheBest(candidates, tried).tramlines, tried };
+  return { tramlines: preferred(candidates, tried).tramlines, tried };
 }
 
-/** Columns are compared one by one: what is hard about a column is so for every model. */
-function simplestOfTheBest(candidates: Candidate[], tried: TriedProfile[]): Candidate {
+/** Gaussians where nothing fits better; else, of the shapes that tie, the freer one: what it can follow in the wings
+ * decides what faint fibres beside bright ones are worth, and the tie says that its freedom costs nothing. Columns are
+ * compared one by one: what is hard about a column is so for every model. */
+function preferred(candidates: Candidate[], tried: TriedProfile[]): Candidate {
   let best = 0;
   tried.forEach(({ misfit }, i) => {
     if (misfit < tried[best].misfit) best = i;
   });
-  const asGood = candidates.find(({ misfits }) => {
+  const tiesWith = ({ misfits }: Candidate, errors: number) => {
     const { mean, error } = meanWithError(misfits.map((misfit, i) => misfit - candidates[best].misfits[i]));
-    return mean <= significantErrors * error;
-  });
-  return asGood ?? candidates[best];
+    return mean <= errors * error;
+  };
+  const gaussian = candidates.find(({ kind }) => kind === "gaussian");
+  if (gaussian !== undefined && tiesWith(gaussian, gaussianErrors)) return gaussian;
+  const freest = candidates[candidates.length - 1];
+  return tiesWith(freest, shapeErrors) ? freest : candidates[best];
 }
 
 function gaussianCandidate(kernels: Kernels, flat: Flat, tramlines: Tramlines): Candidate {
