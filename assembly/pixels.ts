@@ -74,7 +74,7 @@ export function pixelsToFloat64(
     floatsToFloat64(bitpix, inPtr, outPtr, n, scale, zero);
     return;
   }
-  const unsigned64 = bitpix == 64 && scale == 1.0 && zero == 9223372036854775808.0;
+  const unsigned64 = bitpix == 64 && scale == 1.0 && zero == 4294967296.0 * 2147483648.0;
   const width = <usize>(bitpix >> 3);
   for (let i: usize = 0; i < n; i++) {
     const stored = storedInteger(bitpix, inPtr + i * width);

@@ -55,7 +55,6 @@ export function blockProfiles<T extends number>(job: usize, x0: i32): void {
   const nTrace = count(job, Word.nTrace);
   const nWidth = count(job, Word.nWidth);
   const nWindow = windowRows(job);
-  const blockColumns = count(job, Word.blockColumns);
   let weightsAt = pointer(job, Word.nodeWeights);
   let centreAt = pointer(job, Word.nodeCentre);
   for (let k: i32 = 0; k < count(job, Word.nFibre); k++) {

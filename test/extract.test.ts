@@ -2,7 +2,7 @@ import { beforeAll, describe, expect, it } from "vitest";
 import type { Precision } from "../src/kernels/banded.js";
 import { ExtractionBench } from "../src/kernels/extraction.js";
 import { type Kernels, loadKernels } from "../src/kernels/module.js";
-import { Flag, MaskBit } from "../src/reference/bits.js";
+import { MaskBit } from "../src/reference/bits.js";
 import { type ExtractionInput, type ExtractionOutput, extractColumns, type Method } from "../src/reference/extract.js";
 import { makeScene, type Scene } from "./scene.js";
 

@@ -3,7 +3,7 @@
 import type { Frame } from "../detector/frame.js";
 import { factorBand, solveBand } from "../reference/banded.js";
 import type { SmoothBackground } from "../reference/extract.js";
-import { legendreArgument, legendreValue } from "../reference/legendre.js";
+import { legendreArgument, legendreBasis, legendreValue } from "../reference/legendre.js";
 import { median } from "../reference/median.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 
@@ -106,27 +106,40 @@ function supportedOrders(cells: Cell[], ny: number): number {
   return 0;
 }
 
-function fitSurface(cells: Cell[], nX: number, nY: number, frame: Frame): BackgroundFit {
+/** A cell with the surface's terms at its place: [nX × nY]. */
+interface PlacedCell extends Cell {
+  terms: Float64Array;
+}
+
+function fitSurface(all: Cell[], nX: number, nY: number, frame: Frame): BackgroundFit {
+  const inY = Array.from({ length: frame.ny }, (_, y) => legendreBasis(legendreArgument(y, frame.ny), nY));
+  const cells = all.map((cell): PlacedCell => {
+    const inX = legendreBasis(legendreArgument(cell.x, frame.nx), nX);
+    return {
+      ...cell,
+      terms: Float64Array.from({ length: nX * nY }, (_, i) => inX[Math.floor(i / nY)] * inY[cell.y][i % nY]),
+    };
+  });
   let kept = cells;
-  let surface = solveSurface(kept, nX, nY, frame);
-  let rms = scatter(kept, surface, frame);
+  let surface = solveSurface(kept, nX, nY);
+  let rms = scatter(kept, surface);
   for (let round = 0; round < clipRounds; round++) {
-    const next = cells.filter((cell) => Math.abs(residual(cell, surface, frame)) <= clipSigma * rms);
+    const next = cells.filter((cell) => Math.abs(residual(cell, surface)) <= clipSigma * rms);
     if (next.length === kept.length || next.length < 4 * nX * nY) break;
     kept = next;
-    surface = solveSurface(kept, nX, nY, frame);
-    rms = scatter(kept, surface, frame);
+    surface = solveSurface(kept, nX, nY);
+    rms = scatter(kept, surface);
   }
   return { ...surface, nCell: kept.length, rms, warnings: [] };
 }
 
 /** Weighted least squares for the surface's coefficients; the normal matrix is small, its band the whole of it. */
-function solveSurface(cells: Cell[], nX: number, nY: number, frame: Frame): SmoothBackground {
+function solveSurface(cells: PlacedCell[], nX: number, nY: number): SmoothBackground {
   const n = nX * nY;
   const normal = new Float64Array(n * n);
   const coefficients = new Float64Array(n);
   for (const cell of cells) {
-    const terms = surfaceTerms(cell, nX, nY, frame);
+    const { terms } = cell;
     for (let i = 0; i < n; i++) {
       coefficients[i] += (terms[i] * cell.level) / cell.variance;
       for (let j = 0; j <= i; j++) normal[i * n + i - j] += (terms[i] * terms[j]) / cell.variance;
@@ -137,28 +150,13 @@ function solveSurface(cells: Cell[], nX: number, nY: number, frame: Frame): Smoo
   return { nX, nY, coefficients };
 }
 
-function surfaceTerms(cell: Cell, nX: number, nY: number, frame: Frame): Float64Array {
-  const inX = polynomials(legendreArgument(cell.x, frame.nx), nX);
-  const inY = polynomials(legendreArgument(cell.y, frame.ny), nY);
-  return Float64Array.from({ length: nX * nY }, (_, i) => inX[Math.floor(i / nY)] * inY[i % nY]);
-}
-
-function polynomials(t: number, n: number): Float64Array {
-  return Float64Array.from({ length: n }, (_, j) => legendreValue(unit(j), t));
-}
-
-function unit(j: number): Float64Array {
-  const coefficients = new Float64Array(j + 1);
-  coefficients[j] = 1;
-  return coefficients;
-}
-
-function residual(cell: Cell, surface: SmoothBackground, frame: Frame): number {
-  const terms = surfaceTerms(cell, surface.nX, surface.nY, frame);
-  return terms.reduce((left, term, i) => left - term * surface.coefficients[i], cell.level);
+function residual(cell: PlacedCell, surface: SmoothBackground): number {
+  let left = cell.level;
+  for (let i = 0; i < cell.terms.length; i++) left -= cell.terms[i] * surface.coefficients[i];
+  return left;
 }
 
 /** Robust scatter (1.4826 × median of absolute values), so that a stray ghost does not widen the clip. */
-function scatter(cells: Cell[], surface: SmoothBackground, frame: Frame): number {
-  return 1.4826 * median(cells.map((cell) => Math.abs(residual(cell, surface, frame))));
+function scatter(cells: PlacedCell[], surface: SmoothBackground): number {
+  return 1.4826 * median(cells.map((cell) => Math.abs(residual(cell, surface))));
 }

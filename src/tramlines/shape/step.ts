@@ -4,7 +4,7 @@
 import type { Kernels } from "../../kernels/module.js";
 import { NormalMatrix } from "../../kernels/rankUpdate.js";
 import { factorBand, solveBand } from "../../reference/banded.js";
-import { legendreArgument, legendreValue } from "../../reference/legendre.js";
+import { legendreArgument, legendreBasis, legendreValue } from "../../reference/legendre.js";
 import { centroidOf, nShapeTerm, type ShapeTable } from "../../reference/shape.js";
 import type { KnownShape } from "../tramlines.js";
 import { basisAt, emptyEdge, type ShapeBasis } from "./basis.js";
@@ -60,7 +60,7 @@ export class ShapeNormal {
     // One column more holds the residuals: their products with the design are the right-hand side.
     this.n = this.nUnknown + 1 + ((this.nUnknown + 1) % 2);
     this.inY = new Float64Array(ny * nBackgroundY);
-    for (let y = 0; y < ny; y++) this.inY.set(polynomials(legendreArgument(y, ny), nBackgroundY), y * nBackgroundY);
+    for (let y = 0; y < ny; y++) this.inY.set(legendreBasis(legendreArgument(y, ny), nBackgroundY), y * nBackgroundY);
     this.matrix = new NormalMatrix(kernels, this.n, Math.max(ny, 3 * nFibre));
   }
 
@@ -194,7 +194,7 @@ export class ShapeNormal {
         [below, above] = [above, below];
       }
     }
-    const inX = polynomials(legendreArgument(x, lines.nx), nBackgroundX);
+    const inX = legendreBasis(legendreArgument(x, lines.nx), nBackgroundX);
     for (let y = 0; y < ny; y++) {
       for (let i = 0; i < nBackground; i++) {
         rows[y * n + nShape + i] = inX[(i / nBackgroundY) | 0] * inY[y * nBackgroundY + (i % nBackgroundY)];
@@ -310,19 +310,11 @@ function normalise(c: Float64Array, basis: ShapeBasis): void {
 
 /** The background on every row of column x: [ny] e⁻. */
 export function backgroundColumn(background: Float64Array, x: number, lines: Lines): Float64Array {
-  const inX = polynomials(legendreArgument(x, lines.nx), nBackgroundX);
+  const inX = legendreBasis(legendreArgument(x, lines.nx), nBackgroundX);
   const series = Float64Array.from({ length: nBackgroundY }, (_, j) =>
     inX.reduce((sum, p, i) => sum + p * background[i * nBackgroundY + j], 0),
   );
   return Float64Array.from({ length: lines.ny }, (_, y) => legendreValue(series, legendreArgument(y, lines.ny)));
-}
-
-/** P_0 … P_{n−1} at t. */
-function polynomials(t: number, n: number): Float64Array {
-  const p = new Float64Array(n).fill(1);
-  if (n > 1) p[1] = t;
-  for (let j = 2; j < n; j++) p[j] = ((2 * j - 1) * t * p[j - 1] - (j - 1) * p[j - 2]) / j;
-  return p;
 }
 
 /** Profiles out to their last trace of light; local unknowns as far as they matter. */
