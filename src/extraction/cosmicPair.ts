@@ -29,8 +29,9 @@ const kappa = 5;
 const growKappa = 2.5;
 /** Only pixels whose noise is below this share of the light nearby tell of ε. */
 const tellingNoise = 0.02;
-const tellingQuantile = 0.998;
-const margin = 1.5;
+/** The second frame's own hits make shortfalls too, on up to 1 % of the pixels; the margin is for what lies beyond. */
+const tellingQuantile = 0.98;
+const margin = 3;
 
 export interface PairHits {
   /** ny × nx of the first frame: MaskBit.cosmic where it was hit. */

@@ -14,22 +14,27 @@ const tellingSignal = 10;
 const changeColumns = 2;
 /** A change over this many σ tells how well lines repeat. */
 const tellingChange = 20;
-const changeQuantile = 0.99;
-const margin = 1.5;
+/** The second frame's own hits make shortfalls too, on a few per cent of the points; the margin is for what lies beyond. */
+const changeQuantile = 0.95;
+const margin = 3;
 const kappa = 5;
 /** Typical |difference| over noise from which on the frames are not of the same field; 0.67 when they are. */
 const otherFieldSigma = 4;
+/** The same for the fibres' scales, upper quartile over lower: clouds and seeing change all fibres much alike. */
+const otherFieldSpread = 2.5;
 
-/** Images are [nFibre × nx], active fibres only; a point without value is 0, its variance too. */
+/** Images are [nFibre × nx], active fibres only; NaN where the second frame has no value. */
 export interface PairSpectra {
   /** e⁻: the second frame's spectra, and the same times s. */
   second: Float64Array;
   scaled: Float64Array;
   /** e⁻²: of `scaled`. */
   scaledVariance: Float64Array;
-  /** e⁻: largest less smallest value of `scaled` within ± 2 columns. */
+  /** e⁻: largest less smallest light within ± 2 columns that both frames have: a hit in one of them is no line. */
   change: Float64Array;
   medianScale: number;
+  /** Upper over lower quartile of the fibres' scales. */
+  scaleSpread: number;
   /** η: share of the change by which spectra differ beyond noise. */
   lineError: number;
   /** Median |first − scaled| / σ. */
@@ -40,20 +45,22 @@ export interface PairSpectra {
 export function pairSpectra(first: Spectra, second: Spectra, active: number[]): PairSpectra {
   const { nx } = first;
   const n = active.length * nx;
-  const empty = () => new Float64Array(n);
+  const empty = () => new Float64Array(n).fill(Number.NaN);
   const pair: PairSpectra = {
     second: empty(),
     scaled: empty(),
     scaledVariance: empty(),
     change: empty(),
     medianScale: 1,
+    scaleSpread: 1,
     lineError: 0,
     typicalDifference: Number.NaN,
   };
   const common = commonScale(first, second, active);
-  const scales: number[] = [];
+  const [scales, middles]: number[][] = [[], []];
   active.forEach((row, k) => {
     const scale = fibreScale(first, second, row, common);
+    middles.push(legendreValue(scale, 0));
     for (let x = 0; x < nx; x++) {
       const [i, at] = [k * nx + x, row * nx + x];
       if (!isGood(second, at)) continue;
@@ -63,15 +70,17 @@ export function pairSpectra(first: Spectra, second: Spectra, active: number[]): 
       pair.scaledVariance[i] = s * s * second.variance[at];
       scales.push(s);
     }
-    takeChanges(pair, k * nx, nx);
+    takeChanges(pair, first.flux.subarray(row * nx, (row + 1) * nx), k * nx);
   });
   pair.medianScale = scales.length > 0 ? median(scales) : common;
+  const sorted = Float64Array.from(middles).sort();
+  pair.scaleSpread = sorted[Math.floor(0.75 * (sorted.length - 1))] / sorted[Math.floor(0.25 * (sorted.length - 1))];
   compare(pair, first, second, active);
   return pair;
 }
 
-export function isOtherField({ typicalDifference }: PairSpectra): boolean {
-  return !(typicalDifference < otherFieldSigma);
+export function isOtherField({ typicalDifference, scaleSpread }: PairSpectra): boolean {
+  return !(typicalDifference < otherFieldSigma && scaleSpread > 0 && scaleSpread < otherFieldSpread);
 }
 
 function isGood({ flux, variance, flags }: Spectra, at: number): boolean {
@@ -118,14 +127,17 @@ function ratioOf(first: Spectra, second: Spectra, row: number, x0: number, x1: n
   return { ratio, error: Math.sqrt(varianceA + ratio * ratio * varianceB) / b };
 }
 
-function takeChanges({ scaled, change }: PairSpectra, from: number, nx: number): void {
+function takeChanges({ scaled, change }: PairSpectra, first: ArrayLike<number>, from: number): void {
+  const nx = first.length;
   for (let x = 0; x < nx; x++) {
     let [least, most] = [Number.POSITIVE_INFINITY, Number.NEGATIVE_INFINITY];
     for (let u = Math.max(x - changeColumns, 0); u <= Math.min(x + changeColumns, nx - 1); u++) {
-      least = Math.min(least, scaled[from + u]);
-      most = Math.max(most, scaled[from + u]);
+      const both = Math.min(first[u], scaled[from + u]);
+      if (Number.isNaN(both)) continue;
+      least = Math.min(least, both);
+      most = Math.max(most, both);
     }
-    change[from + x] = most - least;
+    change[from + x] = Math.max(most - least, 0);
   }
 }
 

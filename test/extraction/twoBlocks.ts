@@ -7,6 +7,8 @@ export const nFibre = 13;
 
 export interface BenchChange {
   seed?: number;
+  /** Noise and cosmic rays go by it, spectra do not. */
+  name?: string;
   pitch?: number;
   fwhm?: number;
   nx?: number;
@@ -20,7 +22,7 @@ export interface BenchChange {
 
 /** One exposure; `straight` fibres run along whole rows. */
 export function bench(kind: "science" | "fibre-flat", change: BenchChange = {}, straight = false): SimulatedExposure {
-  const { seed = 5, pitch = 5, fwhm = 2.5, nx = 320, dead = [4], more = "", exposure = "" } = change;
+  const { seed = 5, name = "one", pitch = 5, fwhm = 2.5, nx = 320, dead = [4], more = "", exposure = "" } = change;
   const lines = straight ? "" : "tilt = 0.8\nbow = 0.9\nown_place = 0.05";
   const text = `name = "two blocks"
 seed = ${seed}
@@ -49,10 +51,10 @@ throughput_slope = 0.1
 ${change.science ?? "faintest = 40\nbrightest = 2e4\nsky_level = 30\nsky_line = 4000"}
 ${more}
 [[exposure]]
-name = "one"
+name = "${name}"
 kind = "${kind}"
 seconds = ${kind === "science" ? 900 : 5}
 ${exposure}
 `;
-  return simulateExposure(parseScene(text, "two blocks"), "one");
+  return simulateExposure(parseScene(text, "two blocks"), name);
 }
