@@ -54,6 +54,13 @@ export function scoreByDecade(spectra: Measured, truth: TrueFlux): DecadeScore[]
   return scores;
 }
 
+/** Scale that spectra have in common against the truth: median of flux / truth over the points from `least` e⁻ on. A pixel flat
+ * leaves a frame's scale undetermined by about its own mean, so pulls of bright fibres are told with and without it. */
+export function commonScale(spectra: Measured, truth: TrueFlux, least = 1000): number {
+  const bright = pointsWhere(spectra, truth, (flux) => flux >= least).filter((i) => isUsable(spectra, i));
+  return median(bright.map((i) => spectra.flux[i] / truth.flux[i]));
+}
+
 export interface LeakScore {
   /** How many times brighter the neighbour is. */
   contrast: number;
@@ -146,6 +153,50 @@ export function scoreCosmicRays(spectra: Measured, truth: CosmicTruth): CosmicSc
     }
   }
   return { nHit, foundShare: nFound / nHit, spoiltShare: nSpoilt / nHit, nClean, falseShare: nFalse / nClean };
+}
+
+export interface PeakScore {
+  /** Columns where an emission line peaks above `least` e⁻ and no cosmic ray came near. */
+  nPeak: number;
+  /** Median of flux / truth there. */
+  ratio: number;
+  /** Of all of them: flagged as hit by a cosmic ray, or as not to be used. */
+  flaggedShare: number;
+  /** Of all of them: without a value, or short by over a fifth and 5 σ. */
+  clippedShare: number;
+}
+
+/** A line's peak is the largest of so many columns to either side, and twice as bright as the outermost of them. */
+const LINE_COLUMNS = 5;
+const LINE_CONTRAST = 2;
+
+/** What became of the peaks of bright sharp lines, which are easily taken for cosmic rays. */
+export function scorePeaks(spectra: Measured, truth: CosmicTruth, least: number): PeakScore {
+  const { nx, flux, variance, flags } = spectra;
+  const peaks = pointsWhere(spectra, truth, (light) => light >= least).filter(
+    (i) => isPeak(truth.flux, i, nx) && cosmicLight(truth, nx, i % nx, Math.round(truth.trace[i]), CLEAN_ROWS, 1) === 0,
+  );
+  const usable = peaks.filter((i) => isUsable(spectra, i));
+  const whole = usable.filter((i) => {
+    const missing = truth.flux[i] - flux[i];
+    return missing <= 0.2 * truth.flux[i] || missing <= 5 * Math.sqrt(variance[i]);
+  });
+  const flagged = peaks.filter((i) => (flags[i] & Flag.cosmicRay) !== 0 || !isUsable(spectra, i));
+  return {
+    nPeak: peaks.length,
+    ratio: median(usable.map((i) => flux[i] / truth.flux[i])),
+    flaggedShare: flagged.length / peaks.length,
+    clippedShare: 1 - whole.length / peaks.length,
+  };
+}
+
+function isPeak(flux: ArrayLike<number>, i: number, nx: number): boolean {
+  const x = i % nx;
+  if (x < LINE_COLUMNS || x >= nx - LINE_COLUMNS) return false;
+  for (let d = 1; d <= LINE_COLUMNS; d++) {
+    if (flux[i - d] >= flux[i] || flux[i + d] >= flux[i]) return false;
+  }
+  return flux[i] > LINE_CONTRAST * Math.max(flux[i - LINE_COLUMNS], flux[i + LINE_COLUMNS]);
 }
 
 export interface TraceScore {

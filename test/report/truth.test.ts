@@ -1,7 +1,14 @@
 /** Scores against truth, on numbers made up so that the right score is known. */
 import { describe, expect, test } from "vitest";
 import { Flag } from "../../src/extraction/spectra.js";
-import { scoreByDecade, scoreCosmicRays, scoreLeak, scoreTrace } from "../../src/report/truth.js";
+import {
+  commonScale,
+  scoreByDecade,
+  scoreCosmicRays,
+  scoreLeak,
+  scorePeaks,
+  scoreTrace,
+} from "../../src/report/truth.js";
 import { normalDeviate, seeded } from "../scene.js";
 
 /** Spectra [nFibre × nx] whose flux is the truth plus `error` σ plus `excess`. */
@@ -142,6 +149,73 @@ describe("cosmic rays", () => {
     // Columns 10, 11 and 12 are not clean.
     expect(score.nClean).toBe(nx - 3);
     expect(score.falseShare).toBe(1 / (nx - 3));
+  });
+});
+
+describe("the common scale", () => {
+  test("is told by bright points alone, unusable ones left out", () => {
+    const { spectra, truth } = made(
+      3,
+      40,
+      (k) => [300, 4000, 50000][k],
+      () => 0,
+    );
+    // Faint points are off by a tenth; 19 of the 80 bright ones are spoilt and flagged.
+    const flux = spectra.flux.map((f, i) => (i < 40 ? 1.1 * f : i < 59 ? 3 * f : 0.993 * f));
+    const flags = spectra.flags.map((_, i) => (i >= 40 && i < 59 ? Flag.weightLost : 0));
+    expect(commonScale({ ...spectra, flux, flags }, truth)).toBeCloseTo(0.993, 12);
+    expect(commonScale({ ...spectra, flux, flags }, truth, 100)).toBeCloseTo(0.993, 12);
+    expect(commonScale({ ...spectra, flux: flux.map((f, i) => (i < 80 ? 2 * f : f)) }, truth, 1e4)).toBeCloseTo(
+      0.993,
+      12,
+    );
+  });
+});
+
+describe("peaks of lines", () => {
+  const [nx, ny] = [80, 30];
+  const line = (x: number, at: number, height: number) => height * Math.exp(-0.5 * (x - at) ** 2);
+  // Sharp lines at 10, 30 and 50, a fainter one at 62; at 72 a slow bump, which is none.
+  const { spectra, truth } = made(
+    1,
+    nx,
+    (_, x) =>
+      500 +
+      line(x, 10, 2e4) +
+      line(x, 30, 3e4) +
+      line(x, 50, 4e4) +
+      line(x, 62, 8e3) +
+      2e4 * Math.exp(-0.002 * (x - 72) ** 2),
+    () => 0,
+    30,
+  );
+  const known = {
+    ...truth,
+    ny,
+    cosmicRays: new Float64Array(nx * ny),
+    trace: new Float64Array(nx).fill(14.4),
+    readNoise: 2,
+  };
+
+  test("are sharp, bright, and not hit by a cosmic ray", () => {
+    expect(scorePeaks(spectra, known, 1.5e4)).toEqual({ nPeak: 3, ratio: 1, flaggedShare: 0, clippedShare: 0 });
+    expect(scorePeaks(spectra, known, 3.2e4).nPeak).toBe(1);
+    const cosmicRays = known.cosmicRays.slice();
+    cosmicRays[20 * nx + 31] = 500; // one column and six rows off
+    expect(scorePeaks(spectra, { ...known, cosmicRays }, 1.5e4).nPeak).toBe(2);
+  });
+
+  test("are clipped when a fifth is gone beyond 5 σ or no value is left, flagged when flagged", () => {
+    const [flux, flags] = [spectra.flux.slice(), spectra.flags.slice()];
+    flux[10] *= 0.75; // a quarter of 2e4 e⁻ at σ = 30
+    flags[10] = Flag.cosmicRay;
+    flux[30] *= 0.85; // many σ, but under a fifth
+    flags[50] = Flag.weightLost;
+    const score = scorePeaks({ ...spectra, flux, flags }, known, 1.5e4);
+    expect(score).toMatchObject({ nPeak: 3, flaggedShare: 2 / 3, clippedShare: 1 - 1 / 3 });
+    expect(score.ratio).toBeCloseTo(0.8, 12); // of 0.75 and 0.85
+    const noisy = { ...spectra, flux, variance: spectra.variance.map(() => 2000 ** 2) };
+    expect(scorePeaks(noisy, known, 1.5e4)).toMatchObject({ flaggedShare: 0, clippedShare: 0 });
   });
 });
 
