@@ -9,14 +9,14 @@ import type { Frame } from "../detector/frame.js";
 import { type Kernels, loadKernels } from "../kernels/module.js";
 import { combineFlats, type Flat } from "./flat.js";
 import { activeFibres, linesOf, profileTable } from "./profileTable.js";
-import { backgroundUnder, heldOutMisfits, judgeColumns, meanWithError } from "./shape/judge.js";
+import { backgroundUnder, heldOutMisfits, type Judged, judgeColumns, meanWithError } from "./shape/judge.js";
 import { type MeasuredShape, measureShape } from "./shape/measure.js";
 import type { Profile, ShapeProfile, Tramlines } from "./tramlines.js";
 
 export type ProfileKind = Profile["kind"];
 
 /** How a model fits columns that it was not made from: χ² per degree of freedom, with the error that the scatter
- * between columns gives. */
+ * between groups of columns gives. */
 export interface TriedProfile {
   kind: ProfileKind;
   misfit: number;
@@ -32,7 +32,7 @@ export interface ProfileChoice {
 interface Candidate {
   kind: ProfileKind;
   tramlines: Tramlines;
-  /** One for each held-out column. */
+  /** One for each group of held-out columns. */
   misfits: Float64Array;
 }
 
@@ -85,21 +85,28 @@ function gaussianCandidate(kernels: Kernels, flat: Flat, tramlines: Tramlines): 
   const lines = linesOf(tramlines, activeFibres(tramlines));
   const table = profileTable(kernels, tramlines.profile);
   const background = backgroundUnder(kernels, flat, lines, table);
-  return { kind: "gaussian", tramlines, misfits: heldOutMisfits(flat, lines, table, background) };
+  const misfits = heldOutMisfits(judgeColumns(flat, lines, table, background), lines.nFibre);
+  return { kind: "gaussian", tramlines, misfits };
 }
 
 function candidate(kernels: Kernels, flat: Flat, tramlines: Tramlines, kind: ShapeProfile["kind"]): Candidate {
   const measured = measureShape(kernels, flat, tramlines, kind);
   const { lines, table, state } = measured;
+  const judged = judgeColumns(flat, lines, table, state.background);
   return {
     kind,
-    tramlines: withShape(tramlines, measured, flat, kind),
-    misfits: heldOutMisfits(flat, lines, table, state.background),
+    tramlines: withShape(tramlines, measured, relativeError(judged), kind),
+    misfits: heldOutMisfits(judged, lines.nFibre),
   };
 }
 
 /** Tramlines with the measured shape; a dead fibre keeps its line, and takes the median width. */
-function withShape(tramlines: Tramlines, measured: MeasuredShape, flat: Flat, kind: ShapeProfile["kind"]): Tramlines {
+function withShape(
+  tramlines: Tramlines,
+  measured: MeasuredShape,
+  relativeError: number,
+  kind: ShapeProfile["kind"],
+): Tramlines {
   const { lines, table, known } = measured;
   const active = activeFibres(tramlines);
   const legendre = tramlines.legendre.slice();
@@ -113,7 +120,7 @@ function withShape(tramlines: Tramlines, measured: MeasuredShape, flat: Flat, ki
     kind,
     sigma,
     widthDegree: lines.nWidth - 1,
-    relativeError: relativeError(measured, flat),
+    relativeError,
     shape: table,
     known,
   };
@@ -122,11 +129,11 @@ function withShape(tramlines: Tramlines, measured: MeasuredShape, flat: Flat, ki
 
 /** ε: robust scatter of bright pixels about the model beyond what noise explains, as a share of it. The median of χ² with
  * one degree of freedom is 0.4549 (Abramowitz & Stegun, table 26.8). */
-function relativeError({ lines, table, state }: MeasuredShape, flat: Flat): number {
+function relativeError(judged: Judged[]): number {
   const squares: number[] = [];
   const noise: number[] = [];
-  for (const { residual, inverseVariance, model } of judgeColumns(flat, lines, table, state.background)) {
-    for (let y = 0; y < flat.ny; y++) {
+  for (const { residual, inverseVariance, model } of judged) {
+    for (let y = 0; y < model.length; y++) {
       const variance = 1 / inverseVariance[y];
       if (!(variance < (tellingNoise * model[y]) ** 2)) continue;
       squares.push((residual[y] / model[y]) ** 2);

@@ -16,8 +16,6 @@ export interface GaussianProfile {
 
 /** What earlier frames said of a shape: its best coefficients, and how firmly they stand (second derivatives of χ²/2). */
 export interface KnownShape {
-  /** Length of the exponential wing, σ, where the shape is made of Gauss–Hermite functions; absent for splines. */
-  wingScale?: number;
   /** nShape */
   best: Float64Array;
   /** nShape × nShape; column ≤ row counts. */
@@ -26,7 +24,7 @@ export interface KnownShape {
 
 /** Any form, from a table; its widths stretch it. */
 export interface ShapeProfile {
-  /** What the form was made of: Gauss–Hermite functions and an exponential wing, or splines. */
+  /** What the form was made of: Gauss–Hermite functions and exponential wings, or splines. */
   kind: "hermite" | "empirical";
   /** nFibre × (widthDegree + 1): σ(x), pixels. */
   sigma: Float64Array;

@@ -35,8 +35,6 @@ export interface ShapeBasis {
   /** Whether the functions can shift and widen the shape, which steps must then be kept from. */
   canMove: boolean;
   referenceWidth: number;
-  /** Length of the exponential wing, σ, where there is one. */
-  wingScale?: number;
   /** 2 · (n − 1): for each cell of the table, the first spline that is not yet whole and the last that has begun. */
   begun: Int32Array;
 }

@@ -42,9 +42,6 @@ export function shapeHdus({ shape, known }: ShapeProfile): OutputHdu[] {
       ny: nShape + 1,
       data: packed,
       cards: [
-        ...(known.wingScale === undefined
-          ? []
-          : [{ keyword: "SHWING", value: known.wingScale, comment: "[sigma] length of the exponential wing" }]),
         {
           keyword: "COMMENT",
           comment: "First row: coefficients of the shape's functions; then the flat's information on them.",
@@ -78,11 +75,7 @@ export async function readShape(
       referenceWidth: required(table, "SHWIDTH"),
       centroid: Float64Array.from({ length: nShapeTerm }, (_, m) => required(table, `SHCENT${m}`)),
     },
-    known: {
-      ...(kind === "hermite" ? { wingScale: required(packed, "SHWING") } : {}),
-      best: known.slice(0, nShape),
-      information: known.slice(nShape),
-    },
+    known: { best: known.slice(0, nShape), information: known.slice(nShape) },
   };
 }
 

@@ -1,54 +1,43 @@
-/** A Gaussian with Gauss–Hermite terms and a broad exponential wing (van der Marel & Franx 1993, ApJ 407, 525):
+/** A Gaussian with Gauss–Hermite terms (van der Marel & Franx 1993, ApJ 407, 525) and broad exponential wings:
  *
- *     c(v) = α(w) [a_0 + Σ_{j=3}^{6} a_j H_j(w)] + b · e(v) + b′ · ∂e/∂ln L,    w = v / σ
- *     α(w) = exp(−w²/2) / (√(2π) σ),    e(v) = exp(−|v| / L) / 2L
+ *     c(v) = α(w) [a_0 + Σ_{j=3}^{6} a_j H_j(w)] + Σ_i b_i exp(−|w| / L_i) / (2 L_i σ),    w = v / σ
+ *     α(w) = exp(−w²/2) / (√(2π) σ)
  *
- * H_j are theirs: orthonormal under α² up to a factor, H_0 = 1, H_1 = √2 w. There are no H_1 and H_2, which would be a
- * shift and a change of width; those belong to the fibres. All integrals are exact. The last function tells how the
- * wing's length L must change for the next step, and stays as a small correction after the last one. */
+ * H_j are theirs: Hermite polynomials that are orthogonal under α², H_0 = 1, H_1 = √2 w. There are no H_1 and H_2, which
+ * would be a shift and a change of width; those belong to the fibres. All integrals are exact. Two wings of fixed
+ * length, since one whose length is fitted follows what the Gauss–Hermite terms miss at 2 to 4 σ, and is then
+ * too short further out, where it takes light from faint fibres. */
 import type { Kernels } from "../../kernels/module.js";
 import { nShapeTerm } from "../../reference/shape.js";
 import type { ShapeBasis } from "./basis.js";
 
 const reachSigma = 20;
 const pointsPerSigma = 32;
-/** Gaussian, H_3 … H_6, wing, change of its length. */
+/** Lengths of the wings, σ: the foot of the core, and what reaches over to the neighbours. */
+const wingScales = [2, 6];
+/** Gaussian, H_3 … H_6, wings. */
 export const nHermiteFunction = 7;
 const nFunction = nHermiteFunction;
 const highestOrder = 6;
-const wingAt = 5;
-/** Prior departures over the detector: a share of the Gaussian, of every H_j against the Gaussian, of the wing. */
+/** Prior departures over the detector: a share of the Gaussian, of every H_j against the Gaussian, of each wing. */
 const gaussianShare = 0.2;
 const hermiteSpread = 0.05;
 const wingShare = 0.05;
-const lengthSpread = 5e-4;
-/** Before anything is measured: share of the light in the wing, and its length, σ. */
-const startWing = 0.02;
-const startWingScale = 4;
-/** σ: a shorter wing would be the core itself, a longer one scattered light. */
-const shortestWing = 1.5;
-const longestWing = 10;
-/** A step changes the wing's length by this share at most. */
-const largestChange = 0.3;
+/** Share of the light in each wing before anything is measured. */
+const startWing = 0.01;
 
-/** `referenceWidth`: σ, pixels; `wingScale`: L, σ. */
-export function hermiteBasis(kernels: Kernels, referenceWidth: number, wingScale = startWingScale): ShapeBasis {
+/** `referenceWidth`: σ, pixels. */
+export function hermiteBasis(kernels: Kernels, referenceWidth: number): ShapeBasis {
   const { exp, erf } = kernels.workbench(0).call;
   const n = 2 * reachSigma * pointsPerSigma + 1;
   const values = new Float64Array(n * 2 * nFunction);
-  const cut = wingIntegrals(exp, -reachSigma, wingScale);
   for (let i = 0; i < n; i++) {
     const w = -reachSigma + i / pointsPerSigma;
     const row = i * 2 * nFunction;
-    const { integral, value } = hermiteFunctions(
-      w,
-      exp(-0.5 * w * w) * inverseRootTwoPi,
-      0.5 + 0.5 * erf(w * rootHalf),
-    );
-    const wing = wingIntegrals(exp, w, wingScale);
-    const all = [integral[0], ...integral.subarray(3), wing.integral - cut.integral, wing.byLength - cut.byLength];
-    const slopes = [value[0], ...value.subarray(3), wing.value, wing.valueByLength];
-    values.set(all, row);
+    const core = hermiteFunctions(w, exp(-0.5 * w * w) * inverseRootTwoPi, 0.5 + 0.5 * erf(w * rootHalf));
+    const wings = wingScales.map((length) => wingAt(exp, w, length));
+    values.set([core.integral[0], ...core.integral.subarray(3), ...wings.map(({ integral }) => integral)], row);
+    const slopes = [core.value[0], ...core.value.subarray(3), ...wings.map(({ value }) => value)];
     values.set(
       slopes.map((slope) => slope / referenceWidth),
       row + nFunction,
@@ -61,11 +50,10 @@ export function hermiteBasis(kernels: Kernels, referenceWidth: number, wingScale
     n,
     values,
     whole: values.slice((n - 1) * 2 * nFunction, (n - 1) * 2 * nFunction + nFunction),
-    priorShare: Float64Array.of(gaussianShare, 0, 0, 0, 0, wingShare, 0),
-    priorSpread: Float64Array.of(0, hermiteSpread, hermiteSpread, hermiteSpread, hermiteSpread, 1e-6, lengthSpread),
+    priorShare: Float64Array.of(gaussianShare, 0, 0, 0, 0, wingShare, wingShare),
+    priorSpread: Float64Array.of(0, hermiteSpread, hermiteSpread, hermiteSpread, hermiteSpread, 1e-6, 1e-6),
     canMove: false,
     referenceWidth,
-    wingScale,
     begun: Int32Array.from({ length: 2 * (n - 1) }, (_, i) => (i % 2 === 0 ? 0 : nFunction - 1)),
   };
 }
@@ -85,38 +73,19 @@ function hermiteFunctions(w: number, density: number, below: number): { integral
   return { integral, value };
 }
 
-/** e, its integral, and both differentiated by ln L; w and L in σ. */
-function wingIntegrals(exp: (x: number) => number, w: number, length: number) {
-  const u = Math.abs(w) / length;
-  const tail = 0.5 * exp(-u);
-  const side = w < 0 ? 1 : -1;
-  return {
-    integral: w < 0 ? tail : 1 - tail,
-    value: tail / length,
-    byLength: side * tail * u,
-    valueByLength: ((u - 1) * tail) / length,
-  };
+/** A wing at w and its integral from the table's beginning on; `length` in σ. */
+function wingAt(exp: (x: number) => number, w: number, length: number): { integral: number; value: number } {
+  const half = 0.5 * exp(-Math.abs(w) / length);
+  const before = 0.5 * exp(-reachSigma / length);
+  return { integral: (w < 0 ? half : 1 - half) - before, value: half / length };
 }
 
 /** A Gaussian with a little wing: [7 × nShapeTerm]. */
 export function hermiteStart(): Float64Array {
   const coefficients = new Float64Array(nFunction * nShapeTerm);
-  coefficients[0] = 1 - startWing;
-  coefficients[wingAt * nShapeTerm] = startWing;
+  coefficients[0] = 1 - wingScales.length * startWing;
+  wingScales.forEach((_, i) => {
+    coefficients[(nFunction - wingScales.length + i) * nShapeTerm] = startWing;
+  });
   return coefficients;
-}
-
-/** The basis with the wing's length that `coefficients` ask for, and the coefficients there. */
-export function followWing(
-  kernels: Kernels,
-  basis: ShapeBasis,
-  coefficients: Float64Array,
-): { basis: ShapeBasis; coefficients: Float64Array } {
-  const { wingScale = startWingScale, referenceWidth } = basis;
-  const share = coefficients[wingAt * nShapeTerm];
-  if (!(share > 0)) return { basis, coefficients };
-  const change = coefficients[(wingAt + 1) * nShapeTerm] / share;
-  const next = wingScale * (1 + Math.min(Math.max(change, -largestChange), largestChange));
-  const followed = hermiteBasis(kernels, referenceWidth, Math.min(Math.max(next, shortestWing), longestWing));
-  return { basis: followed, coefficients: coefficients.slice().fill(0, (wingAt + 1) * nShapeTerm) };
 }

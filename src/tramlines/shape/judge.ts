@@ -9,14 +9,16 @@ import { fittingColumns, judgingColumns } from "./columns.js";
 import { flatColumn } from "./measure.js";
 import { backgroundColumn, nBackground, ShapeNormal, type ShapeState, settleColumn, wholeProfiles } from "./step.js";
 
-/** Squared residuals count up to this many variances: a cosmic ray or a bad pixel must not judge. */
+/** A pixel's squared residual counts up to this many variances: a cosmic ray must not judge. */
 const mostSquare = 36;
 const backgroundColumns = 40;
 const backgroundRounds = 2;
 
-/** What the judged columns show of one model. */
+/** What one held-out column shows of a model. */
 export interface Judged {
-  /** e⁻, per column [ny]. */
+  /** Index of its group. */
+  group: number;
+  /** e⁻: [ny]. */
   residual: Float64Array;
   /** e⁻⁻², 0 for a bad pixel. */
   inverseVariance: Float64Array;
@@ -24,37 +26,48 @@ export interface Judged {
   model: Float64Array;
 }
 
-/** The held-out columns one by one. `background`: as ShapeState has it. */
-export function* judgeColumns(
-  flat: Flat,
-  lines: Lines,
-  table: ShapeTable,
-  background: Float64Array,
-): Generator<Judged> {
-  for (const x of judgingColumns(flat.nx)) {
-    const data = flatColumn(flat, x);
-    const profiles = wholeProfiles(lines, table, x);
-    const under = backgroundColumn(background, x, lines);
-    const level = data.light.map((light, y) => light - under[y]);
-    const { model } = settleColumn(profiles, data, level, under);
-    yield { residual: level.map((light, y) => light - model[y]), inverseVariance: data.inverseVariance, model };
-  }
+/** The held-out columns. `background`: as ShapeState has it. */
+export function judgeColumns(flat: Flat, lines: Lines, table: ShapeTable, background: Float64Array): Judged[] {
+  return judgingColumns(flat.nx).flatMap((columns, group) =>
+    columns.map((x) => {
+      const data = flatColumn(flat, x);
+      const profiles = wholeProfiles(lines, table, x);
+      const under = backgroundColumn(background, x, lines);
+      const level = data.light.map((light, y) => light - under[y]);
+      const { model } = settleColumn(profiles, data, level, under);
+      const residual = level.map((light, y) => light - model[y]);
+      return { group, residual, inverseVariance: data.inverseVariance, model };
+    }),
+  );
 }
 
-/** Squared residuals over their variances in each held-out column, per degree of freedom: 1 for the true profile. */
-export function heldOutMisfits(flat: Flat, lines: Lines, table: ShapeTable, background: Float64Array): Float64Array {
-  const misfits: number[] = [];
-  for (const { residual, inverseVariance } of judgeColumns(flat, lines, table, background)) {
-    let [sum, freedom] = [0, -lines.nFibre];
-    for (let y = 0; y < residual.length; y++) {
-      if (inverseVariance[y] === 0) continue;
-      sum += Math.min(residual[y] * residual[y] * inverseVariance[y], mostSquare);
-      freedom++;
+/** For each group, squares of its rows' mean residuals over their variances, per degree of freedom: 1 for the true
+ * profile. NaN for a group without a good pixel. */
+export function heldOutMisfits(judged: Judged[], nFibre: number): Float64Array {
+  const nGroup = 1 + judged.reduce((most, { group }) => Math.max(most, group), -1);
+  return Float64Array.from({ length: nGroup }, (_, g) =>
+    groupMisfit(
+      judged.filter(({ group }) => group === g),
+      nFibre,
+    ),
+  );
+}
+
+function groupMisfit(columns: Judged[], nFibre: number): number {
+  let [sum, freedom] = [0, -nFibre];
+  for (let y = 0; y < columns[0].residual.length; y++) {
+    let [weighted, weight] = [0, 0];
+    for (const { residual, inverseVariance } of columns) {
+      const square = residual[y] * residual[y] * inverseVariance[y];
+      const tamed = square > mostSquare ? Math.sqrt(mostSquare / square) : 1;
+      weighted += tamed * residual[y] * inverseVariance[y];
+      weight += inverseVariance[y];
     }
-    if (freedom > 0) misfits.push(sum / freedom);
-    else misfits.push(Number.NaN);
+    if (weight === 0) continue;
+    sum += (weighted * weighted) / weight;
+    freedom++;
   }
-  return Float64Array.from(misfits);
+  return freedom > 0 ? sum / freedom : Number.NaN;
 }
 
 /** Mean over the finite values, and its standard error from their own scatter. */

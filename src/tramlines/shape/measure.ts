@@ -11,7 +11,7 @@ import { referToCentroid } from "./centroid.js";
 import type { ColumnData, Lines } from "./column.js";
 import { fittingColumns } from "./columns.js";
 import { applyGeometry, measureColumn } from "./geometry.js";
-import { followWing, hermiteBasis, hermiteStart } from "./hermiteBasis.js";
+import { hermiteBasis, hermiteStart } from "./hermiteBasis.js";
 import { nBackground, ShapeNormal, type ShapeState } from "./step.js";
 
 /** Columns of the flat that each round looks at, for the shape and for the geometry; the last round's numbers stand. */
@@ -36,12 +36,12 @@ export function measureShape(
   kernels: Kernels,
   flat: Flat,
   tramlines: Tramlines,
-  kind: ShapeProfile["kind"],
+  kind: ShapeProfile["kind"] = "empirical",
 ): MeasuredShape {
   const lines = widthRoom(linesOf(tramlines, activeFibres(tramlines)), leastWidthTerms);
   const middleWidths = Array.from({ length: lines.nFibre }, (_, k) => lines.width[k * lines.nWidth]);
   const referenceWidth = median(middleWidths);
-  let basis = kind === "hermite" ? hermiteBasis(kernels, referenceWidth) : shapeBasis(referenceWidth);
+  const basis = kind === "hermite" ? hermiteBasis(kernels, referenceWidth) : shapeBasis(referenceWidth);
   let state: ShapeState = {
     coefficients: kind === "hermite" ? hermiteStart() : startCoefficients(kernels, basis),
     background: new Float64Array(nBackground),
@@ -50,12 +50,6 @@ export function measureShape(
   const history: number[] = [];
   let information: Float64Array = new Float64Array(0);
   for (let round = 0; round < shapeColumns.length; round++) {
-    if (kind === "hermite" && round > 0) {
-      const followed = followWing(kernels, basis, state.coefficients);
-      basis = followed.basis;
-      state = { ...state, coefficients: followed.coefficients };
-      table = tabulate(basis, state.coefficients);
-    }
     const normal = new ShapeNormal(kernels, basis, flat.ny, lines.nFibre);
     for (const x of fittingColumns(flat.nx, shapeColumns[round], round)) {
       normal.add(lines, table, state.background, flatColumn(flat, x), false, round > 0 ? 6 : 0);
@@ -70,8 +64,7 @@ export function measureShape(
     );
     applyGeometry(kernels, lines, columns);
   }
-  const { wingScale } = basis;
-  const known = { ...(wingScale === undefined ? {} : { wingScale }), best: state.coefficients, information };
+  const known = { best: state.coefficients, information };
   return { ...referToCentroid(kernels, lines, table), basis, state, known, history };
 }
 

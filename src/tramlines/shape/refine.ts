@@ -4,11 +4,11 @@ import type { Frame } from "../../detector/frame.js";
 import type { Kernels } from "../../kernels/module.js";
 import { MaskBit } from "../../reference/bits.js";
 import type { SmoothBackground } from "../../reference/extract.js";
-import type { ShapeTable } from "../../reference/shape.js";
+import { nShapeTerm, type ShapeTable } from "../../reference/shape.js";
 import type { KnownShape } from "../tramlines.js";
 import { type ShapeBasis, shapeBasis, tabulate } from "./basis.js";
 import type { ColumnData, Lines } from "./column.js";
-import { hermiteBasis } from "./hermiteBasis.js";
+import { hermiteBasis, nHermiteFunction } from "./hermiteBasis.js";
 import { nBackground, nBackgroundY, ShapeNormal, type ShapeState } from "./step.js";
 
 const steps = 2;
@@ -40,9 +40,10 @@ export function refineShape(
   return refined;
 }
 
-/** What the flat's shape was made of. */
-function basisOf(kernels: Kernels, { wingScale }: KnownShape, referenceWidth: number): ShapeBasis {
-  return wingScale === undefined ? shapeBasis(referenceWidth) : hermiteBasis(kernels, referenceWidth, wingScale);
+/** What the flat's shape was made of: its coefficients' number tells. */
+function basisOf(kernels: Kernels, { best }: KnownShape, referenceWidth: number): ShapeBasis {
+  const gaussHermite = best.length === nHermiteFunction * nShapeTerm;
+  return gaussHermite ? hermiteBasis(kernels, referenceWidth) : shapeBasis(referenceWidth);
 }
 
 /** One column of a frame, with what makes its variances. */
