@@ -1,5 +1,6 @@
 /** hatchel recover: light of known flux put on one's own frame, and what the extraction makes of it. */
 import { readFileSync } from "node:fs";
+import { basename } from "node:path";
 import type { Command } from "commander";
 import { InvalidArgumentError, Option } from "commander";
 import type { Frame } from "../detector/frame.js";
@@ -120,7 +121,7 @@ function partFlats(given: RecoverOptions): { options: RecoverOptions; inject: st
     options: { ...given, flat: traced },
     inject: [held],
     assumption: [
-      `${held} is injected and not traced; profiles made with it too would be a little better than those tested here.`,
+      `${basename(held)} is injected and not traced; profiles made with it too would be a little better than those tested here.`,
     ],
   };
 }

@@ -1,12 +1,13 @@
 /** A flat's light moved along y to where the science frame's light sits.
  *
- * Interpolating the pixels themselves would blur lines of 2.4 px FWHM by about a per cent of their peak. So only what the profiles
- * do not explain is interpolated (six points, Lagrange), and their own light is drawn at the new place exactly:
+ * Interpolating the pixels themselves errs by 0.5 % of the peak (root mean square, lines of 2.4 px FWHM, a third of a pixel). So only
+ * what the profiles do not explain is interpolated (six points, Lagrange), and their own light is drawn at the new place exactly:
  *
  *     moved = drawn(y + δ) + interpolated(flat − drawn(y))
  *
- * A profile that is wrong stays wrong by the same amount, save for the interpolation's error in the *difference*, at most
- * a few per cent of it. Without a shift the pixels stay as they are, to the last bit. */
+ * A profile that is wrong stays wrong by as much, save for that part of the difference which changes within a pixel. That leaves
+ * 0.1 % of the peak with profiles measured on a flat and 0.2 % with Gaussians that do not fit (measured on simulated flats with and
+ * without the shift). Without a shift the pixels stay as they are, to the last bit. */
 
 import type { Frame } from "../../detector/frame.js";
 import type { Kernels } from "../../kernels/module.js";
