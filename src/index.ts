@@ -84,5 +84,6 @@ export {
   writeTramlines,
 } from "./tramlines/file.js";
 export type { SlitLayout } from "./tramlines/layout.js";
+export { chooseProfile, type ProfileChoice, type ProfileKind } from "./tramlines/profiles.js";
 export { type TraceOptions, type Tracing, traceFlat } from "./tramlines/trace.js";
 export type { FibreState, GaussianProfile, Profile, Tramlines } from "./tramlines/tramlines.js";

@@ -6,7 +6,7 @@ import * as library from "../src/index.js";
 
 const VALUES = `
   DetectorError FitsError Flag Header MaskBit NamingError SCENES SceneError SpectrographError
-  TraceError UNUSABLE checkGeometry compareMethods correctFrame countFibres encodeFits extractFrame
+  TraceError UNUSABLE checkGeometry chooseProfile compareMethods correctFrame countFibres encodeFits extractFrame
   formatSection historyCards inputCards listHdus loadCalibrations loadKernels lookAt
   makeCalibrations measureNoise medianFwhm medianSignalToNoise noCalibrations noiseWarnings parseScene
   parseSection parseSpectrograph readImage readPositions readScene readSpectra readSpectrograph
@@ -22,7 +22,7 @@ const TYPES = `
   Extraction ExtractionOptions FibreCounts FibreState FitsColumn FitsErrorCode FitsImage FitsTable
   FlagCounts Frame GaussianProfile HduSummary LeakScore LookOptions LookReport Method MethodCheck
   MethodComparison NoiseFrames NoiseIngredients NoiseMeasurement OutputColumn OutputHdu OutputImage
-  PixelArray Profile RawImage ReadOptions Role Scene SceneExposure Section SimulatedExposure
+  PixelArray Profile ProfileChoice ProfileKind RawImage ReadOptions Role Scene SceneExposure Section SimulatedExposure
   SimulationFiles SimulationOptions SlitLayout Spectra SpectraFileOptions SpectraSummary
   Spectrograph TableOptions TraceOptions TraceScore Tracing Tramlines TramlinesFileOptions TrueFlux
   TrueLine Truth Verification WriteOptions
