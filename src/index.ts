@@ -26,6 +26,16 @@ export {
   spectraHdus,
   writeSpectra,
 } from "./extraction/file.js";
+export {
+  type CellScore,
+  type DarkScore,
+  type FibreBias,
+  type Finding,
+  type Recovery,
+  type RecoveryOptions,
+  recoverInjected,
+  type Verdict,
+} from "./extraction/recover.js";
 export { medianSignalToNoise } from "./extraction/snr.js";
 export { Flag, type Method, type Spectra, UNUSABLE } from "./extraction/spectra.js";
 export { type MethodCheck, type Verification, verifyExtraction } from "./extraction/verify.js";

@@ -10,22 +10,22 @@ const VALUES = `
   formatSection historyCards inputCards listHdus loadCalibrations loadKernels lookAt
   makeCalibrations measureNoise medianFwhm medianSignalToNoise noCalibrations noiseWarnings parseScene
   parseSection parseSpectrograph readImage readPositions readScene readSpectra readSpectrograph
-  readTable readTramlines requireSameGeometry scoreByDecade scoreCosmicRays scoreLeak scoreTrace
+  readTable readTramlines recoverInjected requireSameGeometry scoreByDecade scoreCosmicRays scoreLeak scoreTrace
   sectionSize simulateExposure simulationFiles spectraHdus spectrographToml summariseSpectra
   traceFlat tramlineHeights tramlinesHdus verifyExtraction writeExposure writeFits
   writeObserverFiles writeSimulation writeSpectra writeTramlines
 `;
 
 const TYPES = `
-  AmplifierNoise CalibrationFrames CalibrationInput CalibrationPaths Calibrations Card CardValue
-  ChecksumState Comparison CorrectOptions CosmicScore CosmicTruth DecadeScore DetectorGeometry
-  Extraction ExtractionOptions FibreCounts FibreState FitsColumn FitsErrorCode FitsImage FitsTable
+  AmplifierNoise CalibrationFrames CalibrationInput CalibrationPaths Calibrations Card CardValue CellScore
+  ChecksumState Comparison CorrectOptions CosmicScore CosmicTruth DarkScore DecadeScore DetectorGeometry
+  Extraction ExtractionOptions FibreBias FibreCounts FibreState Finding FitsColumn FitsErrorCode FitsImage FitsTable
   FlagCounts Frame GaussianProfile HduSummary LeakScore LookOptions LookReport Method MethodCheck
   MethodComparison NoiseFrames NoiseIngredients NoiseMeasurement OutputColumn OutputHdu OutputImage
-  PixelArray Profile ProfileChoice ProfileKind RawImage ReadOptions Role Scene SceneExposure Section SimulatedExposure
+  PixelArray Profile ProfileChoice ProfileKind RawImage ReadOptions Recovery RecoveryOptions Role Scene SceneExposure Section SimulatedExposure
   SimulationFiles SimulationOptions SlitLayout Spectra SpectraFileOptions SpectraSummary
   Spectrograph TableOptions TraceOptions TraceScore Tracing Tramlines TramlinesFileOptions TrueFlux
-  TrueLine Truth Verification WriteOptions
+  TrueLine Truth Verdict Verification WriteOptions
 `;
 
 const words = (text: string) => text.trim().split(/\s+/);

@@ -12,7 +12,7 @@ describe("without a job", () => {
     expect(run.code).toBe(2);
     expect(run.stderr).toBe("");
     expect(run.stdout).toMatch(/^Usage: hatchel \[options\] \[command\]\n/);
-    for (const word of ["demo", "simulate", "look", "trace", "extract", "compare", "verify"]) {
+    for (const word of ["demo", "simulate", "look", "trace", "extract", "compare", "verify", "recover"]) {
       expect(run.stdout).toMatch(new RegExp(`^  ${word} `, "m"));
     }
     expect(run.stdout).toContain("Exit codes: 0 done; 1 the job failed, with the reason in one sentence; 2 wrong use.");
