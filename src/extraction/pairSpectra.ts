@@ -14,9 +14,9 @@ const tellingSignal = 10;
 const changeColumns = 2;
 /** A change over this many σ tells how well lines repeat. */
 const tellingChange = 20;
-/** The second frame's own hits make shortfalls too, on a few per cent of the points; the margin is for what lies beyond. */
-const changeQuantile = 0.95;
-const margin = 3;
+/** The second frame's own hits make shortfalls too, on about a per cent of the points; the margin is for what lies beyond. */
+const changeQuantile = 0.98;
+const margin = 2;
 const kappa = 5;
 /** Typical |difference| over noise from which on the frames are not of the same field; 0.67 when they are. */
 const otherFieldSigma = 4;
