@@ -18,7 +18,10 @@ export { noiseWarnings } from "./detector/noiseWarnings.js";
 export type { RawImage } from "./detector/raw.js";
 export type { Role } from "./detector/roles.js";
 export { type Comparison, compareMethods, type MethodComparison } from "./extraction/compare.js";
+export { findPairHits, type PairHits } from "./extraction/cosmicPair.js";
+export { type CrosstalkMatrix, type LoneEstimator, measureCrosstalk } from "./extraction/crosstalkMatrix.js";
 export { type Extraction, type ExtractionOptions, extractFrame } from "./extraction/extract.js";
+export { crosstalkHdus, rejectedHdu, scatteredHdu, seenHdu, targetsHdu } from "./extraction/extraHdus.js";
 export {
   readPositions,
   readSpectra,
@@ -36,8 +39,10 @@ export {
   recoverInjected,
   type Verdict,
 } from "./extraction/recover.js";
+export { measureSingleFibre, type SeenLeak, type SingleFibreCheck } from "./extraction/singleFibre.js";
 export { medianSignalToNoise } from "./extraction/snr.js";
 export { Flag, type Method, type Spectra, UNUSABLE } from "./extraction/spectra.js";
+export { neglectedShare, sumFibres, type Target, type TargetSpectra } from "./extraction/targets.js";
 export { type MethodCheck, type Verification, verifyExtraction } from "./extraction/verify.js";
 export { historyCards, inputCards } from "./fits/carry.js";
 export { encodeFits, type OutputColumn, type OutputHdu, type OutputImage, type PixelArray } from "./fits/encode.js";

@@ -5,27 +5,31 @@ import { describe, expect, test } from "vitest";
 import * as library from "../src/index.js";
 
 const VALUES = `
-  DetectorError FitsError Flag Header MaskBit NamingError SCENES SceneError SpectrographError
-  TraceError UNUSABLE checkGeometry chooseProfile compareMethods correctFrame countFibres encodeFits extractFrame
-  formatSection historyCards inputCards listHdus loadCalibrations loadKernels lookAt
-  makeCalibrations measureNoise medianFwhm medianSignalToNoise noCalibrations noiseWarnings parseScene
-  parseSection parseSpectrograph readImage readPositions readScene readSpectra readSpectrograph
-  readTable readTramlines recoverInjected requireSameGeometry scoreByDecade scoreCosmicRays scoreLeak scoreTrace
-  sectionSize simulateExposure simulationFiles spectraHdus spectrographToml summariseSpectra
-  traceFlat tramlineHeights tramlinesHdus verifyExtraction writeExposure writeFits
-  writeObserverFiles writeSimulation writeSpectra writeTramlines
+  DetectorError FitsError Flag Header MaskBit NamingError SCENES SceneError SpectrographError TraceError
+  UNUSABLE checkGeometry chooseProfile compareMethods correctFrame countFibres crosstalkHdus encodeFits
+  extractFrame findPairHits formatSection historyCards inputCards listHdus loadCalibrations loadKernels
+  lookAt makeCalibrations measureCrosstalk measureNoise measureSingleFibre medianFwhm
+  medianSignalToNoise neglectedShare noCalibrations noiseWarnings parseScene parseSection
+  parseSpectrograph readImage readPositions readScene readSpectra readSpectrograph readTable
+  readTramlines recoverInjected rejectedHdu requireSameGeometry scatteredHdu scoreByDecade
+  scoreCosmicRays scoreLeak scoreTrace sectionSize seenHdu simulateExposure simulationFiles spectraHdus
+  spectrographToml sumFibres summariseSpectra targetsHdu traceFlat tramlineHeights tramlinesHdus
+  verifyExtraction writeExposure writeFits writeObserverFiles writeSimulation writeSpectra
+  writeTramlines
 `;
 
 const TYPES = `
-  AmplifierNoise CalibrationFrames CalibrationInput CalibrationPaths Calibrations Card CardValue CellScore
-  ChecksumState Comparison CorrectOptions CosmicScore CosmicTruth DarkScore DecadeScore DetectorGeometry
-  Extraction ExtractionOptions FibreBias FibreCounts FibreState Finding FitsColumn FitsErrorCode FitsImage FitsTable
-  FlagCounts Frame GaussianProfile HduSummary LeakScore LookOptions LookReport Method MethodCheck
-  MethodComparison NoiseFrames NoiseIngredients NoiseMeasurement OutputColumn OutputHdu OutputImage
-  PixelArray Profile ProfileChoice ProfileKind RawImage ReadOptions Recovery RecoveryOptions Role Scene SceneExposure Section SimulatedExposure
-  SimulationFiles SimulationOptions SlitLayout Spectra SpectraFileOptions SpectraSummary
-  Spectrograph TableOptions TraceOptions TraceScore Tracing Tramlines TramlinesFileOptions TrueFlux
-  TrueLine Truth Verdict Verification WriteOptions
+  AmplifierNoise CalibrationFrames CalibrationInput CalibrationPaths Calibrations Card CardValue
+  CellScore ChecksumState Comparison CorrectOptions CosmicScore CosmicTruth CrosstalkMatrix DarkScore
+  DecadeScore DetectorGeometry Extraction ExtractionOptions FibreBias FibreCounts FibreState Finding
+  FitsColumn FitsErrorCode FitsImage FitsTable FlagCounts Frame GaussianProfile HduSummary LeakScore
+  LoneEstimator LookOptions LookReport Method MethodCheck MethodComparison NoiseFrames NoiseIngredients
+  NoiseMeasurement OutputColumn OutputHdu OutputImage PairHits PixelArray Profile ProfileChoice
+  ProfileKind RawImage ReadOptions Recovery RecoveryOptions Role Scene SceneExposure Section SeenLeak
+  SimulatedExposure SimulationFiles SimulationOptions SingleFibreCheck SlitLayout Spectra
+  SpectraFileOptions SpectraSummary Spectrograph TableOptions Target TargetSpectra TraceOptions
+  TraceScore Tracing Tramlines TramlinesFileOptions TrueFlux TrueLine Truth Verdict Verification
+  WriteOptions
 `;
 
 const words = (text: string) => text.trim().split(/\s+/);

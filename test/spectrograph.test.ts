@@ -78,6 +78,15 @@ describe("spectrograph file", () => {
     expect(parse("")).toEqual({ file: "bench.toml", detector: { amplifiers: [] } });
   });
 
+  it("reads which fibres belong to which target", () => {
+    const text = '[slit]\nblocks = [5, 6]\n[slit.targets]\n"star A" = [7, 5, 6]\nM31 = [2]\n';
+    const { slit } = parseSpectrograph(text, { file: "bench.toml", folder: "." });
+    expect(slit?.targets).toEqual([
+      { name: "star A", fibres: [7, 5, 6] },
+      { name: "M31", fibres: [2] },
+    ]);
+  });
+
   it("takes paths from the file's own folder", async () => {
     const folder = await mkdtemp(join(tmpdir(), "spectrograph-"));
     try {
@@ -110,7 +119,10 @@ describe("spectrograph file", () => {
       "[[detector.amplifier]]\n[[detector.amplifier]]\nreadnoise = 3\n",
       "bench.toml: unknown key 'detector.amplifier[2].readnoise'; did you mean 'read_noise'?",
     ],
-    ["[slit]\ncolour = 1\n", "bench.toml: unknown key 'slit.colour'; known there: blocks, pitch, gap, dead, sky."],
+    [
+      "[slit]\ncolour = 1\n",
+      "bench.toml: unknown key 'slit.colour'; known there: blocks, pitch, gap, dead, sky, targets.",
+    ],
     [
       "[[detector.amplifier]]\ngain = 0\n",
       "bench.toml: 'detector.amplifier[1].gain' is 0, but a number over 0, in electrons per ADU was expected; correct it or leave the key out.",
@@ -142,6 +154,22 @@ describe("spectrograph file", () => {
     [
       "[slit]\nblocks = [5, 6]\ngap = [1, 2]\n",
       "bench.toml: 'slit.gap' lists 2 gaps, but 2 blocks have 1 between them; give one number for each gap, or one for all.",
+    ],
+    [
+      '[slit]\nblocks = [5, 6]\ntargets = { "star A" = [3, 12] }\n',
+      "bench.toml: 'slit.targets.star A' names position 12, but 'slit.blocks' adds up to 11; positions count from 1.",
+    ],
+    [
+      "[slit.targets]\nA = [3, 4, 3]\n",
+      "bench.toml: 'slit.targets.A' names position 3 twice, but a fibre counts once in a sum; leave one out.",
+    ],
+    [
+      "[slit.targets]\nA = [3, 0]\n",
+      "bench.toml: 'slit.targets.A[2]' is 0, but a list of slit positions, counted from 1 was expected; correct it or leave the key out.",
+    ],
+    [
+      '[slit.targets]\n"é" = [3]\n',
+      "bench.toml: 'slit.targets' has a target called 'é', but 1 to 68 characters of plain ASCII were expected; rename it.",
     ],
     [
       "[slit]\nblocks = [5, 6]\nsky = [12]\n",
