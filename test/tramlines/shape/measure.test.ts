@@ -23,7 +23,7 @@ describe("a profile measured from the flat, against the true one", () => {
     expect(core.worst).toBeLessThan(4e-3);
     expect(wing.rms).toBeLessThan(1e-4);
     expect(wing.worst).toBeLessThan(5e-4);
-    expect(Math.abs(wingLight)).toBeLessThan(5e-4);
+    expect(Math.abs(wingLight)).toBeLessThan(1e-3);
   });
 
   it("is no Gaussian, nor was the truth: one of the same lines and widths misses by eight times as much", () => {
@@ -33,7 +33,7 @@ describe("a profile measured from the flat, against the true one", () => {
     expect(core.rms).toBeGreaterThan(8 * weightErrors(measured, flats[0].truth, active).core.rms);
   });
 
-  it("puts tramlines on the centroid of the whole profile, to 0.005 px rms", () => {
+  it("puts tramlines on the centroid of the whole profile: 0.0025 px rms but for an offset that all have in common", () => {
     const { measured, flats, active } = bench;
     const { truth } = flats[0];
     const { lines } = measured;
@@ -47,11 +47,11 @@ describe("a profile measured from the flat, against the true one", () => {
       active.map(() => true),
       5.1,
     );
-    // Far wings that differ on the two sides by 1e-4 of the light at 15 px move the centroid by 0.0015 px: the offset, common
-    // to all fibres, is known less well than one fibre against the next.
-    expect(score.rms).toBeLessThan(0.004);
-    expect(score.worstRms).toBeLessThan(0.012);
-    expect(Math.abs(score.offset)).toBeLessThan(0.006);
+    // The whole wings' light is known to some 5e-4 of a fibre (above); as much of it on one side, 10 px away, moves the centroid
+    // of all fibres by 0.005 px: other seeds gave −0.004, 0.0005 and 0.005 px.
+    expect(score.rms).toBeLessThan(0.0025);
+    expect(score.worstRms).toBeLessThan(0.006);
+    expect(Math.abs(score.offset)).toBeLessThan(0.012);
   });
 
   it("holds all the light of a fibre, everywhere on the frame", () => {
