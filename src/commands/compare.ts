@@ -9,6 +9,7 @@ import {
   type FrameOptions,
   forceOption,
   type MethodOptions,
+  namingOptions,
   outputOption,
   type TramlineOptions,
 } from "./frameOptions.js";
@@ -60,6 +61,7 @@ async function compare(path: string, options: CompareOptions, progress: Progress
   const { precision, cosmicRays, halfAperture } = options;
   const comparison = await compareMethods(frame, traced.tramlines, {
     ...{ precision, cosmicRays, ...(halfAperture === undefined ? {} : { halfAperture }) },
+    ...namingOptions(options),
     onProgress: progress.share,
   });
   const json = {

@@ -25,6 +25,7 @@ import {
   forceOption,
   type MethodOptions,
   methodLines,
+  namingOptions,
   onOrOff,
   outputOption,
   requireFittingMethod,
@@ -84,7 +85,7 @@ async function extract(path: string, options: ExtractOptions, progress: Progress
   const pair = await pairHits(frame, traced.tramlines, options, bench, progress);
   progress.stage(`extracting ${frame.name}`);
   const extraction = await extractFrame(frame, traced.tramlines, {
-    ...extractionOptions(options),
+    ...{ ...extractionOptions(options), ...namingOptions(options) },
     ...(pair === undefined ? {} : { knownHits: pair.hits }),
     onProgress: progress.share,
   });

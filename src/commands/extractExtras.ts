@@ -12,7 +12,7 @@ import type { OutputHdu } from "../fits/encode.js";
 import { median } from "../reference/median.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { RefusalError } from "./failures.js";
-import type { MethodOptions } from "./frameOptions.js";
+import { type MethodOptions, namingOptions, type TramlineOptions } from "./frameOptions.js";
 import { type Bench, readFrame } from "./frames.js";
 import type { JsonOf } from "./json.js";
 import type { Progress } from "./progress.js";
@@ -77,14 +77,16 @@ export function requireFittingExtras(options: ExtraOptions & MethodOptions): voi
 export async function pairHits(
   frame: Frame,
   tramlines: Tramlines,
-  options: ExtraOptions & MethodOptions,
+  options: ExtraOptions & MethodOptions & TramlineOptions,
   bench: Bench,
   progress: Progress,
 ): Promise<PairHits | undefined> {
   if (options.pair === undefined) return undefined;
   const pair = await readFrame(options.pair, "science", bench);
   progress.stage(`comparing ${frame.name} with ${pair.name}`);
-  return refusing(() => findPairHits(frame, pair, tramlines, { precision: options.precision }));
+  return refusing(() =>
+    findPairHits(frame, pair, tramlines, { precision: options.precision, ...namingOptions(options) }),
+  );
 }
 
 export async function measureExtras(

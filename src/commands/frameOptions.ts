@@ -22,6 +22,8 @@ export interface TramlineOptions {
   tramlines?: string;
   /** For flats that are traced on the way; tramlines have theirs. */
   profile?: ProfileKind | "auto";
+  /** Extract a frame even when its light does not tell that its fibres are named rightly. */
+  trustNames?: boolean;
 }
 
 /** How light is gathered. */
@@ -57,7 +59,16 @@ export function addTramlineOptions(command: Command): Command {
   return command
     .option("--flat <file...>", "fibre flats to trace on the way")
     .option("--tramlines <file>", "tramlines that 'hatchel trace' wrote")
-    .addOption(profileOption());
+    .addOption(profileOption())
+    .option(
+      "--trust-names",
+      "extract a frame even if its light does not tell that fibres are named rightly, one lower or one higher; only when nothing can have moved since the flat, since every spectrum would bear another fibre's number",
+    );
+}
+
+/** What the tramlines' options come to for the extraction. */
+export function namingOptions({ trustNames }: TramlineOptions): { checkNames?: boolean } {
+  return trustNames === true ? { checkNames: false } : {};
 }
 
 export function profileOption(): Option {

@@ -156,6 +156,7 @@ export function frameLines(options: FrameOptions & TramlineOptions): string[] {
     [files ?? []].flat().map((path) => `${role} ${basename(path)}`),
   );
   if (flat !== undefined) lines.push(`profile ${options.profile ?? "auto"}`);
+  if (options.trustNames === true) lines.push("trust-names");
   return hdu === undefined ? lines : [...lines, `hdu ${hdu}`];
 }
 

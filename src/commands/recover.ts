@@ -14,6 +14,7 @@ import {
   type FrameOptions,
   forceOption,
   type MethodOptions,
+  namingOptions,
   outputOption,
   requireFittingMethod,
   type TramlineOptions,
@@ -86,6 +87,7 @@ async function recover(path: string, given: RecoverOptions, progress: Progress):
   const recovery = await refusing(() =>
     recoverInjected(frame, traced.tramlines, flats, {
       ...{ method, crosstalk, precision, cosmicRays, ...(halfAperture === undefined ? {} : { halfAperture }) },
+      ...namingOptions(options),
       ...{ seed: options.seed, onProgress: progress.share },
     }),
   );

@@ -6,6 +6,7 @@ import {
   addFrameOptions,
   addTramlineOptions,
   type FrameOptions,
+  namingOptions,
   type TramlineOptions,
 } from "./frameOptions.js";
 import { inputPaths, oneOfEach, openBench, readFrame, requireTramlineSource, tramlinesFor } from "./frames.js";
@@ -37,7 +38,10 @@ async function verify(path: string, options: VerifyOptions, progress: Progress):
   const frame = await readFrame(path, "science", bench);
   const traced = await tramlinesFor(frame, options, bench, progress);
   progress.stage(`verifying on ${frame.name}`);
-  const verification = await verifyExtraction(frame, traced.tramlines, { onProgress: progress.share });
+  const verification = await verifyExtraction(frame, traced.tramlines, {
+    ...namingOptions(options),
+    onProgress: progress.share,
+  });
   return {
     json: {
       frame: frame.name,

@@ -1,6 +1,8 @@
 /** The flat's tramlines and profile made the frame's own: moved to where its light sits, and refined on its light. */
 import type { Frame } from "../detector/frame.js";
 import type { Kernels } from "../kernels/module.js";
+import type { SmoothBackground } from "../reference/extract.js";
+import { deadLightWarnings, measureDeadLight } from "../tramlines/deadLight.js";
 import { compareOneOff, type OneOff, requireNamesFit } from "../tramlines/oneOff.js";
 import { activeFibres, linesOf } from "../tramlines/profileTable.js";
 import { refineShape } from "../tramlines/shape/refine.js";
@@ -19,7 +21,7 @@ export interface Adapted {
   warnings: string[];
 }
 
-/** @throws TraceError when the frame's light does not tell that fibres are named rightly. */
+/** @throws TraceError when the frame's light does not tell that fibres are named rightly, or when many dead ones shine. */
 export function adaptTramlines(
   kernels: Kernels,
   frame: Frame,
@@ -34,17 +36,26 @@ export function adaptTramlines(
     shift = measureShift(kernels, frame, tramlines, background);
     if (shift === null) {
       warnings.push(
-        `${frame.name}: too little light to measure its shift against the flat, so none is applied; spectra are right only if nothing moved since the flat.`,
+        `${frame.name}: too little light to measure its shift against the flat, so none is applied; spectra are right only if nothing moved since the flat, and by a whole fibre neither, since names are not checked then.`,
       );
     } else {
       adapted = shiftTramlines(tramlines, shift);
       oneOff = compareOneOff(kernels, frame, adapted, background);
       if (options.checkNames !== false) requireNamesFit(frame, oneOff);
+      const elsewhere = options.background === false ? background : backgroundBesideDead(frame, adapted);
+      const dead = measureDeadLight(kernels, frame, adapted, elsewhere);
+      warnings.push(...deadLightWarnings(frame, dead, tramlines.nFibre));
     }
   }
   if (options.refine === false || adapted.profile.kind === "gaussian")
     return { tramlines: adapted, shift, oneOff, refined: false, warnings };
   return { tramlines: refineOn(kernels, frame, adapted, options), shift, oneOff, refined: true, warnings };
+}
+
+/** The background as the gaps between blocks and the slit's ends tell it; null where they are too narrow. */
+function backgroundBesideDead(frame: Frame, tramlines: Tramlines): SmoothBackground | null {
+  const fit = fitBackground(frame, { ...tramlines, state: tramlines.state.map(() => "lit") });
+  return fit.warnings.length > 0 ? null : fit;
 }
 
 /** The profile refined on what a first look at the frame leaves after background and cosmic rays. */

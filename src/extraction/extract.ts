@@ -36,7 +36,8 @@ export interface ExtractionOptions {
   background?: boolean;
   /** Measure where the frame's light sits against the tramlines, and extract it there. Default true. */
   shift?: boolean;
-  /** Refuse a frame whose light does not tell that its fibres are named rightly. Default true. */
+  /** Refuse a frame whose light does not tell that its fibres are named rightly. Default true. Without it a frame that moved
+   * by one fibre since the flat gives every spectrum another fibre's number, in silence. */
   checkNames?: boolean;
   /** Refine a measured profile on the frame itself. Default true. */
   refine?: boolean;

@@ -57,7 +57,7 @@ export function requireNamesFit(frame: Frame, { lower, higher }: OneOff): void {
   throw new TraceError(
     `${frame.name}: the light would fit ${how} with every fibre one position ${which} than where it is named (misfit ` +
       `${lower.toFixed(0)} lower, 0 as named, ${higher.toFixed(0)} higher), so its fibres cannot be named with certainty; ` +
-      "trace a flat taken next to it, or switch this check off when nothing can have moved by a fibre.",
+      "trace a flat taken next to it, or trust the names (--trust-names; checkNames: false) if you know that nothing moved by a fibre.",
   );
 }
 
