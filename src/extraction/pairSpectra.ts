@@ -17,6 +17,8 @@ const tellingChange = 20;
 /** The second frame's own hits make shortfalls too, on about a per cent of the points; the margin is for what lies beyond. */
 const changeQuantile = 0.98;
 const margin = 2;
+/** What η is at least: focus and seeing change single lines by more than most of the changes show. κ·η = 30 %. */
+const leastLineError = 0.06;
 const kappa = 5;
 /** Typical |difference| over noise from which on the frames are not of the same field; 0.67 when they are. */
 const otherFieldSigma = 4;
@@ -53,7 +55,7 @@ export function pairSpectra(first: Spectra, second: Spectra, active: number[]): 
     change: empty(),
     medianScale: 1,
     scaleSpread: 1,
-    lineError: 0,
+    lineError: leastLineError,
     typicalDifference: Number.NaN,
   };
   const common = commonScale(first, second, active);
@@ -160,5 +162,6 @@ function compare(pair: PairSpectra, first: Spectra, second: Spectra, active: num
   if (differences.length > 0) pair.typicalDifference = median(differences);
   if (shares.length < 100) return;
   const sorted = Float64Array.from(shares).sort();
-  pair.lineError = (margin * sorted[Math.floor(changeQuantile * (sorted.length - 1))]) / kappa;
+  const measured = (margin * sorted[Math.floor(changeQuantile * (sorted.length - 1))]) / kappa;
+  pair.lineError = Math.max(leastLineError, measured);
 }
