@@ -48,7 +48,7 @@ async function main() {
   console.log(`auto takes ${automatic}; misfit on held-out columns of the flats: ${words.join(", ")}\n`);
   for (const name of ["sci_01", "sci_02", "sci_03"]) {
     const { shift, stretch } = scene.exposure.find((exposure) => exposure.name === name);
-    console.log(`${name}: moved by ${shift} px, stretched by ${stretch} a pixel\n`);
+    console.log(`${name}: light moved by ${shift} px and stretched by ${stretch} px a pixel since the flat\n`);
     console.log(`${await frameTable(night, name, profiles, automatic)}\n`);
   }
 }
@@ -152,21 +152,24 @@ function figures({ spectra, shift }, tramlines, truth, flatTruth, bounds) {
     const of = (list) => list.find((score) => score.from === from).pull.toFixed(2);
     return [`pull, ${power(from)} – ${power(10 * from)} e⁻ (after one scale)`, `${of(scores)} (${of(scaled)})`];
   });
-  const faint = scores.find(({ from }) => from === 10);
   const shiftRow = shift === null ? "given" : shiftError(tramlines, moved, truth, flatTruth);
   return [
     ...pulls,
     ["common scale", scale.toFixed(4)],
-    ["bias, 10 – 100 e⁻", signed(100 * faint.bias, 1, " %")],
+    ["bias in these decades, %", decades.map((from) => signed(100 * biasOf(scores, from), 1, "")).join(", ")],
     [`leak, ${leak.nFibre} fibres: mean, worst`, `${share(leak.meanShare)}, ${share(leak.worstShare)}`],
     [`cosmic rays: ${hits.nHit} hits, missed, spoilt`, `${percent(1 - hits.foundShare)}, ${percent(hits.spoiltShare)}`],
-    ["clean points flagged", share(hits.falseShare)],
+    [`of ${hits.nClean} clean points flagged`, share(hits.falseShare)],
     [`${peaks.nPeak} line peaks: found / true, flagged`, `${peaks.ratio.toFixed(4)}, ${percent(peaks.flaggedShare)}`],
     ["trace: rms, worst fibre, px", `${trace.rms.toFixed(4)}, ${trace.worstRms.toFixed(4)}`],
     ["trace: common offset, px", signed(trace.offset, 4, "")],
     ["shift found − true: mean, worst, px", shiftRow],
     ["variance / Cramér–Rao bound", varianceOverBound(spectra, boundColumns, bounds).toFixed(3)],
   ];
+}
+
+function biasOf(scores, decade) {
+  return scores.find(({ from }) => from === decade).bias;
 }
 
 /** Of the surface that was measured, at every point of a lit fibre. */
@@ -192,7 +195,7 @@ function signed(value, digits, unit) {
 }
 
 function share(value) {
-  return value.toExponential(1);
+  return value === 0 ? "0" : `${value < 0 ? "−" : ""}${Math.abs(value).toExponential(1)}`;
 }
 
 function percent(value) {
