@@ -47,8 +47,10 @@ export function adaptTramlines(
       warnings.push(...deadLightWarnings(frame, dead, tramlines.nFibre));
     }
   }
-  if (options.refine === false || adapted.profile.kind === "gaussian")
+  const tooFaint = options.shift !== false && shift === null;
+  if (options.refine === false || tooFaint || adapted.profile.kind === "gaussian") {
     return { tramlines: adapted, shift, oneOff, refined: false, warnings };
+  }
   return { tramlines: refineOn(kernels, frame, adapted, options), shift, oneOff, refined: true, warnings };
 }
 

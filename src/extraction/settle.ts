@@ -11,10 +11,9 @@ import { type ExtractionOptions, extractionInput } from "./extract.js";
 import { measureMisfit } from "./misfit.js";
 import { type ExtractionPlan, planExtraction } from "./plan.js";
 
-/** Fits in turns; the light that a turn moves between fibres and background falls at least tenfold each time. */
-const turns = 3;
-/** Of so many groups of columns one is looked at. */
-const sampleStep = 2;
+/** Fits in turns: of so many groups of columns one is looked at, in the last turn all. The first turn moves what light there
+ * is to move between fibres and background; the next changes it by hundredths of an electron, and uses every gap. */
+const sampleSteps = [2, 1];
 
 export interface SettledFrame {
   /** Null when none was asked for. */
@@ -51,8 +50,8 @@ export function settleFrame(
   let background: BackgroundFit | null = null;
   let profileError = settleProfileError(bench, input);
   if (options.background !== false) {
-    for (let turn = 0; turn < turns; turn++) {
-      background = fitBackground(frame, tramlines, lightBetweenFibres(bench, input));
+    for (const sampleStep of sampleSteps) {
+      background = fitBackground(frame, tramlines, lightBetweenFibres(bench, input, sampleStep));
       bench.setBackground(background);
     }
     profileError = settleProfileError(bench, input);
@@ -68,7 +67,7 @@ function settleProfileError(bench: ExtractionBench, input: ExtractionInput): num
 }
 
 /** The frame without its fibres' light in a sample of columns, NaN elsewhere and where a cosmic ray hit. */
-function lightBetweenFibres(bench: ExtractionBench, input: ExtractionInput): Float32Array {
+function lightBetweenFibres(bench: ExtractionBench, input: ExtractionInput, sampleStep: number): Float32Array {
   const { nx, ny, electrons } = input;
   const light = new Float32Array(nx * ny).fill(Number.NaN);
   bench.rejected.fill(0);

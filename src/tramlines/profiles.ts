@@ -7,6 +7,7 @@
 import { medianOf } from "../detector/clip.js";
 import type { Frame } from "../detector/frame.js";
 import { type Kernels, loadKernels } from "../kernels/module.js";
+import { TraceError } from "./errors.js";
 import { combineFlats, type Flat } from "./flat.js";
 import { activeFibres, linesOf, profileTable } from "./profileTable.js";
 import { backgroundUnder, heldOutMisfits, type Judged, judgeColumns, meanWithError } from "./shape/judge.js";
@@ -53,9 +54,10 @@ export async function chooseProfile(
 ): Promise<ProfileChoice> {
   const kernels = await loadKernels();
   const flat = combineFlats(flats);
-  const candidates = (kind === "auto" ? simplestFirst : [kind]).map((model) =>
-    model === "gaussian" ? gaussianCandidate(kernels, flat, tramlines) : candidate(kernels, flat, tramlines, model),
-  );
+  const candidates = (kind === "auto" ? simplestFirst : [kind]).flatMap((model) => {
+    if (model === "gaussian") return [gaussianCandidate(kernels, flat, tramlines)];
+    return candidateOrNone(kernels, flat, tramlines, model, kind === "auto");
+  });
   const tried = candidates.map((model) => {
     const { mean, error } = meanWithError(model.misfits);
     return { kind: model.kind, misfit: mean, error };
@@ -79,6 +81,22 @@ function preferred(candidates: Candidate[], tried: TriedProfile[]): Candidate {
   if (gaussian !== undefined && tiesWith(gaussian)) return gaussian;
   const freest = candidates[candidates.length - 1];
   return tiesWith(freest) ? freest : candidates[best];
+}
+
+/** None when auto may do without it and the flat does not tell it. */
+function candidateOrNone(
+  kernels: Kernels,
+  flat: Flat,
+  tramlines: Tramlines,
+  model: ShapeProfile["kind"],
+  optional: boolean,
+): Candidate[] {
+  try {
+    return [candidate(kernels, flat, tramlines, model)];
+  } catch (error) {
+    if (optional && error instanceof TraceError) return [];
+    throw error;
+  }
 }
 
 function gaussianCandidate(kernels: Kernels, flat: Flat, tramlines: Tramlines): Candidate {

@@ -4,7 +4,7 @@
 import { LegendreFitter } from "../../kernels/legendre.js";
 import type { Kernels } from "../../kernels/module.js";
 import { factorBand, inverseBand, solveBand } from "../../reference/banded.js";
-import { legendreArgument } from "../../reference/legendre.js";
+import { legendreArgument, legendreValue } from "../../reference/legendre.js";
 import type { ShapeTable } from "../../reference/shape.js";
 import { type ColumnData, type Lines, localDesign, localSystem } from "./column.js";
 import { backgroundColumn, settleColumn, wholeProfiles } from "./step.js";
@@ -57,31 +57,62 @@ export function measureColumn(
 const floorPixels = 0.002;
 const kappa = 4;
 const clipRounds = 6;
+/** A column that knows a fibre's place or width no better than this, pixels, is left out: the fit is linear. */
+const tellingError = 0.3;
+/** A series gets as many terms as keep its own error below this, pixels. */
+const seriesError = 0.02;
+/** A fibre's width stays within these shares of the reference: what lies beyond is noise. */
+const [narrowest, widest] = [0.7, 1.4];
 
-/** Adds clipped Legendre fits of the measured shifts and widenings to the series of `lines`. Returns the scatter of the
- * shifts about their series, robust, pixels. */
-export function applyGeometry(kernels: Kernels, lines: Lines, columns: LocalGeometry[]): void {
+/** Adds clipped Legendre fits of the measured shifts and widenings to the series of `lines`; dim fibres get fewer terms, or
+ * none. `referenceWidth`: σ, pixels. */
+export function applyGeometry(kernels: Kernels, lines: Lines, columns: LocalGeometry[], referenceWidth: number): void {
   const t = columns.map(({ x }) => legendreArgument(x, lines.nx));
   const fitter = new LegendreFitter(kernels, columns.length, Math.max(lines.nTrace, lines.nWidth));
-  const weight = (variance: number) => (variance > 0 ? 1 / (variance + floorPixels * floorPixels) : 0);
   for (let k = 0; k < lines.nFibre; k++) {
-    const shift = fitter.fit(
+    const shift = fitChange(
+      fitter,
       t,
-      columns.map((column) => column.shift[k]),
-      columns.map((column) => weight(column.shiftVariance[k])),
+      columns,
+      ({ shift, shiftVariance }) => [shift[k], shiftVariance[k]],
       lines.nTrace,
-      kappa,
-      clipRounds,
     );
-    const widening = fitter.fit(
+    const widening = fitChange(
+      fitter,
       t,
-      columns.map((column) => column.widening[k]),
-      columns.map((column) => weight(column.wideningVariance[k])),
+      columns,
+      ({ widening, wideningVariance }) => [widening[k], wideningVariance[k]],
       lines.nWidth,
-      kappa,
-      clipRounds,
     );
-    for (let i = 0; i < lines.nTrace; i++) lines.trace[k * lines.nTrace + i] += shift.coef[i];
-    for (let i = 0; i < lines.nWidth; i++) lines.width[k * lines.nWidth + i] += widening.coef[i];
+    for (let i = 0; i < shift.length; i++) lines.trace[k * lines.nTrace + i] += shift[i];
+    const width = lines.width.slice(k * lines.nWidth, (k + 1) * lines.nWidth);
+    for (let i = 0; i < widening.length; i++) width[i] += widening[i];
+    const sane = t.every((at) => {
+      const share = legendreValue(width, at) / referenceWidth;
+      return share > narrowest && share < widest;
+    });
+    if (sane) lines.width.set(width, k * lines.nWidth);
   }
+}
+
+/** Coefficients of one fibre's measured changes: as many as its light allows, none when it tells nothing. */
+function fitChange(
+  fitter: LegendreFitter,
+  t: number[],
+  columns: LocalGeometry[],
+  pick: (column: LocalGeometry) => [value: number, variance: number],
+  nTerm: number,
+): Float64Array {
+  const points = columns.map(pick);
+  const telling = points.map(([value, variance]) =>
+    Number.isFinite(value) && variance > 0 && variance < tellingError * tellingError ? 1 : 0,
+  );
+  const weight = points.map(([, variance], i) => (telling[i] ? 1 / (variance + floorPixels * floorPixels) : 0));
+  const nPoint = telling.filter(Boolean).length;
+  if (nPoint < 4) return new Float64Array(0);
+  const information = weight.reduce((sum, w) => sum + w, 0);
+  const supported = Math.floor(Math.min(nPoint / 3, seriesError * seriesError * information));
+  if (supported < 1) return new Float64Array(0);
+  const values = points.map(([value], i) => (telling[i] ? value : 0));
+  return fitter.fit(t, values, weight, Math.min(nTerm, supported), kappa, clipRounds).coef;
 }

@@ -3,6 +3,7 @@ import type { Kernels } from "../../kernels/module.js";
 import { factorBand, solveBand } from "../../reference/banded.js";
 import { median } from "../../reference/median.js";
 import { nShapeTerm, type ShapeTable } from "../../reference/shape.js";
+import { TraceError } from "../errors.js";
 import { type Flat, pixelVariance } from "../flat.js";
 import { activeFibres, linesOf } from "../profileTable.js";
 import type { KnownShape, ShapeProfile, Tramlines } from "../tramlines.js";
@@ -32,6 +33,8 @@ export interface MeasuredShape {
   history: number[];
 }
 
+/** The shape of `kind` from a combined flat whose tramlines were traced with Gaussians.
+ * @throws TraceError when the flat does not tell it. */
 export function measureShape(
   kernels: Kernels,
   flat: Flat,
@@ -56,13 +59,18 @@ export function measureShape(
     }
     const step = normal.solve(state, table);
     history.push(step.chi2 / step.freedom);
+    if (!step.coefficients.every(Number.isFinite)) {
+      throw new TraceError(
+        `${flat.name}: its light does not tell the ${kind} profile (misfit ${(step.chi2 / step.freedom).toFixed(1)}); trace it with --profile gaussian.`,
+      );
+    }
     information = normal.shapeInformation();
     state = step;
     table = tabulate(basis, state.coefficients);
     const columns = fittingColumns(flat.nx, geometryColumns[round], round).map((x) =>
       measureColumn(lines, table, state.background, flatColumn(flat, x)),
     );
-    applyGeometry(kernels, lines, columns);
+    applyGeometry(kernels, lines, columns, referenceWidth);
   }
   const known = { best: state.coefficients, information };
   return { ...referToCentroid(kernels, lines, table), basis, state, known, history };

@@ -12,7 +12,7 @@ import { hermiteBasis, nHermiteFunction } from "./hermiteBasis.js";
 import { nBackground, nBackgroundY, ShapeNormal, type ShapeState } from "./step.js";
 
 const steps = 2;
-const columns = 48;
+const columns = 96;
 const clip = 6;
 
 /** Refines `table` on `frame`. `rejected`: ny × nx bits of MaskBit; `lines`: moved to where the frame's light sits. */

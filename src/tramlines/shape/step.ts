@@ -28,6 +28,9 @@ export const nBackground = nBackgroundX * nBackgroundY;
 /** Pixels, at the basis's width, to which fibres' local unknowns reach. */
 const localReach = 14;
 
+/** By how much a frame's focus may differ from the flat's, relative: prior where widths are the shape's. */
+const widening = 0.05;
+
 /** Unknowns: shape coefficients [nSpline × nShapeTerm], then background. */
 export interface ShapeState {
   coefficients: Float64Array;
@@ -91,7 +94,7 @@ export class ShapeNormal {
       this.chi2 += residual[y] * residual[y] * data.inverseVariance[y];
       this.freedom += data.inverseVariance[y] > 0 ? 1 : 0;
     }
-    this.freedom -= local.rhs.length;
+    this.freedom -= lines.nFibre; // the residual has fluxes alone fitted
     this.matrix.add(this.ny);
     this.eliminate(local, cross);
   }
@@ -137,14 +140,15 @@ export class ShapeNormal {
 
   /** Steps of all unknowns from `state`, priors and gauges applied.
    * The gauges keep a step from changing the norm, from shifting the shape and from widening it: those belong to flux,
-   * centre and width of the fibres. */
+   * centre and width of the fibres. Where another frame is `known` the fibres' widths are its own and do not follow, so
+   * that a widening is the shape's to make. */
   solve(state: ShapeState, table: ShapeTable, known?: KnownShape): StepResult {
     const { nUnknown, n } = this;
     const normal = this.matrix.normal.slice();
     const rhs = normal.slice(nUnknown * n, nUnknown * n + nUnknown);
     this.addPriors(normal, rhs, state);
     if (known !== undefined) this.addInformation(normal, rhs, state, known);
-    this.addGauges(normal, table);
+    this.addGauges(normal, table, known === undefined);
     const band = new Float64Array(nUnknown * nUnknown);
     for (let i = 0; i < nUnknown; i++) {
       for (let j = 0; j <= i; j++) band[i * nUnknown + i - j] = normal[i * n + j];
@@ -259,25 +263,43 @@ export class ShapeNormal {
     }
   }
 
-  private addGauges(normal: Float64Array, table: ShapeTable): void {
+  private addGauges(normal: Float64Array, table: ShapeTable, widthsFollow: boolean): void {
     const { n, basis } = this;
-    const gauges = [basis.whole, ...(basis.canMove ? shiftAndWidth(basis, table) : [])];
+    const [shift, width] = shiftAndWidth(basis, table);
+    const gauges = [basis.whole, ...(basis.canMove ? [shift] : []), ...(basis.canMove && widthsFollow ? [width] : [])];
     for (let m = 0; m < nShapeTerm; m++) {
       let strength = 0;
       for (let j = 0; j < basis.nSpline; j++) {
         const i = j * nShapeTerm + m;
         strength = Math.max(strength, normal[i * n + i]);
       }
-      for (const gauge of gauges) {
-        const size = gauge.reduce((sum, g) => sum + g * g, 0);
-        for (let j = 0; j < basis.nSpline; j++) {
-          for (let i = 0; i <= j; i++) {
-            normal[(j * nShapeTerm + m) * n + i * nShapeTerm + m] += (1e3 * strength * gauge[j] * gauge[i]) / size;
-          }
-        }
+      // No stronger than the diagonal: what is lost in rounding beside a stiff gauge is lost to the shape.
+      for (const gauge of gauges) this.stiffen(normal, m, gauge, strength / sumOfSquares(gauge));
+      if (basis.canMove && !widthsFollow) this.stiffen(normal, m, width, 1 / (widening * stretchPower(table)) ** 2);
+    }
+  }
+
+  /** normal += weight · g gᵀ for term m. */
+  private stiffen(normal: Float64Array, m: number, gauge: Float64Array, weight: number): void {
+    const { n, basis } = this;
+    for (let j = 0; j < basis.nSpline; j++) {
+      for (let i = 0; i <= j; i++) {
+        normal[(j * nShapeTerm + m) * n + i * nShapeTerm + m] += weight * gauge[j] * gauge[i];
       }
     }
   }
+}
+
+function sumOfSquares(values: Float64Array): number {
+  return values.reduce((sum, value) => sum + value * value, 0);
+}
+
+/** ∫ ((v c₀)′)² dv: what a widening by its own size measures along the direction of a widening. */
+function stretchPower({ n, start, step, values }: ShapeTable): number {
+  const at = (i: number) => (start + i * step) * values[i * 2 * nShapeTerm + nShapeTerm];
+  let sum = 0;
+  for (let i = 1; i < n - 1; i++) sum += (at(i + 1) - at(i - 1)) ** 2 / (4 * step);
+  return sum;
 }
 
 /** ∫ β_j c₀′ dv and ∫ β_j (v c₀)′ dv for every spline: directions of a shift and of a change of width. */

@@ -46,9 +46,7 @@ describe("a profile refined on a science frame", () => {
     expect(after.wing.rms).toBeLessThan(1.2 * before.wing.rms);
   });
 
-  // Known defect, here and in the next two: the gauge against a change of width holds too, though widths are not fitted beside
-  // the shape. Take `.fails` off when that is mended.
-  it.fails("with more light in its wings halves the error that the flat's profile makes there", () => {
+  it("with more light in its wings halves the error that the flat's profile makes there", () => {
     const exposure = science("wing_share = 0.02", "wing_share = 0.035");
     const before = errorsOf(bench.measured.table, exposure);
     const after = errorsOf(refineOn(exposure), exposure);
@@ -58,7 +56,7 @@ describe("a profile refined on a science frame", () => {
     expect(Math.abs(after.wingLight)).toBeLessThan(0.4 * Math.abs(before.wingLight));
   });
 
-  it.fails("of another skew follows it", () => {
+  it("of another skew follows it", () => {
     const exposure = science("second_share = 0.14", "second_share = 0.18");
     const before = errorsOf(bench.measured.table, exposure);
     const after = errorsOf(refineOn(exposure), exposure);
@@ -66,7 +64,7 @@ describe("a profile refined on a science frame", () => {
     expect(after.core.rms).toBeLessThan(0.5 * before.core.rms);
   });
 
-  it.fails("2 % wider than the flat, as when the focus drifted, is followed to a third of the error or better", () => {
+  it("2 % wider than the flat, as when the focus drifted, is followed to a third of the error or better", () => {
     const exposure = science("fwhm = 2.35 ", "fwhm = 2.397 ");
     const before = errorsOf(bench.measured.table, exposure);
     const after = errorsOf(refineOn(exposure), exposure);
@@ -81,7 +79,8 @@ describe("a profile refined on a science frame", () => {
     const refined = refineOn(exposure, dark);
     const { table } = bench.measured;
     refined.values.forEach((value, i) => {
-      expect(Math.abs(value - table.values[i])).toBeLessThan(1e-3);
+      // Priors alone move it a little along a widening, which the flat leaves open; extraction does not refine on such a frame.
+      expect(Math.abs(value - table.values[i])).toBeLessThan(4e-3);
     });
   });
 
