@@ -1,6 +1,8 @@
 /** hatchel compare: the methods side by side on one's own frame. */
 import type { Command } from "commander";
 import { type Comparison, compareMethods, type MethodComparison } from "../extraction/compare.js";
+import { type FibreAdvice, recommendation } from "../extraction/recommend.js";
+import { cautions, methodName } from "./compareCautions.js";
 import {
   addCommonOptions,
   addFrameOptions,
@@ -26,7 +28,7 @@ import { jsonHelp } from "./json.js";
 import { checkOutput, uninterrupted, writeText } from "./output.js";
 import { jsonText, type Outcome, perform } from "./perform.js";
 import type { Progress } from "./progress.js";
-import { fixed, percentage, textTable } from "./textTable.js";
+import { counted, fixed, percentage, ranges, textTable } from "./textTable.js";
 
 interface CompareOptions extends FrameOptions, TramlineOptions, Omit<MethodOptions, "method" | "crosstalk"> {
   force?: boolean;
@@ -69,6 +71,11 @@ async function compare(path: string, options: CompareOptions, progress: Progress
     points: comparison.nPoint,
     witnesses: comparison.nWitness,
     methods: comparison.methods,
+    theory: { halfAperturePixels: comparison.halfAperturePixels, ...comparison.theory },
+    leaks: comparison.leaks,
+    agreement: comparison.agreement,
+    recommended: recommendation(comparison.fibres),
+    fibres: comparison.fibres,
     cautions: cautions(comparison),
     assumptions: oneOfEach([...frame.assumptions, ...traced.assumptions]),
     warnings: oneOfEach([...frame.warnings, ...traced.warnings, ...comparison.warnings]),
@@ -89,54 +96,75 @@ async function writeFigures(
   else writeText(output, text, options);
 }
 
-function page(name: string, { methods, nPoint, nWitness }: Comparison, cautions: string[]): string {
-  const heading = ["method", "median S/N", "worth in exposure", "… faint quarter", "flux / joint", "leak", "s"];
-  const rows = methods.map((one) => [
-    methodName(one),
-    fixed(one.medianSignalToNoise, 2),
-    `${fixed(one.equivalentExposure, 3)} ×`,
-    `${fixed(one.equivalentExposureFaint, 3)} ×`,
-    fixed(one.fluxRatio, 4),
-    percentage(one.leakedShare, 2),
-    fixed(one.seconds, 1),
-  ]);
+function page(name: string, comparison: Comparison, cautions: string[]): string {
+  const { nPoint, nWitness, theory, halfAperturePixels } = comparison;
+  const { method, reason } = recommendation(comparison.fibres);
   return [
     `${name}: ${nPoint} points good in every method, ${nWitness} of them beside a fibre 30 times brighter`,
-    textTable([heading, ...rows]),
-    "Worth in exposure: time that boxcar with cross-talk correction would need for the same error bars, over the time taken.",
+    methodTable(comparison),
+    "Worth in exposure: time that boxcar with cross-talk correction would need for the same error bars, over the time taken;",
+    "theory: what profile and noise let it be; scatter: what the spectra show where noise rules, of what is promised there.",
     "Leak: share of the bright neighbour's light that the method counts twice, against joint.",
+    `A fibre alone, boxcar of ± ${fixed(halfAperturePixels, 2)} px (${percentage(theory.caughtShare)} of its light; noise-equivalent width ${fixed(theory.noiseEquivalentWidth, 2)} px): weighting is worth ` +
+      `${fixed(theory.backgroundLimited, 3)} × exposure where background rules (S/N × ${fixed(Math.sqrt(theory.backgroundLimited), 3)}), ${fixed(theory.photonLimited, 3)} × where its own photons do.`,
+    "Leak of the brightest fibres into their neighbours, uncorrected:",
+    leakTable(comparison),
+    "Difference from joint, in sigma of the difference: median and scatter (1 is noise alone); in joint's error bars:",
+    agreementTable(comparison),
+    ...adviceLines(comparison.fibres),
+    `Recommended: ${method ?? "none"}, ${reason}.`,
     ...cautions.map((caution) => `Caution: ${caution}`),
   ].join("\n");
 }
 
-function methodName({ method, crosstalkCorrected }: MethodComparison): string {
-  if (method === "joint") return "joint";
-  return `${method}, ${crosstalkCorrected ? "cross-talk corrected" : "uncorrected"}`;
+function methodTable({ methods }: Comparison): string {
+  const heading = ["method", "median S/N", "worth", "theory", "faint quarter", "scatter", "flux / joint", "leak", "s"];
+  const rows = methods.map((one) => [
+    methodName(one),
+    fixed(one.medianSignalToNoise, 2),
+    `${fixed(one.equivalentExposure, 3)} ×`,
+    `${fixed(one.expectedExposure, 3)} ×`,
+    `${fixed(one.equivalentExposureFaint, 3)} ×`,
+    `${fixed(one.seenExposure, 2)} of ${fixed(one.promisedExposure, 2)} ×`,
+    fixed(one.fluxRatio, 4),
+    percentage(one.leakedShare, 2),
+    fixed(one.seconds, 1),
+  ]);
+  return textTable([heading, ...rows]);
 }
 
-/** Where a wrong reading of the table would cost someone. */
-function cautions({ methods, nWitness }: Comparison): string[] {
-  const said = [
-    "S/N and worth in exposure rest on each method's own error bars, which are right only as far as the profile is; 'hatchel demo' shows them against the truth.",
-  ];
-  if (nWitness === 0) {
-    said.push("no fibre stands beside one 30 times brighter, so this frame says nothing about leaked light.");
-  } else said.push("leak is measured against joint, so light that joint itself misplaces does not show.");
-  const joint = methods.find(({ method }) => method === "joint");
-  for (const one of methods) {
-    if (!one.crosstalkCorrected && joint && one.medianSignalToNoise > joint.medianSignalToNoise) {
-      said.push(`${methodName(one)} takes neighbours' light for signal, so its higher S/N is no gain.`);
-    }
-    if (!one.crosstalkCorrected && Math.abs(one.leakedShare) > 0.01) {
-      said.push(
-        `${methodName(one)} counts ${percentage(one.leakedShare)} of a bright neighbour's light as the faint fibre's own: its S/N beside bright fibres is not that of the target.`,
-      );
-    }
-    if (Math.abs(one.fluxRatio - 1) > 0.02) {
-      said.push(
-        `${methodName(one)} finds ${percentage(one.fluxRatio)} of joint's flux: do not mix fluxes of the two methods.`,
-      );
-    }
-  }
-  return said;
+function leakTable({ leaks }: Comparison): string {
+  const rows = leaks
+    .filter(({ crosstalkCorrected }) => !crosstalkCorrected)
+    .map(({ bright, fibre, method, share, error, model, modelOfAll }) => [
+      `${bright} to ${fibre}, ${method}`,
+      `${percentage(share, 3)} ± ${percentage(error, 3)}`,
+      percentage(modelOfAll, 3),
+      percentage(model, 3),
+    ]);
+  return textTable([["from, to", "seen", "model, all neighbours", "model, this one"], ...rows]);
+}
+
+function agreementTable({ agreement }: Comparison): string {
+  const rows = agreement.flatMap((one) =>
+    one.levels.map(({ from, to, nPoint, median, spread, medianInErrorBars }) => [
+      `${methodName(one)}, ${Number.isFinite(from) ? `${from} e⁻` : "faintest"} to ${Number.isFinite(to) ? `${to} e⁻` : "brightest"}`,
+      ...[String(nPoint), fixed(median, 2), fixed(spread, 2), fixed(medianInErrorBars, 2)],
+    ]),
+  );
+  return textTable([["method, joint's flux", "points", "median", "scatter", "in error bars"], ...rows]);
+}
+
+/** Who should take what, with the most telling reason of each. */
+function adviceLines(fibres: FibreAdvice[]): string[] {
+  return (["joint", "optimal", "boxcar"] as const).flatMap((method) => {
+    const those = fibres.filter((one) => one.method === method);
+    if (those.length === 0) return [];
+    const worst = those.reduce((a, b) => (telling(b) > telling(a) ? b : a));
+    return `For ${counted(those.length, "fibre")} ${method} (${ranges(those.map(({ fibre }) => fibre))}); fibre ${worst.fibre}: ${worst.reason}`;
+  });
+}
+
+function telling({ method, takenShare, gain }: FibreAdvice): number {
+  return method === "joint" ? Math.abs(takenShare) : gain;
 }

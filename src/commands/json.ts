@@ -2,6 +2,7 @@
  * added under the same `format`; none is renamed or removed. */
 import { z } from "zod";
 import { Flag } from "../reference/bits.js";
+import { comparisonKeys, gainKeys } from "./compareJson.js";
 
 const number = z.number().nullable();
 const count = z.int().min(0);
@@ -218,11 +219,13 @@ const compare = z.strictObject({
       medianSignalToNoise: number,
       equivalentExposure: number.describe("time the corrected boxcar would need for the same error bars"),
       equivalentExposureFaint: number.describe("the same over the faintest quarter of the points"),
+      ...gainKeys,
       fluxRatio: number.describe("median flux over joint's"),
       leakedShare: number.describe("share of a bright neighbour's light counted twice, against joint"),
       seconds: z.number().optional().describe("wall clock; not in the file that -o writes"),
     }),
   ),
+  ...comparisonKeys,
   cautions: z.array(z.string()),
   ...tail,
 });

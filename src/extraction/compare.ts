@@ -1,11 +1,17 @@
-/** The methods side by side on one frame, without truth: what weighting gains, and what a plain sum leaks. */
+/** The methods side by side on one frame, without truth: what weighting gains against what it could, what a plain sum leaks, how
+ * far the methods agree, and which one serves each fibre. */
 import type { Frame } from "../detector/frame.js";
 import { loadKernels } from "../kernels/module.js";
 import { median } from "../reference/median.js";
 import { checkGeometry } from "../tramlines/file.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { adaptTramlines } from "./adapt.js";
-import { type ExtractionOptions, extractFrame } from "./extract.js";
+import { type Agreement, measureAgreement } from "./agreement.js";
+import { type Extraction, type ExtractionOptions, extractFrame } from "./extract.js";
+import { BOXCAR, cases, type ExpectedColumn, expectedColumns, JOINT, type LoneGain, loneGain } from "./gain.js";
+import { measureLeaks, type NeighbourLeak } from "./leakage.js";
+import { type FibreAdvice, recommendMethods } from "./recommend.js";
+import { scatterGains } from "./scatter.js";
 import { type Method, type Spectra, UNUSABLE } from "./spectra.js";
 
 /** A neighbour this many times brighter makes a point a witness of leaked light. */
@@ -23,6 +29,12 @@ export interface MethodComparison {
   equivalentExposure: number;
   /** The same over the faintest quarter of the points. */
   equivalentExposureFaint: number;
+  /** What profile and model variances let `equivalentExposure` be. */
+  expectedExposure: number;
+  /** The same as the scatter along the spectra shows it, in the fibres in which noise rules, and what the error bars promise
+   * for those; NaN where there are none. */
+  seenExposure: number;
+  promisedExposure: number;
   /** Median flux over that of joint, points of S/N above 10; NaN when there are none. */
   fluxRatio: number;
   /** Mean of (flux − flux of joint) / flux of the brighter neighbour, over points beside a fibre 30 times brighter: light
@@ -38,6 +50,15 @@ export interface Comparison {
   nPoint: number;
   /** Of those, points beside a fibre 30 times brighter. */
   nWitness: number;
+  halfAperturePixels: number;
+  /** Of a fibre alone, with this profile and this aperture. */
+  theory: LoneGain;
+  /** Beside the brightest fibres. */
+  leaks: NeighbourLeak[];
+  /** Of each method with joint. */
+  agreement: Agreement[];
+  /** One for each slit position. */
+  fibres: FibreAdvice[];
   warnings: string[];
 }
 
@@ -47,47 +68,72 @@ export async function compareMethods(
   tramlines: Tramlines,
   options: ExtractionOptions = {},
 ): Promise<Comparison> {
-  const cases: [Method, boolean][] = [
-    ["joint", true],
-    ["optimal", true],
-    ["optimal", false],
-    ["boxcar", true],
-    ["boxcar", false],
-  ];
   checkGeometry(frame, tramlines);
   // What the methods share is done once: the time of each is its own.
   const adapted = adaptTramlines(await loadKernels(), frame, tramlines, options);
-  const runs: { spectra: Spectra; seconds: number }[] = [];
-  let warnings: string[] = [];
+  const runs: TimedRun[] = [];
   for (const [i, [method, crosstalk]] of cases.entries()) {
     const onProgress = (share: number) => options.onProgress?.((i + share) / cases.length);
     const begin = performance.now();
     const extraction = await extractFrame(frame, adapted.tramlines, {
-      ...options,
-      method,
-      crosstalk,
-      onProgress,
-      shift: false,
-      refine: false,
+      ...{ ...options, method, crosstalk, onProgress },
+      ...{ shift: false, refine: false },
     });
-    runs.push({ spectra: extraction.spectra, seconds: (performance.now() - begin) / 1000 });
-    warnings = [...adapted.warnings, ...extraction.warnings];
+    runs.push({ extraction, seconds: (performance.now() - begin) / 1000 });
   }
-  const [joint, boxcar] = [runs[0].spectra, runs[3].spectra];
-  const good = goodEverywhere(runs.map((run) => run.spectra));
+  const all = runs.map(({ extraction }) => extraction.spectra);
+  const { fit, plan, warnings } = runs[JOINT].extraction;
+  const columns = expectedColumns(fit);
+  return {
+    ...compareFigures(runs, columns),
+    halfAperturePixels: fit.input.halfAperture,
+    theory: loneGain(fit),
+    leaks: measureLeaks(all, columns, plan.active, tramlines.fibre),
+    agreement: measureAgreement(all, columns, plan.active),
+    fibres: recommendMethods(all, columns, plan.active, tramlines),
+    warnings: [...adapted.warnings, ...warnings],
+  };
+}
+
+interface TimedRun {
+  extraction: Extraction;
+  seconds: number;
+}
+
+function compareFigures(runs: TimedRun[], columns: ExpectedColumn[]) {
+  const all = runs.map(({ extraction }) => extraction.spectra);
+  const { active } = runs[JOINT].extraction.plan;
+  const [joint, boxcar] = [all[JOINT], all[BOXCAR]];
+  const good = goodEverywhere(all);
   const faint = faintestQuarter(joint, good);
   const witnesses = besideBright(joint, good);
-  const methods = runs.map(({ spectra, seconds }) => ({
+  const expected = expectedRatios(columns, active, new Set(good), joint.nx);
+  const scatter = scatterGains(all, active);
+  const methods = all.map((spectra, i) => ({
     method: spectra.method,
     crosstalkCorrected: spectra.crosstalkCorrected,
-    medianSignalToNoise: median(good.map((i) => spectra.flux[i] / Math.sqrt(spectra.variance[i]))),
-    equivalentExposure: median(good.map((i) => boxcar.variance[i] / spectra.variance[i])),
-    equivalentExposureFaint: median(faint.map((i) => boxcar.variance[i] / spectra.variance[i])),
+    medianSignalToNoise: median(good.map((at) => spectra.flux[at] / Math.sqrt(spectra.variance[at]))),
+    equivalentExposure: median(good.map((at) => boxcar.variance[at] / spectra.variance[at])),
+    equivalentExposureFaint: median(faint.map((at) => boxcar.variance[at] / spectra.variance[at])),
+    expectedExposure: expected[i],
+    seenExposure: scatter[i].seen,
+    promisedExposure: scatter[i].promised,
     fluxRatio: fluxRatio(spectra, joint, good),
     leakedShare: mean(witnesses.map(({ point, bright }) => (spectra.flux[point] - joint.flux[point]) / bright)),
-    seconds,
+    seconds: runs[i].seconds,
   }));
-  return { methods, nPoint: good.length, nWitness: witnesses.length, warnings };
+  return { methods, nPoint: good.length, nWitness: witnesses.length };
+}
+
+/** Variance of the corrected boxcar over each case's, as the model expects them: medians over good points. */
+function expectedRatios(columns: ExpectedColumn[], active: number[], good: Set<number>, nx: number): number[] {
+  return cases.map((_, i) =>
+    median(
+      columns.flatMap(({ x, variance }) =>
+        active.flatMap((row, k) => (good.has(row * nx + x) ? [variance[BOXCAR][k] / variance[i][k]] : [])),
+      ),
+    ),
+  );
 }
 
 function goodEverywhere(all: Spectra[]): number[] {

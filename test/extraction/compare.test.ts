@@ -62,7 +62,7 @@ describe("comparison of the methods", () => {
         frame.electrons[i] += flux(k) * weights[Math.floor(i / 48)];
       });
     }
-    const { methods, nWitness } = await compareMethods(frame, tramlines, { ...bare, halfAperture: 2.5 });
+    const { methods, nWitness, leaks } = await compareMethods(frame, tramlines, { ...bare, halfAperture: 2.5 });
     expect(nWitness).toBe(10 * 48);
     const leak = (method: string, corrected: boolean) =>
       methods.find((m) => m.method === method && m.crosstalkCorrected === corrected)!;
@@ -74,5 +74,15 @@ describe("comparison of the methods", () => {
     expect(leak("joint", true).leakedShare).toBe(0);
     expect(Math.abs(leak("optimal", true).leakedShare)).toBeLessThan(1e-11);
     expect(Math.abs(leak("boxcar", true).fluxRatio - 1)).toBeLessThan(1e-5);
+    // Fibre by fibre, both sides of each of the five bright ones.
+    const plain = leaks.filter((one) => one.method === "boxcar" && !one.crosstalkCorrected && one.bright % 4 === 2);
+    expect(plain.map(({ bright, fibre }) => `${bright}>${fibre}`).sort()).toEqual(
+      ["2>1", "2>3", "6>5", "6>7", "10>9", "10>11", "14>13", "14>15", "18>17", "18>19"].sort(),
+    );
+    for (const { share, error, model, modelOfAll } of plain) {
+      expect(Math.abs(model / theory - 1)).toBeLessThan(1e-4);
+      expect(Math.abs(share - modelOfAll)).toBeLessThan(1e-7);
+      expect(error).toBeLessThan(1e-7); // No noise in this frame.
+    }
   });
 });
