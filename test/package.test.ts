@@ -1,7 +1,7 @@
 /** The packed tarball, installed in an empty folder without development packages, as a stranger would have it. `npm test` builds
  * before it runs; the packages it needs come from npm's cache or the registry. */
 import { spawnSync } from "node:child_process";
-import { mkdtempSync, readdirSync, readFileSync, rmSync, writeFileSync } from "node:fs";
+import { copyFileSync, mkdtempSync, readdirSync, readFileSync, rmSync, writeFileSync } from "node:fs";
 import { tmpdir } from "node:os";
 import { join } from "node:path";
 import { fileURLToPath } from "node:url";
@@ -89,6 +89,14 @@ describe("the packed tarball", () => {
     expect(json).toMatchObject({ hatchel: manifest.version, command: "extract", fibres: { positions: 19, lit: 18 } });
     expect(json.usablePoints / json.points).toBeGreaterThan(0.95);
   });
+});
+
+test("package-lock.json holds all that npm ci asks for on a fresh machine", () => {
+  const empty = mkdtempSync(join(tmpdir(), "hatchel-lock-"));
+  for (const name of ["package.json", "package-lock.json"]) copyFileSync(join(root, name), join(empty, name));
+  const told = npm(["ci", "--dry-run", "--ignore-scripts", "--no-audit", "--no-fund"], empty);
+  rmSync(empty, { recursive: true });
+  expect(told).toMatch(/added \d+ packages/);
 });
 
 test("package-lock.json names no registry, so that any can serve it", () => {
