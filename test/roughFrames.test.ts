@@ -139,6 +139,26 @@ describe("rough frames", () => {
     );
   });
 
+  it("take a value that is none for missing, marked or not: it spoils no more than its own pixel", () => {
+    const { input } = makeScene({ nx: 30, seed: 5 });
+    const at = 40 * 30 + 11;
+    input.electrons[at] = Number.NaN;
+    const marked = { ...input, mask: input.mask.slice() };
+    marked.mask[at] = MaskBit.missing;
+    for (const run of [(i: ExtractionInput) => runKernel(i), runReference]) {
+      const [unmarked, told] = [run(input), run(marked)];
+      expect(unmarked.flux).toEqual(told.flux);
+      expect(unmarked.flags).toEqual(told.flags);
+      expect(unmarked.flux.filter(Number.isNaN).length).toBe(0);
+    }
+  });
+
+  it("are refused with a width that is not above 0", () => {
+    const { input } = makeScene();
+    input.width[2] = -1;
+    expect(() => runKernel(input)).toThrow("The width of fibre 1 of this extraction is not above 0 everywhere.");
+  });
+
   it("give the same bits however the columns are shared out", () => {
     fc.assert(
       fc.property(rough, fc.integer({ min: 1, max: 4 }), (r, blocks) => {

@@ -30,7 +30,7 @@ export interface ExtractionOptions {
   kappa?: number;
   /** The same for pixels beside a rejected one. Default 2.5. */
   growKappa?: number;
-  /** Half of the boxcar's aperture, pixels. Default half of the smallest pitch. */
+  /** Half of the boxcar's aperture, pixels. Default half of the smallest pitch, at most the profile's reach. */
   halfAperture?: number;
   /** Take off a smooth background seen between the fibres. Default true. */
   background?: boolean;
@@ -142,7 +142,7 @@ export function extractionInput(
     bandwidth: plan.bandwidth,
     method,
     crosstalk: method !== "joint" && options.crosstalk !== false,
-    halfAperture: options.halfAperture ?? plan.smallestPitch / 2,
+    halfAperture: options.halfAperture ?? Math.min(plan.smallestPitch / 2, plan.halfWindow),
     profileError: profile.relativeError,
     kappa: rejecting ? (options.kappa ?? 5) : 0,
     growKappa: options.growKappa ?? 2.5,

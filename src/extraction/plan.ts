@@ -20,13 +20,14 @@ export interface ExtractionPlan {
   smallestPitch: number;
 }
 
-/** @throws RangeError when no fibre is lit, or when fibres are not in order of y. */
-export function planExtraction(tramlines: Tramlines): ExtractionPlan {
+/** `leastReach`: pixels to either side of a tramline that must be looked at whatever the profile.
+ * @throws RangeError when no fibre is lit, or when fibres are not in order of y. */
+export function planExtraction(tramlines: Tramlines, leastReach = 0): ExtractionPlan {
   const active = tramlines.state.flatMap((state, k) => (state === "dead" ? [] : [k]));
   if (active.length === 0) throw new RangeError("The tramlines hold no lit fibre; there is nothing to extract.");
   const centres = sampledCentres(tramlines, active);
   const reach = tramlines.profile.kind === "gaussian" ? windowSigma : shapeWindowSigma;
-  const halfWindow = Math.ceil(reach * widestSigma(tramlines, active) + 0.5);
+  const halfWindow = Math.ceil(Math.max(reach * widestSigma(tramlines, active), leastReach) + 0.5);
   const step = (tramlines.nx - 1) / (nSample - 1);
   let steepest = 0;
   let smallestPitch = Number.POSITIVE_INFINITY;

@@ -32,7 +32,7 @@ export interface OpenFrame extends SettledFrame {
 /** Opens `frame` with `tramlines` as they stand.
  * @throws RangeError when no fibre is lit, or tramlines cross. */
 export function openFrame(kernels: Kernels, frame: Frame, tramlines: Tramlines, options: ExtractionOptions): OpenFrame {
-  const plan = planExtraction(tramlines);
+  const plan = planExtraction(tramlines, options.method === "boxcar" ? options.halfAperture : 0);
   const input = extractionInput(frame, tramlines, plan, options);
   const rows = Int32Array.from(plan.active);
   const bench = new ExtractionBench(kernels, input, rows, tramlines.nFibre, options.precision ?? "f64");

@@ -1,4 +1,6 @@
 /** Door to assembly/extract.ts: lays out one extraction's memory, runs stretches of columns, shows the spectra. */
+
+import { MaskBit } from "../reference/bits.js";
 import type { ExtractionInput, ExtractionOutput, SmoothBackground } from "../reference/extract.js";
 import type { ShapeTable } from "../reference/shape.js";
 import type { Precision } from "./banded.js";
@@ -172,6 +174,11 @@ export class ExtractionBench {
     ];
     for (const [word, values] of arrays) if (values !== undefined) pieces.get(word)!.set(values);
     if (input.shape) pieces.get(Word.shape)!.set(packShape(input.shape));
+    const mask = pieces.get(Word.mask)!;
+    // A value that is none spoils its whole column, marked or not.
+    input.electrons.forEach((electrons, at) => {
+      if (mask[at] === 0 && !Number.isFinite(electrons)) mask[at] = MaskBit.missing;
+    });
     for (const word of [Word.flux, Word.variance, Word.neighbourCovariance, Word.chi2, Word.backgroundUnder]) {
       pieces.get(word)!.fill(Number.NaN);
     }
@@ -296,6 +303,12 @@ function checkInput(input: ExtractionInput, outputRow: Int32Array, nSlit: number
   const nBand = noise.fixedVariance.length / nx;
   if (!Number.isInteger(nBand) || noise.bandOfRow.some((band) => band >= nBand)) {
     throw new RangeError(`fixedVariance holds ${nBand} bands of ${nx} columns, fewer than bandOfRow names.`);
+  }
+  for (let k = 0; k < nFibre; k++) {
+    const width = input.width.subarray(k * input.nWidth, (k + 1) * input.nWidth);
+    if (!(width.slice(1).reduce((least, c) => least - Math.abs(c), width[0]) > 0)) {
+      throw new RangeError(`The width of fibre ${k} of this extraction is not above 0 everywhere.`);
+    }
   }
   if (outputRow.some((row) => row < 0 || row >= nSlit)) {
     throw new RangeError(`outputRow names a row outside the ${nSlit} of the slit.`);

@@ -170,7 +170,9 @@ function loadPixel(input: ExtractionInput, column: Column, series: Float64Array,
   const { noise, nx } = input;
   const at = y * nx + x;
   const row = column.margin + y;
-  column.bits[row] = input.mask[at] | (input.rejected[at] & (MaskBit.cosmic | MaskBit.grown));
+  const unmarked = input.mask[at] === 0 && !Number.isFinite(input.electrons[at]);
+  const masked = unmarked ? MaskBit.missing : input.mask[at];
+  column.bits[row] = masked | (input.rejected[at] & (MaskBit.cosmic | MaskBit.grown));
   column.background[row] = legendreValue(series, legendreArgument(y, input.ny));
   column.light[row] = column.bits[row] === 0 ? input.electrons[at] - column.background[row] : 0;
   column.noise.fixed[row] = noise.fixedVarianceImage?.[at] ?? noise.fixedVariance[noise.bandOfRow[y] * nx + x];

@@ -43,6 +43,13 @@ describe("plan of an extraction", () => {
     expect(plan.smallestPitch).toBeCloseTo(3.8, 10);
   });
 
+  it("looks as far as an aperture that was asked for", () => {
+    expect(planExtraction(lines([50.2, 70.3], 0.01), 10).halfWindow).toBe(11);
+    expect(planExtraction(lines([50.2, 70.3], 0.01), 2).halfWindow).toBe(
+      planExtraction(lines([50.2, 70.3], 0.01)).halfWindow,
+    );
+  });
+
   it("sees blends: at 2 px, seven fibres lie within a window's reach", () => {
     expect(planExtraction(lines([50, 52, 54, 56, 58, 60, 62, 64, 66, 68], 0)).bandwidth).toBe(6);
   });
