@@ -8,6 +8,8 @@ import type { Card } from "../fits/header.js";
 import { readImage } from "../fits/image.js";
 import { readTable } from "../fits/table.js";
 import { writeFits } from "../fits/write.js";
+import { legendreValue } from "../reference/legendre.js";
+import { type Shift, shiftAt } from "../tramlines/shift.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import type { Extraction } from "./extract.js";
 import { medianSignalToNoise } from "./snr.js";
@@ -59,7 +61,7 @@ export function spectraHdus(
     image("FLAGS", undefined, spectra.flags, flagsComment),
     image("CHI2", undefined, single(spectra.chi2), "Reduced chi-square of the profile fit in the fibre's window."),
     image("BACKGROUND", "electron", single(spectra.background), "Scattered light under the fibre, per pixel."),
-    { kind: "table", name: "POSITIONS", columns: positionColumns(spectra, tramlines, options.sky ?? []) },
+    { kind: "table", name: "POSITIONS", columns: positionColumns(extraction, tramlines, options.sky ?? []) },
     ...(options.extra ?? []),
   ];
 }
@@ -127,12 +129,21 @@ function primaryCards(extraction: Extraction, frame: Frame, tramlines: Tramlines
   if (background !== null && Number.isFinite(background.rms)) {
     own.push({ keyword: "BGRMS", value: background.rms, comment: "[electron] scatter of background medians" });
   }
+  if (extraction.shift !== null) {
+    const [middle, alongX, alongY] = extraction.shift.coefficients;
+    own.push(
+      { keyword: "SHIFTMID", value: middle, comment: "[pixel] of the light against the tramlines, middle" },
+      { keyword: "SHIFTERR", value: extraction.shift.errors[0], comment: "[pixel] its standard error" },
+      { keyword: "SHIFTX", value: alongX, comment: "[pixel] more at the last column" },
+      { keyword: "SHIFTY", value: alongY, comment: "[pixel] more at the last row" },
+    );
+  }
   const taken = new Set(own.map((card) => card.keyword));
   const carried = inputCards(frame.header).filter((card) => !taken.has(card.keyword));
   return [...carried, ...own, ...historyCards(options.version, options.options, options.inputs)];
 }
 
-function positionColumns(spectra: Spectra, tramlines: Tramlines, sky: number[]): OutputColumn[] {
+function positionColumns({ spectra, shift }: Extraction, tramlines: Tramlines, sky: number[]): OutputColumn[] {
   const isSky = new Set(sky);
   const role = Array.from(tramlines.fibre, (fibre, k) =>
     tramlines.state[k] === "dead" ? "spare" : isSky.has(fibre) ? "sky" : "target",
@@ -144,8 +155,18 @@ function positionColumns(spectra: Spectra, tramlines: Tramlines, sky: number[]):
     { name: "ROLE", format: "8A", data: role },
     { name: "THROUGHPUT", format: "1D", data: new Float64Array(spectra.nFibre).fill(Number.NaN) },
     { name: "MEDIAN_SNR", format: "1D", data: medianSignalToNoise(spectra) },
-    { name: "SHIFT", format: "1D", unit: "pixel", data: new Float64Array(spectra.nFibre) },
+    { name: "SHIFT", format: "1D", unit: "pixel", data: shiftsApplied(shift, tramlines) },
   ];
+}
+
+/** Where each fibre was extracted against its tramline, at the middle column: [nFibre] pixels, 0 when nothing was applied. */
+function shiftsApplied(shift: Shift | null, tramlines: Tramlines): Float64Array {
+  const { nFibre, nx, ny, degree, legendre } = tramlines;
+  const nCoef = degree + 1;
+  return Float64Array.from({ length: nFibre }, (_, k) => {
+    const y = legendreValue(legendre, 0, k * nCoef, nCoef);
+    return shift === null ? 0 : shiftAt(shift, (nx - 1) / 2, y, nx, ny);
+  });
 }
 
 function single(image: Float32Array | Float64Array): Float32Array {

@@ -3,9 +3,12 @@ import { tmpdir } from "node:os";
 import { join } from "node:path";
 import { afterAll, beforeAll, describe, expect, it } from "vitest";
 import { type Extraction, extractFrame } from "../../src/extraction/extract.js";
-import { readPositions, readSpectra, writeSpectra } from "../../src/extraction/file.js";
+import { readPositions, readSpectra, spectraHdus, writeSpectra } from "../../src/extraction/file.js";
+import { encodeFits } from "../../src/fits/encode.js";
 import { Header } from "../../src/fits/header.js";
+import { readTable } from "../../src/fits/table.js";
 import { Flag, MaskBit } from "../../src/reference/bits.js";
+import { legendreValue } from "../../src/reference/legendre.js";
 import { fitsverify, judgeMissing, python } from "../judges.js";
 import { frameScene } from "./frames.js";
 
@@ -53,6 +56,24 @@ print(json.dumps(out))
 `;
 
 describe("file of spectra", () => {
+  it("tells each fibre's shift, which grows along the slit, and 0 where none was applied", async () => {
+    const shift = { coefficients: [0.1, 0.02, 0.05], errors: [0.001, 0.002, 0.002], nPoint: 99, rms: 0.01 };
+    const table = async (moved: Extraction) => {
+      const bytes = encodeFits(spectraHdus(moved, frame, tramlines, product));
+      return readTable(bytes, "POSITIONS", { columns: ["SHIFT"] });
+    };
+    const told = await table({ ...extraction, shift: shift as Extraction["shift"] });
+    const nCoef = tramlines.degree + 1;
+    tramlines.state.forEach((_, k) => {
+      const y = legendreValue(tramlines.legendre, 0, k * nCoef, nCoef);
+      const expected = 0.1 + 0.05 * ((2 * y) / (tramlines.ny - 1) - 1);
+      expect((told.columns[0].data as Float64Array)[k]).toBeCloseTo(expected, 12);
+    });
+    expect(told.primaryHeader.number("SHIFTMID")).toBe(0.1);
+    const untouched = await table({ ...extraction, shift: null });
+    expect([...(untouched.columns[0].data as Float64Array)]).toEqual(new Array(17).fill(0));
+  });
+
   it.skipIf(judgeMissing("fitsverify"))("has neither error nor warning in fitsverify's eyes", () => {
     expect(fitsverify(path)).toEqual([]);
   });
