@@ -32,6 +32,10 @@ export interface Naming {
 
 /** Readings closer than this are not told apart: a factor e⁸ ≈ 3000 in likelihood. */
 const CLEAR_MARGIN = 8;
+/** The same when the reading leaves the slit's first or last fibre dark without the list saying so: one entry of the list of dead
+ * fibres that is off by one makes a reading one fibre off better by 10 (light in a dead fibre, and a dark one), and then
+ * only the slit's end speaks against it. */
+const CLEAR_MARGIN_AT_ENDS = 10.5;
 /** @throws NamingError when the layout does not fit, or when two readings fit about as well. */
 export function nameFibres(peaks: NamedLight[], layout: SlitLayout, name = "the flat"): Naming {
   const slit = unfold(layout);
@@ -90,8 +94,9 @@ function judge(alignment: Alignment, slit: Slit, peaks: NamedLight[], name: stri
   for (let j = 0; j < peaks.length; j++) {
     if (slitIndex[j] >= 0 && (closest < 0 || otherScore[j] > otherScore[closest])) closest = j;
   }
-  if (score - otherScore[closest] >= CLEAR_MARGIN) return;
-  const close = peaks.flatMap((_, j) => (slitIndex[j] >= 0 && score - otherScore[j] < CLEAR_MARGIN ? [j] : []));
+  const margin = isEndDark(alignment, slit) ? CLEAR_MARGIN_AT_ENDS : CLEAR_MARGIN;
+  if (score - otherScore[closest] >= margin) return;
+  const close = peaks.flatMap((_, j) => (slitIndex[j] >= 0 && score - otherScore[j] < margin ? [j] : []));
   const [first, last] = [close[0], close[close.length - 1]];
   const range =
     close.length === 1
@@ -102,6 +107,13 @@ function judge(alignment: Alignment, slit: Slit, peaks: NamedLight[], name: stri
       `${rangeOf(otherIndex[first], otherIndex[last])} (score ${otherScore[closest].toFixed(1)}), too close to decide: list all dead ` +
       "fibres in the spectrograph file, or give a flat in which the whole slit is lit and on the detector.",
   );
+}
+
+/** Whether the first or the last fibre that should shine does not. */
+function isEndDark({ slitIndex }: Alignment, { dead, n }: Slit): boolean {
+  const named = slitIndex.filter((i) => i >= 0);
+  const [first, last] = [dead.indexOf(0), dead.lastIndexOf(0)];
+  return n > 0 && (!named.includes(first) || !named.includes(last));
 }
 
 /** Light is a fibre's when it stands this near to one pitch from a named one. */

@@ -208,6 +208,26 @@ describe("many damaged flats", () => {
   });
 });
 
+describe("a flat of wide pitch, 10 px", () => {
+  const wide = { blocks: [9, 8, 10], pitch: 10, gap: 6.3, dead: [4], sky: [] };
+  it.each([
+    ["whole", {}, 0],
+    ["first fibre missing", { 1: 0 }, 0],
+    ["last fibre missing", { 27: 0 }, 0],
+    ["a fifth of the middle block unlit", { 13: 0, 14: 0 }, 0],
+    ["moved up by 1.4 pitches", {}, 14],
+    ["moved down by 1.9 pitches, the first fibre off the detector", {}, -19],
+  ])("%s: named rightly and followed", async (_, lightOf, moved) => {
+    const drawn = drawFlat({ ...scene, nx: 200, layout: wide, fwhm: 3.1, sag: 2.5, lightOf, moved });
+    const tracing = await traceFlat(drawn.frame, wide);
+    const { rms, worst } = distances(tracing, drawn);
+    expect(worst).toBeLessThan(0.02);
+    expect(rms).toBeLessThan(0.008);
+    const dark = [4, ...Object.keys(lightOf).map(Number), ...(moved === -19 ? [1] : [])];
+    expect(statesOf(tracing, "dead")).toEqual(dark.sort((a, b) => a - b));
+  });
+});
+
 describe("frames that are no usable fibre flat", () => {
   const small = { ...scene, nx: 160 };
 
