@@ -9,7 +9,7 @@ import { type FitsTable, readTable } from "../fits/table.js";
 import { writeFits } from "../fits/write.js";
 import { TraceError } from "./errors.js";
 import { readShape, shapeHdus } from "./shape/file.js";
-import type { FibreState, Profile, Tramlines } from "./tramlines.js";
+import { type FibreState, type Profile, type Tramlines, tramlineErrors } from "./tramlines.js";
 
 /** Raised when a reader of the file would have to change. */
 const FORMAT_VERSION = 1;
@@ -58,6 +58,7 @@ export function tramlinesHdus(tramlines: Tramlines, options: TramlinesFileOption
         { name: "SEEN_TO", format: "1J", data: tramlines.seenTo, unit: "pixel" },
         { name: "RMS", format: "1D", data: tramlines.rms, unit: "pixel" },
         { name: "NPOINT", format: "1J", data: tramlines.nPoint },
+        { name: "ERROR", format: "1D", data: tramlineErrors(tramlines), unit: "pixel" },
       ],
     },
     {

@@ -125,14 +125,17 @@ function withShape(
   relativeError: number,
   kind: ShapeProfile["kind"],
 ): Tramlines {
-  const { lines, table, known } = measured;
+  const { lines, table, known, scatter } = measured;
   const active = activeFibres(tramlines);
+  const [rms, nPoint] = [tramlines.rms.slice(), tramlines.nPoint.slice()];
   const legendre = tramlines.legendre.slice();
   const sigma = new Float64Array(tramlines.nFibre * lines.nWidth);
   for (let k = 0; k < tramlines.nFibre; k++) sigma[k * lines.nWidth] = table.referenceWidth;
   active.forEach((k, i) => {
     legendre.set(lines.trace.subarray(i * lines.nTrace, (i + 1) * lines.nTrace), k * lines.nTrace);
     sigma.set(lines.width.subarray(i * lines.nWidth, (i + 1) * lines.nWidth), k * lines.nWidth);
+    // A fibre too dim for the shape's own measurement keeps its first trace.
+    if (scatter.nPoint[i] > 0) [rms[k], nPoint[k]] = [scatter.rms[i], scatter.nPoint[i]];
   });
   const profile: ShapeProfile = {
     kind,
@@ -142,7 +145,7 @@ function withShape(
     shape: table,
     known,
   };
-  return { ...tramlines, legendre, profile };
+  return { ...tramlines, legendre, rms, nPoint, profile };
 }
 
 /** ε: robust scatter of bright pixels about the model beyond what noise explains, as a share of it. The median of χ² with

@@ -113,8 +113,8 @@ with fits.open(sys.argv[1], checksum=True) as f:
 `;
     expect(JSON.parse(python(script, [path]))).toEqual({
       names: ["PRIMARY", "TRAMLINES", "PROFILE"],
-      columns: ["FIBRE", "STATE", "BLOCK", "LEGENDRE", "SEEN_FROM", "SEEN_TO", "RMS", "NPOINT"],
-      formats: ["1J", "8A", "1J", "3D", "1J", "1J", "1D", "1J"],
+      columns: ["FIBRE", "STATE", "BLOCK", "LEGENDRE", "SEEN_FROM", "SEEN_TO", "RMS", "NPOINT", "ERROR"],
+      formats: ["1J", "8A", "1J", "3D", "1J", "1J", "1D", "1J", "1D"],
       state: ["lit", "dead", "dim"],
       legendre: [
         [10.25, 1 / 3, -0.125],

@@ -64,9 +64,23 @@ const seriesError = 0.02;
 /** A fibre's width stays within these shares of the reference: what lies beyond is noise. */
 const [narrowest, widest] = [0.7, 1.4];
 
+/** How the measured places of every fibre lie about its series: [nFibre]. */
+export interface TraceScatter {
+  /** Pixels; NaN for a fibre whose light tells nothing. */
+  rms: Float64Array;
+  /** Columns in use. */
+  nPoint: Int32Array;
+}
+
 /** Adds clipped Legendre fits of the measured shifts and widenings to the series of `lines`; dim fibres get fewer terms, or
  * none. `referenceWidth`: σ, pixels. */
-export function applyGeometry(kernels: Kernels, lines: Lines, columns: LocalGeometry[], referenceWidth: number): void {
+export function applyGeometry(
+  kernels: Kernels,
+  lines: Lines,
+  columns: LocalGeometry[],
+  referenceWidth: number,
+): TraceScatter {
+  const scatter = { rms: new Float64Array(lines.nFibre).fill(Number.NaN), nPoint: new Int32Array(lines.nFibre) };
   const t = columns.map(({ x }) => legendreArgument(x, lines.nx));
   const fitter = new LegendreFitter(kernels, columns.length, Math.max(lines.nTrace, lines.nWidth));
   for (let k = 0; k < lines.nFibre; k++) {
@@ -84,15 +98,18 @@ export function applyGeometry(kernels: Kernels, lines: Lines, columns: LocalGeom
       ({ widening, wideningVariance }) => [widening[k], wideningVariance[k]],
       lines.nWidth,
     );
-    for (let i = 0; i < shift.length; i++) lines.trace[k * lines.nTrace + i] += shift[i];
+    for (let i = 0; i < shift.coef.length; i++) lines.trace[k * lines.nTrace + i] += shift.coef[i];
+    scatter.rms[k] = shift.rms;
+    scatter.nPoint[k] = shift.nPoint;
     const width = lines.width.slice(k * lines.nWidth, (k + 1) * lines.nWidth);
-    for (let i = 0; i < widening.length; i++) width[i] += widening[i];
+    for (let i = 0; i < widening.coef.length; i++) width[i] += widening.coef[i];
     const sane = t.every((at) => {
       const share = legendreValue(width, at) / referenceWidth;
       return share > narrowest && share < widest;
     });
     if (sane) lines.width.set(width, k * lines.nWidth);
   }
+  return scatter;
 }
 
 /** Coefficients of one fibre's measured changes: as many as its light allows, none when it tells nothing. */
@@ -102,17 +119,21 @@ function fitChange(
   columns: LocalGeometry[],
   pick: (column: LocalGeometry) => [value: number, variance: number],
   nTerm: number,
-): Float64Array {
+): { coef: Float64Array; rms: number; nPoint: number } {
+  const nothing = { coef: new Float64Array(0), rms: Number.NaN, nPoint: 0 };
   const points = columns.map(pick);
   const telling = points.map(([value, variance]) =>
     Number.isFinite(value) && variance > 0 && variance < tellingError * tellingError ? 1 : 0,
   );
   const weight = points.map(([, variance], i) => (telling[i] ? 1 / (variance + floorPixels * floorPixels) : 0));
   const nPoint = telling.filter(Boolean).length;
-  if (nPoint < 4) return new Float64Array(0);
+  if (nPoint < 4) return nothing;
   const information = weight.reduce((sum, w) => sum + w, 0);
   const supported = Math.floor(Math.min(nPoint / 3, seriesError * seriesError * information));
-  if (supported < 1) return new Float64Array(0);
+  if (supported < 1) return nothing;
   const values = points.map(([value], i) => (telling[i] ? value : 0));
-  return fitter.fit(t, values, weight, Math.min(nTerm, supported), kappa, clipRounds).coef;
+  const fit = fitter.fit(t, values, weight, Math.min(nTerm, supported), kappa, clipRounds);
+  let squares = 0;
+  for (let i = 0; i < t.length; i++) if (fit.used[i]) squares += (values[i] - legendreValue(fit.coef, t[i])) ** 2;
+  return { coef: fit.coef, rms: Math.sqrt(squares / fit.nUsed), nPoint: fit.nUsed };
 }

@@ -11,7 +11,7 @@ import { type ShapeBasis, shapeBasis, tabulate } from "./basis.js";
 import { referToCentroid } from "./centroid.js";
 import type { ColumnData, Lines } from "./column.js";
 import { fittingColumns } from "./columns.js";
-import { applyGeometry, measureColumn } from "./geometry.js";
+import { applyGeometry, measureColumn, type TraceScatter } from "./geometry.js";
 import { hermiteBasis, hermiteStart } from "./hermiteBasis.js";
 import { nBackground, ShapeNormal, type ShapeState } from "./step.js";
 
@@ -29,6 +29,8 @@ export interface MeasuredShape {
   state: ShapeState;
   /** The flat's own word on the shape, for frames that refine it. */
   known: KnownShape;
+  /** Of the last round. */
+  scatter: TraceScatter;
   /** χ² per degree of freedom before each step. */
   history: number[];
 }
@@ -51,6 +53,7 @@ export function measureShape(
   };
   let table = tabulate(basis, state.coefficients);
   const history: number[] = [];
+  let scatter: TraceScatter = { rms: new Float64Array(lines.nFibre), nPoint: new Int32Array(lines.nFibre) };
   let information: Float64Array = new Float64Array(0);
   for (let round = 0; round < shapeColumns.length; round++) {
     const normal = new ShapeNormal(kernels, basis, flat.ny, lines.nFibre);
@@ -70,10 +73,10 @@ export function measureShape(
     const columns = fittingColumns(flat.nx, geometryColumns[round], round).map((x) =>
       measureColumn(lines, table, state.background, flatColumn(flat, x)),
     );
-    applyGeometry(kernels, lines, columns, referenceWidth);
+    scatter = applyGeometry(kernels, lines, columns, referenceWidth);
   }
   const known = { best: state.coefficients, information };
-  return { ...referToCentroid(kernels, lines, table), basis, state, known, history };
+  return { ...referToCentroid(kernels, lines, table), basis, state, known, history, scatter };
 }
 
 /** One column of a combined flat, with what makes its variances. */
