@@ -25,7 +25,10 @@ export const CLEAN = SCENES.clean
   .replace("size = [400, 330]", "size = [300, 190]")
   .replace("blocks = [20, 20, 20]", "blocks = [11, 10, 11]")
   .replace("dead = [11]", "dead = [5]")
-  .replace('name = "fflat_01"', 'name = "fflat_02"\nkind = "fibre-flat"\nseconds = 13\n[[exposure]]\nname = "fflat_01"');
+  .replace(
+    'name = "fflat_01"',
+    'name = "fflat_02"\nkind = "fibre-flat"\nseconds = 13\n[[exposure]]\nname = "fflat_01"',
+  );
 export const readNoise = 3.1;
 
 export function exposureOf(scene: string, name: string): SimulatedExposure {
