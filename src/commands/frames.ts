@@ -107,10 +107,10 @@ export async function traceFlats(
     frames.push(correctFrame(raw, calibrations, spectrograph, { role: "fibre flat" }));
     if (raws.length < 2) raws.push(raw);
   }
-  const detector = flatWarnings(raws, frames, calibrations, spectrograph);
   progress.stage("tracing the flat");
   const { layout, warning } = slitLayout(spectrograph);
   const traced = await traceFlat(frames, layout);
+  const detector = flatWarnings(raws, frames, calibrations, spectrograph);
   progress.stage("measuring the profile");
   const { tramlines, tried } = await chooseProfile(frames, traced.tramlines, profile);
   const tracing = { ...traced, tramlines, tried };

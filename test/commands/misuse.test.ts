@@ -348,9 +348,13 @@ describe("a header that the pixels do not contradict", () => {
   });
 
   test("a science frame that calls itself a flat does not pass for one unremarked", () => {
-    const said = warned(extract("says-science.fits", "--flat", "says-flat.fits", ...KNOWN)).join("\n");
+    const said = warned(["trace", "says-flat.fits", "-o", "out.fits", ...KNOWN]).join("\n");
     expect(said).toMatch(
       /says-flat\.fits: its fibres are very unequal .*, as in a science frame; make sure that this is a fibre flat\./,
+    );
+    refused(
+      extract("says-science.fits", "--flat", "says-flat.fits", ...KNOWN),
+      /^hatchel: says-science\.fits: light in fibres .* dead in the flat that was traced; .*so trace a flat in which every lit fibre shines\.\n$/,
     );
   });
 });

@@ -61,6 +61,8 @@ const clipRounds = 6;
 const tellingError = 0.3;
 /** A series gets as many terms as keep its own error below this, pixels. */
 const seriesError = 0.02;
+/** A tramline moves by less than this in one step, pixels: the fit is linear, and neighbours must not be run into. */
+const largestShift = 0.5;
 /** A fibre's width stays within these shares of the reference: what lies beyond is noise. */
 const [narrowest, widest] = [0.7, 1.4];
 
@@ -98,9 +100,12 @@ export function applyGeometry(
       ({ widening, wideningVariance }) => [widening[k], wideningVariance[k]],
       lines.nWidth,
     );
-    for (let i = 0; i < shift.coef.length; i++) lines.trace[k * lines.nTrace + i] += shift.coef[i];
-    scatter.rms[k] = shift.rms;
-    scatter.nPoint[k] = shift.nPoint;
+    const believable = shift.nPoint > 0 && t.every((at) => Math.abs(legendreValue(shift.coef, at)) < largestShift);
+    if (believable) {
+      for (let i = 0; i < shift.coef.length; i++) lines.trace[k * lines.nTrace + i] += shift.coef[i];
+      scatter.rms[k] = shift.rms;
+      scatter.nPoint[k] = shift.nPoint;
+    }
     const width = lines.width.slice(k * lines.nWidth, (k + 1) * lines.nWidth);
     for (let i = 0; i < widening.coef.length; i++) width[i] += widening.coef[i];
     const sane = t.every((at) => {
