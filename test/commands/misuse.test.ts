@@ -348,7 +348,7 @@ describe("a header that the pixels do not contradict", () => {
   });
 
   test("a science frame that calls itself a flat does not pass for one unremarked", () => {
-    const said = warned(["trace", "says-flat.fits", "-o", "out.fits", ...KNOWN]).join("\n");
+    const said = warned(["trace", "says-flat.fits", "-o", "says-flat-lines.fits", ...KNOWN]).join("\n");
     expect(said).toMatch(
       /says-flat\.fits: its fibres are very unequal .*, as in a science frame; make sure that this is a fibre flat\./,
     );
