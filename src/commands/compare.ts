@@ -133,9 +133,13 @@ function methodTable({ methods }: Comparison): string {
   return textTable([heading, ...rows]);
 }
 
+/** Rows for people: the brightest fibres; JSON holds more. */
+const nLeaking = 4;
+
 function leakTable({ leaks }: Comparison): string {
+  const brightest = [...new Set(leaks.map(({ bright }) => bright))].slice(0, nLeaking);
   const rows = leaks
-    .filter(({ crosstalkCorrected }) => !crosstalkCorrected)
+    .filter(({ bright, crosstalkCorrected }) => !crosstalkCorrected && brightest.includes(bright))
     .map(({ bright, fibre, method, share, error, model, modelOfAll }) => [
       `${bright} to ${fibre}, ${method}`,
       `${percentage(share, 3)} ± ${percentage(error, 3)}`,

@@ -94,7 +94,8 @@ function judge(alignment: Alignment, slit: Slit, peaks: NamedLight[], name: stri
   for (let j = 0; j < peaks.length; j++) {
     if (slitIndex[j] >= 0 && (closest < 0 || otherScore[j] > otherScore[closest])) closest = j;
   }
-  const margin = isEndDark(alignment, slit) ? CLEAR_MARGIN_AT_ENDS : CLEAR_MARGIN;
+  const isOneOff = Math.abs(otherIndex[closest] - slitIndex[closest]) === 1;
+  const margin = isOneOff && isEndDark(alignment, slit) ? CLEAR_MARGIN_AT_ENDS : CLEAR_MARGIN;
   if (score - otherScore[closest] >= margin) return;
   const close = peaks.flatMap((_, j) => (slitIndex[j] >= 0 && score - otherScore[j] < margin ? [j] : []));
   const [first, last] = [close[0], close[close.length - 1]];
