@@ -1,38 +1,8 @@
-import { beforeAll, describe, expect, it } from "vitest";
-import type { Precision } from "../src/kernels/banded.js";
-import { ExtractionBench } from "../src/kernels/extraction.js";
-import { type Kernels, loadKernels } from "../src/kernels/module.js";
+import { describe, expect, it } from "vitest";
 import { MaskBit } from "../src/reference/bits.js";
-import { type ExtractionInput, type ExtractionOutput, extractColumns, type Method } from "../src/reference/extract.js";
+import type { ExtractionOutput, Method } from "../src/reference/extract.js";
+import { runKernel, runReference } from "./runs.js";
 import { makeScene, type Scene } from "./scene.js";
-
-let kernels: Kernels;
-beforeAll(async () => {
-  kernels = await loadKernels();
-});
-
-function runKernel(input: ExtractionInput, precision: Precision): ExtractionOutput & { rejected: Uint8Array } {
-  const rows = Int32Array.from({ length: input.nFibre }, (_, k) => k);
-  const bench = new ExtractionBench(kernels, input, rows, input.nFibre, precision);
-  bench.run();
-  return { ...bench.output, rejected: bench.rejected };
-}
-
-function runReference(input: ExtractionInput): ExtractionOutput & { rejected: Uint8Array } {
-  const n = input.nFibre * input.nx;
-  const numbers = () => new Float64Array(n).fill(Number.NaN);
-  const output = {
-    flux: numbers(),
-    variance: numbers(),
-    neighbourCovariance: numbers(),
-    flags: new Int32Array(n),
-    chi2: numbers(),
-    background: numbers(),
-  };
-  const rejected = input.rejected.slice();
-  extractColumns({ ...input, rejected }, output, 0, input.nx);
-  return { ...output, rejected };
-}
 
 const methods: [Method, boolean][] = [
   ["joint", false],

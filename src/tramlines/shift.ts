@@ -12,7 +12,7 @@ import { legendreArgument, legendreValue } from "../reference/legendre.js";
 import { median } from "../reference/median.js";
 import type { ShapeTable } from "../reference/shape.js";
 import { activeFibres, linesOf, profileTable } from "./profileTable.js";
-import { type Lines, localDesign, localSystem } from "./shape/column.js";
+import { type Lines, solveLocal } from "./shape/column.js";
 import { frameColumn, widenBackground } from "./shape/refine.js";
 import { backgroundColumn, settleColumn, wholeProfiles } from "./shape/step.js";
 import type { Tramlines } from "./tramlines.js";
@@ -134,26 +134,16 @@ function columnShifts(frame: Frame, lines: Lines, table: ShapeTable, smooth: Flo
   const level = data.light.map((light, y) => light - under[y]);
   const { flux, model } = settleColumn(profiles, data, level, under);
   const residual = level.map((light, y) => light - model[y]);
-  const { band, rhs, halfBandwidth } = localSystem(
-    profiles,
-    localDesign(profiles, flux, 2),
-    residual,
-    data.inverseVariance,
-    2,
-  );
-  factorBand(band, rhs.length, halfBandwidth);
-  solveBand(band, rhs.length, halfBandwidth, rhs);
-  const inverse = inverseBand(band, rhs.length, halfBandwidth);
+  const local = solveLocal(profiles, flux, residual, data.inverseVariance, 2);
   const points: Point[] = [];
   for (let k = 0; k < lines.nFibre; k++) {
-    const fluxVariance = inverse[2 * k * (halfBandwidth + 1)];
-    const variance = inverse[(2 * k + 1) * (halfBandwidth + 1)];
+    const [fluxVariance, variance] = [local.variance[2 * k], local.variance[2 * k + 1]];
     const enough = flux[k] > leastFlux && flux[k] * flux[k] > leastSigma * leastSigma * fluxVariance;
     if (enough && variance > 0) {
       points.push({
         x: legendreArgument(x, lines.nx),
         y: legendreArgument(profiles.centre[k], lines.ny),
-        shift: rhs[2 * k + 1],
+        shift: local.value[2 * k + 1],
         variance,
       });
     }

@@ -1,6 +1,6 @@
 /** One column of a flat, or of a science frame, under a shape: every fibre's profile with its slopes, and the joint fit of
  * flux, shift and width change. */
-import { factorBand, solveBand } from "../../reference/banded.js";
+import { factorBand, inverseBand, solveBand } from "../../reference/banded.js";
 import { legendreArgument, legendreValue } from "../../reference/legendre.js";
 import { centroidOf, type ShapeTable, shapeAt, shapeTerms } from "../../reference/shape.js";
 
@@ -29,6 +29,19 @@ export interface ColumnData {
   variancePerElectron: Float64Array;
   /** e⁻⁻²: 0 where the pixel is not good; follows the model. */
   inverseVariance: Float64Array;
+}
+
+/** A column of which nothing is known yet. */
+export function emptyColumn(x: number, ny: number): ColumnData {
+  const zeros = () => new Float64Array(ny);
+  return {
+    x,
+    light: zeros(),
+    good: new Uint8Array(ny),
+    fixedVariance: zeros(),
+    variancePerElectron: zeros(),
+    inverseVariance: zeros(),
+  };
 }
 
 /** What no model of the light gets better than, as a share of it: pixels' response, and the form of the profile itself. */
@@ -192,6 +205,22 @@ export function localSystem(
     }
   }
   return { nPar, halfBandwidth, band, rhs };
+}
+
+/** Local unknowns of all fibres at once, [nFibre × nPar], with their variances. */
+export function solveLocal(
+  profiles: ColumnProfiles,
+  flux: Float64Array,
+  residual: Float64Array,
+  inverseVariance: Float64Array,
+  nPar: number,
+): { value: Float64Array; variance: Float64Array } {
+  const design = localDesign(profiles, flux, nPar);
+  const { band, rhs, halfBandwidth } = localSystem(profiles, design, residual, inverseVariance, nPar);
+  factorBand(band, rhs.length, halfBandwidth);
+  solveBand(band, rhs.length, halfBandwidth, rhs);
+  const inverse = inverseBand(band, rhs.length, halfBandwidth);
+  return { value: rhs, variance: rhs.map((_, i) => inverse[i * (halfBandwidth + 1)]) };
 }
 
 /** Joint fluxes of the column: [nFibre] e⁻. */

@@ -3,10 +3,9 @@
 
 import { LegendreFitter } from "../../kernels/legendre.js";
 import type { Kernels } from "../../kernels/module.js";
-import { factorBand, inverseBand, solveBand } from "../../reference/banded.js";
 import { legendreArgument, legendreValue } from "../../reference/legendre.js";
 import type { ShapeTable } from "../../reference/shape.js";
-import { type ColumnData, type Lines, localDesign, localSystem } from "./column.js";
+import { type ColumnData, type Lines, solveLocal } from "./column.js";
 import { backgroundColumn, settleColumn, wholeProfiles } from "./step.js";
 
 /** Shifts and changes of width of all fibres in one column, pixels, with their variances. */
@@ -31,25 +30,15 @@ export function measureColumn(
   const level = data.light.map((light, y) => light - smooth[y]);
   const { flux, model } = settleColumn(profiles, data, level, smooth);
   const residual = level.map((light, y) => light - model[y]);
-  const { band, rhs, halfBandwidth } = localSystem(
-    profiles,
-    localDesign(profiles, flux, 3),
-    residual,
-    data.inverseVariance,
-    3,
-  );
-  factorBand(band, rhs.length, halfBandwidth);
-  solveBand(band, rhs.length, halfBandwidth, rhs);
-  const inverse = inverseBand(band, rhs.length, halfBandwidth);
-  const pick = (p: number) => flux.map((_, k) => rhs[3 * k + p]);
-  const variance = (p: number) => flux.map((_, k) => inverse[(3 * k + p) * (halfBandwidth + 1)]);
+  const { value, variance } = solveLocal(profiles, flux, residual, data.inverseVariance, 3);
+  const pick = (from: Float64Array, p: number) => flux.map((_, k) => from[3 * k + p]);
   return {
     x: data.x,
-    flux: flux.map((f, k) => f + rhs[3 * k]),
-    shift: pick(1),
-    shiftVariance: variance(1),
-    widening: pick(2),
-    wideningVariance: variance(2),
+    flux: flux.map((f, k) => f + value[3 * k]),
+    shift: pick(value, 1),
+    shiftVariance: pick(variance, 1),
+    widening: pick(value, 2),
+    wideningVariance: pick(variance, 2),
   };
 }
 

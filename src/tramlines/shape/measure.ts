@@ -9,7 +9,7 @@ import { activeFibres, linesOf } from "../profileTable.js";
 import type { KnownShape, ShapeProfile, Tramlines } from "../tramlines.js";
 import { type ShapeBasis, shapeBasis, tabulate } from "./basis.js";
 import { referToCentroid } from "./centroid.js";
-import type { ColumnData, Lines } from "./column.js";
+import { type ColumnData, emptyColumn, type Lines } from "./column.js";
 import { fittingColumns } from "./columns.js";
 import { applyGeometry, measureColumn, type TraceScatter } from "./geometry.js";
 import { hermiteBasis, hermiteStart } from "./hermiteBasis.js";
@@ -82,14 +82,7 @@ export function measureShape(
 /** One column of a combined flat, with what makes its variances. */
 export function flatColumn(flat: Flat, x: number): ColumnData {
   const { nx, ny, frame } = flat;
-  const data: ColumnData = {
-    x,
-    light: new Float64Array(ny),
-    good: new Uint8Array(ny),
-    fixedVariance: new Float64Array(ny),
-    variancePerElectron: new Float64Array(ny),
-    inverseVariance: new Float64Array(ny),
-  };
+  const data = emptyColumn(x, ny);
   for (let y = 0; y < ny; y++) {
     const at = y * nx + x;
     const n = flat.nUsed[at];

@@ -7,7 +7,7 @@ import type { SmoothBackground } from "../../reference/extract.js";
 import { nShapeTerm, type ShapeTable } from "../../reference/shape.js";
 import type { KnownShape } from "../tramlines.js";
 import { type ShapeBasis, shapeBasis, tabulate } from "./basis.js";
-import type { ColumnData, Lines } from "./column.js";
+import { type ColumnData, emptyColumn, type Lines } from "./column.js";
 import { hermiteBasis, nHermiteFunction } from "./hermiteBasis.js";
 import { nBackground, nBackgroundY, ShapeNormal, type ShapeState } from "./step.js";
 
@@ -49,14 +49,7 @@ function basisOf(kernels: Kernels, { best }: KnownShape, referenceWidth: number)
 /** One column of a frame, with what makes its variances. */
 export function frameColumn(frame: Frame, rejected: Uint8Array | null, x: number): ColumnData {
   const { nx, ny, noise } = frame;
-  const data: ColumnData = {
-    x,
-    light: new Float64Array(ny),
-    good: new Uint8Array(ny),
-    fixedVariance: new Float64Array(ny),
-    variancePerElectron: new Float64Array(ny),
-    inverseVariance: new Float64Array(ny),
-  };
+  const data = emptyColumn(x, ny);
   for (let y = 0; y < ny; y++) {
     const at = y * nx + x;
     const hit = rejected !== null && (rejected[at] & (MaskBit.cosmic | MaskBit.grown)) !== 0;
