@@ -41,7 +41,8 @@ export function adaptTramlines(
     } else {
       adapted = shiftTramlines(tramlines, shift);
       oneOff = compareOneOff(kernels, frame, adapted, background);
-      if (options.checkNames !== false) requireNamesFit(frame, oneOff);
+      if (oneOff === null) warnings.push(`${frame.name}: so few fibres are lit that their names cannot be checked.`);
+      else if (options.checkNames !== false) requireNamesFit(frame, oneOff);
       const elsewhere = options.background === false ? background : backgroundBesideDead(frame, adapted);
       const dead = measureDeadLight(kernels, frame, adapted, elsewhere);
       warnings.push(...deadLightWarnings(frame, dead, tramlines.nFibre));

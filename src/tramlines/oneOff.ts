@@ -28,13 +28,18 @@ const modelError = 0.05;
 /** Difference from which on another reading is excluded. */
 const certain = 50;
 
-/** Compares the three readings of `frame`, whose tramlines are already moved to its light. */
+/** So few fibres have no pattern to be read by. */
+const fewest = 3;
+
+/** Compares the three readings of `frame`, whose tramlines are already moved to its light; null for a slit of so few fibres
+ * that nothing tells. */
 export function compareOneOff(
   kernels: Kernels,
   frame: Frame,
   tramlines: Tramlines,
   background: SmoothBackground,
-): OneOff {
+): OneOff | null {
+  if (activeFibres(tramlines).length < fewest) return null;
   const table = profileTable(kernels, tramlines.profile);
   const smooth = widenBackground(background);
   const columns = Array.from({ length: nColumn }, (_, i) => Math.floor(((i + 0.37) * frame.nx) / nColumn));

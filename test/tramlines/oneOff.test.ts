@@ -1,6 +1,10 @@
 import { describe, expect, it } from "vitest";
+import { noBackground } from "../../src/extraction/background.js";
 import { extractFrame } from "../../src/extraction/extract.js";
+import { loadKernels } from "../../src/kernels/module.js";
 import { TraceError } from "../../src/tramlines/errors.js";
+import { compareOneOff } from "../../src/tramlines/oneOff.js";
+import type { Tramlines } from "../../src/tramlines/tramlines.js";
 import { frameFromTruth, tramlinesFromTruth } from "../extraction/fromTruth.js";
 import { bench, nFibre, readNoise } from "../extraction/twoBlocks.js";
 
@@ -23,6 +27,12 @@ describe("a science frame one fibre off the flat", () => {
     expect(Math.abs(shift!.coefficients[0])).toBeLessThan(0.02);
     expect(oneOff!.lower).toBeGreaterThan(50);
     expect(oneOff!.higher).toBeGreaterThan(50);
+  });
+
+  it("is not judged by two fibres, which have no pattern", async () => {
+    const { frame, tramlines } = moved(0);
+    const two: Tramlines = { ...tramlines, state: tramlines.state.map((_, k) => (k < 2 ? "lit" : "dead")) };
+    expect(compareOneOff(await loadKernels(), frame, two, noBackground())).toBeNull();
   });
 
   it.each([
