@@ -1,11 +1,13 @@
 /** hatchel demo: simulated frames to spectra, and the spectra against the truth behind the frames. */
 import { basename, join } from "node:path";
 import type { Command } from "commander";
+import { type Adapted, adaptTramlines } from "../extraction/adapt.js";
 import { extractFrame } from "../extraction/extract.js";
 import { writeSpectra } from "../extraction/file.js";
 import { readImage } from "../fits/image.js";
 import { readTable } from "../fits/table.js";
 import { refuseToHarm } from "../fits/write.js";
+import { loadKernels } from "../kernels/module.js";
 import type { Method } from "../reference/extract.js";
 import { tramlineHeights } from "../report/summary.js";
 import { type CosmicTruth, scoreByDecade, scoreCosmicRays, scoreLeak, scoreTrace } from "../report/truth.js";
@@ -88,7 +90,10 @@ async function demo(folder: string, force: boolean, progress: Progress): Promise
   const history = { version, options: frameLines({ ...bench.options, flat: flats }), inputs: bench.inputs };
   await uninterrupted(() => writeTramlines(products(night)[0], traced.tramlines, history, { force }));
   const runs: DemoJson["runs"] = [];
-  for (const run of RUNS) runs.push(await extractAndScore(run, night, bench, traced.tramlines, history.options));
+  const adapted = new Map<string, Adapted>();
+  for (const run of RUNS) {
+    runs.push(await extractAndScore(run, night, bench, traced.tramlines, history.options, adapted));
+  }
   const [trueTrace, lit] = [await truthImage(flat.truth!, "TRACE"), await litFibres(flat.truth!)];
   const json: DemoJson = {
     folder,
@@ -124,24 +129,32 @@ function openNight(night: Night, flats: string[]): Promise<Bench> {
   return openBench([spectrograph, ...options.bias, ...options.pixelFlat, ...flats], options, night.progress);
 }
 
+/** `adapted`: what was measured of each frame, once for all its runs. */
 async function extractAndScore(
   run: Run,
   night: Night,
   bench: Bench,
   tramlines: Tramlines,
   benchLines: string[],
+  adapted: Map<string, Adapted>,
 ): Promise<DemoJson["runs"][number]> {
   const { method, crosstalk } = run;
   const { raw, truth, name } = ofKind(night, "science")[run.science];
-  const own = { ...bench, inputs: [...bench.inputs] };
-  const frame = await readFrame(raw, "science", own);
+  const ownBench = { ...bench, inputs: [...bench.inputs] };
+  const frame = await readFrame(raw, "science", ownBench);
   night.progress.stage(`extracting ${name}, ${method}`);
   const options = { method, crosstalk, precision: "f64", cosmicRays: true } as const;
-  const extraction = await extractFrame(frame, tramlines, { ...options, onProgress: night.progress.share });
+  const own = adapted.get(name) ?? adaptTramlines(await loadKernels(), frame, tramlines, options);
+  adapted.set(name, own);
+  const extraction = await extractFrame(frame, tramlines, {
+    ...options,
+    adapted: own,
+    onProgress: night.progress.share,
+  });
   const sky = bench.spectrograph?.slit?.sky;
   const history = {
     ...{ version, options: [...methodLines(options), ...benchLines], sky },
-    inputs: own.inputs,
+    inputs: ownBench.inputs,
   };
   await uninterrupted(() =>
     writeSpectra(spectraFile(run, night), extraction, frame, tramlines, history, { force: night.force }),

@@ -9,7 +9,7 @@ import { checkGeometry } from "../tramlines/file.js";
 import type { OneOff } from "../tramlines/oneOff.js";
 import type { Shift } from "../tramlines/shift.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
-import { adaptTramlines } from "./adapt.js";
+import { type Adapted, adaptTramlines } from "./adapt.js";
 import { type BackgroundFit, fitBackground, noBackground } from "./background.js";
 import type { FrameFit } from "./modelColumn.js";
 import { runPasses } from "./passes.js";
@@ -34,6 +34,8 @@ export interface ExtractionOptions {
   halfAperture?: number;
   /** Take off a smooth background seen between the fibres. Default true. */
   background?: boolean;
+  /** What `adaptTramlines` found for this very frame and these tramlines: measured once for several extractions. */
+  adapted?: Adapted;
   /** Measure where the frame's light sits against the tramlines, and extract it there. Default true. */
   shift?: boolean;
   /** Refuse a frame whose light does not tell that its fibres are named rightly. Default true. Without it a frame that moved
@@ -77,7 +79,7 @@ export async function extractFrame(
   checkGeometry(given, tramlines);
   const frame = withHits(given, options.knownHits);
   const kernels = await loadKernels();
-  const adapted = adaptTramlines(kernels, frame, tramlines, options);
+  const adapted = options.adapted ?? adaptTramlines(kernels, frame, tramlines, options);
   const { bench, input, plan, background, profileError } = openFrame(kernels, frame, adapted.tramlines, options);
   runPasses(bench, input, options.onProgress);
   const spectra = finishSpectra(bench.output, tramlines, input);
