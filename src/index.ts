@@ -20,7 +20,7 @@ export type { Role } from "./detector/roles.js";
 export { type Comparison, compareMethods, type MethodComparison } from "./extraction/compare.js";
 export { findPairHits, type PairHits } from "./extraction/cosmicPair.js";
 export { type CrosstalkMatrix, type LoneEstimator, measureCrosstalk } from "./extraction/crosstalkMatrix.js";
-export { type Extraction, type ExtractionOptions, extractFrame } from "./extraction/extract.js";
+export { type Extraction, extractFrame } from "./extraction/extract.js";
 export { crosstalkHdus, rejectedHdu, scatteredHdu, seenHdu, targetsHdu } from "./extraction/extraHdus.js";
 export {
   readPositions,
@@ -29,6 +29,7 @@ export {
   spectraHdus,
   writeSpectra,
 } from "./extraction/file.js";
+export type { ExtractionOptions } from "./extraction/options.js";
 export {
   type CellScore,
   type DarkScore,

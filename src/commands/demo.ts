@@ -1,9 +1,10 @@
 /** hatchel demo: simulated frames to spectra, and the spectra against the truth behind the frames. */
 import { basename, join } from "node:path";
 import type { Command } from "commander";
-import { type Adapted, adaptTramlines } from "../extraction/adapt.js";
+import { adaptTramlines } from "../extraction/adapt.js";
 import { extractFrame } from "../extraction/extract.js";
 import { writeSpectra } from "../extraction/file.js";
+import type { Adapted } from "../extraction/options.js";
 import { readImage } from "../fits/image.js";
 import { readTable } from "../fits/table.js";
 import { refuseToHarm } from "../fits/write.js";

@@ -9,17 +9,8 @@ import { refineShape } from "../tramlines/shape/refine.js";
 import { measureShift, type Shift, shiftTramlines } from "../tramlines/shift.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { fitBackground, noBackground } from "./background.js";
-import type { ExtractionOptions } from "./extract.js";
+import type { Adapted, ExtractionOptions } from "./options.js";
 import { openFrame } from "./settle.js";
-
-export interface Adapted {
-  tramlines: Tramlines;
-  shift: Shift | null;
-  /** Null when no shift was measured. */
-  oneOff: OneOff | null;
-  refined: boolean;
-  warnings: string[];
-}
 
 /** @throws TraceError when the frame's light does not tell that fibres are named rightly, or when many dead ones shine. */
 export function adaptTramlines(

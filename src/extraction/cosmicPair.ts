@@ -20,8 +20,9 @@ import { pixelVariance } from "../reference/variance.js";
 import { checkGeometry } from "../tramlines/file.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { adaptTramlines } from "./adapt.js";
-import { type Extraction, type ExtractionOptions, extractFrame } from "./extract.js";
+import { type Extraction, extractFrame } from "./extract.js";
 import { type ColumnSource, lightOf, profileColumns } from "./modelColumn.js";
+import type { ExtractionOptions } from "./options.js";
 import { isOtherField, type PairSpectra, pairSpectra } from "./pairSpectra.js";
 
 /** σ beyond which a pixel is hit, and those beside it. */

@@ -7,8 +7,9 @@ import { MaskBit } from "../reference/bits.js";
 import type { ExtractionInput } from "../reference/extract.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { type BackgroundFit, cellColumns, fitBackground } from "./background.js";
-import { type ExtractionOptions, extractionInput } from "./extract.js";
+import { extractionInput } from "./input.js";
 import { measureMisfit } from "./misfit.js";
+import type { ExtractionOptions } from "./options.js";
 import { type ExtractionPlan, planExtraction } from "./plan.js";
 
 /** Fits in turns: of so many groups of columns one is looked at, in the last turn all. The first turn moves what light there

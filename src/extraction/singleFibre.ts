@@ -16,7 +16,8 @@ import { measureShift, shiftTramlines } from "../tramlines/shift.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { fitBackground } from "./background.js";
 import { estimatorWeights, type LoneEstimator, sharedLight } from "./crosstalkMatrix.js";
-import { type Extraction, extractionInput } from "./extract.js";
+import type { Extraction } from "./extract.js";
+import { extractionInput } from "./input.js";
 import { lightOf, modelColumns, profileColumns, weighByModel } from "./modelColumn.js";
 
 /** A fibre with this share of the brightest one's light is lit. */

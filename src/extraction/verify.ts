@@ -8,7 +8,7 @@ import { blockProfiles } from "../reference/profile.js";
 import { checkGeometry } from "../tramlines/file.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { adaptTramlines } from "./adapt.js";
-import type { ExtractionOptions } from "./extract.js";
+import type { ExtractionOptions } from "./options.js";
 import { type ColumnRunner, runPasses } from "./passes.js";
 import { openFrame } from "./settle.js";
 
