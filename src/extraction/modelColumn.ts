@@ -1,11 +1,10 @@
 /** Columns of an extraction as its fit left them: the fibres' profiles on the pixels, and every pixel's variance from the
  * model. Pixels that the frame lost are counted as if they were good: what is said of the estimator then holds for the
  * bench, not for this frame's accidents. */
-import { MaskBit } from "../reference/bits.js";
 import type { Column } from "../reference/column.js";
-import type { ExtractionInput, SmoothBackground } from "../reference/extract.js";
+import { backgroundSeries, type ExtractionInput, emptyColumn, type SmoothBackground } from "../reference/extract.js";
 import { legendreArgument, legendreBasis } from "../reference/legendre.js";
-import { type BlockProfiles, blockProfiles, columnWeights, nodeShares } from "../reference/profile.js";
+import { type BlockProfiles, blockProfiles, nodeShares } from "../reference/profile.js";
 import { pixelVariance } from "../reference/variance.js";
 
 /** An extraction's fit of its frame. */
@@ -73,29 +72,6 @@ export function backgroundImage(background: SmoothBackground, nx: number, ny: nu
   return image;
 }
 
-function emptyColumn(input: ExtractionInput, block: BlockProfiles, shares: number[]): Column {
-  const nWindow = 2 * input.halfWindow + 1;
-  const nRow = input.ny + 2 * nWindow;
-  const zeros = () => new Float64Array(nRow);
-  return {
-    nRow,
-    margin: nWindow,
-    nFibre: input.nFibre,
-    nWindow,
-    bandwidth: input.bandwidth,
-    start: block.start,
-    weights: columnWeights(block, nWindow, shares),
-    centre: Float64Array.from({ length: input.nFibre }, (_, k) =>
-      shares.reduce((sum, share, node) => sum + share * block.centre[4 * k + node], 0),
-    ),
-    light: zeros(),
-    background: zeros(),
-    noise: { fixed: zeros().fill(1), inverseResponse: zeros(), responseRelativeVariance: zeros() },
-    bits: new Uint8Array(nRow).fill(MaskBit.missing),
-    inverseVariance: zeros(),
-  };
-}
-
 function loadNoise({ noise, nx, ny }: ExtractionInput, column: Column, x: number): void {
   for (let y = 0; y < ny; y++) {
     const [at, row] = [y * nx + x, column.margin + y];
@@ -104,16 +80,6 @@ function loadNoise({ noise, nx, ny }: ExtractionInput, column: Column, x: number
     column.noise.inverseResponse[row] = noise.inverseResponse?.[at] ?? 1;
     column.noise.responseRelativeVariance[row] = noise.responseRelativeVariance?.[at] ?? 0;
   }
-}
-
-/** Coefficients of b(x, ·) in P_j(y) at one x: [nY]. */
-function backgroundSeries({ nX, nY, coefficients }: SmoothBackground, t: number): Float64Array {
-  const inX = legendreBasis(t, nX);
-  return Float64Array.from({ length: nY }, (_, j) => {
-    let sum = 0;
-    for (let i = 0; i < nX; i++) sum += inX[i] * coefficients[i * nY + j];
-    return sum;
-  });
 }
 
 function dot(a: Float64Array, b: Float64Array): number {

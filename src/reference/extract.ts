@@ -139,12 +139,13 @@ function modelLight(column: Column, flux: Float64Array): Float64Array {
   return model;
 }
 
-function loadColumn(input: ExtractionInput, block: BlockProfiles, shares: number[], x: number): Column {
+/** A column of a block, told by the nodes' shares in it, before any pixel is read: profiles in place, nothing good. */
+export function emptyColumn(input: ExtractionInput, block: BlockProfiles, shares: number[]): Column {
   const nWindow = 2 * input.halfWindow + 1;
   const margin = nWindow;
   const nRow = input.ny + 2 * margin;
   const zeros = () => new Float64Array(nRow);
-  const column: Column = {
+  return {
     nRow,
     margin,
     nFibre: input.nFibre,
@@ -161,6 +162,10 @@ function loadColumn(input: ExtractionInput, block: BlockProfiles, shares: number
     bits: new Uint8Array(nRow).fill(MaskBit.missing),
     inverseVariance: zeros(),
   };
+}
+
+function loadColumn(input: ExtractionInput, block: BlockProfiles, shares: number[], x: number): Column {
+  const column = emptyColumn(input, block, shares);
   const series = backgroundSeries(input.background, legendreArgument(x, input.nx));
   for (let y = 0; y < input.ny; y++) loadPixel(input, column, series, x, y);
   return column;
@@ -181,7 +186,7 @@ function loadPixel(input: ExtractionInput, column: Column, series: Float64Array,
 }
 
 /** Coefficients of b(x, ·) in P_j(y) at one x: [nY]. */
-function backgroundSeries({ nX, nY, coefficients }: SmoothBackground, t: number): Float64Array {
+export function backgroundSeries({ nX, nY, coefficients }: SmoothBackground, t: number): Float64Array {
   const column = new Float64Array(nX);
   return Float64Array.from({ length: nY }, (_, j) => {
     for (let i = 0; i < nX; i++) column[i] = coefficients[i * nY + j];
