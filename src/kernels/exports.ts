@@ -93,3 +93,12 @@ export interface KernelExports {
   /** assembly/median.ts: loses the order of what lies at `ptr`. */
   median(ptr: number, n: number): number;
 }
+
+/** Kernels that work on one tile of a job: what `Workbench.share` can hand out. */
+export type TileKernel = {
+  [Name in keyof KernelExports]: KernelExports[Name] extends (jobPtr: number, tile: number) => void
+    ? Parameters<KernelExports[Name]>["length"] extends 2
+      ? Name
+      : never
+    : never;
+}[keyof KernelExports];

@@ -5,7 +5,7 @@
  *
  * A Workbench is sized once and never grows, so its views stay valid for its whole life; it is released
  * with the last reference to it. */
-import type { KernelExports } from "./exports.js";
+import type { KernelExports, TileKernel } from "./exports.js";
 
 const PAGE_BYTES = 65536;
 const ALIGN_BYTES = 64;
@@ -37,8 +37,17 @@ export class Workbench {
     readonly call: KernelExports,
     readonly memory: WebAssembly.Memory,
     heapBase: number,
+    /** Threads that `share` hands tiles to. */
+    readonly nThread = 1,
   ) {
     this.next = heapBase;
+  }
+
+  /** Runs `kernel(job, tile)` for every tile from 0 to `nTile` − 1, each once and in no certain order, and returns when
+   * all are done. `jobs`: a pointer for each of the `nThread` threads, each with scratch of its own; tiles write to places
+   * of their own, so that the outcome does not depend on who ran which. */
+  share(kernel: TileKernel, jobs: readonly number[], nTile: number): void {
+    for (let tile = 0; tile < nTile; tile++) this.call[kernel](jobs[0], tile);
   }
 
   float32(n: number): Float32Array<ArrayBuffer> {
