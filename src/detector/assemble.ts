@@ -2,8 +2,10 @@
  *
  *     dispersion along axis 1: x = axis 1, y = axis 2;   along axis 2: x = axis 2, y = axis 1 (transposed) */
 import { type Section, sectionSize } from "../fits/sections.js";
+import type { Kernels } from "../kernels/module.js";
 import type { Amplifier, DetectorLayout } from "./amplifiers.js";
 import { MaskBit } from "./frame.js";
+import { type FrameArrays, frameArrays } from "./frameMemory.js";
 import { type MissingFound, markMissing } from "./missing.js";
 import { type OverscanLevel, overscanLevel } from "./overscan.js";
 import type { RawImage } from "./raw.js";
@@ -21,7 +23,7 @@ export interface Region {
   overscan?: OverscanLevel;
 }
 
-export interface Assembled {
+export interface Assembled extends FrameArrays {
   name: string;
   nx: number;
   ny: number;
@@ -36,8 +38,9 @@ export interface Assembled {
 }
 
 /** Takes the zero level off and multiplies by the gain. Saturation and missing values become mask bits first.
- * Where there is neither overscan nor bias_level the pedestal stays in: the bias stack must take it off. */
-export function assemble(raw: RawImage, layout: DetectorLayout): Assembled {
+ * Where there is neither overscan nor bias_level the pedestal stays in: the bias stack must take it off.
+ * @param kernels the frame gets a memory of their kind. */
+export function assemble(raw: RawImage, layout: DetectorLayout, kernels?: Kernels): Assembled {
   const levels = layout.amplifiers.map((amplifier) => overscanLevel(raw, amplifier));
   const fileMask = new Uint8Array(raw.nx * raw.ny);
   const nSaturated = markSaturated(fileMask, raw, layout);
@@ -45,8 +48,9 @@ export function assemble(raw: RawImage, layout: DetectorLayout): Assembled {
   const { axis1, axis2 } = layout.geometry;
   const turned = layout.dispersionAxis === 2;
   const [nx, ny] = turned ? [axis2, axis1] : [axis1, axis2];
-  const electrons = new Float32Array(nx * ny).fill(Number.NaN);
-  const mask = new Uint8Array(nx * ny).fill(MaskBit.missing);
+  const arrays = frameArrays(kernels, nx * ny);
+  const electrons = arrays.electrons.fill(Number.NaN);
+  const mask = arrays.mask.fill(MaskBit.missing);
   const stride1 = turned ? nx : 1;
   const stride2 = turned ? 1 : nx;
   layout.amplifiers.forEach((amplifier, i) => {
@@ -64,7 +68,7 @@ export function assemble(raw: RawImage, layout: DetectorLayout): Assembled {
     }
   });
   const regions = layout.amplifiers.map((amplifier, i) => regionOf(amplifier, levels[i], turned));
-  return { name: raw.name, nx, ny, electrons, mask, regions, layout, missing, nSaturated };
+  return { ...arrays, name: raw.name, nx, ny, regions, layout, missing, nSaturated };
 }
 
 /** ADU, for each row or each column of the data section. */

@@ -37,7 +37,7 @@ export function correctFrame(
   if (calibrations.geometry) {
     requireSameGeometry(calibrations.geometry, calibrations.geometryOf!, layout.geometry, raw.name);
   }
-  const frame = assemble(raw, layout);
+  const frame = assemble(raw, layout, raw.kernels);
   requireZeroLevel(frame, undefined, calibrations);
   requireReadNoise(frame);
   refuseOtherAxis(frame, spectrograph);
@@ -58,6 +58,7 @@ export function correctFrame(
     ny: frame.ny,
     electrons: frame.electrons,
     mask: frame.mask,
+    ...(frame.memory ? { memory: frame.memory } : {}),
     noise,
     geometry: layout.geometry,
     exposureSeconds: exposureSeconds(raw),

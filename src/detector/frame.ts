@@ -2,6 +2,7 @@
  *
  * Pixels count from 0 with centres on whole numbers; images are row-major, index = y · nx + x. */
 import type { Header } from "../fits/header.js";
+import type { Workbench } from "../kernels/module.js";
 import type { NoiseIngredients } from "../reference/variance.js";
 
 export { MaskBit } from "../reference/bits.js";
@@ -31,6 +32,9 @@ export interface Frame {
   electrons: Float32Array;
   /** ny × nx, bits of MaskBit. */
   mask: Uint8Array;
+  /** The kernel memory in which `electrons` and `mask` lie, with room behind them; absent when they are arrays of their
+   * own. A frame made from another may have replaced one of them: only what has this memory's buffer lies in it. */
+  memory?: Workbench;
   noise: NoiseIngredients;
   geometry: DetectorGeometry;
   exposureSeconds: number;

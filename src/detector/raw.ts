@@ -1,6 +1,7 @@
 /** A raw frame: what the detector wrote, in ADU, and its header. */
 import { inputCards } from "../fits/carry.js";
 import { type CardValue, Header } from "../fits/header.js";
+import type { Kernels } from "../kernels/module.js";
 import { DetectorError } from "./detectorError.js";
 
 /** What the detector stage needs of a FITS image; row-major, data[(row) · nx + column], row 0 is the first of the file. */
@@ -18,6 +19,8 @@ export interface RawImage {
   warnings?: string[];
   /** Stands for the HDU in a product's HISTORY. */
   checksum?: string;
+  /** What the frame made of it may lie in the memory of. */
+  kernels?: Kernels;
 }
 
 /** The first of these keywords that has a value, in the image's header, then in the primary one. */

@@ -1,6 +1,6 @@
 /** Images in: any HDU, any kind of pixel, plain or in compressed tiles, as physical values. */
 import { basename } from "node:path";
-import { loadKernels } from "../kernels/module.js";
+import { type Kernels, loadKernels } from "../kernels/module.js";
 import { decodePixels } from "../kernels/pixels.js";
 import type { PixelScaling } from "../reference/pixels.js";
 import { FitsError } from "./errors.js";
@@ -31,6 +31,8 @@ export interface FitsImage {
   checksum: string;
   /** What is odd but does no harm; one sentence each. */
   warnings: string[];
+  /** Those that decoded the pixels. */
+  kernels: Kernels;
 }
 
 export interface ReadOptions {
@@ -49,9 +51,10 @@ export function readImage(input: string | Uint8Array, options: ReadOptions = {})
     const header = compressed ? uncompressedHeader(hdu) : hdu.header;
     const { nx, ny, bitpix } = shapeOf(hdu, header, compressed);
     const scaling = scalingOf(header, bitpix, fits);
+    const kernels = await loadKernels();
     const { data, dataSum } = compressed
       ? decodeTiles(fits, hdu, nx, ny, scaling)
-      : await decodePlain(fits, hdu, nx * ny, scaling);
+      : decodePlain(kernels, fits, hdu, nx * ny, scaling);
     const { state, digest } = checkSums(fits, hdu, dataSum);
     warnOfChecksums(fits, hdu, state);
     return {
@@ -67,6 +70,7 @@ export function readImage(input: string | Uint8Array, options: ReadOptions = {})
       checksumState: state,
       checksum: digest,
       warnings: fits.warnings,
+      kernels,
     };
   });
 }
@@ -148,8 +152,7 @@ interface Decoded {
   dataSum: number;
 }
 
-async function decodePlain(fits: OpenFits, hdu: ScannedHdu, n: number, scaling: PixelScaling): Promise<Decoded> {
-  const kernels = await loadKernels();
+function decodePlain(kernels: Kernels, fits: OpenFits, hdu: ScannedHdu, n: number, scaling: PixelScaling): Decoded {
   let dataSum = 0;
   const data = withinMemory(fits, hdu, () =>
     decodePixels(kernels, n, scaling, (stored) => {
