@@ -1,2 +1,2 @@
 #!/usr/bin/env node
-import "../dist/commands/main.js";
+import "../dist/command/main.js";

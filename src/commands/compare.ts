@@ -24,7 +24,6 @@ import {
   requireTramlineSource,
   tramlinesFor,
 } from "./frames.js";
-import { jsonHelp } from "./json.js";
 import { checkOutput, uninterrupted, writeText } from "./output.js";
 import { jsonText, type Outcome, perform } from "./perform.js";
 import type { Progress } from "./progress.js";
@@ -34,20 +33,16 @@ interface CompareOptions extends FrameOptions, TramlineOptions, Omit<MethodOptio
   force?: boolean;
 }
 
-export function addCompare(program: Command): void {
-  const command = program
-    .command("compare")
-    .summary("the methods side by side on a frame")
+export function addCompare(command: Command): void {
+  command
     .description("Extracts a frame with every method and compares signal to noise, flux and leaked light.")
     .argument("<FRAME>", "the raw frame; - is standard input")
     .addOption(outputOption("figures in JSON"));
   addTramlineOptions(command);
   addKernelOptions(command).addOption(forceOption());
-  addCommonOptions(addFrameOptions(command))
-    .addHelpText("after", jsonHelp("compare"))
-    .action((frame: string, options: CompareOptions) =>
-      perform("compare", options, (progress) => compare(frame, options, progress)),
-    );
+  addCommonOptions(addFrameOptions(command)).action((frame: string, options: CompareOptions) =>
+    perform("compare", options, (progress) => compare(frame, options, progress)),
+  );
 }
 
 async function compare(path: string, options: CompareOptions, progress: Progress): Promise<Outcome<"compare">> {

@@ -20,7 +20,7 @@ import type { Tramlines } from "../tramlines/tramlines.js";
 import { demoPage } from "./demoPage.js";
 import { addCommonOptions, forceOption, methodLines } from "./frameOptions.js";
 import { type Bench, frameLines, oneOfEach, openBench, readFrame, traceFlats } from "./frames.js";
-import { type JsonOf, jsonHelp } from "./json.js";
+import type { JsonOf } from "./json.js";
 import { uninterrupted } from "./output.js";
 import { type CommonOptions, type Outcome, perform } from "./perform.js";
 import type { Progress } from "./progress.js";
@@ -54,20 +54,16 @@ const RUNS: Run[] = [
 /** How many times brighter a neighbour must be for its leak to be looked at. */
 const CONTRAST = 100;
 
-export function addDemo(program: Command): void {
-  const command = program
-    .command("demo")
-    .summary("simulated frames to spectra to comparison with the truth")
+export function addDemo(command: Command): void {
+  command
     .description(
       "Simulates a night on a bench spectrograph with 100 crowded fibres, extracts it, and compares the spectra with the truth.",
     )
     .argument("[DIR]", "folder for frames and products", "hatchel-demo")
     .addOption(forceOption());
-  addCommonOptions(command)
-    .addHelpText("after", jsonHelp("demo"))
-    .action((folder: string, options: DemoOptions) =>
-      perform("demo", options, (progress) => demo(folder, options.force === true, progress)),
-    );
+  addCommonOptions(command).action((folder: string, options: DemoOptions) =>
+    perform("demo", options, (progress) => demo(folder, options.force === true, progress)),
+  );
 }
 
 /** What the steps share. */

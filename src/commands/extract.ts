@@ -42,7 +42,6 @@ import {
   type Traced,
   tramlinesFor,
 } from "./frames.js";
-import { jsonHelp } from "./json.js";
 import { checkOutput, uninterrupted } from "./output.js";
 import { type Outcome, perform } from "./perform.js";
 import type { Progress } from "./progress.js";
@@ -55,20 +54,16 @@ interface ExtractOptions extends FrameOptions, TramlineOptions, MethodOptions, E
   force?: boolean;
 }
 
-export function addExtract(program: Command): void {
-  const command = program
-    .command("extract")
-    .summary("one spectrum per fibre from a frame")
+export function addExtract(command: Command): void {
+  command
     .description("Extracts one spectrum per fibre, with its variance, from a raw frame.")
     .argument("<FRAME>", "the raw frame; - is standard input")
     .addOption(outputOption("spectra").makeOptionMandatory());
   addTramlineOptions(command);
   addExtraOptions(addMethodOptions(command)).addOption(forceOption());
-  addCommonOptions(addFrameOptions(command))
-    .addHelpText("after", jsonHelp("extract"))
-    .action((frame: string, options: ExtractOptions) =>
-      perform("extract", options, (progress) => extract(frame, options, progress)),
-    );
+  addCommonOptions(addFrameOptions(command)).action((frame: string, options: ExtractOptions) =>
+    perform("extract", options, (progress) => extract(frame, options, progress)),
+  );
 }
 
 async function extract(path: string, options: ExtractOptions, progress: Progress): Promise<Outcome<"extract">> {

@@ -4,7 +4,7 @@ import { type LookReport, lookAt } from "../detector/look.js";
 import type { AmplifierNoise } from "../detector/noise.js";
 import { readSpectrograph } from "../spectrograph.js";
 import { addCommonOptions, hduOption } from "./frameOptions.js";
-import { type JsonOf, jsonHelp } from "./json.js";
+import type { JsonOf } from "./json.js";
 import { type CommonOptions, type Outcome, perform } from "./perform.js";
 import { counted, fixed, percentage, textPairs, textTable } from "./textTable.js";
 
@@ -15,10 +15,8 @@ interface LookOptions extends CommonOptions {
   hdu?: number;
 }
 
-export function addLook(program: Command): void {
-  const command = program
-    .command("look")
-    .summary("what is in a frame, and what would be assumed of it")
+export function addLook(command: Command): void {
+  command
     .description(
       "Shows what a raw frame holds and what would be assumed of it. Two bias frames measure the read noise, two flats the gain.",
     )
@@ -27,9 +25,9 @@ export function addLook(program: Command): void {
     .option("--bias <file...>", "two or more bias frames, to measure the read noise")
     .option("--flat <file...>", "two or more flats of the same light, to measure the gain")
     .addOption(hduOption());
-  addCommonOptions(command)
-    .addHelpText("after", jsonHelp("look"))
-    .action((frame: string, options: LookOptions) => perform("look", options, () => look(frame, options)));
+  addCommonOptions(command).action((frame: string, options: LookOptions) =>
+    perform("look", options, () => look(frame, options)),
+  );
 }
 
 async function look(frame: string, options: LookOptions): Promise<Outcome<"look">> {

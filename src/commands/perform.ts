@@ -33,7 +33,7 @@ export async function perform<C extends CommandName>(
   if (options.json && options.output === "-") {
     throw new UsageError(`hatchel ${command}: --json and -o - both write to standard output; give -o a file's name.`);
   }
-  const progress = openProgress(options.quiet === true);
+  const progress = await openProgress(options.quiet === true);
   let outcome: Outcome<C>;
   try {
     outcome = await work(progress);

@@ -1,5 +1,5 @@
 /** A progress bar on standard error, for a person at a terminal only. */
-import { SingleBar } from "cli-progress";
+import type { SingleBar } from "cli-progress";
 
 export interface Progress {
   /** Begins the next part of the work. */
@@ -12,8 +12,9 @@ export interface Progress {
 
 const silent: Progress = { stage() {}, share() {}, end() {} };
 
-export function openProgress(quiet: boolean): Progress {
+export async function openProgress(quiet: boolean): Promise<Progress> {
   if (quiet || !process.stderr.isTTY) return silent;
+  const { default: progress } = await import("cli-progress");
   let bar: SingleBar | undefined;
   const end = () => {
     bar?.stop();
@@ -22,7 +23,7 @@ export function openProgress(quiet: boolean): Progress {
   return {
     stage(label) {
       end();
-      bar = new SingleBar({
+      bar = new progress.SingleBar({
         format: `${label.padEnd(28)} {bar} {percentage} %`,
         stream: process.stderr,
         clearOnComplete: true,

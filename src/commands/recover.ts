@@ -29,7 +29,6 @@ import {
   requireTramlineSource,
   tramlinesFor,
 } from "./frames.js";
-import { jsonHelp } from "./json.js";
 import { checkOutput, uninterrupted, writeText } from "./output.js";
 import { jsonText, type Outcome, perform } from "./perform.js";
 import type { Progress } from "./progress.js";
@@ -42,10 +41,8 @@ interface RecoverOptions extends FrameOptions, TramlineOptions, MethodOptions {
   force?: boolean;
 }
 
-export function addRecover(program: Command): void {
-  const command = program
-    .command("recover")
-    .summary("can the extraction of a frame be trusted")
+export function addRecover(command: Command): void {
+  command
     .description(
       "Puts light of known flux, pixels of a fibre flat that the profiles were not made from, on a frame, extracts it again and says what came back. Exit code 1 when the extraction is not to be trusted.",
     )
@@ -58,11 +55,9 @@ export function addRecover(program: Command): void {
     )
     .addOption(new Option("--seed <n>", "of the injected light's noise").default(1).argParser(seed));
   addMethodOptions(command).addOption(forceOption());
-  addCommonOptions(addFrameOptions(command))
-    .addHelpText("after", jsonHelp("recover"))
-    .action((frame: string, options: RecoverOptions) =>
-      perform("recover", options, (progress) => recover(frame, options, progress)),
-    );
+  addCommonOptions(addFrameOptions(command)).action((frame: string, options: RecoverOptions) =>
+    perform("recover", options, (progress) => recover(frame, options, progress)),
+  );
 }
 
 function seed(text: string): number {

@@ -4,7 +4,6 @@ import type { Command } from "commander";
 import { type SimulationFiles, writeSimulation } from "../simulate/files.js";
 import { readScene, type Scene } from "../simulate/scene.js";
 import { addCommonOptions, forceOption, outputOption } from "./frameOptions.js";
-import { jsonHelp } from "./json.js";
 import { uninterrupted } from "./output.js";
 import { type CommonOptions, type Outcome, perform } from "./perform.js";
 import type { Progress } from "./progress.js";
@@ -15,19 +14,15 @@ interface SimulateOptions extends CommonOptions {
   force?: boolean;
 }
 
-export function addSimulate(program: Command): void {
-  const command = program
-    .command("simulate")
-    .summary("simulate raw frames with known truth")
+export function addSimulate(command: Command): void {
+  command
     .description("Simulates the exposures of a scene: raw frames, the truth behind them, and the spectrograph file.")
     .argument("<SCENE.toml>", "the scene")
     .addOption(outputOption("folders raw and truth", false).makeOptionMandatory())
     .addOption(forceOption());
-  addCommonOptions(command)
-    .addHelpText("after", jsonHelp("simulate"))
-    .action((scene: string, options: SimulateOptions) =>
-      perform("simulate", options, (progress) => simulate(scene, options, progress)),
-    );
+  addCommonOptions(command).action((scene: string, options: SimulateOptions) =>
+    perform("simulate", options, (progress) => simulate(scene, options, progress)),
+  );
 }
 
 async function simulate(path: string, options: SimulateOptions, progress: Progress): Promise<Outcome<"simulate">> {

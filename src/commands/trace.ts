@@ -13,7 +13,6 @@ import {
   profileOption,
 } from "./frameOptions.js";
 import { frameLines, inputPaths, oneOfEach, openBench, type ProfiledTracing, traceFlats } from "./frames.js";
-import { jsonHelp } from "./json.js";
 import { checkOutput, uninterrupted } from "./output.js";
 import { type Outcome, perform } from "./perform.js";
 import type { Progress } from "./progress.js";
@@ -26,20 +25,16 @@ interface TraceCommandOptions extends FrameOptions {
   force?: boolean;
 }
 
-export function addTrace(program: Command): void {
-  const command = program
-    .command("trace")
-    .summary("find, name and trace the fibres of a flat")
+export function addTrace(command: Command): void {
+  command
     .description("Finds, names and traces the fibres of one or more fibre flats.")
     .argument("<FLAT...>", "fibre flats of one readout window; - is standard input")
     .addOption(outputOption("tramlines").makeOptionMandatory())
     .addOption(profileOption())
     .addOption(forceOption());
-  addCommonOptions(addFrameOptions(command))
-    .addHelpText("after", jsonHelp("trace"))
-    .action((flats: string[], options: TraceCommandOptions) =>
-      perform("trace", options, (progress) => trace(flats, options, progress)),
-    );
+  addCommonOptions(addFrameOptions(command)).action((flats: string[], options: TraceCommandOptions) =>
+    perform("trace", options, (progress) => trace(flats, options, progress)),
+  );
 }
 
 async function trace(flats: string[], options: TraceCommandOptions, progress: Progress): Promise<Outcome<"trace">> {

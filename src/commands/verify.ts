@@ -10,26 +10,21 @@ import {
   type TramlineOptions,
 } from "./frameOptions.js";
 import { inputPaths, oneOfEach, openBench, readFrame, requireTramlineSource, tramlinesFor } from "./frames.js";
-import { jsonHelp } from "./json.js";
 import { type Outcome, perform } from "./perform.js";
 import type { Progress } from "./progress.js";
 import { textTable } from "./textTable.js";
 
 interface VerifyOptions extends FrameOptions, TramlineOptions {}
 
-export function addVerify(program: Command): void {
-  const command = program
-    .command("verify")
-    .summary("check the kernels against their reference on a frame")
+export function addVerify(command: Command): void {
+  command
     .description(
       "Runs the fast kernels and the plain reference on the same frame and shows the largest differences. Exit code 1 when a bound is broken.",
     )
     .argument("<FRAME>", "the raw frame; - is standard input");
-  addCommonOptions(addFrameOptions(addTramlineOptions(command)))
-    .addHelpText("after", jsonHelp("verify"))
-    .action((frame: string, options: VerifyOptions) =>
-      perform("verify", options, (progress) => verify(frame, options, progress)),
-    );
+  addCommonOptions(addFrameOptions(addTramlineOptions(command))).action((frame: string, options: VerifyOptions) =>
+    perform("verify", options, (progress) => verify(frame, options, progress)),
+  );
 }
 
 async function verify(path: string, options: VerifyOptions, progress: Progress): Promise<Outcome<"verify">> {

@@ -1,0 +1,64 @@
+/** The commands there are, in the order of the help. A command's module, and all that it needs, is loaded when it is asked
+ * for: a job waits for its own parts only. */
+import type { Command } from "commander";
+import type { CommandName } from "./json.js";
+
+export interface Entry {
+  name: CommandName;
+  /** What it takes, as the list of commands shows it. */
+  takes: string;
+  summary: string;
+  /** Puts description, arguments, options and action to the command. */
+  define: (command: Command) => Promise<void>;
+}
+
+export const contents: Entry[] = [
+  {
+    name: "demo",
+    takes: "[DIR]",
+    summary: "simulated frames to spectra to comparison with the truth",
+    define: async (command) => (await import("./demo.js")).addDemo(command),
+  },
+  {
+    name: "simulate",
+    takes: "<SCENE.toml>",
+    summary: "simulate raw frames with known truth",
+    define: async (command) => (await import("./simulate.js")).addSimulate(command),
+  },
+  {
+    name: "look",
+    takes: "<FRAME>",
+    summary: "what is in a frame, and what would be assumed of it",
+    define: async (command) => (await import("./look.js")).addLook(command),
+  },
+  {
+    name: "trace",
+    takes: "<FLAT...>",
+    summary: "find, name and trace the fibres of a flat",
+    define: async (command) => (await import("./trace.js")).addTrace(command),
+  },
+  {
+    name: "extract",
+    takes: "<FRAME>",
+    summary: "one spectrum per fibre from a frame",
+    define: async (command) => (await import("./extract.js")).addExtract(command),
+  },
+  {
+    name: "compare",
+    takes: "<FRAME>",
+    summary: "the methods side by side on a frame",
+    define: async (command) => (await import("./compare.js")).addCompare(command),
+  },
+  {
+    name: "verify",
+    takes: "<FRAME>",
+    summary: "check the kernels against their reference on a frame",
+    define: async (command) => (await import("./verify.js")).addVerify(command),
+  },
+  {
+    name: "recover",
+    takes: "<FRAME>",
+    summary: "can the extraction of a frame be trusted",
+    define: async (command) => (await import("./recover.js")).addRecover(command),
+  },
+];
