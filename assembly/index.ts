@@ -10,6 +10,8 @@ export { median } from "./median";
 export { pixelsToFloat32, pixelsToFloat64 } from "./pixels";
 export { gaussianWeights64 } from "./profile";
 export { rankUpdate } from "./rankUpdate";
+export { fitShapeColumns } from "./shapeColumn";
+export { shapeNormals } from "./shapeNormal";
 
 /** First byte behind the compiler's own tables: where a workbench may begin. */
 export function heapBase(): usize {

@@ -1,57 +1,69 @@
-/** N += Σ_i w_i g_i g_iᵀ on the lower triangle: what least squares with many unknowns spends its time on. Four rows of G
- * at a time, two unknowns a v128. */
+/** N ± Σ g gᵀ over rows g: what least squares with many unknowns spends its time on.
+ *
+ * N is symmetric and lies in blocks of 4 × 4, those on and below the diagonal one after the other, row by row:
+ *
+ *     0          block I ≥ J:  outPtr + (I·(I + 1)/2 + J)·128,   N[4I + r][4J + c] at (4r + c)·8 in it
+ *     1 2
+ *     3 4 5
+ *
+ * A block stays in eight registers while some rows pass, few enough of them to stay in the nearest cache. */
 
-/** `gPtr`: nRow × n f64, n even; `weightPtr`: nRow f64; `outPtr`: n × n f64, of which columns 0 … row are kept up. */
-export function rankUpdate(gPtr: usize, weightPtr: usize, nRow: i32, n: i32, outPtr: usize): void {
-  const rowBytes = (<usize>n) << 3;
-  let row: i32 = 0;
-  for (; row + 4 <= nRow; row += 4) {
-    const g = gPtr + <usize>row * rowBytes;
-    const w = weightPtr + ((<usize>row) << 3);
-    for (let r: i32 = 0; r < n; r++) {
-      const at = g + ((<usize>r) << 3);
-      const a0 = load<f64>(w) * load<f64>(at);
-      const a1 = load<f64>(w, 8) * load<f64>(at + rowBytes);
-      const a2 = load<f64>(w, 16) * load<f64>(at + 2 * rowBytes);
-      const a3 = load<f64>(w, 24) * load<f64>(at + 3 * rowBytes);
-      if (a0 == 0.0 && a1 == 0.0 && a2 == 0.0 && a3 == 0.0) continue;
-      addFour(
-        outPtr + <usize>r * rowBytes,
-        g,
-        rowBytes,
-        r,
-        f64x2.splat(a0),
-        f64x2.splat(a1),
-        f64x2.splat(a2),
-        f64x2.splat(a3),
-      );
-    }
-  }
-  for (; row < nRow; row++) {
-    const g = gPtr + <usize>row * rowBytes;
-    for (let r: i32 = 0; r < n; r++) {
-      const a = load<f64>(weightPtr + ((<usize>row) << 3)) * load<f64>(g + ((<usize>r) << 3));
-      if (a == 0.0) continue;
-      addOne(outPtr + <usize>r * rowBytes, g, r, f64x2.splat(a));
+const panelRows: i32 = 32;
+
+/** Bytes of N with `nBlock` blocks a side. */
+export function blocksBytes(nBlock: i32): usize {
+  return ((<usize>nBlock * <usize>(nBlock + 1)) >> 1) << 7;
+}
+
+/** `gPtr`: nRow × 4·nBlock f64; `outPtr`: nBlock·(nBlock + 1)/2 blocks, to which sign · Σ g gᵀ is added. */
+export function rankUpdate(gPtr: usize, nRow: i32, nBlock: i32, sign: f64, outPtr: usize): void {
+  const rowBytes = (<usize>nBlock) << 5;
+  for (let row: i32 = 0; row < nRow; row += panelRows) {
+    const from = gPtr + <usize>row * rowBytes;
+    const end = from + <usize>min(panelRows, nRow - row) * rowBytes;
+    let out = outPtr;
+    for (let i: usize = 0; i < rowBytes; i += 32) {
+      for (let j: usize = 0; j <= i; j += 32) {
+        addBlock(from + i, from + j, end, rowBytes, sign, out);
+        out += 128;
+      }
     }
   }
 }
 
-function addFour(out: usize, g: usize, rowBytes: usize, r: i32, a0: v128, a1: v128, a2: v128, a3: v128): void {
-  const end = (<usize>(r + 2) & ~1) << 3; // whole pairs up to the diagonal
-  for (let at: usize = 0; at < end; at += 16) {
-    let sum = v128.load(out + at);
-    sum = f64x2.add(sum, f64x2.mul(a0, v128.load(g + at)));
-    sum = f64x2.add(sum, f64x2.mul(a1, v128.load(g + rowBytes + at)));
-    sum = f64x2.add(sum, f64x2.mul(a2, v128.load(g + 2 * rowBytes + at)));
-    sum = f64x2.add(sum, f64x2.mul(a3, v128.load(g + 3 * rowBytes + at)));
-    v128.store(out + at, sum);
+function addBlock(a: usize, b: usize, end: usize, rowBytes: usize, sign: f64, out: usize): void {
+  let s0 = f64x2.splat(0.0);
+  let s1 = s0;
+  let s2 = s0;
+  let s3 = s0;
+  let s4 = s0;
+  let s5 = s0;
+  let s6 = s0;
+  let s7 = s0;
+  for (; a < end; a += rowBytes) {
+    const low = v128.load(b);
+    const high = v128.load(b, 16);
+    let here = v128.load64_splat(a);
+    s0 = f64x2.add(s0, f64x2.mul(here, low));
+    s1 = f64x2.add(s1, f64x2.mul(here, high));
+    here = v128.load64_splat(a, 8);
+    s2 = f64x2.add(s2, f64x2.mul(here, low));
+    s3 = f64x2.add(s3, f64x2.mul(here, high));
+    here = v128.load64_splat(a, 16);
+    s4 = f64x2.add(s4, f64x2.mul(here, low));
+    s5 = f64x2.add(s5, f64x2.mul(here, high));
+    here = v128.load64_splat(a, 24);
+    s6 = f64x2.add(s6, f64x2.mul(here, low));
+    s7 = f64x2.add(s7, f64x2.mul(here, high));
+    b += rowBytes;
   }
-}
-
-function addOne(out: usize, g: usize, r: i32, a: v128): void {
-  const end = (<usize>(r + 2) & ~1) << 3;
-  for (let at: usize = 0; at < end; at += 16) {
-    v128.store(out + at, f64x2.add(v128.load(out + at), f64x2.mul(a, v128.load(g + at))));
-  }
+  const signs = f64x2.splat(sign);
+  v128.store(out, f64x2.add(v128.load(out), f64x2.mul(signs, s0)));
+  v128.store(out, f64x2.add(v128.load(out, 16), f64x2.mul(signs, s1)), 16);
+  v128.store(out, f64x2.add(v128.load(out, 32), f64x2.mul(signs, s2)), 32);
+  v128.store(out, f64x2.add(v128.load(out, 48), f64x2.mul(signs, s3)), 48);
+  v128.store(out, f64x2.add(v128.load(out, 64), f64x2.mul(signs, s4)), 64);
+  v128.store(out, f64x2.add(v128.load(out, 80), f64x2.mul(signs, s5)), 80);
+  v128.store(out, f64x2.add(v128.load(out, 96), f64x2.mul(signs, s6)), 96);
+  v128.store(out, f64x2.add(v128.load(out, 112), f64x2.mul(signs, s7)), 112);
 }

@@ -5,7 +5,7 @@
 
 export const nShapeTerm: i32 = 7;
 const headNumbers: i32 = 11;
-const widthUnit: f64 = 0.05;
+export const widthUnit: f64 = 0.05;
 
 /** Light of the profile on pixels `first` … `first + n − 1`; x, y ∈ [−1, 1] over the frame, centre and width in pixels.
  * `outPtr`: n of T; `termsPtr`: scratch of nShapeTerm f64. */

@@ -20,7 +20,13 @@ export interface KernelExports {
   extractColumns64(jobPtr: number, x0: number, x1: number): void;
 
   /** assembly/rankUpdate.ts */
-  rankUpdate(gPtr: number, weightPtr: number, nRow: number, n: number, outPtr: number): void;
+  rankUpdate(gPtr: number, nRow: number, nBlock: number, sign: number, outPtr: number): void;
+
+  /** assembly/shapeColumn.ts */
+  fitShapeColumns(jobPtr: number, tile: number): void;
+
+  /** assembly/shapeNormal.ts */
+  shapeNormals(jobPtr: number, tile: number): void;
 
   /** assembly/profile.ts */
   gaussianWeights64(centre: number, sigma: number, first: number, n: number, outPtr: number): void;

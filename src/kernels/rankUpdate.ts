@@ -1,32 +1,37 @@
 /** Door to assembly/rankUpdate.ts: a growing normal matrix. */
 import type { Kernels, Workbench } from "./module.js";
 
+/** Where the kernel keeps N[row][column], row ≥ column: in blocks of 4 × 4. */
+export function blockIndex(row: number, column: number): number {
+  const [i, j] = [row >> 2, column >> 2];
+  return 16 * ((i * (i + 1)) / 2 + j) + 4 * (row & 3) + (column & 3);
+}
+
 export class NormalMatrix {
   /** nMost × n: fill rows, then `add` them. */
   readonly rows: Float64Array;
-  /** nMost */
-  readonly weights: Float64Array;
-  /** n × n; column ≤ row is kept up, and of the rest nothing may be believed. */
-  readonly normal: Float64Array;
+  /** Blocks as `blockIndex` counts them. */
+  readonly blocks: Float64Array;
   private readonly bench: Workbench;
+  private readonly nBlock: number;
 
-  /** n unknowns, rounded up to an even number; at most `nMost` rows are added at a time. */
+  /** n unknowns, four to a block; at most `nMost` rows are added at a time. */
   constructor(
     kernels: Kernels,
     readonly n: number,
-    nMost: number,
+    private readonly nMost: number,
   ) {
-    if (n % 2 !== 0) throw new RangeError(`A normal matrix of ${n} unknowns; the kernel wants an even number.`);
-    this.bench = kernels.workbench(8 * (nMost * n + nMost + n * n), 3);
+    if (n % 4 !== 0) throw new RangeError(`A normal matrix of ${n} unknowns; the kernel wants a multiple of 4.`);
+    this.nBlock = n / 4;
+    const nNumber = 8 * this.nBlock * (this.nBlock + 1);
+    this.bench = kernels.workbench(8 * (nMost * n + nNumber), 2);
     this.rows = this.bench.float64(nMost * n);
-    this.weights = this.bench.float64(nMost);
-    this.normal = this.bench.float64(n * n);
+    this.blocks = this.bench.float64(nNumber);
   }
 
-  /** normal += Σ weight · row rowᵀ over the first `nRow` rows. */
-  add(nRow: number): void {
-    if (nRow > this.weights.length) throw new RangeError(`${nRow} rows, but there is room for ${this.weights.length}.`);
-    const { rows, weights, normal, n } = this;
-    this.bench.call.rankUpdate(rows.byteOffset, weights.byteOffset, nRow, n, normal.byteOffset);
+  /** N += sign · Σ row rowᵀ over the first `nRow` rows. */
+  add(nRow: number, sign: 1 | -1): void {
+    if (nRow > this.nMost) throw new RangeError(`${nRow} rows, but there is room for ${this.nMost}.`);
+    this.bench.call.rankUpdate(this.rows.byteOffset, nRow, this.nBlock, sign, this.blocks.byteOffset);
   }
 }

@@ -1,17 +1,10 @@
-/** N += Σ_i w_i g_i g_iᵀ: the normal matrix of a least-squares problem with design rows g_i and weights w_i. */
+/** N ± Σ g gᵀ over rows g: the normal matrix of a least-squares problem with design rows g. */
 
-/** `g`: nRow × n; `weights`: nRow; `normal`: n × n, of which the lower triangle (column ≤ row) is kept up. */
-export function rankUpdate(
-  g: Float64Array,
-  weights: Float64Array,
-  nRow: number,
-  n: number,
-  normal: Float64Array,
-): void {
+/** `g`: nRow × n; `normal`: n × n, to whose lower triangle (column ≤ row) sign · Σ g gᵀ is added. */
+export function rankUpdate(g: Float64Array, nRow: number, n: number, sign: number, normal: Float64Array): void {
   for (let i = 0; i < nRow; i++) {
     for (let r = 0; r < n; r++) {
-      const a = weights[i] * g[i * n + r];
-      for (let c = 0; c <= r; c++) normal[r * n + c] += a * g[i * n + c];
+      for (let c = 0; c <= r; c++) normal[r * n + c] += sign * g[i * n + r] * g[i * n + c];
     }
   }
 }

@@ -1,7 +1,7 @@
 /** Any profile model as one table of a cumulative shape, for work that needs slopes too. */
 import type { Kernels } from "../kernels/module.js";
 import { nShapeTerm, type ShapeTable } from "../reference/shape.js";
-import type { Lines } from "./shape/column.js";
+import type { Lines } from "../reference/shapeProfiles.js";
 import type { Profile, Tramlines } from "./tramlines.js";
 
 const reachSigma = 8;

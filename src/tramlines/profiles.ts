@@ -103,14 +103,14 @@ function gaussianCandidate(kernels: Kernels, flat: Flat, tramlines: Tramlines): 
   const lines = linesOf(tramlines, activeFibres(tramlines));
   const table = profileTable(kernels, tramlines.profile);
   const background = backgroundUnder(kernels, flat, lines, table);
-  const misfits = heldOutMisfits(judgeColumns(flat, lines, table, background), lines.nFibre);
+  const misfits = heldOutMisfits(judgeColumns(kernels, flat, lines, table, background), lines.nFibre);
   return { kind: "gaussian", tramlines, misfits };
 }
 
 function candidate(kernels: Kernels, flat: Flat, tramlines: Tramlines, kind: ShapeProfile["kind"]): Candidate {
   const measured = measureShape(kernels, flat, tramlines, kind);
   const { lines, table, state } = measured;
-  const judged = judgeColumns(flat, lines, table, state.background);
+  const judged = judgeColumns(kernels, flat, lines, table, state.background);
   return {
     kind,
     tramlines: withShape(tramlines, measured, relativeError(judged), kind),

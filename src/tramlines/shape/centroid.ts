@@ -4,7 +4,7 @@ import { LegendreFitter } from "../../kernels/legendre.js";
 import type { Kernels } from "../../kernels/module.js";
 import { legendreArgument, legendreValue } from "../../reference/legendre.js";
 import { centroidOf, nShapeTerm, type ShapeTable, shapeTerms } from "../../reference/shape.js";
-import type { Lines } from "./column.js";
+import type { Lines } from "../../reference/shapeProfiles.js";
 
 const nSample = 33;
 

@@ -3,10 +3,11 @@
 
 import { LegendreFitter } from "../../kernels/legendre.js";
 import type { Kernels } from "../../kernels/module.js";
+import { fitShapeColumns } from "../../kernels/shapeColumn.js";
 import { legendreArgument, legendreValue } from "../../reference/legendre.js";
 import type { ShapeTable } from "../../reference/shape.js";
-import { type ColumnData, type Lines, solveLocal } from "./column.js";
-import { backgroundColumn, settleColumn, wholeProfiles } from "./step.js";
+import type { ColumnData } from "../../reference/shapeColumn.js";
+import type { Lines } from "../../reference/shapeProfiles.js";
 
 /** Shifts and changes of width of all fibres in one column, pixels, with their variances. */
 export interface LocalGeometry {
@@ -18,28 +19,27 @@ export interface LocalGeometry {
   wideningVariance: Float64Array;
 }
 
-/** Joint fit of flux, shift and change of width of every fibre in one column. */
-export function measureColumn(
+/** Joint fits of flux, shift and change of width of every fibre, column by column. */
+export function measureColumns(
+  kernels: Kernels,
   lines: Lines,
   table: ShapeTable,
   background: Float64Array,
-  data: ColumnData,
-): LocalGeometry {
-  const profiles = wholeProfiles(lines, table, data.x);
-  const smooth = backgroundColumn(background, data.x, lines);
-  const level = data.light.map((light, y) => light - smooth[y]);
-  const { flux, model } = settleColumn(profiles, data, level, smooth);
-  const residual = level.map((light, y) => light - model[y]);
-  const { value, variance } = solveLocal(profiles, flux, residual, data.inverseVariance, 3);
-  const pick = (from: Float64Array, p: number) => flux.map((_, k) => from[3 * k + p]);
-  return {
-    x: data.x,
-    flux: flux.map((f, k) => f + value[3 * k]),
-    shift: pick(value, 1),
-    shiftVariance: pick(variance, 1),
-    widening: pick(value, 2),
-    wideningVariance: pick(variance, 2),
-  };
+  columns: ColumnData[],
+): LocalGeometry[] {
+  return fitShapeColumns(kernels, { lines, table, background, columns, nPar: 3 }).map(
+    ({ x, flux, solution, variance }) => {
+      const pick = (from: Float64Array, p: number) => flux.map((_, k) => from[3 * k + p]);
+      return {
+        x,
+        flux: flux.map((f, k) => f + solution[3 * k]),
+        shift: pick(solution, 1),
+        shiftVariance: pick(variance, 1),
+        widening: pick(solution, 2),
+        wideningVariance: pick(variance, 2),
+      };
+    },
+  );
 }
 
 /** Scatter that a fibre's shifts and widths have beyond their noise, pixels: keeps a few bright columns from ruling. */

@@ -9,7 +9,7 @@
  * too short further out, where it takes light from faint fibres. */
 import type { Kernels } from "../../kernels/module.js";
 import { nShapeTerm } from "../../reference/shape.js";
-import type { ShapeBasis } from "./basis.js";
+import type { ShapeBasis } from "../../reference/shapeBasis.js";
 
 const reachSigma = 20;
 const pointsPerSigma = 32;

@@ -1,13 +1,16 @@
 /** How well a profile model tells what it has not seen: columns of the flat that no model was fitted to. There only the
  * fibres' fluxes are fitted; form, lines, widths and the background stay as other columns made them. */
+
 import type { Kernels } from "../../kernels/module.js";
+import { fitShapeColumns } from "../../kernels/shapeColumn.js";
 import type { ShapeTable } from "../../reference/shape.js";
+import { backgroundColumn, nBackground } from "../../reference/shapeBackground.js";
+import type { ShapeBasis } from "../../reference/shapeBasis.js";
+import type { Lines } from "../../reference/shapeProfiles.js";
 import type { Flat } from "../flat.js";
-import type { ShapeBasis } from "./basis.js";
-import type { Lines } from "./column.js";
 import { fittingColumns, judgingColumns } from "./columns.js";
-import { flatColumn } from "./measure.js";
-import { backgroundColumn, nBackground, ShapeNormal, type ShapeState, settleColumn, wholeProfiles } from "./step.js";
+import { flatColumns } from "./measure.js";
+import { ShapeNormal, type ShapeState } from "./normal.js";
 
 /** A pixel's squared residual counts up to this many variances: a cosmic ray must not judge. */
 const mostSquare = 36;
@@ -27,17 +30,22 @@ export interface Judged {
 }
 
 /** The held-out columns. `background`: as ShapeState has it. */
-export function judgeColumns(flat: Flat, lines: Lines, table: ShapeTable, background: Float64Array): Judged[] {
-  return judgingColumns(flat.nx).flatMap((columns, group) =>
-    columns.map((x) => {
-      const data = flatColumn(flat, x);
-      const profiles = wholeProfiles(lines, table, x);
+export function judgeColumns(
+  kernels: Kernels,
+  flat: Flat,
+  lines: Lines,
+  table: ShapeTable,
+  background: Float64Array,
+): Judged[] {
+  const groups = judgingColumns(flat.nx);
+  const columns = flatColumns(flat, groups.flat());
+  const groupOf = groups.flatMap((group, i) => group.map(() => i));
+  return fitShapeColumns(kernels, { lines, table, background, columns, nPar: 1 }).map(
+    ({ model, inverseVariance, x }, i) => {
       const under = backgroundColumn(background, x, lines);
-      const level = data.light.map((light, y) => light - under[y]);
-      const { model } = settleColumn(profiles, data, level, under);
-      const residual = level.map((light, y) => light - model[y]);
-      return { group, residual, inverseVariance: data.inverseVariance, model };
-    }),
+      const residual = columns[i].light.map((light, y) => light - under[y] - model[y]);
+      return { group: groupOf[i], residual, inverseVariance, model };
+    },
   );
 }
 
@@ -84,10 +92,9 @@ export function backgroundUnder(kernels: Kernels, flat: Flat, lines: Lines, tabl
   const basis = noFunctions(table);
   let state: ShapeState = { coefficients: new Float64Array(0), background: new Float64Array(nBackground) };
   for (let round = 0; round < backgroundRounds; round++) {
-    const normal = new ShapeNormal(kernels, basis, flat.ny, lines.nFibre);
-    for (const x of fittingColumns(flat.nx, backgroundColumns, round)) {
-      normal.add(lines, table, state.background, flatColumn(flat, x), true);
-    }
+    const normal = new ShapeNormal(kernels, basis);
+    const columns = flatColumns(flat, fittingColumns(flat.nx, backgroundColumns, round));
+    normal.add(lines, table, state.background, columns, true);
     state = normal.solve(state, table);
   }
   return state.background;

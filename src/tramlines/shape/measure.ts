@@ -3,17 +3,20 @@ import type { Kernels } from "../../kernels/module.js";
 import { factorBand, solveBand } from "../../reference/banded.js";
 import { median } from "../../reference/median.js";
 import { nShapeTerm, type ShapeTable } from "../../reference/shape.js";
+import { nBackground } from "../../reference/shapeBackground.js";
+import type { ShapeBasis } from "../../reference/shapeBasis.js";
+import { type ColumnData, emptyColumn } from "../../reference/shapeColumn.js";
+import type { Lines } from "../../reference/shapeProfiles.js";
 import { TraceError } from "../errors.js";
 import { type Flat, pixelVariance } from "../flat.js";
 import { activeFibres, linesOf } from "../profileTable.js";
 import type { KnownShape, ShapeProfile, Tramlines } from "../tramlines.js";
-import { type ShapeBasis, shapeBasis, tabulate } from "./basis.js";
+import { shapeBasis, tabulate } from "./basis.js";
 import { referToCentroid } from "./centroid.js";
-import { type ColumnData, emptyColumn, type Lines } from "./column.js";
 import { fittingColumns } from "./columns.js";
-import { applyGeometry, measureColumn, type TraceScatter } from "./geometry.js";
+import { applyGeometry, measureColumns, type TraceScatter } from "./geometry.js";
 import { hermiteBasis, hermiteStart } from "./hermiteBasis.js";
-import { nBackground, ShapeNormal, type ShapeState } from "./step.js";
+import { ShapeNormal, type ShapeState } from "./normal.js";
 
 /** Columns of the flat that each round looks at, for the shape and for the geometry; the last round's numbers stand. */
 const shapeColumns = [32, 32, 32, 96];
@@ -56,10 +59,9 @@ export function measureShape(
   let scatter: TraceScatter = { rms: new Float64Array(lines.nFibre), nPoint: new Int32Array(lines.nFibre) };
   let information: Float64Array = new Float64Array(0);
   for (let round = 0; round < shapeColumns.length; round++) {
-    const normal = new ShapeNormal(kernels, basis, flat.ny, lines.nFibre);
-    for (const x of fittingColumns(flat.nx, shapeColumns[round], round)) {
-      normal.add(lines, table, state.background, flatColumn(flat, x), false, round > 0 ? 6 : 0);
-    }
+    const normal = new ShapeNormal(kernels, basis);
+    const telling = flatColumns(flat, fittingColumns(flat.nx, shapeColumns[round], round));
+    normal.add(lines, table, state.background, telling, false, round > 0 ? 6 : 0);
     const step = normal.solve(state, table);
     history.push(step.chi2 / step.freedom);
     if (!step.coefficients.every(Number.isFinite)) {
@@ -70,28 +72,30 @@ export function measureShape(
     information = normal.shapeInformation();
     state = step;
     table = tabulate(basis, state.coefficients);
-    const columns = fittingColumns(flat.nx, geometryColumns[round], round).map((x) =>
-      measureColumn(lines, table, state.background, flatColumn(flat, x)),
-    );
-    scatter = applyGeometry(kernels, lines, columns, referenceWidth);
+    const columns = flatColumns(flat, fittingColumns(flat.nx, geometryColumns[round], round));
+    const geometry = measureColumns(kernels, lines, table, state.background, columns);
+    scatter = applyGeometry(kernels, lines, geometry, referenceWidth);
   }
   const known = { best: state.coefficients, information };
   return { ...referToCentroid(kernels, lines, table), basis, state, known, history, scatter };
 }
 
-/** One column of a combined flat, with what makes its variances. */
-export function flatColumn(flat: Flat, x: number): ColumnData {
+/** Columns of a combined flat, with what makes their variances. */
+export function flatColumns(flat: Flat, which: number[]): ColumnData[] {
   const { nx, ny, frame } = flat;
-  const data = emptyColumn(x, ny);
+  const columns = which.map((x) => emptyColumn(x, ny));
   for (let y = 0; y < ny; y++) {
-    const at = y * nx + x;
-    const n = flat.nUsed[at];
-    data.good[y] = flat.mask[at] === 0 && n > 0 && Number.isFinite(flat.electrons[at]) ? 1 : 0;
-    data.light[y] = data.good[y] ? flat.electrons[at] : 0;
-    data.fixedVariance[y] = pixelVariance(frame, at, 0) / Math.max(n, 1);
-    data.variancePerElectron[y] = (frame.noise.inverseResponse?.[at] ?? 1) / Math.max(n, 1);
+    for (const column of columns) {
+      const at = y * nx + column.x;
+      const n = flat.nUsed[at];
+      const good = flat.mask[at] === 0 && n > 0 && Number.isFinite(flat.electrons[at]);
+      column.good[y] = good ? 1 : 0;
+      column.light[y] = good ? flat.electrons[at] : 0;
+      column.fixedVariance[y] = pixelVariance(frame, at, 0) / Math.max(n, 1);
+      column.variancePerElectron[y] = (frame.noise.inverseResponse?.[at] ?? 1) / Math.max(n, 1);
+    }
   }
-  return data;
+  return columns;
 }
 
 /** Series of the active fibres, their widths with room for `nWidth` terms at least. */

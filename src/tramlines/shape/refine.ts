@@ -5,11 +5,14 @@ import type { Kernels } from "../../kernels/module.js";
 import { MaskBit } from "../../reference/bits.js";
 import type { SmoothBackground } from "../../reference/extract.js";
 import { nShapeTerm, type ShapeTable } from "../../reference/shape.js";
+import { nBackground, nBackgroundX, nBackgroundY } from "../../reference/shapeBackground.js";
+import type { ShapeBasis } from "../../reference/shapeBasis.js";
+import { type ColumnData, emptyColumn } from "../../reference/shapeColumn.js";
+import type { Lines } from "../../reference/shapeProfiles.js";
 import type { KnownShape } from "../tramlines.js";
-import { type ShapeBasis, shapeBasis, tabulate } from "./basis.js";
-import { type ColumnData, emptyColumn, type Lines } from "./column.js";
+import { shapeBasis, tabulate } from "./basis.js";
 import { hermiteBasis, nHermiteFunction } from "./hermiteBasis.js";
-import { nBackground, nBackgroundY, ShapeNormal, type ShapeState } from "./step.js";
+import { ShapeNormal, type ShapeState } from "./normal.js";
 
 const steps = 2;
 const columns = 96;
@@ -29,11 +32,9 @@ export function refineShape(
   let state: ShapeState = { coefficients: known.best, background: widenBackground(background) };
   let refined = table;
   for (let round = 0; round < steps; round++) {
-    const normal = new ShapeNormal(kernels, basis, frame.ny, lines.nFibre);
-    for (let i = 0; i < columns; i++) {
-      const x = Math.floor(((i + 0.3 + 0.4 * round) * frame.nx) / columns);
-      normal.add(lines, refined, state.background, frameColumn(frame, rejected, x), true, clip);
-    }
+    const normal = new ShapeNormal(kernels, basis);
+    const which = Array.from({ length: columns }, (_, i) => Math.floor(((i + 0.3 + 0.4 * round) * frame.nx) / columns));
+    normal.add(lines, refined, state.background, frameColumns(frame, rejected, which), true, clip);
     state = normal.solve(state, refined, known);
     refined = { ...tabulate(basis, state.coefficients), centroid: table.centroid };
   }
@@ -46,24 +47,34 @@ function basisOf(kernels: Kernels, { best }: KnownShape, referenceWidth: number)
   return gaussHermite ? hermiteBasis(kernels, referenceWidth) : shapeBasis(referenceWidth);
 }
 
-/** One column of a frame, with what makes its variances. */
-export function frameColumn(frame: Frame, rejected: Uint8Array | null, x: number): ColumnData {
+/** Columns of a frame, with what makes their variances. `rejected`: ny × nx bits of MaskBit, or none. */
+export function frameColumns(frame: Frame, rejected: Uint8Array | null, which: number[]): ColumnData[] {
   const { nx, ny, noise } = frame;
-  const data = emptyColumn(x, ny);
+  const columns = which.map((x) => emptyColumn(x, ny));
   for (let y = 0; y < ny; y++) {
-    const at = y * nx + x;
-    const hit = rejected !== null && (rejected[at] & (MaskBit.cosmic | MaskBit.grown)) !== 0;
-    data.good[y] = frame.mask[at] === 0 && !hit ? 1 : 0;
-    data.light[y] = data.good[y] ? frame.electrons[at] : 0;
-    data.fixedVariance[y] = noise.fixedVarianceImage?.[at] ?? noise.fixedVariance[noise.bandOfRow[y] * nx + x];
-    data.variancePerElectron[y] = noise.inverseResponse?.[at] ?? 1;
+    const band = noise.bandOfRow[y] * nx;
+    for (const column of columns) {
+      const at = y * nx + column.x;
+      const hit = rejected !== null && (rejected[at] & (MaskBit.cosmic | MaskBit.grown)) !== 0;
+      const good = frame.mask[at] === 0 && !hit;
+      column.good[y] = good ? 1 : 0;
+      column.light[y] = good ? frame.electrons[at] : 0;
+      column.fixedVariance[y] = noise.fixedVarianceImage?.[at] ?? noise.fixedVariance[band + column.x];
+      column.variancePerElectron[y] = noise.inverseResponse?.[at] ?? 1;
+    }
   }
-  return data;
+  return columns;
 }
 
-/** The same surface in the orders of the shape's background. */
+export function frameColumn(frame: Frame, rejected: Uint8Array | null, x: number): ColumnData {
+  return frameColumns(frame, rejected, [x])[0];
+}
+
+/** The same surface in the orders of the shape's background; higher ones are cut off. */
 export function widenBackground({ nX, nY, coefficients }: SmoothBackground): Float64Array {
   const wide = new Float64Array(nBackground);
-  for (let i = 0; i < nX; i++) for (let j = 0; j < nY; j++) wide[i * nBackgroundY + j] = coefficients[i * nY + j];
+  for (let i = 0; i < Math.min(nX, nBackgroundX); i++) {
+    for (let j = 0; j < Math.min(nY, nBackgroundY); j++) wide[i * nBackgroundY + j] = coefficients[i * nY + j];
+  }
   return wide;
 }

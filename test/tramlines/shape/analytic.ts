@@ -1,7 +1,8 @@
 /** A shape that is known in closed form, with every term at work, and lines to go with it. Invented data. */
+
 import { nShapeTerm, type ShapeTable } from "../../../src/reference/shape.js";
+import type { Lines } from "../../../src/reference/shapeProfiles.js";
 import { normalCumulative, normalDensity } from "../../../src/simulate/gaussian.js";
-import type { Lines } from "../../../src/tramlines/shape/column.js";
 
 const referenceWidth = 1.1;
 const reach = 14;

@@ -1,6 +1,7 @@
 import { describe, expect, it } from "vitest";
 import { nShapeTerm } from "../../../src/reference/shape.js";
-import { basisAt, emptyEdge, nSpline, shapeBasis, tabulate } from "../../../src/tramlines/shape/basis.js";
+import { basisAt, emptyEdge } from "../../../src/reference/shapeBasis.js";
+import { nSpline, shapeBasis, tabulate } from "../../../src/tramlines/shape/basis.js";
 import { judgeMissing, python } from "../../judges.js";
 
 const width = 1.17;

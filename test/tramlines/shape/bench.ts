@@ -1,11 +1,11 @@
 /** A small bench with a profile that is no Gaussian (skewed core, wings, scattered light), and two fibre flats of it. Invented. */
 import type { Frame } from "../../../src/detector/frame.js";
 import type { Kernels } from "../../../src/kernels/module.js";
+import { columnProfiles } from "../../../src/reference/shapeProfiles.js";
 import { type SimulatedExposure, simulateExposure, type Truth } from "../../../src/simulate/exposure.js";
 import { parseScene, type Scene } from "../../../src/simulate/scene.js";
 import { SCENES } from "../../../src/simulate/scenes.js";
 import { combineFlats } from "../../../src/tramlines/flat.js";
-import { columnProfiles } from "../../../src/tramlines/shape/column.js";
 import { type MeasuredShape, measureShape } from "../../../src/tramlines/shape/measure.js";
 import type { Tramlines } from "../../../src/tramlines/tramlines.js";
 import { frameFromTruth, tramlinesFromTruth } from "../../extraction/fromTruth.js";

@@ -2,8 +2,8 @@ import { beforeAll, describe, expect, it } from "vitest";
 import { type Kernels, loadKernels } from "../../../src/kernels/module.js";
 import { legendreArgument, legendreValue } from "../../../src/reference/legendre.js";
 import { nShapeTerm } from "../../../src/reference/shape.js";
+import { columnProfiles, type Lines } from "../../../src/reference/shapeProfiles.js";
 import { referToCentroid } from "../../../src/tramlines/shape/centroid.js";
-import { columnProfiles, type Lines } from "../../../src/tramlines/shape/column.js";
 import { analyticLines, analyticTable, trueCentroids } from "./analytic.js";
 
 let kernels: Kernels;

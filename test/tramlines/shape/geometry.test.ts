@@ -1,9 +1,10 @@
 import { beforeAll, describe, expect, it } from "vitest";
 import { type Kernels, loadKernels } from "../../../src/kernels/module.js";
 import { legendreArgument, legendreValue } from "../../../src/reference/legendre.js";
-import { type ColumnData, columnModel, columnProfiles, type Lines } from "../../../src/tramlines/shape/column.js";
-import { applyGeometry, type LocalGeometry, measureColumn } from "../../../src/tramlines/shape/geometry.js";
-import { nBackground } from "../../../src/tramlines/shape/step.js";
+import { nBackground } from "../../../src/reference/shapeBackground.js";
+import type { ColumnData } from "../../../src/reference/shapeColumn.js";
+import { columnModel, columnProfiles, type Lines } from "../../../src/reference/shapeProfiles.js";
+import { applyGeometry, type LocalGeometry, measureColumns } from "../../../src/tramlines/shape/geometry.js";
 import { normalDeviate, seeded } from "../../scene.js";
 import { analyticLines, analyticTable } from "./analytic.js";
 
@@ -51,17 +52,17 @@ describe("one column's geometry", () => {
   const errors = { shift: [] as number[], widening: [] as number[] };
 
   beforeAll(() => {
-    for (let i = 0; i < 160; i++) {
-      const brightness = (k: number) => 4000 * (1 + 0.5 * Math.sin(2 * k + i));
-      const found = measureColumn(off, table, background, drawColumn(i % 90, 500 + i, brightness));
+    const brightness = (i: number) => (k: number) => 4000 * (1 + 0.5 * Math.sin(2 * k + i));
+    const drawn = Array.from({ length: 160 }, (_, i) => drawColumn(i % 90, 500 + i, brightness(i)));
+    measureColumns(kernels, off, table, background, drawn).forEach((found, i) => {
       for (let k = 0; k < nFibre; k++) {
         pulls.shift.push((found.shift[k] - offShift(k)) / Math.sqrt(found.shiftVariance[k]));
         pulls.widening.push((found.widening[k] - offWidth(k)) / Math.sqrt(found.wideningVariance[k]));
         errors.shift.push(Math.sqrt(found.shiftVariance[k]));
         errors.widening.push(Math.sqrt(found.wideningVariance[k]));
-        seen.fluxPulls.push(found.flux[k] / brightness(k) - 1);
+        seen.fluxPulls.push(found.flux[k] / brightness(i)(k) - 1);
       }
-    }
+    });
   });
 
   const mean = (values: number[]) => values.reduce((sum, value) => sum + value, 0) / values.length;
@@ -94,7 +95,7 @@ describe("one column's geometry", () => {
     const data = drawColumn(40, 3, () => 5000);
     const profiles = columnProfiles(truth, table, 40, 15);
     data.good.fill(0, profiles.first[6], profiles.first[6] + profiles.n);
-    const found = measureColumn(off, table, background, data);
+    const [found] = measureColumns(kernels, off, table, background, [data]);
     expect(found.shiftVariance[6]).toBe(0);
     expect(found.wideningVariance[6]).toBe(0);
     expect(found.shiftVariance[0]).toBeGreaterThan(0);

@@ -1,7 +1,7 @@
 import { beforeAll, describe, expect, it } from "vitest";
 import { type Kernels, loadKernels } from "../../../src/kernels/module.js";
 import { nShapeTerm } from "../../../src/reference/shape.js";
-import { basisAt, emptyEdge, type ShapeBasis } from "../../../src/tramlines/shape/basis.js";
+import { basisAt, emptyEdge, type ShapeBasis } from "../../../src/reference/shapeBasis.js";
 import { hermiteBasis, hermiteStart, nHermiteFunction } from "../../../src/tramlines/shape/hermiteBasis.js";
 import { judgeMissing, python } from "../../judges.js";
 

@@ -2,10 +2,10 @@ import { beforeAll, describe, expect, it } from "vitest";
 import { loadKernels } from "../../../src/kernels/module.js";
 import { legendreArgument, legendreValue } from "../../../src/reference/legendre.js";
 import { nShapeTerm } from "../../../src/reference/shape.js";
+import { columnProfiles } from "../../../src/reference/shapeProfiles.js";
 import { scoreTrace } from "../../../src/report/truth.js";
 import { combineFlats } from "../../../src/tramlines/flat.js";
-import { columnProfiles } from "../../../src/tramlines/shape/column.js";
-import { flatColumn } from "../../../src/tramlines/shape/measure.js";
+import { flatColumns } from "../../../src/tramlines/shape/measure.js";
 import { frameOf, type MeasuredBench, measuredBench, weightErrors } from "./bench.js";
 
 let bench: MeasuredBench;
@@ -101,7 +101,8 @@ describe("a flat's column", () => {
     const frames = bench.flats.map(frameOf);
     for (const frame of frames) frame.mask[40 * 300 + 7] = 1;
     frames[0].electrons[41 * 300 + 7] = Number.NaN;
-    const column = flatColumn(combineFlats(frames), 7);
+    const [other, column] = flatColumns(combineFlats(frames), [4, 7]);
+    expect(other.good[40]).toBe(1);
     expect(column.good[40]).toBe(0);
     expect(column.light[40]).toBe(0);
     expect(column.good[41]).toBe(1);

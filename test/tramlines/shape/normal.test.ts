@@ -2,18 +2,11 @@ import { beforeAll, describe, expect, it } from "vitest";
 import { type Kernels, loadKernels } from "../../../src/kernels/module.js";
 import { legendreArgument, legendreBasis } from "../../../src/reference/legendre.js";
 import { nShapeTerm, type ShapeTable, shapeWeights } from "../../../src/reference/shape.js";
+import { backgroundColumn, nBackground, nBackgroundX, nBackgroundY } from "../../../src/reference/shapeBackground.js";
+import { type ColumnData, settleColumn } from "../../../src/reference/shapeColumn.js";
+import { columnModel, type Lines, wholeProfiles } from "../../../src/reference/shapeProfiles.js";
 import { shapeBasis, tabulate } from "../../../src/tramlines/shape/basis.js";
-import { type ColumnData, columnModel, type Lines } from "../../../src/tramlines/shape/column.js";
-import {
-  backgroundColumn,
-  nBackground,
-  nBackgroundX,
-  nBackgroundY,
-  ShapeNormal,
-  type ShapeState,
-  settleColumn,
-  wholeProfiles,
-} from "../../../src/tramlines/shape/step.js";
+import { ShapeNormal, type ShapeState } from "../../../src/tramlines/shape/normal.js";
 import { judgeMissing, python } from "../../judges.js";
 import { normalDeviate, seeded } from "../../scene.js";
 import { analyticLines } from "./analytic.js";
@@ -108,7 +101,8 @@ function denseProblem(coefficients: Float64Array, smooth: Float64Array, data: Co
     const profiles = wholeProfiles(lines, table, column.x);
     const under = backgroundColumn(smooth, column.x, lines);
     const level = column.light.map((light, y) => light - under[y]);
-    const { flux, model } = settleColumn(profiles, { ...column, inverseVariance: new Float64Array(ny) }, level, under);
+    const weighed = { ...column, inverseVariance: new Float64Array(ny) };
+    const { flux, model } = settleColumn(profiles, weighed, level, under);
     const shapeOf = (shape: ShapeTable, k: number) =>
       shapeWeights(shape, profiles.terms[k], profiles.centre[k], profiles.width[k], profiles.first[k], profiles.n);
     const byCoefficient = changed.map((shape) => {
@@ -135,7 +129,7 @@ function denseProblem(coefficients: Float64Array, smooth: Float64Array, data: Co
       }
       const smoothTerms = Array.from(inX, (px) => Array.from(inY, (py) => px * py)).flat();
       dense.design.push([...byCoefficient.map((light) => light[y]), ...smoothTerms, ...local]);
-      dense.weights.push(column.inverseVariance[y]);
+      dense.weights.push(weighed.inverseVariance[y]);
       dense.residual.push(level[y] - model[y]);
     }
   });
@@ -144,7 +138,7 @@ function denseProblem(coefficients: Float64Array, smooth: Float64Array, data: Co
 
 function addAll(normal: ShapeNormal, coefficients: Float64Array, data: ColumnData[], hold: boolean): ShapeTable {
   const table = tabulate(basis, coefficients);
-  for (const column of data) normal.add(lines, table, background, column, hold);
+  normal.add(lines, table, background, data, hold);
   return table;
 }
 
@@ -164,7 +158,7 @@ print(json.dumps((rest.T@rest).tolist()))`;
       const truth = bellCoefficients(3);
       const start = bellCoefficients(8);
       const data = columns.map((x) => drawColumn(truth, x, x));
-      const normal = new ShapeNormal(kernels, basis, ny, nFibre);
+      const normal = new ShapeNormal(kernels, basis);
       addAll(normal, start, data, hold);
       const found = normal.shapeInformation();
       const dense = denseProblem(start, background, data, nPar);
@@ -209,7 +203,7 @@ print(json.dumps([cost(np.zeros(b)),cost(best),cost(step),np.abs(G@step/np.linal
     const truth = bellCoefficients(3);
     const start = bellCoefficients(8, 0.02, 0.1);
     const data = columns.map((x) => drawColumn(truth, x, x));
-    const normal = new ShapeNormal(kernels, basis, ny, nFibre);
+    const normal = new ShapeNormal(kernels, basis);
     const table = addAll(normal, start, data, false);
     const result = normal.solve({ coefficients: start, background }, table);
     const step = [
@@ -300,9 +294,10 @@ describe("a step of the shape", () => {
     const many = Array.from({ length: 30 }, (_, i) => 1 + 3 * i);
     const before = worstWeight(state.coefficients, truth);
     for (let round = 0; round < 3; round++) {
-      const normal = new ShapeNormal(kernels, basis, ny, nFibre);
+      const normal = new ShapeNormal(kernels, basis);
       const table = tabulate(basis, state.coefficients);
-      for (const x of many) normal.add(lines, table, state.background, drawColumn(truth, x, 1000 + x), true);
+      const drawn = many.map((x) => drawColumn(truth, x, 1000 + x));
+      normal.add(lines, table, state.background, drawn, true);
       state = normal.solve(state, table);
     }
     const integrals = Array.from({ length: nShapeTerm }, (_, m) =>
@@ -318,9 +313,10 @@ describe("a step of the shape", () => {
 
   it("counts χ² in units of what noise leaves: 1 per degree of freedom at the truth", () => {
     const truth = bellCoefficients(3);
-    const normal = new ShapeNormal(kernels, basis, ny, nFibre);
+    const normal = new ShapeNormal(kernels, basis);
     const table = tabulate(basis, truth);
-    for (let x = 0; x < 90; x++) normal.add(lines, table, background, drawColumn(truth, x, 2000 + x), true);
+    const drawn = Array.from({ length: 90 }, (_, x) => drawColumn(truth, x, 2000 + x));
+    normal.add(lines, table, background, drawn, true);
     const { chi2, freedom } = normal.solve({ coefficients: truth, background }, table);
     expect(freedom).toBe(90 * (ny - 12 - nFibre));
     // The mean of ν squared normal deviates scatters by √(2/ν).
@@ -330,9 +326,10 @@ describe("a step of the shape", () => {
   it("counts the same χ² when shifts and widths are eliminated: what is left has fluxes alone fitted", () => {
     const truth = bellCoefficients(3);
     const [held, free] = [true, false].map((hold) => {
-      const normal = new ShapeNormal(kernels, basis, ny, nFibre);
+      const normal = new ShapeNormal(kernels, basis);
       const table = tabulate(basis, truth);
-      for (let x = 0; x < 90; x += 9) normal.add(lines, table, background, drawColumn(truth, x, 2000 + x), hold);
+      const drawn = Array.from({ length: 10 }, (_, i) => drawColumn(truth, 9 * i, 2000 + 9 * i));
+      normal.add(lines, table, background, drawn, hold);
       return normal;
     });
     expect(free.chi2).toBe(held.chi2);

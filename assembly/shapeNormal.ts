@@ -1,0 +1,281 @@
+/** One column's normal equations for all coefficients of a shape and the background, its fibres' local unknowns eliminated
+ * exactly: N = GᵀG − XᵀD⁻¹X with X = L⁻¹ AᵀG, where A = fibres' local unknowns, AᵀA = L D Lᵀ, everything over the pixels'
+ * noise. src/reference/shapeNormal.ts is the same, written to be read.
+ *
+ * Of the shape's seven terms four are left in a column (shapeProfiles.ts), so that a spline's unknowns are one block of
+ * rankUpdate.ts. Two blocks more hold the background in y and the residual, whose products are the right-hand side:
+ *
+ *     row of the design:   spline 0: 1 y P₂(y) width | spline 1 … | P₀(y) … P₃(y) | P₄(y) residual 0 0 */
+import { factorBand } from "./banded";
+import { blocksBytes, rankUpdate } from "./rankUpdate";
+import {
+  bandwidthOf,
+  fillLocalDesign,
+  fillSystem,
+  leaveResidual,
+  localFrom,
+  localTo,
+  settleColumns,
+} from "./shapeColumn";
+import { columnOf, count, firstOf, nLane, number, pointer, rowOf, ShapeNumbers, ShapeWord } from "./shapeJob";
+import { fibreNumbers } from "./shapeProfiles";
+
+/** Fills ShapeWord.normal and chi2 of two columns; their fluxes, models and inverse variances on the way. */
+export function shapeNormals(job: usize, tile: i32): void {
+  settleColumns(job, tile);
+  const nPar = count(job, ShapeWord.nPar);
+  for (let lane: i32 = 0; lane < nLane; lane++) {
+    const column = columnOf(job, tile, lane);
+    leaveResidual(job, column, lane);
+    judgePixels(job, column, lane);
+    fillLocalDesign(job, column, lane, nPar);
+    fillSystem(job, lane, nPar);
+  }
+  factorBand<f64>(pointer(job, ShapeWord.band), nPar * count(job, ShapeWord.nFibre), bandwidthOf(job, nPar));
+  for (let lane: i32 = 0; lane < nLane; lane++) {
+    const column = columnOf(job, tile, lane);
+    if (lane > 0 && column < nLane * tile + lane) break; // the last column once more
+    const nBlock = count(job, ShapeWord.nSpline) + 2;
+    const normal = pointer(job, ShapeWord.normal) + <usize>column * blocksBytes(nBlock);
+    memory.fill(normal, 0, blocksBytes(nBlock));
+    fillDesign(job, column, lane);
+    rankUpdate(pointer(job, ShapeWord.design), count(job, ShapeWord.ny), nBlock, 1.0, normal);
+    crossProducts(job, lane);
+    eliminate(job, lane);
+    rankUpdate(pointer(job, ShapeWord.cross), nPar * count(job, ShapeWord.nFibre), nBlock, -1.0, normal);
+  }
+}
+
+/** Leaves out pixels whose residual is beyond the clip; χ² and number of the others. */
+function judgePixels(job: usize, column: i32, lane: i32): void {
+  const ny = count(job, ShapeWord.ny);
+  const clip = number(job, ShapeNumbers.clip);
+  const most = clip > 0.0 ? clip * clip : Infinity;
+  const inverseVariance = rowOf(job, ShapeWord.inverseVariance, column, ny);
+  const rootWeight = rowOf(job, ShapeWord.rootWeight, lane, ny);
+  const scaled = rowOf(job, ShapeWord.scaled, lane, ny);
+  let chi2: f64 = 0.0;
+  let nGood: f64 = 0.0;
+  for (let at: usize = 0; at < (<usize>ny) << 3; at += 8) {
+    const pull = load<f64>(scaled + at);
+    if (pull * pull > most) {
+      store<f64>(inverseVariance + at, 0.0);
+      store<f64>(rootWeight + at, 0.0);
+      store<f64>(scaled + at, 0.0);
+      continue;
+    }
+    chi2 += pull * pull;
+    if (load<f64>(inverseVariance + at) > 0.0) nGood += 1.0;
+  }
+  const out = rowOf(job, ShapeWord.chi2, column, 2);
+  store<f64>(out, chi2);
+  store<f64>(out, nGood, 8);
+}
+
+/** Derivatives of every row by the unknowns and its residual, over its noise. */
+function fillDesign(job: usize, column: i32, lane: i32): void {
+  const ny = count(job, ShapeWord.ny);
+  const nFibre = count(job, ShapeWord.nFibre);
+  const nSpline = count(job, ShapeWord.nSpline);
+  const rowBytes = (<usize>(nSpline + 2)) << 5;
+  const design = pointer(job, ShapeWord.design);
+  memory.fill(design, 0, <usize>ny * rowBytes);
+  for (let k: i32 = 0; nSpline > 0 && k < nFibre; k++) addFibre(job, column, lane, k, rowBytes);
+  const rootWeight = rowOf(job, ShapeWord.rootWeight, lane, ny);
+  const scaled = rowOf(job, ShapeWord.scaled, lane, ny);
+  const nBackground = count(job, ShapeWord.nBackground);
+  for (let y: i32 = 0; y < ny; y++) {
+    const root = load<f64>(rootWeight + ((<usize>y) << 3));
+    const roots = f64x2.splat(root);
+    const row = design + <usize>y * rowBytes;
+    const splinesEnd = row + ((<usize>nSpline) << 5);
+    for (let at = row; at < splinesEnd; at += 16) v128.store(at, f64x2.mul(roots, v128.load(at)));
+    const inY = rowOf(job, ShapeWord.rowPolynomials, y, nBackground);
+    for (let at: usize = 0; at < (<usize>nBackground) << 3; at += 8) {
+      store<f64>(splinesEnd + at, root * load<f64>(inY + at));
+    }
+    store<f64>(splinesEnd + ((<usize>nBackground) << 3), load<f64>(scaled + ((<usize>y) << 3)));
+  }
+}
+
+/** Light of fibre k in each spline and term, on the rows of its window. */
+function addFibre(job: usize, column: i32, lane: i32, k: i32, rowBytes: usize): void {
+  const nFibre = count(job, ShapeWord.nFibre);
+  const n = count(job, ShapeWord.nWindow);
+  const fibre = rowOf(job, ShapeWord.fibre, lane * nFibre + k, fibreNumbers);
+  const flux = load<f64>(rowOf(job, ShapeWord.flux, column, nFibre) + ((<usize>k) << 3));
+  const low = f64x2.replace_lane(f64x2.splat(flux), 1, flux * load<f64>(fibre));
+  const high = f64x2.replace_lane(f64x2.splat(flux * load<f64>(fibre, 8)), 1, flux * load<f64>(fibre, 16));
+  const first = load<i32>(firstOf(job, lane) + ((<usize>k) << 2));
+  const from = max(first, 0);
+  const to = min(first + n, count(job, ShapeWord.ny));
+  const step = number(job, ShapeNumbers.tableStep);
+  const scale = load<f64>(fibre, 32) / step;
+  const origin = (load<f64>(fibre, 24) - number(job, ShapeNumbers.tableStart)) / step;
+  const centre = load<f64>(fibre, 40);
+  const edgeBytes = (<usize>(count(job, ShapeWord.nSpline) + 2)) << 3;
+  let below = pointer(job, ShapeWord.edges);
+  let above = below + edgeBytes;
+  memory.fill(below, 0, 2 * edgeBytes);
+  let firstBegun = edgeAt(job, (<f64>from - 0.5 - centre) * scale + origin, below);
+  let row = pointer(job, ShapeWord.design) + <usize>from * rowBytes;
+  for (let y = from; y < to; y++) {
+    const begun = edgeAt(job, (<f64>y + 0.5 - centre) * scale + origin, above);
+    const lastBegun = begun >> 16;
+    for (let j = firstBegun & 0xffff; j <= lastBegun; j++) {
+      const at = (<usize>j) << 3;
+      const light = f64x2.splat(load<f64>(above + at) - load<f64>(below + at));
+      const out = row + (at << 2);
+      v128.store(out, f64x2.add(v128.load(out), f64x2.mul(light, low)));
+      v128.store(out, f64x2.add(v128.load(out, 16), f64x2.mul(light, high)), 16);
+    }
+    firstBegun = begun;
+    const spare = below;
+    below = above;
+    above = spare;
+    row += rowBytes;
+  }
+}
+
+/** Integrals of all splines up to `place`, in steps of the table, by Hermite's cubic. `out`: [nSpline], what an edge further
+ * down left, or 0. Returns the first spline that is not whole, and the last that has begun, times 2¹⁶. */
+function edgeAt(job: usize, place: f64, out: usize): i32 {
+  const last = count(job, ShapeWord.nTable) - 2;
+  const nSpline = count(job, ShapeWord.nSpline);
+  const held = min(max(place, 0.0), <f64>(last + 1));
+  const cell = min(<i32>held, last);
+  const t = held - <f64>cell;
+  const u = 1.0 - t;
+  const step = number(job, ShapeNumbers.tableStep);
+  const smooth = f64x2.splat(t * t * (3.0 - 2.0 * t));
+  const riseHere = f64x2.splat(step * t * u * u);
+  const riseThere = f64x2.splat(step * t * u * t);
+  const values = rowOf(job, ShapeWord.basis, cell, 2 * nSpline);
+  const slopes = values + ((<usize>nSpline) << 3);
+  const nextBytes = (<usize>nSpline) << 4;
+  const begun = pointer(job, ShapeWord.begun) + ((<usize>cell) << 3);
+  const first = load<i32>(begun);
+  const lastBegun = load<i32>(begun, 4);
+  const whole = pointer(job, ShapeWord.whole);
+  for (let j: i32 = first - 1; j >= 0; j--) {
+    const at = (<usize>j) << 3;
+    if (load<f64>(out + at) == load<f64>(whole + at)) break; // and so are those before it
+    store<f64>(out + at, load<f64>(whole + at));
+  }
+  // Pairs may run one spline further, which has not begun, or past the last one.
+  for (let j = first; j <= lastBegun; j += 2) {
+    const at = (<usize>j) << 3;
+    const c0 = v128.load(values + at);
+    const rise = f64x2.sub(
+      f64x2.mul(riseHere, v128.load(slopes + at)),
+      f64x2.mul(riseThere, v128.load(slopes + nextBytes + at)),
+    );
+    const change = f64x2.mul(smooth, f64x2.sub(v128.load(values + nextBytes + at), c0));
+    v128.store(out + at, f64x2.add(c0, f64x2.add(change, rise)));
+  }
+  return first | (lastBegun << 16);
+}
+
+/** AᵀG: local unknowns × unknowns and residual. */
+function crossProducts(job: usize, lane: i32): void {
+  const nFibre = count(job, ShapeWord.nFibre);
+  const nPar = count(job, ShapeWord.nPar);
+  const n = count(job, ShapeWord.nWindow);
+  const rowBytes = (<usize>(count(job, ShapeWord.nSpline) + 2)) << 5;
+  const parBytes = (<usize>n) << 3;
+  let own = rowOf(job, ShapeWord.local, lane, nFibre * nPar * n);
+  let out = pointer(job, ShapeWord.cross);
+  for (let k: i32 = 0; k < nFibre; k++) {
+    const first = load<i32>(firstOf(job, lane) + ((<usize>k) << 2));
+    const from = localFrom(job, first);
+    const nRow = localTo(job, first) - from;
+    const g = pointer(job, ShapeWord.design) + <usize>(first + from) * rowBytes;
+    const a = own + ((<usize>from) << 3);
+    for (let at: usize = 0; at < rowBytes; at += 32) {
+      if (nPar == 3) threeProducts(a, parBytes, g + at, nRow, rowBytes, out + at);
+      else
+        for (let p: usize = 0; p < <usize>nPar; p++)
+          oneProduct(a + p * parBytes, g + at, nRow, rowBytes, out + p * rowBytes + at);
+    }
+    own += <usize>nPar * parBytes;
+    out += <usize>nPar * rowBytes;
+  }
+}
+
+function threeProducts(a: usize, parBytes: usize, g: usize, nRow: i32, rowBytes: usize, out: usize): void {
+  let s0 = f64x2.splat(0.0);
+  let s1 = s0;
+  let s2 = s0;
+  let s3 = s0;
+  let s4 = s0;
+  let s5 = s0;
+  const b = a + parBytes;
+  const c = b + parBytes;
+  for (let at: usize = 0; at < (<usize>max(nRow, 0)) << 3; at += 8) {
+    const low = v128.load(g);
+    const high = v128.load(g, 16);
+    let own = v128.load64_splat(a + at);
+    s0 = f64x2.add(s0, f64x2.mul(own, low));
+    s1 = f64x2.add(s1, f64x2.mul(own, high));
+    own = v128.load64_splat(b + at);
+    s2 = f64x2.add(s2, f64x2.mul(own, low));
+    s3 = f64x2.add(s3, f64x2.mul(own, high));
+    own = v128.load64_splat(c + at);
+    s4 = f64x2.add(s4, f64x2.mul(own, low));
+    s5 = f64x2.add(s5, f64x2.mul(own, high));
+    g += rowBytes;
+  }
+  v128.store(out, s0);
+  v128.store(out, s1, 16);
+  v128.store(out + rowBytes, s2);
+  v128.store(out + rowBytes, s3, 16);
+  v128.store(out + 2 * rowBytes, s4);
+  v128.store(out + 2 * rowBytes, s5, 16);
+}
+
+function oneProduct(a: usize, g: usize, nRow: i32, rowBytes: usize, out: usize): void {
+  let low = f64x2.splat(0.0);
+  let high = low;
+  for (let at: usize = 0; at < (<usize>max(nRow, 0)) << 3; at += 8) {
+    const own = v128.load64_splat(a + at);
+    low = f64x2.add(low, f64x2.mul(own, v128.load(g)));
+    high = f64x2.add(high, f64x2.mul(own, v128.load(g, 16)));
+    g += rowBytes;
+  }
+  v128.store(out, low);
+  v128.store(out, high, 16);
+}
+
+/** X = D^(−1/2) L⁻¹ · cross, in place, from one lane of the factors. */
+function eliminate(job: usize, lane: i32): void {
+  const nPar = count(job, ShapeWord.nPar);
+  const n = nPar * count(job, ShapeWord.nFibre);
+  const b = bandwidthOf(job, nPar);
+  const rowBytes = (<usize>(count(job, ShapeWord.nSpline) + 2)) << 5;
+  const bandBytes = (<usize>(b + 1)) << 4;
+  const cross = pointer(job, ShapeWord.cross);
+  const band = pointer(job, ShapeWord.band) + ((<usize>lane) << 3);
+  for (let i: i32 = 1; i < n; i++) {
+    const factors = band + <usize>i * bandBytes;
+    const reach = (<usize>min(i, b)) << 4;
+    const row = cross + <usize>i * rowBytes;
+    for (let at: usize = 0; at < rowBytes; at += 32) {
+      let low = v128.load(row + at);
+      let high = v128.load(row + at, 16);
+      let there = row + at;
+      for (let j: usize = 16; j <= reach; j += 16) {
+        there -= rowBytes;
+        const l = v128.load64_splat(factors + j);
+        low = f64x2.sub(low, f64x2.mul(l, v128.load(there)));
+        high = f64x2.sub(high, f64x2.mul(l, v128.load(there, 16)));
+      }
+      v128.store(row + at, low);
+      v128.store(row + at, high, 16);
+    }
+  }
+  for (let i: i32 = 0; i < n; i++) {
+    const row = cross + <usize>i * rowBytes;
+    const root = f64x2.splat(sqrt(max(load<f64>(band + <usize>i * bandBytes), 0.0)));
+    for (let at: usize = 0; at < rowBytes; at += 16) v128.store(row + at, f64x2.mul(root, v128.load(row + at)));
+  }
+}
