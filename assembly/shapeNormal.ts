@@ -39,10 +39,24 @@ export function shapeNormals(job: usize, tile: i32): void {
     const normal = pointer(job, ShapeWord.normal) + <usize>column * blocksBytes(nBlock);
     memory.fill(normal, 0, blocksBytes(nBlock));
     fillDesign(job, column, lane);
-    rankUpdate(pointer(job, ShapeWord.design), count(job, ShapeWord.ny), nBlock, 1.0, normal);
+    rankUpdate(
+      pointer(job, ShapeWord.design),
+      count(job, ShapeWord.ny),
+      nBlock,
+      1.0,
+      normal,
+      pointer(job, ShapeWord.filled),
+    );
     crossProducts(job, lane);
     eliminate(job, lane);
-    rankUpdate(pointer(job, ShapeWord.cross), nPar * count(job, ShapeWord.nFibre), nBlock, -1.0, normal);
+    rankUpdate(
+      pointer(job, ShapeWord.cross),
+      nPar * count(job, ShapeWord.nFibre),
+      nBlock,
+      -1.0,
+      normal,
+      pointer(job, ShapeWord.filled),
+    );
   }
 }
 
@@ -256,26 +270,44 @@ function eliminate(job: usize, lane: i32): void {
   const cross = pointer(job, ShapeWord.cross);
   const band = pointer(job, ShapeWord.band) + ((<usize>lane) << 3);
   for (let i: i32 = 1; i < n; i++) {
-    const factors = band + <usize>i * bandBytes;
-    const reach = (<usize>min(i, b)) << 4;
-    const row = cross + <usize>i * rowBytes;
-    for (let at: usize = 0; at < rowBytes; at += 32) {
-      let low = v128.load(row + at);
-      let high = v128.load(row + at, 16);
-      let there = row + at;
-      for (let j: usize = 16; j <= reach; j += 16) {
-        there -= rowBytes;
-        const l = v128.load64_splat(factors + j);
-        low = f64x2.sub(low, f64x2.mul(l, v128.load(there)));
-        high = f64x2.sub(high, f64x2.mul(l, v128.load(there, 16)));
-      }
-      v128.store(row + at, low);
-      v128.store(row + at, high, 16);
-    }
+    takeEarlier(cross + <usize>i * rowBytes, rowBytes, band + <usize>i * bandBytes, (<usize>min(i, b)) << 4);
   }
   for (let i: i32 = 0; i < n; i++) {
     const row = cross + <usize>i * rowBytes;
     const root = f64x2.splat(sqrt(max(load<f64>(band + <usize>i * bandBytes), 0.0)));
     for (let at: usize = 0; at < rowBytes; at += 16) v128.store(row + at, f64x2.mul(root, v128.load(row + at)));
+  }
+}
+
+/** row −= Σ_j l_j · (j-th row before it), eight unknowns at a time and then four. `reach`: bytes of the factors. */
+function takeEarlier(row: usize, rowBytes: usize, factors: usize, reach: usize): void {
+  let at: usize = 0;
+  for (; at + 64 <= rowBytes; at += 64) {
+    let s0 = v128.load(row + at);
+    let s1 = v128.load(row + at, 16);
+    let s2 = v128.load(row + at, 32);
+    let s3 = v128.load(row + at, 48);
+    let there = row + at;
+    for (let j: usize = 16; j <= reach; j += 16) {
+      there -= rowBytes;
+      const l = v128.load64_splat(factors + j);
+      s0 = f64x2.sub(s0, f64x2.mul(l, v128.load(there)));
+      s1 = f64x2.sub(s1, f64x2.mul(l, v128.load(there, 16)));
+      s2 = f64x2.sub(s2, f64x2.mul(l, v128.load(there, 32)));
+      s3 = f64x2.sub(s3, f64x2.mul(l, v128.load(there, 48)));
+    }
+    v128.store(row + at, s0);
+    v128.store(row + at, s1, 16);
+    v128.store(row + at, s2, 32);
+    v128.store(row + at, s3, 48);
+  }
+  for (; at < rowBytes; at += 16) {
+    let sum = v128.load(row + at);
+    let there = row + at;
+    for (let j: usize = 16; j <= reach; j += 16) {
+      there -= rowBytes;
+      sum = f64x2.sub(sum, f64x2.mul(v128.load64_splat(factors + j), v128.load(there)));
+    }
+    v128.store(row + at, sum);
   }
 }

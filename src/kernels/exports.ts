@@ -20,7 +20,7 @@ export interface KernelExports {
   extractColumns64(jobPtr: number, x0: number, x1: number): void;
 
   /** assembly/rankUpdate.ts */
-  rankUpdate(gPtr: number, nRow: number, nBlock: number, sign: number, outPtr: number): void;
+  rankUpdate(gPtr: number, nRow: number, nBlock: number, sign: number, outPtr: number, filledPtr: number): void;
 
   /** assembly/shapeColumn.ts */
   fitShapeColumns(jobPtr: number, tile: number): void;

@@ -14,6 +14,7 @@ export class NormalMatrix {
   readonly blocks: Float64Array;
   private readonly bench: Workbench;
   private readonly nBlock: number;
+  private readonly filled: Int32Array;
 
   /** n unknowns, four to a block; at most `nMost` rows are added at a time. */
   constructor(
@@ -24,14 +25,16 @@ export class NormalMatrix {
     if (n % 4 !== 0) throw new RangeError(`A normal matrix of ${n} unknowns; the kernel wants a multiple of 4.`);
     this.nBlock = n / 4;
     const nNumber = 8 * this.nBlock * (this.nBlock + 1);
-    this.bench = kernels.workbench(8 * (nMost * n + nNumber), 2);
+    this.bench = kernels.workbench(8 * (nMost * n + nNumber) + n, 3);
     this.rows = this.bench.float64(nMost * n);
     this.blocks = this.bench.float64(nNumber);
+    this.filled = this.bench.int32(this.nBlock);
   }
 
   /** N += sign · Σ row rowᵀ over the first `nRow` rows. */
   add(nRow: number, sign: 1 | -1): void {
     if (nRow > this.nMost) throw new RangeError(`${nRow} rows, but there is room for ${this.nMost}.`);
-    this.bench.call.rankUpdate(this.rows.byteOffset, nRow, this.nBlock, sign, this.blocks.byteOffset);
+    const { rows, blocks, filled } = this;
+    this.bench.call.rankUpdate(rows.byteOffset, nRow, this.nBlock, sign, blocks.byteOffset, filled.byteOffset);
   }
 }

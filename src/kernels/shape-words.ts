@@ -64,6 +64,7 @@ export enum ShapeWord {
   rhs, // v128, nFibre·nPar
   // for one
   edges, // 2 × (nSpline + 2)
+  filled, // u32, nBlock
   design, // ny × 4·nBlock
   cross, // nFibre·nPar × 4·nBlock
 

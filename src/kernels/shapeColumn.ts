@@ -112,14 +112,15 @@ export class ShapeColumnBench {
     const { lines, table, background, columns } = this.problem;
     const { nx, ny } = lines;
     const at = (word: ShapeWord) => this.answers.get(word)!;
-    columns.forEach((column, i) => {
-      at(ShapeWord.light).set(column.light, i * ny);
-      at(ShapeWord.fixedVariance).set(column.fixedVariance, i * ny);
-      at(ShapeWord.variancePerElectron).set(column.variancePerElectron, i * ny);
-      const variance = at(ShapeWord.fixedVariance);
-      for (let y = 0; y < ny; y++) if (column.good[y] === 0) variance[i * ny + y] = Number.POSITIVE_INFINITY;
-      at(ShapeWord.argument)[i] = legendreArgument(column.x, nx);
-      at(ShapeWord.backgroundSeries).set(backgroundSeries(background, column.x, nx), i * nBackgroundY);
+    const variance = at(ShapeWord.fixedVariance);
+    columns.forEach(({ x, light, good, fixedVariance, variancePerElectron }, i) => {
+      at(ShapeWord.light).set(light, i * ny);
+      at(ShapeWord.variancePerElectron).set(variancePerElectron, i * ny);
+      for (let y = 0; y < ny; y++) {
+        variance[i * ny + y] = good[y] === 0 ? Number.POSITIVE_INFINITY : fixedVariance[y];
+      }
+      at(ShapeWord.argument)[i] = legendreArgument(x, nx);
+      at(ShapeWord.backgroundSeries).set(backgroundSeries(background, x, nx), i * nBackgroundY);
     });
     for (let y = 0; y < ny; y++) {
       at(ShapeWord.rowPolynomials).set(legendreBasis(legendreArgument(y, ny), nBackgroundY), y * nBackgroundY);
@@ -204,6 +205,7 @@ function scratchPlan({ lines, table, nPar }: ShapeProblem, windows: Windows, bas
   return [
     ...plan,
     [ShapeWord.edges, 2 * (basis.nSpline + 2)],
+    [ShapeWord.filled, basis.nSpline + 2],
     [ShapeWord.design, ny * n],
     [ShapeWord.cross, nLocal * n],
   ];
