@@ -5,6 +5,7 @@ export { centroid } from "./centroid";
 export { erf } from "./erf";
 export { exp } from "./exp";
 export { extractColumns32, extractColumns64, prepareExtraction32, prepareExtraction64 } from "./extract";
+export { groupMeans, groupMedians } from "./groups";
 export { legendreFitClipped, legendreValue } from "./legendre";
 export { median } from "./median";
 export { pixelsToFloat32, pixelsToFloat64 } from "./pixels";

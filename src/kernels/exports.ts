@@ -72,6 +72,10 @@ export interface KernelExports {
     scratchPtr: number,
   ): void;
 
+  /** assembly/groups.ts */
+  groupMedians(jobPtr: number, tile: number): void;
+  groupMeans(jobPtr: number, tile: number): void;
+
   /** assembly/centroid.ts */
   centroid(dataPtr: number, goodPtr: number, n: number, centre: number, halfWidth: number, background: number): number;
 

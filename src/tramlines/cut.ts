@@ -1,6 +1,7 @@
 /** A cut through the flat across the dispersion: a robust mean over columns about the middle, each moved along the
  * tramlines' course by whole rows, so that steep or strongly curved fibres are not blurred. */
 import { medianOf } from "../detector/clip.js";
+import type { Kernels } from "../kernels/module.js";
 import { TraceError } from "./errors.js";
 import { type ColumnGroup, type Flat, groupColumns } from "./flat.js";
 
@@ -30,19 +31,21 @@ const MAX_OFF_ROW = 0.15;
 const KAPPA_PAIR = 6;
 
 /** @throws TraceError when the flat has no good pixel about its middle. */
-export function cutThrough(flat: Flat): Cut {
+export function cutThrough(kernels: Kernels, flat: Flat): Cut {
   const most = Math.floor(flat.nx / STRIP_COLUMNS);
   const nStrip = Math.max(1, Math.min(MAX_STRIPS, most, Math.max(MIN_STRIPS, Math.ceil(CUT_SHARE * most))));
   const columns = Math.min(STRIP_COLUMNS, flat.nx);
   for (const share of [0.5, 0.4, 0.6, 0.3, 0.7, 0.2, 0.8]) {
     const start = Math.round(share * flat.nx) - (nStrip * columns) / 2;
     const first = Math.max(0, Math.min(flat.nx - nStrip * columns, Math.floor(start)));
-    const strips = Array.from({ length: nStrip }, (_, s) =>
-      groupColumns(flat, first + s * columns, first + (s + 1) * columns),
-    ).filter((strip) => isWhole(strip, flat.ny));
+    const ranges = Array.from({ length: nStrip }, (_, s) => ({
+      from: first + s * columns,
+      to: first + (s + 1) * columns,
+    }));
+    const strips = groupColumns(kernels, flat, ranges).filter((strip) => isWhole(strip, flat.ny));
     if (strips.length < Math.max(1, nStrip / 2)) continue;
     const path = course(strips, flat.ny);
-    const groups = groupsOnRows(flat, path, first, first + nStrip * columns).filter(({ group }) =>
+    const groups = groupsOnRows(kernels, flat, path, first, first + nStrip * columns).filter(({ group }) =>
       isWhole(group, flat.ny),
     );
     if (groups.length > 0) return merge(groups, path, flat.ny);
@@ -91,8 +94,14 @@ interface ShiftedGroup {
 }
 
 /** Runs of columns that stand a whole number of rows off the middle, in groups of at most STRIP_COLUMNS. */
-function groupsOnRows(flat: Flat, { x0, slope, curvature }: Course, from: number, to: number): ShiftedGroup[] {
-  const groups: ShiftedGroup[] = [];
+function groupsOnRows(
+  kernels: Kernels,
+  flat: Flat,
+  { x0, slope, curvature }: Course,
+  from: number,
+  to: number,
+): ShiftedGroup[] {
+  const runs: { from: number; to: number; rows: number }[] = [];
   const offset = (x: number) => slope * (x - x0) + 0.5 * curvature * (x - x0) ** 2;
   const rowsOf = (x: number) => {
     const rows = Math.round(offset(x));
@@ -102,10 +111,10 @@ function groupsOnRows(flat: Flat, { x0, slope, curvature }: Course, from: number
     const rows = rowsOf(x);
     let end = x + 1;
     while (end < to && end - x < STRIP_COLUMNS && rowsOf(end) === rows) end++;
-    if (!Number.isNaN(rows)) groups.push({ group: groupColumns(flat, x, end), rows });
+    if (!Number.isNaN(rows)) runs.push({ from: x, to: end, rows });
     x = end;
   }
-  return groups;
+  return groupColumns(kernels, flat, runs).map((group, i) => ({ group, rows: runs[i].rows }));
 }
 
 /** Median over groups, each moved by its whole rows. */

@@ -2,6 +2,9 @@
  * neighbouring columns of it. */
 import { medianOf } from "../detector/clip.js";
 import { type Frame, MaskBit } from "../detector/frame.js";
+import { groupColumns as groupMeans } from "../kernels/groups.js";
+import type { Kernels } from "../kernels/module.js";
+import type { ColumnRange, GroupMean } from "../reference/groups.js";
 import { TraceError } from "./errors.js";
 
 /** Two frames that differ by more than this many σ at a pixel: the lower one counts. */
@@ -9,9 +12,11 @@ const KAPPA_PAIR = 5;
 
 export interface Flat {
   name: string;
+  /** Frames that it was made of. */
+  nFrame: number;
   nx: number;
   ny: number;
-  /** ny × nx, e⁻, mean of the frames used. */
+  /** ny × nx, e⁻, mean of the frames used; NaN where none is. */
   electrons: Float32Array;
   /** ny × nx, bits of MaskBit that all frames have. */
   mask: Uint8Array;
@@ -35,25 +40,59 @@ export function combineFlats(frames: Frame[]): Flat {
       );
     }
   }
+  const name = frames.map((frame) => frame.name).join(", ");
+  if (frames.length === 1) return { name, nFrame: 1, nx: first.nx, ny: first.ny, ...singleFlat(first), frame: first };
+  return { name, nFrame: frames.length, nx: first.nx, ny: first.ny, ...meanOf(frames, first), frame: first };
+}
+
+type FlatPixels = Pick<Flat, "electrons" | "mask" | "nUsed">;
+
+function singleFlat(frame: Frame): FlatPixels {
+  const nPixel = frame.nx * frame.ny;
+  const electrons = new Float32Array(nPixel);
+  const nUsed = new Uint8Array(nPixel);
+  const { electrons: given } = frame;
+  let { mask } = frame;
+  for (let at = 0; at < nPixel; at++) {
+    const value = given[at];
+    if (mask[at] === 0 && !Number.isNaN(value)) {
+      electrons[at] = value;
+      nUsed[at] = 1;
+      continue;
+    }
+    electrons[at] = Number.NaN;
+    if (!Number.isNaN(value) || (mask[at] & MaskBit.missing) !== 0) continue;
+    if (mask === frame.mask) mask = mask.slice();
+    mask[at] |= MaskBit.missing;
+  }
+  return { electrons, mask, nUsed };
+}
+
+function meanOf(frames: Frame[], first: Frame): FlatPixels {
   const { nx, ny } = first;
   const electrons = new Float32Array(nx * ny);
   const mask = new Uint8Array(nx * ny);
   const nUsed = new Uint8Array(nx * ny);
   const levels = frames.map((frame) => relativeLevel(frame, first));
+  const light = frames.map((frame) => frame.electrons);
+  const bits = frames.map((frame) => frame.mask);
   const values = new Float64Array(frames.length);
   for (let at = 0; at < nx * ny; at++) {
     let n = 0;
-    let bits = 0xff;
+    let shared = 0xff;
     let lowest = Number.POSITIVE_INFINITY;
-    frames.forEach((frame, f) => {
-      bits &= frame.mask[at] | (Number.isNaN(frame.electrons[at]) ? MaskBit.missing : 0);
-      if (frame.mask[at] !== 0 || Number.isNaN(frame.electrons[at])) return;
-      values[n] = frame.electrons[at] / levels[f];
-      lowest = Math.min(lowest, values[n++]);
-    });
+    for (let f = 0; f < light.length; f++) {
+      const value = light[f][at];
+      const isMissing = Number.isNaN(value);
+      shared &= bits[f][at] | (isMissing ? MaskBit.missing : 0);
+      if (bits[f][at] !== 0 || isMissing) continue;
+      values[n] = value / levels[f];
+      if (values[n] < lowest) lowest = values[n];
+      n++;
+    }
     if (n === 0) {
       electrons[at] = Number.NaN;
-      mask[at] = bits === 0 ? MaskBit.bad : bits;
+      mask[at] = shared === 0 ? MaskBit.bad : shared;
       continue;
     }
     const limit = lowest + KAPPA_PAIR * Math.sqrt(2 * pixelVariance(first, at, lowest) + (0.02 * lowest) ** 2);
@@ -67,7 +106,7 @@ export function combineFlats(frames: Frame[]): Flat {
     electrons[at] = sum / kept;
     nUsed[at] = kept;
   }
-  return { name: frames.map((frame) => frame.name).join(", "), nx, ny, electrons, mask, nUsed, frame: first };
+  return { electrons, mask, nUsed };
 }
 
 /** How bright a frame is against another, from the pixels that are bright in both. */
@@ -99,99 +138,27 @@ export function pixelVariance(frame: Frame, at: number, model: number): number {
   );
 }
 
-/** The mean of some neighbouring columns, cosmic rays left out. All arrays [ny]. */
-export interface ColumnGroup {
+/** The mean of some neighbouring columns, cosmic rays left out. */
+export interface ColumnGroup extends GroupMean {
   /** Middle of the columns, pixels. */
   x: number;
   /** Columns. */
   width: number;
-  /** e⁻ per pixel; NaN where no pixel is good. */
-  mean: Float64Array;
-  /** Pixels in the mean. */
-  count: Uint16Array;
-  /** e⁻²: variance of the mean without light. */
-  fixedVariance: Float64Array;
-  /** e⁻² per e⁻ of light. */
-  variancePerElectron: Float64Array;
 }
 
-/** A pixel counts as hit by a cosmic ray when it stands above its row's median in the group by this many σ, and by half
- * of what the neighbouring rows differ (a tilted tramline changes the light along a row by less). */
-const KAPPA_HIT = 8;
+/** Groups that the whole width is cut into, at the most. */
+const MAX_GROUPS = 128;
+const MIN_COLUMNS = 8;
 
-/** Columns `from` … `to − 1`. */
-export function groupColumns(flat: Flat, from: number, to: number): ColumnGroup {
-  const { ny } = flat;
-  const group: ColumnGroup = {
-    x: 0.5 * (from + to - 1),
-    width: to - from,
-    mean: new Float64Array(ny),
-    count: new Uint16Array(ny),
-    fixedVariance: new Float64Array(ny),
-    variancePerElectron: new Float64Array(ny),
-  };
-  const rowMedian = rowMedians(flat, from, to);
-  for (let y = 0; y < ny; y++) {
-    const slope = 0.5 * spread(rowMedian[Math.max(0, y - 1)], rowMedian[y], rowMedian[Math.min(ny - 1, y + 1)]);
-    averageRow(flat, from, to, y, rowMedian[y], slope, group);
-  }
-  return group;
+/** Columns from one group to the next. */
+export function groupStep(nx: number): number {
+  return Math.max(MIN_COLUMNS, Math.ceil(nx / MAX_GROUPS));
 }
 
-function rowMedians(flat: Flat, from: number, to: number): Float64Array {
-  const { nx, ny, electrons, nUsed } = flat;
-  const medians = new Float64Array(ny);
-  const sorted = new Float64Array(to - from);
-  for (let y = 0; y < ny; y++) {
-    let n = 0;
-    for (let at = y * nx + from; at < y * nx + to; at++) {
-      if (nUsed[at] === 0) continue;
-      const value = electrons[at];
-      let place = n++;
-      for (; place > 0 && sorted[place - 1] > value; place--) sorted[place] = sorted[place - 1];
-      sorted[place] = value;
-    }
-    const half = n >> 1;
-    medians[y] = n === 0 ? Number.NaN : n % 2 === 1 ? sorted[half] : 0.5 * (sorted[half - 1] + sorted[half]);
-  }
-  return medians;
-}
-
-function averageRow(
-  flat: Flat,
-  from: number,
-  to: number,
-  y: number,
-  rowMedian: number,
-  slope: number,
-  group: ColumnGroup,
-): void {
-  const { nx, electrons, nUsed, frame } = flat;
-  const { inverseResponse } = frame.noise;
-  let sum = 0;
-  let fixed = 0;
-  let perElectron = 0;
-  let n = 0;
-  for (let x = from; x < to; x++) {
-    const at = y * nx + x;
-    if (nUsed[at] === 0) continue;
-    const excess = electrons[at] - rowMedian - slope;
-    if (excess > 0 && excess * excess * nUsed[at] > KAPPA_HIT * KAPPA_HIT * pixelVariance(frame, at, rowMedian))
-      continue;
-    sum += electrons[at];
-    fixed += pixelVariance(frame, at, 0) / nUsed[at];
-    perElectron += (inverseResponse === undefined ? 1 : inverseResponse[at]) / nUsed[at];
-    n++;
-  }
-  group.count[y] = n;
-  group.mean[y] = sum / n;
-  group.fixedVariance[y] = fixed / (n * n);
-  group.variancePerElectron[y] = perElectron / (n * n);
-}
-
-function spread(below: number, here: number, above: number): number {
-  const b = Number.isNaN(below) ? 0 : below;
-  const h = Number.isNaN(here) ? 0 : here;
-  const a = Number.isNaN(above) ? 0 : above;
-  return Math.max(b, h, a) - Math.min(b, h, a);
+/** One group for each range of columns. */
+export function groupColumns(kernels: Kernels, flat: Flat, ranges: ColumnRange[]): ColumnGroup[] {
+  const { nx, ny, electrons, frame } = flat;
+  const nUsed = flat.nFrame > 1 ? flat.nUsed : undefined;
+  const means = groupMeans(kernels, { nx, ny, electrons, nUsed, noise: frame.noise }, ranges);
+  return ranges.map(({ from, to }, g) => ({ x: 0.5 * (from + to - 1), width: to - from, ...means[g] }));
 }

@@ -3,13 +3,11 @@
 import { Centring, type CentringColumn, type CentringResult } from "../kernels/centring.js";
 import { Centroider } from "../kernels/centroid.js";
 import type { Kernels } from "../kernels/module.js";
+import type { ColumnRange } from "../reference/groups.js";
 import { legendreArgument, legendreValue } from "../reference/legendre.js";
 import { overlapping, REACH_SIGMAS, rowsNear } from "./find.js";
-import { type ColumnGroup, type Flat, groupColumns } from "./flat.js";
+import { type ColumnGroup, type Flat, groupColumns, groupStep } from "./flat.js";
 
-/** Groups that the whole width is cut into, at the most. */
-const MAX_GROUPS = 128;
-const MIN_COLUMNS = 8;
 /** Within a group a tramline may climb by this, px; steeper ones get groups of fewer columns. */
 const MAX_CLIMB = 0.4;
 const BACKGROUND_TERMS = 4;
@@ -22,16 +20,16 @@ const KAPPA_PIXEL = 7;
 export const START_ERROR = 0.02;
 
 /** Groups over the whole width, narrow where the tramlines are steep. */
-export function cutIntoGroups(flat: Flat, steepest: number): ColumnGroup[] {
-  const step = Math.max(MIN_COLUMNS, Math.ceil(flat.nx / MAX_GROUPS));
+export function cutIntoGroups(kernels: Kernels, flat: Flat, steepest: number): ColumnGroup[] {
+  const step = groupStep(flat.nx);
   const width = Math.max(1, Math.min(step, Math.floor(MAX_CLIMB / Math.max(1e-9, steepest))));
-  const groups: ColumnGroup[] = [];
+  const ranges: ColumnRange[] = [];
   for (let from = 0; from < flat.nx; from += step) {
     const spare = Math.floor((Math.min(step, flat.nx - from) - width) / 2);
     const first = from + Math.max(0, spare);
-    groups.push(groupColumns(flat, first, Math.min(flat.nx, first + width)));
+    ranges.push({ from: first, to: Math.min(flat.nx, first + width) });
   }
-  return groups;
+  return groupColumns(kernels, flat, ranges);
 }
 
 /** Where each lit fibre is thought to be in each group, [group][fibre]. */

@@ -54,7 +54,7 @@ export function refine(
   options: RefineOptions,
 ): Refined {
   const { nx, ny } = flat;
-  const groups = cutIntoGroups(flat, steepest(path, naming.nFibre));
+  const groups = cutIntoGroups(kernels, flat, steepest(path, naming.nFibre));
   const meter = new Meter(kernels, groups, ny, lit.length, pitch, sigma);
   const fitter = (points: Points) => new SeriesFitter(kernels, points, MAX_DEGREE);
   const walked = guessFromPath(path, groups, naming.nFibre, lit, sigma);

@@ -42,7 +42,7 @@ export async function traceFlat(
   const kernels = await loadKernels();
   const combined = combineFlats([flat].flat());
   requireFlat(combined);
-  const cut = cutThrough(combined);
+  const cut = cutThrough(kernels, combined);
   const peaks = findPeaks(kernels, cut, combined.name);
   const naming = layout === undefined ? numberFibres(peaks, combined.name) : nameFibres(peaks, layout, combined.name);
   const lit = Array.from(naming.peak.keys()).filter((k) => naming.peak[k] >= 0);

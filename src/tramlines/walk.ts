@@ -4,7 +4,8 @@
 import { Centroider } from "../kernels/centroid.js";
 import { LegendreFitter } from "../kernels/legendre.js";
 import type { Kernels } from "../kernels/module.js";
-import { type ColumnGroup, type Flat, groupColumns } from "./flat.js";
+import type { ColumnRange } from "../reference/groups.js";
+import { type ColumnGroup, type Flat, groupColumns, groupStep } from "./flat.js";
 
 /** Columns that a step averages. */
 const STEP_COLUMNS = 8;
@@ -32,23 +33,19 @@ export function walkOutward(
   pitch: number,
 ): Path {
   const nFibre = centre.length;
-  const edges: number[] = [];
-  for (let x = 0; x + STEP_COLUMNS <= flat.nx; x += STEP_COLUMNS) edges.push(x);
-  if (edges.length === 0) edges.push(0);
-  const middle = (step: number) => edges[step] + 0.5 * (Math.min(STEP_COLUMNS, flat.nx) - 1);
+  const groups = groupColumns(kernels, flat, stepsOf(flat.nx));
   const path: Path = {
-    x: Float64Array.from(edges, (_, step) => middle(step)),
-    centre: new Float64Array(edges.length * nFibre),
+    x: Float64Array.from(groups, (group) => group.x),
+    centre: new Float64Array(groups.length * nFibre),
   };
   const meter = new MotionMeter(kernels, flat.ny, guides, pitch);
   const start = path.x.reduce((best, x, step) => (Math.abs(x - x0) < Math.abs(path.x[best] - x0) ? step : best), 0);
   for (const direction of [1, -1]) {
     let here = Float64Array.from(centre, (y) => y + slope * (path.x[start] - x0));
-    let motion = new Float64Array(nFibre).fill(direction * slope * STEP_COLUMNS);
-    for (let step = start; step >= 0 && step < edges.length; step += direction) {
+    let motion = new Float64Array(nFibre).fill(direction * slope * groupStep(flat.nx));
+    for (let step = start; step >= 0 && step < groups.length; step += direction) {
       const predicted = step === start ? here : here.map((y, k) => y + motion[k]);
-      const group = groupColumns(flat, edges[step], Math.min(flat.nx, edges[step] + STEP_COLUMNS));
-      const found = meter.follow(group, predicted);
+      const found = meter.follow(groups[step], predicted);
       // Half of each correction goes into the motion: it keeps pace with curvature without echoing noise.
       if (step !== start) motion = motion.map((m, k) => m + 0.5 * (found[k] - predicted[k]));
       path.centre.set(found, step * nFibre);
@@ -56,6 +53,15 @@ export function walkOutward(
     }
   }
   return path;
+}
+
+/** A few columns in the middle of each step. */
+function stepsOf(nx: number): ColumnRange[] {
+  const step = groupStep(nx);
+  const inset = (step - STEP_COLUMNS) >> 1;
+  const ranges: ColumnRange[] = [];
+  for (let from = inset; from + STEP_COLUMNS <= nx; from += step) ranges.push({ from, to: from + STEP_COLUMNS });
+  return ranges.length > 0 ? ranges : [{ from: 0, to: Math.min(nx, STEP_COLUMNS) }];
 }
 
 /** Where the walk saw all fibres in column x, linear between its steps. */

@@ -14,7 +14,7 @@ const layout = { blocks: [13, 10, 14], pitch: 4.9, gap: [4.6, 3.7], dead: [8, 30
 const scene: FlatScene = { seed: 11, nx: 200, layout, fwhm: 2.45, sag: 5, tilt: 3, light: 15_000 };
 
 function peaksOf(drawn: DrawnFlat) {
-  const cut = cutThrough(combineFlats([drawn.frame]));
+  const cut = cutThrough(kernels, combineFlats([drawn.frame]));
   return { cut, peaks: findPeaks(kernels, cut, "flat") };
 }
 

@@ -1,7 +1,13 @@
-import { describe, expect, it } from "vitest";
+import { beforeAll, describe, expect, it } from "vitest";
 import type { Frame } from "../../src/detector/frame.js";
+import { type Kernels, loadKernels } from "../../src/kernels/module.js";
 import { combineFlats, groupColumns } from "../../src/tramlines/flat.js";
 import { drawFlat, type FlatScene } from "./flatScene.js";
+
+let kernels: Kernels;
+beforeAll(async () => {
+  kernels = await loadKernels();
+});
 
 const layout = { blocks: [3], pitch: 6, gap: 0, dead: [], sky: [] };
 const scene: FlatScene = { seed: 2, nx: 24, layout, fwhm: 2.5, sag: 0, tilt: 0, light: 9000 };
@@ -46,7 +52,7 @@ describe("combining flats", () => {
     const { nx } = scene;
     const frame = level(900, { [5 * nx + 9]: 4000 });
     frame.mask[6 * nx + 10] = 1;
-    const group = groupColumns(combineFlats([frame]), 8, 16);
+    const [group] = groupColumns(kernels, combineFlats([frame]), [{ from: 8, to: 16 }]);
     expect([group.mean[4], group.mean[5], group.mean[6]]).toEqual([900, 900, 900]);
     expect([group.count[4], group.count[5], group.count[6]]).toEqual([8, 7, 7]);
     // Read noise 4 e⁻: 16 e⁻² a pixel; photons 1 e⁻² per e⁻.
