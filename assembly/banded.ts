@@ -70,6 +70,36 @@ export function solveBand<T extends number>(bandPtr: usize, n: i32, b: i32, rhsP
   }
 }
 
+/** `solveBand` for several right-hand sides at once, `rhsPtr`: n × nSide v128, [unknown][side]. The sides do not wait for each
+ * other, and what was solved long ago is taken off first, so that little waits for what was solved last. */
+export function solveBandSides<T extends number>(bandPtr: usize, n: i32, b: i32, rhsPtr: usize, nSide: i32): void {
+  const rowBytes = (<usize>(b + 1)) << 4;
+  const sideBytes = (<usize>nSide) << 4;
+  for (let i: i32 = 0; i < n; i++) {
+    const here = bandPtr + <usize>i * rowBytes;
+    const end = rhsPtr + <usize>(i + 1) * sideBytes;
+    for (let at = end - sideBytes; at < end; at += 16) {
+      let y = v128.load(at);
+      for (let j = min(i, b); j >= 1; j--) {
+        y = v128.sub<T>(y, v128.mul<T>(v128.load(here + ((<usize>j) << 4)), v128.load(at - <usize>j * sideBytes)));
+      }
+      v128.store(at, y);
+    }
+  }
+  for (let i = n - 1; i >= 0; i--) {
+    const here = bandPtr + <usize>i * rowBytes;
+    const end = rhsPtr + <usize>(i + 1) * sideBytes;
+    for (let at = end - sideBytes; at < end; at += 16) {
+      let x = v128.mul<T>(v128.load(at), v128.load(here));
+      for (let j = min(n - 1 - i, b); j >= 1; j--) {
+        const l = v128.load(here + <usize>j * rowBytes + ((<usize>j) << 4));
+        x = v128.sub<T>(x, v128.mul<T>(l, v128.load(at + <usize>j * sideBytes)));
+      }
+      v128.store(at, x);
+    }
+  }
+}
+
 /** The band of M⁻¹ from the factors of `factorBand`, in the same layout. `inversePtr`: n × (b+1) v128. */
 export function inverseBand<T extends number>(bandPtr: usize, n: i32, b: i32, inversePtr: usize): void {
   const rowBytes = (<usize>(b + 1)) << 4;

@@ -1,6 +1,6 @@
 // The module's whole interface. Pointers and counts in, numbers out; src/kernels/ is the only caller.
 export { bandedSystems32, bandedSystems64 } from "./banded";
-export { centreFibres, centringScratchBytes } from "./centring";
+export { centreColumns } from "./centring";
 export { centroid } from "./centroid";
 export { erf } from "./erf";
 export { exp } from "./exp";

@@ -46,31 +46,7 @@ export interface KernelExports {
   ): number;
 
   /** assembly/centring.ts */
-  centringScratchBytes(
-    nRow: number,
-    nFibre: number,
-    nPar: number,
-    neighbours: number,
-    reach: number,
-    nBack: number,
-  ): number;
-  centreFibres(
-    dataPtr: number,
-    weightPtr: number,
-    nRow: number,
-    centrePtr: number,
-    sigmaPtr: number,
-    nFibre: number,
-    nPar: number,
-    neighbours: number,
-    reach: number,
-    nBack: number,
-    solutionPtr: number,
-    variancePtr: number,
-    modelPtr: number,
-    backgroundPtr: number,
-    scratchPtr: number,
-  ): void;
+  centreColumns(jobPtr: number, tile: number): void;
 
   /** assembly/groups.ts */
   groupMedians(jobPtr: number, tile: number): void;

@@ -1,4 +1,4 @@
-/** Joint linearised centring of all fibres in a column. Light near fibre k, whose centre is thought at y_k with width
+/** Joint linearised centring of all fibres in a column, weighted by the variance of its own model. Light near fibre k, whose centre is thought at y_k with width
  * σ_k, is modelled as
  *
  *     a P(y − y_k) + u ∂P/∂y_k + s ∂P/∂σ_k,      u = a·δ (shift),  s = a·δσ (widening; only when nPar = 3)
@@ -20,9 +20,37 @@ export interface CentringProblem {
   sigma: ArrayLike<number>;
 }
 
-export interface CentringShape {
+/** A column to be centred, all [nRow]. */
+export interface CentringColumn {
+  /** e⁻; anything where it is not good. */
+  data: ArrayLike<number>;
+  /** 1, or 0 for a pixel left out. */
+  good: ArrayLike<number>;
+  /** e⁻²: variance without light. */
+  fixedVariance: ArrayLike<number>;
+  /** e⁻² per e⁻ of light. */
+  variancePerElectron: ArrayLike<number>;
+}
+
+export type CentringGuess = Pick<CentringProblem, "centre" | "sigma">;
+
+export interface CentringRounds {
   /** 2: light and shift; 3: light, shift and width. */
   nPar: 2 | 3;
+  /** Solutions, each weighted by the variance of the model before it; the first of all by that of the data. */
+  nRound: number;
+  /** Pixels farther than this from every centre do not count. */
+  near: number;
+  /** The profile's own relative error: a share of the light that adds to its noise. */
+  relativeError: number;
+  /** Pixels this many σ off the model are left out before the last round, and from there on; 0: none. */
+  kappa: number;
+  /** … σ with this for the profile's error. */
+  rejectError: number;
+}
+
+export interface CentringShape {
+  /** Fibres at most this many places apart overlap. */
   neighbours: number;
   /** A fibre's light ends this far from its centre, pixels. */
   reach: number;
@@ -41,11 +69,45 @@ export interface CentringSolution {
   background: Float64Array;
 }
 
-export function centreFibres(problem: CentringProblem, shape: CentringShape): CentringSolution {
+/** Rounds of `centreFibres`, starting from `model` [nRow]; what is left out becomes 0 in `good`. */
+export function centreColumn(
+  column: CentringColumn,
+  good: Uint8Array,
+  guess: CentringGuess,
+  model: ArrayLike<number>,
+  shape: CentringShape,
+  rounds: CentringRounds,
+): CentringSolution {
+  const { data, fixedVariance, variancePerElectron } = column;
+  const variance = (y: number, m: number, relativeError: number) =>
+    fixedVariance[y] + variancePerElectron[y] * Math.max(0, m) + (relativeError * Math.max(0, m)) ** 2;
+  const rows = Array.from({ length: data.length }, (_, y) => y);
+  const isNear = rows.map((y) => Array.from(guess.centre).some((centre) => Math.abs(y - centre) <= rounds.near));
+  let before = model;
+  let solution: CentringSolution | undefined;
+  for (let round = 1; round <= rounds.nRound; round++) {
+    const m = (y: number) => before[y] ?? 0;
+    if (round === rounds.nRound && rounds.kappa > 0) {
+      for (const y of rows) {
+        // What stands next to bright pixels may stray by a share of those.
+        const beside = Math.max(m(y), 0.5 * m(y - 1), 0.5 * m(y + 1));
+        const limit = rounds.kappa ** 2 * variance(y, beside, rounds.rejectError);
+        if ((data[y] - m(y)) ** 2 > limit) good[y] = 0;
+      }
+    }
+    const weight = rows.map((y) => (good[y] === 1 && isNear[y] ? 1 / variance(y, m(y), rounds.relativeError) : 0));
+    solution = centreFibres({ data, weight, ...guess }, shape, rounds.nPar);
+    before = solution.model;
+  }
+  return solution!;
+}
+
+/** One solution with the weights given. */
+export function centreFibres(problem: CentringProblem, shape: CentringShape, nPar: 2 | 3): CentringSolution {
   const { data, weight } = problem;
-  const { nPar, neighbours, nBack } = shape;
+  const { neighbours, nBack } = shape;
   const nRow = data.length;
-  const fibres = designColumns(problem, shape, nRow);
+  const fibres = designColumns(problem, shape, nPar, nRow);
   const rows = Array.from({ length: nRow }, (_, y) => legendreBasis(legendreArgument(y, nRow), nBack));
   const smooth = Array.from({ length: nBack }, (_, q) => rows.map((row) => row[q]));
   const dot = (p: ArrayLike<number>, r: ArrayLike<number>) => {
@@ -93,17 +155,17 @@ export function centreFibres(problem: CentringProblem, shape: CentringShape): Ce
 }
 
 /** P, ∂P/∂y_k (, ∂P/∂σ_k) of each fibre on every row. */
-function designColumns(problem: CentringProblem, shape: CentringShape, nRow: number): Float64Array[] {
+function designColumns(problem: CentringProblem, shape: CentringShape, nPar: 2 | 3, nRow: number): Float64Array[] {
   return Array.from(problem.centre).flatMap((centre, k) => {
     const sigma = problem.sigma[k];
-    const columns = Array.from({ length: shape.nPar }, () => new Float64Array(nRow));
+    const columns = Array.from({ length: nPar }, () => new Float64Array(nRow));
     for (let y = 0; y < nRow; y++) {
       if (Math.abs(y - centre) > shape.reach) continue;
       const low = y - 0.5 - centre;
       const high = y + 0.5 - centre;
       columns[0][y] = 0.5 * (erf(high / sigma / Math.SQRT2) - erf(low / sigma / Math.SQRT2));
       columns[1][y] = density(low, sigma) - density(high, sigma);
-      if (shape.nPar === 3) columns[2][y] = (low * density(low, sigma) - high * density(high, sigma)) / sigma;
+      if (nPar === 3) columns[2][y] = (low * density(low, sigma) - high * density(high, sigma)) / sigma;
     }
     return columns;
   });

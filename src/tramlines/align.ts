@@ -41,7 +41,7 @@ export interface Alignment {
   otherIndex: Int32Array;
 }
 
-/** All alignments at once: forward[i, j] is the best score of everything up to peak j on position i, backward[i, j] of
+/** All alignments at once: forward[j, i] is the best score of everything up to peak j on position i, backward[j, i] of
  * everything after; their sum is the best score of any reading that puts peak j on position i. */
 export function align(slit: Slit, ruler: Ruler, peaks: NamedLight[]): Alignment {
   const nPeak = peaks.length;
@@ -50,65 +50,88 @@ export function align(slit: Slit, ruler: Ruler, peaks: NamedLight[]): Alignment 
   const backward = new Float64Array(size).fill(Number.NEGATIVE_INFINITY);
   const from = new Int32Array(size).fill(-1);
   const typical = medianOf(peaks.map((peak) => peak.light));
-  const dim = peaks.map((peak) => peak.light < DIM_SHARE * typical);
+  const dim = Uint8Array.from(peaks, (peak) => (peak.light < DIM_SHARE * typical ? 1 : 0));
   const extraBelow = new Float64Array(nPeak + 1);
-  for (let j = 0; j < nPeak; j++) extraBelow[j + 1] = extraBelow[j] + (dim[j] ? EXTRA_DIM : EXTRA_BRIGHT);
-  const emission = (i: number, j: number) => (slit.dead[i] ? -(dim[j] ? DIM_IN_DEAD : LIGHT_IN_DEAD) : 0);
-
-  const eachStep = (i: number, j: number, visit: (i2: number, j2: number, score: number) => void) => {
-    for (let j2 = j + 1; j2 < Math.min(nPeak, j + 2 + MAX_EXTRAS_SKIPPED); j2++) {
-      const distance = ruler.at[j2] - ruler.at[j];
-      const tolerance = Math.max(0.45, 0.035 * distance);
-      for (let i2 = firstFrom(slit.at, slit.at[i] + distance - tolerance, i + 1); i2 < slit.n; i2++) {
-        const expected = slit.at[i2] - slit.at[i];
-        if (expected > distance + tolerance) break;
-        const gaps = slit.gapsPassed[i2] - slit.gapsPassed[i];
-        const sigma2 = 0.06 ** 2 + (0.012 * expected) ** 2 + (gaps > 0 ? (0.06 + 0.08 * gaps) ** 2 : 0);
-        const off = Math.min(10, (0.5 * (expected - distance) ** 2) / sigma2);
-        visit(i2, j2, -off - missingCost(slit, i + 1, i2) - (extraBelow[j2] - extraBelow[j + 1]));
-      }
-    }
-  };
+  for (let j = 0; j < nPeak; j++) extraBelow[j + 1] = extraBelow[j] + (dim[j] === 1 ? EXTRA_DIM : EXTRA_BRIGHT);
+  const emission = (i: number, j: number) => (slit.dead[i] ? -(dim[j] === 1 ? DIM_IN_DEAD : LIGHT_IN_DEAD) : 0);
+  const pairs = new Pairs(slit, ruler, extraBelow);
 
   for (let j = 0; j < nPeak; j++) {
     for (let i = 0; i < slit.n; i++) {
-      const here = i * nPeak + j;
+      const here = j * slit.n + i;
       const start = -missingCost(slit, 0, i) - extraBelow[j];
       const best = Math.max(start, forward[here]);
       if (best === start) from[here] = -1;
       forward[here] = best + emission(i, j);
-      eachStep(i, j, (i2, j2, score) => {
-        const there = i2 * nPeak + j2;
-        if (forward[here] + score > forward[there]) {
-          forward[there] = forward[here] + score;
-          from[there] = here;
-        }
-      });
     }
-  }
-  for (let j = nPeak - 1; j >= 0; j--) {
-    for (let i = slit.n - 1; i >= 0; i--) {
-      const here = i * nPeak + j;
-      let best = -missingCost(slit, i + 1, slit.n) - (extraBelow[nPeak] - extraBelow[j + 1]);
-      eachStep(i, j, (i2, j2, score) => {
-        best = Math.max(best, score + emission(i2, j2) + backward[i2 * nPeak + j2]);
-      });
-      backward[here] = best;
-    }
+    pairs.eachNext(j, (i, i2, j2, score) => {
+      const there = j2 * slit.n + i2;
+      const total = forward[j * slit.n + i] + score;
+      if (total > forward[there]) {
+        forward[there] = total;
+        from[there] = j * slit.n + i;
+      }
+    });
   }
   const end = (j: number, i: number) => -missingCost(slit, i + 1, slit.n) - (extraBelow[nPeak] - extraBelow[j + 1]);
+  for (let j = nPeak - 1; j >= 0; j--) {
+    for (let i = 0; i < slit.n; i++) backward[j * slit.n + i] = end(j, i);
+    pairs.eachNext(j, (i, i2, j2, score) => {
+      const here = j * slit.n + i;
+      const total = score + emission(i2, j2) + backward[j2 * slit.n + i2];
+      if (total > backward[here]) backward[here] = total;
+    });
+  }
   let last = -1;
   let score = -missingCost(slit, 0, slit.n) - extraBelow[nPeak];
-  for (let here = 0; here < size; here++) {
-    const total = forward[here] + end(here % nPeak, Math.floor(here / nPeak));
-    if (total > score) {
-      score = total;
-      last = here;
+  for (let i = 0; i < slit.n; i++) {
+    for (let j = 0; j < nPeak; j++) {
+      const total = forward[j * slit.n + i] + end(j, i);
+      if (total > score) {
+        score = total;
+        last = j * slit.n + i;
+      }
     }
   }
   const slitIndex = new Int32Array(nPeak).fill(-1);
-  for (let here = last; here >= 0; here = from[here]) slitIndex[here % nPeak] = Math.floor(here / nPeak);
+  for (let here = last; here >= 0; here = from[here]) slitIndex[Math.floor(here / slit.n)] = here % slit.n;
   return { slitIndex, score, ...otherReadings(slitIndex, slit.n, forward, backward) };
+}
+
+/** Named peaks that may follow each other: j on position i, and the next one on the next position that has light. */
+class Pairs {
+  constructor(
+    private readonly slit: Slit,
+    private readonly ruler: Ruler,
+    private readonly extraBelow: Float64Array,
+  ) {}
+
+  /** Every peak j2 that may follow j, and both their positions, with the score of what lies between. */
+  eachNext(j: number, visit: (i: number, i2: number, j2: number, score: number) => void): void {
+    const { slit, ruler, extraBelow } = this;
+    const { n, at, gapsPassed } = slit;
+    const end = Math.min(ruler.at.length, j + 2 + MAX_EXTRAS_SKIPPED);
+    for (let j2 = j + 1; j2 < end; j2++) {
+      const distance = ruler.at[j2] - ruler.at[j];
+      const tolerance = Math.max(0.45, 0.035 * distance);
+      const extras = extraBelow[j2] - extraBelow[j + 1];
+      // The first position near enough only rises with i.
+      let near = 1;
+      for (let i = 0; i < n; i++) {
+        const here = at[i];
+        near = Math.max(near, i + 1);
+        while (near < n && at[near] < here + distance - tolerance) near++;
+        for (let i2 = near; i2 < n; i2++) {
+          const expected = at[i2] - here;
+          if (expected > distance + tolerance) break;
+          const gaps = gapsPassed[i2] - gapsPassed[i];
+          const sigma2 = 0.06 ** 2 + (0.012 * expected) ** 2 + (gaps > 0 ? (0.06 + 0.08 * gaps) ** 2 : 0);
+          const off = Math.min(10, (0.5 * (expected - distance) ** 2) / sigma2);
+          visit(i, i2, j2, -off - missingCost(slit, i + 1, i2) - extras);
+        }
+      }
+    }
+  }
 }
 
 /** For each peak the best score of a reading that gives it another slit position. */
@@ -116,9 +139,9 @@ function otherReadings(slitIndex: Int32Array, nFibre: number, forward: Float64Ar
   const nPeak = slitIndex.length;
   const otherScore = new Float64Array(nPeak).fill(Number.NEGATIVE_INFINITY);
   const otherIndex = new Int32Array(nPeak).fill(-1);
-  for (let i = 0; i < nFibre; i++) {
-    for (let j = 0; j < nPeak; j++) {
-      const score = forward[i * nPeak + j] + backward[i * nPeak + j];
+  for (let j = 0; j < nPeak; j++) {
+    for (let i = 0; i < nFibre; i++) {
+      const score = forward[j * nFibre + i] + backward[j * nFibre + i];
       if (i === slitIndex[j] || slitIndex[j] < 0 || !(score > otherScore[j])) continue;
       otherScore[j] = score;
       otherIndex[j] = i;
@@ -132,15 +155,4 @@ function otherReadings(slitIndex: Int32Array, nFibre: number, forward: Float64Ar
 function missingCost(slit: Slit, from: number, to: number): number {
   const n = slit.litBelow[to] - slit.litBelow[from];
   return n > 0 ? MISSING_FIRST + MISSING_NEXT * (n - 1) : 0;
-}
-
-/** First index ≥ `low` with sorted[index] ≥ value. */
-function firstFrom(sorted: Float64Array, value: number, low: number): number {
-  let high = sorted.length;
-  while (low < high) {
-    const mid = (low + high) >> 1;
-    if (sorted[mid] < value) low = mid + 1;
-    else high = mid;
-  }
-  return low;
 }

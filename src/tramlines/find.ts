@@ -81,9 +81,14 @@ export function findPeaks(kernels: Kernels, cut: Cut, name: string): Peak[] {
 
 /** The σ that leaves least, of a few: crowded fibres that nearly melt are only told from background by the right one. */
 function bestSigma(kernels: Kernels, cut: Cut, positions: number[]): number {
+  const centre = Float64Array.from(positions);
   const rest = START_SIGMAS.map((sigma) => {
-    const { model } = centreOnce(kernels, cut, Float64Array.from(positions), sigma, cut.mean, 2);
-    return cut.mean.reduce((sum, d, y) => sum + (Number.isNaN(d) || model[y] === 0 ? 0 : Math.abs(d - model[y])), 0);
+    const { model } = new CutCentring(kernels, cut, centre).measure(centre, sigma, 2);
+    let sum = 0;
+    cut.mean.forEach((d, y) => {
+      if (!Number.isNaN(d) && model[y] !== 0) sum += Math.abs(d - model[y]);
+    });
+    return sum;
   });
   return START_SIGMAS[rest.indexOf(Math.min(...rest))];
 }
@@ -170,12 +175,10 @@ function centrePeaks(
   const limit = 0.12 * pitchOf(centre);
   const nPar = move ? 3 : 2;
   let sigma = startSigma;
-  let model = cut.mean;
+  const centring = new CutCentring(kernels, cut, centre);
   let peaks: Peak[] = [];
   for (let round = 0; round < nRound; round++) {
-    const result = centreOnce(kernels, cut, centre, sigma, model, nPar);
-    const { solution, variance, background } = result;
-    model = result.model;
+    const { solution, variance, background, model } = centring.measure(centre, sigma, nPar);
     const brightest = solution.reduce((best, value, i) => (i % nPar === 0 ? Math.max(best, value) : best), 0);
     const widening: number[] = [];
     for (let k = 0; k < centre.length; k++) {
@@ -199,41 +202,34 @@ function centrePeaks(
   return peaks.sort((a, b) => a.position - b.position);
 }
 
-/** One joint centring of the cut, all widths alike; `model`: what the variance is taken from. */
-function centreOnce(
-  kernels: Kernels,
-  cut: Cut,
-  centre: Float64Array,
-  sigma: number,
-  model: Float64Array,
-  nPar: 2 | 3,
-): CentringResult {
-  const ny = cut.mean.length;
-  const pitch = pitchOf(centre);
-  const reach = Math.min(REACH_SIGMAS * 1.8, 1.5 * pitch);
-  const size = { nRow: ny, nFibre: centre.length, neighbours: overlapping(reach, pitch), reach, nBack: 3 };
-  const near = rowsNear(centre, 1.3 * pitch, ny);
-  const weight = model.map((m, y) => {
-    const light = Math.max(0, Number.isNaN(m) ? 0 : m);
-    const variance = cut.fixedVariance[y] + cut.variancePerElectron[y] * light + (0.02 * light) ** 2;
-    return near[y] === 0 || Number.isNaN(cut.mean[y]) ? 0 : 1 / variance;
-  });
-  const column = { data: cut.mean, weight, centre, sigma: new Float64Array(centre.length).fill(sigma) };
-  return new Centring(kernels, size).measure([column], nPar)[0];
+/** Joint centring of the cut, all widths alike; each is weighted by the variance of the last one's model. */
+class CutCentring {
+  private readonly centring: Centring;
+  private readonly near: number;
+
+  constructor(kernels: Kernels, cut: Cut, centre: Float64Array) {
+    const pitch = pitchOf(centre);
+    const reach = Math.min(REACH_SIGMAS * 1.8, 1.5 * pitch);
+    const neighbours = overlapping(reach, pitch);
+    const size = { nRow: cut.mean.length, nFibre: centre.length, nColumn: 1, neighbours, reach, nBack: 3 };
+    this.centring = new Centring(kernels, size);
+    this.near = 1.3 * pitch;
+    this.centring.place(0, {
+      ...cut,
+      data: cut.mean,
+      good: Uint8Array.from(cut.mean, (d) => (Number.isNaN(d) ? 0 : 1)),
+    });
+  }
+
+  measure(centre: Float64Array, sigma: number, nPar: 2 | 3): CentringResult & { model: Float64Array } {
+    this.centring.guess(0, { centre, sigma: new Float64Array(centre.length).fill(sigma) });
+    this.centring.measure({ nPar, nRound: 1, near: this.near, relativeError: 0.02, kappa: 0, rejectError: 0 });
+    return { ...this.centring.result(0), model: this.centring.model(0) };
+  }
 }
 
 function pitchOf(positions: Float64Array): number {
   return positions.length > 1 ? medianOf(positions.slice(1).map((y, k) => y - positions[k])) : 10;
-}
-
-/** 1 for the rows at most `distance` px from a centre: what lies farther says nothing of the light between fibres. */
-export function rowsNear(centre: ArrayLike<number>, distance: number, ny: number): Uint8Array {
-  const near = new Uint8Array(ny);
-  for (let k = 0; k < centre.length; k++) {
-    const to = Math.min(ny - 1, Math.floor(centre[k] + distance));
-    for (let y = Math.max(0, Math.ceil(centre[k] - distance)); y <= to; y++) near[y] = 1;
-  }
-  return near;
 }
 
 function backgroundAt(background: Float64Array, y: number, ny: number): number {

@@ -1,15 +1,17 @@
 /** Centres and widths of all lit fibres in groups of columns over the whole flat, by joint linearised centring about
  * where the fibres are thought to be. */
-import { Centring, type CentringColumn, type CentringResult } from "../kernels/centring.js";
+import { Centring, type CentringResult, type Misfit } from "../kernels/centring.js";
 import { Centroider } from "../kernels/centroid.js";
 import type { Kernels } from "../kernels/module.js";
 import type { ColumnRange } from "../reference/groups.js";
 import { legendreArgument, legendreValue } from "../reference/legendre.js";
-import { overlapping, REACH_SIGMAS, rowsNear } from "./find.js";
+import { overlapping, REACH_SIGMAS } from "./find.js";
 import { type ColumnGroup, type Flat, groupColumns, groupStep } from "./flat.js";
 
 /** Within a group a tramline may climb by this, px; steeper ones get groups of fewer columns. */
 const MAX_CLIMB = 0.4;
+/** From one group to the next it may climb by this, px, for both to be measured side by side. */
+const MAX_PAIR_CLIMB = 3;
 const BACKGROUND_TERMS = 4;
 const CENTROID_ROUNDS = 4;
 /** Light in the background is trusted this many pitches from a fibre. */
@@ -51,40 +53,67 @@ export interface Measured {
   /** σ, px; NaN when widths were not asked for. */
   sigma: Float64Array[];
   sigmaVariance: Float64Array[];
-  /** [group][row]: e⁻ per pixel of the smooth background. */
+  /** [group]: Legendre terms of the smooth background over the rows, e⁻ per pixel. */
   background: Float64Array[];
   /** The profile's own relative error: what residuals scatter beyond noise, as a share of the model. */
   relativeError: number;
-  /** Pixels left out as cosmic rays or the like. */
-  nRejected: number;
+}
+
+export interface MeasureRounds {
+  /** Centres alone, or widths too. */
+  nPar: 2 | 3;
+  nRound: number;
+  /** The profile's own, as known so far. */
+  relativeError: number;
+  /** Pixels far off the model are left out from here on. */
+  reject: boolean;
+  /** Groups to measure: 1 for all, else about one in so many. */
+  oneIn: number;
 }
 
 export class Meter {
   private readonly centring: Centring;
   private readonly near: number;
-  /** [group][row]: 0 for a pixel that was left out. */
-  private readonly good: Uint8Array[];
+  /** Groups that one pair of columns holds: one alone where tramlines are too steep for two. */
+  private readonly nPerPair: number;
 
+  /** @param steepest px of y per px of x. */
   constructor(
     kernels: Kernels,
     private readonly groups: ColumnGroup[],
     private readonly ny: number,
     private readonly nFibre: number,
-    pitch: number,
-    sigma: number,
+    { pitch, sigma, steepest }: { pitch: number; sigma: number; steepest: number },
   ) {
     const reach = Math.min(REACH_SIGMAS * sigma * 1.2, 2 * pitch);
-    const size = { nRow: ny, nFibre, neighbours: overlapping(reach, pitch), reach, nBack: BACKGROUND_TERMS };
-    this.centring = new Centring(kernels, size);
+    const climb = groups.length > 1 ? steepest * (groups[1].x - groups[0].x) : 0;
+    this.nPerPair = climb < MAX_PAIR_CLIMB ? 2 : 1;
+    const nColumn = (2 / this.nPerPair) * groups.length;
+    const neighbours = overlapping(reach, pitch);
+    this.centring = new Centring(kernels, { nRow: ny, nFibre, nColumn, neighbours, reach, nBack: BACKGROUND_TERMS });
     this.near = BACKGROUND_PITCHES * pitch;
-    this.good = groups.map((group) => Uint8Array.from(group.count, (n) => (n > 0 ? 1 : 0)));
+    groups.forEach((group, g) => {
+      const good = Uint8Array.from(group.count, (n) => (n > 0 ? 1 : 0));
+      for (const column of this.columnsOf(g)) this.centring.place(column, { ...group, data: group.mean, good });
+    });
   }
 
-  /** One round over all groups. `relativeError`: the profile's own, as known so far; with `reject`, pixels far off the model
-   * are left out from here on, and their columns measured again. */
-  measure(guess: Guess, withWidth: boolean, relativeError: number, reject: boolean): Measured {
-    const nPar = withWidth ? 3 : 2;
-    const perGroup = () => this.groups.map(() => new Float64Array(this.nFibre).fill(Number.NaN));
+  /** The groups that a measurement of one in so many takes. */
+  groupsOf(oneIn: number): ColumnGroup[] {
+    return this.indicesOf(oneIn).map((g) => this.groups[g]);
+  }
+
+  /** Measures `groupsOf(oneIn)` about `guess`, which is given for those. */
+  measure(guess: Guess, { nPar, nRound, relativeError, reject, oneIn }: MeasureRounds): Measured {
+    const indices = this.indicesOf(oneIn);
+    indices.forEach((g, i) => {
+      const sigma = guess.sigma[i].map((s, k) => Math.sqrt(s * s + smear(this.groups[g], guess.slope[i][k])));
+      for (const column of this.columnsOf(g)) this.centring.guess(column, { centre: guess.centre[i], sigma });
+    });
+    const rejectError = Math.max(START_ERROR, relativeError);
+    const kappa = reject ? KAPPA_PIXEL : 0;
+    this.centring.measure({ nPar, nRound, near: this.near, relativeError, kappa, rejectError }, oneIn);
+    const perGroup = () => indices.map(() => new Float64Array(this.nFibre).fill(Number.NaN));
     const measured: Measured = {
       light: perGroup(),
       lightVariance: perGroup(),
@@ -94,30 +123,13 @@ export class Meter {
       sigmaVariance: perGroup(),
       background: [],
       relativeError,
-      nRejected: 0,
     };
-    const misfit: Misfit = { residual: 0, noise: 0, light: 0, nPixel: 0, nUnknown: 0 };
-    for (let g = 0; g < this.groups.length; g += 2) {
-      const pair = g + 1 < this.groups.length ? [g, g + 1] : [g];
-      let columns = pair.map((i) => this.column(i, guess, undefined, relativeError));
-      let results = this.centring.measure(columns, nPar);
-      columns = pair.map((i, lane) => this.column(i, guess, results[lane].model, relativeError));
-      results = this.centring.measure(columns, nPar);
-      if (reject) {
-        const nOut = pair.map((i, lane) => this.rejectPixels(i, results[lane].model, relativeError));
-        if (nOut.some((n) => n > 0)) {
-          measured.nRejected += nOut.reduce((sum, n) => sum + n, 0);
-          columns = pair.map((i, lane) => this.column(i, guess, results[lane].model, relativeError));
-          results = this.centring.measure(columns, nPar);
-        }
-      }
-      pair.forEach((i, lane) => {
-        this.keep(i, guess, results[lane], nPar, measured);
-        measured.background.push(backgroundRows(results[lane].background, this.ny));
-        this.addMisfit(columns[lane], this.groups[i], results[lane], misfit);
-      });
-    }
-    measured.relativeError = profileError(misfit);
+    indices.forEach((g, i) => {
+      const result = this.centring.result(this.columnsOf(g)[0]);
+      this.keep(this.groups[g], i, guess, result, nPar, measured);
+      measured.background.push(result.background);
+    });
+    measured.relativeError = profileError(indices.map((g) => this.centring.misfit(this.columnsOf(g)[0])));
     return measured;
   }
 
@@ -125,15 +137,16 @@ export class Meter {
   centroids(kernels: Kernels, guess: Guess, joint: Measured, halfWidth: number): Measured {
     const centroider = new Centroider(kernels, this.ny);
     const centre = this.groups.map((group, g) => {
-      centroider.load(group.mean, this.good[g]);
-      return guess.centre[g].map((y) => this.centroidOf(centroider, g, y, halfWidth, joint.background[g]));
+      const good = this.centring.good(this.columnsOf(g)[0]);
+      centroider.load(group.mean, good);
+      return guess.centre[g].map((y) => this.centroidOf(centroider, good, y, halfWidth, joint.background[g]));
     });
     return { ...joint, centre };
   }
 
   private centroidOf(
     centroider: Centroider,
-    g: number,
+    good: Float64Array,
     start: number,
     halfWidth: number,
     background: Float64Array,
@@ -141,98 +154,59 @@ export class Meter {
     const from = Math.round(start - halfWidth);
     const to = Math.round(start + halfWidth);
     // A window with a hole, or over the edge, has no centroid.
-    for (let y = from; y <= to; y++) if (this.good[g][y] !== 1) return Number.NaN;
+    for (let y = from; y <= to; y++) if (good[y] !== 1) return Number.NaN;
+    const under = legendreValue(background, legendreArgument(Math.round(start), this.ny));
     let centre = start;
     for (let round = 0; round < CENTROID_ROUNDS; round++) {
-      centre = centroider.measure(centre, halfWidth, background[Math.round(start)]);
+      centre = centroider.measure(centre, halfWidth, under);
       if (!(Math.abs(centre - start) < 0.5 * halfWidth)) return Number.NaN;
     }
     return centre;
   }
 
-  private column(g: number, guess: Guess, model: Float64Array | undefined, relativeError: number): CentringColumn {
-    const group = this.groups[g];
-    const near = rowsNear(guess.centre[g], this.near, this.ny);
-    const weight = new Float64Array(this.ny);
-    for (let y = 0; y < this.ny; y++) {
-      if (near[y] === 0 || this.good[g][y] === 0) continue;
-      weight[y] = 1 / this.variance(group, y, model === undefined ? group.mean[y] : model[y], relativeError);
-    }
-    const climb2 = group.width * group.width - 1;
-    const sigma = guess.sigma[g].map((s, k) => Math.sqrt(s * s + (guess.slope[g][k] ** 2 * climb2) / 12));
-    return { data: group.mean, weight, centre: guess.centre[g], sigma };
+  private columnsOf(g: number): number[] {
+    return this.nPerPair === 2 ? [g] : [2 * g, 2 * g + 1];
   }
 
-  private variance(group: ColumnGroup, y: number, model: number, relativeError: number): number {
-    const light = Math.max(0, model);
-    return group.fixedVariance[y] + group.variancePerElectron[y] * light + (relativeError * light) ** 2;
+  /** The groups in every `oneIn`-th pair. */
+  private indicesOf(oneIn: number): number[] {
+    return Array.from(this.groups.keys()).filter((g) => Math.floor(g / this.nPerPair) % oneIn === 0);
   }
 
-  private rejectPixels(g: number, model: Float64Array, relativeError: number): number {
-    const group = this.groups[g];
-    let n = 0;
-    for (let y = 0; y < this.ny; y++) {
-      if (this.good[g][y] === 0) continue;
-      // What stands next to bright pixels may stray by a share of those.
-      const beside = Math.max(model[y], 0.5 * (model[y - 1] ?? 0), 0.5 * (model[y + 1] ?? 0));
-      const off = group.mean[y] - model[y];
-      if (off * off <= KAPPA_PIXEL ** 2 * this.variance(group, y, beside, Math.max(START_ERROR, relativeError)))
-        continue;
-      this.good[g][y] = 0;
-      n++;
-    }
-    return n;
-  }
-
-  private keep(g: number, guess: Guess, result: CentringResult, nPar: number, measured: Measured): void {
-    const climb2 = this.groups[g].width ** 2 - 1;
+  private keep(group: ColumnGroup, i: number, guess: Guess, result: CentringResult, nPar: number, measured: Measured) {
+    const { solution, variance } = result;
     for (let k = 0; k < this.nFibre; k++) {
       const at = k * nPar;
-      const a = result.solution[at];
-      measured.light[g][k] = a;
-      measured.lightVariance[g][k] = result.variance[at];
-      if (!(a > 0) || !(result.variance[at + 1] > 0)) continue;
-      const shift = result.solution[at + 1] / a;
-      measured.centre[g][k] = guess.centre[g][k] + Math.max(-1, Math.min(1, shift));
-      measured.centreVariance[g][k] = result.variance[at + 1] / (a * a);
-      if (nPar < 3 || !(result.variance[at + 2] > 0)) continue;
-      const smear2 = (guess.slope[g][k] ** 2 * climb2) / 12;
-      const seen =
-        Math.sqrt(guess.sigma[g][k] ** 2 + smear2) + Math.max(-0.5, Math.min(0.5, result.solution[at + 2] / a));
-      measured.sigma[g][k] = Math.sqrt(Math.max(0.04, seen * seen - smear2));
-      measured.sigmaVariance[g][k] = result.variance[at + 2] / (a * a);
+      const a = solution[at];
+      measured.light[i][k] = a;
+      measured.lightVariance[i][k] = variance[at];
+      if (!(a > 0) || !(variance[at + 1] > 0)) continue;
+      measured.centre[i][k] = guess.centre[i][k] + within(solution[at + 1] / a, 1);
+      measured.centreVariance[i][k] = variance[at + 1] / (a * a);
+      if (nPar < 3 || !(variance[at + 2] > 0)) continue;
+      const smear2 = smear(group, guess.slope[i][k]);
+      const seen = Math.sqrt(guess.sigma[i][k] ** 2 + smear2) + within(solution[at + 2] / a, 0.5);
+      measured.sigma[i][k] = Math.sqrt(Math.max(0.04, seen * seen - smear2));
+      measured.sigmaVariance[i][k] = variance[at + 2] / (a * a);
     }
-  }
-
-  private addMisfit({ weight }: CentringColumn, group: ColumnGroup, result: CentringResult, misfit: Misfit): void {
-    for (let y = 0; y < this.ny; y++) {
-      if (weight[y] === 0) continue;
-      const light = Math.max(0, result.model[y]);
-      misfit.residual += (group.mean[y] - result.model[y]) ** 2;
-      misfit.noise += this.variance(group, y, light, 0);
-      misfit.light += light * light;
-      misfit.nPixel++;
-    }
-    misfit.nUnknown += result.solution.reduce((n, value) => n + (value !== 0 ? 1 : 0), BACKGROUND_TERMS);
   }
 }
 
-function backgroundRows(coef: Float64Array, ny: number): Float64Array {
-  return Float64Array.from({ length: ny }, (_, y) => legendreValue(coef, legendreArgument(y, ny)));
+function within(x: number, limit: number): number {
+  return Math.max(-limit, Math.min(limit, x));
 }
 
-/** Sums over pixels, Σ r², Σ v (noise alone) and Σ m², and counts. */
-interface Misfit {
-  residual: number;
-  noise: number;
-  light: number;
-  nPixel: number;
-  nUnknown: number;
+/** px² that a tramline's climb over a group's columns adds to a width's square. */
+function smear({ width }: ColumnGroup, slope: number): number {
+  return (slope * slope * (width * width - 1)) / 12;
 }
 
 /** ε of v + (ε m)² that explains the residuals, E[Σ r²] = (1 − unknowns/pixels) · Σ (v + ε² m²), every pixel taken to carry
  * its share of the unknowns. Sums without weights: it is bright pixels whose misfit matters. */
-function profileError({ residual, noise, light, nPixel, nUnknown }: Misfit): number {
+function profileError(misfits: Misfit[]): number {
+  const total = (key: keyof Misfit) => misfits.reduce((sum, misfit) => sum + misfit[key], 0);
+  const [light, nPixel, nUnknown] = [total("light"), total("nPixel"), total("nUnknown")];
   if (!(light > 0) || nPixel <= nUnknown) return 0;
-  return Math.sqrt(Math.max(0, (residual / (1 - nUnknown / nPixel) - noise) / light));
+  const residual = total("residual") / (1 - nUnknown / nPixel);
+  return Math.sqrt(Math.max(0, (residual - total("noise")) / light));
 }

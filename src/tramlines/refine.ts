@@ -13,7 +13,8 @@ const MAX_DEGREE = 8;
 /** Degree of the series that guide the rounds in between. */
 const GUIDE_DEGREE = 6;
 const WIDTH_DEGREE = 3;
-const WIDTH_ROUNDS = 2;
+/** Groups that suffice for those, at the least. */
+const GUIDES = 40;
 /** Errors of centre and width that no noise model knows of, px. */
 const CENTRE_FLOOR = 0.003;
 const WIDTH_FLOOR = 0.005;
@@ -41,8 +42,8 @@ export interface Refined {
   relativeError: number;
 }
 
-/** Three rounds over the whole flat: centres about the walk; centres and widths about the series through them, with pixels
- * off the model rejected; centres again, with each fibre's own width. */
+/** Centres about the walk in some groups; centres and widths about the series through them, first in those, then in all, with
+ * pixels off the model rejected; centres again in all, with each fibre's own width. */
 export function refine(
   kernels: Kernels,
   flat: Flat,
@@ -54,24 +55,32 @@ export function refine(
   options: RefineOptions,
 ): Refined {
   const { nx, ny } = flat;
-  const groups = cutIntoGroups(kernels, flat, steepest(path, naming.nFibre));
-  const meter = new Meter(kernels, groups, ny, lit.length, pitch, sigma);
+  const steep = steepest(path, naming.nFibre);
+  const groups = cutIntoGroups(kernels, flat, steep);
+  const meter = new Meter(kernels, groups, ny, lit.length, { pitch, sigma, steepest: steep });
   const fitter = (points: Points) => new SeriesFitter(kernels, points, MAX_DEGREE);
-  const walked = guessFromPath(path, groups, naming.nFibre, lit, sigma);
+  const oneIn = Math.max(1, Math.floor(groups.length / GUIDES));
+  const guides = meter.groupsOf(oneIn);
+  const start = { relativeError: START_ERROR, reject: false, oneIn };
 
-  let measured = meter.measure(walked, false, START_ERROR, false);
-  const guideDegree = Math.min(GUIDE_DEGREE, Math.max(1, Math.floor(groups.length / 6)));
-  let centres = fitter(centrePoints(measured, groups, nx, naming, lit)).fit(guideDegree);
-  let guess = guessFromSeries(centres, undefined, groups, nx, lit, sigma);
-  const widthDegree = Math.min(WIDTH_DEGREE, Math.max(0, Math.floor(groups.length / 8)));
+  let guess = guessFromPath(path, guides, naming.nFibre, lit, sigma);
+  let measured = meter.measure(guess, { ...start, nPar: 2, nRound: 2 });
+  const guideDegree = Math.min(GUIDE_DEGREE, Math.max(1, Math.floor(guides.length / 6)));
+  let centres = fitter(centrePoints(measured, guides, nx, naming, lit)).fit(guideDegree);
+  const widthDegree = Math.min(WIDTH_DEGREE, Math.max(0, Math.floor(guides.length / 8)));
   let widths: SeriesSet | undefined;
-  for (let round = 0; round < WIDTH_ROUNDS; round++) {
-    measured = meter.measure(guess, true, START_ERROR, round > 0);
-    widths = fitter(widthPoints(measured, groups, nx, naming, lit)).fit(widthDegree);
-    centres = fitter(centrePoints(measured, groups, nx, naming, lit)).fit(guideDegree);
-    guess = guessFromSeries(centres, widths, groups, nx, lit, sigma);
+  for (const [some, rounds] of [
+    [guides, { ...start, nPar: 3, nRound: 1 }],
+    [groups, { ...start, nPar: 3, nRound: 2, reject: true, oneIn: 1 }],
+  ] as const) {
+    guess = guessFromSeries(centres, widths, some, nx, lit, sigma);
+    measured = meter.measure(guess, rounds);
+    widths = fitter(widthPoints(measured, some, nx, naming, lit)).fit(widthDegree);
+    centres = fitter(centrePoints(measured, some, nx, naming, lit)).fit(guideDegree);
   }
-  measured = meter.measure(guess, false, Math.max(0.002, measured.relativeError), true);
+  guess = guessFromSeries(centres, widths, groups, nx, lit, sigma);
+  const relativeError = Math.max(0.002, measured.relativeError);
+  measured = meter.measure(guess, { nPar: 2, nRound: 2, relativeError, reject: true, oneIn: 1 });
 
   if (options.centring === "centroid") {
     measured = meter.centroids(kernels, guess, measured, CENTROID_SHARE * pitch);
