@@ -1,7 +1,10 @@
 // The module's whole interface. Pointers and counts in, numbers out; src/kernels/ is the only caller.
 export { bandedSystems32, bandedSystems64 } from "./banded";
+export { census } from "./census";
 export { centreColumns } from "./centring";
 export { centroid } from "./centroid";
+export { checksum, toBigEndian } from "./checksum";
+export { electrons, growSaturation, turnBytes, turnFloat32 } from "./electrons";
 export { erf } from "./erf";
 export { exp } from "./exp";
 export { extractColumns32, extractColumns64, prepareExtraction32, prepareExtraction64 } from "./extract";

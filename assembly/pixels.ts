@@ -9,6 +9,7 @@
 // since result i ends at w·(i+1) ≤ (w−s)·n + s·(i+1), where the first pixel that is not yet read starts. The vector loop
 // for 16 bits keeps to it too: 32 bytes written at 4i never reach past the 16 read at 2n + 2i while i ≤ n − 8.
 // The reference twin is src/reference/pixels.ts.
+import { swapWords } from "./checksum";
 
 /** Exact in f32: bitpix 8 and 16 with a whole zero (|zero| ≤ 2²³), −32 with zero = 0. */
 export function pixelsToFloat32(
@@ -55,7 +56,11 @@ function uint8ToFloat32(inPtr: usize, outPtr: usize, n: usize, zero: f32, hasBla
 }
 
 function swapFloat32(inPtr: usize, outPtr: usize, n: usize): void {
-  for (let i: usize = 0; i < n; i++) store<u32>(outPtr + (i << 2), bswap<u32>(load<u32>(inPtr + (i << 2))));
+  const vectorEnd: usize = n & ~3;
+  for (let i: usize = 0; i < vectorEnd; i += 4) {
+    v128.store(outPtr + (i << 2), swapWords(v128.load(inPtr + (i << 2))));
+  }
+  for (let i = vectorEnd; i < n; i++) store<u32>(outPtr + (i << 2), bswap<u32>(load<u32>(inPtr + (i << 2))));
 }
 
 /** Every kind of pixel to f64. 64-bit integers are rounded to the nearest double once, after an unsigned zero of 2⁶³

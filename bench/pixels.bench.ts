@@ -7,7 +7,7 @@ import { afterAll, bench, describe } from "vitest";
 import { encodeFits } from "../src/fits/encode.js";
 import { readImage } from "../src/fits/image.js";
 import { loadKernels } from "../src/kernels/module.js";
-import { decodePixels } from "../src/kernels/pixels.js";
+import { decodePixels, decodingBytes } from "../src/kernels/pixels.js";
 import { decodePixels as decodeByReference } from "../src/reference/pixels.js";
 
 const kernels = await loadKernels();
@@ -27,13 +27,13 @@ for (const [nx, ny] of [
   const stored = bytes.subarray(2880, 2880 + 2 * n);
   const path = join(folder, `${nx}.fits`);
   fs.writeFileSync(path, bytes);
-  const kernel = decodePixels(kernels, n, scaling, (room) => room.set(stored));
+  const kernel = decodePixels(kernels.workbench(decodingBytes(n, scaling)), n, scaling, (room) => room.set(stored));
   const reference = decodeByReference(stored, n, scaling);
   if (kernel.some((value, i) => value !== reference[i])) throw new Error("kernel and reference disagree");
 
   describe(`${nx} × ${ny} unsigned 16-bit pixels`, () => {
     bench("kernel, copy in included", () => {
-      sink += decodePixels(kernels, n, scaling, (room) => room.set(stored))[n - 1];
+      sink += decodePixels(kernels.workbench(decodingBytes(n, scaling)), n, scaling, (room) => room.set(stored))[n - 1];
     });
     bench("DataView into Float32", () => {
       const view = new DataView(stored.buffer, stored.byteOffset, stored.byteLength);

@@ -2,7 +2,7 @@ import { Buffer } from "node:buffer";
 import fc from "fast-check";
 import { beforeAll, describe, expect, test } from "vitest";
 import { type Kernels, loadKernels } from "../src/kernels/module.js";
-import { decodePixels, fitsFloat32 } from "../src/kernels/pixels.js";
+import { decodePixels, decodingBytes, fitsFloat32 } from "../src/kernels/pixels.js";
 import { decodePixels as decodeByReference, type PixelScaling } from "../src/reference/pixels.js";
 
 let kernels: Kernels;
@@ -11,7 +11,7 @@ beforeAll(async () => {
 });
 
 function byKernel(stored: Uint8Array, n: number, scaling: PixelScaling) {
-  return decodePixels(kernels, n, scaling, (room) => {
+  return decodePixels(kernels.workbench(decodingBytes(n, scaling)), n, scaling, (room) => {
     expect(room.length).toBe(stored.length);
     room.set(stored);
   });
@@ -98,12 +98,8 @@ describe("kernel against numbers written down", () => {
 describe("impossible arguments", () => {
   test("are refused before memory is touched", () => {
     const scaling = { bitpix: 16, scale: 1, zero: 0 };
-    expect(() => decodePixels(kernels, 1.5, scaling, () => {})).toThrow(
-      "1.5 pixels asked for; give a whole number from 0.",
-    );
-    expect(() => decodePixels(kernels, 3, { ...scaling, bitpix: 12 }, () => {})).toThrow(
-      "bitpix is 12; give 8, 16, 32, 64, -32 or -64.",
-    );
-    expect(() => decodePixels(kernels, 2 ** 31, scaling, () => {})).toThrow("4 GiB is the limit");
+    expect(() => decodingBytes(1.5, scaling)).toThrow("1.5 pixels asked for; give a whole number from 0.");
+    expect(() => decodingBytes(3, { ...scaling, bitpix: 12 })).toThrow("bitpix is 12; give 8, 16, 32, 64, -32 or -64.");
+    expect(() => kernels.workbench(decodingBytes(2 ** 31, scaling))).toThrow("4 GiB is the limit");
   });
 });

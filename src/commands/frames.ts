@@ -81,11 +81,12 @@ export async function openBench(paths: string[], options: FrameOptions, progress
 
 /** One raw frame, corrected, and counted among the bench's inputs. "-" is standard input. */
 export async function readFrame(path: string, role: Role, bench: Bench): Promise<Frame> {
-  return correctFrame(await readRaw(path, bench), bench.calibrations, bench.spectrograph, { role });
+  return correctFrame(await readRaw(path, bench, true), bench.calibrations, bench.spectrograph, { role });
 }
 
-async function readRaw(path: string, bench: Bench): Promise<RawImage> {
-  const raw = await readImage(path, { hdu: bench.options.hdu });
+/** @param forFrame the frame that is made of it, and what works on that, may take its place in memory. */
+async function readRaw(path: string, bench: Bench, forFrame: boolean): Promise<RawImage> {
+  const raw = await readImage(path, { hdu: bench.options.hdu, forFrame });
   bench.inputs.push({ name: raw.name, checksum: raw.checksum });
   return raw;
 }
@@ -103,7 +104,8 @@ export async function traceFlats(
   const raws: RawImage[] = [];
   for (const flat of flats) {
     progress.stage(`reading ${basename(flat)}`);
-    const raw = await readRaw(flat, bench);
+    // The first two are asked for the gain later on.
+    const raw = await readRaw(flat, bench, raws.length === 2);
     frames.push(correctFrame(raw, calibrations, spectrograph, { role: "fibre flat" }));
     if (raws.length < 2) raws.push(raw);
   }

@@ -2,14 +2,15 @@
  *
  *     dispersion along axis 1: x = axis 1, y = axis 2;   along axis 2: x = axis 2, y = axis 1 (transposed) */
 import { type Section, sectionSize } from "../fits/sections.js";
-import type { Kernels } from "../kernels/module.js";
+import type { Kernels, Workbench } from "../kernels/module.js";
+import type { AmplifierCounts } from "../reference/electrons.js";
 import type { Amplifier, DetectorLayout } from "./amplifiers.js";
+import { Desk } from "./desk.js";
 import { MaskBit } from "./frame.js";
-import { type FrameArrays, frameArrays } from "./frameMemory.js";
-import { type MissingFound, markMissing } from "./missing.js";
+import { type ConstantLines, constantLines, type MissingFound, zeroIsImpossible } from "./missing.js";
 import { type OverscanLevel, overscanLevel } from "./overscan.js";
 import type { RawImage } from "./raw.js";
-import { markSaturated } from "./saturation.js";
+import { saturationLimit } from "./saturation.js";
 
 /** Part of the turned frame that one amplifier read: x0 ≤ x < x1, y0 ≤ y < y1. */
 export interface Region {
@@ -23,7 +24,7 @@ export interface Region {
   overscan?: OverscanLevel;
 }
 
-export interface Assembled extends FrameArrays {
+export interface Assembled {
   name: string;
   nx: number;
   ny: number;
@@ -31,51 +32,83 @@ export interface Assembled extends FrameArrays {
   electrons: Float32Array;
   /** ny × nx, bits of MaskBit. */
   mask: Uint8Array;
+  /** As in Frame. */
+  memory?: Workbench;
   regions: Region[];
   layout: DetectorLayout;
   missing: MissingFound;
   nSaturated: number;
 }
 
-/** Takes the zero level off and multiplies by the gain. Saturation and missing values become mask bits first.
+/** Takes the zero level off and multiplies by the gain. Saturation and missing values become mask bits.
  * Where there is neither overscan nor bias_level the pedestal stays in: the bias stack must take it off.
- * @param kernels the frame gets a memory of their kind. */
+ * @param kernels the frame gets a memory of theirs, and they do the work. */
 export function assemble(raw: RawImage, layout: DetectorLayout, kernels?: Kernels): Assembled {
   const levels = layout.amplifiers.map((amplifier) => overscanLevel(raw, amplifier));
-  const fileMask = new Uint8Array(raw.nx * raw.ny);
-  const nSaturated = markSaturated(fileMask, raw, layout);
-  const missing = markMissing(fileMask, raw, layout, levels);
   const { axis1, axis2 } = layout.geometry;
+  const desk = Desk.for(raw, axis1 * axis2, kernels);
   const turned = layout.dispersionAxis === 2;
-  const [nx, ny] = turned ? [axis2, axis1] : [axis1, axis2];
-  const arrays = frameArrays(kernels, nx * ny);
-  const electrons = arrays.electrons.fill(Number.NaN);
-  const mask = arrays.mask.fill(MaskBit.missing);
-  const stride1 = turned ? nx : 1;
-  const stride2 = turned ? 1 : nx;
+  const picture = turned ? desk.another() : desk;
+  if (!isCovered(layout)) {
+    picture.electrons.fill(Number.NaN);
+    picture.mask.fill(MaskBit.missing);
+  }
+  const limit = saturationLimit(raw, layout);
+  let nSaturated = 0;
+  const missing: MissingFound = { nanPixels: 0, constantColumns: 0, constantRows: 0, zeroPixels: 0 };
   layout.amplifiers.forEach((amplifier, i) => {
     const { data, place, gain } = amplifier;
-    const zero = zeroLevels(amplifier, levels[i]);
-    for (let y = 0; y <= data.y2 - data.y1; y++) {
-      let to = (place.x1 - 1) * stride1 + (place.y1 - 1 + y) * stride2;
-      const start = (data.y1 - 1 + y) * raw.nx + data.x1 - 1;
-      for (let x = 0; x <= data.x2 - data.x1; x++, to += stride1) {
-        const bits = fileMask[start + x];
-        mask[to] = bits;
-        if (bits & MaskBit.missing) continue;
-        electrons[to] = gain * (raw.data[start + x] - (zero.forRow ? zero.level[y] : zero.level[x]));
-      }
-    }
+    const part: AmplifierCounts = {
+      ...{ data: desk.data, stride: raw.nx, from: (data.y1 - 1) * raw.nx + data.x1 - 1 },
+      ...{ ...sectionSize(data), limit },
+      ...{ electrons: picture.electrons, mask: picture.mask },
+      ...{ outStride: axis1, to: (place.y1 - 1) * axis1 + place.x1 - 1 },
+    };
+    const zeroIsMissing = zeroIsImpossible(levels[i]);
+    const odd = desk.toElectrons(part, { ...zeroLevels(amplifier, levels[i]), gain, zeroIsMissing });
+    if (odd.nSaturated > 0) desk.growSaturation(part);
+    const constant = constantLines(raw, data, layout.saturationAdu);
+    markLines(part, constant);
+    nSaturated += odd.nSaturated;
+    missing.nanPixels += odd.nWithoutValue;
+    missing.zeroPixels += odd.nZero;
+    missing.constantColumns += constant.columns.length;
+    missing.constantRows += constant.rows.length;
   });
+  if (turned) desk.turn(picture, axis1, axis2);
   const regions = layout.amplifiers.map((amplifier, i) => regionOf(amplifier, levels[i], turned));
-  return { ...arrays, name: raw.name, nx, ny, regions, layout, missing, nSaturated };
+  const [nx, ny] = turned ? [axis2, axis1] : [axis1, axis2];
+  const { electrons, mask } = desk;
+  const memory = desk.close();
+  return {
+    ...{ name: raw.name, nx, ny, electrons, mask, regions, layout, missing, nSaturated },
+    ...(memory ? { memory } : {}),
+  };
+}
+
+/** Whether the amplifiers' pixels, which do not overlap, fill the picture. */
+function isCovered({ amplifiers, geometry }: DetectorLayout): boolean {
+  const n = amplifiers.reduce((sum, { place }) => sum + sectionSize(place).nx * sectionSize(place).ny, 0);
+  return n === geometry.axis1 * geometry.axis2;
+}
+
+function markLines(
+  { electrons, mask, nx, ny, outStride, to }: AmplifierCounts,
+  { columns, rows }: ConstantLines,
+): void {
+  const mark = (at: number) => {
+    electrons[at] = Number.NaN;
+    mask[at] |= MaskBit.missing;
+  };
+  for (const x of columns) for (let y = 0; y < ny; y++) mark(to + y * outStride + x);
+  for (const y of rows) for (let x = 0; x < nx; x++) mark(to + y * outStride + x);
 }
 
 /** ADU, for each row or each column of the data section. */
 function zeroLevels(amplifier: Amplifier, level: OverscanLevel | undefined) {
   const { ny } = sectionSize(amplifier.data);
-  if (level === undefined) return { level: new Float64Array(ny).fill(amplifier.biasLevelAdu ?? 0), forRow: true };
-  return { level: level.level, forRow: amplifier.levelFor === "rows" };
+  if (level === undefined) return { zero: new Float64Array(ny).fill(amplifier.biasLevelAdu ?? 0), zeroForRow: true };
+  return { zero: level.level, zeroForRow: amplifier.levelFor === "rows" };
 }
 
 /** Where each amplifier's pixels lie in the turned frame. */

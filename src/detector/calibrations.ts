@@ -7,7 +7,7 @@
 import type { Spectrograph } from "../spectrograph.js";
 import { detectorLayout } from "./amplifiers.js";
 import { type Assembled, assemble, type Region } from "./assemble.js";
-import { badPixelMask } from "./badpixels.js";
+import { type BadPixelImage, badPixelMask } from "./badpixels.js";
 import { medianOf, thinned } from "./clip.js";
 import { combineFrames, type Stack } from "./combine.js";
 import { DetectorError } from "./detectorError.js";
@@ -56,7 +56,7 @@ export interface Calibrations {
   dark?: DarkCurrent;
   response?: PixelResponse;
   /** As it was read: image of the assembled frame, not 0 where a pixel is not to be used. */
-  badPixels?: RawImage;
+  badPixels?: BadPixelImage;
   /** The frames that went in, in order: for HISTORY. */
   inputs: CalibrationInput[];
   assumptions: string[];
@@ -70,7 +70,7 @@ export interface CalibrationFrames {
   bias?: Frames;
   dark?: Frames;
   pixelFlat?: Frames;
-  badPixels?: RawImage;
+  badPixels?: BadPixelImage;
 }
 
 /** More than this share of pixels clipped cannot be cosmic rays. */
@@ -150,7 +150,7 @@ async function assembled(
   return list;
 }
 
-function inputOf(raw: RawImage, role: CalibrationInput["role"]): CalibrationInput {
+function inputOf(raw: { name: string; checksum?: string }, role: CalibrationInput["role"]): CalibrationInput {
   return { role, name: raw.name, checksum: raw.checksum ?? "" };
 }
 

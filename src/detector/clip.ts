@@ -9,10 +9,18 @@ export const SIGMA_PER_MAD = 1.482602218505602;
 
 /** Finite values, sorted. */
 export function sortedFinite(values: ArrayLike<number>): Float64Array {
+  return finite(values).sort();
+}
+
+function finite(values: ArrayLike<number>): Float64Array {
   const kept = new Float64Array(values.length);
   let n = 0;
-  for (let i = 0; i < values.length; i++) if (Number.isFinite(values[i])) kept[n++] = values[i];
-  return kept.subarray(0, n).sort();
+  for (let i = 0; i < values.length; i++) {
+    const value = values[i];
+    // Of NaN and ±Infinity this difference is NaN.
+    if (value - value === 0) kept[n++] = value;
+  }
+  return kept.subarray(0, n);
 }
 
 /** The q-quantile, q ∈ [0, 1], of sorted values, linear between neighbours; NaN when there are none. */
@@ -26,7 +34,42 @@ export function quantileOfSorted(sorted: ArrayLike<number>, q: number): number {
 
 /** Median of the finite values; NaN when there are none. */
 export function medianOf(values: ArrayLike<number>): number {
-  return quantileOfSorted(sortedFinite(values), 0.5);
+  return quantileInPlace(finite(values), 0.5);
+}
+
+/** What `quantileOfSorted` gives of the sorted values, by selection: `values`, all finite, lose their order. */
+export function quantileInPlace(values: Float64Array, q: number, n = values.length): number {
+  if (n === 0) return Number.NaN;
+  const at = q * (n - 1);
+  const low = Math.floor(at);
+  const below = select(values, n, low);
+  if (low + 1 >= n) return below;
+  let above = values[low + 1];
+  for (let i = low + 2; i < n; i++) if (values[i] < above) above = values[i];
+  return below + (at - low) * (above - below);
+}
+
+/** Moves the value of rank `k` among the first n to place k, smaller ones before it, and returns it (Hoare 1961, CACM 4,
+ * 321: FIND). */
+function select(values: Float64Array, n: number, k: number): number {
+  let low = 0;
+  let high = n - 1;
+  while (low < high) {
+    const pivot = values[k];
+    let i = low;
+    let j = high;
+    while (i <= j) {
+      while (values[i] < pivot) i++;
+      while (pivot < values[j]) j--;
+      if (i > j) break;
+      const held = values[i];
+      values[i++] = values[j];
+      values[j--] = held;
+    }
+    if (j < k) low = i;
+    if (k < i) high = j;
+  }
+  return values[k];
 }
 
 /** Every k-th value, so that at most about `most` are left: enough for a median of a large image. */
@@ -50,15 +93,16 @@ export interface Scatter {
  * absolute deviation and corrected for the cut. Quantised samples are treated right once σ exceeds about 0.5 steps,
  * since the root mean square, not the median deviation, is what converges. NaN without finite samples. */
 export function clippedScatter(values: ArrayLike<number>): Scatter {
-  const sorted = sortedFinite(values);
-  let mean = quantileOfSorted(sorted, 0.5);
-  const deviations = sorted.map((value) => Math.abs(value - mean)).sort();
-  let sigma = SIGMA_PER_MAD * quantileOfSorted(deviations, 0.5);
+  const samples = finite(values);
+  let mean = quantileInPlace(samples, 0.5);
+  const deviations = new Float64Array(samples.length);
+  for (let i = 0; i < samples.length; i++) deviations[i] = Math.abs(samples[i] - mean);
+  let sigma = SIGMA_PER_MAD * quantileInPlace(deviations, 0.5);
   // Where over half of the samples share one value the median deviation is 0: start from a wide quantile instead.
-  if (sigma === 0) sigma = quantileOfSorted(deviations, 0.95);
-  let n = sorted.length;
+  if (sigma === 0) sigma = quantileInPlace(deviations, 0.95);
+  let n = samples.length;
   for (let turn = 0; turn < 30; turn++) {
-    const kept = momentsWithin(sorted, mean, KAPPA * sigma);
+    const kept = momentsWithin(samples, mean, KAPPA * sigma);
     const next = Math.sqrt(kept.variance / CUT_VARIANCE);
     const settled = kept.n === n && Math.abs(next - sigma) <= 1e-9 * sigma;
     mean = kept.mean;
@@ -69,12 +113,12 @@ export function clippedScatter(values: ArrayLike<number>): Scatter {
   return { mean, sigma, n };
 }
 
-function momentsWithin(sorted: Float64Array, centre: number, reach: number) {
+function momentsWithin(samples: Float64Array, centre: number, reach: number) {
   let n = 0;
   let sum = 0;
   let sum2 = 0;
-  for (const value of sorted) {
-    const off = value - centre;
+  for (let i = 0; i < samples.length; i++) {
+    const off = samples[i] - centre;
     if (Math.abs(off) > reach) continue;
     n++;
     sum += off;

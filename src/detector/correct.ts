@@ -7,7 +7,7 @@
 import type { Spectrograph } from "../spectrograph.js";
 import { detectorLayout } from "./amplifiers.js";
 import { type Assembled, assemble } from "./assemble.js";
-import { badPixelMask } from "./badpixels.js";
+import { markBadPixels } from "./badpixels.js";
 import { type Calibrations, type DarkCurrent, hasOwnRate, requireReadNoise, requireZeroLevel } from "./calibrations.js";
 import { DetectorError } from "./detectorError.js";
 import { darkSeconds, exposureSeconds } from "./exposure.js";
@@ -51,7 +51,7 @@ export function correctFrame(
   const seconds = darkTime(raw, calibrations);
   const noise = noiseIngredients(frame, calibrations, seconds);
   applyCalibrations(frame, calibrations, seconds);
-  if (calibrations.badPixels) addBits(frame.mask, badPixelMask(calibrations.badPixels, layout.geometry));
+  if (calibrations.badPixels) markBadPixels(frame.mask, calibrations.badPixels, layout.geometry);
   return {
     name: raw.name,
     nx: frame.nx,
@@ -94,6 +94,7 @@ function withoutCalibration(raw: RawImage, { bias, dark, response }: Calibration
 
 /** Subtracts and divides in place; a pixel that a calibration image has no value for loses its own. */
 function applyCalibrations(frame: Assembled, { bias, dark, response }: Calibrations, seconds: number): void {
+  if (!bias && !dark && !response) return;
   const { electrons, mask } = frame;
   for (let at = 0; at < electrons.length; at++) {
     let value = electrons[at];
@@ -106,10 +107,6 @@ function applyCalibrations(frame: Assembled, { bias, dark, response }: Calibrati
     if (Number.isNaN(value) && !(mask[at] & MaskBit.missing)) mask[at] |= MaskBit.bad;
     electrons[at] = value;
   }
-}
-
-function addBits(mask: Uint8Array, more: Uint8Array): void {
-  for (let i = 0; i < mask.length; i++) mask[i] |= more[i];
 }
 
 function noiseIngredients(frame: Assembled, calibrations: Calibrations, seconds: number): NoiseIngredients {

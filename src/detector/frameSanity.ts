@@ -1,15 +1,18 @@
 /** What a frame's own picture says against its header. */
 import type { Spectrograph } from "../spectrograph.js";
 import type { Assembled } from "./assemble.js";
+import { medianOf, thinned } from "./clip.js";
 import { DetectorError } from "./detectorError.js";
 import { headerDisagreements } from "./headerDisagreements.js";
-import { levelsOf } from "./levels.js";
+import { saturatedShare } from "./levels.js";
 import { percent } from "./rawSanity.js";
-import { ribbonAxis } from "./ribbons.js";
+import { isRegular, ribbonAxis, ribbonsAlong } from "./ribbons.js";
 
 /** @throws DetectorError when ribbons of light clearly run along the other axis than wavelength is said to. */
 export function refuseOtherAxis(frame: Assembled, spectrograph?: Spectrograph): void {
-  if (ribbonAxis(frame.electrons, frame.nx, frame.ny) !== "y") return;
+  const { electrons, nx, ny } = frame;
+  // Across the columns first: where there are no ribbons along them, as should be, the other axis need not be asked.
+  if (!isRegular(ribbonsAlong("y", electrons, nx, ny)) || ribbonAxis(electrons, nx, ny) !== "y") return;
   const axis = frame.layout.dispersionAxis;
   const remedy = spectrograph?.detector.dispersionAxis
     ? `correct dispersion_axis in ${spectrograph.file}`
@@ -33,15 +36,16 @@ export function frameWarnings(frame: Assembled): string[] {
       `${name}: ${zeroPixels} pixels are 0 ADU, far under the overscan's level, and are masked as missing.`,
     );
   }
-  const levels = levelsOf(frame);
+  const median = medianOf(thinned(frame.electrons));
+  const saturated = saturatedShare(frame);
   const noise = Math.sqrt(Math.max(...regions.map((region) => region.readVariance)));
-  if (levels.median < -10 * noise) {
+  if (median < -10 * noise) {
     warnings.push(
-      `${name}: most pixels lie below the overscan (median ${levels.median.toFixed(0)} e⁻); the overscan section seems to hold light or to be another one.`,
+      `${name}: most pixels lie below the overscan (median ${median.toFixed(0)} e⁻); the overscan section seems to hold light or to be another one.`,
     );
   }
-  if (levels.saturatedShare > 0.001) {
-    warnings.push(`${name}: ${percent(levels.saturatedShare)} of its pixels are saturated.`);
+  if (saturated > 0.001) {
+    warnings.push(`${name}: ${percent(saturated)} of its pixels are saturated.`);
   }
   for (const { overscan, amplifier } of regions) {
     if (overscan === undefined) continue;

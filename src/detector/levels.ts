@@ -11,25 +11,30 @@ export interface Levels {
   p99: number;
   /** Share of pixels that saturated, before growing along bleeds. */
   saturatedShare: number;
-  /** Share of pixels without a value. */
-  missingShare: number;
 }
 
 export function levelsOf(frame: Assembled): Levels {
   const sorted = sortedFinite(thinned(frame.electrons));
   const at = (q: number) => quantileOfSorted(sorted, q);
-  let nMissing = 0;
-  for (const value of frame.electrons) if (Number.isNaN(value)) nMissing++;
-  const n = frame.electrons.length;
   return {
     p1: at(0.01),
     p5: at(0.05),
     median: at(0.5),
     p95: at(0.95),
     p99: at(0.99),
-    saturatedShare: frame.nSaturated / n,
-    missingShare: nMissing / n,
+    saturatedShare: saturatedShare(frame),
   };
+}
+
+/** Share of pixels without a value. */
+export function missingShare({ electrons }: Assembled): number {
+  let n = 0;
+  for (let i = 0; i < electrons.length; i++) if (Number.isNaN(electrons[i])) n++;
+  return n / electrons.length;
+}
+
+export function saturatedShare(frame: Assembled): number {
+  return frame.nSaturated / frame.electrons.length;
 }
 
 /** The largest read noise among the amplifiers, e⁻: what "no light" is measured against. */

@@ -1,5 +1,6 @@
 /** Calibration frames from files. */
 import { readImage } from "../fits/image.js";
+import { readMask } from "../fits/mask.js";
 import type { Spectrograph } from "../spectrograph.js";
 import { type CalibrationFrames, type Calibrations, makeCalibrations } from "./calibrations.js";
 import type { RawImage } from "./raw.js";
@@ -23,7 +24,7 @@ export async function loadCalibrations(paths: CalibrationPaths, spectrograph?: S
     if (files.length > 0) frames[role] = readEach(files, paths.hdu);
   }
   const bad = paths.badPixels ?? spectrograph?.detector.badPixels;
-  if (bad !== undefined) frames.badPixels = await readImage(bad);
+  if (bad !== undefined) frames.badPixels = await readMask(bad);
   return makeCalibrations(frames, spectrograph);
 }
 

@@ -7,7 +7,7 @@ import { DetectorError } from "./detectorError.js";
 import { type ExposureKind, exposureKind, exposureSeconds } from "./exposure.js";
 import type { DetectorGeometry } from "./frame.js";
 import { frameWarnings } from "./frameSanity.js";
-import { type Levels, levelsOf } from "./levels.js";
+import { type Levels, levelsOf, missingShare } from "./levels.js";
 import { type AmplifierNoise, measureNoise, type NoiseFrames } from "./noise.js";
 import type { RawImage } from "./raw.js";
 import { refuseImpossible } from "./rawSanity.js";
@@ -33,7 +33,8 @@ export interface LookReport {
   /** Steps of the light between amplifiers, where a flat shows them. */
   seams: Seam[];
   /** e⁻, or ADU above zero where no gain is known. */
-  levels?: Levels;
+  /** `missingShare`: of pixels without a value. */
+  levels?: Levels & { missingShare: number };
   levelUnit: "electron" | "adu";
   /** FITS axis along which ribbons of light run in the picture; null when it does not show. */
   dispersionAxisSeen: 1 | 2 | null;
@@ -111,7 +112,7 @@ function describe(report: LookReport, raw: RawImage, spectrograph: Spectrograph 
     for (const amplifier of layout.amplifiers) amplifier.gain = 1;
   }
   const frame = assemble(raw, layout);
-  report.levels = levelsOf(frame);
+  report.levels = { ...levelsOf(frame), missingShare: missingShare(frame) };
   report.warnings.push(...frameWarnings(frame));
   addSeams(report, frame);
   report.ribbons = ribbonsAlong("x", frame.electrons, frame.nx, frame.ny);

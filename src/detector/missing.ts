@@ -1,9 +1,7 @@
 /** Pixels without a value: NaN, columns or rows that were never read (one constant all along), and counts of 0 where
  * the electronic level alone is far above it. */
-import type { Section } from "../fits/sections.js";
-import type { DetectorLayout } from "./amplifiers.js";
+import { type Section, sectionSize } from "../fits/sections.js";
 import { DetectorError } from "./detectorError.js";
-import { MaskBit } from "./frame.js";
 import type { OverscanLevel } from "./overscan.js";
 import type { RawImage } from "./raw.js";
 
@@ -18,70 +16,65 @@ export interface MissingFound {
   zeroPixels: number;
 }
 
-/** Sets MaskBit.missing in `mask` [ny × nx of the file]. `levels`: one an amplifier.
- * @throws DetectorError when every pixel of the image is the same. */
-export function markMissing(
-  mask: Uint8Array,
-  raw: RawImage,
-  layout: DetectorLayout,
-  levels: (OverscanLevel | undefined)[],
-): MissingFound {
-  const found: MissingFound = { nanPixels: 0, constantColumns: 0, constantRows: 0, zeroPixels: 0 };
-  layout.amplifiers.forEach(({ data }, i) => {
-    found.constantColumns += markConstant(mask, raw, data, "columns", layout.saturationAdu);
-    found.constantRows += markConstant(mask, raw, data, "rows", layout.saturationAdu);
-    const level = levels[i];
-    const pedestal = level ? Math.min(...level.level) : 0;
-    const zeroIsImpossible = level !== undefined && pedestal > PEDESTAL_SIGMAS * Math.max(1, level.readNoiseAdu);
-    for (let y = data.y1 - 1; y < data.y2; y++) {
-      for (let at = y * raw.nx + data.x1 - 1; at < y * raw.nx + data.x2; at++) {
-        const isNan = !Number.isFinite(raw.data[at]);
-        const isZero = zeroIsImpossible && raw.data[at] === 0;
-        if (isNan) found.nanPixels++;
-        if (isZero) found.zeroPixels++;
-        if (isNan || isZero) mask[at] |= MaskBit.missing;
-      }
-    }
-  });
-  return found;
+/** True when 0 ADU is far under the level that the electronics alone give. */
+export function zeroIsImpossible(level: OverscanLevel | undefined): boolean {
+  if (level === undefined) return false;
+  const pedestal = level.level.reduce((least, value) => Math.min(least, value), Number.POSITIVE_INFINITY);
+  return pedestal > PEDESTAL_SIGMAS * Math.max(1, level.readNoiseAdu);
 }
 
-function markConstant(mask: Uint8Array, raw: RawImage, data: Section, which: "columns" | "rows", ceiling: number) {
-  const columns = which === "columns";
-  const step = columns ? raw.nx : 1;
-  const stride = columns ? 1 : raw.nx;
-  const n = columns ? data.y2 - data.y1 + 1 : data.x2 - data.x1 + 1;
-  const nLine = columns ? data.x2 - data.x1 + 1 : data.y2 - data.y1 + 1;
+export interface ConstantLines {
+  /** Counted from 0 in the section. */
+  columns: number[];
+  rows: number[];
+}
+
+/** Columns and rows of an amplifier's data that were not read.
+ * @throws DetectorError when every pixel of the section is the same. */
+export function constantLines(raw: RawImage, data: Section, ceiling: number): ConstantLines {
+  const { nx, ny } = sectionSize(data);
   const start = (data.y1 - 1) * raw.nx + data.x1 - 1;
-  if (n < SHORTEST_LINE) return 0;
+  const section = { raw, data, ceiling };
+  const columns = constantAmong(section, nx, (x) => ({ from: start + x, step: raw.nx, n: ny, skip: [] }));
+  const rows = constantAmong(section, ny, (y) => ({ from: start + y * raw.nx, step: 1, n: nx, skip: columns }));
+  return { columns, rows };
+}
+
+interface Line {
+  from: number;
+  step: number;
+  n: number;
+  /** Pixels of it that are known to be missing. */
+  skip: number[];
+}
+
+function constantAmong(
+  { raw, data, ceiling }: { raw: RawImage; data: Section; ceiling: number },
+  nLine: number,
+  lineOf: (line: number) => Line,
+): number[] {
   const lines: number[] = [];
-  for (let line = 0; line < nLine; line++) {
-    if (isConstant(raw.data, mask, start + line * stride, step, n, ceiling)) lines.push(start + line * stride);
-  }
+  if (lineOf(0).n < SHORTEST_LINE) return lines;
+  for (let line = 0; line < nLine; line++) if (isConstant(raw.data, lineOf(line), ceiling)) lines.push(line);
   // When most lines are constant it is the picture that is so (without noise), not the readout that failed.
-  if (2 * lines.length > nLine) {
-    refuseUniform(raw, data);
-    return 0;
-  }
-  for (const from of lines) for (let k = 0; k < n; k++) mask[from + k * step] |= MaskBit.missing;
-  return lines.length;
+  if (2 * lines.length <= nLine) return lines;
+  refuseUniform(raw, data);
+  return [];
 }
 
 /** All finite pixels that are not yet known to be missing equal, and below the ceiling (a bleed may fill a column), with
  * enough of them to tell. */
-function isConstant(
-  data: ArrayLike<number>,
-  mask: Uint8Array,
-  from: number,
-  step: number,
-  n: number,
-  ceiling: number,
-): boolean {
+function isConstant(data: Float32Array | Float64Array, { from, step, n, skip }: Line, ceiling: number): boolean {
   let first = Number.NaN;
   let count = 0;
+  let skipped = 0;
   for (let k = 0; k < n; k++) {
     const value = data[from + k * step];
-    if (!Number.isFinite(value) || mask[from + k * step] & MaskBit.missing) continue;
+    if (k === skip[skipped]) {
+      skipped++;
+      continue;
+    }
+    if (!Number.isFinite(value)) continue;
     if (count === 0) first = value;
     if (value !== first) return false;
     count++;

@@ -1,7 +1,7 @@
 /** A raw frame: what the detector wrote, in ADU, and its header. */
 import { inputCards } from "../fits/carry.js";
 import { type CardValue, Header } from "../fits/header.js";
-import type { Kernels } from "../kernels/module.js";
+import type { Kernels, Workbench } from "../kernels/module.js";
 import { DetectorError } from "./detectorError.js";
 
 /** What the detector stage needs of a FITS image; row-major, data[(row) · nx + column], row 0 is the first of the file. */
@@ -19,8 +19,12 @@ export interface RawImage {
   warnings?: string[];
   /** Stands for the HDU in a product's HISTORY. */
   checksum?: string;
-  /** What the frame made of it may lie in the memory of. */
+  /** Whose memory the frame that is made of it may lie in. */
   kernels?: Kernels;
+  /** Where `data` lie, when that is kernel memory, … */
+  memory?: Workbench;
+  /** … and room for the frame in front of them: it is taken, and what then works on the frame may write over `data`. */
+  room?: Uint8Array;
 }
 
 /** The first of these keywords that has a value, in the image's header, then in the primary one. */

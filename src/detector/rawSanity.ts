@@ -1,5 +1,7 @@
 /** Is this a raw frame at all? Checks before any arithmetic: levels that no converter writes, and frames that were
  * reduced already. */
+import { census as censusByKernel } from "../kernels/census.js";
+import { census } from "../reference/census.js";
 import type { Spectrograph } from "../spectrograph.js";
 import { DetectorError } from "./detectorError.js";
 import { cardOf, type RawImage, textOf } from "./raw.js";
@@ -7,7 +9,9 @@ import { cardOf, type RawImage, textOf } from "./raw.js";
 /** @throws DetectorError when BZERO was lost, or the frame is in electrons or already corrected, unless the
  * spectrograph file gives gains (of 1) and bias levels and so vouches for it. */
 export function refuseImpossible(raw: RawImage, spectrograph?: Spectrograph): void {
-  const { nNegative, nFinite, nFraction, lowest, highest } = census(raw);
+  const { data, memory } = raw;
+  const { nNegative, nFinite, nFraction, lowest, highest } =
+    memory && data instanceof Float32Array ? censusByKernel(memory, data) : census(data);
   if (nFinite === 0) {
     throw new DetectorError(`${raw.name}: no pixel has a value (all are NaN or blank); take or copy the frame again.`);
   }
@@ -37,22 +41,4 @@ export function refuseImpossible(raw: RawImage, spectrograph?: Spectrograph): vo
 
 export function percent(share: number): string {
   return `${Number((100 * share).toPrecision(2))} %`;
-}
-
-function census({ data }: RawImage) {
-  let nNegative = 0;
-  let nFinite = 0;
-  let nFraction = 0;
-  let lowest = Number.POSITIVE_INFINITY;
-  let highest = Number.NEGATIVE_INFINITY;
-  for (let i = 0; i < data.length; i++) {
-    const value = data[i];
-    if (!Number.isFinite(value)) continue;
-    nFinite++;
-    if (value < 0) nNegative++;
-    if (value !== Math.floor(value)) nFraction++;
-    if (value < lowest) lowest = value;
-    if (value > highest) highest = value;
-  }
-  return { nNegative, nFinite, nFraction, lowest, highest };
 }

@@ -1,5 +1,5 @@
 /** Ribbons of light, counted in cuts through the picture, and the axis along which they run. */
-import { medianOf, quantileOfSorted, SIGMA_PER_MAD, sortedFinite } from "./clip.js";
+import { medianOf, quantileInPlace, quantileOfSorted, SIGMA_PER_MAD, sortedFinite } from "./clip.js";
 
 const CUT_WIDTH = 31;
 /** A peak stands this many of the cut's own σ above both its valleys, and this share of the cut's range. */
@@ -29,10 +29,14 @@ export function ribbonsAlong(axis: "x" | "y", image: Float32Array, nx: number, n
 export function ribbonAxis(image: Float32Array, nx: number, ny: number): "x" | "y" | undefined {
   const alongX = ribbonsAlong("x", image, nx, ny);
   const alongY = ribbonsAlong("y", image, nx, ny);
-  const regular = ({ count, irregularity }: Ribbons) => count >= FEWEST_RIBBONS && irregularity < REGULAR;
-  if (regular(alongX) && alongX.count > 3 * alongY.count) return "x";
-  if (regular(alongY) && alongY.count > 3 * alongX.count) return "y";
+  if (isRegular(alongX) && alongX.count > 3 * alongY.count) return "x";
+  if (isRegular(alongY) && alongY.count > 3 * alongX.count) return "y";
   return undefined;
+}
+
+/** Ribbons rather than lines or noise. */
+export function isRegular({ count, irregularity }: Ribbons): boolean {
+  return count >= FEWEST_RIBBONS && irregularity < REGULAR;
 }
 
 interface Cut {
@@ -53,10 +57,20 @@ function cutAt(axis: "x" | "y", image: Float32Array, nx: number, ny: number, cen
   const values = Float64Array.from({ length: across }, (_, c) => {
     for (let a = from; a < to; a++) band[a - from] = axis === "x" ? image[c * nx + a] : image[a * nx + c];
     for (let a = 0; a < steps.length; a++) steps[a] = Math.abs(band[a + 1] - band[a]);
-    noise[c] = (SIGMA_PER_MAD / Math.sqrt(2)) * medianOf(steps);
-    return medianOf(band);
+    noise[c] = (SIGMA_PER_MAD / Math.sqrt(2)) * finiteMedian(steps);
+    return finiteMedian(band);
   });
   return { values, sigma: medianOf(noise) * Math.sqrt(Math.PI / (2 * band.length)) };
+}
+
+/** `medianOf`, for many short lists: the finite values come first, and lose their order. */
+function finiteMedian(values: Float64Array): number {
+  let n = 0;
+  for (let i = 0; i < values.length; i++) {
+    const value = values[i];
+    if (Number.isFinite(value)) values[n++] = value;
+  }
+  return quantileInPlace(values, 0.5, n);
 }
 
 function ribbonsOfCut({ values, sigma }: Cut): Ribbons {

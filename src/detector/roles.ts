@@ -39,15 +39,15 @@ const LONGEST_BIAS_SECONDS = 1;
 /** A flat with less light than this is no flat. */
 const FAINTEST_FLAT_ELECTRONS = 200;
 const MOST_SATURATED = 0.01;
+const ENOUGH_OF_ROW = 512;
 /** Pixels of one detector respond alike within this (robust scatter); fibres or lines are many times more uneven. */
 export const MOST_RESPONSE_SCATTER = 0.1;
 
 /** Warnings for a frame in this role.
  * @throws DetectorError when the pixels, or a time in the header, contradict it. */
 export function checkRole(raw: RawImage, frame: Assembled, role: Role): string[] {
-  const levels = levelsOf(frame);
   const { kind, said } = exposureKind(raw);
-  const problem = problemOf(raw, frame, levels, role);
+  const problem = problemOf(raw, frame, role);
   const headerAgrees = kind === "unknown" || FITTING[role].includes(kind);
   if (problem !== undefined) {
     const header = headerAgrees ? "" : `, and its ${said} is not ${CALLED[role]}`;
@@ -73,7 +73,9 @@ function mustAgree(role: Role, kind: ExposureKind): boolean {
   return (role === "science" || role === "arc") && (kind === "bias" || kind === "dark");
 }
 
-function problemOf(raw: RawImage, frame: Assembled, levels: Levels, role: Role): string | undefined {
+function problemOf(raw: RawImage, frame: Assembled, role: Role): string | undefined {
+  if (role === "science" || role === "arc") return undefined;
+  const levels = levelsOf(frame);
   switch (role) {
     case "bias":
       return biasProblem(raw, frame, levels);
@@ -83,8 +85,6 @@ function problemOf(raw: RawImage, frame: Assembled, levels: Levels, role: Role):
       return flatProblem(frame, levels) ?? unevenProblem(levels);
     case "fibre flat":
       return flatProblem(frame, levels) ?? arcProblem(frame);
-    default:
-      return undefined;
   }
 }
 
@@ -142,18 +142,29 @@ function noLight(levels: Levels): string {
 /** Light of a flat fills its ribbons from end to end, light of an arc stands in lines: along the brightest rows the
  * median of a flat is near its mean, that of an arc far below. */
 function arcProblem({ electrons, nx, ny }: Assembled): string | undefined {
-  const rows = Array.from({ length: ny }, (_, y) => rowMeanAndMedian(electrons.subarray(y * nx, (y + 1) * nx)))
-    .filter((row) => Number.isFinite(row.mean))
+  const rows = Array.from({ length: ny }, (_, y) => sampleOf(electrons, y * nx, nx))
+    .filter((row) => row.length > 0)
+    .map((sample) => ({ sample, mean: sample.reduce((sum, value) => sum + value, 0) / sample.length }))
     .sort((a, b) => b.mean - a.mean)
     .slice(0, Math.max(1, Math.floor(ny / 5)));
   const mean = rows.reduce((sum, row) => sum + row.mean, 0);
-  const median = rows.reduce((sum, row) => sum + row.median, 0);
+  const median = rows.reduce((sum, row) => sum + upperMedian(row.sample), 0);
   if (!(median < 0.35 * mean)) return undefined;
   return `its light stands in lines (along its bright rows the median is ${percent(median / mean)} of the mean), as in an arc`;
 }
 
-function rowMeanAndMedian(row: Float32Array): { mean: number; median: number } {
-  const sorted = row.filter((value) => Number.isFinite(value)).sort();
-  const mean = sorted.reduce((sum, value) => sum + value, 0) / sorted.length;
-  return { mean, median: sorted[sorted.length >> 1] };
+/** Finite pixels of a row, evenly chosen where there are more than are needed to tell lines from a continuum. */
+function sampleOf(electrons: Float32Array, from: number, nx: number): Float32Array {
+  const step = Math.max(1, Math.floor(nx / ENOUGH_OF_ROW));
+  const sample = new Float32Array(Math.ceil(nx / step));
+  let n = 0;
+  for (let x = 0; x < nx; x += step) {
+    const value = electrons[from + x];
+    if (Number.isFinite(value)) sample[n++] = value;
+  }
+  return sample.subarray(0, n);
+}
+
+function upperMedian(sample: Float32Array): number {
+  return sample.sort()[sample.length >> 1];
 }

@@ -3,7 +3,8 @@
  *
  * The noise comes from differences of neighbouring samples, which a smooth drift hardly enters. Of 1, 2, 3, 4, 5, 7, …
  * intervals that number is taken which makes χ² + 2·(number of coefficients) least (Akaike 1974, IEEE TAC 19, 716). */
-import { clippedScatter, medianOf } from "./clip.js";
+import { factorBand, inverseBand, solveBand } from "../reference/banded.js";
+import { clippedScatter, quantileInPlace } from "./clip.js";
 
 const CLIP_SIGMAS = 5;
 const PRICE_OF_COEFFICIENT = 2;
@@ -48,9 +49,12 @@ function noiseFromNeighbours(samples: Float64Array): number {
 
 /** Median of RUNNING samples about each; fewer towards the ends, as many before as behind, so that a slope stays. */
 function runningMedian(samples: Float64Array): Float64Array {
+  const near = new Float64Array(RUNNING);
   return samples.map((_, i) => {
     const half = Math.min(RUNNING >> 1, i, samples.length - 1 - i);
-    return medianOf(samples.subarray(i - half, i + half + 1));
+    let n = 0;
+    for (let k = i - half; k <= i + half; k++) if (!Number.isNaN(samples[k])) near[n++] = samples[k];
+    return quantileInPlace(near, 0.5, n);
   });
 }
 
@@ -73,25 +77,27 @@ interface Fit {
 function bestFit(samples: Float64Array, sigma: number): Fit {
   const [first, last] = extent(samples);
   const n = samples.length;
-  let best: Fit = { level: new Float64Array(n).fill(Number.NaN), variance: new Float64Array(n), intervals: 0 };
-  if (last < first) return best;
+  if (last < first) {
+    return { level: new Float64Array(n).fill(Number.NaN), variance: new Float64Array(n), intervals: 0 };
+  }
   if (last - first < 8) return constantFit(samples, sigma);
+  let best: Spline | undefined;
   let bestCost = Number.POSITIVE_INFINITY;
   for (
     let intervals = 1;
     intervals <= MOST_INTERVALS && (last - first) / intervals >= 4;
     intervals = Math.ceil(1.25 * intervals)
   ) {
-    const fit = splineFit(samples, first, last, intervals, sigma);
-    if (fit === undefined) break;
+    const spline = splineFit(samples, first, last, intervals);
+    if (spline === undefined) break;
     // Without noise every misfit counts; a unit of rounding keeps the cost finite.
-    const cost = fit.chi2 / Math.max(sigma * sigma, 1e-12) + PRICE_OF_COEFFICIENT * (intervals + 3);
+    const cost = spline.chi2 / Math.max(sigma * sigma, 1e-12) + PRICE_OF_COEFFICIENT * (intervals + 3);
     if (cost < bestCost) {
       bestCost = cost;
-      best = { level: fit.level, variance: fit.variance, intervals };
+      best = spline;
     }
   }
-  return best.intervals > 0 ? best : constantFit(samples, sigma);
+  return best === undefined ? constantFit(samples, sigma) : evaluate(samples, first, last, best, sigma);
 }
 
 function extent(samples: Float64Array): [number, number] {
@@ -117,57 +123,71 @@ function constantFit(samples: Float64Array, sigma: number): Fit {
   };
 }
 
-function splineFit(samples: Float64Array, first: number, last: number, intervals: number, sigma: number) {
+/** Coefficients, the band of their covariance for samples of unit variance, and χ² of unit variance. */
+interface Spline {
+  intervals: number;
+  coef: Float64Array;
+  covariance: Float64Array;
+  chi2: number;
+}
+
+/** Neighbours of a coefficient that share samples with it, to one side. */
+const BAND = 3;
+
+/** Undefined when a stretch of knots has no samples. */
+function splineFit(samples: Float64Array, first: number, last: number, intervals: number): Spline | undefined {
   const nCoef = intervals + 3;
-  const normal = new Float64Array(nCoef * nCoef);
-  const right = new Float64Array(nCoef);
+  const normal = new Float64Array(nCoef * (BAND + 1));
+  const coef = new Float64Array(nCoef);
   const basis = new Float64Array(4);
   // Levels ride on a pedestal of about a thousand counts: fit what is left of it, so that rounding stays small.
   const pedestal = samples[first];
   for (let i = first; i <= last; i++) {
-    if (Number.isNaN(samples[i])) continue;
+    const sample = samples[i];
+    if (Number.isNaN(sample)) continue;
     const at = splineBasis(basis, ((i - first) / (last - first)) * intervals, intervals);
     for (let a = 0; a < 4; a++) {
-      right[at + a] += basis[a] * (samples[i] - pedestal);
-      for (let b = 0; b < 4; b++) normal[(at + a) * nCoef + at + b] += basis[a] * basis[b];
+      coef[at + a] += basis[a] * (sample - pedestal);
+      for (let b = 0; b <= a; b++) normal[(at + a) * (BAND + 1) + a - b] += basis[a] * basis[b];
     }
   }
-  const inverse = invertPositive(normal, nCoef);
-  if (inverse === undefined) return undefined;
-  const coef = new Float64Array(nCoef);
-  for (let a = 0; a < nCoef; a++) for (let b = 0; b < nCoef; b++) coef[a] += inverse[a * nCoef + b] * right[b];
-  return { ...evaluate(samples, first, last, intervals, coef, inverse, pedestal, sigma) };
+  factorBand(normal, nCoef, BAND);
+  for (let k = 0; k < nCoef; k++) if (!(normal[k * (BAND + 1)] > 0)) return undefined;
+  solveBand(normal, nCoef, BAND, coef);
+  let chi2 = 0;
+  for (let i = first; i <= last; i++) {
+    const sample = samples[i];
+    if (Number.isNaN(sample)) continue;
+    const at = splineBasis(basis, ((i - first) / (last - first)) * intervals, intervals);
+    let off = sample - pedestal;
+    for (let a = 0; a < 4; a++) off -= basis[a] * coef[at + a];
+    chi2 += off * off;
+  }
+  return { intervals, coef, covariance: normal, chi2 };
 }
 
-function evaluate(
-  samples: Float64Array,
-  first: number,
-  last: number,
-  intervals: number,
-  coef: Float64Array,
-  inverse: Float64Array,
-  pedestal: number,
-  sigma: number,
-) {
-  const nCoef = coef.length;
+/** The curve at every sample. */
+function evaluate(samples: Float64Array, first: number, last: number, spline: Spline, sigma: number): Fit {
+  const { intervals, coef } = spline;
+  const covariance = inverseBand(spline.covariance, coef.length, BAND);
   const level = new Float64Array(samples.length);
   const variance = new Float64Array(samples.length);
   const basis = new Float64Array(4);
-  let chi2 = 0;
   for (let i = 0; i < samples.length; i++) {
     const inside = Math.min(Math.max(i, first), last);
     const at = splineBasis(basis, ((inside - first) / (last - first)) * intervals, intervals);
-    let value = pedestal;
+    let value = samples[first];
     let leverage = 0;
     for (let a = 0; a < 4; a++) {
       value += basis[a] * coef[at + a];
-      for (let b = 0; b < 4; b++) leverage += basis[a] * basis[b] * inverse[(at + a) * nCoef + at + b];
+      for (let b = 0; b <= a; b++) {
+        leverage += (a === b ? 1 : 2) * basis[a] * basis[b] * covariance[(at + a) * (BAND + 1) + a - b];
+      }
     }
     level[i] = value;
     variance[i] = sigma * sigma * leverage;
-    if (!Number.isNaN(samples[i])) chi2 += (samples[i] - value) ** 2;
   }
-  return { level, variance, chi2 };
+  return { level, variance, intervals };
 }
 
 /** The four uniform cubic B-splines that are not 0 at t ∈ [0, intervals]; returns the index of the first. */

@@ -2,11 +2,11 @@
 import { BLOCK_BYTES, formatHeader } from "./cards.js";
 import { isStructural } from "./carry.js";
 import { addChecksums, checksum, encodeChecksum } from "./checksum.js";
+import { Encoder, type PixelArray } from "./encoder.js";
 import { FitsError } from "./errors.js";
 import type { Card, CardValue } from "./header.js";
 
-/** Uint16Array and Uint32Array are written as signed numbers with BZERO. */
-export type PixelArray = Uint8Array | Int16Array | Uint16Array | Int32Array | Uint32Array | Float32Array | Float64Array;
+export type { PixelArray } from "./encoder.js";
 
 export interface OutputImage {
   nx: number;
@@ -35,23 +35,62 @@ export type OutputHdu =
 /** The whole file in memory.
  * @throws FitsError when a card, a shape or a format cannot be written. */
 export function encodeFits(hdus: readonly OutputHdu[]): Uint8Array {
-  return Buffer.concat([...encodeHdus(hdus)]);
+  const pieces: Uint8Array[] = [];
+  for (const piece of encodeHdus(hdus, new Encoder())) pieces.push(piece.slice());
+  return Buffer.concat(pieces);
 }
 
-/** The file piece by piece: each HDU's header, then its data.
+/** The file piece by piece, in order; each is gone when the next is asked for. Data are encoded twice, since their sum stands
+ * in the header before them.
  * @throws FitsError as `encodeFits`. */
-export function* encodeHdus(hdus: readonly OutputHdu[]): Generator<Uint8Array> {
+export function* encodeHdus(hdus: readonly OutputHdu[], encoder: Encoder): Generator<Uint8Array> {
+  for (const hdu of planHdus(hdus)) {
+    let sum = 0;
+    for (const piece of hdu.data(encoder)) sum = addChecksums(sum, encoder.sum(piece));
+    yield hdu.header(sum);
+    yield* hdu.data(encoder);
+  }
+}
+
+/** One HDU on its way out. */
+export interface PlannedHdu {
+  headerBytes: number;
+  /** With the sum over the data. */
+  header: (dataSum: number) => Uint8Array;
+  /** Whole words each, padding included; a piece is gone when the next is asked for. */
+  data: (encoder: Encoder) => Iterable<Uint8Array>;
+}
+
+/** @throws FitsError as `encodeFits`. */
+export function* planHdus(hdus: readonly OutputHdu[]): Generator<PlannedHdu> {
   if (hdus[0]?.kind !== "primary" || hdus.slice(1).some((hdu) => hdu.kind === "primary")) {
     throw new FitsError("output", "the list of HDUs has no primary at its head, or a second one", "put one, first");
   }
   for (const hdu of hdus) {
-    const data = hdu.kind === "table" ? encodeTable(hdu) : encodeImage(hdu);
-    yield encodeHeader(hdu, data, hdus.length > 1);
-    yield data;
+    const data = dataOf(hdu);
+    const header = (dataSum: number) => encodeHeader(hdu, dataSum, hdus.length > 1);
+    // Sums of any size take one card.
+    yield { headerBytes: header(0).length, header, data };
   }
 }
 
-function encodeHeader(hdu: OutputHdu, data: Uint8Array, hasExtensions: boolean): Uint8Array {
+function dataOf(hdu: OutputHdu): PlannedHdu["data"] {
+  if (hdu.kind === "table") {
+    const bytes = encodeTable(hdu);
+    return () => [bytes];
+  }
+  const image = hdu.kind === "image" ? hdu : hdu.image;
+  if (image === undefined) return () => [];
+  requireShape(image, hdu.name ?? "PRIMARY");
+  return (encoder) => encoder.pixels(image.data);
+}
+
+function requireShape({ nx, ny, data }: OutputImage, name: string): void {
+  if (nx >= 1 && ny >= 1 && data.length === nx * ny) return;
+  throw new FitsError("output", `${name} has ${data.length} pixels for ${nx} × ${ny}`, "give nx · ny pixels");
+}
+
+function encodeHeader(hdu: OutputHdu, dataSum: number, hasExtensions: boolean): Uint8Array {
   const own = (hdu.kind === "primary" ? hdu.header : hdu.cards) ?? [];
   const taken = own.find((card) => isStructural(card.keyword));
   if (taken !== undefined) {
@@ -64,7 +103,6 @@ function encodeHeader(hdu: OutputHdu, data: Uint8Array, hasExtensions: boolean):
       },
     );
   }
-  const dataSum = checksum(data);
   const [structure, description] = hdu.kind === "table" ? tableCards(hdu) : imageCards(hdu, hasExtensions);
   const cards = (sum: string): Card[] => [
     ...structure,
@@ -119,35 +157,6 @@ function storedAs(data: PixelArray): { bitpix: number; zero: number } {
   if (data instanceof Int32Array) return { bitpix: 32, zero: 0 };
   if (data instanceof Uint32Array) return { bitpix: 32, zero: 2147483648 };
   return { bitpix: data instanceof Float32Array ? -32 : -64, zero: 0 };
-}
-
-function encodeImage(hdu: Exclude<OutputHdu, { kind: "table" }>): Uint8Array {
-  const image = hdu.kind === "image" ? hdu : hdu.image;
-  if (image === undefined) return new Uint8Array(0);
-  const { nx, ny, data } = image;
-  if (nx < 1 || ny < 1 || data.length !== nx * ny) {
-    const name = hdu.name ?? "PRIMARY";
-    throw new FitsError("output", `${name} has ${data.length} pixels for ${nx} × ${ny}`, "give nx · ny pixels");
-  }
-  const bytes = padded(data.byteLength);
-  bytes.set(new Uint8Array(data.buffer, data.byteOffset, data.byteLength));
-  const pixels = bytes.subarray(0, data.byteLength);
-  // Unsigned minus 2ⁿ⁻¹, as a signed number, is the same bits with the highest one turned.
-  if (data instanceof Uint16Array) for (let i = 1; i < pixels.length; i += 2) pixels[i] ^= 0x80;
-  if (data instanceof Uint32Array) for (let i = 3; i < pixels.length; i += 4) pixels[i] ^= 0x80;
-  toBigEndian(pixels, data.BYTES_PER_ELEMENT);
-  return bytes;
-}
-
-function padded(nBytes: number): Uint8Array {
-  return new Uint8Array(Math.ceil(nBytes / BLOCK_BYTES) * BLOCK_BYTES);
-}
-
-function toBigEndian(bytes: Uint8Array, width: number): void {
-  const view = Buffer.from(bytes.buffer, bytes.byteOffset, bytes.byteLength);
-  if (width === 2) view.swap16();
-  if (width === 4) view.swap32();
-  if (width === 8) view.swap64();
 }
 
 const WIDTH: Record<string, number> = { L: 1, A: 1, B: 1, I: 2, J: 4, K: 8, E: 4, D: 8 };
@@ -212,7 +221,7 @@ function tableCards(hdu: Extract<OutputHdu, { kind: "table" }>): [Card[], Card[]
 
 function encodeTable(hdu: Extract<OutputHdu, { kind: "table" }>): Uint8Array {
   const { layouts, rowBytes, nRows } = layOut(hdu.columns);
-  const bytes = padded(rowBytes * nRows);
+  const bytes = new Uint8Array(Math.ceil((rowBytes * nRows) / BLOCK_BYTES) * BLOCK_BYTES);
   const view = new DataView(bytes.buffer);
   hdu.columns.forEach((column, c) => {
     const { repeat, type, at } = layouts[c];

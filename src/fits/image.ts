@@ -1,7 +1,9 @@
 /** Images in: any HDU, any kind of pixel, plain or in compressed tiles, as physical values. */
 import { basename } from "node:path";
-import { type Kernels, loadKernels } from "../kernels/module.js";
-import { decodePixels } from "../kernels/pixels.js";
+import { checksum } from "../kernels/checksum.js";
+import { frameBytes, reserveFrameRoom } from "../kernels/frameRoom.js";
+import { type Kernels, loadKernels, type Workbench } from "../kernels/module.js";
+import { decodePixels, decodingBytes, fitsFloat32 } from "../kernels/pixels.js";
 import type { PixelScaling } from "../reference/pixels.js";
 import { FitsError } from "./errors.js";
 import type { Header } from "./header.js";
@@ -31,8 +33,11 @@ export interface FitsImage {
   checksum: string;
   /** What is odd but does no harm; one sentence each. */
   warnings: string[];
-  /** Those that decoded the pixels. */
+  /** Those that decoded the pixels, and the memory in which `data` lie. */
   kernels: Kernels;
+  memory: Workbench;
+  /** Room for the frame made of it, in front of `data`; absent when not asked for. */
+  room?: Uint8Array;
 }
 
 export interface ReadOptions {
@@ -40,28 +45,26 @@ export interface ReadOptions {
   hdu?: number | string | undefined;
   /** What to call bytes in messages. */
   name?: string | undefined;
+  /** Read a raw frame into the room behind the frame that will be made of it: `correctFrame` takes that memory for the frame,
+   * and whatever works on the frame may write over the raw pixels. Default false. */
+  forFrame?: boolean | undefined;
 }
 
 /** One image. `input`: a path, "-" for standard input, or bytes; gzip or not.
  * @throws FitsError, one sentence with file and place, when the file is damaged or holds no such image. */
 export function readImage(input: string | Uint8Array, options: ReadOptions = {}): Promise<FitsImage> {
   return withFits(input, options.name, async (fits) => {
-    const hdu = options.hdu === undefined ? firstImage(fits) : findHdu(fits, options.hdu);
-    const compressed = isCompressed(hdu);
-    const header = compressed ? uncompressedHeader(hdu) : hdu.header;
-    const { nx, ny, bitpix } = shapeOf(hdu, header, compressed);
-    const scaling = scalingOf(header, bitpix, fits);
+    const found = imageIn(fits, options);
+    const { hdu, header } = found;
     const kernels = await loadKernels();
-    const { data, dataSum } = compressed
-      ? decodeTiles(fits, hdu, nx, ny, scaling)
-      : decodePlain(kernels, fits, hdu, nx * ny, scaling);
+    const { data, dataSum, memory, room } = decodeImage(kernels, fits, found, options.forFrame === true);
     const { state, digest } = checkSums(fits, hdu, dataSum);
     warnOfChecksums(fits, hdu, state);
     return {
-      nx,
-      ny,
+      nx: found.nx,
+      ny: found.ny,
       data,
-      bitpix,
+      bitpix: found.scaling.bitpix,
       header,
       primaryHeader: fits.hdus[0].header,
       hduIndex: hdu.index,
@@ -71,8 +74,30 @@ export function readImage(input: string | Uint8Array, options: ReadOptions = {})
       checksum: digest,
       warnings: fits.warnings,
       kernels,
+      memory,
+      ...(room ? { room } : {}),
     };
   });
+}
+
+/** An image HDU, and what its pixels are. */
+export interface FoundImage {
+  hdu: ScannedHdu;
+  /** Of a compressed image, as it was before compression. */
+  header: Header;
+  compressed: boolean;
+  nx: number;
+  ny: number;
+  scaling: PixelScaling;
+}
+
+/** The image that is asked for. */
+export function imageIn(fits: OpenFits, options: ReadOptions): FoundImage {
+  const hdu = options.hdu === undefined ? firstImage(fits) : findHdu(fits, options.hdu);
+  const compressed = isCompressed(hdu);
+  const header = compressed ? uncompressedHeader(hdu) : hdu.header;
+  const { nx, ny, bitpix } = shapeOf(hdu, header, compressed);
+  return { hdu, header, compressed, nx, ny, scaling: scalingOf(header, bitpix, fits) };
 }
 
 function isImageKind(hdu: ScannedHdu): boolean {
@@ -150,24 +175,42 @@ function scalingOf(header: Header, bitpix: number, fits: OpenFits): PixelScaling
 interface Decoded {
   data: Float32Array | Float64Array;
   dataSum: number;
+  memory: Workbench;
+  room?: Uint8Array;
 }
 
-function decodePlain(kernels: Kernels, fits: OpenFits, hdu: ScannedHdu, n: number, scaling: PixelScaling): Decoded {
+/** Its pixels' values, and the sum over its data. */
+export function decodeImage(kernels: Kernels, fits: OpenFits, image: FoundImage, forFrame: boolean): Decoded {
+  const { hdu, compressed, nx, ny, scaling } = image;
+  return withinMemory(fits, hdu, () => {
+    const held = memoryFor(kernels, nx * ny, scaling, forFrame);
+    const decode = compressed ? decodeTiles : decodePlain;
+    return { ...held, ...decode(held.memory, fits, image) };
+  });
+}
+
+/** Memory for `n` pixels and their decoding. */
+function memoryFor(kernels: Kernels, n: number, scaling: PixelScaling, forFrame: boolean) {
+  const nBytes = decodingBytes(n, scaling);
+  if (!forFrame) return { memory: kernels.workbench(nBytes, 1) };
+  const memory = reserveFrameRoom(kernels, n, frameBytes(n) + nBytes);
+  return { memory, room: memory.uint8(frameBytes(n)) };
+}
+
+function decodePlain(memory: Workbench, fits: OpenFits, { hdu, nx, ny, scaling }: FoundImage) {
   let dataSum = 0;
-  const data = withinMemory(fits, hdu, () =>
-    decodePixels(kernels, n, scaling, (stored) => {
-      fits.source.readInto(stored, fits.data[hdu.index]!.offset);
-      dataSum = sumOfData(fits, hdu, stored);
-    }),
-  );
+  const data = decodePixels(memory, nx * ny, scaling, (stored) => {
+    fits.source.readInto(stored, fits.data[hdu.index]!.offset);
+    dataSum = sumOfData(fits, hdu, stored, (whole) => checksum(memory, whole));
+  });
   return { data, dataSum };
 }
 
-function decodeTiles(fits: OpenFits, hdu: ScannedHdu, nx: number, ny: number, scaling: PixelScaling): Decoded {
-  return withinMemory(fits, hdu, () => {
-    const stored = readData(fits, hdu);
-    return { data: readTiles(hdu, stored, nx, ny, scaling), dataSum: sumOfData(fits, hdu, stored) };
-  });
+function decodeTiles(memory: Workbench, fits: OpenFits, { hdu, nx, ny, scaling }: FoundImage) {
+  const stored = readData(fits, hdu);
+  const data = fitsFloat32(scaling) ? memory.float32(nx * ny) : memory.float64(nx * ny);
+  readTiles(hdu, stored, nx, ny, scaling, data);
+  return { data, dataSum: sumOfData(fits, hdu, stored) };
 }
 
 function withinMemory<T>(fits: OpenFits, hdu: ScannedHdu, work: () => T): T {
@@ -185,7 +228,7 @@ function withinMemory<T>(fits: OpenFits, hdu: ScannedHdu, work: () => T): T {
   }
 }
 
-function warnOfChecksums(fits: OpenFits, hdu: ScannedHdu, state: ChecksumState): void {
+export function warnOfChecksums(fits: OpenFits, hdu: ScannedHdu, state: ChecksumState): void {
   const primary = fits.hdus[0];
   const primaryWrong = hdu.index > 0 && primary.dataBytes === 0 && checkSums(fits, primary, 0).state === "wrong";
   for (const [index, wrong] of [

@@ -70,15 +70,14 @@ export function checkSums(fits: OpenFits, hdu: ScannedHdu, dataSum: number): { s
   return { state: dataRight && wholeRight ? "right" : "wrong", digest };
 }
 
-/** The sum over an HDU's data and their padding. `stored`: the data, when they are at hand already. */
-export function sumOfData(fits: OpenFits, hdu: ScannedHdu, stored?: Uint8Array): number {
-  const bytes = stored ?? readData(fits, hdu);
+/** The sum over an HDU's data, `bytes`, and their padding. `sumOf` sums whole words. */
+export function sumOfData(fits: OpenFits, hdu: ScannedHdu, bytes: Uint8Array, sumOf = checksum): number {
   const end = hdu.dataOffset + hdu.dataBytes;
   const padding = Math.min((2880 - (hdu.dataBytes % 2880)) % 2880, fits.source.size - end);
   const rest = new Uint8Array((hdu.dataBytes % 4) + padding);
   rest.set(bytes.subarray(bytes.length - (hdu.dataBytes % 4)));
   if (padding > 0) fits.source.readInto(rest.subarray(hdu.dataBytes % 4), end);
-  return checksum(rest, checksum(bytes.subarray(0, bytes.length - (hdu.dataBytes % 4))));
+  return checksum(rest, sumOf(bytes.subarray(0, bytes.length - (hdu.dataBytes % 4))));
 }
 
 /** An HDU's data as they are stored. */

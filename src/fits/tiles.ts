@@ -1,7 +1,6 @@
 /** Images stored as compressed tiles, one a row of a binary table (FITS Standard 4.0, section 10): RICE_1, GZIP_1 and
  * GZIP_2, integers without loss, floats quantised (with subtractive dithering or without) or without loss. */
 import { gunzipSync } from "node:zlib";
-import { fitsFloat32 } from "../kernels/pixels.js";
 import type { PixelScaling } from "../reference/pixels.js";
 import { type ColumnPlace, ELEMENT_BYTES, placeColumns } from "./columns.js";
 import { type Dither, ditherOf } from "./dither.js";
@@ -33,7 +32,7 @@ export function uncompressedHeader(hdu: ScannedHdu): Header {
   return new Header([...cards, ...header.cards.filter((own) => !OF_THE_TABLE.test(own.keyword))], header.place);
 }
 
-/** Physical values, ny × nx. `stored`: the table's data, heap included.
+/** Physical values, ny × nx, into `data`. `stored`: the table's data, heap included.
  * @throws FitsError when the tiles are damaged or of a kind that is not read. */
 export function readTiles(
   hdu: ScannedHdu,
@@ -41,9 +40,9 @@ export function readTiles(
   nx: number,
   ny: number,
   scaling: PixelScaling,
-): Float32Array | Float64Array {
+  data: Float32Array | Float64Array,
+): void {
   const table = new TileTable(hdu, stored, nx, ny);
-  const data = fitsFloat32(scaling) ? new Float32Array(nx * ny) : new Float64Array(nx * ny);
   const blank = scaling.bitpix > 0 && scaling.blank !== undefined ? Number(scaling.blank) : undefined;
   const plain = scaling.scale === 1 && scaling.zero === 0;
   let tile = 0;
@@ -59,7 +58,6 @@ export function readTiles(
       }
     }
   }
-  return data;
 }
 
 type Values = Int32Array | Float64Array;

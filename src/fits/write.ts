@@ -2,7 +2,10 @@
 import { randomBytes } from "node:crypto";
 import fs from "node:fs";
 import { basename, dirname, join } from "node:path";
-import { encodeHdus, type OutputHdu } from "./encode.js";
+import { loadKernels } from "../kernels/module.js";
+import { addChecksums } from "./checksum.js";
+import { encodeHdus, type OutputHdu, planHdus } from "./encode.js";
+import { Encoder } from "./encoder.js";
 import { FitsError } from "./errors.js";
 
 export interface WriteOptions {
@@ -16,16 +19,17 @@ export interface WriteOptions {
  * @throws FitsError when the file exists and `force` is not given, is one of the inputs, or cannot be written; nothing
  * is left behind then. */
 export async function writeFits(path: string, hdus: readonly OutputHdu[], options: WriteOptions = {}): Promise<void> {
-  if (path === "-") return writeToStandardOutput(hdus);
+  const encoder = new Encoder(await loadKernels());
+  if (path === "-") return writeToStandardOutput(hdus, encoder);
   refuseToHarm(path, options);
   const there = fs.statSync(path, { throwIfNoEntry: false });
-  if (there !== undefined && !there.isFile()) return failingAsOutput(path, () => writePieces(path, "w", hdus));
+  if (there !== undefined && !there.isFile()) return failingAsOutput(path, () => writeInOrder(path, hdus, encoder));
   // A link is followed: it is the file behind it that is replaced.
   const target = there === undefined ? path : fs.realpathSync(path);
   const temporary = join(dirname(target), `.${basename(target)}.${randomBytes(6).toString("hex")}.part`);
   failingAsOutput(path, () => {
     try {
-      writePieces(temporary, "wx", hdus);
+      writeInPlaces(temporary, hdus, encoder);
       refuseToHarm(path, options);
       fs.renameSync(temporary, target);
     } catch (error) {
@@ -55,25 +59,57 @@ export function refuseToHarm(path: string, options: WriteOptions): void {
   }
 }
 
-function writePieces(path: string, flags: string, hdus: readonly OutputHdu[]): void {
+/** Into a pipe or a device: one byte behind the other. */
+function writeInOrder(path: string, hdus: readonly OutputHdu[], encoder: Encoder): void {
+  withNewFile(path, "w", (file) => {
+    for (const piece of encodeHdus(hdus, encoder)) writeWhole(file, piece, null);
+  });
+}
+
+/** Into a file: each header after its data, whose sum it holds, so that they are encoded once. */
+function writeInPlaces(path: string, hdus: readonly OutputHdu[], encoder: Encoder): void {
+  withNewFile(path, "wx", (file) => {
+    let start = 0;
+    for (const hdu of planHdus(hdus)) {
+      let at = start + hdu.headerBytes;
+      let sum = 0;
+      for (const piece of hdu.data(encoder)) {
+        sum = addChecksums(sum, encoder.sum(piece));
+        writeWhole(file, piece, at);
+        at += piece.length;
+      }
+      writeWhole(file, hdu.header(sum), start);
+      start = at;
+    }
+  });
+}
+
+function withNewFile(path: string, flags: string, write: (file: number) => void): void {
   const file = fs.openSync(path, flags);
   try {
-    for (const piece of encodeHdus(hdus)) {
-      for (let at = 0; at < piece.length; ) at += fs.writeSync(file, piece, at);
-    }
+    write(file);
   } finally {
     fs.closeSync(file);
   }
 }
 
-async function writeToStandardOutput(hdus: readonly OutputHdu[]): Promise<void> {
+/** @param position in the file; null: where it stands. */
+function writeWhole(file: number, piece: Uint8Array, position: number | null): void {
+  for (let at = 0; at < piece.length; ) {
+    at += fs.writeSync(file, piece, at, piece.length - at, position === null ? null : position + at);
+  }
+}
+
+async function writeToStandardOutput(hdus: readonly OutputHdu[], encoder: Encoder): Promise<void> {
   const { stdout } = process;
   // A broken pipe is told twice: to the callback, which is heard, and later as an event, which must not end the process.
   const deaf = () => {};
   stdout.on("error", deaf);
-  for (const piece of encodeHdus(hdus)) {
+  for (const piece of encodeHdus(hdus, encoder)) {
+    // A copy: the stream may hold it for longer than the encoder does.
+    const held = Buffer.from(piece);
     await new Promise<void>((resolve, reject) => {
-      stdout.write(piece, (error) => (error ? reject(cannotWrite("standard output", error)) : resolve()));
+      stdout.write(held, (error) => (error ? reject(cannotWrite("standard output", error)) : resolve()));
     });
   }
   stdout.off("error", deaf);

@@ -7,6 +7,45 @@ export interface KernelExports {
   bandedSystems32(bandPtr: number, n: number, b: number, rhsPtr: number, inversePtr: number): void;
   bandedSystems64(bandPtr: number, n: number, b: number, rhsPtr: number, inversePtr: number): void;
 
+  /** assembly/census.ts */
+  census(ptr: number, n: number, outPtr: number): void;
+
+  /** assembly/checksum.ts */
+  checksum(ptr: number, nBytes: number): number;
+  toBigEndian(ptr: number, n: number, width: number, unsigned: number): void;
+
+  /** assembly/electrons.ts */
+  electrons(
+    inPtr: number,
+    stride: number,
+    nx: number,
+    ny: number,
+    zeroPtr: number,
+    zeroForRow: number,
+    gain: number,
+    limit: number,
+    zeroIsMissing: number,
+    electronsPtr: number,
+    maskPtr: number,
+    outStride: number,
+    countPtr: number,
+  ): void;
+  growSaturation(
+    inPtr: number,
+    stride: number,
+    nx: number,
+    ny: number,
+    limit: number,
+    maskPtr: number,
+    outStride: number,
+    bleed: number,
+    growShort: number,
+    growBleed: number,
+    runPtr: number,
+  ): void;
+  turnBytes(inPtr: number, nx: number, ny: number, outPtr: number): void;
+  turnFloat32(inPtr: number, nx: number, ny: number, outPtr: number): void;
+
   /** assembly/erf.ts */
   erf(x: number): number;
 

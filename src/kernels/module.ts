@@ -66,6 +66,11 @@ export class Workbench {
     return new Uint8Array(this.memory.buffer, this.reserve(n), n);
   }
 
+  /** Forgets the pieces behind `last`: their places are handed out anew. */
+  keepUpTo(last: ArrayBufferView): void {
+    this.next = last.byteOffset + last.byteLength;
+  }
+
   private reserve(nBytes: number): number {
     const at = Math.ceil(this.next / ALIGN_BYTES) * ALIGN_BYTES;
     if (at + nBytes > this.memory.buffer.byteLength) {
