@@ -7,7 +7,8 @@ import type { ShapeBasis } from "../reference/shapeBasis.js";
 import type { Kernels } from "./module.js";
 import { blockIndex } from "./rankUpdate.js";
 import { ShapeWord } from "./shape-words.js";
-import { ShapeColumnBench, type ShapeProblem } from "./shapeColumn.js";
+import { ShapeColumnBench } from "./shapeColumn.js";
+import type { ShapeProblem } from "./shapeMemory.js";
 
 /** Sums over columns. */
 export interface NormalSums {

@@ -8,11 +8,12 @@
  * the others are the right-hand side. */
 import { factorBand } from "./banded.js";
 import { legendreArgument, legendreBasis } from "./legendre.js";
+import { type LocalSystem, localDesign, localSystem } from "./localSystem.js";
 import { rankUpdate } from "./rankUpdate.js";
 import { centroidOf, nShapeTerm, type ShapeTable } from "./shape.js";
 import { backgroundColumn, nBackground, nBackgroundX, nBackgroundY } from "./shapeBackground.js";
 import { basisAt, emptyEdge, type ShapeBasis } from "./shapeBasis.js";
-import { type ColumnData, type LocalSystem, localDesign, localSystem, settleColumn } from "./shapeColumn.js";
+import { type ColumnData, settleColumn } from "./shapeColumn.js";
 import { type ColumnProfiles, type Lines, wholeProfiles } from "./shapeProfiles.js";
 
 export interface ColumnNormal {

@@ -1,2 +1,3 @@
-export { localDesign, localSystem, solveLocal } from "../../reference/shapeColumn.js";
+export { localDesign, localSystem } from "../../reference/localSystem.js";
+export { solveLocal } from "../../reference/shapeColumn.js";
 export type { Lines } from "../../reference/shapeProfiles.js";
