@@ -37,13 +37,12 @@ export function overscanLevel(raw: RawImage, amplifier: Amplifier): OverscanLeve
   if (amplifier.overscan.length === 0) return undefined;
   const lines = withoutUnreadLines(overscanLines(raw, amplifier));
   const medians = lineMedians(lines);
-  const rough = fitSmoothLevel(medians);
-  if (Number.isNaN(rough.level[0])) {
+  if (medians.every(Number.isNaN)) {
     throw new DetectorError(
       `${raw.name}: the overscan of amplifier ${amplifier.number} holds no value at all; correct its section or give bias_level in the spectrograph file.`,
     );
   }
-  const reach = CLIP_SIGMAS * clippedScatter(offsets(lines, rough.level)).sigma;
+  const reach = CLIP_SIGMAS * clippedScatter(offsets(lines, medians)).sigma;
   const kept = keptWithin(lines, medians, reach);
   const means = lineMeans(kept);
   const smooth = fitSmoothLevel(means);
@@ -110,6 +109,7 @@ function lineMedians({ values, width, count }: Lines): Float64Array {
   });
 }
 
+/** Of every pixel from its own line's level: neither drift nor jitter of lines widens them. */
 function offsets({ values, width, count }: Lines, level: Float64Array): Float64Array {
   const off = new Float64Array(values.length);
   let n = 0;

@@ -54,12 +54,14 @@ function cutAt(axis: "x" | "y", image: Float32Array, nx: number, ny: number, cen
   const band = new Float64Array(to - from);
   const steps = new Float64Array(Math.max(0, to - from - 1));
   const noise = new Float64Array(across);
-  const values = Float64Array.from({ length: across }, (_, c) => {
-    for (let a = from; a < to; a++) band[a - from] = axis === "x" ? image[c * nx + a] : image[a * nx + c];
+  const values = new Float64Array(across);
+  const [stride, step] = axis === "x" ? [nx, 1] : [1, nx];
+  for (let c = 0; c < across; c++) {
+    for (let a = 0; a < band.length; a++) band[a] = image[c * stride + (from + a) * step];
     for (let a = 0; a < steps.length; a++) steps[a] = Math.abs(band[a + 1] - band[a]);
     noise[c] = (SIGMA_PER_MAD / Math.sqrt(2)) * finiteMedian(steps);
-    return finiteMedian(band);
-  });
+    values[c] = finiteMedian(band);
+  }
   return { values, sigma: medianOf(noise) * Math.sqrt(Math.PI / (2 * band.length)) };
 }
 
