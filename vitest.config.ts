@@ -3,7 +3,6 @@ import { defineConfig } from "vitest/config";
 export default defineConfig({
   test: {
     include: ["test/**/*.test.ts"],
-    benchmark: { include: ["bench/**/*.bench.ts"] },
     testTimeout: 60_000,
     hookTimeout: 120_000,
     maxWorkers: 2,
