@@ -42,7 +42,7 @@ describe("variances of a column", () => {
 function drawColumn(at: number, seed: number, background: Float64Array, among = lines): ColumnData {
   const next = seeded(seed);
   const profiles = columnProfiles(among, table, at, reach);
-  const flux = Float64Array.from({ length: 12 }, () => 30 * 4000 ** next());
+  const flux = Float64Array.from({ length: among.nFibre }, () => 30 * 4000 ** next());
   const under = backgroundColumn(background, at, among);
   const expected = columnModel(profiles, flux).map((light, y) => light + under[y]);
   const fixedVariance = expected.map((_, y) => 7 + (y % 4));
@@ -116,6 +116,19 @@ describe("columns fitted by the kernel", () => {
     const wanted = fitColumn(wholeProfiles(apart, table, 13), columns[1], new Float64Array(130), 3);
     expectClose(found[1].flux, wanted.flux);
     expectClose(found[1].variance, wanted.variance, 1e-9);
+  });
+
+  it("are the reference's along a slit of many fibres", () => {
+    const slit = analyticLines(90, 490);
+    const background = new Float64Array(nBackground).fill(3, 0, 1);
+    const columns = [20, 41, 66].map((at) => drawColumn(at, at, background, slit));
+    const found = fitShapeColumns(kernels, { lines: slit, table, background, columns, nPar: 3 });
+    columns.forEach((data, i) => {
+      const under = backgroundColumn(background, data.x, slit);
+      const wanted = fitColumn(wholeProfiles(slit, table, data.x), data, under, 3);
+      expectClose(found[i].flux, wanted.flux);
+      expectClose(found[i].variance, wanted.variance, 1e-9);
+    });
   });
 
   it("do not depend on which columns are fitted with them, to the bit", () => {
