@@ -1,32 +1,34 @@
 /** Boxcar extraction, in lanes: the plain sum over ± halfAperture pixels with fractional edge pixels;
  * src/reference/boxcar.ts is the same for one column. */
-import { count, Numbers, number, pointer, Word, windowRows } from "./job";
-import { overlap, windowOffset, windowWeights } from "./joint";
+import { count, Numbers, number, pointer, Word, windowOffset, windowRows, windowWeights } from "./job";
+import { overlap } from "./joint";
 import { spread } from "./lanes";
 
-/** Fills Word.raw, Word.crosstalkBand and Word.rawCovariance. */
-export function boxcar<T extends number>(job: usize): void {
-  const nFibre = count(job, Word.nFibre);
+/** Fills Word.raw, Word.crosstalkBand and Word.rawCovariance of fibres k0 … k1 − 1. */
+export function boxcar<T extends number>(job: usize, k0: i32, k1: i32): void {
   const bandwidth = count(job, Word.bandwidth);
-  const light = pointer(job, Word.light);
+  const light = pointer(job, Word.net);
   const weighted = pointer(job, Word.weighted);
-  for (let k: i32 = 0; k < nFibre; k++) fillAperture<T>(job, k);
-  let crosstalkAt = pointer(job, Word.crosstalkBand);
-  let covarianceAt = pointer(job, Word.rawCovariance);
-  for (let k: i32 = 0; k < nFibre; k++) {
+  for (let k = k0; k < k1; k++) fillAperture<T>(job, k);
+  let crosstalkAt = pointer(job, Word.crosstalkBand) + ((<usize>(k0 * (2 * bandwidth + 1))) << 4);
+  let covarianceAt = pointer(job, Word.rawCovariance) + ((<usize>(k0 * (bandwidth + 1))) << 4);
+  for (let k = k0; k < k1; k++) {
     const own = apertureOf(job, k);
     v128.store(
       pointer(job, Word.raw) + ((<usize>k) << 4),
       sumOfProducts<T>(own, light + windowOffset(job, k), windowRows(job)),
     );
     for (let m = k - bandwidth; m <= k + bandwidth; m++) {
-      const inside = m >= 0 && m < nFibre;
+      const inside = m >= k0 && m < k1;
       v128.store(crosstalkAt, inside ? overlap<T>(job, k, m, own, windowWeights(job, m)) : spread<T>(0));
       crosstalkAt += 16;
     }
     noiseOfAperture<T>(job, k, weighted);
     for (let j: i32 = 0; j <= bandwidth; j++) {
-      v128.store(covarianceAt, j <= k ? overlap<T>(job, k, k - j, weighted, apertureOf(job, k - j)) : spread<T>(0));
+      v128.store(
+        covarianceAt,
+        k - j >= k0 ? overlap<T>(job, k, k - j, weighted, apertureOf(job, k - j)) : spread<T>(0),
+      );
       covarianceAt += 16;
     }
   }

@@ -1,10 +1,9 @@
 /** Columns in and out: a group of neighbouring columns from the frame into lane rows, its spectra back into the images. */
 import { Flag, MaskBit } from "../src/reference/bits";
-import { suspects } from "./cosmic";
-import { count, laneRows, pointer, Word, windowRows } from "./job";
-import { windowOffset, windowStartOf, windowWeights } from "./joint";
+import { count, laneRows, marginRows, pointer, Word, windowOffset, windowRows, windowStartOf } from "./job";
 import { laneAt, laneCount, lanesWithout, loadBits, loadPixels, loadSpread, spread } from "./lanes";
 import { legendreValue } from "./legendre";
+import { knowsResponse } from "./variance";
 
 const outside: u32 = 0x01010101 * MaskBit.missing;
 
@@ -28,14 +27,13 @@ export function prepareRowPolynomials<T extends number>(job: usize): void {
   }
 }
 
-/** Lane rows of the `nValid` columns from `x` on: bits, light without background, and what makes the variance. */
-export function loadGroup<T extends number>(job: usize, x: i32, nValid: i32): void {
-  const margin = windowRows(job);
-  const ny = count(job, Word.ny);
-  prepareBackgroundSeries<T>(job, x);
-  for (let row: i32 = 0; row < margin; row++) clearRow<T>(job, row);
-  for (let row: i32 = margin + ny; row < laneRows(job); row++) clearRow<T>(job, row);
-  for (let y: i32 = 0; y < ny; y++) loadRow<T>(job, x, y, nValid);
+/** Lane rows beyond the frame: never good, the same for every group. Once a job. */
+export function prepareMargins<T extends number>(job: usize): void {
+  const margin = marginRows(job);
+  for (let row: i32 = 0; row < margin; row++) {
+    clearRow<T>(job, row);
+    clearRow<T>(job, margin + count(job, Word.ny) + row);
+  }
 }
 
 function clearRow<T extends number>(job: usize, row: i32): void {
@@ -48,27 +46,51 @@ function clearRow<T extends number>(job: usize, row: i32): void {
   v128.store(pointer(job, Word.responseVarianceRows) + at, spread<T>(0));
 }
 
-function loadRow<T extends number>(job: usize, x: i32, y: i32, nValid: i32): void {
-  const row = windowRows(job) + y;
-  const at = (<usize>row) << 4;
-  const pixel = <usize>y * <usize>count(job, Word.nx) + <usize>x;
+/** Lane rows row0 … row1 − 1 of the `nValid` columns from `x` on: bits, light without background, and what makes the
+ * variance. */
+export function loadGroup<T extends number>(job: usize, x: i32, nValid: i32, row0: i32, row1: i32): void {
+  const margin = marginRows(job);
+  const nx = <usize>count(job, Word.nx);
+  const responds = knowsResponse(job);
+  const from = max(row0, margin);
+  const to = min(row1, margin + count(job, Word.ny));
+  const nY = count(job, Word.nBackgroundY);
   const kept: u32 = 0x01010101 * (MaskBit.cosmic | MaskBit.grown);
-  let bits = loadBits<T>(pointer(job, Word.mask) + pixel, nValid, MaskBit.missing);
-  bits |= loadBits<T>(pointer(job, Word.rejected) + pixel, nValid, 0) & kept;
-  store<u32>(pointer(job, Word.bits) + ((<usize>row) << 2), bits);
-  const background = backgroundOn<T>(job, y);
-  const electrons = loadPixels<T>(pointer(job, Word.electrons) + (pixel << 2), nValid);
-  v128.store(pointer(job, Word.backgroundRows) + at, background);
-  v128.store(pointer(job, Word.light) + at, v128.and(v128.sub<T>(electrons, background), lanesWithout<T>(bits)));
-  v128.store(pointer(job, Word.fixed) + at, fixedVariance<T>(job, x, y, pixel, nValid));
-  v128.store(
-    pointer(job, Word.inverseResponseRows) + at,
-    imageOr<T>(pointer(job, Word.inverseResponse), pixel, nValid, 1),
-  );
-  v128.store(
-    pointer(job, Word.responseVarianceRows) + at,
-    imageOr<T>(pointer(job, Word.responseRelativeVariance), pixel, nValid, 0),
-  );
+  const mask = pointer(job, Word.mask);
+  const rejected = pointer(job, Word.rejected);
+  const electrons = pointer(job, Word.electrons);
+  const bitRows = pointer(job, Word.bits);
+  const lightRows = pointer(job, Word.light);
+  const fixedRows = pointer(job, Word.fixed);
+  const backgroundRows = pointer(job, Word.backgroundRows);
+  const inverseResponseRows = pointer(job, Word.inverseResponseRows);
+  const responseVarianceRows = pointer(job, Word.responseVarianceRows);
+  const series = pointer(job, Word.backgroundSeries);
+  prepareBackgroundSeries<T>(job, x);
+  let polynomials = pointer(job, Word.rowPolynomials) + <usize>(nY * (from - margin)) * sizeof<T>();
+  let pixel = <usize>(from - margin) * nx + <usize>x;
+  for (let row = from; row < to; row++) {
+    const at = (<usize>row) << 4;
+    let bits = loadBits<T>(mask + pixel, nValid, MaskBit.missing);
+    bits |= loadBits<T>(rejected + pixel, nValid, 0) & kept;
+    store<u32>(bitRows + (at >> 2), bits);
+    let background = v128.load(series);
+    for (let j: i32 = 1; j < nY; j++) {
+      const p = loadSpread<T>(polynomials + <usize>j * sizeof<T>());
+      background = v128.add<T>(background, v128.mul<T>(v128.load(series + ((<usize>j) << 4)), p));
+    }
+    polynomials += <usize>nY * sizeof<T>();
+    v128.store(backgroundRows + at, background);
+    const light = v128.sub<T>(loadPixels<T>(electrons + (pixel << 2), nValid), background);
+    v128.store(lightRows + at, bits ? v128.and(light, lanesWithout<T>(bits)) : light);
+    v128.store(fixedRows + at, fixedVariance<T>(job, x, row - margin, pixel, nValid));
+    if (responds) {
+      v128.store(inverseResponseRows + at, imageOr<T>(pointer(job, Word.inverseResponse), pixel, nValid, 1));
+      const flat = pointer(job, Word.responseRelativeVariance);
+      v128.store(responseVarianceRows + at, imageOr<T>(flat, pixel, nValid, 0));
+    }
+    pixel += nx;
+  }
 }
 
 /** Lanes past the frame's last column get 1, so that nothing divides by 0 there. */
@@ -102,45 +124,79 @@ function prepareBackgroundSeries<T extends number>(job: usize, x: i32): void {
   }
 }
 
-function backgroundOn<T extends number>(job: usize, y: i32): v128 {
-  const nY = count(job, Word.nBackgroundY);
-  const series = pointer(job, Word.backgroundSeries);
-  const polynomials = pointer(job, Word.rowPolynomials) + <usize>(y * nY) * sizeof<T>();
-  let sum = v128.load(series);
-  for (let j: i32 = 1; j < nY; j++) {
-    const p = loadSpread<T>(polynomials + <usize>j * sizeof<T>());
-    sum = v128.add<T>(sum, v128.mul<T>(v128.load(series + ((<usize>j) << 4)), p));
+/** Spectra of fibres k0 … k1 − 1 in those of the `nValid` columns from `x` on that `mask` holds, into the images. */
+export function storeGroup<T extends number>(
+  job: usize,
+  x: i32,
+  nValid: i32,
+  k0: i32,
+  k1: i32,
+  mask: i32,
+  raised: bool,
+): void {
+  const whole = !raised && nValid == laneCount<T>() && mask == (1 << laneCount<T>()) - 1;
+  const nx = <usize>count(job, Word.nx);
+  const weighted = pointer(job, Word.weighted);
+  for (let k = k0; k < k1; k++) {
+    const rows = pointer(job, Word.outputRow) + ((<usize>k) << 2);
+    const pixel = <usize>load<i32>(rows) * nx + <usize>x;
+    const chi2 = reducedChiSquare<T>(job, k);
+    const background = v128.load(pointer(job, Word.backgroundRows) + ((<usize>middleRow(job, k)) << 4));
+    if (whole) {
+      const paired = isNextRow(job, k);
+      const at = (<usize>k) << 4;
+      const covariance = paired ? v128.load(pointer(job, Word.covariancesBelow) + at, 16) : spread<T>(NaN);
+      storeLanes<T>(job, Word.flux, pixel, v128.load(pointer(job, Word.fluxes) + at));
+      storeLanes<T>(job, Word.variance, pixel, v128.load(pointer(job, Word.variances) + at));
+      storeLanes<T>(job, Word.neighbourCovariance, pixel, covariance);
+      storeLanes<T>(job, Word.chi2, pixel, chi2);
+      storeLanes<T>(job, Word.backgroundUnder, pixel, background);
+      const flags = pointer(job, Word.flags) + (pixel << 2);
+      if (sizeof<T>() == 4) v128.store(flags, spread<T>(0));
+      else store<i64>(flags, 0);
+      continue;
+    }
+    v128.store(weighted, chi2);
+    v128.store(weighted, background, 16);
+    for (let lane: i32 = 0; lane < nValid; lane++) {
+      if (((mask >> lane) & 1) == 0) continue;
+      const own = flagsOf<T>(job, k, lane);
+      const at = pixel + <usize>lane;
+      const valid = isValid(own);
+      storeNumber<T>(job, Word.flux, at, pointer(job, Word.fluxes), k, lane, valid);
+      storeNumber<T>(job, Word.variance, at, pointer(job, Word.variances), k, lane, valid);
+      storeNumber<T>(job, Word.chi2, at, weighted, 0, lane, valid);
+      const paired = valid && isNextRow(job, k) && isValid(flagsOf<T>(job, k + 1, lane));
+      storeNumber<T>(job, Word.neighbourCovariance, at, pointer(job, Word.covariancesBelow), k + 1, lane, paired);
+      storeNumber<T>(job, Word.backgroundUnder, at, weighted, 1, lane, true);
+      store<i32>(pointer(job, Word.flags) + (at << 2), own);
+    }
   }
-  return sum;
 }
 
-/** Spectra of the `nValid` columns from `x` on into the images. */
-export function storeGroup<T extends number>(job: usize, x: i32, nValid: i32): void {
-  const nx = <usize>count(job, Word.nx);
-  const nFibre = count(job, Word.nFibre);
-  const flags = pointer(job, Word.flagsOfLanes);
-  for (let k: i32 = 0; k < nFibre; k++) {
+/** The fit's own fluxes, whatever the method makes of them, for a later look at these columns: Word.fitFlux. */
+export function storeFit<T extends number>(job: usize, x: i32, nValid: i32, k0: i32, k1: i32, mask: i32): void {
+  const image = pointer(job, Word.fitFlux);
+  const fluxes = pointer(job, Word.fluxes);
+  for (let k = k0; k < k1; k++) {
     const row = <usize>load<i32>(pointer(job, Word.outputRow) + ((<usize>k) << 2));
-    const chi2 = reducedChiSquare<T>(job, k);
-    v128.store(pointer(job, Word.weighted), chi2);
+    const to = image + (row * <usize>count(job, Word.nx) + <usize>x) * sizeof<T>();
     for (let lane: i32 = 0; lane < nValid; lane++) {
-      const pixel = row * nx + <usize>(x + lane);
-      const own = load<i32>(flags + ((<usize>(k * laneCount<T>() + lane)) << 2));
-      const valid = isValid(own);
-      storeNumber<T>(job, Word.flux, pixel, Word.fluxes, k, lane, valid);
-      storeNumber<T>(job, Word.variance, pixel, Word.variances, k, lane, valid);
-      storeNumber<T>(job, Word.chi2, pixel, Word.weighted, 0, lane, valid);
-      storeNumber<T>(
-        job,
-        Word.neighbourCovariance,
-        pixel,
-        Word.covariancesBelow,
-        k + 1,
-        lane,
-        valid && pairs<T>(job, k, lane),
-      );
-      storeNumber<T>(job, Word.backgroundUnder, pixel, Word.backgroundRows, middleRow(job, k), lane, true);
-      store<i32>(pointer(job, Word.flags) + (pixel << 2), own);
+      if ((mask >> lane) & 1) store<T>(to + <usize>lane * sizeof<T>(), laneAt<T>(fluxes + ((<usize>k) << 4), lane));
+    }
+  }
+}
+
+/** Fluxes of fibres k0 … k1 − 1 as `storeFit` left them. */
+export function loadFit<T extends number>(job: usize, x: i32, nValid: i32, k0: i32, k1: i32): void {
+  const fluxes = pointer(job, Word.fluxes);
+  for (let k = k0; k < k1; k++) {
+    const row = <usize>load<i32>(pointer(job, Word.outputRow) + ((<usize>k) << 2));
+    const from = pointer(job, Word.fitFlux) + (row * <usize>count(job, Word.nx) + <usize>x) * sizeof<T>();
+    const at = fluxes + ((<usize>k) << 4);
+    v128.store(at, spread<T>(0));
+    for (let lane: i32 = 0; lane < nValid; lane++) {
+      store<T>(at + <usize>lane * sizeof<T>(), load<T>(from + <usize>lane * sizeof<T>()));
     }
   }
 }
@@ -150,11 +206,15 @@ export function storeModel<T extends number>(job: usize, x: i32, nValid: i32): v
   const image = pointer(job, Word.modelImage);
   if (image == 0) return;
   const nx = <usize>count(job, Word.nx);
+  const margin = marginRows(job);
+  const scratch = pointer(job, Word.weighted);
   for (let y: i32 = 0; y < count(job, Word.ny); y++) {
-    const from = pointer(job, Word.model) + ((<usize>(windowRows(job) + y)) << 4);
+    const at = (<usize>(margin + y)) << 4;
+    const light = v128.add<T>(v128.load(pointer(job, Word.model) + at), v128.load(pointer(job, Word.wingLight) + at));
+    v128.store(scratch, light);
     const to = image + ((<usize>y * nx + <usize>x) << 2);
     for (let lane: i32 = 0; lane < nValid; lane++) {
-      store<f32>(to + ((<usize>lane) << 2), <f32>laneAt<T>(from, lane));
+      store<f32>(to + ((<usize>lane) << 2), <f32>laneAt<T>(scratch, lane));
     }
   }
 }
@@ -162,74 +222,76 @@ export function storeModel<T extends number>(job: usize, x: i32, nValid: i32): v
 /** What this group rejected, and its suspects, into Word.rejected. */
 export function storeRejected<T extends number>(job: usize, x: i32, nValid: i32): void {
   const nx = <usize>count(job, Word.nx);
+  const margin = marginRows(job);
   const cosmic: u32 = 0x01010101 * MaskBit.cosmic;
-  for (let y: i32 = 0; y < count(job, Word.ny); y++) {
-    const row = windowRows(job) + y;
-    const bits = (load<u32>(pointer(job, Word.bits) + ((<usize>row) << 2)) & cosmic) | suspects<T>(job, row);
+  const bitRows = pointer(job, Word.bits);
+  const suspectRows = pointer(job, Word.suspects);
+  for (let row = margin; row < margin + count(job, Word.ny); row++) {
+    const from = (<usize>row) << 2;
+    const bits = (load<u32>(bitRows + from) & cosmic) | load<u32>(suspectRows + from);
     if (bits == 0) continue;
-    const at = pointer(job, Word.rejected) + <usize>y * nx + <usize>x;
+    const at = pointer(job, Word.rejected) + <usize>(row - margin) * nx + <usize>x;
     for (let lane: i32 = 0; lane < nValid; lane++) {
       store<u8>(at + <usize>lane, load<u8>(at + <usize>lane) | <u8>(bits >> (lane << 3)));
     }
   }
 }
 
+function storeLanes<T extends number>(job: usize, image: Word, pixel: usize, lanes: v128): void {
+  v128.store(pointer(job, image) + pixel * sizeof<T>(), lanes);
+}
+
 function storeNumber<T extends number>(
   job: usize,
   image: Word,
   pixel: usize,
-  from: Word,
+  from: usize,
   k: i32,
   lane: i32,
   valid: bool,
 ): void {
-  const value = valid ? laneAt<T>(pointer(job, from) + ((<usize>k) << 4), lane) : <T>NaN;
+  const value = valid ? laneAt<T>(from + ((<usize>k) << 4), lane) : <T>NaN;
   store<T>(pointer(job, image) + pixel * sizeof<T>(), value);
+}
+
+function flagsOf<T extends number>(job: usize, k: i32, lane: i32): i32 {
+  return load<i32>(pointer(job, Word.flagsOfLanes) + ((<usize>(k * laneCount<T>() + lane)) << 2));
 }
 
 function isValid(flags: i32): bool {
   return (flags & (Flag.weightLost | Flag.outside)) == 0;
 }
 
-/** Whether the next slit position is the next fibre and has a value here. */
-function pairs<T extends number>(job: usize, k: i32, lane: i32): bool {
+/** Whether the fibre after this one stands on the next slit position. */
+function isNextRow(job: usize, k: i32): bool {
   if (k + 1 >= count(job, Word.nFibre)) return false;
   const rows = pointer(job, Word.outputRow) + ((<usize>k) << 2);
-  if (load<i32>(rows, 4) != load<i32>(rows) + 1) return false;
-  return isValid(load<i32>(pointer(job, Word.flagsOfLanes) + ((<usize>((k + 1) * laneCount<T>() + lane)) << 2)));
+  return load<i32>(rows, 4) == load<i32>(rows) + 1;
 }
 
 /** The row of the frame nearest to the middle of the fibre's window, as a lane row. */
 function middleRow(job: usize, k: i32): i32 {
-  const margin = windowRows(job);
+  const margin = marginRows(job);
   const row = margin + windowStartOf(job, k) + count(job, Word.halfWindow);
   return min(max(row, margin), laneRows(job) - margin - 1);
 }
 
-/** χ² of the fit over the fibre's window, over its pixels less the parameters that they carry; NaN with too few. */
+/** χ² of the fit over the fibre's window, over its pixels less the parameters that they carry: each fibre counts by the
+ * share of its profile that falls on them. NaN with too few. */
 function reducedChiSquare<T extends number>(job: usize, k: i32): v128 {
   const first = windowOffset(job, k);
   const zero = spread<T>(0);
+  const one = spread<T>(1);
+  const squares = pointer(job, Word.chiSquare) + first;
+  const crowd = pointer(job, Word.crowd) + first;
+  const ivar = pointer(job, Word.inverseVariance) + first;
   let sum = zero;
   let freedom = zero;
-  for (let i: i32 = 0; i < windowRows(job); i++) {
-    const at = first + ((<usize>i) << 4);
-    const excess = v128.sub<T>(v128.load(pointer(job, Word.light) + at), v128.load(pointer(job, Word.model) + at));
-    const inverse = v128.load(pointer(job, Word.inverseVariance) + at);
-    sum = v128.add<T>(sum, v128.mul<T>(v128.mul<T>(excess, excess), inverse));
-    const free = v128.sub<T>(spread<T>(1), weightsOnRow<T>(job, k, windowStartOf(job, k) + i));
-    freedom = v128.add<T>(freedom, v128.and(free, v128.gt<T>(inverse, zero)));
+  for (let at: usize = 0; at < (<usize>windowRows(job)) << 4; at += 16) {
+    sum = v128.add<T>(sum, v128.load(squares + at));
+    const good = v128.gt<T>(v128.load(ivar + at), zero);
+    freedom = v128.add<T>(freedom, v128.and(v128.sub<T>(one, v128.load(crowd + at)), good));
   }
   const enough = v128.gt<T>(freedom, spread<T>(0.5));
   return v128.bitselect(v128.div<T>(sum, freedom), spread<T>(NaN), enough);
-}
-
-function weightsOnRow<T extends number>(job: usize, k: i32, row: i32): v128 {
-  const bandwidth = count(job, Word.bandwidth);
-  let sum = spread<T>(0);
-  for (let m = max(k - bandwidth, 0); m <= min(k + bandwidth, count(job, Word.nFibre) - 1); m++) {
-    const i = row - windowStartOf(job, m);
-    if (i >= 0 && i < windowRows(job)) sum = v128.add<T>(sum, v128.load(windowWeights(job, m) + ((<usize>i) << 4)));
-  }
-  return sum;
 }

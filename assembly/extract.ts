@@ -1,52 +1,89 @@
-/** Extraction of a stretch of columns, a group of lanes at a time; src/reference/extract.ts is the readable twin.
+/** Extraction of columns, a group of lanes at a time; src/reference/extract.ts is the readable twin.
  *
  *     columns   |<------- block ------->|<------- block ------->|     profiles at four nodes of each block
  *               | group | group | …     |                             each v128 = the group's columns
  *
- * A lane's answer never depends on the lanes beside it: a lane that has settled keeps its variances, so that further
- * rounds, run for the others' sake, give it the same bits again. */
+ * A block is a tile: threads share a frame by blocks. A lane's answer never depends on the lanes beside it: whatever is
+ * done for one lane's sake leaves the others' numbers as they were. */
+import { MaskBit } from "../src/reference/bits";
 import { boxcar } from "./boxcar";
-import { loadGroup, prepareRowPolynomials, storeGroup, storeModel, storeRejected } from "./columns";
-import { rejectWorst, squaredExcess } from "./cosmic";
+import {
+  calledLanes,
+  callFibre,
+  callRow,
+  chunkCount,
+  chunkFibres,
+  chunkMargin,
+  clearCalls,
+  prepareFibreOfRow,
+  takeCalls,
+} from "./chunks";
+import {
+  loadFit,
+  loadGroup,
+  prepareMargins,
+  prepareRowPolynomials,
+  storeFit,
+  storeGroup,
+  storeModel,
+  storeRejected,
+} from "./columns";
+import { confront } from "./cosmic";
 import { solveCrosstalk, withoutCrosstalk } from "./crosstalk";
 import { groupFlags } from "./flags";
-import { count, MethodCode, pointer, Word } from "./job";
-import { jointCovariance, modelLight, normalEquations, solveNormal } from "./joint";
-import { laneCount, spread } from "./lanes";
+import { count, laneRows, MethodCode, marginRows, pointer, Word, windowLaneRow, windowOffset, windowRows } from "./job";
+import { jointCovariance, normalEquations, solveNormal } from "./joint";
+import { laneCount, lanesSet, lanesWithout, loadBits, spread } from "./lanes";
+import { addLight, addWindowLight, addWingLight } from "./light";
 import { optimal } from "./optimal";
-import { blockProfiles, interpolateProfiles, prepareNodeShares } from "./profile";
-import { weighRows } from "./variance";
+import { blockProfiles, interpolateProfiles, interpolateWings, prepareNodeShares } from "./profile";
+import { weighByData } from "./variance";
 
-/** Tables that all columns share: once a job, before the first stretch. */
+/** Tables that all columns share: once a job and thread, before the first tile. */
 export function prepareExtraction32(job: usize): void {
-  prepareNodeShares<f32>(job);
-  prepareRowPolynomials<f32>(job);
+  prepareExtraction<f32>(job);
 }
 
 export function prepareExtraction64(job: usize): void {
-  prepareNodeShares<f64>(job);
-  prepareRowPolynomials<f64>(job);
+  prepareExtraction<f64>(job);
 }
 
-/** Columns x0 … x1 − 1; x0 must begin a block. */
-export function extractColumns32(job: usize, x0: i32, x1: i32): void {
-  extractColumns<f32>(job, x0, x1);
+/** Extracts the block of columns number `tile`. */
+export function extractTile32(job: usize, tile: i32): void {
+  extractTile<f32>(job, tile);
 }
 
-export function extractColumns64(job: usize, x0: i32, x1: i32): void {
-  extractColumns<f64>(job, x0, x1);
+export function extractTile64(job: usize, tile: i32): void {
+  extractTile<f64>(job, tile);
 }
 
-function extractColumns<T extends number>(job: usize, x0: i32, x1: i32): void {
-  const blockColumns = count(job, Word.blockColumns);
+/** Takes into account what has grown in block number `tile` since it was extracted. */
+export function settleTile32(job: usize, tile: i32): void {
+  settleTile<f32>(job, tile);
+}
+
+export function settleTile64(job: usize, tile: i32): void {
+  settleTile<f64>(job, tile);
+}
+
+function prepareExtraction<T extends number>(job: usize): void {
+  prepareNodeShares<T>(job);
+  prepareRowPolynomials<T>(job);
+  prepareMargins<T>(job);
+}
+
+function extractTile<T extends number>(job: usize, tile: i32): void {
+  const block = tile * count(job, Word.blockColumns);
+  const x0 = max(block, count(job, Word.firstColumn));
+  const x1 = min(block + count(job, Word.blockColumns), count(job, Word.endColumn));
+  const nFibre = count(job, Word.nFibre);
   const nLane = laneCount<T>();
-  for (let blockStart = x0; blockStart < x1; blockStart += blockColumns) {
-    blockProfiles<T>(job, blockStart);
-    const end = min(blockStart + blockColumns, x1);
-    for (let x = blockStart; x < end; x += nLane) {
-      interpolateProfiles<T>(job, x - blockStart);
-      extractGroup<T>(job, x, min(nLane, end - x));
-    }
+  blockProfiles<T>(job, block);
+  prepareFibreOfRow(job);
+  for (let x = x0; x < x1; x += nLane) {
+    interpolateProfiles<T>(job, x - block, 0, nFibre);
+    interpolateWings<T>(job, x - block, 0, nFibre);
+    extractGroup<T>(job, x, min(nLane, x1 - x));
   }
 }
 
@@ -54,70 +91,243 @@ function extractColumns<T extends number>(job: usize, x0: i32, x1: i32): void {
 function extractGroup<T extends number>(job: usize, x: i32, nValid: i32): void {
   const rejecting = count(job, Word.reject) != 0;
   const minRounds = count(job, Word.minRounds);
+  const nFibre = count(job, Word.nFibre);
+  const nRow = laneRows(job);
+  const margin = marginRows(job);
+  const top = nRow - margin;
   const everyLane = i32x4.splat(-1);
-  loadGroup<T>(job, x, nValid);
-  weighRows<T>(job, pointer(job, Word.light), everyLane);
-  normalEquations<T>(job);
-  solveNormal<T>(job);
-  modelLight<T>(job);
-  let unsettled = everyLane;
-  memory.fill(pointer(job, Word.lastChange), 0, (<usize>count(job, Word.nFibre)) << 4);
-  for (let round: i32 = 0; round < count(job, Word.maxRounds); round++) {
-    let marked = spread<T>(0);
-    if (rejecting) {
-      squaredExcess<T>(job);
-      marked = rejectWorst<T>(job);
+  loadGroup<T>(job, x, nValid, 0, nRow);
+  weighByData<T>(job, 0, nRow);
+  normalEquations<T>(job, 0, nFibre, 0);
+  clearCalls(job);
+  memory.fill(pointer(job, Word.fluxes), 0, (<usize>nFibre) << 4);
+  for (let round: i32 = 0; ; round++) {
+    solveNormal<T>(job, 0, nFibre);
+    takeSolution<T>(job, 0, nFibre, everyLane, round == minRounds);
+    lightAfresh<T>(job, round < minRounds || minRounds == 0);
+    if (round == minRounds) break;
+    confront<T>(job, 0, nFibre, margin, top, everyLane, rejecting, rejecting, true);
+    clearCalls(job);
+    normalEquations<T>(job, 0, nFibre, 0);
+  }
+  const maxRounds = count(job, Word.maxRounds);
+  confront<T>(job, 0, nFibre, margin, top, everyLane, rejecting, rejecting && minRounds < maxRounds, false);
+  for (let round = minRounds; round < maxRounds && takeCalls(job); round++) {
+    const more = rejecting && round + 1 < maxRounds;
+    for (let chunk: i32 = 0; chunk < chunkCount(job); chunk++) {
+      const lanes = v128.load(pointer(job, Word.activeChunks) + ((<usize>chunk) << 4));
+      if (v128.any_true(lanes)) settleChunk<T>(job, chunk, lanes, rejecting, more);
     }
-    const active = round < minRounds ? everyLane : v128.or(marked, unsettled);
-    if (!v128.any_true(active)) break;
-    unsettled = refine<T>(job, active);
   }
-  if (rejecting) {
-    squaredExcess<T>(job); // before the estimate, which puts the method's fluxes in place of the fit's
-    storeRejected<T>(job, x, nValid);
-  }
+  const lanes = (1 << nValid) - 1;
+  if (rejecting) storeRejected<T>(job, x, nValid);
+  storeFit<T>(job, x, nValid, 0, nFibre, lanes);
   storeModel<T>(job, x, nValid);
-  estimate<T>(job);
-  groupFlags<T>(job, x);
-  storeGroup<T>(job, x, nValid);
+  estimate<T>(job, 0, nFibre);
+  const raised = groupFlags<T>(job, x, 0, nFibre);
+  storeGroup<T>(job, x, nValid, 0, nFibre, lanes, raised);
 }
 
-/** Change of a flux, in units of the σ it would have alone, up to which its column has settled. */
+/** Change of a flux, in units of the σ it would have alone, up to which it has settled. */
 const settledSigma: f64 = 0.1;
 
-/** New variances from the model, and the fit again; what the fluxes changed by is kept for the lanes that moved. Returns
- * the lanes in which any fibre has not settled: all ones. */
-function refine<T extends number>(job: usize, active: v128): v128 {
-  const bytes = (<usize>count(job, Word.nFibre)) << 4;
-  const before = pointer(job, Word.covariancesBelow); // free until the estimate
-  memory.copy(before, pointer(job, Word.fluxes), bytes);
-  weighRows<T>(job, pointer(job, Word.model), active);
-  normalEquations<T>(job);
-  solveNormal<T>(job);
+/** Word.solution into Word.fluxes, in the lanes of `mask`; by how much each flux changed stays in Word.lastChange, and
+ * fibres that moved by more than a tenth of their σ are called when `call`ing. */
+function takeSolution<T extends number>(job: usize, k0: i32, k1: i32, mask: v128, call: bool): void {
+  const fluxes = pointer(job, Word.fluxes);
+  const solution = pointer(job, Word.solution);
+  const lastChange = pointer(job, Word.lastChange);
+  const rowBytes = (<usize>(count(job, Word.bandwidth) + 1)) << 4;
   const limit = spread<T>(settledSigma * settledSigma);
-  let unsettled = spread<T>(0);
-  let normal = pointer(job, Word.normal);
-  for (let at: usize = 0; at < bytes; at += 16) {
-    const lastAt = pointer(job, Word.lastChange) + at;
-    const change = v128.sub<T>(v128.load(pointer(job, Word.fluxes) + at), v128.load(before + at));
-    const last = v128.bitselect(change, v128.load(lastAt), active);
-    v128.store(lastAt, last);
-    const squared = v128.mul<T>(v128.mul<T>(last, last), v128.load(normal));
-    unsettled = v128.or(unsettled, v128.gt<T>(squared, limit));
-    normal += (<usize>(count(job, Word.bandwidth) + 1)) << 4;
+  let normal = pointer(job, Word.normal) + <usize>k0 * rowBytes;
+  for (let k = k0; k < k1; k++) {
+    const at = (<usize>k) << 4;
+    const before = v128.load(fluxes + at);
+    const fresh = v128.load(solution + at);
+    const change = v128.sub<T>(fresh, before);
+    v128.store(fluxes + at, v128.bitselect(fresh, before, mask));
+    v128.store(lastChange + at, v128.bitselect(change, v128.load(lastChange + at), mask));
+    if (call) {
+      const squared = v128.mul<T>(v128.mul<T>(change, change), v128.load(normal));
+      const moved = v128.and(mask, v128.gt<T>(squared, limit));
+      if (v128.any_true(moved)) callFibre(job, k, moved);
+    }
+    normal += rowBytes;
   }
-  modelLight<T>(job);
-  return unsettled;
 }
 
-function estimate<T extends number>(job: usize): void {
+/** All light anew from Word.fluxes; the wings' only when asked for. */
+function lightAfresh<T extends number>(job: usize, wings: bool): void {
+  const bytes = (<usize>laneRows(job)) << 4;
+  memory.fill(pointer(job, Word.model), 0, bytes);
+  if (wings) memory.fill(pointer(job, Word.wingLight), 0, bytes);
+  addLight<T>(job, 0, count(job, Word.nFibre), wings);
+}
+
+/** Another round for one chunk and its margin in `lanes`: variances, fit, light, and what that leaves. */
+function settleChunk<T extends number>(job: usize, chunk: i32, lanes: v128, rejecting: bool, mark: bool): void {
+  const nFibre = count(job, Word.nFibre);
+  const k0 = max(chunk * chunkFibres - chunkMargin(job), 0);
+  const k1 = min((chunk + 1) * chunkFibres + chunkMargin(job), nFibre);
+  settleStretch<T>(job, k0, k1, 0, nFibre, lanes);
+  const row0 = windowLaneRow(job, k0);
+  const row1 = windowLaneRow(job, k1 - 1) + windowRows(job);
+  confront<T>(job, k0, k1, row0, row1, lanes, rejecting, mark, false);
+}
+
+/** Fibres k0 … k1 − 1 anew in `lanes` while the others stand still. Of the fibres only `lowest` … `highest` − 1 are known. */
+function settleStretch<T extends number>(job: usize, k0: i32, k1: i32, lowest: i32, highest: i32, lanes: v128): void {
+  const bandwidth = count(job, Word.bandwidth);
+  const row0 = windowLaneRow(job, k0);
+  const row1 = windowLaneRow(job, k1 - 1) + windowRows(job);
+  confront<T>(job, k0, k1, row0, row1, lanes, false, false, true);
+  // Every fibre that sees one of these rows, so that the equations always belong to the variances as they are.
+  normalEquations<T>(job, max(k0 - bandwidth, lowest), min(k1 + bandwidth, highest), lowest);
+  solveNormal<T>(job, k0, k1);
+  const fluxes = pointer(job, Word.fluxes);
+  const before = pointer(job, Word.covariancesBelow); // free until the estimate
+  memory.copy(before + ((<usize>k0) << 4), fluxes + ((<usize>k0) << 4), (<usize>(k1 - k0)) << 4);
+  takeSolution<T>(job, k0, k1, lanes, true);
+  const windowBytes = (<usize>windowRows(job)) << 4;
+  for (let k = k0; k < k1; k++) {
+    const at = (<usize>k) << 4;
+    const change = v128.sub<T>(v128.load(fluxes + at), v128.load(before + at));
+    const first = windowOffset(job, k);
+    const weights = pointer(job, Word.weights) + <usize>k * windowBytes;
+    addWindowLight<T>(pointer(job, Word.model) + first, weights, windowBytes, change);
+    addWingLight<T>(job, k, first, change);
+  }
+}
+
+function estimate<T extends number>(job: usize, k0: i32, k1: i32): void {
   const method = count(job, Word.method);
   if (method == MethodCode.joint) {
-    jointCovariance<T>(job);
+    jointCovariance<T>(job, k0, k1);
     return;
   }
-  if (method == MethodCode.optimal) optimal<T>(job);
-  else boxcar<T>(job);
-  if (count(job, Word.crosstalk)) solveCrosstalk<T>(job);
-  else withoutCrosstalk<T>(job);
+  if (method == MethodCode.optimal) optimal<T>(job, k0, k1);
+  else boxcar<T>(job, k0, k1);
+  if (count(job, Word.crosstalk)) solveCrosstalk<T>(job, k0, k1);
+  else withoutCrosstalk<T>(job, k0, k1);
+}
+
+function settleTile<T extends number>(job: usize, tile: i32): void {
+  const block = tile * count(job, Word.blockColumns);
+  const x0 = max(block, count(job, Word.firstColumn));
+  const x1 = min(block + count(job, Word.blockColumns), count(job, Word.endColumn));
+  let prepared = false;
+  for (let x = x0; x < x1; x += laneCount<T>()) {
+    const nValid = min(laneCount<T>(), x1 - x);
+    if (!prepared) {
+      if (!anyGrown(job, x0, x1)) return;
+      blockProfiles<T>(job, block);
+      prepareFibreOfRow(job);
+      prepared = true;
+    }
+    if (!callGrown<T>(job, x, nValid)) continue;
+    takeCalls(job);
+    for (let chunk: i32 = 0; chunk < chunkCount(job); chunk++) {
+      const lanes = v128.load(pointer(job, Word.activeChunks) + ((<usize>chunk) << 4));
+      if (v128.any_true(lanes)) settleGrown<T>(job, x, x - block, nValid, chunk, lanes);
+    }
+  }
+}
+
+/** Whether any pixel of columns x0 … x1 − 1 went with a neighbour. */
+function anyGrown(job: usize, x0: i32, x1: i32): bool {
+  const nx = <usize>count(job, Word.nx);
+  let at = pointer(job, Word.rejected) + <usize>x0;
+  let any: i32 = 0;
+  for (let y: i32 = 0; y < count(job, Word.ny); y++) {
+    for (let x: i32 = 0; x < x1 - x0; x++) any |= <i32>load<u8>(at + <usize>x);
+    at += nx;
+  }
+  return (any & MaskBit.grown) != 0;
+}
+
+/** Calls the fibres that see a grown pixel of the group. Returns whether there is any. */
+function callGrown<T extends number>(job: usize, x: i32, nValid: i32): bool {
+  const nx = <usize>count(job, Word.nx);
+  const margin = marginRows(job);
+  const grown: u32 = 0x01010101 * MaskBit.grown;
+  let at = pointer(job, Word.rejected) + <usize>x;
+  let any = false;
+  clearCalls(job);
+  for (let y: i32 = 0; y < count(job, Word.ny); y++) {
+    const bits = loadBits<T>(at, nValid, 0) & grown;
+    at += nx;
+    if (bits == 0) continue;
+    callRow(job, margin + y, v128.not(lanesWithout<T>(bits)));
+    any = true;
+  }
+  return any;
+}
+
+/** One chunk of a group once more in `lanes`, from the fluxes that the first look left, without further rejection. */
+function settleGrown<T extends number>(job: usize, x: i32, offset: i32, nValid: i32, chunk: i32, lanes: v128): void {
+  const nFibre = count(job, Word.nFibre);
+  const reach = chunkMargin(job);
+  const k0 = max(chunk * chunkFibres - reach, 0);
+  const k1 = min((chunk + 1) * chunkFibres + reach, nFibre);
+  const from = max(k0 - count(job, Word.bandwidth), 0);
+  const to = min(k1 + count(job, Word.bandwidth), nFibre);
+  const row0 = windowLaneRow(job, from);
+  const row1 = windowLaneRow(job, to - 1) + windowRows(job);
+  openStretch<T>(job, x, offset, nValid, from, to, row0, row1);
+  confront<T>(job, from, to, row0, row1, lanes, false, false, true);
+  let unsettled = lanes;
+  for (let round: i32 = 0; round < count(job, Word.maxRounds); round++) {
+    clearCalls(job);
+    settleStretch<T>(job, k0, k1, from, to, unsettled);
+    if (round + 1 < count(job, Word.minRounds)) continue;
+    unsettled = v128.and(unsettled, calledLanes(job));
+    if (!v128.any_true(unsettled)) break;
+  }
+  confront<T>(
+    job,
+    k0,
+    k1,
+    windowLaneRow(job, k0),
+    windowLaneRow(job, k1 - 1) + windowRows(job),
+    lanes,
+    false,
+    false,
+    false,
+  );
+  const s0 = max(chunk * chunkFibres - (reach >> 1), 0);
+  const s1 = min((chunk + 1) * chunkFibres + (reach >> 1), nFibre);
+  const stored = lanesSet<T>(lanes) & ((1 << nValid) - 1);
+  storeFit<T>(job, x, nValid, s0, s1, stored);
+  estimate<T>(job, k0, k1);
+  groupFlags<T>(job, x, k0, k1);
+  storeGroup<T>(job, x, nValid, s0, s1, stored, true);
+}
+
+/** Fibres `from` … `to` − 1 of a group as the first look left them: profiles, pixels, fluxes and their light, with that of the
+ * wings that reach in. */
+function openStretch<T extends number>(
+  job: usize,
+  x: i32,
+  offset: i32,
+  nValid: i32,
+  from: i32,
+  to: i32,
+  row0: i32,
+  row1: i32,
+): void {
+  const wing = count(job, Word.wing);
+  const nWindow = windowRows(job);
+  let w0 = from;
+  let w1 = to;
+  while (w0 > 0 && windowLaneRow(job, w0 - 1) + nWindow + wing > row0) w0--;
+  while (w1 < count(job, Word.nFibre) && windowLaneRow(job, w1) - wing < row1) w1++;
+  interpolateProfiles<T>(job, offset, w0, w1);
+  interpolateWings<T>(job, offset, w0, w1);
+  loadGroup<T>(job, x, nValid, row0, row1);
+  loadFit<T>(job, x, nValid, w0, w1);
+  const first = (<usize>(windowLaneRow(job, w0) - wing)) << 4;
+  const bytes = ((<usize>(windowLaneRow(job, w1 - 1) + nWindow + wing)) << 4) - first;
+  memory.fill(pointer(job, Word.model) + first, 0, bytes);
+  memory.fill(pointer(job, Word.wingLight) + first, 0, bytes);
+  addLight<T>(job, w0, w1, true);
 }

@@ -1,35 +1,58 @@
 /** Flags of a group of columns: what happened to the pixels under each profile. Rare work, done lane by lane;
  * src/reference/flags.ts is the same for one column. */
 import { Flag, MaskBit } from "../src/reference/bits";
-import { count, pointer, Word, windowRows } from "./job";
-import { windowOffset, windowStartOf, windowWeights } from "./joint";
-import { laneAt, laneCount } from "./lanes";
+import { count, pointer, Word, windowOffset, windowRows, windowStartOf, windowWeights } from "./job";
+import { anyBitsInWindow, laneAt, laneCount, spread } from "./lanes";
 
 const noticedShare: f64 = 0.01;
 const largestLoss: f64 = 0.5;
 const unsettledSigma: f64 = 0.1;
 
-/** Fills Word.flagsOfLanes, nFibre × lanes, for the columns from `x` on. */
-export function groupFlags<T extends number>(job: usize, x: i32): void {
-  const nFibre = count(job, Word.nFibre);
+/** Fills Word.flagsOfLanes, nFibre × lanes, for fibres k0 … k1 − 1 in the columns from `x` on. Returns whether any is raised. */
+export function groupFlags<T extends number>(job: usize, x: i32, k0: i32, k1: i32): bool {
   const nLane = laneCount<T>();
+  const nWindow = windowRows(job);
+  const bits = pointer(job, Word.bits);
   const flags = pointer(job, Word.flagsOfLanes);
-  for (let k: i32 = 0; k < nFibre; k++) {
-    const masked = anyBits(job, k);
+  let raised = false;
+  for (let k = k0; k < k1; k++) {
+    const masked = anyBitsInWindow(bits + (windowOffset(job, k) >> 2), nWindow);
+    const quiet = !masked && isQuiet<T>(job, k, x);
+    raised = raised || !quiet;
     for (let lane: i32 = 0; lane < nLane; lane++) {
-      let own = fibreFlags<T>(job, k, x, lane);
+      let own: i32 = quiet ? 0 : fibreFlags<T>(job, k, x, lane);
       if (masked) own |= pixelFlags<T>(job, k, lane);
+      if (own & Flag.weightLost) own &= ~Flag.varianceUnsettled; // of a flux that is none
       store<i32>(flags + ((<usize>(k * nLane + lane)) << 2), own);
     }
   }
-  for (let k: i32 = 0; k < nFibre; k++) {
+  if (!raised) return false;
+  for (let k = k0; k < k1; k++) {
     for (let lane: i32 = 0; lane < nLane; lane++) {
-      if (saturatedAt(job, k, k - 1, nLane, lane) || saturatedAt(job, k, k + 1, nLane, lane)) {
+      if (saturatedAt(job, k, k - 1, k0, k1, nLane, lane) || saturatedAt(job, k, k + 1, k0, k1, nLane, lane)) {
         const at = flags + ((<usize>(k * nLane + lane)) << 2);
         store<i32>(at, load<i32>(at) | Flag.neighbourSaturated);
       }
     }
   }
+  return true;
+}
+
+/** Whether `fibreFlags` has nothing to say in any lane. */
+function isQuiet<T extends number>(job: usize, k: i32, x: i32): bool {
+  const seen = pointer(job, Word.seen) + ((<usize>k) << 3);
+  if (x < load<i32>(seen) || x + laneCount<T>() - 1 > load<i32>(seen, 4)) return false;
+  const at = (<usize>k) << 4;
+  const start = <f64>windowStartOf(job, k);
+  const centre = v128.load(pointer(job, Word.centre) + at);
+  const variance = v128.load(pointer(job, Word.variances) + at);
+  const change = v128.load(pointer(job, Word.lastChange) + at);
+  let fine = v128.ge<T>(centre, spread<T>(-start)); // half a pixel inside, so that no rounding matters
+  fine = v128.and(fine, v128.lt<T>(centre, spread<T>(<f64>count(job, Word.ny) - 1.0 - start)));
+  fine = v128.and(fine, v128.gt<T>(variance, spread<T>(0)));
+  const limit = v128.mul<T>(variance, spread<T>(0.9 * unsettledSigma * unsettledSigma));
+  fine = v128.and(fine, v128.le<T>(v128.mul<T>(change, change), limit));
+  return !v128.any_true(v128.not(fine));
 }
 
 function fibreFlags<T extends number>(job: usize, k: i32, x: i32, lane: i32): i32 {
@@ -69,15 +92,8 @@ function pixelFlags<T extends number>(job: usize, k: i32, lane: i32): i32 {
   return flags;
 }
 
-function anyBits(job: usize, k: i32): bool {
-  const bitsAt = pointer(job, Word.bits) + (windowOffset(job, k) >> 2);
-  let any: u32 = 0;
-  for (let i: i32 = 0; i < windowRows(job); i++) any |= load<u32>(bitsAt + ((<usize>i) << 2));
-  return any != 0;
-}
-
-function saturatedAt(job: usize, k: i32, m: i32, nLane: i32, lane: i32): bool {
-  if (m < 0 || m >= count(job, Word.nFibre)) return false;
+function saturatedAt(job: usize, k: i32, m: i32, k0: i32, k1: i32, nLane: i32, lane: i32): bool {
+  if (m < k0 || m >= k1) return false;
   if (abs(windowStartOf(job, m) - windowStartOf(job, k)) >= windowRows(job)) return false;
   return (load<i32>(pointer(job, Word.flagsOfLanes) + ((<usize>(m * nLane + lane)) << 2)) & Flag.saturated) != 0;
 }

@@ -7,8 +7,15 @@ export { checksum, toBigEndian } from "./checksum";
 export { electrons, growSaturation, turnBytes, turnFloat32 } from "./electrons";
 export { erf } from "./erf";
 export { exp } from "./exp";
-export { extractColumns32, extractColumns64, prepareExtraction32, prepareExtraction64 } from "./extract";
 export { groupMeans, groupMedians } from "./groups";
+export {
+  extractTile32,
+  extractTile64,
+  prepareExtraction32,
+  prepareExtraction64,
+  settleTile32,
+  settleTile64,
+} from "./extract";
 export { legendreFitClipped, legendreValue } from "./legendre";
 export { median } from "./median";
 export { pixelsToFloat32, pixelsToFloat64 } from "./pixels";

@@ -69,3 +69,12 @@ export function laneAt<T extends number>(ptr: usize, lane: i32): T {
 export function lanesSet<T extends number>(comparison: v128): i32 {
   return sizeof<T>() == 4 ? i32x4.bitmask(comparison) : i64x2.bitmask(comparison);
 }
+
+/** Whether any of the `n` 32-bit words from `ptr` on is not 0. */
+export function anyBitsInWindow(ptr: usize, n: i32): bool {
+  if (n < 4) return (load<u32>(ptr) | (n > 1 ? load<u32>(ptr, 4) : 0) | (n > 2 ? load<u32>(ptr, 8) : 0)) != 0;
+  const end = ((<usize>n) << 2) - 16;
+  let any = v128.load(ptr + end);
+  for (let at: usize = 0; at < end; at += 16) any = v128.or(any, v128.load(ptr + at));
+  return v128.any_true(any);
+}

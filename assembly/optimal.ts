@@ -3,9 +3,9 @@
 import { count, pointer, Word } from "./job";
 import { spread } from "./lanes";
 
-/** Fills Word.raw, Word.crosstalkBand and Word.rawCovariance; Word.raw held the right-hand side before. */
-export function optimal<T extends number>(job: usize): void {
-  const nFibre = count(job, Word.nFibre);
+/** Fills Word.raw, Word.crosstalkBand and Word.rawCovariance of fibres k0 … k1 − 1; Word.raw held the right-hand side before. */
+export function optimal<T extends number>(job: usize, k0: i32, k1: i32): void {
+  const n = <usize>(k1 - k0);
   const bandwidth = count(job, Word.bandwidth);
   const rowBytes = (<usize>(bandwidth + 1)) << 4;
   const fullBytes = (<usize>(2 * bandwidth + 1)) << 4;
@@ -13,13 +13,13 @@ export function optimal<T extends number>(job: usize): void {
   const normal = pointer(job, Word.normal);
   const crosstalk = pointer(job, Word.crosstalkBand);
   const covariance = pointer(job, Word.rawCovariance);
-  memory.fill(crosstalk, 0, <usize>nFibre * fullBytes);
-  memory.fill(covariance, 0, <usize>nFibre * rowBytes);
-  for (let k: i32 = 0; k < nFibre; k++) {
+  memory.fill(crosstalk + <usize>k0 * fullBytes, 0, n * fullBytes);
+  memory.fill(covariance + <usize>k0 * rowBytes, 0, n * rowBytes);
+  for (let k = k0; k < k1; k++) {
     const own = inverseDiagonal<T>(normal + <usize>k * rowBytes);
     const rawAt = pointer(job, Word.raw) + ((<usize>k) << 4);
     v128.store(rawAt, v128.mul<T>(v128.load(rawAt), own));
-    for (let j: i32 = 0; j <= min(k, bandwidth); j++) {
+    for (let j: i32 = 0; j <= min(k - k0, bandwidth); j++) {
       const step = (<usize>j) << 4;
       const m = v128.load(normal + <usize>k * rowBytes + step);
       const other = inverseDiagonal<T>(normal + <usize>(k - j) * rowBytes);

@@ -1,7 +1,7 @@
-/** The profile on pixels: integrated over each pixel exactly, evaluated at four nodes of a block of columns,
- * interpolated between them by a cubic in the lanes. src/reference/profile.ts says why and how well. */
+/** The profile on pixels: integrated over each pixel exactly, evaluated at a few nodes of a block of columns,
+ * interpolated between them by a polynomial in the lanes. src/reference/profile.ts says why and how well. */
 import { erf } from "./erf";
-import { count, pointer, Word, windowRows } from "./job";
+import { count, pointer, Word, windowOffset, windowRows } from "./job";
 import { loadSpread, spread } from "./lanes";
 import { legendreValue } from "./legendre";
 import { shapeWeights } from "./shape";
@@ -24,23 +24,37 @@ export function gaussianWeights64(centre: f64, sigma: f64, first: i32, n: i32, o
   gaussianWeights<f64>(centre, sigma, first, n, outPtr);
 }
 
-/** Distance of node `node` from the block's first column, columns. */
-export function nodeOffset(blockColumns: i32, node: i32): f64 {
-  const inner: f64 = blockColumns == 4 ? 0.25 : 0.3826834323650898; // cos 3π/8
-  const outer: f64 = blockColumns == 4 ? 0.75 : 0.9238795325112867; // cos π/8
-  const size = node == 0 || node == 3 ? outer : inner;
-  return <f64>(blockColumns - 1) / 2.0 + (<f64>blockColumns / 2.0) * (node < 2 ? -size : size);
+/** Nodes of a block. */
+export function nodeCount(blockColumns: i32): i32 {
+  return blockColumns == 4 ? 4 : 6;
 }
 
-/** Lagrange's cubic through the nodes, for every column of a block: Word.nodeShares, node by node. */
+/** Distance of node `node` from the block's first column, columns. */
+export function nodeOffset(blockColumns: i32, node: i32): f64 {
+  return <f64>(blockColumns - 1) / 2.0 + (<f64>blockColumns / 2.0) * nodePlace(blockColumns, node);
+}
+
+/** The same on [−1, 1] over the block. */
+function nodePlace(blockColumns: i32, node: i32): f64 {
+  const n = nodeCount(blockColumns);
+  const inward = min(node, n - 1 - node);
+  let place: f64 = 0.25881904510252074; // cos 5π/12
+  if (n == 4) place = inward == 0 ? 0.75 : 0.25;
+  else if (inward == 0)
+    place = 0.9659258262890683; // cos π/12
+  else if (inward == 1) place = 0.7071067811865476; // cos 3π/12
+  return 2 * node < n ? -place : place;
+}
+
+/** Lagrange's polynomial through the nodes, for every column of a block: Word.nodeShares, node by node. */
 export function prepareNodeShares<T extends number>(job: usize): void {
   const blockColumns = count(job, Word.blockColumns);
   let at = pointer(job, Word.nodeShares);
-  for (let own: i32 = 0; own < 4; own++) {
+  for (let own: i32 = 0; own < nodeCount(blockColumns); own++) {
     for (let column: i32 = 0; column < blockColumns; column++) {
       let share: f64 = 1.0;
       const here = nodeOffset(blockColumns, own);
-      for (let other: i32 = 0; other < 4; other++) {
+      for (let other: i32 = 0; other < nodeCount(blockColumns); other++) {
         const there = nodeOffset(blockColumns, other);
         if (other != own) share = (share * (<f64>column - there)) / (here - there);
       }
@@ -50,44 +64,88 @@ export function prepareNodeShares<T extends number>(job: usize): void {
   }
 }
 
+/** The three nodes at which wings are looked at: the first, the last before the middle, the last. */
+function wingNode(blockColumns: i32, which: i32): i32 {
+  const n = nodeCount(blockColumns);
+  return which == 0 ? 0 : which == 1 ? (n >> 1) - 1 : n - 1;
+}
+
 /** Profiles of all fibres at the nodes of the block that begins with column `x0`. */
 export function blockProfiles<T extends number>(job: usize, x0: i32): void {
   const nTrace = count(job, Word.nTrace);
   const nWidth = count(job, Word.nWidth);
   const nWindow = windowRows(job);
+  const blockColumns = count(job, Word.blockColumns);
+  const nNode = nodeCount(blockColumns);
+  const middleWing = count(job, Word.wing) > 0 ? wingNode(blockColumns, 1) : -1;
   let weightsAt = pointer(job, Word.nodeWeights);
   let centreAt = pointer(job, Word.nodeCentre);
   for (let k: i32 = 0; k < count(job, Word.nFibre); k++) {
     const trace = pointer(job, Word.trace) + ((<usize>(k * nTrace)) << 3);
     const width = pointer(job, Word.width) + ((<usize>(k * nWidth)) << 3);
     let sum: f64 = 0.0;
-    for (let node: i32 = 0; node < 4; node++) {
+    for (let node: i32 = 0; node < nNode; node++) {
       sum += legendreValue(trace, nTrace, nodeArgument(job, x0, node));
     }
-    const start = windowStart(sum / 4.0, job);
+    const start = windowStart(sum / <f64>nNode, job);
     store<i32>(pointer(job, Word.start) + ((<usize>k) << 2), start);
-    for (let node: i32 = 0; node < 4; node++) {
+    for (let node: i32 = 0; node < nNode; node++) {
       const t = nodeArgument(job, x0, node);
       const y = legendreValue(trace, nTrace, t);
       store<T>(centreAt, <T>(y - <f64>start));
-      nodeWeights<T>(job, t, y, legendreValue(width, nWidth, t), start, weightsAt);
+      const sigma = legendreValue(width, nWidth, t);
+      const outer = node == 0 || node == nNode - 1;
+      if (middleWing >= 0 && (outer || node == middleWing)) {
+        const which: i32 = node == 0 ? 0 : node == middleWing ? 1 : 2;
+        wideWeights<T>(job, k, which, t, y, sigma, start, weightsAt);
+      } else nodeWeights<T>(job, t, y, sigma, start, nWindow, weightsAt);
       centreAt += sizeof<T>();
       weightsAt += <usize>nWindow * sizeof<T>();
     }
   }
 }
 
-/** One window of one fibre under the job's profile model. */
-function nodeWeights<T extends number>(job: usize, t: f64, y: f64, width: f64, start: i32, outPtr: usize): void {
-  const shape = pointer(job, Word.shape);
+/** The window of one fibre at a node, and the wings beside it. `which`: of the three nodes for wings. */
+function wideWeights<T extends number>(
+  job: usize,
+  k: i32,
+  which: i32,
+  t: f64,
+  y: f64,
+  width: f64,
+  start: i32,
+  outPtr: usize,
+): void {
+  const wing = count(job, Word.wing);
   const nWindow = windowRows(job);
+  const wide = pointer(job, Word.wideWeights);
+  const wingBytes = <usize>wing * sizeof<T>();
+  const windowBytes = <usize>nWindow * sizeof<T>();
+  nodeWeights<T>(job, t, y, width, start - wing, nWindow + 2 * wing, wide);
+  memory.copy(outPtr, wide + wingBytes, windowBytes);
+  const wings = pointer(job, Word.wingNodes) + <usize>(3 * k + which) * 2 * wingBytes;
+  memory.copy(wings, wide, wingBytes);
+  memory.copy(wings + wingBytes, wide + wingBytes + windowBytes, wingBytes);
+}
+
+/** `n` rows from `first` on of one fibre under the job's profile model. */
+function nodeWeights<T extends number>(
+  job: usize,
+  t: f64,
+  y: f64,
+  width: f64,
+  first: i32,
+  n: i32,
+  outPtr: usize,
+): void {
+  const shape = pointer(job, Word.shape);
   if (shape == 0) {
-    gaussianWeights<T>(y, width, start, nWindow, outPtr);
+    gaussianWeights<T>(y, width, first, n, outPtr);
     return;
   }
   const ny = count(job, Word.ny);
   const across: f64 = ny > 1 ? (2.0 * y) / <f64>(ny - 1) - 1.0 : 0.0;
-  shapeWeights<T>(shape, t, across, y, width, start, nWindow, outPtr, pointer(job, Word.shapeTerms));
+  shapeWeights<T>(shape, t, across, y, width, first, n, outPtr, pointer(job, Word.shapeTerms));
 }
 
 /** Where a node lies on the series' interval [−1, 1]; a single column sits at 0. */
@@ -97,31 +155,70 @@ function nodeArgument(job: usize, x0: i32, node: i32): f64 {
   return (2.0 * (<f64>x0 + nodeOffset(count(job, Word.blockColumns), node))) / <f64>(nx - 1) - 1.0;
 }
 
-/** Weights and centres of the group of columns that begins `offset` columns into the block. */
-export function interpolateProfiles<T extends number>(job: usize, offset: i32): void {
+/** Weights and centres of fibres k0 … k1 − 1 in the group of columns that begins `offset` columns into the block, and
+ * Word.crowd on the rows that they alone light. */
+export function interpolateProfiles<T extends number>(job: usize, offset: i32, k0: i32, k1: i32): void {
   const nWindow = windowRows(job);
-  const blockBytes = <usize>count(job, Word.blockColumns) * sizeof<T>();
-  const sharesAt = pointer(job, Word.nodeShares) + <usize>offset * sizeof<T>();
-  const share0 = v128.load(sharesAt);
-  const share1 = v128.load(sharesAt + blockBytes);
-  const share2 = v128.load(sharesAt + 2 * blockBytes);
-  const share3 = v128.load(sharesAt + 3 * blockBytes);
-  let weightsAt = pointer(job, Word.weights);
-  let nodesAt = pointer(job, Word.nodeWeights);
+  const blockColumns = count(job, Word.blockColumns);
+  const shares = pointer(job, Word.nodeShares) + <usize>offset * sizeof<T>();
   const nodeBytes = <usize>nWindow * sizeof<T>();
-  const nFibre = count(job, Word.nFibre);
-  for (let k: i32 = 0; k < nFibre; k++) {
+  const nNode = nodeCount(blockColumns);
+  const crowd = pointer(job, Word.crowd);
+  const centres = pointer(job, Word.centre);
+  const nodeCentres = pointer(job, Word.nodeCentre);
+  let weightsAt = pointer(job, Word.weights) + ((<usize>(k0 * nWindow)) << 4);
+  let nodesAt = pointer(job, Word.nodeWeights) + <usize>(k0 * nNode) * nodeBytes;
+  const crowded = windowOffset(job, k1 - 1) + ((<usize>nWindow) << 4);
+  memory.fill(crowd + windowOffset(job, k0), 0, crowded - windowOffset(job, k0));
+  const stride = <usize>blockColumns * sizeof<T>();
+  const share0 = v128.load(shares);
+  const share1 = v128.load(shares + stride);
+  const share2 = v128.load(shares + 2 * stride);
+  const share3 = v128.load(shares + 3 * stride);
+  const share4 = nNode == 6 ? v128.load(shares + 4 * stride) : spread<T>(0);
+  const share5 = nNode == 6 ? v128.load(shares + 5 * stride) : spread<T>(0);
+  for (let k = k0; k < k1; k++) {
+    let rowAt = crowd + windowOffset(job, k);
     for (let i: i32 = 0; i < nWindow; i++) {
-      v128.store(weightsAt, cubic<T>(nodesAt, nodeBytes, share0, share1, share2, share3));
+      let weight = cubic<T>(nodesAt, nodeBytes, share0, share1, share2, share3);
+      if (nNode == 6) weight = further<T>(weight, nodesAt + 4 * nodeBytes, nodeBytes, share4, share5);
+      v128.store(weightsAt, weight);
+      v128.store(rowAt, v128.add<T>(v128.load(rowAt), weight));
       weightsAt += 16;
+      rowAt += 16;
       nodesAt += sizeof<T>();
     }
-    nodesAt += 3 * nodeBytes;
-    const centre = pointer(job, Word.nodeCentre) + <usize>(4 * k) * sizeof<T>();
-    v128.store(
-      pointer(job, Word.centre) + ((<usize>k) << 4),
-      cubic<T>(centre, sizeof<T>(), share0, share1, share2, share3),
-    );
+    nodesAt += <usize>(nNode - 1) * nodeBytes;
+    const at = nodeCentres + <usize>(nNode * k) * sizeof<T>();
+    let centre = cubic<T>(at, sizeof<T>(), share0, share1, share2, share3);
+    if (nNode == 6) centre = further<T>(centre, at + 4 * sizeof<T>(), sizeof<T>(), share4, share5);
+    v128.store(centres + ((<usize>k) << 4), centre);
+  }
+}
+
+/** Weights of the wings of fibres k0 … k1 − 1 in the four columns of which one is `offset` columns into the block: a
+ * parabola through three of the nodes, at the middle of the four. Smooth as wings are, that is near enough to every one. */
+export function interpolateWings<T extends number>(job: usize, offset: i32, k0: i32, k1: i32): void {
+  const wingBytes: usize = <usize>(2 * count(job, Word.wing)) * sizeof<T>();
+  if (wingBytes == 0) return;
+  const blockColumns = count(job, Word.blockColumns);
+  const here: f64 = <f64>(offset & ~3) + 1.5;
+  const a = nodeOffset(blockColumns, 0);
+  const b = nodeOffset(blockColumns, wingNode(blockColumns, 1));
+  const c = nodeOffset(blockColumns, wingNode(blockColumns, 2));
+  const shareA = spread<T>(((here - b) * (here - c)) / ((a - b) * (a - c)));
+  const shareB = spread<T>(((here - a) * (here - c)) / ((b - a) * (b - c)));
+  const shareC = spread<T>(((here - a) * (here - b)) / ((c - a) * (c - b)));
+  let out = pointer(job, Word.wingWeights) + <usize>k0 * wingBytes;
+  let nodes = pointer(job, Word.wingNodes) + <usize>k0 * 3 * wingBytes;
+  for (let k = k0; k < k1; k++) {
+    for (let at: usize = 0; at < wingBytes; at += 16) {
+      let sum = v128.mul<T>(shareA, v128.load(nodes + at));
+      sum = v128.add<T>(sum, v128.mul<T>(shareB, v128.load(nodes + wingBytes + at)));
+      v128.store(out + at, v128.add<T>(sum, v128.mul<T>(shareC, v128.load(nodes + 2 * wingBytes + at))));
+    }
+    out += wingBytes;
+    nodes += 3 * wingBytes;
   }
 }
 
@@ -140,4 +237,9 @@ function cubic<T extends number>(ptr: usize, stride: usize, s0: v128, s1: v128, 
   sum = v128.add<T>(sum, v128.mul<T>(s1, loadSpread<T>(ptr + stride)));
   sum = v128.add<T>(sum, v128.mul<T>(s2, loadSpread<T>(ptr + 2 * stride)));
   return v128.add<T>(sum, v128.mul<T>(s3, loadSpread<T>(ptr + 3 * stride)));
+}
+
+function further<T extends number>(sum: v128, ptr: usize, stride: usize, s4: v128, s5: v128): v128 {
+  const next = v128.add<T>(sum, v128.mul<T>(s4, loadSpread<T>(ptr)));
+  return v128.add<T>(next, v128.mul<T>(s5, loadSpread<T>(ptr + stride)));
 }

@@ -1,30 +1,39 @@
 /** Variance of pixels from the model of their light, in lanes; src/reference/variance.ts gives the equation. */
-import { laneRows, pointer, Word } from "./job";
+import { pointer, Word } from "./job";
 import { lanesWithout, spread } from "./lanes";
 
-/** v = fixed + max(m, 0)/r + (σ_r/r)²·m² on the row that lies `at` bytes into the lane rows; `light` includes background. */
-export function pixelVariance<T extends number>(job: usize, at: usize, light: v128): v128 {
-  const photons = v128.mul<T>(
-    v128.pmax<T>(light, spread<T>(0)),
-    v128.load(pointer(job, Word.inverseResponseRows) + at),
-  );
+/** v = fixed + max(m, 0)/r + (σ_r/r)²·m² on the row that lies `at` bytes into the lane rows; `light` includes background.
+ * `responds`: whether the pixels' response is known at all, or r = 1 without error. */
+export function pixelVariance<T extends number>(job: usize, at: usize, light: v128, responds: bool): v128 {
+  const fixed = v128.load(pointer(job, Word.fixed) + at);
+  const photons = v128.pmax<T>(light, spread<T>(0));
+  if (!responds) return v128.add<T>(fixed, photons);
   const flat = v128.mul<T>(v128.load(pointer(job, Word.responseVarianceRows) + at), v128.mul<T>(light, light));
-  return v128.add<T>(v128.add<T>(v128.load(pointer(job, Word.fixed) + at), photons), flat);
+  const seen = v128.mul<T>(photons, v128.load(pointer(job, Word.inverseResponseRows) + at));
+  return v128.add<T>(v128.add<T>(fixed, seen), flat);
 }
 
-/** Inverse variances for the light in lane rows `lightPtr` + background, 0 where a pixel is not good; lanes that `active`
- * leaves out keep what they had. */
-export function weighRows<T extends number>(job: usize, lightPtr: usize, active: v128): void {
-  const nRow = laneRows(job);
-  const ivar = pointer(job, Word.inverseVariance);
+/** Whether any image of the pixels' response is there. */
+export function knowsResponse(job: usize): bool {
+  return pointer(job, Word.inverseResponse) != 0 || pointer(job, Word.responseRelativeVariance) != 0;
+}
+
+/** Inverse variances from the data's own light on lane rows row0 … row1 − 1, 0 where a pixel is not good. */
+export function weighByData<T extends number>(job: usize, row0: i32, row1: i32): void {
+  const responds = knowsResponse(job);
+  const light = pointer(job, Word.light);
   const background = pointer(job, Word.backgroundRows);
+  const ivar = pointer(job, Word.inverseVariance);
+  const net = pointer(job, Word.net);
   const bits = pointer(job, Word.bits);
   const one = spread<T>(1);
-  for (let row: i32 = 0; row < nRow; row++) {
+  for (let row = row0; row < row1; row++) {
     const at = (<usize>row) << 4;
-    const light = v128.add<T>(v128.load(lightPtr + at), v128.load(background + at));
-    const good = lanesWithout<T>(load<u32>(bits + ((<usize>row) << 2)));
-    const fresh = v128.and(v128.div<T>(one, pixelVariance<T>(job, at, light)), good);
-    v128.store(ivar + at, v128.bitselect(fresh, v128.load(ivar + at), active));
+    const data = v128.load(light + at);
+    const all = v128.add<T>(data, v128.load(background + at));
+    const inverse = v128.div<T>(one, pixelVariance<T>(job, at, all, responds));
+    const masked = load<u32>(bits + (at >> 2));
+    v128.store(ivar + at, masked ? v128.and(inverse, lanesWithout<T>(masked)) : inverse);
+    v128.store(net + at, data);
   }
 }

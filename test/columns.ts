@@ -36,6 +36,7 @@ export function columnsInput(setup: ColumnsSetup, change: Partial<ExtractionInpu
     ny,
     nFibre,
     halfWindow: 8,
+    wing: 0,
     blockColumns: 4,
     trace: Float64Array.from(centres.flatMap((y) => [y + halfSpan, halfSpan])),
     nTrace: 2,

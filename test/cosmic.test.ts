@@ -1,6 +1,5 @@
 import { describe, expect, it } from "vitest";
 import { Flag, MaskBit } from "../src/reference/bits.js";
-import { worstOutliers } from "../src/reference/cosmic.js";
 import type { ExtractionInput } from "../src/reference/extract.js";
 import { type ColumnsSetup, columnsInput } from "./columns.js";
 import { type Result, runBoth } from "./runs.js";
@@ -123,8 +122,6 @@ describe("cosmic rays", () => {
         name,
       ).toEqual([50, 60, 63]);
     }
-    expect(worstOutliers(Float64Array.of(30, 0, 30, 26, 0, 25), 25)).toEqual([0]);
-    expect(worstOutliers(Float64Array.of(30, 0, 0, 26, 0, 31), 25)).toEqual([0, 5]);
   });
 
   it("do not save a neighbour: with the hit pixel gone, faint light beside it is right", () => {

@@ -96,6 +96,7 @@ export function makeScene(change: Partial<SceneOptions> = {}, noise = true): Sce
     ny,
     nFibre,
     halfWindow: 6,
+    wing: 0,
     blockColumns: 16,
     trace,
     nTrace: 4,

@@ -15,7 +15,7 @@ import type { Frame } from "../detector/frame.js";
 import { loadKernels } from "../kernels/module.js";
 import { MaskBit } from "../reference/bits.js";
 import type { Column } from "../reference/column.js";
-import { lightInReach } from "../reference/cosmic.js";
+import { noteReach } from "../reference/cosmic.js";
 import { pixelVariance } from "../reference/variance.js";
 import { checkGeometry } from "../tramlines/file.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
@@ -159,7 +159,7 @@ function expectColumn(
     light: fibres.slice(),
     fibres,
     variance: new Float64Array(here.nRow),
-    reach: lightInReach(here, scaled),
+    reach: lightInReach(here, fibres, scaled),
     lineSlack: squared(lightOf(here, change)),
   };
   const fluxVariance = squaredWeights(here, at(spectra.scaledVariance));
@@ -176,6 +176,14 @@ function expectColumn(
     expected.variance[row] = scale * scale * pixelVariance(there.noise, there.margin + y, own + under);
   }
   return expected;
+}
+
+/** Light nearby that a misfit of the profiles is a share of: [nRow], e⁻. */
+function lightInReach(column: Column, light: Float64Array, flux: Float64Array): Float64Array {
+  const reach = new Float64Array(column.nRow);
+  const rows: [number, number] = [column.margin, column.nRow - column.margin];
+  noteReach(column, { model: light, wings: new Float64Array(column.nRow) }, flux, [0, column.nFibre], rows, reach);
+  return reach;
 }
 
 /** Σ P_k² · variance_k on every row: e⁻². */

@@ -13,7 +13,7 @@ import { type BackgroundFit, noBackground } from "./background.js";
 import type { FrameFit } from "./modelColumn.js";
 import type { ExtractionOptions } from "./options.js";
 import { runPasses } from "./passes.js";
-import type { ExtractionPlan } from "./plan.js";
+import { type ExtractionPlan, widened } from "./plan.js";
 import { openFrame } from "./settle.js";
 import type { Spectra } from "./spectra.js";
 
@@ -64,10 +64,19 @@ export async function extractFrame(
     background,
     rejected: bench.rejected,
     nRejected,
-    fit: { input, background: background ?? noBackground(), model: bench.model },
+    fit: {
+      input: { ...input, ...windowOf(widened(plan, adapted.tramlines)) },
+      background: background ?? noBackground(),
+      rows: plan.active,
+      flux: bench.fitFlux,
+    },
     profileError,
     warnings: [...adapted.warnings, ...(background?.warnings ?? [])],
   };
+}
+
+function windowOf({ halfWindow, wing, bandwidth }: ExtractionPlan) {
+  return { halfWindow, wing, bandwidth };
 }
 
 /** The same frame with known hits in its mask, so that every step that looks at the frame passes them over.

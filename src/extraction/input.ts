@@ -22,6 +22,7 @@ export function extractionInput(
     ny: frame.ny,
     nFibre: active.length,
     halfWindow: plan.halfWindow,
+    wing: plan.wing,
     blockColumns: plan.blockColumns,
     trace: pickRows(tramlines.legendre, degree + 1, active),
     nTrace: degree + 1,

@@ -4,25 +4,32 @@
 import type { Column } from "../reference/column.js";
 import { backgroundSeries, type ExtractionInput, emptyColumn, type SmoothBackground } from "../reference/extract.js";
 import { legendreArgument, legendreBasis } from "../reference/legendre.js";
-import { type BlockProfiles, blockProfiles, nodeShares } from "../reference/profile.js";
+import { type BlockProfiles, blockProfiles } from "../reference/profile.js";
 import { pixelVariance } from "../reference/variance.js";
 
-/** An extraction's fit of its frame. */
+/** An extraction's fit of its frame; `input` has each profile in one window as wide as it is known. */
 export interface FrameFit {
   input: ExtractionInput;
   background: SmoothBackground;
-  /** ny × nx, e⁻: light of all fibres, without background. */
-  model: Float32Array;
+  /** Row of `flux` for each fibre of the input. */
+  rows: number[];
+  /** nSlit × nx, e⁻ per dispersion pixel: of the joint fit. */
+  flux: Float32Array | Float64Array;
 }
 
 /** Column x on demand; neighbouring columns share the work of their block. */
 export type ColumnSource = (x: number) => Column;
 
-export function modelColumns({ input, background, model }: FrameFit): ColumnSource {
+export function modelColumns({ input, background, rows, flux }: FrameFit): ColumnSource {
   const profiles = profileColumns(input, background);
   return (x) => {
     const column = profiles(x);
-    for (let y = 0; y < input.ny; y++) column.light[column.margin + y] = model[y * input.nx + x];
+    column.light.set(
+      lightOf(
+        column,
+        rows.map((row) => flux[row * input.nx + x]),
+      ),
+    );
     weighByModel(column, column.light);
     return column;
   };
@@ -35,7 +42,7 @@ export function profileColumns(input: ExtractionInput, background: SmoothBackgro
   return (x) => {
     const first = x - (x % input.blockColumns);
     if (block === null || first !== loaded) [loaded, block] = [first, blockProfiles(input, first)];
-    const column = emptyColumn(input, block, nodeShares(input.blockColumns, x - first));
+    const column = emptyColumn(input, block, x - first);
     loadNoise(input, column, x);
     const series = backgroundSeries(background, legendreArgument(x, input.nx));
     for (let y = 0; y < input.ny; y++) column.background[column.margin + y] = dot(series, inY[y]);

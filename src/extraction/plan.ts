@@ -1,12 +1,14 @@
 /** What an extraction needs to know of the tramlines before it starts: window, bandwidth, width of a block. */
 import { legendreArgument, legendreValue } from "../reference/legendre.js";
-import { type BlockColumns, largestMovementPixels } from "../reference/profile.js";
+import { type BlockColumns, largestMovement } from "../reference/profile.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 
-/** A Gaussian's light beyond this many σ is less than 6e-7 of it. */
-const windowSigma = 5;
-/** A profile with wings: further out they are taken for background. */
-const shapeWindowSigma = 13;
+/** Light within this many σ is weighed. Of a Gaussian 2e-6 of it lie further out, and are neglected. */
+const windowSigma = 4.75;
+/** The same for a profile with wings, whose light further out is known and taken off. */
+const coreSigma = 4.25;
+/** How far out: beyond, the wings are taken for background. */
+const wingSigma = 13;
 /** Columns at which the tramlines are looked at for the plan; between them they are smooth. */
 const nSample = 65;
 
@@ -14,6 +16,8 @@ export interface ExtractionPlan {
   /** Fibres that take part (not dead), as indices into the tramlines, low y first. */
   active: number[];
   halfWindow: number;
+  /** Rows to either side of the window on which the light of the wings is known; a multiple of 4. */
+  wing: number;
   bandwidth: number;
   blockColumns: BlockColumns;
   /** Smallest distance between neighbouring active fibres anywhere, pixels. */
@@ -26,8 +30,6 @@ export function planExtraction(tramlines: Tramlines, leastReach = 0): Extraction
   const active = tramlines.state.flatMap((state, k) => (state === "dead" ? [] : [k]));
   if (active.length === 0) throw new RangeError("The tramlines hold no lit fibre; there is nothing to extract.");
   const centres = sampledCentres(tramlines, active);
-  const reach = tramlines.profile.kind === "gaussian" ? windowSigma : shapeWindowSigma;
-  const halfWindow = Math.ceil(Math.max(reach * widestSigma(tramlines, active), leastReach) + 0.5);
   const step = (tramlines.nx - 1) / (nSample - 1);
   let steepest = 0;
   let smallestPitch = Number.POSITIVE_INFINITY;
@@ -37,13 +39,28 @@ export function planExtraction(tramlines: Tramlines, leastReach = 0): Extraction
   });
   if (!(smallestPitch > 0))
     throw new RangeError("Two tramlines cross; the fibres' order along y must be that of the slit.");
+  const { narrowest, widest } = sigmaRange(tramlines, active);
+  const blockColumns = blockOf(steepest, narrowest);
+  const strays = (blockColumns * steepest) / 2;
+  const gaussian = tramlines.profile.kind === "gaussian";
+  const core = Math.ceil((gaussian ? windowSigma : coreSigma) * widest + strays);
+  const halfWindow = Math.max(core, Math.ceil(leastReach + 0.5), 2);
+  const wing = gaussian ? 0 : 4 * Math.ceil(Math.max(wingSigma * widest - halfWindow, 0) / 4);
   return {
     active,
     halfWindow,
+    wing,
     bandwidth: furthestOverlap(centres, 2 * halfWindow + 2),
-    blockColumns: ([16, 8] as const).find((columns) => columns * steepest <= largestMovementPixels) ?? 4,
+    blockColumns,
     smallestPitch,
   };
+}
+
+/** The plan with each profile in one window as wide as it is known: for columns looked at one by one, where time is no matter. */
+export function widened(plan: ExtractionPlan, tramlines: Tramlines): ExtractionPlan {
+  const halfWindow = plan.halfWindow + plan.wing;
+  const bandwidth = furthestOverlap(sampledCentres(tramlines, plan.active), 2 * halfWindow + 2);
+  return { ...plan, halfWindow, wing: 0, bandwidth };
 }
 
 /** y of each fibre at nSample columns. */
@@ -56,16 +73,24 @@ function sampledCentres(tramlines: Tramlines, fibres: number[]): Float64Array[] 
   );
 }
 
-function widestSigma(tramlines: Tramlines, fibres: number[]): number {
+/** Smallest and largest σ of the fibres, pixels. */
+function sigmaRange(tramlines: Tramlines, fibres: number[]): { narrowest: number; widest: number } {
   const { sigma, widthDegree } = tramlines.profile;
-  let widest = 0;
+  let [narrowest, widest] = [Number.POSITIVE_INFINITY, 0];
   for (const k of fibres) {
     for (const x of [0, (tramlines.nx - 1) / 2, tramlines.nx - 1]) {
       const t = legendreArgument(x, tramlines.nx);
-      widest = Math.max(widest, legendreValue(sigma, t, k * (widthDegree + 1), widthDegree + 1));
+      const here = legendreValue(sigma, t, k * (widthDegree + 1), widthDegree + 1);
+      narrowest = Math.min(narrowest, here);
+      widest = Math.max(widest, here);
     }
   }
-  return widest;
+  return { narrowest, widest };
+}
+
+/** The most columns over which interpolated profiles are good enough. `steepest`: pixels that a line climbs in a column. */
+function blockOf(steepest: number, sigma: number): BlockColumns {
+  return ([64, 32, 16, 8] as const).find((n) => n * steepest <= largestMovement(sigma)) ?? 4;
 }
 
 /** How many fibres further the last one stands whose window can still meet a fibre's own. */

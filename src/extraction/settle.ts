@@ -71,6 +71,7 @@ function settleProfileError(bench: ExtractionBench, input: ExtractionInput): num
 function lightBetweenFibres(bench: ExtractionBench, input: ExtractionInput, sampleStep: number): Float32Array {
   const { nx, ny, electrons } = input;
   const light = new Float32Array(nx * ny).fill(Number.NaN);
+  bench.keepModel(true);
   bench.rejected.fill(0);
   for (let x0 = 0; x0 < nx; x0 += sampleStep * cellColumns) {
     const x1 = Math.min(x0 + cellColumns, nx);
@@ -81,6 +82,7 @@ function lightBetweenFibres(bench: ExtractionBench, input: ExtractionInput, samp
       }
     }
   }
+  bench.keepModel(false);
   bench.rejected.fill(0);
   return light;
 }

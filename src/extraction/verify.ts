@@ -3,7 +3,13 @@ import type { Frame } from "../detector/frame.js";
 import { ExtractionBench } from "../kernels/extraction.js";
 import { type Kernels, loadKernels } from "../kernels/module.js";
 import { MaskBit } from "../reference/bits.js";
-import { type ExtractionInput, type ExtractionOutput, extractColumns, type Method } from "../reference/extract.js";
+import {
+  type ExtractionInput,
+  type ExtractionOutput,
+  extractColumns,
+  type Method,
+  settleGrownColumns,
+} from "../reference/extract.js";
 import { blockProfiles } from "../reference/profile.js";
 import { checkGeometry } from "../tramlines/file.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
@@ -102,7 +108,7 @@ function runReference(input: ExtractionInput, onProgress: (share: number) => voi
   const runner: ColumnRunner = {
     rejected,
     run: (x0, x1) => extractColumns(current, output, x0, x1),
-    setRejection: (kappa, growKappa) => Object.assign(current, { kappa, growKappa }),
+    settleGrown: (x0, x1) => settleGrownColumns(current, output, x0, x1),
   };
   runPasses(runner, input, onProgress);
   return { output, rejected };

@@ -55,8 +55,10 @@ export interface KernelExports {
   /** assembly/extract.ts */
   prepareExtraction32(jobPtr: number): void;
   prepareExtraction64(jobPtr: number): void;
-  extractColumns32(jobPtr: number, x0: number, x1: number): void;
-  extractColumns64(jobPtr: number, x0: number, x1: number): void;
+  extractTile32(jobPtr: number, tile: number): void;
+  extractTile64(jobPtr: number, tile: number): void;
+  settleTile32(jobPtr: number, tile: number): void;
+  settleTile64(jobPtr: number, tile: number): void;
 
   /** assembly/rankUpdate.ts */
   rankUpdate(gPtr: number, nRow: number, nBlock: number, sign: number, outPtr: number, filledPtr: number): void;

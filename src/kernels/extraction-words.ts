@@ -5,12 +5,14 @@
  *     Word.numbers → | Numbers.profileError | … |                  8 bytes each
  *
  * Pointers are byte offsets into the memory; 0 means absent. T is the lanes' type, f32 or f64; a lane row is one v128
- * a detector row, `ny + 2·margin` of them, margin = 2·halfWindow + 1. */
+ * a detector row, `ny + 2·margin` of them, margin = window + wing + 2. What is scratch belongs to one thread: each has a
+ * block of words of its own, alike but for those pointers. */
 export enum Word {
   nx,
   ny,
   nFibre,
   halfWindow,
+  wing, // rows to either side of the window that the far wing reaches; a multiple of 4
   bandwidth,
   blockColumns,
   nTrace,
@@ -22,6 +24,8 @@ export enum Word {
   reject,
   minRounds,
   maxRounds,
+  firstColumn, // columns before this one are left alone; a multiple of 4
+  endColumn, // columns from here on too
 
   // the frame: ny × nx
   electrons, // f32
@@ -48,31 +52,44 @@ export enum Word {
   flags, // i32
   chi2, // T
   backgroundUnder, // T
+  fitFlux, // T, of the joint fit whatever the method
   modelImage, // f32, ny × nx, or absent: light of all fibres, without background
 
-  // scratch of one worker
+  // scratch of one thread
   start, // i32, nFibre
   shapeTerms, // f64, 7
-  nodeCentre, // T, nFibre × 4
-  nodeWeights, // T, nFibre × 4 × nWindow
-  nodeShares, // T, 4 × blockColumns
+  nodeCentre, // T, nFibre × nNode
+  nodeWeights, // T, nFibre × nNode × nWindow
+  wideWeights, // T, nWindow + 2·wing
+  wingNodes, // T, nFibre × 3 × 2·wing: below the window, then above it
+  wingWeights, // T, nFibre × 2·wing
+  fibreOfRow, // i32, a lane row: the first fibre whose window ends above it
+  nodeShares, // T, nNode × blockColumns
   rowPolynomials, // T, ny × nY
   backgroundSeries, // f64, nY × lanes
   bits, // u32, a byte a lane
+  suspects, // u32, a byte a lane
+  candidates, // i32, a lane row
+  activeChunks, // v128, nChunk
+  nextChunks, // v128, nChunk
   light, // lane rows from here on
   backgroundRows,
   fixed,
   inverseResponseRows,
   responseVarianceRows,
   inverseVariance,
-  model,
+  model, // of the windows
+  wingLight, // of the far wings
+  net, // light − wingLight
   reach,
-  excess,
+  crowd, // Σ of all weights on the row
+  chiSquare, // excess² · inverse variance
   weights, // v128, nFibre × nWindow
   aperture, // v128, nFibre × nWindow
   weighted, // v128, nWindow
   centre, // v128, nFibre, and so on:
   fluxes,
+  solution,
   lastChange,
   variances,
   covariancesBelow,

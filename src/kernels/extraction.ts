@@ -1,16 +1,20 @@
 /** Door to assembly/extract.ts: lays out one extraction's memory, runs stretches of columns, shows the spectra. */
 
 import { MaskBit } from "../reference/bits.js";
+import { chunkFibres } from "../reference/chunks.js";
 import type { ExtractionInput, ExtractionOutput, SmoothBackground } from "../reference/extract.js";
+import { blockNodes } from "../reference/profile.js";
 import type { ShapeTable } from "../reference/shape.js";
 import type { Precision } from "./banded.js";
+import type { TileKernel } from "./exports.js";
 import { MethodCode, Numbers, Word } from "./extraction-words.js";
 import type { Kernels, Workbench } from "./module.js";
 
 type Piece = Float32Array | Float64Array | Int32Array | Uint8Array;
+type PieceType = "lanes" | "float32" | "float64" | "int32" | "uint8";
 
 /** How many numbers of which type each piece of the memory holds; `lanes` are numbers of the lanes' type. */
-type Plan = [word: Word, type: "lanes" | "float32" | "float64" | "int32" | "uint8", length: number][];
+type Plan = [word: Word, type: PieceType, length: number][];
 
 /** Rows of the frame, nLane numbers each; the first nColumn lanes hold columns. */
 export interface GroupRows {
@@ -32,10 +36,13 @@ export class ExtractionBench {
   readonly output: ExtractionOutput;
   /** ny × nx, bits of MaskBit: what was rejected so far. */
   readonly rejected: Uint8Array;
-  /** ny × nx, e⁻: light of all fibres in the columns that were extracted, without background. */
+  /** ny × nx, e⁻: light of all fibres in the columns that were extracted after `keepModel`, without background. */
   readonly model: Float32Array;
+  /** nSlit × nx, e⁻ per dispersion pixel: of the joint fit, whatever the method. */
+  readonly fitFlux: Float32Array | Float64Array;
   private readonly bench: Workbench;
-  private readonly job: Int32Array;
+  /** A block of words for each thread. */
+  private readonly jobs: Int32Array[];
   private readonly numbers: Float64Array;
   private readonly background: Float64Array;
   private readonly pieces = new Map<Word, Piece>();
@@ -50,46 +57,77 @@ export class ExtractionBench {
     private readonly precision: Precision,
   ) {
     checkInput(input, outputRow, nSlit);
-    const plan = memoryPlan(input, nSlit, precision === "f32" ? 4 : 2);
-    const laneBytes = precision === "f32" ? 4 : 8;
-    const bytes = { lanes: laneBytes, float32: 4, float64: 8, int32: 4, uint8: 1 };
-    const total = plan.reduce((sum, [, type, length]) => sum + bytes[type] * length, 4 * Word.count);
-    this.bench = kernels.workbench(total, plan.length + 1);
-    this.job = this.bench.int32(Word.count);
+    const nLane = precision === "f32" ? 4 : 2;
+    const [shared, scratch] = [sharedPlan(input, nSlit), scratchPlan(input, nLane)];
+    const nThread = kernels.nThread;
+    const nBytes = planBytes(shared, precision) + nThread * (planBytes(scratch, precision) + 4 * Word.count);
+    this.bench = kernels.workbench(nBytes, shared.length + nThread * (scratch.length + 1));
     const { pieces } = this;
-    for (const [word, type, length] of plan) {
-      const piece = this.bench[type === "lanes" ? (precision === "f32" ? "float32" : "float64") : type](length);
-      pieces.set(word, piece);
-      this.job[word] = piece.byteOffset;
-    }
+    this.reserve(shared, pieces);
+    this.jobs = Array.from({ length: nThread }, (_, thread) => {
+      const own: Map<Word, Piece> = thread === 0 ? pieces : new Map();
+      this.reserve(scratch, own);
+      const job = this.bench.int32(Word.count);
+      for (const [word, piece] of [...pieces, ...own]) job[word] = piece.byteOffset;
+      return job;
+    });
     this.numbers = pieces.get(Word.numbers) as Float64Array;
     this.background = pieces.get(Word.background) as Float64Array;
     this.rejected = pieces.get(Word.rejected) as Uint8Array;
     this.model = pieces.get(Word.modelImage) as Float32Array;
+    this.fitFlux = pieces.get(Word.fitFlux) as Float32Array | Float64Array;
+    this.keepModel(false);
     this.output = viewOutput(pieces);
     this.copyIn(outputRow);
     const prepare = precision === "f32" ? this.bench.call.prepareExtraction32 : this.bench.call.prepareExtraction64;
-    prepare(this.job.byteOffset);
+    for (const job of this.jobs) prepare(job.byteOffset);
   }
 
-  /** Extracts columns x0 … x1 − 1; x0 must begin a block of columns. */
+  private reserve(plan: Plan, pieces: Map<Word, Piece>): void {
+    for (const [word, type, length] of plan) pieces.set(word, this.bench[pieceType(type, this.precision)](length));
+  }
+
+  /** Extracts columns x0 … x1 − 1; x0 must be a multiple of four. */
   run(x0 = 0, x1 = this.input.nx): void {
-    if (x0 % this.input.blockColumns !== 0) {
-      throw new RangeError(`Column ${x0} begins no block of ${this.input.blockColumns} columns.`);
+    this.share(this.precision === "f32" ? "extractTile32" : "extractTile64", x0, x1);
+  }
+
+  /** Takes into account, in the columns x0 … x1 − 1 that were extracted before, what has grown in `rejected` since; x0 must be
+   * a multiple of four. Nothing more is rejected. */
+  settleGrown(x0 = 0, x1 = this.input.nx): void {
+    this.share(this.precision === "f32" ? "settleTile32" : "settleTile64", x0, x1);
+  }
+
+  private share(kernel: TileKernel, x0: number, x1: number): void {
+    const { nx, blockColumns } = this.input;
+    if (x0 % 4 !== 0) throw new RangeError(`Column ${x0} begins no group of four columns.`);
+    if (!(x0 >= 0 && x1 <= nx)) {
+      throw new RangeError(`Columns ${x0} … ${x1 - 1} asked for, but the frame has 0 … ${nx - 1}.`);
     }
-    if (!(x0 >= 0 && x1 <= this.input.nx)) {
-      throw new RangeError(`Columns ${x0} … ${x1 - 1} asked for, but the frame has 0 … ${this.input.nx - 1}.`);
+    for (const job of this.jobs) {
+      job[Word.firstColumn] = x0;
+      job[Word.endColumn] = x1;
     }
-    const extract = this.precision === "f32" ? this.bench.call.extractColumns32 : this.bench.call.extractColumns64;
-    extract(this.job.byteOffset, x0, x1);
+    const [first, end] = [Math.floor(x0 / blockColumns), Math.ceil(x1 / blockColumns)];
+    this.bench.share(
+      kernel,
+      this.jobs.map((job) => job.byteOffset),
+      end - first,
+      first,
+    );
   }
 
   /** Rejection from here on: κ and the lower limit of suspects; κ = 0 takes what is rejected as it stands. */
   setRejection(kappa: number, growKappa: number): void {
-    this.job[Word.reject] = kappa > 0 ? 1 : 0;
+    for (const job of this.jobs) job[Word.reject] = kappa > 0 ? 1 : 0;
     // A κ whose square overflows rejects nothing.
     this.numbers[Numbers.kappaSquared] = kappa * kappa;
     this.numbers[Numbers.growKappaSquared] = growKappa * growKappa;
+  }
+
+  /** Whether `model` is written from here on. Memory for it is touched only then. */
+  keepModel(keep: boolean): void {
+    for (const job of this.jobs) job[Word.modelImage] = keep ? this.model.byteOffset : 0;
   }
 
   /** ε from here on: share of the light nearby by which data may miss the model before noise. */
@@ -98,27 +136,28 @@ export class ExtractionBench {
   }
 
   /** How one group of columns looks once its variances have settled, without any rejection: the lanes of the columns
-   * from `x0` on, which must begin a block. Writes the group's spectra too. */
+   * from `x0` on, a multiple of four. Writes the group's spectra too. */
   inspect(x0: number): GroupRows {
     this.setRejection(Number.MAX_VALUE, Number.MAX_VALUE);
     const nLane = this.precision === "f32" ? 4 : 2;
     const x1 = Math.min(x0 + nLane, this.input.nx);
     this.run(x0, x1);
     this.setRejection(this.input.kappa, this.input.growKappa);
-    const margin = 2 * this.input.halfWindow + 1;
+    const margin = marginRows(this.input);
     const rows = (word: Word) =>
       this.pieces.get(word)!.slice(margin * nLane, (margin + this.input.ny) * nLane) as Float32Array | Float64Array;
+    const [model, wings] = [rows(Word.model), rows(Word.wingLight)];
     return {
       nLane,
       nColumn: x1 - x0,
       light: rows(Word.light),
-      model: rows(Word.model),
+      model: model.map((light, i) => light + wings[i]),
       reach: rows(Word.reach),
       inverseVariance: rows(Word.inverseVariance),
     };
   }
 
-  /** Weights of all fibres at the four nodes of the block that begins with `x0`: [nFibre × 4 × nWindow]. Extracts the
+  /** Weights of all fibres at the nodes of the block that begins with `x0`: [nFibre × nNode × nWindow]. Extracts the
    * block on the way. */
   nodeWeights(x0: number): Float32Array | Float64Array {
     this.run(x0, Math.min(x0 + this.input.blockColumns, this.input.nx));
@@ -138,13 +177,14 @@ export class ExtractionBench {
   }
 
   private copyIn(outputRow: Int32Array): void {
-    const { input, job, numbers, pieces } = this;
+    const { input, numbers, pieces } = this;
     const { noise, background } = input;
     const counts: [Word, number][] = [
       [Word.nx, input.nx],
       [Word.ny, input.ny],
       [Word.nFibre, input.nFibre],
       [Word.halfWindow, input.halfWindow],
+      [Word.wing, input.wing],
       [Word.bandwidth, input.bandwidth],
       [Word.blockColumns, input.blockColumns],
       [Word.nTrace, input.nTrace],
@@ -156,7 +196,7 @@ export class ExtractionBench {
       [Word.minRounds, input.minRounds],
       [Word.maxRounds, input.maxRounds],
     ];
-    for (const [word, value] of counts) job[word] = value;
+    for (const job of this.jobs) for (const [word, value] of counts) job[word] = value;
     const arrays: [Word, ArrayLike<number> | undefined][] = [
       [Word.electrons, input.electrons],
       [Word.mask, input.mask],
@@ -194,41 +234,16 @@ function packShape(shape: ShapeTable): Float64Array {
   return Float64Array.of(start, step, n, referenceWidth, ...centroid, ...values);
 }
 
-function memoryPlan(input: ExtractionInput, nSlit: number, nLane: number): Plan {
-  const { nx, ny, nFibre, bandwidth, noise, background } = input;
-  const nWindow = 2 * input.halfWindow + 1;
+/** Lane rows before the frame's first one, as assembly/job.ts counts them. */
+function marginRows({ halfWindow, wing }: ExtractionInput): number {
+  return 2 * halfWindow + 1 + wing + 2;
+}
+
+/** What all threads read, and the images that they write. */
+function sharedPlan(input: ExtractionInput, nSlit: number): Plan {
+  const { nx, ny, nFibre, noise, background } = input;
   const nPixel = nx * ny;
-  const nRow = ny + 2 * nWindow;
-  const laneRows = [
-    Word.light,
-    Word.backgroundRows,
-    Word.fixed,
-    Word.inverseResponseRows,
-    Word.responseVarianceRows,
-    Word.inverseVariance,
-    Word.model,
-    Word.reach,
-    Word.excess,
-  ];
-  const perFibre: [Word, number][] = [
-    [Word.weights, nWindow],
-    [Word.aperture, nWindow],
-    [Word.centre, 1],
-    [Word.fluxes, 1],
-    [Word.lastChange, 1],
-    [Word.variances, 1],
-    [Word.covariancesBelow, 1],
-    [Word.raw, 1],
-    [Word.band, bandwidth + 1],
-    [Word.normal, bandwidth + 1],
-    [Word.inverse, bandwidth + 1],
-    [Word.rawCovariance, bandwidth + 1],
-    [Word.crosstalkBand, 2 * bandwidth + 1],
-    [Word.system, 2 * (2 * bandwidth + 2)],
-    [Word.systemInverse, 2 * (2 * bandwidth + 2)],
-    [Word.systemRhs, 2],
-  ];
-  const images = [Word.flux, Word.variance, Word.neighbourCovariance, Word.chi2, Word.backgroundUnder];
+  const images = [Word.flux, Word.variance, Word.neighbourCovariance, Word.chi2, Word.backgroundUnder, Word.fitFlux];
   return [
     [Word.electrons, "float32", nPixel],
     [Word.mask, "uint8", nPixel],
@@ -243,24 +258,86 @@ function memoryPlan(input: ExtractionInput, nSlit: number, nLane: number): Plan 
     [Word.seen, "int32", 2 * nFibre],
     [Word.outputRow, "int32", nFibre],
     ...(input.shape ? [[Word.shape, "float64", 11 + input.shape.values.length] as Plan[number]] : []),
-    [Word.shapeTerms, "float64", 7],
     [Word.background, "float64", background.coefficients.length],
     ...images.map((word): Plan[number] => [word, "lanes", nSlit * nx]),
     [Word.flags, "int32", nSlit * nx],
     [Word.modelImage, "float32", nPixel],
+    [Word.numbers, "float64", Numbers.count],
+  ];
+}
+
+/** What each thread has for itself. */
+function scratchPlan(input: ExtractionInput, nLane: number): Plan {
+  const { ny, nFibre, bandwidth, background, wing } = input;
+  const nWindow = 2 * input.halfWindow + 1;
+  const nRow = ny + 2 * marginRows(input);
+  const nChunk = Math.ceil(nFibre / chunkFibres);
+  const nNode = blockNodes(input.blockColumns).length;
+  const laneRows = [
+    Word.light,
+    Word.backgroundRows,
+    Word.fixed,
+    Word.inverseResponseRows,
+    Word.responseVarianceRows,
+    Word.inverseVariance,
+    Word.model,
+    Word.wingLight,
+    Word.net,
+    Word.reach,
+    Word.crowd,
+    Word.chiSquare,
+  ];
+  const perFibre: [Word, number][] = [
+    [Word.weights, nWindow],
+    [Word.aperture, nWindow],
+    [Word.centre, 1],
+    [Word.fluxes, 1],
+    [Word.solution, 1],
+    [Word.lastChange, 1],
+    [Word.variances, 1],
+    [Word.covariancesBelow, 1],
+    [Word.raw, 1],
+    [Word.band, bandwidth + 1],
+    [Word.normal, bandwidth + 1],
+    [Word.inverse, bandwidth + 1],
+    [Word.rawCovariance, bandwidth + 1],
+    [Word.crosstalkBand, 2 * bandwidth + 1],
+    [Word.system, 2 * (2 * bandwidth + 2)],
+    [Word.systemInverse, 2 * (2 * bandwidth + 2)],
+    [Word.systemRhs, 2],
+  ];
+  return [
     [Word.start, "int32", nFibre],
-    [Word.nodeCentre, "lanes", 4 * nFibre],
-    [Word.nodeWeights, "lanes", 4 * nFibre * nWindow],
-    [Word.nodeShares, "lanes", 4 * input.blockColumns],
+    [Word.shapeTerms, "float64", 7],
+    [Word.nodeCentre, "lanes", nNode * nFibre],
+    [Word.nodeWeights, "lanes", nNode * nFibre * nWindow],
+    [Word.wideWeights, "lanes", nWindow + 2 * wing],
+    [Word.wingNodes, "lanes", 6 * nFibre * wing],
+    [Word.wingWeights, "lanes", 2 * nFibre * wing],
+    [Word.fibreOfRow, "int32", nRow],
+    [Word.nodeShares, "lanes", nNode * input.blockColumns],
     [Word.rowPolynomials, "lanes", ny * background.nY],
     [Word.backgroundSeries, "float64", 2 * background.nY + background.nX],
     [Word.bits, "int32", nRow],
+    [Word.suspects, "int32", nRow],
+    [Word.candidates, "int32", 2 * nRow],
+    [Word.activeChunks, "float64", 2 * nChunk],
+    [Word.nextChunks, "float64", 2 * nChunk],
     ...laneRows.map((word): Plan[number] => [word, "lanes", nRow * nLane]),
     [Word.weighted, "lanes", nWindow * nLane],
     ...perFibre.map(([word, n]): Plan[number] => [word, "lanes", nFibre * n * nLane]),
     [Word.flagsOfLanes, "int32", nFibre * nLane],
-    [Word.numbers, "float64", Numbers.count],
   ];
+}
+
+function pieceType(type: PieceType, precision: Precision) {
+  if (type !== "lanes") return type;
+  return precision === "f32" ? "float32" : "float64";
+}
+
+function planBytes(plan: Plan, precision: Precision): number {
+  const bytes = { float32: 4, float64: 8, int32: 4, uint8: 1 };
+  return plan.reduce((sum, [, type, length]) => sum + bytes[pieceType(type, precision)] * length, 0);
 }
 
 function optional(word: Word, image: Float32Array | undefined): Plan {

@@ -12,6 +12,8 @@ const ALIGN_BYTES = 64;
 
 /** The compiled kernels. Cheap to keep; hold a Workbench only as long as its job lasts. */
 export class Kernels {
+  /** Threads of every workbench. */
+  readonly nThread = 1;
   private readonly heapBase: number;
 
   constructor(private readonly module: WebAssembly.Module) {
@@ -43,11 +45,11 @@ export class Workbench {
     this.next = heapBase;
   }
 
-  /** Runs `kernel(job, tile)` for every tile from 0 to `nTile` − 1, each once and in no certain order, and returns when
+  /** Runs `kernel(job, tile)` for `nTile` tiles from number `first` on, each once and in no certain order, and returns when
    * all are done. `jobs`: a pointer for each of the `nThread` threads, each with scratch of its own; tiles write to places
    * of their own, so that the outcome does not depend on who ran which. */
-  share(kernel: TileKernel, jobs: readonly number[], nTile: number): void {
-    for (let tile = 0; tile < nTile; tile++) this.call[kernel](jobs[0], tile);
+  share(kernel: TileKernel, jobs: readonly number[], nTile: number, first = 0): void {
+    for (let tile = first; tile < first + nTile; tile++) this.call[kernel](jobs[0], tile);
   }
 
   float32(n: number): Float32Array<ArrayBuffer> {

@@ -17,7 +17,7 @@ export function boxcar(column: Column, halfAperture: number): RawEstimate {
       for (let row = from; row < to; row++) {
         const inside = weightAt(column, aperture, k, row);
         crosstalk[k * full + m - k + bandwidth] += inside * weightAt(column, weights, m, row);
-        if (m === k) raw[k] += inside * column.light[row];
+        if (m === k) raw[k] += inside * column.net[row];
         if (m <= k && column.inverseVariance[row] > 0) {
           const both = inside * weightAt(column, aperture, m, row);
           covariance[k * (bandwidth + 1) + k - m] += both / column.inverseVariance[row];

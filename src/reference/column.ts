@@ -14,6 +14,10 @@ export interface Column {
   start: Int32Array;
   /** nFibre × nWindow: weights of the profiles, unit sum over the whole profile. */
   weights: Float64Array;
+  /** Rows to either side of a window on which the wings' light is known. */
+  wing: number;
+  /** nFibre × 2·wing: weights below the window, then above it. */
+  wings: Float64Array;
   /** nFibre: centres, counted from `start`, pixels. */
   centre: Float64Array;
   /** nRow, e⁻: data with the background taken off. */
@@ -25,6 +29,13 @@ export interface Column {
   bits: Uint8Array;
   /** nRow, e⁻⁻²: 0 where not good. */
   inverseVariance: Float64Array;
+  /** nRow, e⁻: light less that of the wings, as the fit sees it. */
+  net: Float64Array;
+}
+
+/** First row of fibre k's window, counted as `light` is. */
+export function windowFirst(column: Column, k: number): number {
+  return column.margin + column.start[k];
 }
 
 /** Rows that the windows of fibres k and m share: [from, to), counted as `light` is. */

@@ -1,65 +1,141 @@
-/** Cosmic rays in one column: pixels that hold more light than model and noise allow.
+/** The pixels of a column held against the model of their light: new variances, and cosmic rays, pixels that hold more light
+ * than model and noise allow.
  *
  * A pixel is rejected when its excess is beyond κ·σ, with σ² = v + (ε·reach)², ε the profile's own relative error and
  * reach the fibres' light nearby: a profile that is a little too narrow, or off its place, leaves light where its model
  * has none. So a sharp bright emission line, which the profile fits only to within ε, is not eaten. Of a cluster only
  * the worst is taken in a round; the fit is then repeated without it. */
-import type { Column } from "./column.js";
+import { MaskBit } from "./bits.js";
+import type { Stretch } from "./chunks.js";
+import { type Column, windowFirst } from "./column.js";
+import type { ColumnLight } from "./light.js";
 import { pixelVariance } from "./variance.js";
 
 /** Rows each side within which only the worst pixel goes in one round. */
 const clusterRows = 2;
-
 /** Rows by which a misfit of the profile may displace light. */
 const reachRows = 2;
-/** The same further out: share of the fibre's light on any pixel of its window. */
+/** The same further out: share of the light of the fibres about, on any pixel. */
 const wingShare = 0.02;
 
-/** Σ |f_k| · (largest weight within ± reachRows + wingShare) on every row: what a misfit is a share of. e⁻, [nRow]. */
-export function lightInReach(column: Column, flux: Float64Array): Float64Array {
-  const { nWindow, weights } = column;
-  const reach = new Float64Array(column.nRow);
-  for (let k = 0; k < column.nFibre; k++) {
-    const first = column.margin + column.start[k];
-    for (let i = 0; i < nWindow; i++) {
-      let largest = 0;
-      for (let j = Math.max(i - reachRows, 0); j <= Math.min(i + reachRows, nWindow - 1); j++) {
-        largest = Math.max(largest, weights[k * nWindow + j]);
-      }
-      reach[first + i] += Math.abs(flux[k]) * (largest + wingShare);
+/** What a column's last confrontation with its model left. */
+export interface Residue {
+  /** nRow, e⁻: light nearby, that a misfit is a share of. */
+  reach: Float64Array;
+  /** nRow: excess² · inverse variance. */
+  chiSquare: Float64Array;
+  /** nRow: 1 where brighter than the lower threshold. */
+  suspect: Uint8Array;
+}
+
+export interface Thresholds {
+  profileError: number;
+  /** 0: nothing is rejected. */
+  kappa: number;
+  growKappa: number;
+}
+
+export function noResidue({ nRow }: Column): Residue {
+  return { reach: new Float64Array(nRow), chiSquare: new Float64Array(nRow), suspect: new Uint8Array(nRow) };
+}
+
+/** New inverse variances on rows from … to − 1, and the light that the next fit is to see. */
+export function weighByModel(column: Column, light: ColumnLight, [from, to]: [number, number]): void {
+  for (let row = from; row < to; row++) {
+    const all = light.model[row] + light.wings[row] + column.background[row];
+    column.inverseVariance[row] = column.bits[row] === 0 ? 1 / pixelVariance(column.noise, row, all) : 0;
+    column.net[row] = column.light[row] - light.wings[row];
+  }
+}
+
+/** Notes on rows from … to − 1, which the fibres of `stretch` light, what the fit leaves there. */
+export function noteResidue(
+  column: Column,
+  light: ColumnLight,
+  flux: Float64Array,
+  stretch: Stretch,
+  [from, to]: [number, number],
+  thresholds: Thresholds,
+  residue: Residue,
+): void {
+  noteReach(column, light, flux, stretch, [from, to], residue.reach);
+  const suspect = thresholds.growKappa * thresholds.growKappa;
+  for (let row = from; row < to; row++) {
+    const left = column.light[row] - (light.model[row] + light.wings[row]);
+    residue.chiSquare[row] = left * left * column.inverseVariance[row];
+    const allowed = allowedOn(column, light, residue, thresholds, row);
+    residue.suspect[row] = squaredExcess(column, light, row) > suspect * allowed ? 1 : 0;
+  }
+}
+
+/** Reach: the most light within ± reachRows, and a share of that of the fibres about: the first whose window ends above the
+ * row, and as many more as windows can overlap. */
+export function noteReach(
+  column: Column,
+  { model, wings }: ColumnLight,
+  flux: Float64Array,
+  [k0, k1]: Stretch,
+  [from, to]: [number, number],
+  reach: Float64Array,
+): void {
+  let row = from;
+  for (let k = k0; k <= k1; k++) {
+    const end = k === k1 ? to : Math.min(windowFirst(column, k) + column.nWindow, to);
+    let about = 0;
+    for (let m = k; k < k1 && m <= Math.min(k + column.bandwidth, column.nFibre - 1); m++) about += Math.abs(flux[m]);
+    for (; row < end; row++) {
+      let near = 0;
+      for (let j = -reachRows; j <= reachRows; j++) near = Math.max(near, Math.abs(model[row + j] + wings[row + j]));
+      reach[row] = near + about * wingShare;
     }
   }
-  return reach;
 }
 
-/** Squared excess over noise, 0 where the pixel is not good or lies below the model: [nRow]. */
-export function squaredExcess(
+/** Rows from … to − 1 beyond κ that are the worst of their cluster. */
+export function worstOutliers(
   column: Column,
-  flux: Float64Array,
-  model: Float64Array,
-  profileError: number,
-): Float64Array {
-  const reach = lightInReach(column, flux);
-  return Float64Array.from({ length: column.nRow }, (_, row) => {
-    const excess = column.light[row] - model[row];
-    if (column.bits[row] !== 0 || !(excess > 0)) return 0;
-    const variance = pixelVariance(column.noise, row, model[row] + column.background[row]);
-    const slack = profileError * reach[row];
-    return (excess * excess) / (variance + slack * slack);
-  });
-}
-
-/** Rows to reject: beyond κ² and the worst within ± clusterRows (of equals the lower). */
-export function worstOutliers(excess: Float64Array, kappaSquared: number): number[] {
+  light: ColumnLight,
+  residue: Residue,
+  thresholds: Thresholds,
+  [from, to]: [number, number],
+): number[] {
+  const limit = thresholds.kappa * thresholds.kappa;
+  const allowed = (row: number) => allowedOn(column, light, residue, thresholds, row);
+  const ratio = (row: number) => squaredExcess(column, light, row) / allowed(row);
   const rows: number[] = [];
-  for (let row = 0; row < excess.length; row++) {
-    if (!(excess[row] > kappaSquared)) continue;
+  for (let row = from; row < to; row++) {
+    if (!(squaredExcess(column, light, row) > limit * allowed(row))) continue;
+    const own = ratio(row);
     let worst = true;
-    for (let j = 1; j <= clusterRows; j++) {
-      if (row - j >= 0 && excess[row - j] >= excess[row]) worst = false;
-      if (row + j < excess.length && excess[row + j] > excess[row]) worst = false;
-    }
+    for (let j = 1; j <= clusterRows; j++) worst &&= ratio(row - j) < own && ratio(row + j) <= own;
     if (worst) rows.push(row);
   }
   return rows;
+}
+
+/** Takes `rows` out of the fit. */
+export function reject(column: Column, rows: number[]): void {
+  for (const row of rows) {
+    column.bits[row] |= MaskBit.cosmic;
+    column.inverseVariance[row] = 0;
+  }
+}
+
+/** Excess over the model squared, 0 where the pixel is not good or lies below the model. */
+function squaredExcess(column: Column, { model, wings }: ColumnLight, row: number): number {
+  const excess = Math.max(column.light[row] - (model[row] + wings[row]), 0);
+  return column.bits[row] === 0 ? excess * excess : 0;
+}
+
+/** What an excess squared is held against: variance, and the profile's own error. */
+function allowedOn(
+  column: Column,
+  { model, wings }: ColumnLight,
+  { reach }: Residue,
+  { profileError }: Thresholds,
+  row: number,
+): number {
+  const variance = pixelVariance(column.noise, row, model[row] + wings[row] + column.background[row]);
+  const slack = profileError * reach[row];
+  return variance + slack * slack;
 }

@@ -1,5 +1,6 @@
 /** Flags of one column's fluxes: what happened to the pixels under each profile. */
 import { Flag, MaskBit } from "./bits.js";
+import type { Stretch } from "./chunks.js";
 import type { Column } from "./column.js";
 
 /** Share of the profile that a masked pixel must hold to be worth a word. */
@@ -9,15 +10,16 @@ const largestLoss = 0.5;
 /** Change of the flux in the last round, in σ, from which on it counts as unsettled. */
 const unsettledSigma = 0.1;
 
-/** [nFibre] bits of Flag. `lastChange`, `variance`: [nFibre], e⁻ and e⁻². `seen(k)`: whether the tramline was traced here. */
+/** [nFibre] bits of Flag, 0 outside the stretch. `lastChange`, `variance`: [nFibre], e⁻ and e⁻². `seen(k)`: whether the tramline was traced here. */
 export function columnFlags(
   column: Column,
   lastChange: Float64Array,
   variance: Float64Array,
   seen: (k: number) => boolean,
+  [k0, k1]: Stretch = [0, column.nFibre],
 ): Int32Array {
   const flags = new Int32Array(column.nFibre);
-  for (let k = 0; k < column.nFibre; k++) {
+  for (let k = k0; k < k1; k++) {
     flags[k] = pixelFlags(column, k) | (seen(k) ? 0 : Flag.extrapolated);
     const row = column.start[k] + column.centre[k];
     if (!(row >= -0.5 && row < column.nRow - 2 * column.margin - 0.5)) flags[k] |= Flag.outside;
@@ -25,6 +27,7 @@ export function columnFlags(
     else if (lastChange[k] * lastChange[k] > unsettledSigma * unsettledSigma * variance[k]) {
       flags[k] |= Flag.varianceUnsettled;
     }
+    if (flags[k] & Flag.weightLost) flags[k] &= ~Flag.varianceUnsettled; // of a flux that is none
   }
   return flags.map((own, k) => (saturatedBeside(column, flags, k) ? own | Flag.neighbourSaturated : own));
 }

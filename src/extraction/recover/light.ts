@@ -14,7 +14,14 @@ export class ProfileLight {
     const rows = (all: Float64Array, n: number) =>
       Float64Array.from(plan.active.flatMap((k) => Array.from(all.subarray(k * n, (k + 1) * n))));
     this.input = {
-      ...{ nx, ny, nFibre: plan.active.length, halfWindow: plan.halfWindow, blockColumns: plan.blockColumns },
+      ...{
+        nx,
+        ny,
+        nFibre: plan.active.length,
+        halfWindow: plan.halfWindow + plan.wing,
+        wing: 0,
+        blockColumns: plan.blockColumns,
+      },
       ...{ trace: rows(legendre, nTrace), nTrace, width: rows(profile.sigma, nWidth), nWidth },
       ...(profile.kind === "gaussian" ? {} : { shape: profile.shape }),
     };
