@@ -46,9 +46,51 @@ function clearRow<T extends number>(job: usize, row: i32): void {
   v128.store(pointer(job, Word.responseVarianceRows) + at, spread<T>(0));
 }
 
+/** Columns that are copied together out of the frame, and spectra into it: in the frame they lie rows apart, a page of memory
+ * each, and a cache line holds sixteen. */
+export const tileColumns: i32 = 16;
+
+/** Pixels of the sixteen columns from `x` on into Word.tileElectrons and Word.tileBits, a row after the other. */
+export function loadTile(job: usize, x: i32): void {
+  const nx = <usize>count(job, Word.nx);
+  const ny = <usize>count(job, Word.ny);
+  const kept = i8x16.splat(<i8>(MaskBit.cosmic | MaskBit.grown));
+  const mask = pointer(job, Word.mask);
+  const rejected = pointer(job, Word.rejected);
+  const electrons = pointer(job, Word.electrons);
+  let pixel = <usize>x;
+  let to = pointer(job, Word.tileElectrons);
+  let bits = pointer(job, Word.tileBits);
+  // The last row may end before the tile does: what a full tile would read beyond the images is left out.
+  const whole = nx * ny >= 16 + <usize>x ? (nx * ny - 16 - <usize>x) / nx + 1 : 0;
+  for (let y: usize = 0; y < whole; y++) {
+    const from = electrons + (pixel << 2);
+    v128.store(to, v128.load(from));
+    v128.store(to, v128.load(from, 16), 16);
+    v128.store(to, v128.load(from, 32), 32);
+    v128.store(to, v128.load(from, 48), 48);
+    v128.store(bits, v128.or(v128.load(mask + pixel), v128.and(v128.load(rejected + pixel), kept)));
+    pixel += nx;
+    to += 64;
+    bits += 16;
+  }
+  for (let y = whole; y < ny; y++) {
+    for (let i: usize = 0; i < 16 && pixel + i < nx * ny; i++) {
+      store<f32>(to + (i << 2), load<f32>(electrons + ((pixel + i) << 2)));
+      store<u8>(
+        bits + i,
+        load<u8>(mask + pixel + i) | (load<u8>(rejected + pixel + i) & <u8>(MaskBit.cosmic | MaskBit.grown)),
+      );
+    }
+    pixel += nx;
+    to += 64;
+    bits += 16;
+  }
+}
+
 /** Lane rows row0 … row1 − 1 of the `nValid` columns from `x` on: bits, light without background, and what makes the
- * variance. */
-export function loadGroup<T extends number>(job: usize, x: i32, nValid: i32, row0: i32, row1: i32): void {
+ * variance. `tile`: first column of the tile that holds them, or −1 when the frame itself is to be read. */
+export function loadGroup<T extends number>(job: usize, x: i32, nValid: i32, row0: i32, row1: i32, tile: i32): void {
   const margin = marginRows(job);
   const nx = <usize>count(job, Word.nx);
   const responds = knowsResponse(job);
@@ -56,41 +98,46 @@ export function loadGroup<T extends number>(job: usize, x: i32, nValid: i32, row
   const to = min(row1, margin + count(job, Word.ny));
   const nY = count(job, Word.nBackgroundY);
   const kept: u32 = 0x01010101 * (MaskBit.cosmic | MaskBit.grown);
-  const mask = pointer(job, Word.mask);
+  const tiled = tile >= 0;
+  const electrons = pointer(job, tiled ? Word.tileElectrons : Word.electrons);
+  const mask = pointer(job, tiled ? Word.tileBits : Word.mask);
   const rejected = pointer(job, Word.rejected);
-  const electrons = pointer(job, Word.electrons);
+  const stride = tiled ? <usize>tileColumns : nx;
   const bitRows = pointer(job, Word.bits);
   const lightRows = pointer(job, Word.light);
   const fixedRows = pointer(job, Word.fixed);
   const backgroundRows = pointer(job, Word.backgroundRows);
-  const inverseResponseRows = pointer(job, Word.inverseResponseRows);
-  const responseVarianceRows = pointer(job, Word.responseVarianceRows);
   const series = pointer(job, Word.backgroundSeries);
   prepareBackgroundSeries<T>(job, x);
   let polynomials = pointer(job, Word.rowPolynomials) + <usize>(nY * (from - margin)) * sizeof<T>();
+  let at = <usize>(from - margin) * stride + <usize>(tiled ? x - tile : x);
   let pixel = <usize>(from - margin) * nx + <usize>x;
   for (let row = from; row < to; row++) {
-    const at = (<usize>row) << 4;
-    let bits = loadBits<T>(mask + pixel, nValid, MaskBit.missing);
-    bits |= loadBits<T>(rejected + pixel, nValid, 0) & kept;
-    store<u32>(bitRows + (at >> 2), bits);
+    const laneRow = (<usize>row) << 4;
+    let bits = loadBits<T>(mask + at, nValid, MaskBit.missing);
+    if (!tiled) bits |= loadBits<T>(rejected + at, nValid, 0) & kept;
+    store<u32>(bitRows + (laneRow >> 2), bits);
     let background = v128.load(series);
     for (let j: i32 = 1; j < nY; j++) {
       const p = loadSpread<T>(polynomials + <usize>j * sizeof<T>());
       background = v128.add<T>(background, v128.mul<T>(v128.load(series + ((<usize>j) << 4)), p));
     }
     polynomials += <usize>nY * sizeof<T>();
-    v128.store(backgroundRows + at, background);
-    const light = v128.sub<T>(loadPixels<T>(electrons + (pixel << 2), nValid), background);
-    v128.store(lightRows + at, bits ? v128.and(light, lanesWithout<T>(bits)) : light);
-    v128.store(fixedRows + at, fixedVariance<T>(job, x, row - margin, pixel, nValid));
-    if (responds) {
-      v128.store(inverseResponseRows + at, imageOr<T>(pointer(job, Word.inverseResponse), pixel, nValid, 1));
-      const flat = pointer(job, Word.responseRelativeVariance);
-      v128.store(responseVarianceRows + at, imageOr<T>(flat, pixel, nValid, 0));
-    }
+    v128.store(backgroundRows + laneRow, background);
+    const light = v128.sub<T>(loadPixels<T>(electrons + (at << 2), nValid), background);
+    v128.store(lightRows + laneRow, bits ? v128.and(light, lanesWithout<T>(bits)) : light);
+    v128.store(fixedRows + laneRow, fixedVariance<T>(job, x, row - margin, pixel, nValid));
+    if (responds) loadResponse<T>(job, laneRow, pixel, nValid);
+    at += stride;
     pixel += nx;
   }
+}
+
+function loadResponse<T extends number>(job: usize, laneRow: usize, pixel: usize, nValid: i32): void {
+  const inverse = imageOr<T>(pointer(job, Word.inverseResponse), pixel, nValid, 1);
+  const variance = imageOr<T>(pointer(job, Word.responseRelativeVariance), pixel, nValid, 0);
+  v128.store(pointer(job, Word.inverseResponseRows) + laneRow, inverse);
+  v128.store(pointer(job, Word.responseVarianceRows) + laneRow, variance);
 }
 
 /** Lanes past the frame's last column get 1, so that nothing divides by 0 there. */
@@ -124,7 +171,39 @@ function prepareBackgroundSeries<T extends number>(job: usize, x: i32): void {
   }
 }
 
-/** Spectra of fibres k0 … k1 − 1 in those of the `nValid` columns from `x` on that `mask` holds, into the images. */
+/** The images that an extraction writes, in the order in which a tile holds them; flags apart, which are i32. */
+function spectrumImage(which: i32): Word {
+  if (which == 0) return Word.flux;
+  if (which == 1) return Word.variance;
+  if (which == 2) return Word.neighbourCovariance;
+  if (which == 3) return Word.chi2;
+  return which == 4 ? Word.backgroundUnder : Word.fitFlux;
+}
+
+const nSpectrumImage: i32 = 6;
+
+/** Where fibre k's number of column `x` goes: in the tile that begins with column `tile`, or in the image itself for −1. */
+function spectrumAt<T extends number>(job: usize, which: i32, k: i32, x: i32, tile: i32): usize {
+  if (tile >= 0) {
+    const row = <usize>(which * count(job, Word.nFibre) + k);
+    return pointer(job, Word.tileSpectra) + (row * <usize>tileColumns + <usize>(x - tile)) * sizeof<T>();
+  }
+  return pointer(job, spectrumImage(which)) + imageOffset(job, k, x) * sizeof<T>();
+}
+
+function flagsAt(job: usize, k: i32, x: i32, tile: i32): usize {
+  if (tile >= 0) return pointer(job, Word.tileFlags) + ((<usize>(k * tileColumns + x - tile)) << 2);
+  return pointer(job, Word.flags) + (imageOffset(job, k, x) << 2);
+}
+
+/** Numbers before fibre k's column `x` in an image. */
+function imageOffset(job: usize, k: i32, x: i32): usize {
+  const row = <usize>load<i32>(pointer(job, Word.outputRow) + ((<usize>k) << 2));
+  return row * <usize>count(job, Word.nx) + <usize>x;
+}
+
+/** Spectra of fibres k0 … k1 − 1 in those of the `nValid` columns from `x` on that `mask` holds. `raised`: whether any flag
+ * is; `tile`: first column of the tile that takes them, or −1. */
 export function storeGroup<T extends number>(
   job: usize,
   x: i32,
@@ -133,27 +212,23 @@ export function storeGroup<T extends number>(
   k1: i32,
   mask: i32,
   raised: bool,
+  tile: i32,
 ): void {
   const whole = !raised && nValid == laneCount<T>() && mask == (1 << laneCount<T>()) - 1;
-  const nx = <usize>count(job, Word.nx);
   const weighted = pointer(job, Word.weighted);
   for (let k = k0; k < k1; k++) {
-    const rows = pointer(job, Word.outputRow) + ((<usize>k) << 2);
-    const pixel = <usize>load<i32>(rows) * nx + <usize>x;
     const chi2 = reducedChiSquare<T>(job, k);
     const background = v128.load(pointer(job, Word.backgroundRows) + ((<usize>middleRow(job, k)) << 4));
+    const at = (<usize>k) << 4;
     if (whole) {
-      const paired = isNextRow(job, k);
-      const at = (<usize>k) << 4;
-      const covariance = paired ? v128.load(pointer(job, Word.covariancesBelow) + at, 16) : spread<T>(NaN);
-      storeLanes<T>(job, Word.flux, pixel, v128.load(pointer(job, Word.fluxes) + at));
-      storeLanes<T>(job, Word.variance, pixel, v128.load(pointer(job, Word.variances) + at));
-      storeLanes<T>(job, Word.neighbourCovariance, pixel, covariance);
-      storeLanes<T>(job, Word.chi2, pixel, chi2);
-      storeLanes<T>(job, Word.backgroundUnder, pixel, background);
-      const flags = pointer(job, Word.flags) + (pixel << 2);
-      if (sizeof<T>() == 4) v128.store(flags, spread<T>(0));
-      else store<i64>(flags, 0);
+      const covariance = isNextRow(job, k) ? v128.load(pointer(job, Word.covariancesBelow) + at, 16) : spread<T>(NaN);
+      v128.store(spectrumAt<T>(job, 0, k, x, tile), v128.load(pointer(job, Word.fluxes) + at));
+      v128.store(spectrumAt<T>(job, 1, k, x, tile), v128.load(pointer(job, Word.variances) + at));
+      v128.store(spectrumAt<T>(job, 2, k, x, tile), covariance);
+      v128.store(spectrumAt<T>(job, 3, k, x, tile), chi2);
+      v128.store(spectrumAt<T>(job, 4, k, x, tile), background);
+      if (sizeof<T>() == 4) v128.store(flagsAt(job, k, x, tile), spread<T>(0));
+      else store<i64>(flagsAt(job, k, x, tile), 0);
       continue;
     }
     v128.store(weighted, chi2);
@@ -161,44 +236,79 @@ export function storeGroup<T extends number>(
     for (let lane: i32 = 0; lane < nValid; lane++) {
       if (((mask >> lane) & 1) == 0) continue;
       const own = flagsOf<T>(job, k, lane);
-      const at = pixel + <usize>lane;
       const valid = isValid(own);
-      storeNumber<T>(job, Word.flux, at, pointer(job, Word.fluxes), k, lane, valid);
-      storeNumber<T>(job, Word.variance, at, pointer(job, Word.variances), k, lane, valid);
-      storeNumber<T>(job, Word.chi2, at, weighted, 0, lane, valid);
       const paired = valid && isNextRow(job, k) && isValid(flagsOf<T>(job, k + 1, lane));
-      storeNumber<T>(job, Word.neighbourCovariance, at, pointer(job, Word.covariancesBelow), k + 1, lane, paired);
-      storeNumber<T>(job, Word.backgroundUnder, at, weighted, 1, lane, true);
-      store<i32>(pointer(job, Word.flags) + (at << 2), own);
+      const column = x + lane;
+      storeNumber<T>(spectrumAt<T>(job, 0, k, column, tile), pointer(job, Word.fluxes) + at, lane, valid);
+      storeNumber<T>(spectrumAt<T>(job, 1, k, column, tile), pointer(job, Word.variances) + at, lane, valid);
+      storeNumber<T>(
+        spectrumAt<T>(job, 2, k, column, tile),
+        pointer(job, Word.covariancesBelow) + at + 16,
+        lane,
+        paired,
+      );
+      storeNumber<T>(spectrumAt<T>(job, 3, k, column, tile), weighted, lane, valid);
+      storeNumber<T>(spectrumAt<T>(job, 4, k, column, tile), weighted + 16, lane, true);
+      store<i32>(flagsAt(job, k, column, tile), own);
     }
   }
 }
 
-/** The fit's own fluxes, whatever the method makes of them, for a later look at these columns: Word.fitFlux. */
-export function storeFit<T extends number>(job: usize, x: i32, nValid: i32, k0: i32, k1: i32, mask: i32): void {
-  const image = pointer(job, Word.fitFlux);
+/** The fit's own fluxes, whatever the method makes of them, for a later look at these columns. */
+export function storeFit<T extends number>(
+  job: usize,
+  x: i32,
+  nValid: i32,
+  k0: i32,
+  k1: i32,
+  mask: i32,
+  tile: i32,
+): void {
   const fluxes = pointer(job, Word.fluxes);
   for (let k = k0; k < k1; k++) {
-    const row = <usize>load<i32>(pointer(job, Word.outputRow) + ((<usize>k) << 2));
-    const to = image + (row * <usize>count(job, Word.nx) + <usize>x) * sizeof<T>();
+    const to = spectrumAt<T>(job, 5, k, x, tile);
+    if (tile >= 0) {
+      v128.store(to, v128.load(fluxes + ((<usize>k) << 4)));
+      continue;
+    }
     for (let lane: i32 = 0; lane < nValid; lane++) {
       if ((mask >> lane) & 1) store<T>(to + <usize>lane * sizeof<T>(), laneAt<T>(fluxes + ((<usize>k) << 4), lane));
     }
   }
 }
 
-/** Fluxes of fibres k0 … k1 − 1 as `storeFit` left them. */
+/** Fluxes of fibres k0 … k1 − 1 as `storeFit` left them in the image. */
 export function loadFit<T extends number>(job: usize, x: i32, nValid: i32, k0: i32, k1: i32): void {
   const fluxes = pointer(job, Word.fluxes);
   for (let k = k0; k < k1; k++) {
-    const row = <usize>load<i32>(pointer(job, Word.outputRow) + ((<usize>k) << 2));
-    const from = pointer(job, Word.fitFlux) + (row * <usize>count(job, Word.nx) + <usize>x) * sizeof<T>();
+    const from = spectrumAt<T>(job, 5, k, x, -1);
     const at = fluxes + ((<usize>k) << 4);
     v128.store(at, spread<T>(0));
     for (let lane: i32 = 0; lane < nValid; lane++) {
       store<T>(at + <usize>lane * sizeof<T>(), load<T>(from + <usize>lane * sizeof<T>()));
     }
   }
+}
+
+/** The tile's first `width` columns into the images. */
+export function storeTile<T extends number>(job: usize, tile: i32, width: i32): void {
+  const nFibre = count(job, Word.nFibre);
+  const bytes = <usize>width * sizeof<T>();
+  for (let which: i32 = 0; which < nSpectrumImage; which++) {
+    for (let k: i32 = 0; k < nFibre; k++) {
+      copyBytes(spectrumAt<T>(job, which, k, tile, -1), spectrumAt<T>(job, which, k, tile, tile), bytes);
+    }
+  }
+  for (let k: i32 = 0; k < nFibre; k++) {
+    copyBytes(flagsAt(job, k, tile, -1), flagsAt(job, k, tile, tile), (<usize>width) << 2);
+  }
+}
+
+/** A few bytes, a multiple of four: too few for memory.copy to be worth its call. */
+function copyBytes(to: usize, from: usize, n: usize): void {
+  let at: usize = 0;
+  for (; at + 16 <= n; at += 16) v128.store(to + at, v128.load(from + at));
+  for (; at < n; at += 4) store<u32>(to + at, load<u32>(from + at));
 }
 
 /** Light of all fibres in the group's pixels into Word.modelImage, when that is there. */
@@ -220,7 +330,7 @@ export function storeModel<T extends number>(job: usize, x: i32, nValid: i32): v
 }
 
 /** What this group rejected, and its suspects, into Word.rejected. */
-export function storeRejected<T extends number>(job: usize, x: i32, nValid: i32): void {
+export function storeRejected(job: usize, x: i32, nValid: i32): void {
   const nx = <usize>count(job, Word.nx);
   const margin = marginRows(job);
   const cosmic: u32 = 0x01010101 * MaskBit.cosmic;
@@ -237,21 +347,8 @@ export function storeRejected<T extends number>(job: usize, x: i32, nValid: i32)
   }
 }
 
-function storeLanes<T extends number>(job: usize, image: Word, pixel: usize, lanes: v128): void {
-  v128.store(pointer(job, image) + pixel * sizeof<T>(), lanes);
-}
-
-function storeNumber<T extends number>(
-  job: usize,
-  image: Word,
-  pixel: usize,
-  from: usize,
-  k: i32,
-  lane: i32,
-  valid: bool,
-): void {
-  const value = valid ? laneAt<T>(from + ((<usize>k) << 4), lane) : <T>NaN;
-  store<T>(pointer(job, image) + pixel * sizeof<T>(), value);
+function storeNumber<T extends number>(to: usize, from: usize, lane: i32, valid: bool): void {
+  store<T>(to, valid ? laneAt<T>(from, lane) : <T>NaN);
 }
 
 function flagsOf<T extends number>(job: usize, k: i32, lane: i32): i32 {

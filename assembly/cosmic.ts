@@ -3,7 +3,7 @@
 import { MaskBit } from "../src/reference/bits";
 import { callRow } from "./chunks";
 import { count, Numbers, number, pointer, Word, windowLaneRow, windowRows } from "./job";
-import { bytesOfLanes, lanesSet, lanesWithout, spread } from "./lanes";
+import { bytesOfLanes, laneCount, lanesSet, lanesWithout, spread } from "./lanes";
 import { knowsResponse, pixelVariance } from "./variance";
 
 /** Rows each side within which only the worst pixel goes in one round. */
@@ -72,6 +72,7 @@ function confrontRows<T extends number>(
   const responds = knowsResponse(job);
   const light = pointer(job, Word.light);
   const background = pointer(job, Word.backgroundRows);
+  const fixed = pointer(job, Word.fixed);
   const wings = pointer(job, Word.wingLight);
   const model = pointer(job, Word.model);
   const net = pointer(job, Word.net);
@@ -80,7 +81,7 @@ function confrontRows<T extends number>(
   const reachRows = pointer(job, Word.reach);
   const chiSquare = pointer(job, Word.chiSquare);
   const suspects = pointer(job, Word.suspects);
-  const others = ~bytesOfLanes(lanesSet<T>(mask), 255);
+  const others = bytesOfLanes(~lanesSet<T>(mask) & ((1 << laneCount<T>()) - 1), 255);
   const error = spread<T>(number(job, Numbers.profileError));
   const limit = spread<T>(number(job, Numbers.kappaSquared));
   const suspect = spread<T>(number(job, Numbers.growKappaSquared));
@@ -88,28 +89,34 @@ function confrontRows<T extends number>(
   const zero = spread<T>(0);
   let n = nBefore;
   let at = (<usize>from) << 4;
-  let total0 = lightOn<T>(model, wings, at - 32);
-  let total1 = lightOn<T>(model, wings, at - 16);
-  let total2 = lightOn<T>(model, wings, at);
-  let total3 = lightOn<T>(model, wings, at + 16);
+  // Light on the row and the next two; the largest of two rows, from two rows back on.
+  let here = lightOn<T>(model, wings, at);
+  let next = lightOn<T>(model, wings, at + 16);
+  const behind = v128.abs<T>(lightOn<T>(model, wings, at - 16));
+  let pairBehind = v128.pmax<T>(v128.abs<T>(lightOn<T>(model, wings, at - 32)), behind);
+  let pairHere = v128.pmax<T>(behind, v128.abs<T>(here));
+  let pairAhead = v128.pmax<T>(v128.abs<T>(here), v128.abs<T>(next));
   for (let row = from; row < to; row++) {
-    const total4 = lightOn<T>(model, wings, at + 32);
-    const data = v128.load(light + at);
+    const second = lightOn<T>(model, wings, at + 32);
+    const left = v128.sub<T>(v128.load(light + at), here);
     const masked = load<u32>(bits + (at >> 2));
-    const good = masked ? lanesWithout<T>(masked) : i32x4.splat(-1);
-    const variance = pixelVariance<T>(job, at, v128.add<T>(total2, v128.load(background + at)), responds);
+    const variance = pixelVariance<T>(
+      job,
+      v128.load(fixed + at),
+      at,
+      v128.add<T>(here, v128.load(background + at)),
+      responds,
+    );
     let squared = zero;
     let allowed = zero;
     if (rejecting) {
-      const near = v128.pmax<T>(
-        v128.pmax<T>(v128.pmax<T>(v128.abs<T>(total0), v128.abs<T>(total1)), v128.abs<T>(total2)),
-        v128.pmax<T>(v128.abs<T>(total3), v128.abs<T>(total4)),
-      );
+      const near = v128.pmax<T>(v128.pmax<T>(pairBehind, pairAhead), v128.abs<T>(second));
       const reach = v128.add<T>(near, about);
-      v128.store(reachRows + at, v128.bitselect(reach, v128.load(reachRows + at), mask));
-      const excess = v128.pmax<T>(v128.sub<T>(data, total2), zero);
+      v128.store(reachRows + at, chosen(reach, reachRows + at, mask, others));
+      const excess = v128.pmax<T>(left, zero);
       const slack = v128.mul<T>(error, reach);
-      squared = v128.and(v128.mul<T>(excess, excess), good);
+      squared = v128.mul<T>(excess, excess);
+      if (masked) squared = v128.and(squared, lanesWithout<T>(masked));
       allowed = v128.add<T>(variance, v128.mul<T>(slack, slack));
       const beyond = v128.and(v128.gt<T>(squared, v128.mul<T>(limit, allowed)), mask);
       if (v128.any_true(beyond)) {
@@ -118,28 +125,34 @@ function confrontRows<T extends number>(
       }
     }
     if (weigh) {
-      const inverse = v128.and(v128.div<T>(one, variance), good);
-      v128.store(ivar + at, v128.bitselect(inverse, v128.load(ivar + at), mask));
-      const own = v128.sub<T>(data, v128.load(wings + at));
-      v128.store(net + at, v128.bitselect(own, v128.load(net + at), mask));
+      let inverse = v128.div<T>(one, variance);
+      if (masked) inverse = v128.and(inverse, lanesWithout<T>(masked));
+      v128.store(ivar + at, chosen(inverse, ivar + at, mask, others));
+      const own = v128.sub<T>(v128.load(light + at), v128.load(wings + at));
+      v128.store(net + at, chosen(own, net + at, mask, others));
     } else {
-      const left = v128.sub<T>(data, total2);
       const square = v128.mul<T>(v128.mul<T>(left, left), v128.load(ivar + at));
-      v128.store(chiSquare + at, v128.bitselect(square, v128.load(chiSquare + at), mask));
+      v128.store(chiSquare + at, chosen(square, chiSquare + at, mask, others));
       if (rejecting) {
         const beyond = v128.gt<T>(squared, v128.mul<T>(suspect, allowed));
         const bytes = v128.any_true(beyond) ? bytesOfLanes(lanesSet<T>(beyond), MaskBit.suspect) : 0;
-        const kept = load<u32>(suspects + (at >> 2)) & others;
+        const kept = others ? load<u32>(suspects + (at >> 2)) & others : 0;
         store<u32>(suspects + (at >> 2), kept | (bytes & ~others));
       }
     }
-    total0 = total1;
-    total1 = total2;
-    total2 = total3;
-    total3 = total4;
+    here = next;
+    next = second;
+    pairBehind = pairHere;
+    pairHere = pairAhead;
+    pairAhead = v128.pmax<T>(v128.abs<T>(here), v128.abs<T>(next));
     at += 16;
   }
   return n;
+}
+
+/** `fresh` in the lanes of `mask`, what lies at `ptr` in the others, of which there are none when `others` is 0. */
+function chosen(fresh: v128, ptr: usize, mask: v128, others: u32): v128 {
+  return others ? v128.bitselect(fresh, v128.load(ptr), mask) : fresh;
 }
 
 function lightOn<T extends number>(model: usize, wings: usize, at: usize): v128 {
@@ -180,7 +193,7 @@ function excessOn<T extends number>(job: usize, at: usize): v128 {
 function allowedOn<T extends number>(job: usize, at: usize): v128 {
   const total = lightOn<T>(pointer(job, Word.model), pointer(job, Word.wingLight), at);
   const light = v128.add<T>(total, v128.load(pointer(job, Word.backgroundRows) + at));
-  const variance = pixelVariance<T>(job, at, light, knowsResponse(job));
+  const variance = pixelVariance<T>(job, v128.load(pointer(job, Word.fixed) + at), at, light, knowsResponse(job));
   const reach = v128.load(pointer(job, Word.reach) + at);
   const slack = v128.mul<T>(spread<T>(number(job, Numbers.profileError)), reach);
   return v128.add<T>(variance, v128.mul<T>(slack, slack));

@@ -21,12 +21,15 @@ import {
 import {
   loadFit,
   loadGroup,
+  loadTile,
   prepareMargins,
   prepareRowPolynomials,
   storeFit,
   storeGroup,
   storeModel,
   storeRejected,
+  storeTile,
+  tileColumns,
 } from "./columns";
 import { confront } from "./cosmic";
 import { solveCrosstalk, withoutCrosstalk } from "./crosstalk";
@@ -72,23 +75,28 @@ function prepareExtraction<T extends number>(job: usize): void {
   prepareMargins<T>(job);
 }
 
-function extractTile<T extends number>(job: usize, tile: i32): void {
-  const block = tile * count(job, Word.blockColumns);
+function extractTile<T extends number>(job: usize, number: i32): void {
+  const block = number * count(job, Word.blockColumns);
   const x0 = max(block, count(job, Word.firstColumn));
   const x1 = min(block + count(job, Word.blockColumns), count(job, Word.endColumn));
   const nFibre = count(job, Word.nFibre);
   const nLane = laneCount<T>();
   blockProfiles<T>(job, block);
   prepareFibreOfRow(job);
-  for (let x = x0; x < x1; x += nLane) {
-    interpolateProfiles<T>(job, x - block, 0, nFibre);
-    interpolateWings<T>(job, x - block, 0, nFibre);
-    extractGroup<T>(job, x, min(nLane, x1 - x));
+  for (let tile = x0; tile < x1; tile += tileColumns) {
+    const end = min(tile + tileColumns, x1);
+    loadTile(job, tile);
+    for (let x = tile; x < end; x += nLane) {
+      interpolateProfiles<T>(job, x - block, 0, nFibre);
+      interpolateWings<T>(job, x - block, 0, nFibre);
+      extractGroup<T>(job, x, min(nLane, end - x), tile);
+    }
+    storeTile<T>(job, tile, end - tile);
   }
 }
 
 /** One group: settle variances and rejections, estimate, write out. */
-function extractGroup<T extends number>(job: usize, x: i32, nValid: i32): void {
+function extractGroup<T extends number>(job: usize, x: i32, nValid: i32, tile: i32): void {
   const rejecting = count(job, Word.reject) != 0;
   const minRounds = count(job, Word.minRounds);
   const nFibre = count(job, Word.nFibre);
@@ -96,7 +104,7 @@ function extractGroup<T extends number>(job: usize, x: i32, nValid: i32): void {
   const margin = marginRows(job);
   const top = nRow - margin;
   const everyLane = i32x4.splat(-1);
-  loadGroup<T>(job, x, nValid, 0, nRow);
+  loadGroup<T>(job, x, nValid, 0, nRow, tile);
   weighByData<T>(job, 0, nRow);
   normalEquations<T>(job, 0, nFibre, 0);
   clearCalls(job);
@@ -120,12 +128,12 @@ function extractGroup<T extends number>(job: usize, x: i32, nValid: i32): void {
     }
   }
   const lanes = (1 << nValid) - 1;
-  if (rejecting) storeRejected<T>(job, x, nValid);
-  storeFit<T>(job, x, nValid, 0, nFibre, lanes);
+  if (rejecting) storeRejected(job, x, nValid);
+  storeFit<T>(job, x, nValid, 0, nFibre, lanes, tile);
   storeModel<T>(job, x, nValid);
   estimate<T>(job, 0, nFibre);
   const raised = groupFlags<T>(job, x, 0, nFibre);
-  storeGroup<T>(job, x, nValid, 0, nFibre, lanes, raised);
+  storeGroup<T>(job, x, nValid, 0, nFibre, lanes, raised, tile);
 }
 
 /** Change of a flux, in units of the σ it would have alone, up to which it has settled. */
@@ -297,10 +305,10 @@ function settleGrown<T extends number>(job: usize, x: i32, offset: i32, nValid: 
   const s0 = max(chunk * chunkFibres - (reach >> 1), 0);
   const s1 = min((chunk + 1) * chunkFibres + (reach >> 1), nFibre);
   const stored = lanesSet<T>(lanes) & ((1 << nValid) - 1);
-  storeFit<T>(job, x, nValid, s0, s1, stored);
+  storeFit<T>(job, x, nValid, s0, s1, stored, -1);
   estimate<T>(job, k0, k1);
   groupFlags<T>(job, x, k0, k1);
-  storeGroup<T>(job, x, nValid, s0, s1, stored, true);
+  storeGroup<T>(job, x, nValid, s0, s1, stored, true, -1);
 }
 
 /** Fibres `from` … `to` − 1 of a group as the first look left them: profiles, pixels, fluxes and their light, with that of the
@@ -323,7 +331,7 @@ function openStretch<T extends number>(
   while (w1 < count(job, Word.nFibre) && windowLaneRow(job, w1) - wing < row1) w1++;
   interpolateProfiles<T>(job, offset, w0, w1);
   interpolateWings<T>(job, offset, w0, w1);
-  loadGroup<T>(job, x, nValid, row0, row1);
+  loadGroup<T>(job, x, nValid, row0, row1, -1);
   loadFit<T>(job, x, nValid, w0, w1);
   const first = (<usize>(windowLaneRow(job, w0) - wing)) << 4;
   const bytes = ((<usize>(windowLaneRow(job, w1 - 1) + nWindow + wing)) << 4) - first;

@@ -57,6 +57,10 @@ export enum Word {
 
   // scratch of one thread
   start, // i32, nFibre
+  tileElectrons, // f32, ny × 16
+  tileBits, // u8, ny × 16
+  tileSpectra, // T, 6 × nFibre × 16
+  tileFlags, // i32, nFibre × 16
   shapeTerms, // f64, 7
   nodeCentre, // T, nFibre × nNode
   nodeWeights, // T, nFibre × nNode × nWindow

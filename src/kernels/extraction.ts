@@ -308,6 +308,10 @@ function scratchPlan(input: ExtractionInput, nLane: number): Plan {
   ];
   return [
     [Word.start, "int32", nFibre],
+    [Word.tileElectrons, "float32", 16 * ny],
+    [Word.tileBits, "uint8", 16 * ny],
+    [Word.tileSpectra, "lanes", 6 * 16 * nFibre],
+    [Word.tileFlags, "int32", 16 * nFibre],
     [Word.shapeTerms, "float64", 7],
     [Word.nodeCentre, "lanes", nNode * nFibre],
     [Word.nodeWeights, "lanes", nNode * nFibre * nWindow],
