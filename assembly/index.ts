@@ -7,7 +7,6 @@ export { checksum, toBigEndian } from "./checksum";
 export { electrons, growSaturation, turnBytes, turnFloat32 } from "./electrons";
 export { erf } from "./erf";
 export { exp } from "./exp";
-export { groupMeans, groupMedians } from "./groups";
 export {
   extractTile32,
   extractTile64,
@@ -16,6 +15,7 @@ export {
   settleTile32,
   settleTile64,
 } from "./extract";
+export { groupMeans, groupMedians } from "./groups";
 export { legendreFitClipped, legendreValue } from "./legendre";
 export { median } from "./median";
 export { pixelsToFloat32, pixelsToFloat64 } from "./pixels";
