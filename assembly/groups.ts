@@ -23,6 +23,8 @@ export function groupMedians(job: usize, tile: i32): void {
   const rowPtr = pointer(job, GroupWord.electrons) + row * strideBytes;
   const scratch = pointer(job, GroupWord.scratch);
   const nGroup = <usize>count(job, GroupWord.nGroup);
+  const stride = <usize>count(job, GroupWord.stride);
+  dropUnused(rowPtr, pointer(job, GroupWord.nUsed) + row * stride, stride << 2);
   for (let g: usize = 0; g < nGroup; g++) {
     const from = <usize>load<i32>(pointer(job, GroupWord.from) + (g << 2));
     const width = load<i32>(pointer(job, GroupWord.width) + (g << 2));
@@ -38,6 +40,16 @@ export function groupMedians(job: usize, tile: i32): void {
     store<f64>(out, middle(scratch + 8, i32x4.extract_lane(good, 2)), 16);
     store<f64>(out, middle(scratch + 12, i32x4.extract_lane(good, 3)), 24);
   }
+}
+
+/** NaN in place of each of `n` pixels that no frame has. */
+function dropUnused(electrons: usize, nUsed: usize, n: usize): void {
+  let i: usize = 0;
+  for (; i + 16 <= n; i += 16) {
+    if (i8x16.all_true(v128.load(nUsed + i))) continue;
+    for (let at = i; at < i + 16; at++) if (load<u8>(nUsed + at) == 0) store<f32>(electrons + (at << 2), NaN);
+  }
+  for (; i < n; i++) if (load<u8>(nUsed + i) == 0) store<f32>(electrons + (i << 2), NaN);
 }
 
 /** Four rows of `width` pixels to [column][row], NaN to ∞. Returns how many each row has that are not NaN. */
@@ -130,7 +142,7 @@ function averageRow(job: usize, row: i32, g: i32, rowMedian: f32, slope: f32): v
   const electrons = pointer(job, GroupWord.electrons) + (at << 2);
   const fixedRow = <usize>load<i32>(pointer(job, GroupWord.fixedRow) + ((<usize>row) << 2));
   const fixed = pointer(job, GroupWord.fixedVariance) + ((fixedRow * stride + from) << 2);
-  const nUsed = pointer(job, GroupWord.nUsed);
+  const nUsed: usize = count(job, GroupWord.isSingle) != 0 ? 0 : pointer(job, GroupWord.nUsed);
   const inverse = pointer(job, GroupWord.inverseResponse);
   const relative = pointer(job, GroupWord.responseRelativeVariance);
   const one = f32x4.splat(1.0);

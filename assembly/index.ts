@@ -17,7 +17,7 @@ export {
 } from "./extract";
 export { groupMeans, groupMedians } from "./groups";
 export { legendreFitClipped, legendreValue } from "./legendre";
-export { median } from "./median";
+export { median, quantile } from "./median";
 export { pixelsToFloat32, pixelsToFloat64 } from "./pixels";
 export { gaussianWeights64 } from "./profile";
 export { rankUpdate } from "./rankUpdate";

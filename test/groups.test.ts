@@ -13,9 +13,7 @@ beforeAll(async () => {
 function pixels(nx: number, ny: number, seed: number, scatter: number, kind = 0): GroupedPixels {
   const uneven = (i: number) => ((i * 7919 + seed * 104729) % 10007) / 10007;
   const at = Array.from({ length: nx * ny }, (_, i) => i);
-  const electrons = Float32Array.from(at, (i) =>
-    uneven(3 * i) < 0.03 ? Number.NaN : 40 + 900 * uneven(Math.floor(i / nx) + 11) + scatter * uneven(i),
-  );
+  const electrons = Float32Array.from(at, (i) => 40 + 900 * uneven(Math.floor(i / nx) + 11) + scatter * uneven(i));
   const image = (of: (i: number) => number) => Float32Array.from(at, of);
   const noise = {
     bandOfRow: Uint8Array.from({ length: ny }, (_, y) => (y > ny / 2 ? 1 : 0)),
@@ -24,8 +22,12 @@ function pixels(nx: number, ny: number, seed: number, scatter: number, kind = 0)
     ...(kind > 1 ? { inverseResponse: image((i) => 0.95 + 0.1 * uneven(i + 6)) } : {}),
     ...(kind > 2 ? { responseRelativeVariance: image((i) => 1e-5 * uneven(i + 7)) } : {}),
   };
-  const nUsed = Uint8Array.from(electrons, (value, i) => (Number.isNaN(value) ? 0 : 1 + (i % 3)));
-  return { nx, ny, electrons, noise, ...(kind % 2 === 1 ? { nUsed } : {}) };
+  const isMissing = (i: number) => uneven(3 * i) < 0.03;
+  const nUsed = Uint8Array.from(at, (i) => (isMissing(i) ? 0 : kind % 2 === 1 ? 1 + (i % 3) : 1));
+  at.forEach((i) => {
+    if (isMissing(i)) electrons[i] = i % 2 === 1 ? Number.NaN : 7e4;
+  });
+  return { nx, ny, electrons, nUsed, nFrame: kind % 2 === 1 ? 3 : 1, noise };
 }
 
 /** Sums of at most 64 numbers in f32 stray by 64 · 2⁻²⁴ of the sum. */
@@ -84,6 +86,7 @@ describe("means over groups of columns", () => {
     const frame = pixels(8, 3, 1, 0);
     frame.noise.fixedVariance.fill(9);
     frame.electrons.fill(100);
+    frame.nUsed.fill(1);
     frame.electrons.fill(160, 16, 24);
     // σ² = 9 + 100: 8 σ = 83.5 e⁻, and half of 60 e⁻ for the row above: 213.5 e⁻.
     frame.electrons[8] = 213;

@@ -1,5 +1,6 @@
 import fc from "fast-check";
 import { beforeAll, describe, expect, it } from "vitest";
+import { quantileOfSorted } from "../src/detector/clip.js";
 import { type Kernels, loadKernels } from "../src/kernels/module.js";
 import { median } from "../src/reference/median.js";
 
@@ -14,6 +15,21 @@ function inKernel(values: number[]): number {
   view.set(values);
   return bench.call.median(view.byteOffset, values.length);
 }
+
+describe("quantile", () => {
+  it("is that of the sorted list, linear between its neighbours", () => {
+    const list = fc.array(fc.integer({ min: -40, max: 40 }), { minLength: 1, maxLength: 60 });
+    fc.assert(
+      fc.property(list, fc.double({ min: 0, max: 1, noNaN: true }), (values, q) => {
+        const bench = kernels.workbench(8 * values.length);
+        const view = bench.float64(values.length);
+        view.set(values);
+        const own = bench.call.quantile(view.byteOffset, values.length, q);
+        expect(Math.abs(own - quantileOfSorted(Float64Array.from(values).sort(), q))).toBeLessThan(1e-12);
+      }),
+    );
+  });
+});
 
 describe("median", () => {
   it("is the middle value, or the mean of the middle two", () => {

@@ -117,8 +117,9 @@ export interface KernelExports {
     blank: bigint,
   ): void;
 
-  /** assembly/median.ts: loses the order of what lies at `ptr`. */
+  /** assembly/median.ts: both lose the order of what lies at `ptr`. */
   median(ptr: number, n: number): number;
+  quantile(ptr: number, n: number, q: number): number;
 }
 
 /** Kernels that work on one tile of a job: what `Workbench.share` can hand out. */

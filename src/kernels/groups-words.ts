@@ -6,8 +6,9 @@ export enum GroupWord {
   /** Pixels from one row to the next; four may be read beyond a group's last one. */
   stride,
   nGroup,
-  electrons, // f32, nRow × stride; NaN for a pixel without value
-  nUsed, // u8, nRow × stride: frames in a pixel's mean; absent: one
+  electrons, // f32, nRow × stride; made NaN for a pixel without value
+  nUsed, // u8, nRow × stride: frames in a pixel's mean; 0: without value
+  isSingle, // not 0: no pixel is the mean of several frames
   fixedRow, // i32, nRow: which row of `fixedVariance`
   fixedVariance, // f32, rows of `stride`
   inverseResponse, // f32, nRow × stride, or absent

@@ -86,6 +86,7 @@ class Chunk {
     words[GroupWord.nGroup] = nGroup;
     words[GroupWord.electrons] = this.follow(electrons);
     words[GroupWord.nUsed] = this.follow(nUsed);
+    words[GroupWord.isSingle] = pixels.nFrame === 1 ? 1 : 0;
     words[GroupWord.fixedRow] = this.fixedRow.byteOffset;
     words[GroupWord.fixedVariance] = this.follow(noise.fixedVarianceImage) || this.placeBands(nBand);
     words[GroupWord.inverseResponse] = this.follow(noise.inverseResponse);

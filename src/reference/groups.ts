@@ -6,10 +6,12 @@ import type { NoiseIngredients } from "./variance.js";
 export interface GroupedPixels {
   nx: number;
   ny: number;
-  /** ny × nx, e⁻; NaN for a pixel without value. */
+  /** ny × nx, e⁻. */
   electrons: Float32Array;
-  /** ny × nx: frames in a pixel's mean; absent: one. */
-  nUsed?: Uint8Array | undefined;
+  /** ny × nx: frames in a pixel's mean; 0 for a pixel without value. */
+  nUsed: Uint8Array;
+  /** Frames in all. */
+  nFrame: number;
   /** One frame's. */
   noise: NoiseIngredients;
 }
@@ -37,7 +39,7 @@ export interface GroupMean {
 export const KAPPA_HIT = 8;
 
 export function groupColumns(pixels: GroupedPixels, { from, to }: ColumnRange): GroupMean {
-  const { nx, ny, electrons } = pixels;
+  const { nx, ny, electrons, nUsed } = pixels;
   const group: GroupMean = {
     mean: new Float64Array(ny),
     count: new Uint16Array(ny),
@@ -45,7 +47,7 @@ export function groupColumns(pixels: GroupedPixels, { from, to }: ColumnRange): 
     variancePerElectron: new Float64Array(ny),
   };
   const medians = Array.from({ length: ny }, (_, y) =>
-    median(electrons.subarray(y * nx + from, y * nx + to).filter((value) => !Number.isNaN(value))),
+    median(electrons.subarray(y * nx + from, y * nx + to).filter((_, i) => nUsed[y * nx + from + i] > 0)),
   );
   const near = (y: number) => medians[Math.max(0, Math.min(ny - 1, y))] || 0;
   for (let y = 0; y < ny; y++) {
@@ -70,8 +72,8 @@ function averageRow(
   let n = 0;
   for (let x = from; x < to; x++) {
     const at = y * nx + x;
-    if (Number.isNaN(electrons[at])) continue;
-    const nFrame = nUsed?.[at] ?? 1;
+    const nFrame = nUsed[at];
+    if (nFrame === 0) continue;
     const own = noise.fixedVarianceImage?.[at] ?? noise.fixedVariance[noise.bandOfRow[y] * nx + x];
     const inverseResponse = noise.inverseResponse?.[at] ?? 1;
     const light = Math.max(rowMedian, 0);

@@ -16,7 +16,7 @@ export interface Flat {
   nFrame: number;
   nx: number;
   ny: number;
-  /** ny × nx, e⁻, mean of the frames used; NaN where none is. */
+  /** ny × nx, e⁻, mean of the frames used; means nothing where none is. */
   electrons: Float32Array;
   /** ny × nx, bits of MaskBit that all frames have. */
   mask: Uint8Array;
@@ -47,23 +47,17 @@ export function combineFlats(frames: Frame[]): Flat {
 
 type FlatPixels = Pick<Flat, "electrons" | "mask" | "nUsed">;
 
-function singleFlat(frame: Frame): FlatPixels {
-  const nPixel = frame.nx * frame.ny;
-  const electrons = new Float32Array(nPixel);
-  const nUsed = new Uint8Array(nPixel);
-  const { electrons: given } = frame;
-  let { mask } = frame;
-  for (let at = 0; at < nPixel; at++) {
-    const value = given[at];
-    if (mask[at] === 0 && !Number.isNaN(value)) {
-      electrons[at] = value;
-      nUsed[at] = 1;
-      continue;
+/** Of one frame nothing is copied but what it may lack: a mark on pixels without value. */
+function singleFlat({ electrons, mask: given }: Frame): FlatPixels {
+  const nUsed = new Uint8Array(electrons.length);
+  let mask = given;
+  for (let at = 0; at < nUsed.length; at++) {
+    if (!Number.isNaN(electrons[at])) {
+      nUsed[at] = given[at] === 0 ? 1 : 0;
+    } else if ((given[at] & MaskBit.missing) === 0) {
+      if (mask === given) mask = given.slice();
+      mask[at] |= MaskBit.missing;
     }
-    electrons[at] = Number.NaN;
-    if (!Number.isNaN(value) || (mask[at] & MaskBit.missing) !== 0) continue;
-    if (mask === frame.mask) mask = mask.slice();
-    mask[at] |= MaskBit.missing;
   }
   return { electrons, mask, nUsed };
 }
@@ -157,8 +151,6 @@ export function groupStep(nx: number): number {
 
 /** One group for each range of columns. */
 export function groupColumns(kernels: Kernels, flat: Flat, ranges: ColumnRange[]): ColumnGroup[] {
-  const { nx, ny, electrons, frame } = flat;
-  const nUsed = flat.nFrame > 1 ? flat.nUsed : undefined;
-  const means = groupMeans(kernels, { nx, ny, electrons, nUsed, noise: frame.noise }, ranges);
+  const means = groupMeans(kernels, { ...flat, noise: flat.frame.noise }, ranges);
   return ranges.map(({ from, to }, g) => ({ x: 0.5 * (from + to - 1), width: to - from, ...means[g] }));
 }

@@ -1,6 +1,7 @@
 /** Frames that are no fibre flat: told from one before any fibre is sought, so that the message names the mistake. */
 import { medianOf, quantileOfSorted, sortedFinite } from "../detector/clip.js";
 import { MaskBit } from "../detector/frame.js";
+import type { Kernels } from "../kernels/module.js";
 import { TraceError } from "./errors.js";
 import type { Peak } from "./find.js";
 import { type Flat, pixelVariance } from "./flat.js";
@@ -16,8 +17,8 @@ const SATURATED_WARNING = 0.002;
 const UNEQUAL = 5;
 
 /** @throws TraceError for a frame without light, with light at isolated columns only, or saturated. */
-export function requireFlat(flat: Flat): void {
-  const contrast = columnContrasts(flat);
+export function requireFlat(kernels: Kernels, flat: Flat): void {
+  const contrast = columnContrasts(kernels, flat);
   const brightest = quantileOfSorted(contrast, 0.98);
   const typical = quantileOfSorted(contrast, 0.5);
   const noise = medianNoise(flat);
@@ -36,17 +37,19 @@ export function requireFlat(flat: Flat): void {
 }
 
 /** Sorted, of a sample of columns: 90 % quantile less 5 % quantile along the slit. */
-function columnContrasts(flat: Flat): Float64Array {
-  const { nx, ny } = flat;
+function columnContrasts(kernels: Kernels, flat: Flat): Float64Array {
+  const { nx, ny, electrons, nUsed } = flat;
   const contrasts: number[] = [];
   const step = Math.max(1, Math.floor(nx / 400));
   const rowStep = Math.max(1, Math.floor(ny / 1200));
+  const bench = kernels.workbench(8 * ny, 1);
+  const values = bench.float64(ny);
   for (let x = 0; x < nx; x += step) {
-    const values: number[] = [];
-    for (let y = 0; y < ny; y += rowStep) if (flat.nUsed[y * nx + x] > 0) values.push(flat.electrons[y * nx + x]);
-    if (values.length < 0.2 * (ny / rowStep)) continue;
-    const sorted = sortedFinite(values);
-    contrasts.push(quantileOfSorted(sorted, 0.95) - quantileOfSorted(sorted, 0.05));
+    let n = 0;
+    for (let at = x; at < nx * ny; at += rowStep * nx) if (nUsed[at] > 0) values[n++] = electrons[at];
+    if (n === 0 || n < 0.2 * (ny / rowStep)) continue;
+    const bright = bench.call.quantile(values.byteOffset, n, 0.95);
+    contrasts.push(bright - bench.call.quantile(values.byteOffset, n, 0.05));
   }
   return sortedFinite(contrasts);
 }

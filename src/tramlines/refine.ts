@@ -2,7 +2,7 @@
  * series through the last one's. */
 import { medianOf } from "../detector/clip.js";
 import type { Kernels } from "../kernels/module.js";
-import { legendreArgument, legendreValue } from "../reference/legendre.js";
+import { legendreArgument, legendreBasis } from "../reference/legendre.js";
 import type { ColumnGroup, Flat } from "./flat.js";
 import { cutIntoGroups, type Guess, type Measured, Meter, START_ERROR } from "./measure.js";
 import type { Naming } from "./name.js";
@@ -130,18 +130,25 @@ function guessFromSeries(
   lit: number[],
   sigma: number,
 ): Guess {
-  const value = (set: SeriesSet, k: number, x: number) => legendreValue(set.coef[k], legendreArgument(x, nx));
-  return {
-    centre: groups.map(({ x }) => Float64Array.from(lit, (k) => value(centres, k, x))),
-    sigma: groups.map(({ x }) =>
-      Float64Array.from(lit, (k) =>
-        widths === undefined ? sigma : Math.max(0.6 * sigma, Math.min(1.8 * sigma, value(widths, k, x))),
-      ),
-    ),
-    slope: groups.map(({ x }) =>
-      Float64Array.from(lit, (k) => 0.5 * (value(centres, k, x + 1) - value(centres, k, x - 1))),
-    ),
+  const valuesAt = (set: SeriesSet, x: number) => {
+    const basis = legendreBasis(legendreArgument(x, nx), set.degree + 1);
+    return Float64Array.from(lit, (k) => dot(basis, set.coef[k]));
   };
+  const guess: Guess = { centre: [], sigma: [], slope: [] };
+  for (const { x } of groups) {
+    const behind = valuesAt(centres, x - 1);
+    guess.centre.push(valuesAt(centres, x));
+    guess.slope.push(valuesAt(centres, x + 1).map((ahead, i) => 0.5 * (ahead - behind[i])));
+    const width = widths === undefined ? new Float64Array(lit.length).fill(sigma) : valuesAt(widths, x);
+    guess.sigma.push(width.map((s) => Math.max(0.6 * sigma, Math.min(1.8 * sigma, s))));
+  }
+  return guess;
+}
+
+function dot(a: Float64Array, b: Float64Array): number {
+  let sum = 0;
+  for (let i = 0; i < a.length; i++) sum += a[i] * b[i];
+  return sum;
 }
 
 function centrePoints(measured: Measured, groups: ColumnGroup[], nx: number, naming: Naming, lit: number[]): Points {

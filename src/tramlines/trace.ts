@@ -41,7 +41,7 @@ export async function traceFlat(
 ): Promise<Tracing> {
   const kernels = await loadKernels();
   const combined = combineFlats([flat].flat());
-  requireFlat(combined);
+  requireFlat(kernels, combined);
   const cut = cutThrough(kernels, combined);
   const peaks = findPeaks(kernels, cut, combined.name);
   const naming = layout === undefined ? numberFibres(peaks, combined.name) : nameFibres(peaks, layout, combined.name);

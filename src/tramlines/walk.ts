@@ -11,6 +11,8 @@ import { type ColumnGroup, type Flat, groupColumns, groupStep } from "./flat.js"
 const STEP_COLUMNS = 8;
 /** Window of the centroids, ± this share of the pitch. */
 const WINDOW_SHARE = 0.5;
+/** Fibres that suffice to show the motion, at the least. */
+const ENOUGH_GUIDES = 200;
 /** Terms of the common motion along the slit. */
 const MOTION_TERMS = 4;
 
@@ -38,7 +40,9 @@ export function walkOutward(
     x: Float64Array.from(groups, (group) => group.x),
     centre: new Float64Array(groups.length * nFibre),
   };
-  const meter = new MotionMeter(kernels, flat.ny, guides, pitch);
+  const oneIn = Math.max(1, Math.floor(guides.length / ENOUGH_GUIDES));
+  const some = guides.filter((_, i) => i % oneIn === 0);
+  const meter = new MotionMeter(kernels, flat.ny, some, pitch);
   const start = path.x.reduce((best, x, step) => (Math.abs(x - x0) < Math.abs(path.x[best] - x0) ? step : best), 0);
   for (const direction of [1, -1]) {
     let here = Float64Array.from(centre, (y) => y + slope * (path.x[start] - x0));
@@ -72,10 +76,9 @@ export function pathAt(path: Path, nFibre: number, x: number): Float64Array {
   const next = Math.min(n - 1, step + 1);
   const span = path.x[next] - path.x[step];
   const share = span > 0 ? (x - path.x[step]) / span : 0;
-  return Float64Array.from({ length: nFibre }, (_, k) => {
-    const here = path.centre[step * nFibre + k];
-    return here + share * (path.centre[next * nFibre + k] - here);
-  });
+  const here = path.centre.subarray(step * nFibre, (step + 1) * nFibre);
+  const there = path.centre.subarray(next * nFibre, (next + 1) * nFibre);
+  return here.map((y, k) => y + share * (there[k] - y));
 }
 
 /** Measures how far all fibres stand from where they are thought. */
@@ -141,6 +144,6 @@ class MotionMeter {
 
 /** Σ c_j P_j(t) for at most four terms. */
 function evaluate(coef: Float64Array, t: number): number {
-  const basis = [1, t, 1.5 * t * t - 0.5, (2.5 * t * t - 1.5) * t];
-  return coef.reduce((sum, c, j) => sum + c * basis[j], 0);
+  const [c0, c1 = 0, c2 = 0, c3 = 0] = coef;
+  return c0 + c1 * t + c2 * (1.5 * t * t - 0.5) + c3 * (2.5 * t * t - 1.5) * t;
 }

@@ -1,5 +1,5 @@
 import { beforeAll, describe, expect, it } from "vitest";
-import type { Frame } from "../../src/detector/frame.js";
+import { type Frame, MaskBit } from "../../src/detector/frame.js";
 import { type Kernels, loadKernels } from "../../src/kernels/module.js";
 import { combineFlats, groupColumns } from "../../src/tramlines/flat.js";
 import { drawFlat, type FlatScene } from "./flatScene.js";
@@ -41,11 +41,22 @@ describe("combining flats", () => {
   });
 
   it("has no value, and says why, where no frame has one", () => {
-    const one = level(900);
+    const [one, other] = [level(900), level(900)];
     one.mask[40] = 2;
-    const flat = combineFlats([one]);
+    other.mask[40] = 6;
+    const flat = combineFlats([one, other]);
     expect(flat.electrons[40]).toBeNaN();
     expect([flat.mask[40], flat.nUsed[40], flat.mask[41]]).toEqual([2, 0, 0]);
+  });
+
+  it("marks what one frame alone does not have, and leaves the frame as it was", () => {
+    const one = level(900);
+    one.mask[40] = 2;
+    one.electrons[41] = Number.NaN;
+    const flat = combineFlats([one]);
+    expect([...flat.nUsed.subarray(39, 43)]).toEqual([1, 0, 0, 1]);
+    expect([...flat.mask.subarray(39, 43)]).toEqual([0, 2, MaskBit.missing, 0]);
+    expect(one.mask[41]).toBe(0);
   });
 
   it("averages columns without their cosmic rays, with the variance of what is left", () => {
