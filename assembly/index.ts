@@ -16,7 +16,7 @@ export {
   settleTile64,
 } from "./extract";
 export { groupMeans, groupMedians } from "./groups";
-export { legendreFitClipped, legendreValue } from "./legendre";
+export { legendreBases, legendreFits, legendreValue } from "./legendre";
 export { median, quantile } from "./median";
 export { pixelsToFloat32, pixelsToFloat64 } from "./pixels";
 export { gaussianWeights64 } from "./profile";

@@ -142,6 +142,25 @@ describe("robust fit", () => {
     );
   });
 
+  it("gives each of many series what it gives it alone, bit for bit", () => {
+    const t = Array.from({ length: 40 }, (_, i) => -1 + i / 20);
+    // Five series, an odd number, of which each has other outliers, holes and scatter: they settle in other turns.
+    const noise = (i: number) => ((i * 7919) % 1013) / 1013 - 0.5;
+    const series = [0, 1, 2, 3, 4].map((s) => ({
+      y: t.map((v, i) => s + v * v + 0.02 * noise(i + 40 * s) + ((i + s) % 13 === 3 ? 0.04 * (s + 1) * (i % 5) : 0)),
+      weight: t.map((_, i) => (i % 11 === s ? 0 : 1 + ((i * s) % 3))),
+    }));
+    const all = new LegendreFitter(kernels, 40, 5, 5).fitAll(t, series, 4, 3, 10);
+    series.forEach(({ y, weight }, s) => {
+      expect(all[s]).toEqual(new LegendreFitter(kernels, 40, 5).fit(t, y, weight, 4, 3, 10));
+      expect([...all[s].used]).toEqual([...legendreFitClipped(t, y, weight, 4, 3, 10).used]);
+    });
+    expect(new Set(all.map(({ used }) => used.join(""))).size).toBe(5);
+    expect(() => new LegendreFitter(kernels, 40, 5, 4).fitAll(t, series, 4, 3, 10)).toThrow(
+      "5 series, but the fitter holds 4",
+    );
+  });
+
   it("leaves out exactly the outliers and returns the line through the rest", () => {
     const t = Array.from({ length: 31 }, (_, i) => -1 + i / 15);
     const y = t.map((v, i) => 5 + 2 * v + 0.001 * (((i * 17) % 7) - 3));

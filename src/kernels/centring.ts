@@ -76,7 +76,9 @@ export class Centring {
     };
     const nScratch = Object.values(scratch).reduce((sum, length) => sum + length, CentringWord.count);
     const nShared = nPair * (5 * nRow + 2 * nFibre + 2 * n + nBack + 5) + nRow * nBack + CentringNumber.count;
-    this.bench = kernels.workbench(16 * (nShared + MOST_THREADS * nScratch), 13 * (MOST_THREADS + 1));
+    // One pair is one thread's, whichever takes it.
+    const nThread = nPair === 1 ? 1 : MOST_THREADS;
+    this.bench = kernels.workbench(16 * (nShared + nThread * nScratch), 14 * (nThread + 1));
     const pairs = (length: number) => this.bench.float64(2 * nPair * length);
     this.views = {
       data: pairs(nRow),
@@ -106,7 +108,7 @@ export class Centring {
     }
     this.words[CentringWord.rowBasis] = rowBasis.byteOffset;
     this.words[CentringWord.numbers] = this.numbers.byteOffset;
-    this.jobs = Array.from({ length: Math.min(MOST_THREADS, this.bench.nThread) }, () => {
+    const jobs = Array.from({ length: Math.min(nThread, this.bench.nThread) }, () => {
       for (const [word, length] of Object.entries(scratch)) {
         this.words[Number(word)] = this.bench.float64(2 * length).byteOffset;
       }
@@ -114,6 +116,7 @@ export class Centring {
       job.set(this.words);
       return job;
     });
+    this.jobs = Array.from({ length: Math.min(MOST_THREADS, this.bench.nThread) }, (_, t) => jobs[t] ?? jobs[0]);
   }
 
   /** Puts a column in its place; the first weights come from its data.

@@ -74,17 +74,8 @@ export interface KernelExports {
 
   /** assembly/legendre.ts */
   legendreValue(coefPtr: number, nCoef: number, t: number): number;
-  legendreFitClipped(
-    tPtr: number,
-    yPtr: number,
-    weightPtr: number,
-    n: number,
-    nCoef: number,
-    kappa: number,
-    maxRounds: number,
-    coefPtr: number,
-    scratchPtr: number,
-  ): number;
+  legendreBases(jobPtr: number): void;
+  legendreFits(jobPtr: number, tile: number): void;
 
   /** assembly/centring.ts */
   centreColumns(jobPtr: number, tile: number): void;

@@ -1,5 +1,6 @@
 /** Centres and widths of all lit fibres in groups of columns over the whole flat, by joint linearised centring about
  * where the fibres are thought to be. */
+import { medianOf } from "../detector/clip.js";
 import { Centring, type CentringResult, type Misfit } from "../kernels/centring.js";
 import { Centroider } from "../kernels/centroid.js";
 import type { Kernels } from "../kernels/module.js";
@@ -47,6 +48,8 @@ export interface Guess {
 export interface Measured {
   light: Float64Array[];
   lightVariance: Float64Array[];
+  /** nFibre: over the groups. */
+  medianLight: Float64Array;
   centre: Float64Array[];
   /** px², from pixel noise and the profile's own error. */
   centreVariance: Float64Array[];
@@ -107,7 +110,10 @@ export class Meter {
   measure(guess: Guess, { nPar, nRound, relativeError, reject, oneIn }: MeasureRounds): Measured {
     const indices = this.indicesOf(oneIn);
     indices.forEach((g, i) => {
-      const sigma = guess.sigma[i].map((s, k) => Math.sqrt(s * s + smear(this.groups[g], guess.slope[i][k])));
+      const sigma = new Float64Array(this.nFibre);
+      for (let k = 0; k < sigma.length; k++) {
+        sigma[k] = Math.sqrt(guess.sigma[i][k] ** 2 + smear(this.groups[g], guess.slope[i][k]));
+      }
       for (const column of this.columnsOf(g)) this.centring.guess(column, { centre: guess.centre[i], sigma });
     });
     const rejectError = Math.max(START_ERROR, relativeError);
@@ -117,6 +123,7 @@ export class Meter {
     const measured: Measured = {
       light: perGroup(),
       lightVariance: perGroup(),
+      medianLight: new Float64Array(this.nFibre),
       centre: perGroup(),
       centreVariance: perGroup(),
       sigma: perGroup(),
@@ -129,6 +136,11 @@ export class Meter {
       this.keep(this.groups[g], i, guess, result, nPar, measured);
       measured.background.push(result.background);
     });
+    const light = new Float64Array(indices.length);
+    for (let k = 0; k < this.nFibre; k++) {
+      for (let i = 0; i < light.length; i++) light[i] = measured.light[i][k];
+      measured.medianLight[k] = medianOf(light);
+    }
     measured.relativeError = profileError(indices.map((g) => this.centring.misfit(this.columnsOf(g)[0])));
     return measured;
   }

@@ -1,6 +1,5 @@
 /** From the walk to series: centres and widths of all lit fibres over the whole flat, in rounds that each start from the
  * series through the last one's. */
-import { medianOf } from "../detector/clip.js";
 import type { Kernels } from "../kernels/module.js";
 import { legendreArgument, legendreBasis } from "../reference/legendre.js";
 import type { ColumnGroup, Flat } from "./flat.js";
@@ -94,7 +93,7 @@ export function refine(
     widths: widths as SeriesSet,
     groups,
     seen: lit.map((k) => Uint8Array.from(points.weight[k], (w) => (w > 0 ? 1 : 0))),
-    light: Float64Array.from(lit, (_, i) => medianOf(measured.light.map((light) => light[i]))),
+    light: measured.medianLight,
     relativeError: measured.relativeError,
   };
 }
@@ -130,25 +129,36 @@ function guessFromSeries(
   lit: number[],
   sigma: number,
 ): Guess {
-  const valuesAt = (set: SeriesSet, x: number) => {
-    const basis = legendreBasis(legendreArgument(x, nx), set.degree + 1);
-    return Float64Array.from(lit, (k) => dot(basis, set.coef[k]));
-  };
+  const centreAt = seriesOf(centres, lit, nx);
+  const widthAt = widths === undefined ? () => new Float64Array(lit.length).fill(sigma) : seriesOf(widths, lit, nx);
   const guess: Guess = { centre: [], sigma: [], slope: [] };
   for (const { x } of groups) {
-    const behind = valuesAt(centres, x - 1);
-    guess.centre.push(valuesAt(centres, x));
-    guess.slope.push(valuesAt(centres, x + 1).map((ahead, i) => 0.5 * (ahead - behind[i])));
-    const width = widths === undefined ? new Float64Array(lit.length).fill(sigma) : valuesAt(widths, x);
-    guess.sigma.push(width.map((s) => Math.max(0.6 * sigma, Math.min(1.8 * sigma, s))));
+    const [centre, ahead, behind] = [centreAt(x), centreAt(x + 1), centreAt(x - 1)];
+    const width = widthAt(x);
+    const slope = new Float64Array(lit.length);
+    for (let i = 0; i < lit.length; i++) {
+      slope[i] = 0.5 * (ahead[i] - behind[i]);
+      width[i] = Math.max(0.6 * sigma, Math.min(1.8 * sigma, width[i]));
+    }
+    guess.centre.push(centre);
+    guess.slope.push(slope);
+    guess.sigma.push(width);
   }
   return guess;
 }
 
-function dot(a: Float64Array, b: Float64Array): number {
-  let sum = 0;
-  for (let i = 0; i < a.length; i++) sum += a[i] * b[i];
-  return sum;
+/** The series of some fibres in column x. */
+function seriesOf(set: SeriesSet, fibres: number[], nx: number): (x: number) => Float64Array {
+  const nCoef = set.degree + 1;
+  const coef = Float64Array.from(fibres.flatMap((k) => [...set.coef[k]]));
+  return (x) => {
+    const basis = legendreBasis(legendreArgument(x, nx), nCoef);
+    const values = new Float64Array(fibres.length);
+    for (let i = 0, at = 0; i < values.length; i++) {
+      for (let j = 0; j < nCoef; j++, at++) values[i] += basis[j] * coef[at];
+    }
+    return values;
+  };
 }
 
 function centrePoints(measured: Measured, groups: ColumnGroup[], nx: number, naming: Naming, lit: number[]): Points {
@@ -179,7 +189,7 @@ function pointsOf(
     slit: naming.centre,
   };
   lit.forEach((k, i) => {
-    const faintest = SEEN_SHARE * medianOf(measured.light.map((light) => light[i]));
+    const faintest = SEEN_SHARE * measured.medianLight[i];
     for (let g = 0; g < nGroup; g++) {
       const light = measured.light[g][i];
       const isSeen = light > faintest && light > KAPPA_SEEN * Math.sqrt(measured.lightVariance[g][i]);

@@ -1,7 +1,7 @@
 /** Legendre series along x for every fibre, from measured points: fitted robustly where the fibre was seen, and filled from
  * a smooth surface over (slit, x) where it was not. */
 import { medianOf } from "../detector/clip.js";
-import { LegendreFitter } from "../kernels/legendre.js";
+import { type LegendreFit, LegendreFitter, type LegendrePoints } from "../kernels/legendre.js";
 import type { Kernels } from "../kernels/module.js";
 import { legendreArgument, legendreValue } from "../reference/legendre.js";
 
@@ -30,6 +30,10 @@ export interface SeriesSet {
 
 const KAPPA = 4;
 const MAX_ROUNDS = 10;
+/** Fibres that the degree is chosen by, at the most, and in how many turns points are held out. */
+const SAMPLE = 60;
+const TURNS = 5;
+const MAX_HELD_OUT = SAMPLE * TURNS;
 /** A fibre seen over less than this share of the columns keeps only a low-order difference from its neighbours. */
 const WHOLE_SHARE = 0.85;
 const PARTIAL_TERMS = 2;
@@ -45,7 +49,12 @@ export class SeriesFitter {
     private readonly points: Points,
     maxDegree: number,
   ) {
-    this.fitter = new LegendreFitter(kernels, points.x.length, maxDegree + 1);
+    this.fitter = new LegendreFitter(
+      kernels,
+      points.x.length,
+      maxDegree + 1,
+      Math.max(points.value.length, MAX_HELD_OUT),
+    );
     this.t = points.x.map((x) => legendreArgument(x, points.nx));
   }
 
@@ -60,16 +69,22 @@ export class SeriesFitter {
       rms: new Float64Array(nFibre).fill(Number.NaN),
       nPoint: new Int32Array(nFibre),
     };
-    const whole: number[] = [];
-    for (let k = 0; k < nFibre; k++) {
-      if (coverage[k] < WHOLE_SHARE || count(weight[k]) < 2 * (degree + 1)) continue;
-      this.fitOne(k, degree, set);
-      whole.push(k);
-    }
+    const whole = Array.from(weight.keys()).filter(
+      (k) => coverage[k] >= WHOLE_SHARE && count(weight[k]) >= 2 * (degree + 1),
+    );
+    const isWhole = new Uint8Array(nFibre);
+    this.fitSeries(
+      whole.map((k) => ({ y: value[k], weight: weight[k] })),
+      degree,
+    ).forEach((fit, i) => {
+      isWhole[whole[i]] = 1;
+      set.coef[whole[i]].set(fit.coef);
+      this.noteScatter(whole[i], fit.used, set);
+    });
     // When no fibre is whole there is no surface to lean on: each is fitted to what was seen of it, at low order.
     const models = whole.length > 0 ? whole : this.fitStubs(coverage, degree, set);
     for (let k = 0; k < nFibre; k++) {
-      if (whole.includes(k) || (models !== whole && models.includes(k))) continue;
+      if (isWhole[k] === 1 || (models !== whole && models.includes(k))) continue;
       const surface = this.fromNeighbours(k, models, set);
       set.coef[k] = count(weight[k]) > 2 * PARTIAL_TERMS ? this.correctSurface(k, surface, set) : surface;
     }
@@ -82,41 +97,44 @@ export class SeriesFitter {
     const { weight } = this.points;
     const eligible = weight.flatMap((w, k) => (this.coverage(w) >= WHOLE_SHARE && count(w) > 4 * maxDegree ? [k] : []));
     if (eligible.length === 0) return Math.min(3, maxDegree);
-    const step = Math.ceil(eligible.length / 60);
+    const step = Math.ceil(eligible.length / SAMPLE);
     const sample = eligible.filter((_, i) => i % step === 0);
     const errors: number[] = [];
-    for (let degree = minDegree; degree <= maxDegree; degree++) {
-      errors.push(medianOf(sample.map((k) => this.heldOutError(k, degree))));
-    }
+    for (let degree = minDegree; degree <= maxDegree; degree++)
+      errors.push(medianOf(this.heldOutErrors(sample, degree)));
     const best = Math.min(...errors);
     return minDegree + errors.findIndex((error) => error <= 1.02 * best);
   }
 
-  /** Robust size of what points held out differ from the series through the others, px. */
-  private heldOutError(k: number, degree: number): number {
+  /** Of each fibre the robust size of what points held out differ from the series through the others, px. */
+  private heldOutErrors(fibres: number[], degree: number): number[] {
     const { value, weight } = this.points;
-    const off: number[] = [];
     const chunk = Math.max(1, Math.floor(this.t.length / 40));
-    for (let turn = 0; turn < 5; turn++) {
-      const isOut = (g: number) => Math.floor(g / chunk) % 5 === turn;
-      const { coef } = this.fitter.fit(
-        this.t,
-        value[k],
-        weight[k].map((w, g) => (isOut(g) ? 0 : w)),
-        degree + 1,
-        KAPPA,
-        MAX_ROUNDS,
-      );
-      for (let g = 0; g < this.t.length; g++) {
-        if (isOut(g) && weight[k][g] > 0) off.push(Math.abs(value[k][g] - legendreValue(coef, this.t[g])));
+    const isOut = (g: number, turn: number) => Math.floor(g / chunk) % TURNS === turn;
+    const turns = Array.from({ length: TURNS }, (_, turn) => turn);
+    const series = fibres.flatMap((k) =>
+      turns.map((turn) => ({ y: value[k], weight: weight[k].map((w, g) => (isOut(g, turn) ? 0 : w)) })),
+    );
+    const fits = this.fitSeries(series, degree);
+    return fibres.map((k, i) => {
+      const off: number[] = [];
+      for (const turn of turns) {
+        const { coef } = fits[i * TURNS + turn];
+        for (let g = 0; g < this.t.length; g++) {
+          if (isOut(g, turn) && weight[k][g] > 0) off.push(Math.abs(value[k][g] - legendreValue(coef, this.t[g])));
+        }
       }
-    }
-    return medianOf(off);
+      return medianOf(off);
+    });
+  }
+
+  private fitSeries(series: LegendrePoints[], degree: number): LegendreFit[] {
+    return series.length === 0 ? [] : this.fitter.fitAll(this.t, series, degree + 1, KAPPA, MAX_ROUNDS);
   }
 
   private fitOne(k: number, degree: number, set: SeriesSet): void {
     const { value, weight } = this.points;
-    const fit = this.fitter.fit(this.t, value[k], weight[k], degree + 1, KAPPA, MAX_ROUNDS);
+    const [fit] = this.fitSeries([{ y: value[k], weight: weight[k] }], degree);
     set.coef[k].set(fit.coef);
     this.noteScatter(k, fit.used, set);
   }
@@ -192,5 +210,7 @@ export class SeriesFitter {
 }
 
 function count(weight: Float64Array): number {
-  return weight.reduce((n, w) => n + (w > 0 ? 1 : 0), 0);
+  let n = 0;
+  for (let g = 0; g < weight.length; g++) if (weight[g] > 0) n++;
+  return n;
 }
