@@ -1,7 +1,6 @@
-// The module is found beside the file that loads it, in src/ as in dist/.
+// Modules, and the scripts of their threads, are found beside the file that loads them, in src/ as in dist/.
 import { copyFileSync } from "node:fs";
 
-copyFileSync(
-  new URL("../src/kernels/hatchel.wasm", import.meta.url),
-  new URL("../dist/kernels/hatchel.wasm", import.meta.url),
-);
+for (const name of ["hatchel.wasm", "hatchel.shared.wasm", "worker.js", "desk.js"]) {
+  copyFileSync(new URL(`../src/kernels/${name}`, import.meta.url), new URL(`../dist/kernels/${name}`, import.meta.url));
+}

@@ -6,18 +6,28 @@
  * A Workbench is sized once and never grows, so its views stay valid for its whole life; it is released
  * with the last reference to it. */
 import type { KernelExports, TileKernel } from "./exports.js";
+import type { Team } from "./team.js";
 
 const PAGE_BYTES = 65536;
+const MOST_PAGES = 65536;
+const MOST_THREADS = 16;
 const ALIGN_BYTES = 64;
 
 /** The compiled kernels. Cheap to keep; hold a Workbench only as long as its job lasts. */
 export class Kernels {
-  /** Threads of every workbench. */
-  readonly nThread = 1;
   private readonly heapBase: number;
 
-  constructor(private readonly module: WebAssembly.Module) {
-    this.heapBase = instantiate(module, new WebAssembly.Memory({ initial: 1 })).heapBase();
+  /** `team`: threads, when `module` is built for shared memory. */
+  constructor(
+    private readonly module: WebAssembly.Module,
+    private readonly team?: Team,
+  ) {
+    this.heapBase = instantiate(module, this.memory(1)).heapBase();
+  }
+
+  /** Threads of every workbench. */
+  get nThread(): number {
+    return this.team?.nThread ?? 1;
   }
 
   /** A fresh memory with room for `nBytes` handed out in at most `nPieces` pieces.
@@ -25,9 +35,15 @@ export class Kernels {
   workbench(nBytes: number, nPieces = 64): Workbench {
     const total = this.heapBase + nBytes + (nPieces + 1) * ALIGN_BYTES;
     const pages = Math.ceil(total / PAGE_BYTES);
-    if (pages > 65536) throw new RangeError(`The job needs ${gib(total)} GiB of kernel memory; 4 GiB is the limit.`);
-    const memory = new WebAssembly.Memory({ initial: pages });
-    return new Workbench(instantiate(this.module, memory), memory, this.heapBase);
+    if (pages > MOST_PAGES)
+      throw new RangeError(`The job needs ${gib(total)} GiB of kernel memory; 4 GiB is the limit.`);
+    const memory = this.memory(pages);
+    return new Workbench(instantiate(this.module, memory), memory, this.heapBase, this.team);
+  }
+
+  private memory(pages: number): WebAssembly.Memory {
+    if (this.team === undefined) return new WebAssembly.Memory({ initial: pages });
+    return new WebAssembly.Memory({ initial: pages, maximum: MOST_PAGES, shared: true });
   }
 }
 
@@ -39,38 +55,49 @@ export class Workbench {
     readonly call: KernelExports,
     readonly memory: WebAssembly.Memory,
     heapBase: number,
-    /** Threads that `share` hands tiles to. */
-    readonly nThread = 1,
+    private readonly team?: Team,
   ) {
     this.next = heapBase;
+  }
+
+  /** Threads that `share` hands tiles to. */
+  get nThread(): number {
+    return this.team?.nThread ?? 1;
   }
 
   /** Runs `kernel(job, tile)` for `nTile` tiles from number `first` on, each once and in no certain order, and returns when
    * all are done. `jobs`: a pointer for each of the `nThread` threads, each with scratch of its own; tiles write to places
    * of their own, so that the outcome does not depend on who ran which. */
   share(kernel: TileKernel, jobs: readonly number[], nTile: number, first = 0): void {
+    if (this.team !== undefined && nTile > 1) return this.team.share(this, kernel, jobs, nTile, first);
     for (let tile = first; tile < first + nTile; tile++) this.call[kernel](jobs[0], tile);
   }
 
   float32(n: number): Float32Array<ArrayBuffer> {
-    return new Float32Array(this.memory.buffer, this.reserve(4 * n), n);
+    return new Float32Array(this.buffer, this.reserve(4 * n), n);
   }
 
   float64(n: number): Float64Array<ArrayBuffer> {
-    return new Float64Array(this.memory.buffer, this.reserve(8 * n), n);
+    return new Float64Array(this.buffer, this.reserve(8 * n), n);
   }
 
   int32(n: number): Int32Array<ArrayBuffer> {
-    return new Int32Array(this.memory.buffer, this.reserve(4 * n), n);
+    return new Int32Array(this.buffer, this.reserve(4 * n), n);
   }
 
   uint8(n: number): Uint8Array<ArrayBuffer> {
-    return new Uint8Array(this.memory.buffer, this.reserve(n), n);
+    return new Uint8Array(this.buffer, this.reserve(n), n);
   }
 
   /** Forgets the pieces behind `last`: their places are handed out anew. */
   keepUpTo(last: ArrayBufferView): void {
     this.next = last.byteOffset + last.byteLength;
+  }
+
+  /** TypeScript tells shared buffers from others; what is done with these views is right for both, but for the few things that
+   * refuse shared ones (TextDecoder, for one). */
+  private get buffer(): ArrayBuffer {
+    return this.memory.buffer as ArrayBuffer;
   }
 
   private reserve(nBytes: number): number {
@@ -84,17 +111,45 @@ export class Workbench {
 }
 
 let loading: Promise<Kernels> | undefined;
+let threads = 1;
+
+/** How many threads kernels take from here on; 1, the default, until this is called. Where shared memory is not allowed they
+ * stay one. Results do not depend on it, to the last bit.
+ * @throws RangeError for less than one. */
+export function useThreads(nThread: number): void {
+  if (!Number.isInteger(nThread) || nThread < 1 || nThread > MOST_THREADS) {
+    throw new RangeError(`${nThread} threads; 1 to ${MOST_THREADS} are possible.`);
+  }
+  if (nThread === threads) return;
+  threads = nThread;
+  loading = undefined;
+}
 
 /** Loads the kernels when first asked for and keeps them.
- * `source`: where the module lies (default: beside this file), or its bytes.
+ * `source`: where the module lies (default: beside this file), or its bytes; they run on one thread then.
  * @throws Error when what is found there is not a WebAssembly module. */
 export function loadKernels(source?: URL | Uint8Array): Promise<Kernels> {
-  if (source !== undefined) return compile(source);
-  loading ??= compile(new URL("./hatchel.wasm", import.meta.url));
+  if (source !== undefined) return compile(source).then((module) => new Kernels(module));
+  loading ??= threads > 1 && maySharedMemory() ? loadShared(threads) : loadAlone();
   return loading;
 }
 
-async function compile(source: URL | Uint8Array): Promise<Kernels> {
+async function loadAlone(): Promise<Kernels> {
+  return new Kernels(await compile(new URL("./hatchel.wasm", import.meta.url)));
+}
+
+async function loadShared(nThread: number): Promise<Kernels> {
+  const module = await compile(new URL("./hatchel.shared.wasm", import.meta.url));
+  const { Team } = await import("./team.js");
+  return new Kernels(module, await Team.start(module, nThread));
+}
+
+/** Node has shared memory and threads; a page only when it is isolated from other origins, and there is no door for it yet. */
+function maySharedMemory(): boolean {
+  return typeof SharedArrayBuffer !== "undefined" && typeof process !== "undefined" && !!process.versions?.node;
+}
+
+async function compile(source: URL | Uint8Array): Promise<WebAssembly.Module> {
   const bytes = source instanceof Uint8Array ? source : await fetchBytes(source);
   const magic = [0x00, 0x61, 0x73, 0x6d];
   if (magic.some((byte, i) => bytes[i] !== byte)) {
@@ -102,7 +157,7 @@ async function compile(source: URL | Uint8Array): Promise<Kernels> {
     const where = source instanceof Uint8Array ? "the bytes given" : source.pathname;
     throw new Error(`${where}: starts with ${found}, but a WebAssembly module starts with 00 61 73 6d; rebuild it.`);
   }
-  return new Kernels(await WebAssembly.compile(bytes as BufferSource));
+  return WebAssembly.compile(bytes as BufferSource);
 }
 
 async function fetchBytes(url: URL): Promise<Uint8Array> {

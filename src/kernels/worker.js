@@ -1,0 +1,53 @@
+/** A thread that helps with a workbench's tiles. Plain JavaScript, since it is found by its file's name in src/ as in dist/.
+ *
+ * A message brings a memory, the module and the memory's desk (see team.ts); the thread then waits at the desk for work,
+ * deaf to other messages, until the desk is closed. */
+import { parentPort } from "node:worker_threads";
+import { CLOSED, Desk } from "./desk.js";
+
+parentPort?.on("message", ({ module, memory, desk, kernels, thread }) => {
+  const abort = () => {
+    throw new Error("A kernel stopped at an impossible state.");
+  };
+  const call = new WebAssembly.Instance(module, { env: { memory, abort } }).exports;
+  serve(desk, (kernel, job, tile) => call[kernels[kernel]](job, tile), thread);
+});
+
+/**
+ * @param {Int32Array} desk
+ * @param {(kernel: number, job: number, tile: number) => void} run
+ * @param {number} thread
+ */
+function serve(desk, run, thread) {
+  let seen = 0;
+  for (;;) {
+    Atomics.wait(desk, Desk.turn, seen);
+    seen = Atomics.load(desk, Desk.turn);
+    if (seen === CLOSED) return;
+    Atomics.add(desk, Desk.atWork, 1);
+    // Only now: whoever counts nobody at work after closing the turn may change what lies on the desk.
+    if (Atomics.load(desk, Desk.open) === 1) {
+      try {
+        takeTiles(desk, run, thread);
+      } catch {
+        Atomics.store(desk, Desk.failed, 1);
+      }
+    }
+    Atomics.sub(desk, Desk.atWork, 1);
+    Atomics.notify(desk, Desk.atWork);
+  }
+}
+
+/**
+ * @param {Int32Array} desk
+ * @param {(kernel: number, job: number, tile: number) => void} run
+ * @param {number} thread
+ */
+function takeTiles(desk, run, thread) {
+  const kernel = desk[Desk.kernel];
+  const job = desk[Desk.jobs + thread];
+  const end = desk[Desk.end];
+  for (let tile = Atomics.add(desk, Desk.next, 1); tile < end; tile = Atomics.add(desk, Desk.next, 1)) {
+    run(kernel, job, tile);
+  }
+}
