@@ -1,6 +1,7 @@
 /** The options that commands share, with what their values may be. */
 import { type Command, Option } from "commander";
 import type { Precision } from "../kernels/banded.js";
+import { mostThreads } from "../kernels/module.js";
 import type { Method } from "../reference/extract.js";
 import type { ProfileKind } from "../tramlines/profiles.js";
 import type { CommonOptions } from "./perform.js";
@@ -48,7 +49,13 @@ export function addFrameOptions(command: Command): Command {
     .option("--dark <file...>", "dark frames, combined and taken off by the exposure's time")
     .option("--pixel-flat <file...>", "frames of an evenly lit detector, divided by")
     .option("--bad-pixels <file>", "image of the assembled frame, not 0 where a pixel is bad")
-    .addOption(hduOption());
+    .addOption(hduOption())
+    .addOption(threadsOption());
+}
+
+function threadsOption(): Option {
+  const option = new Option("--threads <n>", "how many work at once; all cores unless told otherwise");
+  return option.argParser(wholeNumber("--threads", 1, mostThreads));
 }
 
 export function hduOption(): Option {
@@ -170,9 +177,10 @@ function positive(option: string): (text: string) => number {
   };
 }
 
-function wholeNumber(option: string): (text: string) => number {
+function wholeNumber(option: string, least = 0, most = 999_999): (text: string) => number {
   return (text) => {
-    if (/^\d{1,6}$/.test(text)) return Number(text);
-    throw new UsageError(`hatchel: ${option} is '${text}'; it must be a whole number, 0 or more.`);
+    if (/^\d{1,6}$/.test(text) && Number(text) >= least && Number(text) <= most) return Number(text);
+    const range = most === 999_999 ? `${least} or more` : `${least} to ${most}`;
+    throw new UsageError(`hatchel: ${option} is '${text}'; it must be a whole number, ${range}.`);
   };
 }

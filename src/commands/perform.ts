@@ -1,5 +1,7 @@
 /** Runs a command's work and says what came of it: a report for people or one JSON object on standard output, what was
  * assumed and what looks wrong on standard error. */
+import { availableParallelism } from "node:os";
+import { mostThreads, useThreads } from "../kernels/module.js";
 import type { CommandName, JsonOf } from "./json.js";
 import { openProgress, type Progress } from "./progress.js";
 import { UsageError } from "./usage.js";
@@ -8,6 +10,7 @@ import { version } from "./version.js";
 export interface CommonOptions {
   json?: boolean;
   quiet?: boolean;
+  threads?: number;
   /** "-": the product goes to standard output, the report to standard error. */
   output?: string;
 }
@@ -33,6 +36,7 @@ export async function perform<C extends CommandName>(
   if (options.json && options.output === "-") {
     throw new UsageError(`hatchel ${command}: --json and -o - both write to standard output; give -o a file's name.`);
   }
+  useThreads(options.threads ?? Math.min(availableParallelism(), mostThreads));
   const progress = await openProgress(options.quiet === true);
   let outcome: Outcome<C>;
   try {

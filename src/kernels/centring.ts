@@ -31,8 +31,6 @@ export interface Misfit {
 /** Two columns go in the lanes of one pair while no fibre moves by more than this between them, pixels. */
 const MAX_APART = 4;
 const MOST_PAR = 3;
-/** Scratch is reserved for so many threads; what nobody touches costs nothing. */
-const MOST_THREADS = 16;
 
 type Rows = "data" | "good" | "fixedVariance" | "variancePerElectron" | "model";
 type Views = Record<Rows | "centre" | "sigma" | "solution" | "variance" | "background" | "misfit", Float64Array>;
@@ -77,7 +75,7 @@ export class Centring {
     const nScratch = Object.values(scratch).reduce((sum, length) => sum + length, CentringWord.count);
     const nShared = nPair * (5 * nRow + 2 * nFibre + 2 * n + nBack + 5) + nRow * nBack + CentringNumber.count;
     // One pair is one thread's, whichever takes it.
-    const nThread = nPair === 1 ? 1 : MOST_THREADS;
+    const nThread = nPair === 1 ? 1 : kernels.nThread;
     this.bench = kernels.workbench(16 * (nShared + nThread * nScratch), 14 * (nThread + 1));
     const pairs = (length: number) => this.bench.float64(2 * nPair * length);
     this.views = {
@@ -108,7 +106,7 @@ export class Centring {
     }
     this.words[CentringWord.rowBasis] = rowBasis.byteOffset;
     this.words[CentringWord.numbers] = this.numbers.byteOffset;
-    const jobs = Array.from({ length: Math.min(nThread, this.bench.nThread) }, () => {
+    const jobs = Array.from({ length: nThread }, () => {
       for (const [word, length] of Object.entries(scratch)) {
         this.words[Number(word)] = this.bench.float64(2 * length).byteOffset;
       }
@@ -116,7 +114,7 @@ export class Centring {
       job.set(this.words);
       return job;
     });
-    this.jobs = Array.from({ length: Math.min(MOST_THREADS, this.bench.nThread) }, (_, t) => jobs[t] ?? jobs[0]);
+    this.jobs = Array.from({ length: this.bench.nThread }, (_, t) => jobs[t] ?? jobs[0]);
   }
 
   /** Puts a column in its place; the first weights come from its data.

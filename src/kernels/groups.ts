@@ -7,8 +7,6 @@ import type { Kernels, Workbench } from "./module.js";
 const CHUNK_PIXELS = 2 ** 20;
 /** Numbers that kernels may read past the last one. */
 const MARGIN = 4;
-/** Scratch is reserved for so many threads; what nobody touches costs nothing. */
-const MOST_THREADS = 16;
 
 /** Means of groups of columns, in the order given; see src/reference/groups.ts.
  * @param chunkPixels how many pixels lie in kernel memory at once, roughly.
@@ -67,8 +65,8 @@ class Chunk {
     const nNetwork = [...networks.values()].reduce((sum, network) => sum + network.length, 0);
     const scratch = 4 * (Math.max(...widths) + 3);
     const nWord = 4 * nPixel + nBand * this.span + nNetwork + 4 * nGroup + 9 * nGroup * this.nRow + this.nRow + MARGIN;
-    const nBytes = 4 * nWord + nPixel + 4 * MOST_THREADS * (scratch + GroupWord.count);
-    this.bench = kernels.workbench(nBytes, 20 + networks.size + 2 * MOST_THREADS);
+    const nBytes = 4 * nWord + nPixel + 4 * kernels.nThread * (scratch + GroupWord.count);
+    this.bench = kernels.workbench(nBytes, 20 + networks.size + 2 * kernels.nThread);
     const { bench } = this;
 
     const placed = new Map(Array.from(networks, ([width, network]) => [width, this.place(network)]));
@@ -100,7 +98,7 @@ class Chunk {
     words[GroupWord.nKept] = this.out.count.byteOffset;
     words[GroupWord.meanFixed] = this.out.fixedVariance.byteOffset;
     words[GroupWord.meanPerElectron] = this.out.variancePerElectron.byteOffset;
-    this.jobs = Array.from({ length: Math.min(MOST_THREADS, bench.nThread) }, () => {
+    this.jobs = Array.from({ length: bench.nThread }, () => {
       words[GroupWord.scratch] = bench.float32(scratch).byteOffset;
       return this.place(words);
     });

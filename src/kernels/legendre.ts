@@ -16,9 +16,6 @@ export interface LegendrePoints {
   weight: ArrayLike<number>;
 }
 
-/** Scratch is reserved for so many threads; what nobody touches costs nothing. */
-const MOST_THREADS = 16;
-
 /** Fits up to `maxSeries` series of up to `maxPoint` points with up to `maxCoef` coefficients. */
 export class LegendreFitter {
   private readonly bench: Workbench;
@@ -37,7 +34,7 @@ export class LegendreFitter {
   ) {
     const nPair = Math.ceil(maxSeries / 2);
     // One tile is one thread's, whichever takes it.
-    const nThread = nPair === 1 ? 1 : MOST_THREADS;
+    const nThread = nPair === 1 ? 1 : kernels.nThread;
     const nScratch = 6 * maxPoint + 2 * maxCoef * (maxCoef + 1) + LegendreWord.count;
     const nShared = maxPoint * (1 + maxCoef) + 2 * nPair * (2 * maxPoint + maxCoef) + 1;
     this.bench = kernels.workbench(8 * (nShared + nThread * nScratch), 6 + 6 * nThread);
@@ -48,7 +45,7 @@ export class LegendreFitter {
     this.coef = bench.float64(2 * nPair * maxCoef);
     this.kappa = bench.float64(1);
     const basis = bench.float64(maxPoint * maxCoef);
-    const scratch = Array.from({ length: Math.min(nThread, bench.nThread) }, () => {
+    const scratch = Array.from({ length: nThread }, () => {
       const words = new Int32Array(LegendreWord.count);
       words[LegendreWord.kappa] = this.kappa.byteOffset;
       words[LegendreWord.t] = this.t.byteOffset;
@@ -65,10 +62,7 @@ export class LegendreFitter {
       job.set(words);
       return job;
     });
-    this.jobs = Array.from(
-      { length: Math.min(MOST_THREADS, bench.nThread) },
-      (_, thread) => scratch[thread] ?? scratch[0],
-    );
+    this.jobs = Array.from({ length: bench.nThread }, (_, thread) => scratch[thread] ?? scratch[0]);
   }
 
   /** One series; see `fitAll`. */

@@ -10,7 +10,8 @@ import type { Team } from "./team.js";
 
 const PAGE_BYTES = 65536;
 const MOST_PAGES = 65536;
-const MOST_THREADS = 16;
+/** Threads that scratch is laid out for at the most. */
+export const mostThreads = 16;
 const ALIGN_BYTES = 64;
 
 /** The compiled kernels. Cheap to keep; hold a Workbench only as long as its job lasts. */
@@ -69,8 +70,8 @@ export class Workbench {
    * all are done. `jobs`: a pointer for each of the `nThread` threads, each with scratch of its own; tiles write to places
    * of their own, so that the outcome does not depend on who ran which. */
   share(kernel: TileKernel, jobs: readonly number[], nTile: number, first = 0): void {
-    if (this.team !== undefined && nTile > 1) return this.team.share(this, kernel, jobs, nTile, first);
-    for (let tile = first; tile < first + nTile; tile++) this.call[kernel](jobs[0], tile);
+    if (this.team !== undefined && nTile > 1) this.team.share(this, kernel, jobs, nTile, first);
+    else for (let tile = first; tile < first + nTile; tile++) this.call[kernel](jobs[0], tile);
   }
 
   float32(n: number): Float32Array<ArrayBuffer> {
@@ -117,8 +118,8 @@ let threads = 1;
  * stay one. Results do not depend on it, to the last bit.
  * @throws RangeError for less than one. */
 export function useThreads(nThread: number): void {
-  if (!Number.isInteger(nThread) || nThread < 1 || nThread > MOST_THREADS) {
-    throw new RangeError(`${nThread} threads; 1 to ${MOST_THREADS} are possible.`);
+  if (!Number.isInteger(nThread) || nThread < 1 || nThread > mostThreads) {
+    throw new RangeError(`${nThread} threads; 1 to ${mostThreads} are possible.`);
   }
   if (nThread === threads) return;
   threads = nThread;

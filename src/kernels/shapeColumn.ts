@@ -46,7 +46,7 @@ export class ShapeColumnBench {
     const windows = columnWindows(problem);
     const shared = sharedPlan(problem, basis);
     const own = scratchPlan(problem, windows, basis);
-    const nThread = kernels.workbench(0).nThread;
+    const nThread = kernels.nThread;
     const bytes = (plan: Plan) => plan.reduce((sum, [, length]) => sum + 8 * length, 0);
     const nJob = 4 * ShapeWord.count;
     this.bench = kernels.workbench(
