@@ -4,6 +4,7 @@ export { census } from "./census";
 export { centreColumns } from "./centring";
 export { centroid } from "./centroid";
 export { checksum, toBigEndian } from "./checksum";
+export { fitColumns } from "./columnFit";
 export { electrons, growSaturation, turnBytes, turnFloat32 } from "./electrons";
 export { erf } from "./erf";
 export { exp } from "./exp";

@@ -141,7 +141,7 @@ function improve(job: usize, pair: i32, isActive: v128): void {
 }
 
 /** P_0(t) … P_{nCoef−1}(t). */
-function legendreBasis(t: f64, nCoef: i32, basisPtr: usize): void {
+export function legendreBasis(t: f64, nCoef: i32, basisPtr: usize): void {
   let below: f64 = 1.0;
   let here: f64 = t;
   store<f64>(basisPtr, 1.0);

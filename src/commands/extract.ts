@@ -142,7 +142,7 @@ function extractJson(
     profileError: extraction.profileError,
     refinedProfile: extraction.refined,
     rejectedPixels: extraction.nRejected,
-    backgroundRmsElectrons: extraction.background?.rms ?? null,
+    backgroundErrorElectrons: extraction.background?.error ?? null,
     points: summary.nPoint,
     usablePoints: summary.nUsable,
     flags: summary.flags,

@@ -167,7 +167,7 @@ const extract = z.strictObject({
   profileError: number.describe("share of the light nearby by which pixels miss the profiles beyond noise"),
   refinedProfile: z.boolean().describe("whether the profile was refined on this frame"),
   rejectedPixels: count.describe("as cosmic rays"),
-  backgroundRmsElectrons: number.describe("scatter of the light between the fibres about its smooth fit"),
+  backgroundErrorElectrons: number.describe("standard error of the smooth background from noise alone, over the frame"),
   points: count.describe("spectrum points of fibres that are not dead"),
   usablePoints: count.describe("of those, without a flag that forbids their use"),
   flags,

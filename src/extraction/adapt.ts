@@ -2,15 +2,17 @@
 import type { Frame } from "../detector/frame.js";
 import type { Kernels } from "../kernels/module.js";
 import type { SmoothBackground } from "../reference/extract.js";
+import { sampleColumns } from "../tramlines/columnSample.js";
 import { deadLightWarnings, measureDeadLight } from "../tramlines/deadLight.js";
 import { compareOneOff, type OneOff, requireNamesFit } from "../tramlines/oneOff.js";
 import { activeFibres, linesOf } from "../tramlines/profileTable.js";
 import { refineShape } from "../tramlines/shape/refine.js";
-import { measureShift, type Shift, shiftTramlines } from "../tramlines/shift.js";
+import { measureShift, type Shift, shiftSample, shiftTramlines } from "../tramlines/shift.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
-import { fitBackground, noBackground } from "./background.js";
+import { noBackground } from "./background.js";
 import type { Adapted, ExtractionOptions } from "./options.js";
 import { openFrame } from "./settle.js";
+import { startBackground } from "./smooth.js";
 
 /** @throws TraceError when the frame's light does not tell that fibres are named rightly, or when many dead ones shine. */
 export function adaptTramlines(
@@ -22,41 +24,46 @@ export function adaptTramlines(
   const warnings: string[] = [];
   let [adapted, shift]: [Tramlines, Shift | null] = [tramlines, null];
   let oneOff: OneOff | null = null;
+  let background: SmoothBackground | undefined;
   if (options.shift !== false) {
-    const background = options.background === false ? noBackground() : fitBackground(frame, tramlines);
-    shift = measureShift(kernels, frame, tramlines, background);
+    const sample = sampleColumns(kernels, frame, tramlines, shiftSample);
+    const none = options.background === false ? noBackground() : undefined;
+    shift = measureShift(kernels, frame, tramlines, none, sample);
     if (shift === null) {
       warnings.push(
         `${frame.name}: too little light to measure its shift against the flat, so none is applied; spectra are right only if nothing moved since the flat, and by a whole fibre neither, since names are not checked then.`,
       );
     } else {
       adapted = shiftTramlines(tramlines, shift);
-      oneOff = compareOneOff(kernels, frame, adapted, background);
+      // Light at dead positions is allowed for, or it would be taken for background.
+      const positions = Array.from(tramlines.state.keys());
+      background = none ?? startBackground(sample, adapted, positions);
+      oneOff = compareOneOff(kernels, frame, adapted, background, sample);
       if (oneOff === null) warnings.push(`${frame.name}: so few fibres are lit that their names cannot be checked.`);
       else if (options.checkNames !== false) requireNamesFit(frame, oneOff);
-      const elsewhere = options.background === false ? background : backgroundBesideDead(frame, adapted);
-      const dead = measureDeadLight(kernels, frame, adapted, elsewhere);
+      const dead = measureDeadLight(kernels, frame, adapted, background, sample);
       warnings.push(...deadLightWarnings(frame, dead, tramlines.nFibre));
     }
   }
   const tooFaint = options.shift !== false && shift === null;
   if (options.refine === false || tooFaint || adapted.profile.kind === "gaussian") {
-    return { tramlines: adapted, shift, oneOff, refined: false, warnings };
+    return { tramlines: adapted, shift, oneOff, refined: false, background, warnings };
   }
-  return { tramlines: refineOn(kernels, frame, adapted, options), shift, oneOff, refined: true, warnings };
-}
-
-/** The background as the gaps between blocks and the slit's ends tell it; null where they are too narrow. */
-function backgroundBesideDead(frame: Frame, tramlines: Tramlines): SmoothBackground | null {
-  const fit = fitBackground(frame, { ...tramlines, state: tramlines.state.map(() => "lit") });
-  return fit.warnings.length > 0 ? null : fit;
+  const refined = refineOn(kernels, frame, adapted, options, background);
+  return { tramlines: refined, shift, oneOff, refined: true, background, warnings };
 }
 
 /** The profile refined on what a first look at the frame leaves after background and cosmic rays. */
-function refineOn(kernels: Kernels, frame: Frame, tramlines: Tramlines, options: ExtractionOptions): Tramlines {
+function refineOn(
+  kernels: Kernels,
+  frame: Frame,
+  tramlines: Tramlines,
+  options: ExtractionOptions,
+  start: SmoothBackground | undefined,
+): Tramlines {
   const { profile } = tramlines;
   if (profile.kind === "gaussian") return tramlines;
-  const { bench, input, background } = openFrame(kernels, frame, tramlines, options);
+  const { bench, input, background } = openFrame(kernels, frame, tramlines, options, start);
   bench.run(0, input.nx);
   const lines = linesOf(tramlines, activeFibres(tramlines));
   const shape = refineShape(

@@ -9,12 +9,13 @@ import type { OneOff } from "../tramlines/oneOff.js";
 import type { Shift } from "../tramlines/shift.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { adaptTramlines } from "./adapt.js";
-import { type BackgroundFit, noBackground } from "./background.js";
+import { noBackground } from "./background.js";
 import type { FrameFit } from "./modelColumn.js";
 import type { ExtractionOptions } from "./options.js";
 import { runPasses } from "./passes.js";
 import { type ExtractionPlan, widened } from "./plan.js";
 import { openFrame } from "./settle.js";
+import type { BackgroundFit } from "./smooth.js";
 import type { Spectra } from "./spectra.js";
 
 export interface Extraction {
@@ -48,7 +49,13 @@ export async function extractFrame(
   const frame = withHits(given, options.knownHits);
   const kernels = await loadKernels();
   const adapted = options.adapted ?? adaptTramlines(kernels, frame, tramlines, options);
-  const { bench, input, plan, background, profileError } = openFrame(kernels, frame, adapted.tramlines, options);
+  const { bench, input, plan, background, profileError } = openFrame(
+    kernels,
+    frame,
+    adapted.tramlines,
+    options,
+    adapted.background,
+  );
   runPasses(bench, input, options.onProgress);
   const spectra = finishSpectra(bench.output, tramlines, input);
   options.knownHits?.forEach((hit, i) => {

@@ -126,8 +126,8 @@ function primaryCards(extraction: Extraction, frame: Frame, tramlines: Tramlines
     { keyword: "NREJECT", value: extraction.nRejected, comment: "pixels rejected as cosmic rays" },
     { keyword: "PROFERR", value: extraction.profileError, comment: "share of light nearby missed by profiles" },
   ];
-  if (background !== null && Number.isFinite(background.rms)) {
-    own.push({ keyword: "BGRMS", value: background.rms, comment: "[electron] scatter of background medians" });
+  if (background !== null && Number.isFinite(background.error)) {
+    own.push({ keyword: "BGERR", value: background.error, comment: "[electron] standard error of the background" });
   }
   if (extraction.shift !== null) {
     const [middle, alongX, alongY] = extraction.shift.coefficients;

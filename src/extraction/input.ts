@@ -1,8 +1,8 @@
 /** From a frame, its tramlines and the options to what the kernel, and its reference, take. */
 import type { Frame } from "../detector/frame.js";
-import type { ExtractionInput } from "../reference/extract.js";
+import type { ExtractionInput, SmoothBackground } from "../reference/extract.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
-import { fitBackground, noBackground } from "./background.js";
+import { noBackground } from "./background.js";
 import type { ExtractionOptions } from "./options.js";
 import type { ExtractionPlan } from "./plan.js";
 
@@ -12,6 +12,7 @@ export function extractionInput(
   tramlines: Tramlines,
   plan: ExtractionPlan,
   options: ExtractionOptions,
+  background: SmoothBackground = noBackground(),
 ): ExtractionInput {
   const { active } = plan;
   const { profile, degree } = tramlines;
@@ -32,7 +33,7 @@ export function extractionInput(
     electrons: frame.electrons,
     mask: frame.mask,
     noise: frame.noise,
-    background: options.background === false ? noBackground() : fitBackground(frame, tramlines),
+    background,
     seen: Int32Array.from(active.flatMap((k) => [tramlines.seenFrom[k], tramlines.seenTo[k]])),
     bandwidth: plan.bandwidth,
     method,

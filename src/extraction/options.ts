@@ -1,6 +1,6 @@
 /** What can be asked of an extraction. */
 import type { Precision } from "../kernels/banded.js";
-import type { Method } from "../reference/extract.js";
+import type { Method, SmoothBackground } from "../reference/extract.js";
 import type { OneOff } from "../tramlines/oneOff.js";
 import type { Shift } from "../tramlines/shift.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
@@ -44,5 +44,7 @@ export interface Adapted {
   /** Null when no shift was measured. */
   oneOff: OneOff | null;
   refined: boolean;
+  /** A first fit of the background, where one was made: a start for the next. */
+  background?: SmoothBackground | undefined;
   warnings: string[];
 }

@@ -46,6 +46,9 @@ export interface KernelExports {
   turnBytes(inPtr: number, nx: number, ny: number, outPtr: number): void;
   turnFloat32(inPtr: number, nx: number, ny: number, outPtr: number): void;
 
+  /** assembly/columnFit.ts: a tile is a group of columns. */
+  fitColumns(jobPtr: number, tile: number): void;
+
   /** assembly/erf.ts */
   erf(x: number): number;
 

@@ -2,17 +2,16 @@
  * to its neighbours and to the background without a word. Here dead positions are fitted like fibres, together with all
  * lit ones, in some columns of the frame. */
 import type { Frame } from "../detector/frame.js";
+import { type ColumnFits, type ColumnSample, groupColumns } from "../kernels/columnFit.js";
 import type { Kernels } from "../kernels/module.js";
-import { factorBand, inverseBand } from "../reference/banded.js";
 import type { SmoothBackground } from "../reference/extract.js";
-import { median } from "../reference/median.js";
-import type { ShapeTable } from "../reference/shape.js";
+import { legendreArgument, legendreValue } from "../reference/legendre.js";
+import { medianInPlace } from "../reference/median.js";
+import type { Lines } from "../reference/shapeProfiles.js";
+import { everyGroup, type SampleSize, sampleColumns } from "./columnSample.js";
 import { TraceError } from "./errors.js";
 import { fibres } from "./name.js";
-import { linesOf, profileTable } from "./profileTable.js";
-import { type Lines, localDesign, localSystem } from "./shape/column.js";
-import { frameColumn, widenBackground } from "./shape/refine.js";
-import { backgroundColumn, settleColumn, wholeProfiles } from "./shape/step.js";
+import { linesOf } from "./profileTable.js";
 import type { Tramlines } from "./tramlines.js";
 
 export interface DeadLight {
@@ -27,7 +26,11 @@ export interface DeadLight {
   shines: boolean;
 }
 
-const nColumn = 64;
+/** Columns looked at; half of them in a slit of hundreds of fibres. */
+const looked: SampleSize = { nGroup: 12, together: 2 };
+const manyFibres = 400;
+/** Of the fit, as in shift.ts. */
+const fitError = 0.003;
 /** Columns without which a position is not judged. */
 const leastColumns = 12;
 const wingReach = 2;
@@ -42,59 +45,65 @@ const wingErrors = 0.5;
 const leastShare = 0.15;
 /** e⁻ per column: what a background wrong by a few e⁻ per pixel leaves. */
 const leastElectrons = 15;
-const troughColumns = 16;
-const troughShare = 0.05;
 /** Standard error of a median over that of a mean, normal errors: √(π/2). */
 const medianPrice = 1.2533;
 /** Share of the slit positions from which on dead ones with light are no accident. */
 const ruinousShare = 0.05;
 
-/** Light at every dead position on the detector. `tramlines`: moved to the frame's light; `background`: seen elsewhere than at
- * dead positions, or their light would be taken for it; null where no gap shows it: then the darkest troughs between the
- * fibres stand for it. */
+/** Light at every dead position on the detector. `tramlines`: moved to the frame's light; `background`: fitted with light
+ * allowed at dead positions, or theirs would be taken for it. `sample`: of this frame. */
 export function measureDeadLight(
   kernels: Kernels,
   frame: Frame,
   tramlines: Tramlines,
-  background: SmoothBackground | null,
+  background: SmoothBackground,
+  sample = sampleColumns(kernels, frame, tramlines, looked),
 ): DeadLight[] {
   const { state, nFibre } = tramlines;
   if (!state.includes("dead")) return [];
   const lines = linesOf(tramlines, Array.from(state.keys()));
-  const table = profileTable(kernels, tramlines.profile);
-  const smooth = widenBackground(background ?? { nX: 1, nY: 1, coefficients: Float64Array.of(troughLevel(frame)) });
-  const columns = Array.from({ length: nColumn }, (_, i) => Math.floor(((i + 0.61) * frame.nx) / nColumn));
-  const fits = columns.map((x) => columnLight(frame, lines, table, smooth, x));
-  const fluxes = (k: number) => fits.map(({ flux }) => flux[k]).filter((value) => !Number.isNaN(value));
-  const typical = Array.from({ length: nFibre }, (_, k) => median(fluxes(k)));
-  const lit = typical.filter((flux, k) => state[k] !== "dead" && !Number.isNaN(flux)).sort((a, b) => a - b);
+  const tells = Uint8Array.from(state, (one) => (one === "dead" ? 0 : 1));
+  const groups = everyGroup(sample, nFibre < manyFibres ? 1 : 2);
+  const fits = sample.fit(lines, { groups, background, tells, profileError: fitError });
+  const seen = Array.from({ length: nFibre }, (_, k) => lightOf(k, sample, lines, fits));
+  const lit = seen.flatMap(({ flux }, k) => (state[k] !== "dead" && !Number.isNaN(flux) ? [flux] : []));
+  lit.sort((a, b) => a - b);
   const least = Math.max(leastElectrons, leastShare * (lit[lit.length >> 2] ?? 0));
   const wings = Math.max(wingShare, wingErrors * tramlines.profile.relativeError);
   return state.flatMap((one, index) => {
-    const n = fluxes(index).length;
+    const { flux, error, n } = seen[index];
     if (one !== "dead" || n < leastColumns) return [];
-    const error = (medianPrice * median(fits.map(({ error }) => error[index]).filter((e) => e > 0))) / Math.sqrt(n);
     let around = 0;
     for (let k = Math.max(0, index - wingReach); k <= Math.min(nFibre - 1, index + wingReach); k++) {
-      if (k !== index && state[k] !== "dead") around += Math.max(0, typical[k] || 0);
+      if (k !== index && state[k] !== "dead") around += Math.max(0, seen[k].flux || 0);
     }
-    const flux = typical[index];
     return [{ index, flux, error, around, shines: flux - wings * around > certainSigma * error && flux > least }];
   });
 }
 
-/** Level below which few places of the frame lie, e⁻ per pixel: medians over short pieces of rows. */
-function troughLevel({ nx, ny, electrons, mask }: Frame): number {
-  const levels: number[] = [];
-  for (let y = 0; y < ny; y++) {
-    for (let x0 = 0; x0 + troughColumns <= nx; x0 += 4 * troughColumns) {
-      const piece = electrons.subarray(y * nx + x0, y * nx + x0 + troughColumns);
-      const good = piece.filter((_, i) => mask[y * nx + x0 + i] === 0);
-      if (2 * good.length >= troughColumns) levels.push(median(good));
+/** Median light of fibre k over the columns that tell of it, its standard error, and how many columns do. */
+function lightOf(
+  k: number,
+  { nx, ny, firstColumns }: ColumnSample,
+  { nFibre, trace, nTrace }: Lines,
+  fits: ColumnFits,
+): { flux: number; error: number; n: number } {
+  const most = fits.groups.length * groupColumns;
+  const [fluxes, errors] = [new Float64Array(most), new Float64Array(most)];
+  let n = 0;
+  for (const g of fits.groups) {
+    const t = legendreArgument(firstColumns[g] + (groupColumns - 1) / 2, nx);
+    const y = legendreValue(trace, t, k * nTrace, nTrace);
+    // A tramline off the frame has the far wing alone to tell of it.
+    if (!(y > 0 && y < ny - 1)) continue;
+    for (let at = (g * nFibre + k) * groupColumns; at < (g * nFibre + k + 1) * groupColumns; at++) {
+      if (!(fits.fluxVariance[at] > 0)) continue;
+      fluxes[n] = fits.flux[at];
+      errors[n++] = Math.sqrt(fits.fluxVariance[at]);
     }
   }
-  levels.sort((a, b) => a - b);
-  return levels[Math.floor(troughShare * levels.length)] ?? 0;
+  const flux = medianInPlace(fluxes, n);
+  return { flux, error: (medianPrice * medianInPlace(errors, n)) / Math.sqrt(n), n };
 }
 
 /** One sentence that names the fibres, or none.
@@ -113,21 +122,4 @@ export function deadLightWarnings(frame: Frame, found: DeadLight[], nFibre: numb
     );
   }
   return [`${finding}; it gets no spectrum and spoils its neighbours', so trace a flat in which it shines.`];
-}
-
-/** All positions' joint fluxes in one column with their errors; NaN where no good pixel tells. */
-function columnLight(frame: Frame, lines: Lines, table: ShapeTable, smooth: Float64Array, x: number) {
-  const data = frameColumn(frame, null, x);
-  const profiles = wholeProfiles(lines, table, x);
-  const under = backgroundColumn(smooth, x, lines);
-  const level = data.light.map((light, y) => light - under[y]);
-  const { flux } = settleColumn(profiles, data, level, under);
-  const system = localSystem(profiles, localDesign(profiles, flux, 1), level, data.inverseVariance, 1);
-  const { band, halfBandwidth } = system;
-  factorBand(band, lines.nFibre, halfBandwidth);
-  const inverse = inverseBand(band, lines.nFibre, halfBandwidth);
-  const error = Float64Array.from(flux, (_, k) => Math.sqrt(Math.max(0, inverse[k * (halfBandwidth + 1)])));
-  // A tramline off the frame has the far wing alone to tell of it.
-  const told = (k: number) => error[k] > 0 && profiles.centre[k] > 0 && profiles.centre[k] < lines.ny - 1;
-  return { flux: flux.map((value, k) => (told(k) ? value : Number.NaN)), error };
 }

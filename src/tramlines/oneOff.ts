@@ -2,15 +2,15 @@
  * slit's pattern tells: dead fibres, gaps between blocks, the slit's ends. So the frame is fitted three times, its fibres
  * taken to lie one position lower, where they are named, and one position higher, and the misfits are compared. */
 import type { Frame } from "../detector/frame.js";
+import { type ColumnSample, groupColumns } from "../kernels/columnFit.js";
 import type { Kernels } from "../kernels/module.js";
 import type { SmoothBackground } from "../reference/extract.js";
-import { median } from "../reference/median.js";
-import type { ShapeTable } from "../reference/shape.js";
+import { legendreArgument, legendreBasis, legendreValue } from "../reference/legendre.js";
+import { medianInPlace } from "../reference/median.js";
+import type { Lines } from "../reference/shapeProfiles.js";
+import { everyGroup, type SampleSize, sampleColumns } from "./columnSample.js";
 import { TraceError } from "./errors.js";
-import { activeFibres, linesOf, profileTable } from "./profileTable.js";
-import type { Lines } from "./shape/column.js";
-import { frameColumn, widenBackground } from "./shape/refine.js";
-import { backgroundColumn, settleColumn, wholeProfiles } from "./shape/step.js";
+import { activeFibres, linesOf } from "./profileTable.js";
 import type { Tramlines } from "./tramlines.js";
 
 export interface OneOff {
@@ -20,7 +20,12 @@ export interface OneOff {
   higher: number;
 }
 
-const nColumn = 24;
+/** Columns that are compared, at the most; a third less of a slit of hundreds of fibres. */
+const compared: SampleSize = { nGroup: 6, together: 1 };
+const manyFibres = 400;
+const ofMany = 4;
+/** Of the fit, as in shift.ts. */
+const fitError = 0.003;
 /** A pixel's squared residual counts this much at most, σ²: a cosmic ray must not decide. */
 const largestSquare = 100;
 /** What the model's own error lets a pixel miss, as a share of its light. */
@@ -32,25 +37,26 @@ const certain = 50;
 const fewest = 3;
 
 /** Compares the three readings of `frame`, whose tramlines are already moved to its light; null for a slit of so few fibres
- * that nothing tells. */
+ * that nothing tells. `sample`: of this frame. */
 export function compareOneOff(
   kernels: Kernels,
   frame: Frame,
   tramlines: Tramlines,
   background: SmoothBackground,
+  sample = sampleColumns(kernels, frame, tramlines, compared),
 ): OneOff | null {
-  if (activeFibres(tramlines).length < fewest) return null;
-  const table = profileTable(kernels, tramlines.profile);
-  const smooth = widenBackground(background);
-  const columns = Array.from({ length: nColumn }, (_, i) => Math.floor(((i + 0.37) * frame.nx) / nColumn));
-  const [lower, named, higher] = [-1, 0, 1].map((step) => {
-    const lines = linesOneOff(tramlines, step);
-    return columns.map((x) => columnMisfit(frame, lines, table, smooth, x));
+  const { length } = activeFibres(tramlines);
+  if (length < fewest) return null;
+  const most = length < manyFibres ? compared.nGroup : ofMany;
+  const groups = everyGroup(sample, Math.max(1, Math.floor(sample.nGroup / most)));
+  const weights = inverseVariances(sample, groups, background);
+  const squares = new Float64Array(weights.length);
+  const [lower, higher, named] = [-1, 1, 0].map((step) => {
+    sample.fit(linesOneOff(tramlines, step), { groups, background, profileError: fitError, residual: true });
+    return misfit(sample, groups, weights, squares);
   });
-  const total = (squares: Float64Array[]) =>
-    squares.reduce((sum, column) => sum + column.reduce((s, v) => s + v, 0), 0);
-  const perPixel = Math.max(1, median(named.flatMap((column) => Array.from(column))) / 0.4549);
-  return { lower: (total(lower) - total(named)) / perPixel, higher: (total(higher) - total(named)) / perPixel };
+  const perPixel = Math.max(1, medianInPlace(squares, squares.length) / 0.4549); // of the named reading, the last
+  return { lower: (lower - named) / perPixel, higher: (higher - named) / perPixel };
 }
 
 /** @throws TraceError when another reading of the frame's fibres cannot be excluded. */
@@ -84,17 +90,50 @@ function linesOneOff(tramlines: Tramlines, step: number): Lines {
   return lines;
 }
 
-/** Squared residuals over variance and model error of one column's good pixels, capped. */
-function columnMisfit(frame: Frame, lines: Lines, table: ShapeTable, smooth: Float64Array, x: number): Float64Array {
-  const data = frameColumn(frame, null, x);
-  const profiles = wholeProfiles(lines, table, x);
-  const under = backgroundColumn(smooth, x, lines);
-  const level = data.light.map((light, y) => light - under[y]);
-  const { model } = settleColumn(profiles, data, level, under);
-  return Float64Array.from({ length: frame.ny }, (_, y) => {
-    if (data.good[y] === 0) return 0;
-    const seen = Math.max(level[y], 0);
-    const variance = data.fixedVariance[y] + seen * data.variancePerElectron[y] + (modelError * seen) ** 2;
-    return Math.min(((level[y] - model[y]) * (level[y] - model[y])) / variance, largestSquare);
-  });
+/** One over variance and model error, by the data: [groups × ny × 4] e⁻⁻², 0 where a pixel is not good. */
+function inverseVariances(
+  { nx, ny, firstColumns, light, fixed, bandOfRow, perElectron }: ColumnSample,
+  groups: Int32Array,
+  { nX, nY, coefficients }: SmoothBackground,
+): Float64Array {
+  const weights = new Float64Array(groups.length * ny * groupColumns);
+  const series = new Float64Array(nY);
+  const nFixed = fixed.length / firstColumns.length / groupColumns;
+  let to = 0;
+  for (const g of groups) {
+    const inX = legendreBasis(legendreArgument(firstColumns[g] + (groupColumns - 1) / 2, nx), nX);
+    series.fill(0);
+    for (let i = 0; i < nX; i++) for (let j = 0; j < nY; j++) series[j] += inX[i] * coefficients[i * nY + j];
+    for (let y = 0; y < ny; y++) {
+      const under = legendreValue(series, legendreArgument(y, ny), 0, nY);
+      const fixedRow = g * nFixed + (bandOfRow === null ? y : bandOfRow[y]);
+      for (let c = 0; c < groupColumns; c++) {
+        const at = (g * ny + y) * groupColumns + c;
+        const seen = Math.max(light[at] - under, 0);
+        const photons = perElectron === null ? seen : seen * perElectron[at];
+        const variance = fixed[fixedRow * groupColumns + c] + photons + modelError * modelError * seen * seen;
+        weights[to++] = variance > 0 ? 1 / variance : 0; // NaN where not good
+      }
+    }
+  }
+  return weights;
+}
+
+/** Σ of the fit's squared residuals, weighted and capped; each of them goes into `squares`. */
+function misfit(
+  { ny, residual }: ColumnSample,
+  groups: Int32Array,
+  weights: Float64Array,
+  squares: Float64Array,
+): number {
+  let sum = 0;
+  let to = 0;
+  for (const g of groups) {
+    for (let at = g * ny * groupColumns; at < (g + 1) * ny * groupColumns; at++) {
+      const square = Math.min(residual[at] * residual[at] * weights[to], largestSquare);
+      squares[to++] = square;
+      sum += square;
+    }
+  }
+  return sum;
 }

@@ -1,5 +1,5 @@
 import { describe, expect, it } from "vitest";
-import { type BackgroundFit, fitBackground } from "../../src/extraction/background.js";
+import { fitBackground, type GapFit } from "../../src/extraction/background.js";
 import { extractFrame } from "../../src/extraction/extract.js";
 import { legendreBasis } from "../../src/reference/legendre.js";
 import { seeded } from "../scene.js";
@@ -23,7 +23,7 @@ function gappedScene(dead: number[]): FrameScene {
   return scene;
 }
 
-function value(fit: BackgroundFit, x: number, y: number): number {
+function value(fit: GapFit, x: number, y: number): number {
   const inX = legendreBasis((2 * x) / (nx - 1) - 1, fit.nX);
   const inY = legendreBasis((2 * y) / (ny - 1) - 1, fit.nY);
   let sum = 0;
@@ -32,7 +32,7 @@ function value(fit: BackgroundFit, x: number, y: number): number {
   return sum;
 }
 
-function worstError(fit: BackgroundFit): number {
+function worstError(fit: GapFit): number {
   let worst = 0;
   for (let y = 5; y < ny - 5; y += 7) {
     for (let x = 5; x < nx - 5; x += 9) worst = Math.max(worst, Math.abs(value(fit, x, y) - surface(x, y)));
@@ -82,7 +82,7 @@ describe("background between the fibres", () => {
     for (let y = 0; y < ny; y += 5) expect(Math.abs(value(fit, 160, y) - 20)).toBeLessThan(0.5);
   });
 
-  it("is 0 with a warning by name where no gap is wide enough", async () => {
+  it("is 0 with a warning by name where no gap is wide enough", () => {
     const { frame, tramlines } = frameScene({ nx: 64, ny: 92, nFibre: 17, background: 0 });
     // Tramlines that leave no free row: a line every 4.9 px from the first row to the last.
     tramlines.legendre.forEach((_, i) => {
@@ -94,9 +94,6 @@ describe("background between the fibres", () => {
     ]);
     expect([...fit.coefficients]).toEqual([0]);
     expect(fit.rms).toBeNaN();
-    // The lines are not where the light is, which is beside the point here.
-    const options = { shift: false, checkNames: false };
-    expect((await extractFrame(frame, tramlines, options)).warnings).toEqual(fit.warnings);
   });
 
   it("is written under each fibre in a whole extraction, fibres' wings told apart from it", async () => {
@@ -114,7 +111,7 @@ describe("background between the fibres", () => {
         }
       }
     }
-    expect(background!.nY).toBe(5);
+    expect([background!.nX, background!.nY]).toEqual([5, 6]); // a term for every 48 px, five and seven at the most
     expect(Math.abs(pulls / n)).toBeLessThan(4 / Math.sqrt(n) + 0.05);
   });
 });

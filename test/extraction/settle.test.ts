@@ -62,33 +62,32 @@ function missOf({ nX, nY, coefficients }: SmoothBackground, of = exposure): Miss
 }
 
 describe("background in turns with the fibres", () => {
-  it("comes within 4 e⁻ of 40 everywhere, most of that the surface's own orders; a first look holds the wings too", () => {
+  it("comes within 2.5 e⁻ of 40 on the average, 4 e⁻ rms; a look at the gaps alone holds the wings too", () => {
     const frame = frameFromTruth(exposure, readNoise);
     const { scattered } = exposure.truth;
     expect(scattered.reduce((sum, value) => sum + value, 0) / scattered.length).toBeGreaterThan(35);
-    // The scattered light itself, without noise, through the same gaps: what 3 × 5 terms and few gaps make of it.
-    const orders = missOf(fitBackground(frame, tramlines, Float32Array.from(scattered)));
-    const first = missOf(fitBackground(frame, tramlines));
+    const gaps = missOf(fitBackground(frame, tramlines));
     const settled = missOf(openFrame(kernels, frame, tramlines, {}).background!);
-    expect(orders.rms).toBeLessThan(3);
-    expect(first.mean).toBeGreaterThan(4);
+    expect(gaps.mean).toBeGreaterThan(4);
     // Of the wings' light some 2 e⁻ stay: so well does the flat tell wings from scattered light.
-    expect(settled.mean).toBeLessThan(0.6 * first.mean);
     expect(Math.abs(settled.mean)).toBeLessThan(2.5);
     expect(settled.rms).toBeLessThan(4);
   });
 
-  it("is what its terms make of the scattered light alone when the profile holds all of the wings, to 0.5 e⁻", () => {
+  it("is the scattered light to 0.5 e⁻ on the average, 0.8 rms, when the profile holds all of the wings", () => {
     const clean = parseScene(
       SCENES.clean.replace("clean = true\n", "").replace("[light]", "[light]\nscattered_share = 0.03"),
       "scattered",
     );
     const bare = simulateExposure(clean, "sci_01");
     const [frame, lines] = [frameFromTruth(bare, 3), tramlinesFromTruth(bare)];
-    const orders = missOf(fitBackground(frame, lines, Float32Array.from(bare.truth.scattered)), bare);
-    const miss = missOf(openFrame(kernels, frame, lines, {}).background!, bare);
-    expect(Math.abs(miss.mean - orders.mean)).toBeLessThan(0.5);
-    expect(miss.rms).toBeLessThan(orders.rms + 0.5);
+    const { background } = openFrame(kernels, frame, lines, {});
+    const miss = missOf(background!, bare);
+    expect(Math.abs(miss.mean)).toBeLessThan(0.5);
+    expect(miss.rms).toBeLessThan(0.8);
+    // Quoted is the mean over noise alone of what happened here once, orders that are lacking come on top.
+    expect(miss.rms / background!.error).toBeGreaterThan(0.6);
+    expect(miss.rms / background!.error).toBeLessThan(1.6);
   });
 
   it("is none when none is asked for, and the profile's error is told all the same", () => {

@@ -3,7 +3,7 @@
 import type { Frame } from "../../detector/frame.js";
 import { legendreArgument, legendreValue } from "../../reference/legendre.js";
 import type { FibreState, Tramlines } from "../../tramlines/tramlines.js";
-import type { BackgroundFit } from "../background.js";
+import type { BackgroundFit } from "../smooth.js";
 import { centres, type ZonePlan } from "./zones.js";
 
 export interface DarkPosition {

@@ -1,3 +1,0 @@
-export { backgroundColumn } from "../../reference/shapeBackground.js";
-export { settleColumn } from "../../reference/shapeColumn.js";
-export { wholeProfiles } from "../../reference/shapeProfiles.js";
