@@ -2,32 +2,21 @@
  * fitted: fluxes, and on request shifts and the normal equations of a smooth background. */
 import type { SmoothBackground } from "../reference/extract.js";
 import { legendreArgument, legendreBasis, legendreValue } from "../reference/legendre.js";
-import { nShapeTerm, type ShapeTable } from "../reference/shape.js";
-import type { NoiseIngredients } from "../reference/variance.js";
+import type { ShapeTable } from "../reference/shape.js";
+import { packTable, tableStride } from "./coarseTable.js";
 import { ColumnNumber, ColumnWord as Word } from "./columnFit-words.js";
+import { gatherColumns, type SampledFrame } from "./columnGather.js";
 import type { Kernels, Workbench } from "./module.js";
 
-/** Columns of a group: lanes of a v128 of f32. */
-export const groupColumns = 4;
+export { groupColumns, type SampledFrame } from "./columnGather.js";
+
 /** Orders of the background that a sample can hold. */
 export const mostX = 5;
 export const mostY = 7;
 /** Half of the window, in σ, that the normal equations look at, beyond it a profile holds hardly any light. */
 const coreSigma = 4.8;
-/** Points of a table per σ: cubics between them err by 1e-6. */
-const tableDensity = 8;
 /** Rounds of a fit: variance from the data, then from the model. */
 const nRound = 3;
-/** Threads that there is scratch for. */
-const mostThreads = 8;
-
-export interface SampledFrame {
-  nx: number;
-  ny: number;
-  electrons: Float32Array;
-  mask: Uint8Array;
-  noise: NoiseIngredients;
-}
 
 /** Fibres, as Legendre series: src/reference/shapeProfiles.ts. */
 export interface SampledLines {
@@ -72,6 +61,7 @@ export class ColumnSample {
   readonly ny: number;
   readonly nGroup: number;
   private readonly bench: Workbench;
+  private readonly numbers: Float64Array;
   private readonly jobs: Int32Array<ArrayBuffer>[];
   private readonly views: Omit<ColumnFits, "groups">;
   private readonly inputs: {
@@ -147,8 +137,11 @@ export class ColumnSample {
       8 * (most.trace.length + most.width.length) +
       nFibre +
       4 * packed.length;
-    const nPiece = 21 + mostThreads * (scratch.length + 3);
-    this.bench = kernels.workbench(ofAll + 8 * (mostX * mostY + ColumnNumber.count) + mostThreads * ofThread, nPiece);
+    const nPiece = 21 + kernels.nThread * (scratch.length + 3);
+    this.bench = kernels.workbench(
+      ofAll + 8 * (mostX * mostY + ColumnNumber.count) + kernels.nThread * ofThread,
+      nPiece,
+    );
     const { bench } = this;
     const lane = (n: number) => bench.float32(4 * n);
     this.light = lane(nGroup * ny);
@@ -214,7 +207,7 @@ export class ColumnSample {
       [Word.normal, normal.byteOffset],
       [Word.numbers, numbers.byteOffset],
     ];
-    this.jobs = Array.from({ length: Math.min(mostThreads, bench.nThread) }, () => {
+    this.jobs = Array.from({ length: bench.nThread }, () => {
       const job = bench.int32(Word.count);
       for (const [word, value] of shared) job[word] = value;
       job[Word.start] = bench.int32(nFibre).byteOffset;
@@ -222,10 +215,8 @@ export class ColumnSample {
       for (const [word, n] of scratch) job[word] = lane(n).byteOffset;
       return job;
     });
-    this.gather(frame);
+    gatherColumns(frame, this);
   }
-
-  private readonly numbers: Float64Array;
 
   /** Fits `lines` to the groups asked for. @throws RangeError when there are more fibres than there is room for. */
   fit(lines: SampledLines, options: FitOptions = {}): ColumnFits {
@@ -256,42 +247,6 @@ export class ColumnSample {
     );
     return { groups, ...this.views };
   }
-
-  /** Row by row, as the frame lies in memory. */
-  private gather(frame: SampledFrame): void {
-    this.gatherBands(frame);
-    for (let y = 0; y < frame.ny; y++) this.gatherRow(frame, y);
-  }
-
-  // A function of its own, which the engine compiles after some hundred rows.
-  private gatherRow({ nx, ny, electrons, mask, noise }: SampledFrame, y: number): void {
-    const { light, fixed, perElectron, firstColumns, nGroup } = this;
-    const { fixedVarianceImage, inverseResponse } = noise;
-    for (let g = 0; g < nGroup; g++) {
-      const x0 = firstColumns[g];
-      let at = y * nx + x0;
-      let to = (g * ny + y) * groupColumns;
-      for (let x = x0; x < x0 + groupColumns; x++) {
-        const own = x < nx && mask[at] === 0 ? electrons[at] : Number.NaN;
-        light[to] = own - own === 0 ? own : Number.NaN;
-        if (fixedVarianceImage) fixed[to] = fixedVarianceImage[at];
-        if (perElectron !== null && inverseResponse) perElectron[to] = inverseResponse[at];
-        at++;
-        to++;
-      }
-    }
-  }
-
-  private gatherBands({ nx, noise: { fixedVariance, fixedVarianceImage } }: SampledFrame): void {
-    const nBand = fixedVariance.length / nx;
-    const { firstColumns } = this;
-    for (let i = 0; fixedVarianceImage === undefined && i < this.fixed.length; i++) {
-      const c = i % groupColumns;
-      const band = Math.floor(i / groupColumns) % nBand;
-      const x = firstColumns[Math.floor(i / groupColumns / nBand)] + c;
-      this.fixed[i] = fixedVariance[band * nx + Math.min(x, nx - 1)];
-    }
-  }
 }
 
 /** P_j of every row. */
@@ -317,28 +272,6 @@ function setBackground(into: Float64Array, background: SmoothBackground | undefi
   for (let i = 0; i < Math.min(nX, mostX); i++) {
     for (let j = 0; j < Math.min(nY, mostY); j++) into[i * mostY + j] = coefficients[i * nY + j];
   }
-}
-
-/** Every how many points of the table are enough. */
-function tableStride({ step, referenceWidth, n }: ShapeTable): number {
-  let stride = 1;
-  while (2 * stride * step * tableDensity <= referenceWidth * 1.01 && (n - 1) % (2 * stride) === 0) stride *= 2;
-  return stride;
-}
-
-/** Every such point: C_0 … C_6, 0, then their slopes times the step. */
-function packTable(table: ShapeTable): Float32Array {
-  const stride = tableStride(table);
-  const nPoint = (table.n - 1) / stride + 1;
-  const packed = new Float32Array(16 * nPoint);
-  for (let i = 0; i < nPoint; i++) {
-    const row = i * stride * 2 * nShapeTerm;
-    for (let m = 0; m < nShapeTerm; m++) {
-      packed[16 * i + m] = table.values[row + m];
-      packed[16 * i + 8 + m] = table.values[row + nShapeTerm + m] * table.step * stride;
-    }
-  }
-  return packed;
 }
 
 function widest({ nFibre, width, nWidth }: SampledLines): number {
