@@ -42,7 +42,7 @@ export function openFrame(
 /** Measures ε and has `bench` use it from here on. */
 function settleProfileError(bench: ExtractionBench, input: ExtractionInput): number {
   if (input.kappa === 0) return input.profileError;
-  const profileError = measureMisfit(bench, input.nx, input.blockColumns, input.kappa, input.profileError);
+  const profileError = measureMisfit(bench, input.nx, input.blockColumns, input.kappa, input.profileError, input.ny);
   bench.setProfileError(profileError);
   return profileError;
 }
