@@ -81,6 +81,7 @@ function extractTile<T extends number>(job: usize, number: i32): void {
   const x1 = min(block + count(job, Word.blockColumns), count(job, Word.endColumn));
   const nFibre = count(job, Word.nFibre);
   const nLane = laneCount<T>();
+  memory.fill(pointer(job, Word.needed), 1, <usize>nFibre);
   blockProfiles<T>(job, block);
   prepareFibreOfRow(job);
   for (let tile = x0; tile < x1; tile += tileColumns) {
@@ -219,19 +220,17 @@ function estimate<T extends number>(job: usize, k0: i32, k1: i32): void {
   else withoutCrosstalk<T>(job, k0, k1);
 }
 
-function settleTile<T extends number>(job: usize, tile: i32): void {
-  const block = tile * count(job, Word.blockColumns);
+function settleTile<T extends number>(job: usize, number: i32): void {
+  const block = number * count(job, Word.blockColumns);
   const x0 = max(block, count(job, Word.firstColumn));
   const x1 = min(block + count(job, Word.blockColumns), count(job, Word.endColumn));
-  let prepared = false;
+  memory.fill(pointer(job, Word.needed), 0, <usize>count(job, Word.nFibre));
+  blockProfiles<T>(job, block); // windows alone, to tell whom a pixel belongs to
+  prepareFibreOfRow(job);
+  if (!needGrown(job, x0, x1)) return;
+  blockProfiles<T>(job, block);
   for (let x = x0; x < x1; x += laneCount<T>()) {
     const nValid = min(laneCount<T>(), x1 - x);
-    if (!prepared) {
-      if (!anyGrown(job, x0, x1)) return;
-      blockProfiles<T>(job, block);
-      prepareFibreOfRow(job);
-      prepared = true;
-    }
     if (!callGrown<T>(job, x, nValid)) continue;
     takeCalls(job);
     for (let chunk: i32 = 0; chunk < chunkCount(job); chunk++) {
@@ -241,16 +240,49 @@ function settleTile<T extends number>(job: usize, tile: i32): void {
   }
 }
 
-/** Whether any pixel of columns x0 … x1 − 1 went with a neighbour. */
-function anyGrown(job: usize, x0: i32, x1: i32): bool {
+/** Notes in Word.needed the fibres that have to do with what has grown in columns x0 … x1 − 1. Returns whether there is
+ * any. */
+function needGrown(job: usize, x0: i32, x1: i32): bool {
   const nx = <usize>count(job, Word.nx);
+  const margin = marginRows(job);
   let at = pointer(job, Word.rejected) + <usize>x0;
-  let any: i32 = 0;
+  let any = false;
   for (let y: i32 = 0; y < count(job, Word.ny); y++) {
-    for (let x: i32 = 0; x < x1 - x0; x++) any |= <i32>load<u8>(at + <usize>x);
+    if (anyByte(at, x1 - x0, <u8>MaskBit.grown)) {
+      any = true;
+      needRow(job, margin + y);
+    }
     at += nx;
   }
-  return (any & MaskBit.grown) != 0;
+  return any;
+}
+
+/** Whether any of `n` bytes has `bit`. */
+function anyByte(ptr: usize, n: i32, bit: u8): bool {
+  let i: i32 = 0;
+  let wide = i32x4.splat(0);
+  for (; i + 16 <= n; i += 16) wide = v128.or(wide, v128.load(ptr + <usize>i));
+  if (v128.any_true(v128.and(wide, i8x16.splat(bit)))) return true;
+  let any: u8 = 0;
+  for (; i < n; i++) any |= load<u8>(ptr + <usize>i);
+  return (any & bit) != 0;
+}
+
+/** Fibres whose windows hold the lane row, with all that are fitted beside them or whose wings reach in. */
+function needRow(job: usize, row: i32): void {
+  const nFibre = count(job, Word.nFibre);
+  const first = load<i32>(pointer(job, Word.fibreOfRow) + ((<usize>row) << 2));
+  let last = first;
+  while (last < nFibre && windowLaneRow(job, last) <= row) last++;
+  const spare = chunkFibres + chunkMargin(job) + count(job, Word.bandwidth);
+  let k0 = max(first - spare, 0);
+  let k1 = min(last + spare, nFibre);
+  const reach = count(job, Word.wing) + windowRows(job);
+  const low = windowLaneRow(job, min(k0, nFibre - 1)) - reach;
+  const high = windowLaneRow(job, max(k1 - 1, 0)) + reach;
+  while (k0 > 0 && windowLaneRow(job, k0 - 1) >= low) k0--;
+  while (k1 < nFibre && windowLaneRow(job, k1) <= high) k1++;
+  memory.fill(pointer(job, Word.needed) + <usize>k0, 1, <usize>max(k1 - k0, 0));
 }
 
 /** Calls the fibres that see a grown pixel of the group. Returns whether there is any. */

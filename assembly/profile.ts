@@ -4,7 +4,7 @@ import { erf } from "./erf";
 import { count, pointer, Word, windowOffset, windowRows } from "./job";
 import { loadSpread, spread } from "./lanes";
 import { legendreValue } from "./legendre";
-import { shapeWeights } from "./shape";
+import { shapeAtColumn, shapePoints, shapeValues, shapeWeights } from "./shape";
 
 const rootHalf: f64 = 0.7071067811865476;
 
@@ -70,19 +70,28 @@ function wingNode(blockColumns: i32, which: i32): i32 {
   return which == 0 ? 0 : which == 1 ? (n >> 1) - 1 : n - 1;
 }
 
-/** Profiles of all fibres at the nodes of the block that begins with column `x0`. */
+/** Profiles of the fibres at the nodes of the block that begins with column `x0`: of those whose byte in Word.needed is not
+ * 0. Windows and centres of all. */
 export function blockProfiles<T extends number>(job: usize, x0: i32): void {
+  const nFibre = count(job, Word.nFibre);
+  const nNode = nodeCount(count(job, Word.blockColumns));
+  placeWindows<T>(job, x0, nNode);
+  const shape = pointer(job, Word.shape);
+  for (let node: i32 = 0; node < nNode; node++) {
+    const t = nodeArgument(job, x0, node);
+    if (shape) shapeAtColumn(shapeValues(shape), shapePoints(shape), t, pointer(job, Word.shapeTable));
+    for (let k: i32 = 0; k < nFibre; k++) {
+      if (load<u8>(pointer(job, Word.needed) + <usize>k)) nodeProfile<T>(job, k, node, nNode, t);
+    }
+  }
+}
+
+/** First rows of all windows, and centres at the nodes. */
+function placeWindows<T extends number>(job: usize, x0: i32, nNode: i32): void {
   const nTrace = count(job, Word.nTrace);
-  const nWidth = count(job, Word.nWidth);
-  const nWindow = windowRows(job);
-  const blockColumns = count(job, Word.blockColumns);
-  const nNode = nodeCount(blockColumns);
-  const middleWing = count(job, Word.wing) > 0 ? wingNode(blockColumns, 1) : -1;
-  let weightsAt = pointer(job, Word.nodeWeights);
   let centreAt = pointer(job, Word.nodeCentre);
   for (let k: i32 = 0; k < count(job, Word.nFibre); k++) {
     const trace = pointer(job, Word.trace) + ((<usize>(k * nTrace)) << 3);
-    const width = pointer(job, Word.width) + ((<usize>(k * nWidth)) << 3);
     let sum: f64 = 0.0;
     for (let node: i32 = 0; node < nNode; node++) {
       sum += legendreValue(trace, nTrace, nodeArgument(job, x0, node));
@@ -90,54 +99,39 @@ export function blockProfiles<T extends number>(job: usize, x0: i32): void {
     const start = windowStart(sum / <f64>nNode, job);
     store<i32>(pointer(job, Word.start) + ((<usize>k) << 2), start);
     for (let node: i32 = 0; node < nNode; node++) {
-      const t = nodeArgument(job, x0, node);
-      const y = legendreValue(trace, nTrace, t);
-      store<T>(centreAt, <T>(y - <f64>start));
-      const sigma = legendreValue(width, nWidth, t);
-      const outer = node == 0 || node == nNode - 1;
-      if (middleWing >= 0 && (outer || node == middleWing)) {
-        const which: i32 = node == 0 ? 0 : node == middleWing ? 1 : 2;
-        wideWeights<T>(job, k, which, t, y, sigma, start, weightsAt);
-      } else nodeWeights<T>(job, t, y, sigma, start, nWindow, weightsAt);
+      store<T>(centreAt, <T>(legendreValue(trace, nTrace, nodeArgument(job, x0, node)) - <f64>start));
       centreAt += sizeof<T>();
-      weightsAt += <usize>nWindow * sizeof<T>();
     }
   }
 }
 
-/** The window of one fibre at a node, and the wings beside it. `which`: of the three nodes for wings. */
-function wideWeights<T extends number>(
-  job: usize,
-  k: i32,
-  which: i32,
-  t: f64,
-  y: f64,
-  width: f64,
-  start: i32,
-  outPtr: usize,
-): void {
-  const wing = count(job, Word.wing);
+/** Fibre k's window at one node, and at three of them the wings beside it. */
+function nodeProfile<T extends number>(job: usize, k: i32, node: i32, nNode: i32, t: f64): void {
+  const nTrace = count(job, Word.nTrace);
+  const nWidth = count(job, Word.nWidth);
   const nWindow = windowRows(job);
+  const wing = count(job, Word.wing);
+  const start = load<i32>(pointer(job, Word.start) + ((<usize>k) << 2));
+  const y = legendreValue(pointer(job, Word.trace) + ((<usize>(k * nTrace)) << 3), nTrace, t);
+  const width = legendreValue(pointer(job, Word.width) + ((<usize>(k * nWidth)) << 3), nWidth, t);
+  const windowBytes = <usize>nWindow * sizeof<T>();
+  const out = pointer(job, Word.nodeWeights) + <usize>(nNode * k + node) * windowBytes;
+  const which: i32 = node == 0 ? 0 : node == (nNode >> 1) - 1 ? 1 : node == nNode - 1 ? 2 : 3;
+  if (wing == 0 || which == 3) {
+    rowWeights<T>(job, t, y, width, start, nWindow, out);
+    return;
+  }
   const wide = pointer(job, Word.wideWeights);
   const wingBytes = <usize>wing * sizeof<T>();
-  const windowBytes = <usize>nWindow * sizeof<T>();
-  nodeWeights<T>(job, t, y, width, start - wing, nWindow + 2 * wing, wide);
-  memory.copy(outPtr, wide + wingBytes, windowBytes);
+  rowWeights<T>(job, t, y, width, start - wing, nWindow + 2 * wing, wide);
+  memory.copy(out, wide + wingBytes, windowBytes);
   const wings = pointer(job, Word.wingNodes) + <usize>(3 * k + which) * 2 * wingBytes;
   memory.copy(wings, wide, wingBytes);
   memory.copy(wings + wingBytes, wide + wingBytes + windowBytes, wingBytes);
 }
 
 /** `n` rows from `first` on of one fibre under the job's profile model. */
-function nodeWeights<T extends number>(
-  job: usize,
-  t: f64,
-  y: f64,
-  width: f64,
-  first: i32,
-  n: i32,
-  outPtr: usize,
-): void {
+function rowWeights<T extends number>(job: usize, t: f64, y: f64, width: f64, first: i32, n: i32, outPtr: usize): void {
   const shape = pointer(job, Word.shape);
   if (shape == 0) {
     gaussianWeights<T>(y, width, first, n, outPtr);
@@ -145,7 +139,7 @@ function nodeWeights<T extends number>(
   }
   const ny = count(job, Word.ny);
   const across: f64 = ny > 1 ? (2.0 * y) / <f64>(ny - 1) - 1.0 : 0.0;
-  shapeWeights<T>(shape, t, across, y, width, first, n, outPtr, pointer(job, Word.shapeTerms));
+  shapeWeights<T>(shape, pointer(job, Word.shapeTable), t, across, y, width, first, n, outPtr);
 }
 
 /** Where a node lies on the series' interval [−1, 1]; a single column sits at 0. */

@@ -1,23 +1,20 @@
 /** Profiles of all fibres in one column with their slopes by centre and width; src/reference/shapeProfiles.ts gives the
- * equations. In one column x is the same for all fibres, so that the shape's seven terms become four:
+ * equations.
  *
- *     1, y, P₂(y) and the width,   with tables C₀ + x C₁ + P₂(x) C₂,   C₃ + x C₅,   C₄,   C₆
- *
- *     columnTable: a row for each point of the shape's,  value slope  value slope  value slope  value slope      f64 each
+ *     columnTable: of shape.ts, for the column's x
  *     fibre:       for each fibre,  y  P₂(y)  width term  v of the centroid  scale  centre                       f64 each */
 
-import { nShapeTerm, widthUnit } from "./shape";
+import { shapeAtColumn, tableNumbers, widthUnit } from "./shape";
 import { count, firstOf, number, pointer, rowOf, ShapeNumbers, ShapeWord } from "./shapeJob";
 
 export const fibreNumbers: i32 = 6;
-const tableNumbers: i32 = 8;
 
 /** Fills weights, slopes, first rows and the fibres' numbers of `lane` with those of `column`. */
 export function fillProfiles(job: usize, column: i32, lane: i32): void {
   const nFibre = count(job, ShapeWord.nFibre);
   const x = load<f64>(rowOf(job, ShapeWord.argument, column, 1));
   const table = rowOf(job, ShapeWord.columnTable, lane, tableNumbers * count(job, ShapeWord.nTable));
-  contractTable(job, x, table);
+  shapeAtColumn(pointer(job, ShapeWord.table), count(job, ShapeWord.nTable), x, table);
   const fibres = rowOf(job, ShapeWord.fibre, lane, fibreNumbers * nFibre);
   for (let k: i32 = 0; k < nFibre; k++) {
     const at = (<usize>(column * nFibre + k)) << 3;
@@ -30,22 +27,6 @@ export function fillProfiles(job: usize, column: i32, lane: i32): void {
     const fibre = fibres + ((<usize>(k * fibreNumbers)) << 3);
     describeFibre(job, fibre, x, centre, width);
     fillProfile(job, lane, k, table, fibre, width);
-  }
-}
-
-function contractTable(job: usize, x: f64, out: usize): void {
-  const p2 = 1.5 * x * x - 0.5;
-  let from = pointer(job, ShapeWord.table);
-  for (let i: i32 = count(job, ShapeWord.nTable); i > 0; i--) {
-    for (let slope: usize = 0; slope < 16; slope += 8) {
-      const row = from + (slope == 0 ? 0 : (<usize>nShapeTerm) << 3);
-      store<f64>(out + slope, load<f64>(row) + x * load<f64>(row, 8) + p2 * load<f64>(row, 16));
-      store<f64>(out + slope, load<f64>(row, 24) + x * load<f64>(row, 40), 16);
-      store<f64>(out + slope, load<f64>(row, 32), 32);
-      store<f64>(out + slope, load<f64>(row, 48), 48);
-    }
-    from += (<usize>nShapeTerm) << 4;
-    out += (<usize>tableNumbers) << 3;
   }
 }
 

@@ -61,7 +61,8 @@ export enum Word {
   tileBits, // u8, ny × 16
   tileSpectra, // T, 6 × nFibre × 16
   tileFlags, // i32, nFibre × 16
-  shapeTerms, // f64, 7
+  shapeTable, // f64, 8 a point
+  needed, // u8, nFibre: whose profiles are wanted
   nodeCentre, // T, nFibre × nNode
   nodeWeights, // T, nFibre × nNode × nWindow
   wideWeights, // T, nWindow + 2·wing

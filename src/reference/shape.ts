@@ -44,13 +44,10 @@ export function shapeAt(table: ShapeTable, terms: Float64Array, v: number, out: 
   const cell = Math.min(Math.max(Math.floor(at), 0), table.n - 2);
   const t = Math.min(Math.max(at - cell, 0), 1);
   const row = cell * 2 * nShapeTerm;
-  let [c0, c1, d0, d1] = [0, 0, 0, 0];
-  for (let m = 0; m < nShapeTerm; m++) {
-    c0 += terms[m] * table.values[row + m];
-    d0 += terms[m] * table.values[row + nShapeTerm + m];
-    c1 += terms[m] * table.values[row + 2 * nShapeTerm + m];
-    d1 += terms[m] * table.values[row + 3 * nShapeTerm + m];
-  }
+  const c0 = sumOfTerms(table.values, row, terms);
+  const d0 = sumOfTerms(table.values, row + nShapeTerm, terms);
+  const c1 = sumOfTerms(table.values, row + 2 * nShapeTerm, terms);
+  const d1 = sumOfTerms(table.values, row + 3 * nShapeTerm, terms);
   const u = 1 - t;
   const rise = (c1 - c0) / table.step;
   out[0] = c0 + t * t * (3 - 2 * t) * (c1 - c0) + table.step * t * u * (u * d0 - t * d1);
@@ -81,7 +78,12 @@ export function shapeWeights(
 
 /** v of the profile's centroid. */
 export function centroidOf(table: ShapeTable, terms: Float64Array): number {
-  let sum = 0;
-  for (let m = 0; m < nShapeTerm; m++) sum += terms[m] * table.centroid[m];
-  return sum;
+  return sumOfTerms(table.centroid, 0, terms);
+}
+
+/** Σ T_m a_m of the seven numbers from `at` on, in the order of the kernel, for which x is one number: terms in x first. */
+function sumOfTerms(a: Float64Array, at: number, [, x, bentX, y, bentY, , wide]: Float64Array): number {
+  const inX = a[at] + x * a[at + 1] + bentX * a[at + 2];
+  const inY = a[at + 3] + x * a[at + 5];
+  return inX + y * inY + bentY * a[at + 4] + wide * a[at + 6];
 }
