@@ -1,8 +1,7 @@
-// The module's whole interface. Pointers and counts in, numbers out; src/kernels/ is the only caller.
+// Interface of the module that frames are read, corrected and extracted with. Pointers and counts in, numbers out; src/kernels/
+// is the only caller. What tracing and the measuring of profiles need besides is tracing.ts, a module of its own.
 export { bandedSystems32, bandedSystems64 } from "./banded";
 export { census } from "./census";
-export { centreColumns } from "./centring";
-export { centroid } from "./centroid";
 export { checksum, toBigEndian } from "./checksum";
 export { fitColumns } from "./columnFit";
 export { electrons, growSaturation, turnBytes, turnFloat32 } from "./electrons";
@@ -16,14 +15,10 @@ export {
   settleTile32,
   settleTile64,
 } from "./extract";
-export { groupMeans, groupMedians } from "./groups";
-export { legendreBases, legendreFits, legendreValue } from "./legendre";
+export { legendreValue } from "./legendre";
 export { median, quantile } from "./median";
 export { pixelsToFloat32, pixelsToFloat64 } from "./pixels";
 export { gaussianWeights64 } from "./profile";
-export { rankUpdate } from "./rankUpdate";
-export { fitShapeColumns } from "./shapeColumn";
-export { shapeNormals } from "./shapeNormal";
 
 /** First byte behind the compiler's own tables: where a workbench may begin. */
 export function heapBase(): usize {

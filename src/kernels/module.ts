@@ -1,4 +1,4 @@
-/** The door to the WebAssembly kernels: one compiled module, and one memory for each job.
+/** The door to the WebAssembly kernels: two compiled modules, and one memory for each job.
  *
  *     0 … heapBase()             the compiler's own tables
  *     heapBase() … end           what a Workbench hands out, in order, each piece on a 64-byte boundary
@@ -18,12 +18,13 @@ const ALIGN_BYTES = 64;
 export class Kernels {
   private readonly heapBase: number;
 
-  /** `team`: threads, when `module` is built for shared memory. */
+  /** `modules`: for extraction, and for tracing, whose tables lie behind the other's. `team`: threads, when they are built for
+   * shared memory. */
   constructor(
-    private readonly module: WebAssembly.Module,
+    private readonly modules: readonly [WebAssembly.Module, WebAssembly.Module],
     private readonly team?: Team,
   ) {
-    this.heapBase = instantiate(module, this.memory(1)).heapBase();
+    this.heapBase = instantiate(modules, this.memory(1)).heapBase();
   }
 
   /** Threads of every workbench. */
@@ -39,7 +40,7 @@ export class Kernels {
     if (pages > MOST_PAGES)
       throw new RangeError(`The job needs ${gib(total)} GiB of kernel memory; 4 GiB is the limit.`);
     const memory = this.memory(pages);
-    return new Workbench(instantiate(this.module, memory), memory, this.heapBase, this.team);
+    return new Workbench(instantiate(this.modules, memory), memory, this.heapBase, this.team);
   }
 
   private memory(pages: number): WebAssembly.Memory {
@@ -127,22 +128,30 @@ export function useThreads(nThread: number): void {
 }
 
 /** Loads the kernels when first asked for and keeps them.
- * `source`: where the module lies (default: beside this file), or its bytes; they run on one thread then.
+ * `extraction`, `tracing`: where the two modules lie (default: beside this file), or their bytes; they run on one thread then.
  * @throws Error when what is found there is not a WebAssembly module. */
-export function loadKernels(source?: URL | Uint8Array): Promise<Kernels> {
-  if (source !== undefined) return compile(source).then((module) => new Kernels(module));
+export function loadKernels(extraction?: URL | Uint8Array, tracing?: URL | Uint8Array): Promise<Kernels> {
+  if (extraction !== undefined || tracing !== undefined) return loadAlone(extraction, tracing);
   loading ??= threads > 1 && maySharedMemory() ? loadShared(threads) : loadAlone();
   return loading;
 }
 
-async function loadAlone(): Promise<Kernels> {
-  return new Kernels(await compile(new URL("./hatchel.wasm", import.meta.url)));
+async function loadAlone(
+  extraction: URL | Uint8Array = new URL("./hatchel.wasm", import.meta.url),
+  tracing: URL | Uint8Array = new URL("./hatchel.tracing.wasm", import.meta.url),
+): Promise<Kernels> {
+  return new Kernels(await Promise.all([compile(extraction), compile(tracing)]));
 }
 
 async function loadShared(nThread: number): Promise<Kernels> {
-  const module = await compile(new URL("./hatchel.shared.wasm", import.meta.url));
-  const { Team } = await import("./team.js");
-  return new Kernels(module, await Team.start(module, nThread));
+  const [modules, { Team }] = await Promise.all([
+    Promise.all([
+      compile(new URL("./hatchel.shared.wasm", import.meta.url)),
+      compile(new URL("./hatchel.tracing.shared.wasm", import.meta.url)),
+    ]),
+    import("./team.js"),
+  ]);
+  return new Kernels(modules, await Team.start(modules, nThread));
 }
 
 /** Node has shared memory and threads; a page only when it is isolated from other origins, and there is no door for it yet. */
@@ -171,11 +180,13 @@ async function fetchBytes(url: URL): Promise<Uint8Array> {
   return new Uint8Array(await response.arrayBuffer());
 }
 
-function instantiate(module: WebAssembly.Module, memory: WebAssembly.Memory): KernelExports {
+function instantiate(modules: readonly WebAssembly.Module[], memory: WebAssembly.Memory): KernelExports {
   const abort = () => {
     throw new Error("A kernel stopped at an impossible state; this is a defect of the program, not of the data.");
   };
-  return new WebAssembly.Instance(module, { env: { memory, abort } }).exports as unknown as KernelExports;
+  // heapBase is the last module's, behind all tables.
+  const exports = modules.map((module) => new WebAssembly.Instance(module, { env: { memory, abort } }).exports);
+  return Object.assign({}, ...exports) as KernelExports;
 }
 
 function gib(nBytes: number): string {

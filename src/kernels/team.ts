@@ -23,14 +23,14 @@ export class Team {
   private kernels: string[] = [];
 
   private constructor(
-    private readonly module: WebAssembly.Module,
+    private readonly modules: readonly WebAssembly.Module[],
     /** The caller included. */
     readonly nThread: number,
   ) {}
 
-  /** `nThread` threads, the caller included. `module`: the kernels, built for shared memory. */
-  static async start(module: WebAssembly.Module, nThread: number): Promise<Team> {
-    const team = new Team(module, nThread);
+  /** `nThread` threads, the caller included. `modules`: the kernels, built for shared memory. */
+  static async start(modules: readonly WebAssembly.Module[], nThread: number): Promise<Team> {
+    const team = new Team(modules, nThread);
     const { Worker } = await import("node:worker_threads");
     for (let i = 1; i < nThread; i++) {
       const thread = new Worker(new URL("./worker.js", import.meta.url));
@@ -79,8 +79,8 @@ export class Team {
     this.served = new WeakRef(bench);
     this.desk = desk;
     this.threads.forEach((thread, i) => {
-      const { module, kernels } = this;
-      thread.postMessage({ module, memory: bench.memory, desk, kernels, thread: i + 1 });
+      const { modules, kernels } = this;
+      thread.postMessage({ modules, memory: bench.memory, desk, kernels, thread: i + 1 });
     });
     return desk;
   }

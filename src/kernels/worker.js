@@ -1,15 +1,16 @@
 /** A thread that helps with a workbench's tiles. Plain JavaScript, since it is found by its file's name in src/ as in dist/.
  *
- * A message brings a memory, the module and the memory's desk (see team.ts); the thread then waits at the desk for work,
+ * A message brings a memory, the modules and the memory's desk (see team.ts); the thread then waits at the desk for work,
  * deaf to other messages, until the desk is closed. */
 import { parentPort } from "node:worker_threads";
 import { CLOSED, Desk } from "./desk.js";
 
-parentPort?.on("message", ({ module, memory, desk, kernels, thread }) => {
+parentPort?.on("message", ({ modules, memory, desk, kernels, thread }) => {
   const abort = () => {
     throw new Error("A kernel stopped at an impossible state.");
   };
-  const call = new WebAssembly.Instance(module, { env: { memory, abort } }).exports;
+  const exports = modules.map((module) => new WebAssembly.Instance(module, { env: { memory, abort } }).exports);
+  const call = Object.assign({}, ...exports);
   serve(desk, (kernel, job, tile) => call[kernels[kernel]](job, tile), thread);
 });
 
