@@ -68,6 +68,7 @@ export function prepareFibreOfRow(job: usize): void {
   for (; row < nRow; row++) store<i32>(out + ((<usize>row) << 2), nFibre);
 }
 
-function firstFibreOn(job: usize, row: i32): i32 {
+/** The first fibre whose window ends above the lane row. */
+export function firstFibreOn(job: usize, row: i32): i32 {
   return load<i32>(pointer(job, Word.fibreOfRow) + ((<usize>row) << 2));
 }

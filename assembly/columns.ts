@@ -109,6 +109,8 @@ export function loadGroup<T extends number>(job: usize, x: i32, nValid: i32, row
   const backgroundRows = pointer(job, Word.backgroundRows);
   const series = pointer(job, Word.backgroundSeries);
   prepareBackgroundSeries<T>(job, x);
+  const each = pointer(job, Word.fixedRows) != 0;
+  if (!each) v128.store(fixedRows, fixedVariance<T>(job, x, 0, <usize>x, nValid));
   let polynomials = pointer(job, Word.rowPolynomials) + <usize>(nY * (from - margin)) * sizeof<T>();
   let at = <usize>(from - margin) * stride + <usize>(tiled ? x - tile : x);
   let pixel = <usize>(from - margin) * nx + <usize>x;
@@ -126,7 +128,7 @@ export function loadGroup<T extends number>(job: usize, x: i32, nValid: i32, row
     v128.store(backgroundRows + laneRow, background);
     const light = v128.sub<T>(loadPixels<T>(electrons + (at << 2), nValid), background);
     v128.store(lightRows + laneRow, bits ? v128.and(light, lanesWithout<T>(bits)) : light);
-    v128.store(fixedRows + laneRow, fixedVariance<T>(job, x, row - margin, pixel, nValid));
+    if (each) v128.store(fixedRows + laneRow, fixedVariance<T>(job, x, row - margin, pixel, nValid));
     if (responds) loadResponse<T>(job, laneRow, pixel, nValid);
     at += stride;
     pixel += nx;

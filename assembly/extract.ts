@@ -31,7 +31,7 @@ import {
   storeTile,
   tileColumns,
 } from "./columns";
-import { confront } from "./cosmic";
+import { confront, reachOn } from "./cosmic";
 import { solveCrosstalk, withoutCrosstalk } from "./crosstalk";
 import { groupFlags } from "./flags";
 import { count, laneRows, MethodCode, marginRows, pointer, Word, windowLaneRow, windowOffset, windowRows } from "./job";
@@ -115,12 +115,12 @@ function extractGroup<T extends number>(job: usize, x: i32, nValid: i32, tile: i
     takeSolution<T>(job, 0, nFibre, everyLane, round == minRounds);
     lightAfresh<T>(job, round < minRounds || minRounds == 0);
     if (round == minRounds) break;
-    confront<T>(job, 0, nFibre, margin, top, everyLane, rejecting, rejecting, true);
+    confront<T>(job, margin, top, everyLane, rejecting, rejecting, true);
     clearCalls(job);
     normalEquations<T>(job, 0, nFibre, 0);
   }
   const maxRounds = count(job, Word.maxRounds);
-  confront<T>(job, 0, nFibre, margin, top, everyLane, rejecting, rejecting && minRounds < maxRounds, false);
+  confront<T>(job, margin, top, everyLane, rejecting, rejecting && minRounds < maxRounds, false);
   for (let round = minRounds; round < maxRounds && takeCalls(job); round++) {
     const more = rejecting && round + 1 < maxRounds;
     for (let chunk: i32 = 0; chunk < chunkCount(job); chunk++) {
@@ -132,6 +132,11 @@ function extractGroup<T extends number>(job: usize, x: i32, nValid: i32, tile: i
   if (rejecting) storeRejected(job, x, nValid);
   storeFit<T>(job, x, nValid, 0, nFibre, lanes, tile);
   storeModel<T>(job, x, nValid);
+  if (count(job, Word.keepReach)) {
+    for (let row = margin; row < top; row++) {
+      v128.store(pointer(job, Word.reach) + ((<usize>row) << 4), reachOn<T>(job, row));
+    }
+  }
   estimate<T>(job, 0, nFibre);
   const raised = groupFlags<T>(job, x, 0, nFibre);
   storeGroup<T>(job, x, nValid, 0, nFibre, lanes, raised, tile);
@@ -181,7 +186,7 @@ function settleChunk<T extends number>(job: usize, chunk: i32, lanes: v128, reje
   settleStretch<T>(job, k0, k1, 0, nFibre, lanes);
   const row0 = windowLaneRow(job, k0);
   const row1 = windowLaneRow(job, k1 - 1) + windowRows(job);
-  confront<T>(job, k0, k1, row0, row1, lanes, rejecting, mark, false);
+  confront<T>(job, row0, row1, lanes, rejecting, mark, false);
 }
 
 /** Fibres k0 … k1 − 1 anew in `lanes` while the others stand still. Of the fibres only `lowest` … `highest` − 1 are known. */
@@ -189,7 +194,7 @@ function settleStretch<T extends number>(job: usize, k0: i32, k1: i32, lowest: i
   const bandwidth = count(job, Word.bandwidth);
   const row0 = windowLaneRow(job, k0);
   const row1 = windowLaneRow(job, k1 - 1) + windowRows(job);
-  confront<T>(job, k0, k1, row0, row1, lanes, false, false, true);
+  confront<T>(job, row0, row1, lanes, false, false, true);
   // Every fibre that sees one of these rows, so that the equations always belong to the variances as they are.
   normalEquations<T>(job, max(k0 - bandwidth, lowest), min(k1 + bandwidth, highest), lowest);
   solveNormal<T>(job, k0, k1);
@@ -314,7 +319,7 @@ function settleGrown<T extends number>(job: usize, x: i32, offset: i32, nValid: 
   const row0 = windowLaneRow(job, from);
   const row1 = windowLaneRow(job, to - 1) + windowRows(job);
   openStretch<T>(job, x, offset, nValid, from, to, row0, row1);
-  confront<T>(job, from, to, row0, row1, lanes, false, false, true);
+  confront<T>(job, row0, row1, lanes, false, false, true);
   let unsettled = lanes;
   for (let round: i32 = 0; round < count(job, Word.maxRounds); round++) {
     clearCalls(job);
@@ -323,17 +328,7 @@ function settleGrown<T extends number>(job: usize, x: i32, offset: i32, nValid: 
     unsettled = v128.and(unsettled, calledLanes(job));
     if (!v128.any_true(unsettled)) break;
   }
-  confront<T>(
-    job,
-    k0,
-    k1,
-    windowLaneRow(job, k0),
-    windowLaneRow(job, k1 - 1) + windowRows(job),
-    lanes,
-    false,
-    false,
-    false,
-  );
+  confront<T>(job, windowLaneRow(job, k0), windowLaneRow(job, k1 - 1) + windowRows(job), lanes, false, false, false);
   const s0 = max(chunk * chunkFibres - (reach >> 1), 0);
   const s1 = min((chunk + 1) * chunkFibres + (reach >> 1), nFibre);
   const stored = lanesSet<T>(lanes) & ((1 << nValid) - 1);

@@ -25,13 +25,14 @@ export function weighByData<T extends number>(job: usize, row0: i32, row1: i32):
   const ivar = pointer(job, Word.inverseVariance);
   const net = pointer(job, Word.net);
   const fixed = pointer(job, Word.fixed);
+  const fixedRows = pointer(job, Word.fixedRows);
   const bits = pointer(job, Word.bits);
   const one = spread<T>(1);
   for (let row = row0; row < row1; row++) {
     const at = (<usize>row) << 4;
     const data = v128.load(light + at);
     const all = v128.add<T>(data, v128.load(background + at));
-    const inverse = v128.div<T>(one, pixelVariance<T>(job, v128.load(fixed + at), at, all, responds));
+    const inverse = v128.div<T>(one, pixelVariance<T>(job, v128.load(fixed + (at & fixedRows)), at, all, responds));
     const masked = load<u32>(bits + (at >> 2));
     v128.store(ivar + at, masked ? v128.and(inverse, lanesWithout<T>(masked)) : inverse);
     v128.store(net + at, data);

@@ -15,7 +15,7 @@ import type { Frame } from "../detector/frame.js";
 import { loadKernels } from "../kernels/module.js";
 import { MaskBit } from "../reference/bits.js";
 import type { Column } from "../reference/column.js";
-import { noteReach } from "../reference/cosmic.js";
+import { reachOn } from "../reference/cosmic.js";
 import { pixelVariance } from "../reference/variance.js";
 import { checkGeometry } from "../tramlines/file.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
@@ -181,8 +181,8 @@ function expectColumn(
 /** Light nearby that a misfit of the profiles is a share of: [nRow], e⁻. */
 function lightInReach(column: Column, light: Float64Array, flux: Float64Array): Float64Array {
   const reach = new Float64Array(column.nRow);
-  const rows: [number, number] = [column.margin, column.nRow - column.margin];
-  noteReach(column, { model: light, wings: new Float64Array(column.nRow) }, flux, [0, column.nFibre], rows, reach);
+  const all = { model: light, wings: new Float64Array(column.nRow) };
+  for (let row = column.margin; row < column.nRow - column.margin; row++) reach[row] = reachOn(column, all, flux, row);
   return reach;
 }
 

@@ -26,6 +26,8 @@ export enum Word {
   maxRounds,
   firstColumn, // columns before this one are left alone; a multiple of 4
   endColumn, // columns from here on too
+  fixedRows, // all ones when each lane row has a fixed variance of its own, 0 when the first holds for all
+  keepReach, // whether lane rows of reach are wanted
 
   // the frame: ny × nx
   electrons, // f32

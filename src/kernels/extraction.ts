@@ -139,10 +139,12 @@ export class ExtractionBench {
    * from `x0` on, a multiple of four. Writes the group's spectra too. */
   inspect(x0: number): GroupRows {
     this.setRejection(Number.MAX_VALUE, Number.MAX_VALUE);
+    for (const job of this.jobs) job[Word.keepReach] = 1;
     const nLane = this.precision === "f32" ? 4 : 2;
     const x1 = Math.min(x0 + nLane, this.input.nx);
     this.run(x0, x1);
     this.setRejection(this.input.kappa, this.input.growKappa);
+    for (const job of this.jobs) job[Word.keepReach] = 0;
     const margin = marginRows(this.input);
     const rows = (word: Word) =>
       this.pieces.get(word)!.slice(margin * nLane, (margin + this.input.ny) * nLane) as Float32Array | Float64Array;
@@ -195,6 +197,7 @@ export class ExtractionBench {
       [Word.crosstalk, input.crosstalk ? 1 : 0],
       [Word.minRounds, input.minRounds],
       [Word.maxRounds, input.maxRounds],
+      [Word.fixedRows, noise.fixedVarianceImage === undefined && oneBand(noise.bandOfRow) ? 0 : -1],
     ];
     for (const job of this.jobs) for (const [word, value] of counts) job[word] = value;
     const arrays: [Word, ArrayLike<number> | undefined][] = [
@@ -343,6 +346,11 @@ function pieceType(type: PieceType, precision: Precision) {
 function planBytes(plan: Plan, precision: Precision): number {
   const bytes = { float32: 4, float64: 8, int32: 4, uint8: 1 };
   return plan.reduce((sum, [, type, length]) => sum + bytes[pieceType(type, precision)] * length, 0);
+}
+
+/** Whether one band holds for all rows, as where amplifiers lie side by side; then it is read once a column. */
+function oneBand(bandOfRow: Uint8Array): boolean {
+  return bandOfRow.every((band) => band === bandOfRow[0]);
 }
 
 function optional(word: Word, image: Float32Array | undefined): Plan {

@@ -6,7 +6,6 @@
  * has none. So a sharp bright emission line, which the profile fits only to within ε, is not eaten. Of a cluster only
  * the worst is taken in a round; the fit is then repeated without it. */
 import { MaskBit } from "./bits.js";
-import type { Stretch } from "./chunks.js";
 import { type Column, windowFirst } from "./column.js";
 import type { ColumnLight } from "./light.js";
 import { pixelVariance } from "./variance.js";
@@ -20,8 +19,6 @@ const wingShare = 0.02;
 
 /** What a column's last confrontation with its model left. */
 export interface Residue {
-  /** nRow, e⁻: light nearby, that a misfit is a share of. */
-  reach: Float64Array;
   /** nRow: excess² · inverse variance. */
   chiSquare: Float64Array;
   /** nRow: 1 where brighter than the lower threshold. */
@@ -36,7 +33,7 @@ export interface Thresholds {
 }
 
 export function noResidue({ nRow }: Column): Residue {
-  return { reach: new Float64Array(nRow), chiSquare: new Float64Array(nRow), suspect: new Uint8Array(nRow) };
+  return { chiSquare: new Float64Array(nRow), suspect: new Uint8Array(nRow) };
 }
 
 /** New inverse variances on rows from … to − 1, and the light that the next fit is to see. */
@@ -48,59 +45,47 @@ export function weighByModel(column: Column, light: ColumnLight, [from, to]: [nu
   }
 }
 
-/** Notes on rows from … to − 1, which the fibres of `stretch` light, what the fit leaves there. */
+/** Notes on rows from … to − 1 what the fit leaves there. */
 export function noteResidue(
   column: Column,
   light: ColumnLight,
   flux: Float64Array,
-  stretch: Stretch,
   [from, to]: [number, number],
   thresholds: Thresholds,
   residue: Residue,
 ): void {
-  noteReach(column, light, flux, stretch, [from, to], residue.reach);
   const suspect = thresholds.growKappa * thresholds.growKappa;
   for (let row = from; row < to; row++) {
     const left = column.light[row] - (light.model[row] + light.wings[row]);
     residue.chiSquare[row] = left * left * column.inverseVariance[row];
-    const allowed = allowedOn(column, light, residue, thresholds, row);
+    const allowed = allowedOn(column, light, flux, thresholds, row);
     residue.suspect[row] = squaredExcess(column, light, row) > suspect * allowed ? 1 : 0;
   }
 }
 
-/** Reach: the most light within ± reachRows, and a share of that of the fibres about: the first whose window ends above the
- * row, and as many more as windows can overlap. */
-export function noteReach(
-  column: Column,
-  { model, wings }: ColumnLight,
-  flux: Float64Array,
-  [k0, k1]: Stretch,
-  [from, to]: [number, number],
-  reach: Float64Array,
-): void {
-  let row = from;
-  for (let k = k0; k <= k1; k++) {
-    const end = k === k1 ? to : Math.min(windowFirst(column, k) + column.nWindow, to);
-    let about = 0;
-    for (let m = k; k < k1 && m <= Math.min(k + column.bandwidth, column.nFibre - 1); m++) about += Math.abs(flux[m]);
-    for (; row < end; row++) {
-      let near = 0;
-      for (let j = -reachRows; j <= reachRows; j++) near = Math.max(near, Math.abs(model[row + j] + wings[row + j]));
-      reach[row] = near + about * wingShare;
-    }
-  }
+/** Light nearby that a misfit is a share of: the most within ± reachRows, and a share of that of the fibres about, the first
+ * whose window ends above the row and as many more as windows can overlap. e⁻ */
+export function reachOn(column: Column, { model, wings }: ColumnLight, flux: Float64Array, row: number): number {
+  const { nFibre, bandwidth, nWindow } = column;
+  let near = 0;
+  for (let j = -reachRows; j <= reachRows; j++) near = Math.max(near, Math.abs(model[row + j] + wings[row + j]));
+  let k = 0;
+  while (k < nFibre && windowFirst(column, k) + nWindow <= row) k++;
+  let about = 0;
+  for (let m = k; m <= Math.min(k + bandwidth, nFibre - 1); m++) about += Math.abs(flux[m]);
+  return near + about * wingShare;
 }
 
 /** Rows from … to − 1 beyond κ that are the worst of their cluster. */
 export function worstOutliers(
   column: Column,
   light: ColumnLight,
-  residue: Residue,
+  flux: Float64Array,
   thresholds: Thresholds,
   [from, to]: [number, number],
 ): number[] {
   const limit = thresholds.kappa * thresholds.kappa;
-  const allowed = (row: number) => allowedOn(column, light, residue, thresholds, row);
+  const allowed = (row: number) => allowedOn(column, light, flux, thresholds, row);
   const ratio = (row: number) => squaredExcess(column, light, row) / allowed(row);
   const rows: number[] = [];
   for (let row = from; row < to; row++) {
@@ -130,12 +115,12 @@ function squaredExcess(column: Column, { model, wings }: ColumnLight, row: numbe
 /** What an excess squared is held against: variance, and the profile's own error. */
 function allowedOn(
   column: Column,
-  { model, wings }: ColumnLight,
-  { reach }: Residue,
+  light: ColumnLight,
+  flux: Float64Array,
   { profileError }: Thresholds,
   row: number,
 ): number {
-  const variance = pixelVariance(column.noise, row, model[row] + wings[row] + column.background[row]);
-  const slack = profileError * reach[row];
-  return variance + slack * slack;
+  const all = light.model[row] + light.wings[row] + column.background[row];
+  const slack = profileError * reachOn(column, light, flux, row);
+  return pixelVariance(column.noise, row, all) + slack * slack;
 }

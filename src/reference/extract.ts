@@ -9,7 +9,6 @@ import { callRow, chunkFibres, innerStretch, rowsOf, type Stretch, stretchOf } f
 import type { Column } from "./column.js";
 import {
   noResidue,
-  noteReach,
   noteResidue,
   type Residue,
   reject,
@@ -160,13 +159,13 @@ function extractColumn(input: ExtractionInput, column: Column, output: Extractio
     fit.light = { model: new Float64Array(nRow), wings: wings ? new Float64Array(nRow) : fit.light.wings };
     addLight(column, fit.light, fit.flux, 0, nFibre, { windows: true, wings });
     if (last) break;
-    if (rejecting) rejectWorst(fit, everyone, rows);
+    if (rejecting) rejectWorst(fit, rows);
     weighByModel(column, fit.light, rows);
     fit.normal = normalEquations(column);
   }
-  noteResidue(column, fit.light, fit.flux, everyone, rows, fit.thresholds, fit.residue);
+  noteResidue(column, fit.light, fit.flux, rows, fit.thresholds, fit.residue);
   if (rejecting && input.minRounds < input.maxRounds) {
-    for (const row of rejectWorst(fit, everyone, rows)) callRow(column, row, called);
+    for (const row of rejectWorst(fit, rows)) callRow(column, row, called);
   }
   for (let round = input.minRounds; round < input.maxRounds && called.size > 0; round++) {
     const chunks = sorted(called);
@@ -175,9 +174,9 @@ function extractColumn(input: ExtractionInput, column: Column, output: Extractio
       const stretch = stretchOf(column, chunk);
       const own = rowsOf(column, stretch);
       settleStretch(fit, stretch, 0, nFibre, called);
-      noteResidue(column, fit.light, fit.flux, stretch, own, fit.thresholds, fit.residue);
+      noteResidue(column, fit.light, fit.flux, own, fit.thresholds, fit.residue);
       if (!rejecting || round + 1 === input.maxRounds) continue;
-      for (const row of rejectWorst(fit, stretch, own)) callRow(column, row, called);
+      for (const row of rejectWorst(fit, own)) callRow(column, row, called);
     }
   }
   if (rejecting) writeRejected(input, fit, x);
@@ -203,7 +202,7 @@ function settleGrown(input: ExtractionInput, column: Column, output: ExtractionO
     settleStretch(fit, stretch, from, to, called);
     if (round + 1 >= input.minRounds && called.size === 0) break;
   }
-  noteResidue(column, fit.light, fit.flux, stretch, rowsOf(column, stretch), fit.thresholds, fit.residue);
+  noteResidue(column, fit.light, fit.flux, rowsOf(column, stretch), fit.thresholds, fit.residue);
   const inner = innerStretch(column, chunk);
   writeFit(fit, output, input.nx, x, inner);
   close(input, fit, output, x, stretch, inner);
@@ -250,9 +249,8 @@ function takeSolution(fit: Fit, [k0, k1]: Stretch, solution: Float64Array, calle
 }
 
 /** Takes the worst outliers of these rows out of the fit; returns them. */
-function rejectWorst({ column, light, flux, residue, thresholds }: Fit, stretch: Stretch, rows: [number, number]) {
-  noteReach(column, light, flux, stretch, rows, residue.reach);
-  const outliers = worstOutliers(column, light, residue, thresholds, rows);
+function rejectWorst({ column, light, flux, thresholds }: Fit, rows: [number, number]) {
+  const outliers = worstOutliers(column, light, flux, thresholds, rows);
   reject(column, outliers);
   return outliers;
 }
