@@ -1,7 +1,7 @@
 /** Columns in and out: a group of neighbouring columns from the frame into lane rows, its spectra back into the images. */
 import { Flag, MaskBit } from "../src/reference/bits";
 import { count, laneRows, marginRows, pointer, Word, windowOffset, windowRows, windowStartOf } from "./job";
-import { laneAt, laneCount, lanesWithout, loadBits, loadPixels, loadSpread, spread } from "./lanes";
+import { anyBitsInWindow, laneAt, laneCount, lanesWithout, loadBits, loadPixels, loadSpread, spread } from "./lanes";
 import { legendreValue } from "./legendre";
 import { knowsResponse } from "./variance";
 
@@ -216,21 +216,30 @@ export function storeGroup<T extends number>(
   raised: bool,
   tile: i32,
 ): void {
-  const whole = !raised && nValid == laneCount<T>() && mask == (1 << laneCount<T>()) - 1;
+  const whole = !raised && tile >= 0 && nValid == laneCount<T>() && mask == (1 << laneCount<T>()) - 1;
   const weighted = pointer(job, Word.weighted);
+  const fluxes = pointer(job, Word.fluxes);
+  const variances = pointer(job, Word.variances);
+  const covariances = pointer(job, Word.covariancesBelow);
+  const rowBytes: usize = <usize>tileColumns * sizeof<T>();
+  const imageBytes = <usize>count(job, Word.nFibre) * rowBytes;
+  let to = spectrumAt<T>(job, 0, k0, x, max(tile, 0)); // of the fibre, when the group goes to a tile as a whole
+  let flags = flagsAt(job, k0, x, max(tile, 0));
   for (let k = k0; k < k1; k++) {
     const chi2 = reducedChiSquare<T>(job, k);
     const background = v128.load(pointer(job, Word.backgroundRows) + ((<usize>middleRow(job, k)) << 4));
     const at = (<usize>k) << 4;
     if (whole) {
-      const covariance = isNextRow(job, k) ? v128.load(pointer(job, Word.covariancesBelow) + at, 16) : spread<T>(NaN);
-      v128.store(spectrumAt<T>(job, 0, k, x, tile), v128.load(pointer(job, Word.fluxes) + at));
-      v128.store(spectrumAt<T>(job, 1, k, x, tile), v128.load(pointer(job, Word.variances) + at));
-      v128.store(spectrumAt<T>(job, 2, k, x, tile), covariance);
-      v128.store(spectrumAt<T>(job, 3, k, x, tile), chi2);
-      v128.store(spectrumAt<T>(job, 4, k, x, tile), background);
-      if (sizeof<T>() == 4) v128.store(flagsAt(job, k, x, tile), spread<T>(0));
-      else store<i64>(flagsAt(job, k, x, tile), 0);
+      const covariance = isNextRow(job, k) ? v128.load(covariances + at, 16) : spread<T>(NaN);
+      v128.store(to, v128.load(fluxes + at));
+      v128.store(to + imageBytes, v128.load(variances + at));
+      v128.store(to + 2 * imageBytes, covariance);
+      v128.store(to + 3 * imageBytes, chi2);
+      v128.store(to + 4 * imageBytes, background);
+      if (sizeof<T>() == 4) v128.store(flags, spread<T>(0));
+      else store<i64>(flags, 0);
+      to += rowBytes;
+      flags += (<usize>tileColumns) << 2;
       continue;
     }
     v128.store(weighted, chi2);
@@ -296,9 +305,12 @@ export function loadFit<T extends number>(job: usize, x: i32, nValid: i32, k0: i
 export function storeTile<T extends number>(job: usize, tile: i32, width: i32): void {
   const nFibre = count(job, Word.nFibre);
   const bytes = <usize>width * sizeof<T>();
+  let from = pointer(job, Word.tileSpectra);
   for (let which: i32 = 0; which < nSpectrumImage; which++) {
+    const image = pointer(job, spectrumImage(which));
     for (let k: i32 = 0; k < nFibre; k++) {
-      copyBytes(spectrumAt<T>(job, which, k, tile, -1), spectrumAt<T>(job, which, k, tile, tile), bytes);
+      copyBytes(image + imageOffset(job, k, tile) * sizeof<T>(), from, bytes);
+      from += <usize>tileColumns * sizeof<T>();
     }
   }
   for (let k: i32 = 0; k < nFibre; k++) {
@@ -384,12 +396,20 @@ function reducedChiSquare<T extends number>(job: usize, k: i32): v128 {
   const squares = pointer(job, Word.chiSquare) + first;
   const crowd = pointer(job, Word.crowd) + first;
   const ivar = pointer(job, Word.inverseVariance) + first;
+  const bytes = (<usize>windowRows(job)) << 4;
   let sum = zero;
   let freedom = zero;
-  for (let at: usize = 0; at < (<usize>windowRows(job)) << 4; at += 16) {
-    sum = v128.add<T>(sum, v128.load(squares + at));
-    const good = v128.gt<T>(v128.load(ivar + at), zero);
-    freedom = v128.add<T>(freedom, v128.and(v128.sub<T>(one, v128.load(crowd + at)), good));
+  if (anyBitsInWindow(pointer(job, Word.bits) + (first >> 2), windowRows(job))) {
+    for (let at: usize = 0; at < bytes; at += 16) {
+      sum = v128.add<T>(sum, v128.load(squares + at));
+      const good = v128.gt<T>(v128.load(ivar + at), zero);
+      freedom = v128.add<T>(freedom, v128.and(v128.sub<T>(one, v128.load(crowd + at)), good));
+    }
+  } else {
+    for (let at: usize = 0; at < bytes; at += 16) {
+      sum = v128.add<T>(sum, v128.load(squares + at));
+      freedom = v128.add<T>(freedom, v128.sub<T>(one, v128.load(crowd + at)));
+    }
   }
   const enough = v128.gt<T>(freedom, spread<T>(0.5));
   return v128.bitselect(v128.div<T>(sum, freedom), spread<T>(NaN), enough);

@@ -64,10 +64,9 @@ export function prepareNodeShares<T extends number>(job: usize): void {
   }
 }
 
-/** The three nodes at which wings are looked at: the first, the last before the middle, the last. */
+/** The two nodes at which wings are looked at: the second, and the last but one. */
 function wingNode(blockColumns: i32, which: i32): i32 {
-  const n = nodeCount(blockColumns);
-  return which == 0 ? 0 : which == 1 ? (n >> 1) - 1 : n - 1;
+  return which == 0 ? 1 : nodeCount(blockColumns) - 2;
 }
 
 /** Profiles of the fibres at the nodes of the block that begins with column `x0`: of those whose byte in Word.needed is not
@@ -105,7 +104,7 @@ function placeWindows<T extends number>(job: usize, x0: i32, nNode: i32): void {
   }
 }
 
-/** Fibre k's window at one node, and at three of them the wings beside it. */
+/** Fibre k's window at one node, and at two of them the wings beside it. */
 function nodeProfile<T extends number>(job: usize, k: i32, node: i32, nNode: i32, t: f64): void {
   const nTrace = count(job, Word.nTrace);
   const nWidth = count(job, Word.nWidth);
@@ -116,8 +115,8 @@ function nodeProfile<T extends number>(job: usize, k: i32, node: i32, nNode: i32
   const width = legendreValue(pointer(job, Word.width) + ((<usize>(k * nWidth)) << 3), nWidth, t);
   const windowBytes = <usize>nWindow * sizeof<T>();
   const out = pointer(job, Word.nodeWeights) + <usize>(nNode * k + node) * windowBytes;
-  const which: i32 = node == 0 ? 0 : node == (nNode >> 1) - 1 ? 1 : node == nNode - 1 ? 2 : 3;
-  if (wing == 0 || which == 3) {
+  const which: i32 = node == 1 ? 0 : node == nNode - 2 ? 1 : -1;
+  if (wing == 0 || which < 0) {
     rowWeights<T>(job, t, y, width, start, nWindow, out);
     return;
   }
@@ -125,7 +124,7 @@ function nodeProfile<T extends number>(job: usize, k: i32, node: i32, nNode: i32
   const wingBytes = <usize>wing * sizeof<T>();
   rowWeights<T>(job, t, y, width, start - wing, nWindow + 2 * wing, wide);
   memory.copy(out, wide + wingBytes, windowBytes);
-  const wings = pointer(job, Word.wingNodes) + <usize>(3 * k + which) * 2 * wingBytes;
+  const wings = pointer(job, Word.wingNodes) + <usize>(2 * k + which) * 2 * wingBytes;
   memory.copy(wings, wide, wingBytes);
   memory.copy(wings + wingBytes, wide + wingBytes + windowBytes, wingBytes);
 }
@@ -190,29 +189,26 @@ export function interpolateProfiles<T extends number>(job: usize, offset: i32, k
   }
 }
 
-/** Weights of the wings of fibres k0 … k1 − 1 in the four columns of which one is `offset` columns into the block: a
- * parabola through three of the nodes, at the middle of the four. Smooth as wings are, that is near enough to every one. */
+/** Weights of the wings of fibres k0 … k1 − 1 in the four columns of which one is `offset` columns into the block: a line
+ * through two of the nodes, at the middle of the four. Smooth as wings are, that is near enough to every one. */
 export function interpolateWings<T extends number>(job: usize, offset: i32, k0: i32, k1: i32): void {
   const wingBytes: usize = <usize>(2 * count(job, Word.wing)) * sizeof<T>();
   if (wingBytes == 0) return;
   const blockColumns = count(job, Word.blockColumns);
-  const here: f64 = <f64>(offset & ~3) + 1.5;
-  const a = nodeOffset(blockColumns, 0);
-  const b = nodeOffset(blockColumns, wingNode(blockColumns, 1));
-  const c = nodeOffset(blockColumns, wingNode(blockColumns, 2));
-  const shareA = spread<T>(((here - b) * (here - c)) / ((a - b) * (a - c)));
-  const shareB = spread<T>(((here - a) * (here - c)) / ((b - a) * (b - c)));
-  const shareC = spread<T>(((here - a) * (here - b)) / ((c - a) * (c - b)));
+  const first = nodeOffset(blockColumns, wingNode(blockColumns, 0));
+  const last = nodeOffset(blockColumns, wingNode(blockColumns, 1));
+  const share: f64 = (<f64>(offset & ~3) + 1.5 - first) / (last - first);
+  const ofFirst = spread<T>(1.0 - share);
+  const ofLast = spread<T>(share);
   let out = pointer(job, Word.wingWeights) + <usize>k0 * wingBytes;
-  let nodes = pointer(job, Word.wingNodes) + <usize>k0 * 3 * wingBytes;
+  let nodes = pointer(job, Word.wingNodes) + <usize>k0 * 2 * wingBytes;
   for (let k = k0; k < k1; k++) {
     for (let at: usize = 0; at < wingBytes; at += 16) {
-      let sum = v128.mul<T>(shareA, v128.load(nodes + at));
-      sum = v128.add<T>(sum, v128.mul<T>(shareB, v128.load(nodes + wingBytes + at)));
-      v128.store(out + at, v128.add<T>(sum, v128.mul<T>(shareC, v128.load(nodes + 2 * wingBytes + at))));
+      const a = v128.mul<T>(ofFirst, v128.load(nodes + at));
+      v128.store(out + at, v128.add<T>(a, v128.mul<T>(ofLast, v128.load(nodes + wingBytes + at))));
     }
     out += wingBytes;
-    nodes += 3 * wingBytes;
+    nodes += 2 * wingBytes;
   }
 }
 

@@ -65,6 +65,7 @@ export function shapeWeights<T extends number>(
   const inWidth = f64x2.splat(wide);
   const origin = centroid(shapePtr, x, y, bent, wide);
   const step = load<f64>(shapePtr, 8);
+  const perStep = 1.0 / step;
   const start = load<f64>(shapePtr);
   const last = shapePoints(shapePtr) - 2;
   let below = cumulative(
@@ -75,11 +76,12 @@ export function shapeWeights<T extends number>(
     inY,
     inBent,
     inWidth,
+    perStep,
     (<f64>first - 0.5 - centre) * scale + origin,
   );
   for (let i: i32 = 0; i < n; i++) {
     const v = (<f64>(first + i) + 0.5 - centre) * scale + origin;
-    const above = cumulative(tablePtr, start, step, last, inY, inBent, inWidth, v);
+    const above = cumulative(tablePtr, start, step, last, inY, inBent, inWidth, perStep, v);
     store<T>(outPtr + <usize>i * sizeof<T>(), <T>(above - below));
     below = above;
   }
@@ -101,10 +103,11 @@ function cumulative(
   inY: v128,
   inBent: v128,
   inWidth: v128,
+  perStep: f64,
   v: f64,
 ): f64 {
-  const at = (v - start) / step;
-  const cell = min(max(<i32>floor(min(max(at, -1.0), <f64>last + 2.0)), 0), last);
+  const at = (v - start) * perStep;
+  const cell = <i32>min(max(at, 0.0), <f64>last);
   const t = min(max(at - <f64>cell, 0.0), 1.0);
   const here = told(tablePtr + <usize>cell * rowBytes, inY, inBent, inWidth);
   const there = told(tablePtr + <usize>(cell + 1) * rowBytes, inY, inBent, inWidth);

@@ -68,7 +68,7 @@ export enum Word {
   nodeCentre, // T, nFibre × nNode
   nodeWeights, // T, nFibre × nNode × nWindow
   wideWeights, // T, nWindow + 2·wing
-  wingNodes, // T, nFibre × 3 × 2·wing: below the window, then above it
+  wingNodes, // T, nFibre × 2 × 2·wing: below the window, then above it
   wingWeights, // T, nFibre × 2·wing
   fibreOfRow, // i32, a lane row: the first fibre whose window ends above it
   nodeShares, // T, nNode × blockColumns

@@ -320,7 +320,7 @@ function scratchPlan(input: ExtractionInput, nLane: number): Plan {
     [Word.nodeCentre, "lanes", nNode * nFibre],
     [Word.nodeWeights, "lanes", nNode * nFibre * nWindow],
     [Word.wideWeights, "lanes", nWindow + 2 * wing],
-    [Word.wingNodes, "lanes", 6 * nFibre * wing],
+    [Word.wingNodes, "lanes", 4 * nFibre * wing],
     [Word.wingWeights, "lanes", 2 * nFibre * wing],
     [Word.fibreOfRow, "int32", nRow],
     [Word.nodeShares, "lanes", nNode * input.blockColumns],

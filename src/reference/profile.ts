@@ -5,7 +5,7 @@
  * the cost does not depend on the model; where lines run steeply the blocks are narrower.
  *
  * Far from the fibre only the wings are left, a per cent of the light at most and smooth: there a weight is taken for four
- * columns together, from a parabola through three of the nodes. */
+ * columns together, from a line through two of the nodes. */
 import { erf } from "./erf.js";
 import { legendreArgument, legendreValue } from "./legendre.js";
 import { type ShapeTable, shapeTerms, shapeWeights } from "./shape.js";
@@ -62,22 +62,17 @@ export function nodeShares(blockColumns: BlockColumns, offset: number): number[]
   );
 }
 
-/** Which nodes the wings are looked at: the first, the last before the middle, the last. */
-export function wingNodes(blockColumns: BlockColumns): [number, number, number] {
-  const nNode = blockNodes(blockColumns).length;
-  return [0, nNode / 2 - 1, nNode - 1];
+/** At which nodes the wings are looked at: the second, and the last but one. */
+export function wingNodes(blockColumns: BlockColumns): [number, number] {
+  return [1, blockNodes(blockColumns).length - 2];
 }
 
-/** The parabola through those nodes, at the middle of the four columns of which one is `offset`: [3], sum 1. */
-export function wingShares(blockColumns: BlockColumns, offset: number): [number, number, number] {
-  const here = offset - (offset % 4) + 1.5;
+/** The line through those nodes, at the middle of the four columns of which one is `offset`: [2], sum 1. */
+export function wingShares(blockColumns: BlockColumns, offset: number): [number, number] {
   const nodes = blockNodes(blockColumns);
-  const [a, b, c] = wingNodes(blockColumns).map((node) => nodes[node]);
-  return [
-    ((here - b) * (here - c)) / ((a - b) * (a - c)),
-    ((here - a) * (here - c)) / ((b - a) * (b - c)),
-    ((here - a) * (here - b)) / ((c - a) * (c - b)),
-  ];
+  const [first, last] = wingNodes(blockColumns).map((node) => nodes[node]);
+  const share = (offset - (offset % 4) + 1.5 - first) / (last - first);
+  return [1 - share, share];
 }
 
 /** What a block of columns needs of the fibres: the profiles at its nodes. */
@@ -89,7 +84,7 @@ export interface BlockProfiles {
   centre: Float64Array;
   /** nFibre × nNode × nWindow: weights at the nodes. */
   weights: Float64Array;
-  /** nFibre × 3 × 2·wing: weights below the window, then above it, at the nodes for wings. */
+  /** nFibre × 2 × 2·wing: weights below the window, then above it, at the nodes for wings. */
   wings: Float64Array;
 }
 
@@ -122,7 +117,7 @@ export function blockProfiles(input: ProfileInput, x0: number): BlockProfiles {
   const start = new Int32Array(nFibre);
   const centre = new Float64Array(nNode * nFibre);
   const weights = new Float64Array(nNode * nFibre * nWindow);
-  const wings = new Float64Array(3 * nFibre * 2 * wing);
+  const wings = new Float64Array(4 * nFibre * wing);
   for (let k = 0; k < nFibre; k++) {
     const y = nodes.map((t) => legendreValue(input.trace, t, k * nTrace, nTrace));
     start[k] = windowStart(y.reduce((sum, one) => sum + one, 0) / nNode, halfWindow, input.ny);
@@ -134,8 +129,8 @@ export function blockProfiles(input: ProfileInput, x0: number): BlockProfiles {
       const wide = profileWeights(input, t, y[node], sigma, start[k] - beside, nWindow + 2 * beside);
       weights.set(wide.subarray(beside, beside + nWindow), (nNode * k + node) * nWindow);
       if (beside === 0) return;
-      wings.set(wide.subarray(0, wing), (3 * k + which) * 2 * wing);
-      wings.set(wide.subarray(wing + nWindow), (3 * k + which) * 2 * wing + wing);
+      wings.set(wide.subarray(0, wing), (2 * k + which) * 2 * wing);
+      wings.set(wide.subarray(wing + nWindow), (2 * k + which) * 2 * wing + wing);
     });
   }
   return { nNode, start, centre, weights, wings };
@@ -185,8 +180,8 @@ export function columnWings(block: BlockProfiles, wing: number, shares: readonly
   const nFibre = block.start.length;
   const n = 2 * wing;
   return Float64Array.from({ length: nFibre * n }, (_, at) => {
-    const first = Math.floor(at / n) * 3 * n + (at % n);
+    const first = Math.floor(at / n) * 2 * n + (at % n);
     const { wings } = block;
-    return shares[0] * wings[first] + shares[1] * wings[first + n] + shares[2] * wings[first + 2 * n];
+    return shares[0] * wings[first] + shares[1] * wings[first + n];
   });
 }

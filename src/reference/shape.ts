@@ -40,7 +40,7 @@ export function shapeTerms(x: number, y: number, width: number, referenceWidth: 
 
 /** C(v) and its slope c(v) for the terms T: [value, slope]. */
 export function shapeAt(table: ShapeTable, terms: Float64Array, v: number, out: Float64Array): void {
-  const at = (v - table.start) / table.step;
+  const at = (v - table.start) * (1 / table.step);
   const cell = Math.min(Math.max(Math.floor(at), 0), table.n - 2);
   const t = Math.min(Math.max(at - cell, 0), 1);
   const row = cell * 2 * nShapeTerm;
