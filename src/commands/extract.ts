@@ -87,7 +87,11 @@ async function extract(path: string, options: ExtractOptions, progress: Progress
   const extras = await measureExtras(frame, traced.tramlines, extraction, options, bench, progress);
   const history = {
     ...{ version, inputs: bench.inputs, sky: bench.spectrograph?.slit?.sky, extra: extras.hdus },
-    options: [...methodLines(options), ...frameLines(options), ...extraLines(options)],
+    options: [
+      ...methodLines({ ...options, precision: extraction.precision }),
+      ...frameLines(options),
+      ...extraLines(options),
+    ],
   };
   await uninterrupted(() =>
     writeSpectra(output, extraction, frame, traced.tramlines, history, { force: force === true, inputs: paths }),
@@ -133,7 +137,7 @@ function extractJson(
     frame: frame.name,
     method: extraction.spectra.method,
     crosstalkCorrected: extraction.spectra.crosstalkCorrected,
-    precision: options.precision,
+    precision: extraction.precision,
     cosmicRays: options.cosmicRays,
     tracing: tracing === undefined ? null : tracingJson(tracing),
     fibres: countFibres(tramlines),
@@ -178,7 +182,7 @@ function facts(
       ? ([["fibres", fibresText(countFibres(tramlines))]] as [string, string][])
       : tracingFacts(tracing)),
     ["shift", shiftText(extraction.shift)],
-    ["method", `${method}${crosstalk}, ${options.precision}`],
+    ["method", `${method}${crosstalk}, ${extraction.precision}`],
     ["cosmic rays", options.cosmicRays ? `${counted(extraction.nRejected, "pixel")} rejected` : "not looked for"],
     ["usable points", `${summary.nUsable} of ${summary.nPoint} (${percentage(summary.nUsable / summary.nPoint, 2)})`],
     ["flags", raised.length === 0 ? "none" : raised.map(([name, n]) => `${flagWords(name)} ${n}`).join(", ")],

@@ -1,6 +1,6 @@
 /** The options that commands share, with what their values may be. */
 import { type Command, Option } from "commander";
-import type { Precision } from "../kernels/banded.js";
+import type { PrecisionChoice } from "../extraction/precision.js";
 import { mostThreads } from "../kernels/module.js";
 import type { Method } from "../reference/extract.js";
 import type { ProfileKind } from "../tramlines/profiles.js";
@@ -31,7 +31,7 @@ export interface TramlineOptions {
 export interface MethodOptions {
   method: Method;
   crosstalk: boolean;
-  precision: Precision;
+  precision: PrecisionChoice;
   cosmicRays: boolean;
   halfAperture?: number;
 }
@@ -103,9 +103,9 @@ export function addMethodOptions(command: Command): Command {
 export function addKernelOptions(command: Command): Command {
   return command
     .addOption(
-      new Option("--precision <type>", "numbers that the kernels reckon with, f32 or f64")
-        .default("f64")
-        .argParser(oneOf<Precision>("--precision", ["f32", "f64"])),
+      new Option("--precision <type>", "numbers that the kernels reckon with: f32, f64, or auto, f32 where it serves")
+        .default("auto")
+        .argParser(oneOf<PrecisionChoice>("--precision", ["auto", "f32", "f64"])),
     )
     .addOption(
       new Option("--cosmic-rays <on|off>", "reject pixels hit by cosmic rays")

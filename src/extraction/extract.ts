@@ -1,7 +1,8 @@
 /** From a frame and its tramlines to spectra: background, a first pass that finds cosmic rays, their growth, and a second
  * pass over the columns that it touched. */
 import type { Frame } from "../detector/frame.js";
-import { loadKernels } from "../kernels/module.js";
+import type { Precision } from "../kernels/banded.js";
+import { type Kernels, loadKernels } from "../kernels/module.js";
 import { Flag, MaskBit } from "../reference/bits.js";
 import type { ExtractionInput, ExtractionOutput } from "../reference/extract.js";
 import { checkGeometry } from "../tramlines/file.js";
@@ -11,10 +12,11 @@ import type { Tramlines } from "../tramlines/tramlines.js";
 import { adaptTramlines } from "./adapt.js";
 import { noBackground } from "./background.js";
 import type { FrameFit } from "./modelColumn.js";
-import type { ExtractionOptions } from "./options.js";
+import type { Adapted, ExtractionOptions } from "./options.js";
 import { runPasses } from "./passes.js";
 import { type ExtractionPlan, widened } from "./plan.js";
-import { openFrame } from "./settle.js";
+import { needsDouble } from "./precision.js";
+import { type OpenFrame, openFrame } from "./settle.js";
 import type { BackgroundFit } from "./smooth.js";
 import type { Spectra } from "./spectra.js";
 
@@ -35,6 +37,8 @@ export interface Extraction {
   fit: FrameFit;
   /** ε as measured on this frame: share of the light nearby by which pixels miss the profiles beyond noise. */
   profileError: number;
+  /** Numbers that the kernels reckoned with. */
+  precision: Precision;
   warnings: string[];
 }
 
@@ -49,14 +53,8 @@ export async function extractFrame(
   const frame = withHits(given, options.knownHits);
   const kernels = await loadKernels();
   const adapted = options.adapted ?? adaptTramlines(kernels, frame, tramlines, options);
-  const { bench, input, plan, background, profileError } = openFrame(
-    kernels,
-    frame,
-    adapted.tramlines,
-    options,
-    adapted.background,
-  );
-  runPasses(bench, input, options.onProgress);
+  const opened = runFrame(kernels, frame, adapted, options);
+  const { bench, input, plan, background, profileError } = opened;
   const spectra = finishSpectra(bench.output, tramlines, input);
   options.knownHits?.forEach((hit, i) => {
     if (hit !== 0) bench.rejected[i] |= MaskBit.cosmic;
@@ -78,8 +76,17 @@ export async function extractFrame(
       flux: bench.fitFlux,
     },
     profileError,
+    precision: opened.precision,
     warnings: [...adapted.warnings, ...(background?.warnings ?? [])],
   };
+}
+
+/** All passes; once more in double precision when single turns out not to do. */
+function runFrame(kernels: Kernels, frame: Frame, adapted: Adapted, options: ExtractionOptions): OpenFrame {
+  const opened = openFrame(kernels, frame, adapted.tramlines, options, adapted.background);
+  runPasses(opened.bench, opened.input, options.onProgress);
+  if (options.precision !== "auto" || opened.precision === "f64" || !needsDouble(opened.bench.fitFlux)) return opened;
+  return runFrame(kernels, frame, adapted, { ...options, precision: "f64" });
 }
 
 function windowOf({ halfWindow, wing, bandwidth }: ExtractionPlan) {

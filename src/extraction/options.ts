@@ -1,17 +1,18 @@
 /** What can be asked of an extraction. */
-import type { Precision } from "../kernels/banded.js";
+
 import type { Method, SmoothBackground } from "../reference/extract.js";
 import type { OneOff } from "../tramlines/oneOff.js";
 import type { Shift } from "../tramlines/shift.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
+import type { PrecisionChoice } from "./precision.js";
 
 export interface ExtractionOptions {
   /** Default joint. */
   method?: Method;
   /** Give back to each fibre what boxcar or optimal let its neighbours take; joint always does. Default true. */
   crosstalk?: boolean;
-  /** Type of the kernels' numbers. Default f64; f32 is faster and serves well-separated fibres. */
-  precision?: Precision;
+  /** Type of the kernels' numbers. Default f64; auto takes f32, which is faster, wherever it costs next to nothing. */
+  precision?: PrecisionChoice;
   /** Reject cosmic rays. Default true. */
   cosmicRays?: boolean;
   /** Excess over noise, in σ, from which on a pixel is rejected. Default 5. */

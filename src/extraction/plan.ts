@@ -22,6 +22,8 @@ export interface ExtractionPlan {
   blockColumns: BlockColumns;
   /** Smallest distance between neighbouring active fibres anywhere, pixels. */
   smallestPitch: number;
+  /** Largest σ of an active fibre, pixels. */
+  widestSigma: number;
 }
 
 /** `leastReach`: pixels to either side of a tramline that must be looked at whatever the profile.
@@ -53,6 +55,7 @@ export function planExtraction(tramlines: Tramlines, leastReach = 0): Extraction
     bandwidth: furthestOverlap(centres, 2 * halfWindow + 2),
     blockColumns,
     smallestPitch,
+    widestSigma: widest,
   };
 }
 

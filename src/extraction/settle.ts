@@ -1,5 +1,6 @@
 /** What the frame itself tells before its spectra are taken: the background, and how well the profiles fit. */
 import type { Frame } from "../detector/frame.js";
+import type { Precision } from "../kernels/banded.js";
 import { ExtractionBench } from "../kernels/extraction.js";
 import type { Kernels } from "../kernels/module.js";
 import type { ExtractionInput, SmoothBackground } from "../reference/extract.js";
@@ -9,6 +10,7 @@ import { extractionInput } from "./input.js";
 import { measureMisfit } from "./misfit.js";
 import type { ExtractionOptions } from "./options.js";
 import { type ExtractionPlan, planExtraction } from "./plan.js";
+import { choosePrecision } from "./precision.js";
 import { type BackgroundFit, measureBackground } from "./smooth.js";
 
 /** An extraction ready to run: memory laid out, background and misfit settled. */
@@ -16,6 +18,7 @@ export interface OpenFrame {
   bench: ExtractionBench;
   input: ExtractionInput;
   plan: ExtractionPlan;
+  precision: Precision;
   /** Null when none was asked for. */
   background: BackgroundFit | null;
   /** ε: share of the light nearby by which pixels miss the profiles beyond noise. */
@@ -35,8 +38,9 @@ export function openFrame(
   const background = options.background === false ? null : measureBackground(kernels, frame, tramlines, start);
   const input = extractionInput(frame, tramlines, plan, options, background ?? noBackground());
   const rows = Int32Array.from(plan.active);
-  const bench = new ExtractionBench(kernels, input, rows, tramlines.nFibre, options.precision ?? "f64");
-  return { bench, input, plan, background, profileError: settleProfileError(bench, input) };
+  const precision = choosePrecision(options.precision ?? "f64", plan);
+  const bench = new ExtractionBench(kernels, input, rows, tramlines.nFibre, precision);
+  return { bench, input, plan, precision, background, profileError: settleProfileError(bench, input) };
 }
 
 /** Measures ε and has `bench` use it from here on. */
