@@ -276,12 +276,16 @@ export function storeFit<T extends number>(
   tile: i32,
 ): void {
   const fluxes = pointer(job, Word.fluxes);
+  if (tile >= 0) {
+    let to = spectrumAt<T>(job, 5, k0, x, tile);
+    for (let k = k0; k < k1; k++) {
+      v128.store(to, v128.load(fluxes + ((<usize>k) << 4)));
+      to += <usize>tileColumns * sizeof<T>();
+    }
+    return;
+  }
   for (let k = k0; k < k1; k++) {
     const to = spectrumAt<T>(job, 5, k, x, tile);
-    if (tile >= 0) {
-      v128.store(to, v128.load(fluxes + ((<usize>k) << 4)));
-      continue;
-    }
     for (let lane: i32 = 0; lane < nValid; lane++) {
       if ((mask >> lane) & 1) store<T>(to + <usize>lane * sizeof<T>(), laneAt<T>(fluxes + ((<usize>k) << 4), lane));
     }
