@@ -19,45 +19,54 @@ function smallestPivotShare<T extends number>(): f64 {
 /** M = L D Lᵀ in place. `bandPtr`: n × (b+1) v128. */
 export function factorBand<T extends number>(bandPtr: usize, n: i32, b: i32): void {
   const rowBytes = (<usize>(b + 1)) << 4;
-  const share = spread<T>(smallestPivotShare<T>());
-  for (let i: i32 = 0; i < n; i++) {
-    const here = bandPtr + <usize>i * rowBytes;
-    const reach = min(i, b);
-    for (let j = reach; j >= 1; j--) {
-      const there = here - <usize>j * rowBytes;
-      let u = v128.load(here + ((<usize>j) << 4));
-      for (let m = j + 1; m <= reach; m++) {
-        const l = v128.load(there + ((<usize>(m - j)) << 4));
-        u = v128.sub<T>(u, v128.mul<T>(v128.load(here + ((<usize>m) << 4)), l));
-      }
-      v128.store(here + ((<usize>j) << 4), u);
+  for (let i: i32 = 0; i < n; i++) factorRow<T>(bandPtr + <usize>i * rowBytes, min(i, b), rowBytes);
+}
+
+/** The row at `here`, of which `reach` neighbours before it are factored already. */
+export function factorRow<T extends number>(here: usize, reach: i32, rowBytes: usize): void {
+  for (let j = reach - 1; j >= 1; j--) {
+    const there = here - <usize>j * rowBytes;
+    let u = v128.load(here + ((<usize>j) << 4));
+    for (let m = j + 1; m <= reach; m++) {
+      const l = v128.load(there + ((<usize>(m - j)) << 4));
+      u = v128.sub<T>(u, v128.mul<T>(v128.load(here + ((<usize>m) << 4)), l));
     }
-    let pivot = v128.load(here);
-    let size = v128.abs<T>(pivot);
-    for (let j = 1; j <= reach; j++) {
-      const u = v128.load(here + ((<usize>j) << 4));
-      const l = v128.mul<T>(u, v128.load(here - <usize>j * rowBytes));
-      const taken = v128.mul<T>(u, l);
-      v128.store(here + ((<usize>j) << 4), l);
-      pivot = v128.sub<T>(pivot, taken);
-      size = v128.add<T>(size, v128.abs<T>(taken));
-    }
-    v128.store(here, inversePivot<T>(pivot, size, share));
+    v128.store(here + ((<usize>j) << 4), u);
   }
+  let pivot = v128.load(here);
+  let size = v128.abs<T>(pivot);
+  for (let j = 1; j <= reach; j++) {
+    const u = v128.load(here + ((<usize>j) << 4));
+    const l = v128.mul<T>(u, v128.load(here - <usize>j * rowBytes));
+    const taken = v128.mul<T>(u, l);
+    v128.store(here + ((<usize>j) << 4), l);
+    pivot = v128.sub<T>(pivot, taken);
+    size = v128.add<T>(size, v128.abs<T>(taken));
+  }
+  v128.store(here, inversePivot<T>(pivot, size, spread<T>(smallestPivotShare<T>())));
 }
 
 /** Solves M x = r in place of r, with the factors of `factorBand`. `rhsPtr`: n v128. */
 export function solveBand<T extends number>(bandPtr: usize, n: i32, b: i32, rhsPtr: usize): void {
   const rowBytes = (<usize>(b + 1)) << 4;
   for (let i: i32 = 0; i < n; i++) {
-    const here = bandPtr + <usize>i * rowBytes;
-    const at = rhsPtr + ((<usize>i) << 4);
-    let y = v128.load(at);
-    for (let j = 1; j <= min(i, b); j++) {
-      y = v128.sub<T>(y, v128.mul<T>(v128.load(here + ((<usize>j) << 4)), v128.load(at - ((<usize>j) << 4))));
-    }
-    v128.store(at, y);
+    substituteRow<T>(bandPtr + <usize>i * rowBytes, min(i, b), rhsPtr + ((<usize>i) << 4));
   }
+  substituteBack<T>(bandPtr, n, b, rhsPtr);
+}
+
+/** L y = r for the factored row at `here`, in place of its right-hand side, which stands behind those of the rows before. */
+export function substituteRow<T extends number>(here: usize, reach: i32, rhsPtr: usize): void {
+  let y = v128.load(rhsPtr);
+  for (let j = 1; j <= reach; j++) {
+    y = v128.sub<T>(y, v128.mul<T>(v128.load(here + ((<usize>j) << 4)), v128.load(rhsPtr - ((<usize>j) << 4))));
+  }
+  v128.store(rhsPtr, y);
+}
+
+/** D Lᵀ x = y in place of y. */
+export function substituteBack<T extends number>(bandPtr: usize, n: i32, b: i32, rhsPtr: usize): void {
+  const rowBytes = (<usize>(b + 1)) << 4;
   for (let i = n - 1; i >= 0; i--) {
     const here = bandPtr + <usize>i * rowBytes;
     const at = rhsPtr + ((<usize>i) << 4);

@@ -35,7 +35,7 @@ import { confront, reachOn } from "./cosmic";
 import { solveCrosstalk, withoutCrosstalk } from "./crosstalk";
 import { groupFlags } from "./flags";
 import { count, laneRows, MethodCode, marginRows, pointer, Word, windowLaneRow, windowOffset, windowRows } from "./job";
-import { jointCovariance, normalEquations, solveNormal } from "./joint";
+import { finishSolution, jointCovariance, normalEquations, solveNormal } from "./joint";
 import { laneCount, lanesSet, lanesWithout, loadBits, spread } from "./lanes";
 import { addLight, addWindowLight, addWingLight } from "./light";
 import { optimal } from "./optimal";
@@ -107,17 +107,17 @@ function extractGroup<T extends number>(job: usize, x: i32, nValid: i32, tile: i
   const everyLane = i32x4.splat(-1);
   loadGroup<T>(job, x, nValid, 0, nRow, tile);
   weighByData<T>(job, 0, nRow);
-  normalEquations<T>(job, 0, nFibre, 0);
+  normalEquations<T>(job, 0, nFibre, 0, true);
   clearCalls(job);
   memory.fill(pointer(job, Word.fluxes), 0, (<usize>nFibre) << 4);
   for (let round: i32 = 0; ; round++) {
-    solveNormal<T>(job, 0, nFibre);
+    finishSolution<T>(job);
     takeSolution<T>(job, 0, nFibre, everyLane, round == minRounds);
     lightAfresh<T>(job, round < minRounds || minRounds == 0);
     if (round == minRounds) break;
     confront<T>(job, margin, top, everyLane, rejecting, rejecting, true);
     clearCalls(job);
-    normalEquations<T>(job, 0, nFibre, 0);
+    normalEquations<T>(job, 0, nFibre, 0, true);
   }
   const maxRounds = count(job, Word.maxRounds);
   confront<T>(job, margin, top, everyLane, rejecting, rejecting && minRounds < maxRounds, false);
@@ -196,7 +196,7 @@ function settleStretch<T extends number>(job: usize, k0: i32, k1: i32, lowest: i
   const row1 = windowLaneRow(job, k1 - 1) + windowRows(job);
   confront<T>(job, row0, row1, lanes, false, false, true);
   // Every fibre that sees one of these rows, so that the equations always belong to the variances as they are.
-  normalEquations<T>(job, max(k0 - bandwidth, lowest), min(k1 + bandwidth, highest), lowest);
+  normalEquations<T>(job, max(k0 - bandwidth, lowest), min(k1 + bandwidth, highest), lowest, false);
   solveNormal<T>(job, k0, k1);
   const fluxes = pointer(job, Word.fluxes);
   const before = pointer(job, Word.covariancesBelow); // free until the estimate

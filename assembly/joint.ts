@@ -1,6 +1,6 @@
 /** Normal equations AᵀN⁻¹A f = AᵀN⁻¹d of a group of columns, their solution and covariance, in lanes, for all fibres or for
  * a stretch of them whose neighbours stand still. src/reference/joint.ts is the same for one column. */
-import { factorBand, inverseBand, solveBand } from "./banded";
+import { factorBand, factorRow, inverseBand, solveBand, substituteBack, substituteRow } from "./banded";
 import { count, pointer, Word, windowOffset, windowRows, windowStartOf, windowWeights } from "./job";
 import { anyBitsInWindow, lanesWithout, spread } from "./lanes";
 
@@ -8,8 +8,9 @@ import { anyBitsInWindow, lanesWithout, spread } from "./lanes";
 export const leastShare: f64 = 0.01;
 
 /** Fills Word.normal and Word.raw (the right-hand side) of fibres k0 … k1 − 1 from weights, light less the wings', and
- * inverse variances; fibres below `lowest` are not looked at. */
-export function normalEquations<T extends number>(job: usize, k0: i32, k1: i32, lowest: i32): void {
+ * inverse variances; fibres below `lowest` are not looked at. `factor`: each row is factored and substituted as it comes, into
+ * Word.band and Word.solution: the chain from pivot to pivot then runs beside the sums. */
+export function normalEquations<T extends number>(job: usize, k0: i32, k1: i32, lowest: i32, factor: bool): void {
   const nWindow = windowRows(job);
   const bandwidth = count(job, Word.bandwidth);
   const net = pointer(job, Word.net);
@@ -18,6 +19,8 @@ export function normalEquations<T extends number>(job: usize, k0: i32, k1: i32, 
   const bits = pointer(job, Word.bits);
   const raw = pointer(job, Word.raw);
   const normal = pointer(job, Word.normal);
+  const band = pointer(job, Word.band);
+  const solution = pointer(job, Word.solution);
   const rowBytes = (<usize>(bandwidth + 1)) << 4;
   const windowBytes = (<usize>nWindow) << 4;
   const zero = spread<T>(0);
@@ -57,6 +60,17 @@ export function normalEquations<T extends number>(job: usize, k0: i32, k1: i32, 
       const diagonalBelow = v128.load(normal + <usize>(k - j) * rowBytes);
       v128.store(bandAt, v128.and(v128.and(sum, measured), v128.gt<T>(diagonalBelow, zero))); // 0 there: not measured
     }
+    if (factor) {
+      const row = band + <usize>k * rowBytes;
+      const reach = min(k, bandwidth);
+      for (let at: usize = 0; at < rowBytes; at += 16) {
+        v128.store(row + at, v128.load(normal + <usize>k * rowBytes + at));
+      }
+      factorRow<T>(row, reach, rowBytes);
+      const rhsAt = solution + ((<usize>k) << 4);
+      v128.store(rhsAt, v128.and(rhs, measured));
+      substituteRow<T>(row, reach, rhsAt);
+    }
   }
 }
 
@@ -86,6 +100,12 @@ export function overlap<T extends number>(job: usize, k: i32, m: i32, ofK: usize
     );
   }
   return sum;
+}
+
+/** Fluxes of all fibres from the factors that `normalEquations` left: Word.solution. */
+export function finishSolution<T extends number>(job: usize): void {
+  const nFibre = count(job, Word.nFibre);
+  substituteBack<T>(pointer(job, Word.band), nFibre, count(job, Word.bandwidth), pointer(job, Word.solution));
 }
 
 /** Fluxes of fibres k0 … k1 − 1 from their normal equations: Word.solution. What is below k0 or from k1 on keeps its flux. */
