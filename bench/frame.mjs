@@ -47,7 +47,7 @@ export function makeFrame({ nFibre, nx, ny }) {
   addCosmicRays(electrons, nx, next);
   const mask = makeMask(nx, ny, next);
   return {
-    ...{ nx, ny, nFibre, halfWindow, wing: 0, blockColumns: 16, trace, nTrace: 4, width, nWidth: 2, electrons, mask },
+    ...{ nx, ny, nFibre, halfWindow, wing: 0, blockColumns: 64, trace, nTrace: 4, width, nWidth: 2, electrons, mask },
     noise: { bandOfRow, fixedVariance },
     background,
     seen: Int32Array.from({ length: 2 * nFibre }, (_, i) => (i % 2 ? nx - 1 : 0)),

@@ -150,20 +150,16 @@ export class Column {
     return (excess * excess) / (fixed[row] + Math.max(here, 0) + slack * slack);
   }
 
+  /** The most light within two rows, and a share of that of the fibres about. */
   lightInReach(row) {
-    const { flux, lowestFibre, margin } = this;
-    const { start, weights, nWindow } = this.profiles;
-    let reach = 0;
-    for (let k = lowestFibre[row]; k < flux.length && start[k] + margin <= row; k++) {
-      const i = row - margin - start[k];
-      let largest = 0;
-      for (let j = Math.max(i - reachRows, 0); j <= Math.min(i + reachRows, nWindow - 1); j++) {
-        const weight = weights[k * nWindow + j];
-        if (weight > largest) largest = weight;
-      }
-      reach += Math.abs(flux[k]) * (largest + wingShare);
-    }
-    return reach;
+    const { flux, model, lowestFibre } = this;
+    let near = 0;
+    for (let j = row - reachRows; j <= row + reachRows; j++) near = Math.max(near, Math.abs(model[j]));
+    let about = 0;
+    const lowest = lowestFibre[row];
+    const end = Math.min(lowest + this.input.bandwidth + 1, flux.length);
+    for (let k = lowest; k < end; k++) about += Math.abs(flux[k]);
+    return near + about * wingShare;
   }
 
   countLost() {

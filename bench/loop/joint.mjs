@@ -1,12 +1,12 @@
 // The honest rival: joint extraction as a loop over typed arrays, written for speed by someone who knows the engine.
 //
-// The work is the kernel's: windows and weights at four nodes a block and a cubic between them, computed once and used in
+// The work is the kernel's: windows and weights at six nodes a block and a polynomial between them, computed once and used in
 // all solves; normal equations of half-bandwidth 2; first fit on the data's noise, then rounds of rejection with the
 // profile's misfit and variance from the model; background surface; variances and neighbours' covariances from the
-// inverse's band; flags, reduced χ², suspects, the model's light. Doubles within, Float32 images out. Left out: images
+// inverse's band; flags, reduced χ², suspects; the model's light when asked for. Doubles within, Float32 images out. Left out: images
 // of the pixels' response, which the frames here have none of, and bandwidths other than 2.
 //
-// What makes it fast: no allocation in a column; a block of 16 columns is copied to columns that lie contiguous, and its
+// What makes it fast: no allocation in a column; a block of columns is copied to columns that lie contiguous, and its
 // spectra leave it row by row; sums over windows from running sums; what needs a reason (lost pixels, excess) is worked
 // out only where there is one.
 import { Flag, MaskBit } from "../../dist/reference/bits.js";

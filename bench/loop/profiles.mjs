@@ -1,9 +1,9 @@
-// Profiles for the loop: Gaussians integrated over pixels at four nodes of a block of 16 columns, and a cubic between
+// Profiles for the loop: Gaussians integrated over pixels at six nodes of a block of columns, and a polynomial between
 // them, as the kernel has it. The series' polynomials are evaluated once a node for all fibres.
 import { blockNodes, nodeShares } from "../../dist/reference/profile.js";
 import { erf } from "./erf.mjs";
 
-const nNode = 4;
+const nNode = 6;
 
 export class Profiles {
   /** @param {import("../../dist/reference/extract.js").ExtractionInput} input */
@@ -30,19 +30,19 @@ export class Profiles {
       legendreInto(polynomials, node, (2 * (x0 + this.nodes[node])) / (nx - 1) - 1, Math.max(nTrace, nWidth));
     }
     for (let k = 0; k < nFibre; k++) {
-      const y0 = series(trace, k * nTrace, nTrace, polynomials, 0);
-      const y1 = series(trace, k * nTrace, nTrace, polynomials, 1);
-      const y2 = series(trace, k * nTrace, nTrace, polynomials, 2);
-      const y3 = series(trace, k * nTrace, nTrace, polynomials, 3);
-      const first = Math.min(Math.max(Math.floor((y0 + y1 + y2 + y3) / 4 + 0.5) - halfWindow, -nWindow), ny);
-      start[k] = first;
-      nodeCentre[4 * k] = y0 - first;
-      nodeCentre[4 * k + 1] = y1 - first;
-      nodeCentre[4 * k + 2] = y2 - first;
-      nodeCentre[4 * k + 3] = y3 - first;
+      const at = nNode * k;
+      let sum = 0;
       for (let node = 0; node < nNode; node++) {
+        const y = series(trace, k * nTrace, nTrace, polynomials, node);
+        nodeCentre[at + node] = y;
+        sum += y;
+      }
+      const first = Math.min(Math.max(Math.floor(sum / nNode + 0.5) - halfWindow, -nWindow), ny);
+      start[k] = first;
+      for (let node = 0; node < nNode; node++) {
+        nodeCentre[at + node] -= first;
         const scale = Math.SQRT1_2 / series(width, k * nWidth, nWidth, polynomials, node);
-        gaussianInto(nodeWeights, (4 * k + node) * nWindow, nodeCentre[4 * k + node], scale, nWindow);
+        gaussianInto(nodeWeights, (at + node) * nWindow, nodeCentre[at + node], scale, nWindow);
       }
     }
   }
@@ -50,27 +50,28 @@ export class Profiles {
   /** Weights of all fibres in column `offset` of the block. @param {number} offset */
   openColumn(offset) {
     const { nWindow, nodeWeights, weights } = this;
-    const [s0, s1, s2, s3] = this.shares[offset];
-    const [n1, n2, n3] = [nWindow, 2 * nWindow, 3 * nWindow];
+    const [s0, s1, s2, s3, s4, s5] = this.shares[offset];
+    const [n1, n2, n3, n4, n5] = [nWindow, 2 * nWindow, 3 * nWindow, 4 * nWindow, 5 * nWindow];
     let from = 0;
-    for (let at = 0; at < weights.length; from += n3) {
+    for (let at = 0; at < weights.length; from += n5) {
       for (let i = 0; i < nWindow; i++, at++, from++) {
         weights[at] =
           s0 * nodeWeights[from] +
           s1 * nodeWeights[from + n1] +
           s2 * nodeWeights[from + n2] +
-          s3 * nodeWeights[from + n3];
+          s3 * nodeWeights[from + n3] +
+          s4 * nodeWeights[from + n4] +
+          s5 * nodeWeights[from + n5];
       }
     }
   }
 
   /** Fibre k's centre in column `offset`, counted from its window's first row. @param {number} k @param {number} offset */
   centre(k, offset) {
-    const [s0, s1, s2, s3] = this.shares[offset];
-    const { nodeCentre } = this;
-    return (
-      s0 * nodeCentre[4 * k] + s1 * nodeCentre[4 * k + 1] + s2 * nodeCentre[4 * k + 2] + s3 * nodeCentre[4 * k + 3]
-    );
+    const shares = this.shares[offset];
+    let sum = 0;
+    for (let node = 0; node < nNode; node++) sum += shares[node] * this.nodeCentre[nNode * k + node];
+    return sum;
   }
 }
 
@@ -84,13 +85,13 @@ export function gaussianInto(out, at, centre, scale, n) {
   }
 }
 
-/** P_0 … P_{n−1}(t) into out[4·j + node]. */
+/** P_0 … P_{n−1}(t) into out[nNode·j + node]. */
 function legendreInto(out, node, t, n) {
   let below = 1;
   let here = t;
   out[node] = 1;
   for (let j = 1; j < n; j++) {
-    out[4 * j + node] = here;
+    out[nNode * j + node] = here;
     const above = ((2 * j + 1) * t * here - j * below) / (j + 1);
     below = here;
     here = above;
@@ -99,6 +100,6 @@ function legendreInto(out, node, t, n) {
 
 function series(coef, from, n, polynomials, node) {
   let sum = coef[from];
-  for (let j = 1; j < n; j++) sum += coef[from + j] * polynomials[4 * j + node];
+  for (let j = 1; j < n; j++) sum += coef[from + j] * polynomials[nNode * j + node];
   return sum;
 }

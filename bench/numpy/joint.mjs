@@ -60,5 +60,5 @@ function readSpectra(folder) {
     chi2: image("chi2"),
     background: image("background"),
   };
-  return { output, rejected: new Uint8Array(bytes("rejected")), model: image("model") };
+  return { output, rejected: new Uint8Array(bytes("rejected")) };
 }

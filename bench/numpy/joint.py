@@ -1,9 +1,9 @@
-"""Joint extraction as a practised observer would write it with numpy and scipy: whole blocks of 16 columns in array
+"""Joint extraction as a practised observer would write it with numpy and scipy: whole blocks of 64 columns in array
 expressions, and a banded solve for each column.
 
-The work is that of the kernels and of bench/loop: profile weights at four nodes a block and a cubic between them, first fit
+The work is that of the kernels and of bench/loop: profile weights at six nodes a block and a polynomial between them, first fit
 on the data's noise, rounds of rejection and of variance from the model, background surface, variances and neighbours'
-covariances from the inverse's band, flags, reduced chi-square, suspects, the model's light. In double precision.
+covariances from the inverse's band, flags, reduced chi-square, suspects. In double precision.
 
     python3 joint.py DIR      reads DIR/job.json and the arrays named there, writes the results beside them,
                               prints the seconds of the extraction alone, the clock's and the processor's, as JSON
@@ -41,7 +41,6 @@ class Frame:
         self.out = {name: np.full((self.nFibre, self.nx), np.nan, "f4") for name in images}
         self.out["flags"] = np.zeros((self.nFibre, self.nx), "i4")
         self.out["rejected"] = np.zeros(shape, "u1")
-        self.out["model"] = np.zeros(shape, "f4")
 
     def scaled(self, pixel, n):
         return 2 * np.asarray(pixel, float) / (n - 1) - 1
@@ -82,7 +81,7 @@ class Block:
     def profiles(self):
         frame, n = self.frame, self.frame.n_window
         size = frame.blockColumns
-        nodes = (size - 1) / 2 + size / 2 * np.cos(np.pi * np.array([7, 5, 3, 1]) / 8)
+        nodes = (size - 1) / 2 + size / 2 * np.cos(np.pi * np.arange(11, 0, -2) / 12)
         t = frame.scaled(self.x0 + nodes, frame.nx)
         y = np.stack([legendre(frame.trace, u) for u in t])
         sigma = np.stack([legendre(frame.width, u) for u in t])
@@ -91,9 +90,9 @@ class Block:
         edges = np.arange(n + 1) - 0.5 + (self.start - y)[:, :, None]
         at_nodes = 0.5 * np.diff(erf(edges / (np.sqrt(2) * sigma[:, :, None])), axis=2)
         offsets = np.arange(len(self.columns))
-        shares = np.ones((len(offsets), 4))
-        for own in range(4):
-            for other in range(4):
+        shares = np.ones((len(offsets), len(nodes)))
+        for own in range(len(nodes)):
+            for other in range(len(nodes)):
                 if other != own:
                     shares[:, own] *= (offsets - nodes[other]) / (nodes[own] - nodes[other])
         self.weights = np.tensordot(shares, at_nodes, 1)
@@ -106,9 +105,8 @@ class Block:
             pixel = np.arange(n) + ahead[:, None]
             moved = np.take_along_axis(self.weights[:, :-j], np.broadcast_to(np.minimum(pixel, n - 1), (len(offsets), *pixel.shape)), 2)
             self.lower.append(np.where(pixel < n, moved, 0))
-        padded = np.pad(self.weights, ((0, 0), (0, 0), (REACH_ROWS, REACH_ROWS)))
-        largest = np.maximum.reduce([padded[:, :, i : i + n] for i in range(2 * REACH_ROWS + 1)])
-        self.reaching = largest + WING_SHARE
+        # Lowest fibre whose window ends above the row: no two windows begin on one row.
+        self.lowest = np.searchsorted(n + self.start + n, np.arange(self.light.shape[1]), side="right")
 
     def settle(self):
         frame = self.frame
@@ -158,7 +156,12 @@ class Block:
         return out
 
     def excess(self):
-        slack = self.frame.profileError * self.spread(np.abs(self.flux), self.reaching)
+        padded = np.pad(np.abs(self.model), ((0, 0), (REACH_ROWS, REACH_ROWS)))
+        n = self.model.shape[1]
+        near = np.maximum.reduce([padded[:, i : i + n] for i in range(2 * REACH_ROWS + 1)])
+        running = np.pad(np.cumsum(np.abs(self.flux), axis=1), ((0, 0), (1, 0)))
+        end = np.minimum(self.lowest + self.frame.bandwidth + 1, self.frame.nFibre)
+        slack = self.frame.profileError * (near + WING_SHARE * (running[:, end] - running[:, self.lowest]))
         variance = self.fixed + np.maximum(self.model + self.background, 0)
         excess = np.maximum(self.light - self.model, 0)
         return np.where(self.bits == 0, excess**2 / (variance + slack**2), 0)
@@ -180,7 +183,6 @@ class Block:
         middle = np.clip(self.rows[:, frame.halfWindow], frame.n_window, frame.n_window + frame.ny - 1)
         out["flux"][:, span], out["chi2"][:, span], out["flags"][:, span] = self.flux.T, chi2.T, flags.T
         out["background"][:, span] = self.background[:, middle].T
-        out["model"][:, span] = self.model[:, self.inside].T
         suspect = np.where(self.excess() > frame.growKappa**2, SUSPECT, 0)
         out["rejected"][:, span] = ((self.bits & COSMIC) | suspect)[:, self.inside].T
 
