@@ -54,7 +54,7 @@ export { type ChecksumState, type HduSummary, listHdus } from "./fits/open.js";
 export { formatSection, parseSection, type Section, sectionSize } from "./fits/sections.js";
 export { type FitsColumn, type FitsTable, readTable, type TableOptions } from "./fits/table.js";
 export { type WriteOptions, writeFits } from "./fits/write.js";
-export { loadKernels } from "./kernels/module.js";
+export { loadKernels, useThreads } from "./kernels/module.js";
 export {
   countFibres,
   type FibreCounts,

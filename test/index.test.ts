@@ -13,7 +13,7 @@ const VALUES = `
   parseSpectrograph readImage readPositions readScene readSpectra readSpectrograph readTable
   readTramlines recoverInjected rejectedHdu requireSameGeometry scatteredHdu scoreByDecade
   scoreCosmicRays scoreLeak scoreTrace sectionSize seenHdu simulateExposure simulationFiles spectraHdus
-  spectrographToml sumFibres summariseSpectra targetsHdu traceFlat tramlineHeights tramlinesHdus
+  spectrographToml sumFibres summariseSpectra targetsHdu traceFlat tramlineHeights tramlinesHdus useThreads
   verifyExtraction writeExposure writeFits writeObserverFiles writeSimulation writeSpectra
   writeTramlines
 `;

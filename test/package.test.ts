@@ -47,7 +47,11 @@ describe("the packed tarball", () => {
   test("holds the built library, the command, README and LICENSE, and nothing else", () => {
     const outside = packed.filter((path) => !path.startsWith("dist/"));
     expect(outside.sort()).toEqual(["LICENSE", "README.md", "bin/hatchel.js", "package.json"]);
-    expect(packed).toContain("dist/kernels/hatchel.wasm");
+    // Both modules, each for one thread and for several, and what a thread runs.
+    for (const name of ["hatchel.wasm", "hatchel.shared.wasm", "hatchel.tracing.wasm", "hatchel.tracing.shared.wasm"]) {
+      expect(packed).toContain(`dist/kernels/${name}`);
+    }
+    for (const name of ["worker.js", "desk.js"]) expect(packed).toContain(`dist/kernels/${name}`);
     expect(packed.filter((path) => !/\.(js|d\.ts|wasm)$/.test(path) && path.startsWith("dist/"))).toEqual([]);
   });
 
