@@ -1,5 +1,5 @@
-// Files for timing whole commands: a simulated flat and science frame of a given size as raw 16-bit FITS, and the tramlines
-// that `hatchel trace` makes of the flat. Kept in the system's folder for temporary files, since they take a minute to make.
+// Files for timing whole commands: two simulated flats and a science frame of a given size as raw 16-bit FITS, and the tramlines
+// that `hatchel trace` makes of the first flat. Kept in the system's folder for temporary files, since they take a minute to make.
 import { spawnSync } from "node:child_process";
 import { createHash } from "node:crypto";
 import { existsSync, mkdirSync, readdirSync, readFileSync, renameSync, rmSync, statSync, writeFileSync } from "node:fs";
@@ -26,6 +26,7 @@ export function openNight(size) {
     folder,
     spectrograph,
     tramlines,
+    flats: [1, 2].map((i) => join(folder, "raw", `fflat_0${i}.fits`)),
     frame: join(folder, "raw", "sci_01.fits"),
     output: join(folder, "spectra.fits"),
   };
@@ -141,6 +142,10 @@ length = 5
 electrons = 2500
 [[exposure]]
 name = "fflat_01"
+kind = "fibre-flat"
+seconds = 12
+[[exposure]]
+name = "fflat_02"
 kind = "fibre-flat"
 seconds = 12
 [[exposure]]

@@ -4,7 +4,7 @@ import { table } from "./table.mjs";
 
 const begin = "<!-- npm run bench -- --readme writes from here -->";
 const end = "<!-- to here -->";
-const shown = ["joint", "growth", "command"];
+const shown = ["joint", "growth", "chain", "command", "memory"];
 const path = new URL("../README.md", import.meta.url);
 
 /** @param {{ machine: ReturnType<typeof import("./machine.mjs").machine> & { time: string }, suites: Record<string, any> }} results */

@@ -24,6 +24,13 @@ export function whichTime() {
   return now === processorTime ? "processor" : "clock";
 }
 
+/** Milliseconds that `work` takes, of whichever time is counted. @param {() => Promise<unknown>} work */
+export async function timeAwaited(work) {
+  const began = now();
+  await work();
+  return now() - began;
+}
+
 /** @typedef {{ median: number, least: number, rounds: number[] }} Timing milliseconds a call */
 
 /** @param {Record<string, () => number>} tasks
