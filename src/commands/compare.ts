@@ -55,9 +55,9 @@ async function compare(path: string, options: CompareOptions, progress: Progress
   const traced = await tramlinesFor(frame, options, bench, progress);
   requireAperture(options.halfAperture, traced);
   progress.stage(`comparing on ${frame.name}`);
-  const { precision, cosmicRays, halfAperture } = options;
+  const { precision, cosmicRays, refine, halfAperture } = options;
   const comparison = await compareMethods(frame, traced.tramlines, {
-    ...{ precision, cosmicRays, ...(halfAperture === undefined ? {} : { halfAperture }) },
+    ...{ precision, cosmicRays, refine, ...(halfAperture === undefined ? {} : { halfAperture }) },
     ...namingOptions(options),
     onProgress: progress.share,
   });

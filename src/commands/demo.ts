@@ -140,7 +140,7 @@ async function extractAndScore(
   const ownBench = { ...bench, inputs: [...bench.inputs] };
   const frame = await readFrame(raw, "science", ownBench);
   night.progress.stage(`extracting ${name}, ${method}`);
-  const options = { method, crosstalk, precision: "f64", cosmicRays: true } as const;
+  const options = { method, crosstalk, precision: "f64", cosmicRays: true, refine: true } as const;
   const own = adapted.get(name) ?? adaptTramlines(await loadKernels(), frame, tramlines, options);
   adapted.set(name, own);
   const extraction = await extractFrame(frame, tramlines, {

@@ -112,8 +112,8 @@ async function extract(path: string, options: ExtractOptions, progress: Progress
 }
 
 /** The method's options as the library takes them. */
-export function extractionOptions({ method, crosstalk, precision, cosmicRays, halfAperture }: MethodOptions) {
-  return { method, crosstalk, precision, cosmicRays, ...(halfAperture === undefined ? {} : { halfAperture }) };
+export function extractionOptions({ method, crosstalk, precision, cosmicRays, refine, halfAperture }: MethodOptions) {
+  return { method, crosstalk, precision, cosmicRays, refine, ...(halfAperture === undefined ? {} : { halfAperture }) };
 }
 
 function notes(frame: Frame, traced: Traced, extraction: Extraction, { nUsable, nPoint }: SpectraSummary) {

@@ -33,6 +33,7 @@ export interface MethodOptions {
   crosstalk: boolean;
   precision: PrecisionChoice;
   cosmicRays: boolean;
+  refine: boolean;
   halfAperture?: number;
 }
 
@@ -112,11 +113,18 @@ export function addKernelOptions(command: Command): Command {
         .default(true, "on")
         .argParser(onOff("--cosmic-rays")),
     )
+    .addOption(refineOption())
     .addOption(
       new Option("--half-aperture <px>", "half of the boxcar's width (default: half of the smallest pitch)").argParser(
         positive("--half-aperture"),
       ),
     );
+}
+
+export function refineOption(): Option {
+  return new Option("--refine <on|off>", "refine a measured profile on the frame's own light; off is quicker")
+    .default(true, "on")
+    .argParser(onOff("--refine"));
 }
 
 export function outputOption(product: string, standardOutput = true): Option {
@@ -148,6 +156,7 @@ export function methodLines(options: MethodOptions): string[] {
   const lines = [`method ${options.method}`];
   if (options.method !== "joint") lines.push(`crosstalk ${onOrOff(options.crosstalk)}`);
   lines.push(`precision ${options.precision}`, `cosmic-rays ${onOrOff(options.cosmicRays)}`);
+  lines.push(`refine ${onOrOff(options.refine)}`);
   if (options.halfAperture !== undefined) lines.push(`half-aperture ${options.halfAperture}`);
   return lines;
 }

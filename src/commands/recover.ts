@@ -78,10 +78,11 @@ async function recover(path: string, given: RecoverOptions, progress: Progress):
   requireAperture(options.halfAperture, traced);
   const flats = await readInjected(inject, options, bench);
   progress.stage(`injecting into ${frame.name}`);
-  const { method, crosstalk, precision, cosmicRays, halfAperture } = options;
+  const { method, crosstalk, precision, cosmicRays, refine, halfAperture } = options;
   const recovery = await refusing(() =>
     recoverInjected(frame, traced.tramlines, flats, {
-      ...{ method, crosstalk, precision, cosmicRays, ...(halfAperture === undefined ? {} : { halfAperture }) },
+      ...{ method, crosstalk, precision, cosmicRays, refine },
+      ...(halfAperture === undefined ? {} : { halfAperture }),
       ...namingOptions(options),
       ...{ seed: options.seed, onProgress: progress.share },
     }),

@@ -7,6 +7,7 @@ import {
   addTramlineOptions,
   type FrameOptions,
   namingOptions,
+  refineOption,
   type TramlineOptions,
 } from "./frameOptions.js";
 import { inputPaths, oneOfEach, openBench, readFrame, requireTramlineSource, tramlinesFor } from "./frames.js";
@@ -14,7 +15,9 @@ import { type Outcome, perform } from "./perform.js";
 import type { Progress } from "./progress.js";
 import { textTable } from "./textTable.js";
 
-interface VerifyOptions extends FrameOptions, TramlineOptions {}
+interface VerifyOptions extends FrameOptions, TramlineOptions {
+  refine: boolean;
+}
 
 export function addVerify(command: Command): void {
   command
@@ -22,7 +25,8 @@ export function addVerify(command: Command): void {
       "Runs the fast kernels and the plain reference on the same frame and shows the largest differences. Exit code 1 when a bound is broken.",
     )
     .argument("<FRAME>", "the raw frame; - is standard input");
-  addCommonOptions(addFrameOptions(addTramlineOptions(command))).action((frame: string, options: VerifyOptions) =>
+  addTramlineOptions(command).addOption(refineOption());
+  addCommonOptions(addFrameOptions(command)).action((frame: string, options: VerifyOptions) =>
     perform("verify", options, (progress) => verify(frame, options, progress)),
   );
 }
@@ -35,6 +39,7 @@ async function verify(path: string, options: VerifyOptions, progress: Progress):
   progress.stage(`verifying on ${frame.name}`);
   const verification = await verifyExtraction(frame, traced.tramlines, {
     ...namingOptions(options),
+    refine: options.refine,
     onProgress: progress.share,
   });
   return {

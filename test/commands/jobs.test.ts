@@ -223,6 +223,10 @@ describe("extract", () => {
     const uncleaned = await withOptions("--cosmic-rays", "off");
     expect(uncleaned.json).toMatchObject({ cosmicRays: false, rejectedPixels: 0 });
     expect(sum(uncleaned.spectra)).toBeGreaterThan(sum(await readSpectra(join(cwd, "spectra.fits"))) + 500);
+    const unrefined = await withOptions("--refine", "off");
+    expect(unrefined.json.refinedProfile).toBe(false);
+    expect(bytes("o.fits").toString("latin1")).toMatch(/HISTORY .*refine off/);
+    expect(bytes("spectra.fits").toString("latin1")).toMatch(/HISTORY .*refine on/);
     const double = (await withOptions("--precision", "f64")).spectra;
     const single = { spectra: await readSpectra(join(cwd, "spectra.fits")) };
     expect(single.spectra.flux).not.toEqual(double.flux);

@@ -63,6 +63,7 @@ const WRONG: [args: string[], sentence: string][] = [
     ["extract", "a.fits", "--flat", "f.fits", "-o", "b.fits", "--crosstalk", "yes"],
     "hatchel: --crosstalk is 'yes'; it must be on or off.",
   ],
+  [["verify", "a.fits", "--tramlines", "t.fits", "--refine", "no"], "hatchel: --refine is 'no'; it must be on or off."],
   [
     ["extract", "a.fits", "--flat", "f.fits", "-o", "b.fits", "--half-aperture", "0"],
     "hatchel: --half-aperture is '0'; it must be a number of pixels over 0.",
