@@ -104,7 +104,7 @@ function applyCalibrations(frame: Assembled, { bias, dark, response }: Calibrati
       value /= response.response[at];
       if (response.unusable[at]) mask[at] |= MaskBit.bad;
     }
-    if (Number.isNaN(value) && !(mask[at] & MaskBit.missing)) mask[at] |= MaskBit.bad;
+    if (!Number.isFinite(value) && !(mask[at] & MaskBit.missing)) mask[at] |= MaskBit.bad;
     electrons[at] = value;
   }
 }

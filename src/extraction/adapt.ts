@@ -75,5 +75,6 @@ function refineOn(
     background ?? noBackground(),
     bench.rejected,
   );
+  bench.release();
   return { ...tramlines, profile: { ...profile, shape } };
 }

@@ -11,6 +11,7 @@ import type { Shift } from "../tramlines/shift.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { adaptTramlines } from "./adapt.js";
 import { noBackground } from "./background.js";
+import { countRejected } from "./growth.js";
 import type { FrameFit } from "./modelColumn.js";
 import type { Adapted, ExtractionOptions } from "./options.js";
 import { runPasses } from "./passes.js";
@@ -59,7 +60,7 @@ export async function extractFrame(
   options.knownHits?.forEach((hit, i) => {
     if (hit !== 0) bench.rejected[i] |= MaskBit.cosmic;
   });
-  const nRejected = bench.rejected.reduce((n, bits) => n + (bits & (MaskBit.cosmic | MaskBit.grown) ? 1 : 0), 0);
+  const nRejected = countRejected(bench.rejected);
   return {
     spectra,
     shift: adapted.shift,
@@ -86,6 +87,7 @@ function runFrame(kernels: Kernels, frame: Frame, adapted: Adapted, options: Ext
   const opened = openFrame(kernels, frame, adapted.tramlines, options, adapted.background);
   runPasses(opened.bench, opened.input, options.onProgress);
   if (options.precision !== "auto" || opened.precision === "f64" || !needsDouble(opened.bench.fitFlux)) return opened;
+  opened.bench.release();
   return runFrame(kernels, frame, adapted, { ...options, precision: "f64" });
 }
 

@@ -23,5 +23,6 @@ export function choosePrecision(choice: PrecisionChoice, { smallestPitch, widest
 
 /** Whether fluxes found in single precision, e⁻, are too bright for it. */
 export function needsDouble(flux: Float32Array | Float64Array): boolean {
-  return flux.some((one) => one > brightestFlux);
+  for (let i = 0; i < flux.length; i++) if (flux[i] > brightestFlux) return true;
+  return false;
 }

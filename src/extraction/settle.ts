@@ -39,7 +39,7 @@ export function openFrame(
   const input = extractionInput(frame, tramlines, plan, options, background ?? noBackground());
   const rows = Int32Array.from(plan.active);
   const precision = choosePrecision(options.precision ?? "f64", plan);
-  const bench = new ExtractionBench(kernels, input, rows, tramlines.nFibre, precision);
+  const bench = new ExtractionBench(kernels, input, rows, tramlines.nFibre, precision, frame.memory);
   return { bench, input, plan, precision, background, profileError: settleProfileError(bench, input) };
 }
 

@@ -46,8 +46,11 @@ export class ExtractionBench {
   private readonly numbers: Float64Array;
   private readonly background: Float64Array;
   private readonly pieces = new Map<Word, Piece>();
+  /** The frame's memory, while this works there. */
+  private borrowed: Workbench | undefined;
 
-  /** `outputRow`: [nFibre] row of the images for each fibre of the input, of `nSlit` rows.
+  /** `outputRow`: [nFibre] row of the images for each fibre of the input, of `nSlit` rows. `memory`: the frame's own, where it has
+   * one; if electrons and mask lie in it, and nobody else's results do, the extraction works there.
    * @throws RangeError when lengths do not fit or the frame is larger than the memory can be. */
   constructor(
     kernels: Kernels,
@@ -55,19 +58,30 @@ export class ExtractionBench {
     outputRow: Int32Array,
     nSlit: number,
     private readonly precision: Precision,
+    memory?: Workbench,
   ) {
     checkInput(input, outputRow, nSlit);
     const nLane = precision === "f32" ? 4 : 2;
     const [shared, scratch] = [sharedPlan(input, nSlit), scratchPlan(input, nLane)];
     const nThread = kernels.nThread;
     const nBytes = planBytes(shared, precision) + nThread * (planBytes(scratch, precision) + 4 * Word.count);
-    this.bench = kernels.workbench(nBytes, shared.length + nThread * (scratch.length + 1));
+    const nPieces = shared.length + nThread * (scratch.length + 1);
+    const room = memory?.nThread === nThread && borrow(memory, input, nBytes + 64 * nPieces) ? memory : undefined;
+    this.borrowed = room;
+    this.bench = room ?? kernels.workbench(nBytes, nPieces);
     const { pieces } = this;
-    this.reserve(shared, pieces);
+    if (room !== undefined) {
+      pieces.set(Word.electrons, input.electrons);
+      pieces.set(Word.mask, input.mask);
+    }
+    this.reserve(
+      shared.filter(([word]) => !pieces.has(word)),
+      pieces,
+    );
     this.jobs = Array.from({ length: nThread }, (_, thread) => {
       const own: Map<Word, Piece> = thread === 0 ? pieces : new Map();
-      this.reserve(scratch, own);
-      const job = this.bench.int32(Word.count);
+      this.reserveScratch(scratch, own);
+      const job = this.bench.int32(Word.count).fill(0);
       for (const [word, piece] of [...pieces, ...own]) job[word] = piece.byteOffset;
       return job;
     });
@@ -85,6 +99,18 @@ export class ExtractionBench {
 
   private reserve(plan: Plan, pieces: Map<Word, Piece>): void {
     for (const [word, type, length] of plan) pieces.set(word, this.bench[pieceType(type, this.precision)](length));
+  }
+
+  /** Scratch begins as zeros, as in a memory of its own. */
+  private reserveScratch(plan: Plan, pieces: Map<Word, Piece>): void {
+    this.reserve(plan, pieces);
+    if (this.borrowed !== undefined) for (const [word] of plan) pieces.get(word)!.fill(0);
+  }
+
+  /** Gives the frame's memory back: nothing of this is valid any more. */
+  release(): void {
+    this.borrowed?.giveBack();
+    this.borrowed = undefined;
   }
 
   /** Extracts columns x0 … x1 − 1; x0 must be a multiple of four. */
@@ -178,6 +204,37 @@ export class ExtractionBench {
     }
   }
 
+  private copyFrame(): void {
+    const { electrons } = this.input;
+    (this.pieces.get(Word.electrons) as Float32Array).set(electrons);
+    const mask = this.pieces.get(Word.mask) as Uint8Array;
+    mask.set(this.input.mask);
+    // A value that is none spoils its whole column, marked or not. In a frame's own memory all of them are marked.
+    for (let at = 0; at < mask.length; at++) {
+      if (electrons[at] - electrons[at] !== 0 && mask[at] === 0) mask[at] = MaskBit.missing;
+    }
+  }
+
+  /** Rows of the images that no fibre writes to; scratch, where something else has lain there. */
+  private clearRows(outputRow: Int32Array): void {
+    const { pieces, input } = this;
+    const written = new Set(outputRow);
+    const { nx } = input;
+    for (const word of [Word.flux, Word.variance, Word.neighbourCovariance, Word.chi2, Word.backgroundUnder]) {
+      const image = pieces.get(word)!;
+      for (let row = 0; row < image.length / nx; row++) {
+        if (!written.has(row)) image.fill(Number.NaN, row * nx, (row + 1) * nx);
+      }
+    }
+    if (this.borrowed === undefined) return;
+    for (const word of [Word.fitFlux, Word.flags]) {
+      const image = pieces.get(word)!;
+      for (let row = 0; row < image.length / nx; row++) {
+        if (!written.has(row)) image.fill(0, row * nx, (row + 1) * nx);
+      }
+    }
+  }
+
   private copyIn(outputRow: Int32Array): void {
     const { input, numbers, pieces } = this;
     const { noise, background } = input;
@@ -200,9 +257,8 @@ export class ExtractionBench {
       [Word.fixedRows, noise.fixedVarianceImage === undefined && oneBand(noise.bandOfRow) ? 0 : -1],
     ];
     for (const job of this.jobs) for (const [word, value] of counts) job[word] = value;
+    if (this.borrowed === undefined) this.copyFrame();
     const arrays: [Word, ArrayLike<number> | undefined][] = [
-      [Word.electrons, input.electrons],
-      [Word.mask, input.mask],
       [Word.rejected, input.rejected],
       [Word.bandOfRow, noise.bandOfRow],
       [Word.fixedVariance, noise.fixedVariance],
@@ -217,18 +273,18 @@ export class ExtractionBench {
     ];
     for (const [word, values] of arrays) if (values !== undefined) pieces.get(word)!.set(values);
     if (input.shape) pieces.get(Word.shape)!.set(packShape(input.shape));
-    const mask = pieces.get(Word.mask)!;
-    // A value that is none spoils its whole column, marked or not.
-    input.electrons.forEach((electrons, at) => {
-      if (mask[at] === 0 && !Number.isFinite(electrons)) mask[at] = MaskBit.missing;
-    });
-    for (const word of [Word.flux, Word.variance, Word.neighbourCovariance, Word.chi2, Word.backgroundUnder]) {
-      pieces.get(word)!.fill(Number.NaN);
-    }
+    this.clearRows(outputRow);
     numbers[Numbers.profileError] = input.profileError;
     numbers[Numbers.halfAperture] = input.halfAperture;
     this.setRejection(input.kappa, input.growKappa);
   }
+}
+
+/** Whether electrons and mask lie in `memory`, with `nBytes` behind them to work in, which are then lent. */
+function borrow(memory: Workbench, { electrons, mask }: ExtractionInput, nBytes: number): boolean {
+  const { buffer } = memory.memory;
+  if (electrons.buffer !== buffer || mask.buffer !== buffer || mask.byteOffset < electrons.byteOffset) return false;
+  return buffer.byteLength - (mask.byteOffset + mask.byteLength) > nBytes + 64 && memory.lend(mask);
 }
 
 /** A shape as assembly/shape.ts reads it. */

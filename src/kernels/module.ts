@@ -52,6 +52,7 @@ export class Kernels {
 /** One job's memory: typed views into it, whose `byteOffset` is the pointer that a kernel takes. */
 export class Workbench {
   private next: number;
+  private lent = false;
 
   constructor(
     readonly call: KernelExports,
@@ -89,6 +90,19 @@ export class Workbench {
 
   uint8(n: number): Uint8Array<ArrayBuffer> {
     return new Uint8Array(this.buffer, this.reserve(n), n);
+  }
+
+  /** Lends what is behind `last` to one who keeps results there; false when it is lent already. */
+  lend(last: ArrayBufferView): boolean {
+    if (this.lent) return false;
+    this.keepUpTo(last);
+    this.lent = true;
+    return true;
+  }
+
+  /** What was lent is free again. */
+  giveBack(): void {
+    this.lent = false;
   }
 
   /** Forgets the pieces behind `last`: their places are handed out anew. */

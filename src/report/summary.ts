@@ -68,18 +68,24 @@ export interface SpectraSummary {
   fibreUsableShare: Float64Array;
 }
 
+/** Usable points among those from `from` on and before `end`; their flags are added to `counts`. Most have none. */
+function countRow(flags: Int32Array, from: number, end: number, counts: FlagCounts | null): number {
+  let nUsable = 0;
+  for (let i = from; i < end; i++) {
+    const bits = flags[i];
+    if ((bits & UNUSABLE) === 0) nUsable++;
+    if (bits !== 0 && counts !== null) for (const [name, bit] of FLAGS) if (bits & bit) counts[name]++;
+  }
+  return nUsable;
+}
+
 export function summariseSpectra(spectra: Spectra, { state }: Tramlines): SpectraSummary {
   const { nFibre, nx, flags } = spectra;
   const counts = Object.fromEntries(FLAGS.map(([name]) => [name, 0])) as FlagCounts;
   const fibreUsableShare = new Float64Array(nFibre);
   let nPoint = 0;
   for (let k = 0; k < nFibre; k++) {
-    let nUsable = 0;
-    for (let i = k * nx; i < (k + 1) * nx; i++) {
-      if ((flags[i] & UNUSABLE) === 0) nUsable++;
-      if (state[k] === "dead") continue;
-      for (const [name, bit] of FLAGS) if (flags[i] & bit) counts[name]++;
-    }
+    const nUsable = countRow(flags, k * nx, (k + 1) * nx, state[k] === "dead" ? null : counts);
     fibreUsableShare[k] = nUsable / nx;
     if (state[k] !== "dead") nPoint += nx;
   }
