@@ -113,6 +113,8 @@ function extractGroup<T extends number>(job: usize, x: i32, nValid: i32, tile: i
   for (let round: i32 = 0; ; round++) {
     finishSolution<T>(job);
     takeSolution<T>(job, 0, nFibre, everyLane, round == minRounds);
+    // In the last round most wings would change by a hundredth of a hundredth; but not where a hit has just gone.
+    if (round == minRounds && round > 0) moveWings<T>(job);
     lightAfresh<T>(job, round < minRounds || minRounds == 0);
     if (round == minRounds) break;
     confront<T>(job, margin, top, everyLane, rejecting, rejecting, true);
@@ -167,6 +169,21 @@ function takeSolution<T extends number>(job: usize, k0: i32, k1: i32, mask: v128
       if (v128.any_true(moved)) callFibre(job, k, moved);
     }
     normal += rowBytes;
+  }
+}
+
+/** The wings of every fibre whose flux just changed by more than a tenth of its σ. */
+function moveWings<T extends number>(job: usize): void {
+  const rowBytes = (<usize>(count(job, Word.bandwidth) + 1)) << 4;
+  const limit = spread<T>(settledSigma * settledSigma);
+  for (let k: i32 = 0; k < count(job, Word.nFibre); k++) {
+    const change = v128.load(pointer(job, Word.lastChange) + ((<usize>k) << 4));
+    const squared = v128.mul<T>(
+      v128.mul<T>(change, change),
+      v128.load(pointer(job, Word.normal) + <usize>k * rowBytes),
+    );
+    const moved = v128.gt<T>(squared, limit);
+    if (v128.any_true(moved)) addWingLight<T>(job, k, windowOffset(job, k), v128.and(change, moved));
   }
 }
 

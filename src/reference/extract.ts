@@ -154,8 +154,9 @@ function extractColumn(input: ExtractionInput, column: Column, output: Extractio
   for (let round = 0; ; round++) {
     const last = round === input.minRounds;
     takeSolution(fit, everyone, solveNormal(fit.normal, nFibre, bandwidth), last ? called : undefined);
-    // The wings stay as they were in the last round: what they would change is a hundredth of a hundredth.
+    // In the last round most wings would change by a hundredth of a hundredth; but not where a hit has just gone.
     const wings = !last || round === 0;
+    if (!wings) addLight(column, fit.light, movedBy(fit), 0, nFibre, { windows: false, wings: true });
     fit.light = { model: new Float64Array(nRow), wings: wings ? new Float64Array(nRow) : fit.light.wings };
     addLight(column, fit.light, fit.flux, 0, nFibre, { windows: true, wings });
     if (last) break;
@@ -246,6 +247,14 @@ function takeSolution(fit: Fit, [k0, k1]: Stretch, solution: Float64Array, calle
     const moved = change * change * normal.band[k * (column.bandwidth + 1)] > settledSigma * settledSigma;
     if (moved) called?.add(Math.floor(k / chunkFibres));
   }
+}
+
+/** By how much each flux just changed, e⁻; 0 for those that have settled. */
+function movedBy({ column, normal, lastChange }: Fit): Float64Array {
+  const limit = settledSigma * settledSigma;
+  return lastChange.map((change, k) =>
+    change * change * normal.band[k * (column.bandwidth + 1)] > limit ? change : 0,
+  );
 }
 
 /** Takes the worst outliers of these rows out of the fit; returns them. */
