@@ -2,12 +2,12 @@
 // spectra; Node's start, reading, correction, shift, names, background, extraction, checksums and writing included. The
 // input is in the system's cache of files; the output is not forced to the disk.
 import { spawnSync } from "node:child_process";
-import { readFileSync, rmSync, statSync } from "node:fs";
-import { join } from "node:path";
+import { rmSync, statSync } from "node:fs";
 import { fileURLToPath } from "node:url";
 import { sizes } from "./frame.mjs";
 import { firstTouch } from "./machine.mjs";
 import { executable, hatchel, openNight } from "./night.mjs";
+import { peakOf } from "./peak.mjs";
 import { folderTimes } from "./profileFolders.mjs";
 import { duration, figures, times } from "./table.mjs";
 import { ratio, timing } from "./timing.mjs";
@@ -105,16 +105,4 @@ function spawned(args) {
   const taken = performance.now() - began;
   if (run.status !== 0) throw new Error(`${args[1] ?? args[0]} failed: ${run.stderr}`);
   return taken;
-}
-
-/** The most bytes that a process ever held. @param {string[]} args */
-function peakOf(args) {
-  const file = join(fileURLToPath(new URL("./", import.meta.url)), `peak-${process.pid}.txt`);
-  const preload = fileURLToPath(new URL("./peak.cjs", import.meta.url));
-  const env = { ...process.env, HATCHEL_BENCH_PEAK: file };
-  const run = spawnSync(process.execPath, ["--require", preload, ...args], { encoding: "utf8", env });
-  if (run.status !== 0) throw new Error(`${args[1] ?? args[0]} failed: ${run.stderr}`);
-  const bytes = 1024 * Number(readFileSync(file, "utf8"));
-  rmSync(file);
-  return bytes;
 }
