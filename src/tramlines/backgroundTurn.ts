@@ -12,14 +12,17 @@ const nMatrix = (mostY * (mostY + 1)) / 2;
 const nNumber = nMatrix + mostY;
 
 export interface ToldBackground extends SmoothBackground {
-  /** Standard error from noise alone, root mean square over the frame, e⁻ per pixel. */
+  /** Standard error from noise alone, root mean square over the rows that hold values, e⁻ per pixel. */
   error: () => number;
 }
 
 /** The background after a fit, with its normal equations, that took `before` for it. */
 export function backgroundTurn(sample: ColumnSample, fits: ColumnFits, before: SmoothBackground): ToldBackground {
-  const [nX, nY] = [termsAlong(sample.nx, mostX), termsAlong(sample.ny, mostY)];
-  return solve(sumNormal(sample, fits, nX), before, nX, nY);
+  const rows = seenRows(sample);
+  const nX = termsAlong(sample.nx, mostX);
+  // Terms made for all rows would swing where half of them are left.
+  const nY = Math.max(1, Math.round(termsAlong(sample.ny, mostY) * (rows.length / sample.ny) ** 2));
+  return solve(sumNormal(sample, fits, nX), before, nX, nY, rows);
 }
 
 function termsAlong(n: number, most: number): number {
@@ -49,7 +52,7 @@ function sumNormal({ nx, firstColumns }: ColumnSample, { groups, normal }: Colum
 
 /** The surface from its normal equations, which are those of what `before` left. A weak prior, that no term is larger than the
  * level over its order, keeps terms quiet that nothing tells. */
-function solve(normal: Float64Array, before: SmoothBackground, nX: number, nY: number): ToldBackground {
+function solve(normal: Float64Array, before: SmoothBackground, nX: number, nY: number, rows: number[]): ToldBackground {
   const n = nX * nY;
   const old = new Float64Array(n);
   for (let i = 0; i < Math.min(nX, before.nX); i++) {
@@ -72,15 +75,38 @@ function solve(normal: Float64Array, before: SmoothBackground, nX: number, nY: n
   }
   factorBand(band, n, n - 1);
   solveBand(band, n, n - 1, step);
-  return { nX, nY, coefficients: old.map((c, i) => c + step[i]), error: () => standardError(band, nX, nY) };
+  return { nX, nY, coefficients: old.map((c, i) => c + step[i]), error: () => standardError(band, nX, nY, rows) };
 }
 
-/** From the factors of the normal matrix. ∫∫ P_a² P_j² over the frame is 1/((2a + 1)(2j + 1)) of its area; different terms are
- * orthogonal. */
-function standardError(factors: Float64Array, nX: number, nY: number): number {
+/** Where on [−1, 1] the rows lie that hold a value in any group of the sample. */
+function seenRows({ ny, nGroup, light }: ColumnSample): number[] {
+  const rows: number[] = [];
+  for (let y = 0; y < ny; y++) {
+    let seen = false;
+    for (let g = 0; g < nGroup && !seen; g++) seen = !Number.isNaN(light[(g * ny + y) * groupColumns]);
+    if (seen) rows.push(legendreArgument(y, ny));
+  }
+  return rows;
+}
+
+/** From the factors of the normal matrix. ∫ P_a² over the columns is 1/(2a + 1) of their number, and different terms in x are
+ * orthogonal; over the rows the surface is asked for where it is needed. */
+function standardError(factors: Float64Array, nX: number, nY: number, rows: number[]): number {
   const n = nX * nY;
   const inverse = inverseBand(factors, n, n - 1);
+  const overlap = new Float64Array(nY * nY);
+  for (const t of rows) {
+    const p = legendreBasis(t, nY);
+    for (let j = 0; j < nY; j++) for (let l = 0; l <= j; l++) overlap[j * nY + l] += (p[j] * p[l]) / rows.length;
+  }
   let variance = 0;
-  for (let i = 0; i < n; i++) variance += inverse[i * n] / ((2 * Math.floor(i / nY) + 1) * (2 * (i % nY) + 1));
+  for (let a = 0; a < nX; a++) {
+    for (let j = 0; j < nY; j++) {
+      for (let l = 0; l <= j; l++) {
+        const covariance = inverse[(a * nY + j) * n + j - l];
+        variance += ((j === l ? 1 : 2) * covariance * overlap[j * nY + l]) / (2 * a + 1);
+      }
+    }
+  }
   return variance > 0 ? Math.sqrt(variance) : Number.POSITIVE_INFINITY;
 }
