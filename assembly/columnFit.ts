@@ -10,17 +10,12 @@ import { spread } from "./lanes";
 import { legendreBasis } from "./legendre";
 import { localShifts } from "./localShift";
 import { tableProfiles } from "./tableProfile";
+import { count, pointer } from "./words";
+
+export { count, pointer } from "./words";
 
 /** Rows over which light may be displaced by a misfit of the profile. */
 const reachRows: i32 = 2;
-
-export function count(job: usize, word: ColumnWord): i32 {
-  return load<i32>(job + ((<usize>word) << 2));
-}
-
-export function pointer(job: usize, word: ColumnWord): usize {
-  return <usize>load<u32>(job + ((<usize>word) << 2));
-}
 
 export function number(job: usize, which: ColumnNumber): f64 {
   return load<f64>(pointer(job, ColumnWord.numbers) + ((<usize>which) << 3));

@@ -2,17 +2,10 @@
  * A tile is four rows. First all medians, then the means, which look at the medians of the rows beside them.
  * The twin is src/reference/groups.ts. */
 import { GroupWord } from "../src/kernels/groups-words";
+import { count, pointer } from "./words";
 
 /** σ² that a pixel may stand above its row's median: KAPPA_HIT² of the twin. */
 const hitSquare: f32 = 64.0;
-
-function count(job: usize, word: GroupWord): i32 {
-  return load<i32>(job + ((<usize>word) << 2));
-}
-
-function pointer(job: usize, word: GroupWord): usize {
-  return <usize>load<u32>(job + ((<usize>word) << 2));
-}
 
 /** Medians of four rows in every group; lanes are the rows. A sorting network takes the same steps in all lanes, and
  * pixels without value go to its end as ∞. NaN where there is no value. */

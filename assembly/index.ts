@@ -7,14 +7,8 @@ export { fitColumns } from "./columnFit";
 export { electrons, growSaturation, turnBytes, turnFloat32 } from "./electrons";
 export { erf } from "./erf";
 export { exp } from "./exp";
-export {
-  extractTile32,
-  extractTile64,
-  prepareExtraction32,
-  prepareExtraction64,
-  settleTile32,
-  settleTile64,
-} from "./extract";
+export { extractTile32, extractTile64, prepareExtraction32, prepareExtraction64 } from "./extract";
+export { settleTile32, settleTile64 } from "./grown";
 export { legendreValue } from "./legendre";
 export { median, quantile } from "./median";
 export { pixelsToFloat32, pixelsToFloat64 } from "./pixels";

@@ -1,15 +1,9 @@
 /** What one extraction works on; src/kernels/extraction-words.ts draws the layout. */
 import { Numbers, Word } from "../src/kernels/extraction-words";
+import { count, pointer } from "./words";
 
 export { MethodCode, Numbers, Word } from "../src/kernels/extraction-words";
-
-export function count(job: usize, word: Word): i32 {
-  return load<i32>(job + ((<usize>word) << 2));
-}
-
-export function pointer(job: usize, word: Word): usize {
-  return <usize>load<u32>(job + ((<usize>word) << 2));
-}
+export { count, pointer } from "./words";
 
 export function number(job: usize, which: Numbers): f64 {
   return load<f64>(pointer(job, Word.numbers) + ((<usize>which) << 3));

@@ -1,6 +1,7 @@
 import { LegendreWord } from "../src/kernels/legendre-words";
 import { lanesSet } from "./lanes";
 import { median } from "./median";
+import { count, pointer } from "./words";
 
 /** Σ_j c_j P_j(t) by the three-term recurrence (j+1) P_{j+1} = (2j+1) t P_j − j P_{j−1}.
  * `coefPtr`: nCoef f64. The reference twin is src/reference/legendre.ts, operation for operation. */
@@ -15,14 +16,6 @@ export function legendreValue(coefPtr: usize, nCoef: i32, t: f64): f64 {
     here = above;
   }
   return sum;
-}
-
-function count(job: usize, word: LegendreWord): i32 {
-  return load<i32>(job + ((<usize>word) << 2));
-}
-
-function pointer(job: usize, word: LegendreWord): usize {
-  return <usize>load<u32>(job + ((<usize>word) << 2));
 }
 
 function ofPair(job: usize, word: LegendreWord, pair: i32, nEntry: i32): usize {

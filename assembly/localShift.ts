@@ -1,5 +1,6 @@
 /** Every fibre's own correction of flux and shift in a group of columns, jointly: what the fit leaves is a·P + f·δ·P′ to first
- * order, P′ the profile's derivative by its centre; linear in (a, δ), banded with two unknowns a fibre. */
+ * order, P′ the profile's derivative by its centre; linear in (a, δ), banded with two unknowns a fibre. The twin of the whole fit is
+ * src/reference/columnFit.ts. */
 import { ColumnWord } from "../src/kernels/columnFit-words";
 import { factorBand, inverseBand, solveBand } from "./banded";
 import { coreOffset, count, pointer, shared, windowOffset } from "./columnFit";

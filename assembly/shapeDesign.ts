@@ -1,4 +1,5 @@
-/** Derivatives of one column's rows by a shape's coefficients and a background, and the rows' residuals, over their noise.
+/** Derivatives of one column's rows by a shape's coefficients and a background, and the rows' residuals, over their noise;
+ * src/reference/shapeNormal.ts has them as it needs them.
  *
  *     row:   spline 0: 1 y P₂(y) width | spline 1 … | P₀(y) … P₃(y) | P₄(y) residual 0 0 */
 import { count, firstOf, number, pointer, rowOf, ShapeNumbers, ShapeWord } from "./shapeJob";

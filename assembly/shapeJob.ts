@@ -1,17 +1,11 @@
 /** What a fit of single columns works on; src/kernels/shape-words.ts draws the layout. */
 import { ShapeNumbers, ShapeWord } from "../src/kernels/shape-words";
+import { count, pointer } from "./words";
 
 export { ShapeNumbers, ShapeWord } from "../src/kernels/shape-words";
+export { count, pointer } from "./words";
 
 export const nLane: i32 = 2;
-
-export function count(job: usize, word: ShapeWord): i32 {
-  return load<i32>(job + ((<usize>word) << 2));
-}
-
-export function pointer(job: usize, word: ShapeWord): usize {
-  return <usize>load<u32>(job + ((<usize>word) << 2));
-}
 
 export function number(job: usize, which: ShapeNumbers): f64 {
   return load<f64>(pointer(job, ShapeWord.numbers) + ((<usize>which) << 3));

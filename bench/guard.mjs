@@ -66,7 +66,7 @@ function milliseconds(run) {
 /** @returns {Record<string, { kernel: () => number, rival: () => number }>} */
 function openRivals() {
   const input = makeFrame(size);
-  const loop = new JointLoop(input, false);
+  const loop = new JointLoop(input);
   const rival = () => {
     loop.rejected.fill(0);
     loop.run();

@@ -66,8 +66,7 @@ export async function run({ small }) {
 
 function measure(size, i, scipy) {
   const input = makeFrame(size);
-  checkModels(i, input);
-  const loop = new JointLoop(input, false);
+  const loop = new JointLoop(input);
   loop.run();
   const f32 = openExtraction(input, "f32");
   const f64 = openExtraction(input, "f64");
@@ -117,16 +116,6 @@ function measure(size, i, scipy) {
     shared: timings.shared ? ratio(timings.f32, timings.shared) : undefined,
   };
   return { size, timings, ratios };
-}
-
-/** The model's light, which nobody writes while timed, at the smallest size. */
-function checkModels(i, input) {
-  if (i > 0) return;
-  const loop = new JointLoop(input);
-  const kernel = openExtraction(input, "f32", { withModel: true });
-  loop.run();
-  kernel.run();
-  requireAgreement("joint with model", kernel, loop);
 }
 
 /** Frame f32, mask u8, marks u8 read and written; six images of 4 bytes. */

@@ -22,19 +22,17 @@ export async function onTwoThreads(work) {
   }
 }
 
-/** An extraction laid out in its memory, copies done; `run` extracts all columns anew. The model's light is an image only
- * when asked for, as in the command.
+/** An extraction laid out in its memory, copies done; `run` extracts all columns anew.
  * @param {ExtractionInput} input @param {"f32" | "f64"} precision */
-export function openExtraction(input, precision, { nThread = 1, withModel = false } = {}) {
+export function openExtraction(input, precision, { nThread = 1 } = {}) {
   const rows = Int32Array.from({ length: input.nFibre }, (_, k) => k);
   const bench = new ExtractionBench(nThread === 2 ? shared : kernels, input, rows, input.nFibre, precision);
-  bench.keepModel(withModel);
   const run = () => {
     bench.rejected.fill(0);
     bench.run();
     return bench.output.flux[0];
   };
-  return { run, output: bench.output, rejected: bench.rejected, model: withModel ? bench.model : undefined };
+  return { run, output: bench.output, rejected: bench.rejected };
 }
 
 /** The same Gaussians told by a table, as a measured profile is: what a profile of any form costs on the same windows.

@@ -6,7 +6,8 @@ import type { Precision } from "../src/kernels/banded.js";
 import { ExtractionBench } from "../src/kernels/extraction.js";
 import { loadKernels } from "../src/kernels/module.js";
 import { MaskBit } from "../src/reference/bits.js";
-import { type ExtractionInput, settleGrownColumns } from "../src/reference/extract.js";
+import type { ExtractionInput } from "../src/reference/extract.js";
+import { settleGrownColumns } from "../src/reference/grown.js";
 import { runBoth, runReference } from "./runs.js";
 import { makeScene } from "./scene.js";
 

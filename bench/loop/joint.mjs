@@ -3,7 +3,7 @@
 // The work is the kernel's: windows and weights at six nodes a block and a polynomial between them, computed once and used in
 // all solves; normal equations of half-bandwidth 2; first fit on the data's noise, then rounds of rejection with the
 // profile's misfit and variance from the model; background surface; variances and neighbours' covariances from the
-// inverse's band; flags, reduced χ², suspects; the model's light when asked for. Doubles within, Float32 images out. Left out: images
+// inverse's band; flags, reduced χ², suspects. Doubles within, Float32 images out. Left out: images
 // of the pixels' response, which the frames here have none of, and bandwidths other than 2.
 //
 // What makes it fast: no allocation in a column; a block of columns is copied to columns that lie contiguous, and its
@@ -18,9 +18,8 @@ const noticedShare = 0.01;
 const unsettledSigma = 0.1;
 
 export class JointLoop {
-  /** @param {import("../../dist/reference/extract.js").ExtractionInput} input
-   * @param {boolean} [withModel] Whether the model's light is wanted as an image. */
-  constructor(input, withModel = true) {
+  /** @param {import("../../dist/reference/extract.js").ExtractionInput} input */
+  constructor(input) {
     const { nx, ny, nFibre, noise } = input;
     const fits = input.bandwidth === 2 && input.method === "joint" && input.shape === undefined;
     if (!fits || noise.fixedVarianceImage || noise.inverseResponse || noise.responseRelativeVariance) {
@@ -28,7 +27,6 @@ export class JointLoop {
     }
     this.input = input;
     this.rejected = input.rejected.slice();
-    this.model = withModel ? new Float32Array(nx * ny) : undefined;
     const image = () => new Float32Array(nFibre * nx);
     this.output = {
       flux: image(),
@@ -46,7 +44,6 @@ export class JointLoop {
       electrons: tile(ny),
       fixed: tile(ny),
       bits: new Uint8Array(ny * blockColumns),
-      model: tile(ny),
       suspect: new Uint8Array(ny * blockColumns),
       flux: tile(nFibre),
       variance: tile(nFibre),
@@ -126,7 +123,7 @@ export class JointLoop {
     }
   }
 
-  /** Rejections and suspects of the column, and its model. @param {number} offset */
+  /** Rejections and suspects of the column. @param {number} offset */
   keepRejections(offset) {
     const { column, tile } = this;
     const { ny, growKappa, kappa } = this.input;
@@ -135,7 +132,6 @@ export class JointLoop {
     const from = offset * ny;
     for (let y = 0; y < ny; y++) {
       const row = margin + y;
-      tile.model[from + y] = model[row];
       if (kappa === 0) continue;
       if (bits[row] !== 0) {
         tile.suspect[from + y] = bits[row] & MaskBit.cosmic;
@@ -240,7 +236,7 @@ export class JointLoop {
 
   /** The block's spectra and marks into the images. @param {number} x0 @param {number} n */
   copyOut(x0, n) {
-    const { tile, output, model, rejected } = this;
+    const { tile, output, rejected } = this;
     const { nx, ny, nFibre, blockColumns } = this.input;
     for (const name of /** @type {const} */ ([
       "flux",
@@ -255,7 +251,6 @@ export class JointLoop {
     for (let y = 0; y < ny; y++) {
       const at = y * nx + x0;
       for (let i = 0; i < n; i++) rejected[at + i] |= tile.suspect[i * ny + y];
-      if (model) for (let i = 0; i < n; i++) model[at + i] = tile.model[i * ny + y];
     }
   }
 }

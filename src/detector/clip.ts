@@ -1,4 +1,5 @@
 /** Robust numbers from many samples: medians, percentiles, and a scatter that a few wild samples cannot move. */
+import { select } from "../reference/median.js";
 
 /** Samples beyond this many σ take no part in `clippedScatter`. */
 const KAPPA = 4;
@@ -47,29 +48,6 @@ export function quantileInPlace(values: Float64Array, q: number, n = values.leng
   let above = values[low + 1];
   for (let i = low + 2; i < n; i++) if (values[i] < above) above = values[i];
   return below + (at - low) * (above - below);
-}
-
-/** Moves the value of rank `k` among the first n to place k, smaller ones before it, and returns it (Hoare 1961, CACM 4,
- * 321: FIND). */
-function select(values: Float64Array, n: number, k: number): number {
-  let low = 0;
-  let high = n - 1;
-  while (low < high) {
-    const pivot = values[k];
-    let i = low;
-    let j = high;
-    while (i <= j) {
-      while (values[i] < pivot) i++;
-      while (pivot < values[j]) j--;
-      if (i > j) break;
-      const held = values[i];
-      values[i++] = values[j];
-      values[j--] = held;
-    }
-    if (j < k) low = i;
-    if (k < i) high = j;
-  }
-  return values[k];
 }
 
 /** Every k-th value, so that at most about `most` are left: enough for a median of a large image. */

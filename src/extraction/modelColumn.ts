@@ -2,7 +2,8 @@
  * model. Pixels that the frame lost are counted as if they were good: what is said of the estimator then holds for the
  * bench, not for this frame's accidents. */
 import type { Column } from "../reference/column.js";
-import { backgroundSeries, type ExtractionInput, emptyColumn, type SmoothBackground } from "../reference/extract.js";
+import { backgroundSeries, emptyColumn } from "../reference/columns.js";
+import type { ExtractionInput, SmoothBackground } from "../reference/extract.js";
 import { legendreArgument, legendreBasis } from "../reference/legendre.js";
 import { type BlockProfiles, blockProfiles } from "../reference/profile.js";
 import { pixelVariance } from "../reference/variance.js";

@@ -3,13 +3,8 @@ import type { Frame } from "../detector/frame.js";
 import { ExtractionBench } from "../kernels/extraction.js";
 import { type Kernels, loadKernels } from "../kernels/module.js";
 import { MaskBit } from "../reference/bits.js";
-import {
-  type ExtractionInput,
-  type ExtractionOutput,
-  extractColumns,
-  type Method,
-  settleGrownColumns,
-} from "../reference/extract.js";
+import { type ExtractionInput, type ExtractionOutput, extractColumns, type Method } from "../reference/extract.js";
+import { settleGrownColumns } from "../reference/grown.js";
 import { blockProfiles } from "../reference/profile.js";
 import { checkGeometry } from "../tramlines/file.js";
 import type { Tramlines } from "../tramlines/tramlines.js";

@@ -55,7 +55,6 @@ export enum Word {
   chi2, // T
   backgroundUnder, // T
   fitFlux, // T, of the joint fit whatever the method
-  modelImage, // f32, ny × nx, or absent: light of all fibres, without background
 
   // scratch of one thread
   start, // i32, nFibre

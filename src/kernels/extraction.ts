@@ -1,20 +1,15 @@
 /** Door to assembly/extract.ts: lays out one extraction's memory, runs stretches of columns, shows the spectra. */
 
 import { MaskBit } from "../reference/bits.js";
-import { chunkFibres } from "../reference/chunks.js";
+import { marginRows } from "../reference/columns.js";
 import type { ExtractionInput, ExtractionOutput, SmoothBackground } from "../reference/extract.js";
-import { blockNodes } from "../reference/profile.js";
 import type { ShapeTable } from "../reference/shape.js";
 import type { Precision } from "./banded.js";
 import type { TileKernel } from "./exports.js";
 import { MethodCode, Numbers, Word } from "./extraction-words.js";
+import { checkInput } from "./extractionChecks.js";
+import { type Piece, type Plan, pieceType, planBytes, scratchPlan, sharedPlan } from "./extractionMemory.js";
 import type { Kernels, Workbench } from "./module.js";
-
-type Piece = Float32Array | Float64Array | Int32Array | Uint8Array;
-type PieceType = "lanes" | "float32" | "float64" | "int32" | "uint8";
-
-/** How many numbers of which type each piece of the memory holds; `lanes` are numbers of the lanes' type. */
-type Plan = [word: Word, type: PieceType, length: number][];
 
 /** Rows of the frame, nLane numbers each; the first nColumn lanes hold columns. */
 export interface GroupRows {
@@ -36,8 +31,6 @@ export class ExtractionBench {
   readonly output: ExtractionOutput;
   /** ny × nx, bits of MaskBit: what was rejected so far. */
   readonly rejected: Uint8Array;
-  /** ny × nx, e⁻: light of all fibres in the columns that were extracted after `keepModel`, without background. */
-  readonly model: Float32Array;
   /** nSlit × nx, e⁻ per dispersion pixel: of the joint fit, whatever the method. */
   readonly fitFlux: Float32Array | Float64Array;
   private readonly bench: Workbench;
@@ -88,9 +81,7 @@ export class ExtractionBench {
     this.numbers = pieces.get(Word.numbers) as Float64Array;
     this.background = pieces.get(Word.background) as Float64Array;
     this.rejected = pieces.get(Word.rejected) as Uint8Array;
-    this.model = pieces.get(Word.modelImage) as Float32Array;
     this.fitFlux = pieces.get(Word.fitFlux) as Float32Array | Float64Array;
-    this.keepModel(false);
     this.output = viewOutput(pieces);
     this.copyIn(outputRow);
     const prepare = precision === "f32" ? this.bench.call.prepareExtraction32 : this.bench.call.prepareExtraction64;
@@ -149,11 +140,6 @@ export class ExtractionBench {
     // A κ whose square overflows rejects nothing.
     this.numbers[Numbers.kappaSquared] = kappa * kappa;
     this.numbers[Numbers.growKappaSquared] = growKappa * growKappa;
-  }
-
-  /** Whether `model` is written from here on. Memory for it is touched only then. */
-  keepModel(keep: boolean): void {
-    for (const job of this.jobs) job[Word.modelImage] = keep ? this.model.byteOffset : 0;
   }
 
   /** ε from here on: share of the light nearby by which data may miss the model before noise. */
@@ -293,124 +279,9 @@ function packShape(shape: ShapeTable): Float64Array {
   return Float64Array.of(start, step, n, referenceWidth, ...centroid, ...values);
 }
 
-/** Lane rows before the frame's first one, as assembly/job.ts counts them. */
-function marginRows({ halfWindow, wing }: ExtractionInput): number {
-  return 2 * halfWindow + 1 + wing + 2;
-}
-
-/** What all threads read, and the images that they write. */
-function sharedPlan(input: ExtractionInput, nSlit: number): Plan {
-  const { nx, ny, nFibre, noise, background } = input;
-  const nPixel = nx * ny;
-  const images = [Word.flux, Word.variance, Word.neighbourCovariance, Word.chi2, Word.backgroundUnder, Word.fitFlux];
-  return [
-    [Word.electrons, "float32", nPixel],
-    [Word.mask, "uint8", nPixel],
-    [Word.rejected, "uint8", nPixel],
-    [Word.bandOfRow, "uint8", ny],
-    [Word.fixedVariance, "float32", noise.fixedVariance.length],
-    ...optional(Word.fixedVarianceImage, noise.fixedVarianceImage),
-    ...optional(Word.inverseResponse, noise.inverseResponse),
-    ...optional(Word.responseRelativeVariance, noise.responseRelativeVariance),
-    [Word.trace, "float64", input.trace.length],
-    [Word.width, "float64", input.width.length],
-    [Word.seen, "int32", 2 * nFibre],
-    [Word.outputRow, "int32", nFibre],
-    ...(input.shape ? [[Word.shape, "float64", 11 + input.shape.values.length] as Plan[number]] : []),
-    [Word.background, "float64", background.coefficients.length],
-    ...images.map((word): Plan[number] => [word, "lanes", nSlit * nx]),
-    [Word.flags, "int32", nSlit * nx],
-    [Word.modelImage, "float32", nPixel],
-    [Word.numbers, "float64", Numbers.count],
-  ];
-}
-
-/** What each thread has for itself. */
-function scratchPlan(input: ExtractionInput, nLane: number): Plan {
-  const { ny, nFibre, bandwidth, background, wing } = input;
-  const nWindow = 2 * input.halfWindow + 1;
-  const nRow = ny + 2 * marginRows(input);
-  const nChunk = Math.ceil(nFibre / chunkFibres);
-  const nNode = blockNodes(input.blockColumns).length;
-  const laneRows = [
-    Word.light,
-    Word.backgroundRows,
-    Word.fixed,
-    Word.inverseResponseRows,
-    Word.responseVarianceRows,
-    Word.inverseVariance,
-    Word.model,
-    Word.wingLight,
-    Word.net,
-    Word.reach,
-    Word.crowd,
-    Word.chiSquare,
-  ];
-  const perFibre: [Word, number][] = [
-    [Word.weights, nWindow],
-    [Word.aperture, nWindow],
-    [Word.centre, 1],
-    [Word.fluxes, 1],
-    [Word.solution, 1],
-    [Word.lastChange, 1],
-    [Word.variances, 1],
-    [Word.covariancesBelow, 1],
-    [Word.raw, 1],
-    [Word.band, bandwidth + 1],
-    [Word.normal, bandwidth + 1],
-    [Word.inverse, bandwidth + 1],
-    [Word.rawCovariance, bandwidth + 1],
-    [Word.crosstalkBand, 2 * bandwidth + 1],
-    [Word.system, 2 * (2 * bandwidth + 2)],
-    [Word.systemInverse, 2 * (2 * bandwidth + 2)],
-    [Word.systemRhs, 2],
-  ];
-  return [
-    [Word.start, "int32", nFibre],
-    [Word.tileElectrons, "float32", 16 * ny],
-    [Word.tileBits, "uint8", 16 * ny],
-    [Word.tileSpectra, "lanes", 6 * 16 * nFibre],
-    [Word.tileFlags, "int32", 16 * nFibre],
-    [Word.shapeTable, "float64", 8 * (input.shape?.n ?? 0)],
-    [Word.needed, "uint8", nFibre],
-    [Word.nodeCentre, "lanes", nNode * nFibre],
-    [Word.nodeWeights, "lanes", nNode * nFibre * nWindow],
-    [Word.wideWeights, "lanes", nWindow + 2 * wing],
-    [Word.wingNodes, "lanes", 4 * nFibre * wing],
-    [Word.wingWeights, "lanes", 2 * nFibre * wing],
-    [Word.fibreOfRow, "int32", nRow],
-    [Word.nodeShares, "lanes", nNode * input.blockColumns],
-    [Word.rowPolynomials, "lanes", ny * background.nY],
-    [Word.backgroundSeries, "float64", 2 * background.nY + background.nX],
-    [Word.bits, "int32", nRow],
-    [Word.suspects, "int32", nRow],
-    [Word.candidates, "int32", 2 * nRow],
-    [Word.activeChunks, "float64", 2 * nChunk],
-    [Word.nextChunks, "float64", 2 * nChunk],
-    ...laneRows.map((word): Plan[number] => [word, "lanes", nRow * nLane]),
-    [Word.weighted, "lanes", nWindow * nLane],
-    ...perFibre.map(([word, n]): Plan[number] => [word, "lanes", nFibre * n * nLane]),
-    [Word.flagsOfLanes, "int32", nFibre * nLane],
-  ];
-}
-
-function pieceType(type: PieceType, precision: Precision) {
-  if (type !== "lanes") return type;
-  return precision === "f32" ? "float32" : "float64";
-}
-
-function planBytes(plan: Plan, precision: Precision): number {
-  const bytes = { float32: 4, float64: 8, int32: 4, uint8: 1 };
-  return plan.reduce((sum, [, type, length]) => sum + bytes[pieceType(type, precision)] * length, 0);
-}
-
 /** Whether one band holds for all rows, as where amplifiers lie side by side; then it is read once a column. */
 function oneBand(bandOfRow: Uint8Array): boolean {
   return bandOfRow.every((band) => band === bandOfRow[0]);
-}
-
-function optional(word: Word, image: Float32Array | undefined): Plan {
-  return image === undefined ? [] : [[word, "float32", image.length]];
 }
 
 function viewOutput(pieces: Map<Word, Piece>): ExtractionOutput {
@@ -423,40 +294,4 @@ function viewOutput(pieces: Map<Word, Piece>): ExtractionOutput {
     chi2: image(Word.chi2),
     background: image(Word.backgroundUnder),
   };
-}
-
-function checkInput(input: ExtractionInput, outputRow: Int32Array, nSlit: number): void {
-  const { nx, ny, nFibre, noise, background } = input;
-  const lengths: [string, ArrayLike<number> | undefined, number][] = [
-    ["electrons", input.electrons, nx * ny],
-    ["mask", input.mask, nx * ny],
-    ["rejected", input.rejected, nx * ny],
-    ["bandOfRow", noise.bandOfRow, ny],
-    ["fixedVarianceImage", noise.fixedVarianceImage, nx * ny],
-    ["inverseResponse", noise.inverseResponse, nx * ny],
-    ["responseRelativeVariance", noise.responseRelativeVariance, nx * ny],
-    ["trace", input.trace, nFibre * input.nTrace],
-    ["width", input.width, nFibre * input.nWidth],
-    ["seen", input.seen, 2 * nFibre],
-    ["outputRow", outputRow, nFibre],
-    ["background", background.coefficients, background.nX * background.nY],
-  ];
-  for (const [name, values, length] of lengths) {
-    if (values !== undefined && values.length !== length) {
-      throw new RangeError(`${name} holds ${values.length} numbers, but this extraction needs ${length}.`);
-    }
-  }
-  const nBand = noise.fixedVariance.length / nx;
-  if (!Number.isInteger(nBand) || noise.bandOfRow.some((band) => band >= nBand)) {
-    throw new RangeError(`fixedVariance holds ${nBand} bands of ${nx} columns, fewer than bandOfRow names.`);
-  }
-  for (let k = 0; k < nFibre; k++) {
-    const width = input.width.subarray(k * input.nWidth, (k + 1) * input.nWidth);
-    if (!(width.slice(1).reduce((least, c) => least - Math.abs(c), width[0]) > 0)) {
-      throw new RangeError(`The width of fibre ${k} of this extraction is not above 0 everywhere.`);
-    }
-  }
-  if (outputRow.some((row) => row < 0 || row >= nSlit)) {
-    throw new RangeError(`outputRow names a row outside the ${nSlit} of the slit.`);
-  }
 }

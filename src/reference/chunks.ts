@@ -33,3 +33,8 @@ export function callRow(column: Column, row: number, called: Set<number>): void 
     if (row >= first && row < first + column.nWindow) called.add(Math.floor(k / chunkFibres));
   }
 }
+
+/** Chunks from the lowest fibres up, as they are settled. */
+export function sorted(chunks: Set<number>): number[] {
+  return [...chunks].sort((a, b) => a - b);
+}

@@ -17,7 +17,8 @@ export function medianInPlace(values: Float64Array, n: number): number {
   return 0.5 * (lower + upper);
 }
 
-/** Moves the element of rank `k` to place k, smaller ones before it, and returns it. */
+/** Moves the element of rank `k` among the first n to place k, smaller ones before it, and returns it (Hoare 1961, CACM 4, 321:
+ * FIND). */
 export function select(values: Float64Array, n: number, k: number): number {
   let low = 0;
   let high = n - 1;
