@@ -44,6 +44,12 @@ function centred(problems: CentringProblem[], size: Omit<CentringSize, "nRow" | 
   return problems.map((_, i) => ({ ...door.result(i), model: door.model(i) }));
 }
 
+/** Whether every fibre kept more rows of its core than it has unknowns. Where rejection left fewer, the system is all but
+ * singular (solutions of 1e10 e⁻ from light of 1e5), and two ways of rounding part by more than any bound. */
+function isDetermined(centre: number[], good: Uint8Array, nPar: number): boolean {
+  return centre.every((y0) => good.filter((g, y) => g === 1 && Math.abs(y - y0) <= 2.6).length > nPar);
+}
+
 describe("joint centring", () => {
   it("finds a small shift and widening of bright fibres, to the second order that linearisation leaves", () => {
     const c = column(17, 3, 0.02, 0.01);
@@ -110,6 +116,7 @@ describe("joint centring", () => {
   });
 
   it("agrees with the reference on rounds that weigh by their model and leave pixels out", () => {
+    let [nCompared, nColumn] = [0, 0];
     fc.assert(
       fc.property(
         fc.integer({ min: 5, max: 9 }),
@@ -150,6 +157,9 @@ describe("joint centring", () => {
             const twin = centreColumn(c, good, c, start, shape, rounds);
             const own = { ...door.result(i), model: door.model(i) };
             expect([...door.good(i)]).toEqual([...good]);
+            nColumn++;
+            if (!isDetermined(c.centre, good, nPar)) return;
+            nCompared++;
             for (const key of ["solution", "variance", "model", "background"] as const) {
               const largest = Math.max(1e-30, ...twin[key].map(Math.abs));
               own[key].forEach((value, j) => {
@@ -168,6 +178,7 @@ describe("joint centring", () => {
       ),
       { seed: 32, numRuns: 40 },
     );
+    expect(nCompared).toBeGreaterThan(0.7 * nColumn);
   });
 
   it("says what does not fit", () => {
