@@ -39,6 +39,16 @@ export function spectraHdus(
   options: SpectraFileOptions,
 ): OutputHdu[] {
   const { spectra } = extraction;
+  return [
+    { kind: "primary", header: primaryCards(extraction, frame, tramlines, options) },
+    ...spectrumImages(spectra),
+    { kind: "table", name: "POSITIONS", columns: positionColumns(extraction, tramlines, options.sky ?? []) },
+    ...(options.extra ?? []),
+  ];
+}
+
+/** The images of spectra, as every product that holds some has them. `cards`: added to each, of its coordinates. */
+export function spectrumImages(spectra: Spectra, cards: Card[] = []): OutputHdu[] {
   const image = (name: string, unit: string | undefined, data: PixelArray, comment: string): OutputHdu => ({
     kind: "image",
     name,
@@ -46,10 +56,9 @@ export function spectraHdus(
     ny: spectra.nFibre,
     data,
     unit,
-    cards: [{ keyword: "COMMENT", comment }],
+    cards: [...cards, { keyword: "COMMENT", comment }],
   });
   return [
-    { kind: "primary", header: primaryCards(extraction, frame, tramlines, options) },
     image("FLUX", "electron", single(spectra.flux), "Light of the fibre in that column; NaN where there is no value."),
     image("FLUX_VAR", "electron2", single(spectra.variance), "Variance of FLUX."),
     image(
@@ -61,8 +70,6 @@ export function spectraHdus(
     image("FLAGS", undefined, spectra.flags, flagsComment),
     image("CHI2", undefined, single(spectra.chi2), "Reduced chi-square of the profile fit in the fibre's window."),
     image("BACKGROUND", "electron", single(spectra.background), "Scattered light under the fibre, per pixel."),
-    { kind: "table", name: "POSITIONS", columns: positionColumns(extraction, tramlines, options.sky ?? []) },
-    ...(options.extra ?? []),
   ];
 }
 
@@ -79,17 +86,20 @@ export async function writeSpectra(
   await writeFits(path, spectraHdus(extraction, frame, tramlines, options), write);
 }
 
-/** Reads spectra back. @throws FitsError when an HDU of the product is missing or its format is newer than this program. */
-export async function readSpectra(path: string): Promise<Spectra> {
-  const flux = await readImage(path, { hdu: "FLUX" });
+/** Reads spectra back. `input`: as for `readImage`; `name`: what to call bytes in messages.
+ * @throws FitsError when an HDU of the product is missing or its format is newer than this program. */
+export async function readSpectra(input: string | Uint8Array, name?: string): Promise<Spectra> {
+  const flux = await readImage(input, { hdu: "FLUX", name });
   const version = flux.primaryHeader.integer("SPECVERS") ?? 0;
   if (version < 1 || version > formatVersion) {
     const finding =
       version < 1 ? "this is no file of extracted spectra" : `format version ${version} is newer than ${formatVersion}`;
-    throw new FitsError("unsupported", finding, "extract the frame again with this program", { file: path });
+    throw new FitsError("unsupported", finding, "extract the frame again with this program", {
+      file: typeof input === "string" ? input : name,
+    });
   }
-  const numbers = async (hdu: string) => Float32Array.from((await readImage(path, { hdu })).data);
-  const flags = await readImage(path, { hdu: "FLAGS" });
+  const numbers = async (hdu: string) => Float32Array.from((await readImage(input, { hdu, name })).data);
+  const flags = await readImage(input, { hdu: "FLAGS", name });
   return {
     nFibre: flux.ny,
     nx: flux.nx,
