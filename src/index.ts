@@ -1,5 +1,10 @@
 /** The public library. */
 
+export { CalibrationError } from "./calibration/errors.js";
+export { crowdedLines, joinLines, type LineList, lampLines } from "./calibration/lamps.js";
+export { parseLineFile, readLineFile } from "./calibration/lineFile.js";
+export { airToVacuum, vacuumToAir } from "./calibration/refraction.js";
+export { SKY_LINES, type SkyLine, zeroPointLines } from "./calibration/skyLines.js";
 export {
   type CalibrationFrames,
   type CalibrationInput,

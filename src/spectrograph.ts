@@ -51,6 +51,7 @@ const schema = z.strictObject({
       medium: z.enum(["air", "vacuum"]).optional(),
       range: z.tuple([positive, positive]).optional(),
       lamps: z.array(z.string()).optional(),
+      lines: z.string().min(1).optional(),
     })
     .optional(),
 });
@@ -86,6 +87,7 @@ const KEYS: Record<string, Record<string, string>> = {
     medium: '"air" or "vacuum"',
     range: "two numbers over 0, in Å, at the first and at the last column",
     lamps: 'a list of names such as ["Ne", "Ar"]',
+    lines: "the name of a text file with wavelengths",
   },
 };
 
@@ -129,7 +131,14 @@ export interface Spectrograph {
     /** Fibres that are summed, by the target's name. */
     targets?: { name: string; fibres: number[] }[];
   };
-  wavelength?: { medium?: "air" | "vacuum" /** Å */; range?: [number, number]; lamps: string[] };
+  wavelength?: {
+    medium?: "air" | "vacuum";
+    /** Å at the first and at the last column, roughly. */
+    range?: [number, number];
+    lamps: string[];
+    /** Absolute path of the observer's own list (calibration/lineFile.ts). */
+    lines?: string;
+  };
 }
 
 export class SpectrographError extends Error {
@@ -221,7 +230,11 @@ function named(tree: z.infer<typeof schema>, file: string, folder: string): Spec
         ...given({ targets: slit.targets && Object.entries(slit.targets).map(([name, fibres]) => ({ name, fibres })) }),
       },
       wavelength: wavelength && {
-        ...given({ medium: wavelength.medium, range: wavelength.range }),
+        ...given({
+          medium: wavelength.medium,
+          range: wavelength.range,
+          lines: wavelength.lines === undefined ? undefined : resolve(folder, wavelength.lines),
+        }),
         lamps: wavelength.lamps ?? [],
       },
     }),

@@ -5,31 +5,31 @@ import { describe, expect, test } from "vitest";
 import * as library from "../src/index.js";
 
 const VALUES = `
-  DetectorError FitsError Flag Header MaskBit NamingError SCENES SceneError SpectrographError TraceError
-  UNUSABLE checkGeometry chooseProfile compareMethods correctFrame countFibres crosstalkHdus encodeFits
-  extractFrame findPairHits formatSection historyCards inputCards listHdus loadCalibrations loadKernels
-  lookAt makeCalibrations measureCrosstalk measureNoise measureSingleFibre medianFwhm
-  medianSignalToNoise neglectedShare noCalibrations noiseWarnings parseScene parseSection
-  parseSpectrograph readImage readPositions readScene readSpectra readSpectrograph readTable
-  readTramlines recoverInjected rejectedHdu requireSameGeometry scatteredHdu scoreByDecade
-  scoreCosmicRays scoreLeak scoreTrace sectionSize seenHdu simulateExposure simulationFiles spectraHdus
-  spectrographToml sumFibres summariseSpectra targetsHdu traceFlat tramlineHeights tramlinesHdus useThreads
-  verifyExtraction writeExposure writeFits writeObserverFiles writeSimulation writeSpectra
-  writeTramlines
+  CalibrationError DetectorError FitsError Flag Header MaskBit NamingError SCENES SKY_LINES SceneError
+  SpectrographError TraceError UNUSABLE airToVacuum checkGeometry chooseProfile compareMethods
+  correctFrame countFibres crosstalkHdus crowdedLines encodeFits extractFrame findPairHits formatSection
+  historyCards inputCards joinLines lampLines listHdus loadCalibrations loadKernels lookAt
+  makeCalibrations measureCrosstalk measureNoise measureSingleFibre medianFwhm medianSignalToNoise
+  neglectedShare noCalibrations noiseWarnings parseLineFile parseScene parseSection parseSpectrograph
+  readImage readLineFile readPositions readScene readSpectra readSpectrograph readTable readTramlines
+  recoverInjected rejectedHdu requireSameGeometry scatteredHdu scoreByDecade scoreCosmicRays scoreLeak
+  scoreTrace sectionSize seenHdu simulateExposure simulationFiles spectraHdus spectrographToml sumFibres
+  summariseSpectra targetsHdu traceFlat tramlineHeights tramlinesHdus useThreads vacuumToAir
+  verifyExtraction writeExposure writeFits writeObserverFiles writeSimulation writeSpectra writeTramlines
+  zeroPointLines
 `;
 
 const TYPES = `
-  AmplifierNoise CalibrationFrames CalibrationInput CalibrationPaths Calibrations Card CardValue
-  CellScore ChecksumState Comparison CorrectOptions CosmicScore CosmicTruth CrosstalkMatrix DarkScore
-  DecadeScore DetectorGeometry Extraction ExtractionOptions FibreBias FibreCounts FibreState Finding
-  FitsColumn FitsErrorCode FitsImage FitsTable FlagCounts Frame GaussianProfile HduSummary LeakScore
+  AmplifierNoise CalibrationFrames CalibrationInput CalibrationPaths Calibrations Card CardValue CellScore
+  ChecksumState Comparison CorrectOptions CosmicScore CosmicTruth CrosstalkMatrix DarkScore DecadeScore
+  DetectorGeometry Extraction ExtractionOptions FibreBias FibreCounts FibreState Finding FitsColumn
+  FitsErrorCode FitsImage FitsTable FlagCounts Frame GaussianProfile HduSummary LeakScore LineList
   LoneEstimator LookOptions LookReport Method MethodCheck MethodComparison NoiseFrames NoiseIngredients
   NoiseMeasurement OutputColumn OutputHdu OutputImage PairHits PixelArray Profile ProfileChoice
   ProfileKind RawImage ReadOptions Recovery RecoveryOptions Role Scene SceneExposure Section SeenLeak
-  SimulatedExposure SimulationFiles SimulationOptions SingleFibreCheck SlitLayout Spectra
-  SpectraFileOptions SpectraSummary Spectrograph TableOptions Target TargetSpectra TraceOptions
-  TraceScore Tracing Tramlines TramlinesFileOptions TrueFlux TrueLine Truth Verdict Verification
-  WriteOptions
+  SimulatedExposure SimulationFiles SimulationOptions SingleFibreCheck SkyLine SlitLayout Spectra
+  SpectraFileOptions SpectraSummary Spectrograph TableOptions Target TargetSpectra TraceOptions TraceScore
+  Tracing Tramlines TramlinesFileOptions TrueFlux TrueLine Truth Verdict Verification WriteOptions
 `;
 
 const words = (text: string) => text.trim().split(/\s+/);

@@ -35,6 +35,7 @@ sky = [3]
 medium = "air"
 range = [7390, 5600]
 lamps = ["Ne", "Ar"]
+lines = "arcs/lines.txt"
 `;
 
 const parse = (text: string) => parseSpectrograph(text, { file: "bench.toml", folder: "/data/night" });
@@ -70,7 +71,7 @@ describe("spectrograph file", () => {
         ],
       },
       slit: { blocks: [24, 23], pitch: 4.9, gap: [4.6], dead: [10, 47], sky: [3] },
-      wavelength: { medium: "air", range: [7390, 5600], lamps: ["Ne", "Ar"] },
+      wavelength: { medium: "air", range: [7390, 5600], lamps: ["Ne", "Ar"], lines: "/data/night/arcs/lines.txt" },
     });
   });
 

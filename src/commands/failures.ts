@@ -1,5 +1,6 @@
 /** What is told when a command cannot do its job. Bad input is met with the library's own sentence; anything else is a
  * defect of this program and says so. */
+import { CalibrationError } from "../calibration/errors.js";
 import { DetectorError } from "../detector/detectorError.js";
 import { FitsError } from "../fits/errors.js";
 import { SceneError } from "../simulate/sceneMessages.js";
@@ -20,7 +21,7 @@ export interface Failure {
   exitCode: 1 | 2;
 }
 
-const TOLD = [FitsError, DetectorError, SpectrographError, SceneError, TraceError, RefusalError];
+const TOLD = [FitsError, DetectorError, SpectrographError, SceneError, TraceError, CalibrationError, RefusalError];
 
 export function failureOf(error: unknown): Failure {
   if (error instanceof UsageError) return { kind: "usage", message: error.message, exitCode: 2 };
