@@ -1,10 +1,14 @@
 /** The public library. */
 
 export { CalibrationError } from "./calibration/errors.js";
+export { type GridRequest, gridWavelength, type Medium, makeGrid, type SpectralGrid } from "./calibration/grid.js";
 export { crowdedLines, joinLines, type LineList, lampLines } from "./calibration/lamps.js";
 export { parseLineFile, readLineFile } from "./calibration/lineFile.js";
+export { type RebinnedSpectra, type RebinOptions, rebinSpectra } from "./calibration/rebin.js";
+export { rebinnedHdus } from "./calibration/rebinFile.js";
 export { airToVacuum, vacuumToAir } from "./calibration/refraction.js";
 export { SKY_LINES, type SkyLine, zeroPointLines } from "./calibration/skyLines.js";
+export { type PixelWavelengths, readProduct, type SpectraProduct } from "./calibration/spectraProduct.js";
 export {
   type CalibrationFrames,
   type CalibrationInput,
@@ -60,6 +64,7 @@ export { formatSection, parseSection, type Section, sectionSize } from "./fits/s
 export { type FitsColumn, type FitsTable, readTable, type TableOptions } from "./fits/table.js";
 export { type WriteOptions, writeFits } from "./fits/write.js";
 export { loadKernels, useThreads } from "./kernels/module.js";
+export { ecsvText, fibreTables, type SpectrumTable, tableHdus, targetTables } from "./report/spectraTables.js";
 export {
   countFibres,
   type FibreCounts,

@@ -7,29 +7,32 @@ import * as library from "../src/index.js";
 const VALUES = `
   CalibrationError DetectorError FitsError Flag Header MaskBit NamingError SCENES SKY_LINES SceneError
   SpectrographError TraceError UNUSABLE airToVacuum checkGeometry chooseProfile compareMethods
-  correctFrame countFibres crosstalkHdus crowdedLines encodeFits extractFrame findPairHits formatSection
-  historyCards inputCards joinLines lampLines listHdus loadCalibrations loadKernels lookAt
-  makeCalibrations measureCrosstalk measureNoise measureSingleFibre medianFwhm medianSignalToNoise
-  neglectedShare noCalibrations noiseWarnings parseLineFile parseScene parseSection parseSpectrograph
-  readImage readLineFile readPositions readScene readSpectra readSpectrograph readTable readTramlines
-  recoverInjected rejectedHdu requireSameGeometry scatteredHdu scoreByDecade scoreCosmicRays scoreLeak
-  scoreTrace sectionSize seenHdu simulateExposure simulationFiles spectraHdus spectrographToml sumFibres
-  summariseSpectra targetsHdu traceFlat tramlineHeights tramlinesHdus useThreads vacuumToAir
-  verifyExtraction writeExposure writeFits writeObserverFiles writeSimulation writeSpectra writeTramlines
-  zeroPointLines
+  correctFrame countFibres crosstalkHdus crowdedLines ecsvText encodeFits extractFrame fibreTables
+  findPairHits formatSection gridWavelength historyCards inputCards joinLines lampLines listHdus
+  loadCalibrations loadKernels lookAt makeCalibrations makeGrid measureCrosstalk measureNoise
+  measureSingleFibre medianFwhm medianSignalToNoise neglectedShare noCalibrations noiseWarnings
+  parseLineFile parseScene parseSection parseSpectrograph readImage readLineFile readPositions readProduct
+  readScene readSpectra readSpectrograph readTable readTramlines rebinSpectra rebinnedHdus recoverInjected
+  rejectedHdu requireSameGeometry scatteredHdu scoreByDecade scoreCosmicRays scoreLeak scoreTrace
+  sectionSize seenHdu simulateExposure simulationFiles spectraHdus spectrographToml sumFibres
+  summariseSpectra tableHdus targetTables targetsHdu traceFlat tramlineHeights tramlinesHdus useThreads
+  vacuumToAir verifyExtraction writeExposure writeFits writeObserverFiles writeSimulation writeSpectra
+  writeTramlines zeroPointLines
 `;
 
 const TYPES = `
   AmplifierNoise CalibrationFrames CalibrationInput CalibrationPaths Calibrations Card CardValue CellScore
   ChecksumState Comparison CorrectOptions CosmicScore CosmicTruth CrosstalkMatrix DarkScore DecadeScore
   DetectorGeometry Extraction ExtractionOptions FibreBias FibreCounts FibreState Finding FitsColumn
-  FitsErrorCode FitsImage FitsTable FlagCounts Frame GaussianProfile HduSummary LeakScore LineList
-  LoneEstimator LookOptions LookReport Method MethodCheck MethodComparison NoiseFrames NoiseIngredients
-  NoiseMeasurement OutputColumn OutputHdu OutputImage PairHits PixelArray Profile ProfileChoice
-  ProfileKind RawImage ReadOptions Recovery RecoveryOptions Role Scene SceneExposure Section SeenLeak
-  SimulatedExposure SimulationFiles SimulationOptions SingleFibreCheck SkyLine SlitLayout Spectra
-  SpectraFileOptions SpectraSummary Spectrograph TableOptions Target TargetSpectra TraceOptions TraceScore
-  Tracing Tramlines TramlinesFileOptions TrueFlux TrueLine Truth Verdict Verification WriteOptions
+  FitsErrorCode FitsImage FitsTable FlagCounts Frame GaussianProfile GridRequest HduSummary LeakScore
+  LineList LoneEstimator LookOptions LookReport Medium Method MethodCheck MethodComparison NoiseFrames
+  NoiseIngredients NoiseMeasurement OutputColumn OutputHdu OutputImage PairHits PixelArray
+  PixelWavelengths Profile ProfileChoice ProfileKind RawImage ReadOptions RebinOptions RebinnedSpectra
+  Recovery RecoveryOptions Role Scene SceneExposure Section SeenLeak SimulatedExposure SimulationFiles
+  SimulationOptions SingleFibreCheck SkyLine SlitLayout Spectra SpectraFileOptions SpectraProduct
+  SpectraSummary SpectralGrid Spectrograph SpectrumTable TableOptions Target TargetSpectra TraceOptions
+  TraceScore Tracing Tramlines TramlinesFileOptions TrueFlux TrueLine Truth Verdict Verification
+  WriteOptions
 `;
 
 const words = (text: string) => text.trim().split(/\s+/);

@@ -61,4 +61,16 @@ export const contents: Entry[] = [
     summary: "can the extraction of a frame be trusted",
     define: async (command) => (await import("./recover.js")).addRecover(command),
   },
+  {
+    name: "rebin",
+    takes: "<SPECTRA>",
+    summary: "spectra on a common wavelength grid",
+    define: async (command) => (await import("./rebin.js")).addRebin(command),
+  },
+  {
+    name: "tables",
+    takes: "<SPECTRA>",
+    summary: "one table per fibre or target, as ECSV or FITS",
+    define: async (command) => (await import("./tables.js")).addTables(command),
+  },
 ];

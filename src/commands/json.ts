@@ -3,6 +3,8 @@
 import { z } from "zod";
 import { Flag } from "../reference/bits.js";
 import { comparisonKeys, gainKeys } from "./compareJson.js";
+import { rebinKeys } from "./rebinJson.js";
+import { tablesKeys } from "./tablesJson.js";
 
 const number = z.number().nullable();
 const count = z.int().min(0);
@@ -367,6 +369,10 @@ const demo = z.strictObject({
   ...tail,
 });
 
+const rebin = z.strictObject({ ...head("rebin"), ...rebinKeys, ...tail });
+
+const tables = z.strictObject({ ...head("tables"), ...tablesKeys, ...tail });
+
 const failure = z.strictObject({
   hatchel: z.string(),
   format: z.literal(1),
@@ -379,7 +385,7 @@ const failure = z.strictObject({
 });
 
 /** By command; `failure` is what any of them prints instead when it fails. */
-export const jsonSchemas = { demo, simulate, look, trace, extract, compare, verify, recover, failure };
+export const jsonSchemas = { demo, simulate, look, trace, extract, compare, verify, recover, rebin, tables, failure };
 
 export type CommandName = Exclude<keyof typeof jsonSchemas, "failure">;
 
