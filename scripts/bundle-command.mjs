@@ -13,13 +13,16 @@ const door = join(root, "dist", "kernels", "module.js");
 /** Those that jobs begin with; the others are found as packages. */
 const TAKEN_IN = ["commander", "smol-toml", "zod"];
 
+/** The command, and the script of the threads that `hatchel run` has. */
+const ENTRIES = ["main", "nightWorker"];
+
 rmSync(folder, { recursive: true, force: true });
 const bundle = await rolldown({
-  input: { main: join(root, "dist", "commands", "main.js") },
+  input: Object.fromEntries(ENTRIES.map((name) => [name, join(root, "dist", "commands", `${name}.js`)])),
   platform: "node",
   external: (id, importer) =>
     id.startsWith(".") ? join(dirname(importer), id) === door : /^[a-z@]/.test(id) && !TAKEN_IN.includes(id),
-  treeshake: { moduleSideEffects: [join(root, "dist", "commands", "main.js")] },
+  treeshake: { moduleSideEffects: ENTRIES.map((name) => join(root, "dist", "commands", `${name}.js`)) },
 });
 await bundle.write({
   dir: folder,

@@ -1,10 +1,9 @@
 /** The spectrograph file: what an observer knows of detector, slit and lamps, in TOML. Every key may be left out. */
 import { readFile } from "node:fs/promises";
 import { basename, dirname, resolve } from "node:path";
-import { parse as parseToml, TomlError } from "smol-toml";
 import { z } from "zod";
 import { parseSection } from "./fits/sections.js";
-import { nearestKey } from "./nearestKey.js";
+import { type TomlKeys, tomlComplaint, tomlTree } from "./tomlSentences.js";
 
 const section = z.string().superRefine((text, context) => {
   try {
@@ -57,7 +56,7 @@ const schema = z.strictObject({
 });
 
 /** Keys of each table, and what a value must be, in words for a reader. */
-const KEYS: Record<string, Record<string, string>> = {
+const KEYS: TomlKeys = {
   "": { name: "a string", detector: "a table", slit: "a table", wavelength: "a table" },
   detector: {
     dispersion_axis: "1 or 2",
@@ -160,52 +159,13 @@ export async function readSpectrograph(path: string): Promise<Spectrograph> {
 
 /** The same from the text itself. `folder`: where its relative paths start. */
 export function parseSpectrograph(text: string, { file, folder }: { file: string; folder: string }): Spectrograph {
-  let tree: unknown;
-  try {
-    tree = parseToml(text);
-  } catch (error) {
-    if (!(error instanceof TomlError)) throw error;
-    const found = error.message.split("\n")[0].replace(/^Invalid TOML document: /, "");
-    throw new SpectrographError(`${file}, line ${error.line}: not valid TOML (${found}); correct that line.`);
-  }
-  const result = schema.safeParse(tree);
-  if (!result.success) throw new SpectrographError(sentence(file, tree, result.error.issues[0]));
+  const parsed = tomlTree(text, file);
+  if ("complaint" in parsed) throw new SpectrographError(parsed.complaint);
+  const result = schema.safeParse(parsed.tree);
+  if (!result.success) throw new SpectrographError(tomlComplaint(file, parsed.tree, result.error.issues[0], KEYS));
   const spectrograph = named(result.data, file, folder);
   checkSlit(spectrograph, file);
   return spectrograph;
-}
-
-type Issue = z.core.$ZodIssue;
-
-/** One sentence for the first thing that is wrong. */
-function sentence(file: string, tree: unknown, issue: Issue): string {
-  const table = issue.path.filter((step) => typeof step === "string").join(".");
-  if (issue.code === "unrecognized_keys") {
-    const key = issue.keys[0];
-    const known = Object.keys(KEYS[table] ?? {});
-    const near = nearestKey(key, known);
-    const remedy = near ? `did you mean '${near}'?` : `known there: ${known.join(", ")}.`;
-    return `${file}: unknown key '${spelled([...issue.path, key])}'; ${remedy}`;
-  }
-  const names = issue.path.filter((step): step is string => typeof step === "string");
-  const known = KEYS[names.slice(0, -1).join(".")];
-  const expected = known?.[names[names.length - 1]] ?? known?.["*"] ?? "a table";
-  const found = JSON.stringify(valueAt(tree, issue.path)) ?? "nothing";
-  return `${file}: '${spelled(issue.path)}' is ${found}, but ${expected} was expected; correct it or leave the key out.`;
-}
-
-/** detector.amplifier[2].gain, counted from 1 as people do. */
-function spelled(path: readonly PropertyKey[]): string {
-  return path.reduce<string>((text, step) => {
-    if (typeof step === "number") return `${text}[${step + 1}]`;
-    return text === "" ? String(step) : `${text}.${String(step)}`;
-  }, "");
-}
-
-function valueAt(tree: unknown, path: readonly PropertyKey[]): unknown {
-  let here = tree;
-  for (const step of path) here = (here as Record<PropertyKey, unknown> | undefined)?.[step];
-  return here;
 }
 
 function named(tree: z.infer<typeof schema>, file: string, folder: string): Spectrograph {

@@ -26,6 +26,18 @@ export const contents: Entry[] = [
     define: async (command) => (await import("./simulate.js")).addSimulate(command),
   },
   {
+    name: "plan",
+    takes: "<FOLDER>",
+    summary: "propose a night plan from a folder's frames",
+    define: async (command) => (await import("./plan.js")).addPlan(command),
+  },
+  {
+    name: "run",
+    takes: "<PLAN.toml>",
+    summary: "carry out a night plan",
+    define: async (command) => (await import("./run.js")).addRun(command),
+  },
+  {
     name: "look",
     takes: "<FRAME>",
     summary: "what is in a frame, and what would be assumed of it",

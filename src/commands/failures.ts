@@ -3,6 +3,7 @@
 import { CalibrationError } from "../calibration/errors.js";
 import { DetectorError } from "../detector/detectorError.js";
 import { FitsError } from "../fits/errors.js";
+import { PlanError } from "../night/plan.js";
 import { SceneError } from "../simulate/sceneMessages.js";
 import { SpectrographError } from "../spectrograph.js";
 import { TraceError } from "../tramlines/errors.js";
@@ -21,7 +22,16 @@ export interface Failure {
   exitCode: 1 | 2;
 }
 
-const TOLD = [FitsError, DetectorError, SpectrographError, SceneError, TraceError, CalibrationError, RefusalError];
+const TOLD = [
+  FitsError,
+  PlanError,
+  DetectorError,
+  SpectrographError,
+  SceneError,
+  TraceError,
+  CalibrationError,
+  RefusalError,
+];
 
 export function failureOf(error: unknown): Failure {
   if (error instanceof UsageError) return { kind: "usage", message: error.message, exitCode: 2 };

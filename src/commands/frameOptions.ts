@@ -54,7 +54,7 @@ export function addFrameOptions(command: Command): Command {
     .addOption(threadsOption());
 }
 
-function threadsOption(): Option {
+export function threadsOption(): Option {
   const option = new Option("--threads <n>", "how many work at once; all cores unless told otherwise");
   return option.argParser(wholeNumber("--threads", 1, mostThreads));
 }

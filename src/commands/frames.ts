@@ -4,7 +4,6 @@ import { existsSync, readFileSync, statSync } from "node:fs";
 import { basename } from "node:path";
 import type { Calibrations } from "../detector/calibrations.js";
 import { correctFrame } from "../detector/correct.js";
-import { flatWarnings } from "../detector/flatWarnings.js";
 import type { Frame } from "../detector/frame.js";
 import { loadCalibrations } from "../detector/loadCalibrations.js";
 import type { RawImage } from "../detector/raw.js";
@@ -15,14 +14,16 @@ import type { Header } from "../fits/header.js";
 import { readImage } from "../fits/image.js";
 import { readSpectrograph, type Spectrograph } from "../spectrograph.js";
 import { checkGeometry, readTramlines } from "../tramlines/file.js";
-import type { SlitLayout } from "../tramlines/layout.js";
-import { chooseProfile, type ProfileKind, type TriedProfile } from "../tramlines/profiles.js";
-import { type Tracing, traceFlat } from "../tramlines/trace.js";
+import { type ProfiledTracing, traceFlatFiles } from "../tramlines/flatFiles.js";
+import type { ProfileKind } from "../tramlines/profiles.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { RefusalError } from "./failures.js";
 import type { FrameOptions, TramlineOptions } from "./frameOptions.js";
 import type { Progress } from "./progress.js";
 import { UsageError } from "./usage.js";
+
+export { oneOfEach } from "../oneOfEach.js";
+export type { ProfiledTracing } from "../tramlines/flatFiles.js";
 
 /** All that goes into a job. */
 export interface Bench {
@@ -31,11 +32,6 @@ export interface Bench {
   calibrations: Calibrations;
   /** Every file that is read, for HISTORY. */
   inputs: { name: string; checksum: string }[];
-}
-
-/** A tracing whose tramlines have the profile that was asked for. */
-export interface ProfiledTracing extends Tracing {
-  tried: TriedProfile[];
 }
 
 /** The tramlines of a job; `tracing` when they were traced on the way. */
@@ -99,30 +95,7 @@ export async function traceFlats(
   progress: Progress,
   profile: ProfileKind | "auto" = "auto",
 ): Promise<Traced> {
-  const { calibrations, spectrograph } = bench;
-  const frames: Frame[] = [];
-  const raws: RawImage[] = [];
-  for (const flat of flats) {
-    progress.stage(`reading ${basename(flat)}`);
-    // The first two are asked for the gain later on.
-    const raw = await readRaw(flat, bench, raws.length === 2);
-    frames.push(correctFrame(raw, calibrations, spectrograph, { role: "fibre flat" }));
-    if (raws.length < 2) raws.push(raw);
-  }
-  progress.stage("tracing the flat");
-  const { layout, warning } = slitLayout(spectrograph);
-  const traced = await traceFlat(frames, layout);
-  const detector = flatWarnings(raws, frames, calibrations, spectrograph);
-  progress.stage("measuring the profile");
-  const { tramlines, tried } = await chooseProfile(frames, traced.tramlines, profile);
-  const tracing = { ...traced, tramlines, tried };
-  return {
-    tramlines,
-    tracing,
-    header: frames[0].header,
-    assumptions: [...frames.flatMap((frame) => frame.assumptions), ...traced.assumptions],
-    warnings: [...warning, ...frames.flatMap((frame) => frame.warnings), ...detector, ...traced.warnings],
-  };
+  return traceFlatFiles(flats, bench, { profile, hdu: bench.options.hdu, onStage: (label) => progress.stage(label) });
 }
 
 /** --tramlines or --flat, whichever was given, for `frame`.
@@ -160,33 +133,6 @@ export function frameLines(options: FrameOptions & TramlineOptions): string[] {
   if (flat !== undefined) lines.push(`profile ${options.profile ?? "auto"}`);
   if (options.trustNames === true) lines.push("trust-names");
   return hdu === undefined ? lines : [...lines, `hdu ${hdu}`];
-}
-
-/** One of each, in order. What was said of several frames in the same words is said once, of all of them. */
-export function oneOfEach(sentences: string[]): string[] {
-  const saidOf = new Map<string, string[]>();
-  for (const sentence of sentences) {
-    const end = sentence.indexOf(": ");
-    const [name, text] = end < 0 ? ["", sentence] : [sentence.slice(0, end), sentence.slice(end)];
-    const names = saidOf.get(text) ?? [];
-    if (!names.includes(name)) saidOf.set(text, [...names, name]);
-  }
-  return Array.from(saidOf, ([text, names]) => {
-    const more = names.length > 4 ? [...names.slice(0, 3), `${names.length - 3} more`] : names;
-    return `${more.join(", ")}${text}`;
-  });
-}
-
-function slitLayout(spectrograph: Spectrograph | undefined): { layout?: SlitLayout; warning: string[] } {
-  const slit = spectrograph?.slit;
-  if (slit === undefined) return { warning: [] };
-  const { blocks, pitch, gap, dead, sky } = slit;
-  const missing = blocks === undefined ? "blocks" : pitch === undefined ? "pitch" : undefined;
-  if (missing !== undefined) {
-    const sentence = `${spectrograph!.file}: 'slit.${missing}' is missing, so the fibres are numbered as they are found; add it to have them named.`;
-    return { warning: [sentence] };
-  }
-  return { layout: { blocks: blocks!, pitch: pitch!, gap: gap ?? 0, dead, sky }, warning: [] };
 }
 
 /** @throws RefusalError for an aperture that reaches further than the pixels that are looked at. */

@@ -3,7 +3,9 @@
 import { z } from "zod";
 import { Flag } from "../reference/bits.js";
 import { comparisonKeys, gainKeys } from "./compareJson.js";
+import { planKeys } from "./planJson.js";
 import { rebinKeys } from "./rebinJson.js";
+import { runKeys } from "./runJson.js";
 import { tablesKeys } from "./tablesJson.js";
 
 const number = z.number().nullable();
@@ -20,6 +22,10 @@ const tail = {
 };
 
 const measured = z.strictObject({ value: z.number(), error: number });
+
+const plan = z.strictObject({ ...head("plan"), ...planKeys, ...tail });
+
+const run = z.strictObject({ ...head("run"), ...runKeys, ...tail });
 
 const look = z.strictObject({
   ...head("look"),
@@ -385,7 +391,21 @@ const failure = z.strictObject({
 });
 
 /** By command; `failure` is what any of them prints instead when it fails. */
-export const jsonSchemas = { demo, simulate, look, trace, extract, compare, verify, recover, rebin, tables, failure };
+export const jsonSchemas = {
+  demo,
+  simulate,
+  plan,
+  run,
+  look,
+  trace,
+  extract,
+  compare,
+  verify,
+  recover,
+  rebin,
+  tables,
+  failure,
+};
 
 export type CommandName = Exclude<keyof typeof jsonSchemas, "failure">;
 

@@ -35,8 +35,20 @@ export interface Scan {
 /** Every HDU of the file.
  * @throws FitsError at the first thing that is against the standard and matters. */
 export function scanFits(source: Source): Scan {
-  const hdus: ScannedHdu[] = [];
   const warnings: string[] = [];
+  const hdus = firstHdus(source, warnings, () => false);
+  const last = hdus[hdus.length - 1];
+  const at = last.dataOffset + roundUp(last.dataBytes);
+  if (at > source.size)
+    warnings.push(`${source.name}: the padding after the last HDU is cut short; its data are whole.`);
+  if (at < source.size) warnings.push(`${source.name}: ${source.size - at} bytes after the last HDU are left aside.`);
+  return { hdus, warnings };
+}
+
+/** HDUs up to the one that is enough, or all of them.
+ * @throws FitsError as `scanFits`. */
+export function firstHdus(source: Source, warnings: string[], isEnough: (hdu: ScannedHdu) => boolean): ScannedHdu[] {
+  const hdus: ScannedHdu[] = [];
   if (source.size < BLOCK_BYTES) {
     throw new FitsError("truncated", `${source.size} bytes where a FITS file has at least 2880`, "fetch it again", {
       file: source.name,
@@ -46,12 +58,10 @@ export function scanFits(source: Source): Scan {
   do {
     const hdu = new HduScan(source, hdus.length, at).scan(warnings);
     hdus.push(hdu);
+    if (isEnough(hdu)) return hdus;
     at = hdu.dataOffset + roundUp(hdu.dataBytes);
   } while (startsExtension(source, at));
-  if (at > source.size)
-    warnings.push(`${source.name}: the padding after the last HDU is cut short; its data are whole.`);
-  if (at < source.size) warnings.push(`${source.name}: ${source.size - at} bytes after the last HDU are left aside.`);
-  return { hdus, warnings };
+  return hdus;
 }
 
 function roundUp(nBytes: number): number {

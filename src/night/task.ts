@@ -1,0 +1,39 @@
+/** One step of a night: files in, products out, and all that decides about their bytes. */
+
+/** Plain data. */
+export type Json = null | boolean | number | string | Json[] | { [key: string]: Json };
+
+export interface Task {
+  /** Unique; also the name of its record. */
+  id: string;
+  /** Who makes it: a name in stages.ts. */
+  stage: string;
+  /** What is being done, for people: "extracting sci_01.fits". */
+  label: string;
+  /** Files that are read, absolute paths, by what they are to the stage. */
+  inputs: Record<string, string[]>;
+  /** Tasks whose products are read. */
+  after: string[];
+  /** File names of what it makes. */
+  products: string[];
+  /** All else that changes the products. */
+  options: Json;
+  /** Rough share of the work, for order and for the time that is left. */
+  effort: number;
+}
+
+/** What a maker tells of its products, for summaries: plain data, the same for the same inputs. */
+export type Facts = { [key: string]: Json };
+
+/** A task as it is given to a maker. */
+export interface Job {
+  stage: string;
+  inputs: Record<string, { path: string; digest: string }[]>;
+  /** Products of the tasks before, by file name. */
+  from: Record<string, { path: string; digest: string }>;
+  /** Absolute paths to write to; nothing is there yet. */
+  products: string[];
+  options: Json;
+}
+
+export type Maker = (job: Job) => Promise<Facts>;
