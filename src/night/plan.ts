@@ -4,6 +4,7 @@ import { readFile } from "node:fs/promises";
 import { basename, dirname, resolve } from "node:path";
 import type { PrecisionChoice } from "../extraction/precision.js";
 import type { Method } from "../reference/extract.js";
+import { readSpectrograph, type Spectrograph } from "../spectrograph.js";
 import { tomlComplaint, tomlTree } from "../tomlSentences.js";
 import type { ProfileKind } from "../tramlines/profiles.js";
 import { stemOf } from "./frameNames.js";
@@ -36,7 +37,10 @@ export interface NightPlan {
   /** Absolute paths, all of them. */
   folder: string;
   spectrograph?: string;
+  /** The plan's, else the spectrograph file's. */
   badPixels?: string;
+  /** What the spectrograph file says. */
+  known?: Spectrograph;
   hdu?: number;
   frames: Record<CalibrationRole, string[]>;
   objects: NightObject[];
@@ -47,8 +51,8 @@ export class PlanError extends Error {
   override name = "PlanError";
 }
 
-/** Reads a plan; paths in it are seen from its own folder.
- * @throws PlanError naming file, key, what was found and what was expected. */
+/** Reads a plan, and the spectrograph file that it names; paths in them are seen from their own folders.
+ * @throws PlanError or SpectrographError naming file, key, what was found and what was expected. */
 export async function readPlan(path: string): Promise<NightPlan> {
   let text: string;
   try {
@@ -58,7 +62,18 @@ export async function readPlan(path: string): Promise<NightPlan> {
     const reason = reasons[(error as NodeJS.ErrnoException).code ?? ""] ?? "it cannot be read";
     throw new PlanError(`${path}: ${reason}, but a night plan in TOML was expected; 'hatchel plan' writes one.`);
   }
-  return parsePlan(text, { file: basename(path), folder: dirname(resolve(path)) });
+  const plan = parsePlan(text, { file: basename(path), folder: dirname(resolve(path)) });
+  return plan.spectrograph === undefined ? plan : knowing(plan, await readSpectrograph(plan.spectrograph));
+}
+
+function knowing(plan: NightPlan, known: Spectrograph): NightPlan {
+  const badPixels = plan.badPixels ?? known.detector.badPixels;
+  if (badPixels !== undefined && !existsSync(badPixels)) {
+    throw new PlanError(
+      `${known.file}: 'detector.bad_pixels' names ${badPixels}, but there is no such file; correct the name or leave it out.`,
+    );
+  }
+  return { ...plan, known, ...(badPixels === undefined ? {} : { badPixels }) };
 }
 
 /** The same from the text itself. `folder`: where its relative paths start. */

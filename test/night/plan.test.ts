@@ -96,6 +96,16 @@ describe("refuses, in one sentence,", () => {
     else expect(refusal).toContain(message);
   });
 
+  test("a mask that the spectrograph file names, but that is not there", async () => {
+    writeFileSync(join(folder, "night.toml"), `spectrograph = "s.toml"\n${FLAT}`);
+    writeFileSync(join(folder, "s.toml"), '[detector]\nbad_pixels = "gone.fits"\n');
+    await expect(readPlan(join(folder, "night.toml"))).rejects.toThrow(
+      /^s\.toml: 'detector\.bad_pixels' names .*gone\.fits, but/,
+    );
+    writeFileSync(join(folder, "s.toml"), '[detector]\nbad_pixels = "mask.fits"\n');
+    expect((await readPlan(join(folder, "night.toml"))).badPixels).toBe(join(folder, "mask.fits"));
+  });
+
   test("a plan that is not there", async () => {
     await expect(readPlan(join(folder, "no.toml"))).rejects.toThrow(
       /no\.toml: there is no such file, .*'hatchel plan' writes one/,
