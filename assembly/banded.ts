@@ -68,15 +68,24 @@ export function substituteRow<T extends number>(here: usize, reach: i32, rhsPtr:
 export function substituteBack<T extends number>(bandPtr: usize, n: i32, b: i32, rhsPtr: usize): void {
   const rowBytes = (<usize>(b + 1)) << 4;
   for (let i = n - 1; i >= 0; i--) {
-    const here = bandPtr + <usize>i * rowBytes;
-    const at = rhsPtr + ((<usize>i) << 4);
-    let x = v128.mul<T>(v128.load(at), v128.load(here));
-    for (let j = 1; j <= min(n - 1 - i, b); j++) {
-      const l = v128.load(here + <usize>j * rowBytes + ((<usize>j) << 4));
-      x = v128.sub<T>(x, v128.mul<T>(l, v128.load(at + ((<usize>j) << 4))));
-    }
-    v128.store(at, x);
+    const x = substituteRowBack<T>(
+      bandPtr + <usize>i * rowBytes,
+      min(n - 1 - i, b),
+      rowBytes,
+      rhsPtr + ((<usize>i) << 4),
+    );
+    v128.store(rhsPtr + ((<usize>i) << 4), x);
   }
+}
+
+/** The unknown at `at`, whose row of the band is at `here`, of which `reach` unknowns behind it are solved already. */
+export function substituteRowBack<T extends number>(here: usize, reach: i32, rowBytes: usize, at: usize): v128 {
+  let x = v128.mul<T>(v128.load(at), v128.load(here));
+  for (let j = reach; j >= 1; j--) {
+    const l = v128.load(here + <usize>j * rowBytes + ((<usize>j) << 4));
+    x = v128.sub<T>(x, v128.mul<T>(l, v128.load(at + ((<usize>j) << 4))));
+  }
+  return x;
 }
 
 /** `solveBand` for several right-hand sides at once, `rhsPtr`: n × nSide v128, [unknown][side]. The sides do not wait for each

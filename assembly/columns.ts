@@ -4,7 +4,7 @@ import { MaskBit } from "../src/reference/bits";
 import { count, marginRows, pointer, Word } from "./job";
 import { laneCount, lanesWithout, loadBits, loadPixels, loadSpread, spread } from "./lanes";
 import { legendreValue } from "./legendre";
-import { knowsResponse } from "./variance";
+import { knowsResponse, pixelVariance } from "./variance";
 
 const outside: u32 = 0x01010101 * MaskBit.missing;
 
@@ -31,10 +31,7 @@ export function prepareRowPolynomials<T extends number>(job: usize): void {
 /** Lane rows beyond the frame: never good, the same for every group. Once a job. */
 export function prepareMargins<T extends number>(job: usize): void {
   const margin = marginRows(job);
-  for (let row: i32 = 0; row < margin; row++) {
-    clearRow<T>(job, row);
-    clearRow<T>(job, margin + count(job, Word.ny) + row);
-  }
+  for (let i: i32 = 0; i < 2 * margin; i++) clearRow<T>(job, i < margin ? i : i + count(job, Word.ny));
 }
 
 function clearRow<T extends number>(job: usize, row: i32): void {
@@ -45,6 +42,8 @@ function clearRow<T extends number>(job: usize, row: i32): void {
   v128.store(pointer(job, Word.fixed) + at, spread<T>(1));
   v128.store(pointer(job, Word.inverseResponseRows) + at, spread<T>(0));
   v128.store(pointer(job, Word.responseVarianceRows) + at, spread<T>(0));
+  v128.store(pointer(job, Word.inverseVariance) + at, spread<T>(0));
+  v128.store(pointer(job, Word.net) + at, spread<T>(0));
 }
 
 /** Columns that are copied together out of the frame, and spectra into it: in the frame they lie rows apart, a page of memory
@@ -89,8 +88,8 @@ export function loadTile(job: usize, x: i32): void {
   }
 }
 
-/** Lane rows row0 … row1 − 1 of the `nValid` columns from `x` on: bits, light without background, and what makes the
- * variance. `tile`: first column of the tile that holds them, or −1 when the frame itself is to be read. */
+/** Lane rows row0 … row1 − 1 of the `nValid` columns from `x` on: bits, light without background, what makes the variance, and
+ * for a first fit inverse variances from the data's own light, 0 where a pixel is not good. `tile`: first column of the tile that holds them, or −1 when the frame itself is to be read. */
 export function loadGroup<T extends number>(job: usize, x: i32, nValid: i32, row0: i32, row1: i32, tile: i32): void {
   const margin = marginRows(job);
   const nx = <usize>count(job, Word.nx);
@@ -109,9 +108,15 @@ export function loadGroup<T extends number>(job: usize, x: i32, nValid: i32, row
   const fixedRows = pointer(job, Word.fixed);
   const backgroundRows = pointer(job, Word.backgroundRows);
   const series = pointer(job, Word.backgroundSeries);
+  const bandOfRow = pointer(job, Word.bandOfRow);
+  const image = pointer(job, Word.fixedVarianceImage) != 0;
+  const ivarRows = pointer(job, Word.inverseVariance);
+  const netRows = pointer(job, Word.net);
+  const one = spread<T>(1);
   prepareBackgroundSeries<T>(job, x);
-  const each = pointer(job, Word.fixedRows) != 0;
-  if (!each) v128.store(fixedRows, fixedVariance<T>(job, x, 0, <usize>x, nValid));
+  const each = pointer(job, Word.fixedRows);
+  let band: i32 = -1;
+  let fixed = one;
   let polynomials = pointer(job, Word.rowPolynomials) + <usize>(nY * (from - margin)) * sizeof<T>();
   let at = <usize>(from - margin) * stride + <usize>(tiled ? x - tile : x);
   let pixel = <usize>(from - margin) * nx + <usize>x;
@@ -127,10 +132,18 @@ export function loadGroup<T extends number>(job: usize, x: i32, nValid: i32, row
     }
     polynomials += <usize>nY * sizeof<T>();
     v128.store(backgroundRows + laneRow, background);
-    const light = v128.sub<T>(loadPixels<T>(electrons + (at << 2), nValid), background);
-    v128.store(lightRows + laneRow, bits ? v128.and(light, lanesWithout<T>(bits)) : light);
-    if (each) v128.store(fixedRows + laneRow, fixedVariance<T>(job, x, row - margin, pixel, nValid));
+    let light = v128.sub<T>(loadPixels<T>(electrons + (at << 2), nValid), background);
+    if (bits) light = v128.and(light, lanesWithout<T>(bits));
+    v128.store(lightRows + laneRow, light);
+    v128.store(netRows + laneRow, light);
+    const own = <i32>load<u8>(bandOfRow + <usize>(row - margin));
+    if (image || own != band) fixed = fixedVariance<T>(job, x, own, pixel, nValid);
+    band = own;
+    v128.store(fixedRows + (laneRow & each), fixed);
     if (responds) loadResponse<T>(job, laneRow, pixel, nValid);
+    const all = v128.add<T>(light, background);
+    const inverse = v128.div<T>(one, pixelVariance<T>(job, fixed, laneRow, all, responds));
+    v128.store(ivarRows + laneRow, bits ? v128.and(inverse, lanesWithout<T>(bits)) : inverse);
     at += stride;
     pixel += nx;
   }
@@ -144,10 +157,9 @@ function loadResponse<T extends number>(job: usize, laneRow: usize, pixel: usize
 }
 
 /** Lanes past the frame's last column get 1, so that nothing divides by 0 there. */
-function fixedVariance<T extends number>(job: usize, x: i32, y: i32, pixel: usize, nValid: i32): v128 {
+function fixedVariance<T extends number>(job: usize, x: i32, band: i32, pixel: usize, nValid: i32): v128 {
   const image = pointer(job, Word.fixedVarianceImage);
-  const band = <usize>load<u8>(pointer(job, Word.bandOfRow) + <usize>y) * <usize>count(job, Word.nx) + <usize>x;
-  const table = pointer(job, Word.fixedVariance) + (band << 2);
+  const table = pointer(job, Word.fixedVariance) + ((<usize>band * <usize>count(job, Word.nx) + <usize>x) << 2);
   const fixed = loadPixels<T>(image ? image + (pixel << 2) : table, nValid);
   return nValid == laneCount<T>() ? fixed : v128.bitselect(fixed, spread<T>(1), v128.gt<T>(fixed, spread<T>(0)));
 }

@@ -50,6 +50,7 @@ function confrontRows<T extends number>(
   const background = pointer(job, Word.backgroundRows);
   const fixed = pointer(job, Word.fixed);
   const fixedRows = pointer(job, Word.fixedRows);
+  const winged = count(job, Word.wing) != 0;
   const wings = pointer(job, Word.wingLight);
   const model = pointer(job, Word.model);
   const net = pointer(job, Word.net);
@@ -66,8 +67,8 @@ function confrontRows<T extends number>(
   for (let row = from; row < to; row++) {
     const at = (<usize>row) << 4;
     const data = v128.load(light + at);
-    const wingLight = v128.load(wings + at);
-    const total = v128.add<T>(v128.load(model + at), wingLight);
+    let total = v128.load(model + at);
+    if (winged) total = v128.add<T>(total, v128.load(wings + at));
     const left = v128.sub<T>(data, total);
     const masked = load<u32>(bits + (at >> 2));
     const all = v128.add<T>(total, v128.load(background + at));
@@ -88,7 +89,10 @@ function confrontRows<T extends number>(
       let inverse = v128.div<T>(one, variance);
       if (masked) inverse = v128.and(inverse, lanesWithout<T>(masked));
       v128.store(ivar + at, chosen(inverse, ivar + at, mask, others));
-      v128.store(net + at, chosen(v128.sub<T>(data, wingLight), net + at, mask, others));
+      if (winged) {
+        const fresh = v128.sub<T>(data, v128.load(wings + at));
+        v128.store(net + at, chosen(fresh, net + at, mask, others));
+      }
     } else {
       const square = v128.mul<T>(v128.mul<T>(left, left), v128.load(ivar + at));
       v128.store(chiSquare + at, chosen(square, chiSquare + at, mask, others));

@@ -10,12 +10,11 @@ import { loadGroup, loadTile, prepareMargins, prepareRowPolynomials, tileColumns
 import { confront, reachOn } from "./cosmic";
 import { groupFlags } from "./flags";
 import { count, laneRows, marginRows, pointer, Word } from "./job";
-import { finishSolution, normalEquations } from "./joint";
+import { normalEquations } from "./joint";
 import { laneCount } from "./lanes";
 import { blockProfiles, interpolateProfiles, interpolateWings, prepareNodeShares } from "./profile";
-import { estimate, lightAfresh, moveWings, settleChunk, takeSolution } from "./rounds";
+import { estimate, finishSolution, moveWings, settleChunk } from "./rounds";
 import { storeFit, storeGroup, storeRejected, storeTile } from "./spectra";
-import { weighByData } from "./variance";
 
 /** Tables that all columns share: once a job and thread, before the first tile. */
 export function prepareExtraction32(job: usize): void {
@@ -70,18 +69,17 @@ function extractGroup<T extends number>(job: usize, x: i32, nValid: i32, tile: i
   const nRow = laneRows(job);
   const margin = marginRows(job);
   const top = nRow - margin;
+  const winged = count(job, Word.wing) != 0;
   const everyLane = i32x4.splat(-1);
   loadGroup<T>(job, x, nValid, 0, nRow, tile);
-  weighByData<T>(job, 0, nRow);
   normalEquations<T>(job, 0, nFibre, 0, true);
   clearCalls(job);
   memory.fill(pointer(job, Word.fluxes), 0, (<usize>nFibre) << 4);
   for (let round: i32 = 0; ; round++) {
-    finishSolution<T>(job);
-    takeSolution<T>(job, 0, nFibre, everyLane, round == minRounds);
     // In the last round most wings would change by a hundredth of a hundredth; but not where a hit has just gone.
-    if (round == minRounds && round > 0) moveWings<T>(job);
-    lightAfresh<T>(job, round < minRounds || minRounds == 0);
+    const someWings = round == minRounds && round > 0;
+    finishSolution<T>(job, round == minRounds, winged && !someWings);
+    if (winged && someWings) moveWings<T>(job);
     if (round == minRounds) break;
     confront<T>(job, margin, top, everyLane, rejecting, rejecting, true);
     clearCalls(job);
@@ -89,7 +87,9 @@ function extractGroup<T extends number>(job: usize, x: i32, nValid: i32, tile: i
   }
   const maxRounds = count(job, Word.maxRounds);
   confront<T>(job, margin, top, everyLane, rejecting, rejecting && minRounds < maxRounds, false);
+  let factored = true;
   for (let round = minRounds; round < maxRounds && takeCalls(job); round++) {
+    factored = false;
     const more = rejecting && round + 1 < maxRounds;
     for (let chunk: i32 = 0; chunk < chunkCount(job); chunk++) {
       const lanes = v128.load(pointer(job, Word.activeChunks) + ((<usize>chunk) << 4));
@@ -104,7 +104,7 @@ function extractGroup<T extends number>(job: usize, x: i32, nValid: i32, tile: i
       v128.store(pointer(job, Word.reach) + ((<usize>row) << 4), reachOn<T>(job, row));
     }
   }
-  estimate<T>(job, 0, nFibre);
+  estimate<T>(job, 0, nFibre, factored);
   const raised = groupFlags<T>(job, x, 0, nFibre);
   storeGroup<T>(job, x, nValid, 0, nFibre, lanes, raised, tile);
 }

@@ -18,9 +18,15 @@ export function groupFlags<T extends number>(job: usize, x: i32, k0: i32, k1: i3
   for (let k = k0; k < k1; k++) {
     const masked = anyBitsInWindow(bits + (windowOffset(job, k) >> 2), nWindow);
     const quiet = !masked && isQuiet<T>(job, k, x);
-    raised = raised || !quiet;
+    if (quiet) {
+      const at = flags + ((<usize>(k * nLane)) << 2);
+      if (sizeof<T>() == 4) v128.store(at, spread<T>(0));
+      else store<i64>(at, 0);
+      continue;
+    }
+    raised = true;
     for (let lane: i32 = 0; lane < nLane; lane++) {
-      let own: i32 = quiet ? 0 : fibreFlags<T>(job, k, x, lane);
+      let own = fibreFlags<T>(job, k, x, lane);
       if (masked) own |= pixelFlags<T>(job, k, lane);
       if (own & Flag.weightLost) own &= ~Flag.varianceUnsettled; // of a flux that is none
       store<i32>(flags + ((<usize>(k * nLane + lane)) << 2), own);

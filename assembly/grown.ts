@@ -139,7 +139,7 @@ function settleGrown<T extends number>(job: usize, x: i32, offset: i32, nValid: 
   const s1 = min((chunk + 1) * chunkFibres + (reach >> 1), nFibre);
   const stored = lanesSet<T>(lanes) & ((1 << nValid) - 1);
   storeFit<T>(job, x, nValid, s0, s1, stored, -1);
-  estimate<T>(job, k0, k1);
+  estimate<T>(job, k0, k1, false);
   groupFlags<T>(job, x, k0, k1);
   storeGroup<T>(job, x, nValid, s0, s1, stored, true, -1);
 }

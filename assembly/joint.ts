@@ -1,6 +1,6 @@
 /** Normal equations AᵀN⁻¹A f = AᵀN⁻¹d of a group of columns, their solution and covariance, in lanes, for all fibres or for
  * a stretch of them whose neighbours stand still. src/reference/joint.ts is the same for one column. */
-import { factorBand, factorRow, inverseBand, solveBand, substituteBack, substituteRow } from "./banded";
+import { factorBand, factorRow, inverseBand, solveBand, substituteRow } from "./banded";
 import { count, pointer, Word, windowOffset, windowRows, windowStartOf, windowWeights } from "./job";
 import { anyBitsInWindow, lanesWithout, spread } from "./lanes";
 
@@ -102,12 +102,6 @@ export function overlap<T extends number>(job: usize, k: i32, m: i32, ofK: usize
   return sum;
 }
 
-/** Fluxes of all fibres from the factors that `normalEquations` left: Word.solution. */
-export function finishSolution<T extends number>(job: usize): void {
-  const nFibre = count(job, Word.nFibre);
-  substituteBack<T>(pointer(job, Word.band), nFibre, count(job, Word.bandwidth), pointer(job, Word.solution));
-}
-
 /** Fluxes of fibres k0 … k1 − 1 from their normal equations: Word.solution. What is below k0 or from k1 on keeps its flux. */
 export function solveNormal<T extends number>(job: usize, k0: i32, k1: i32): void {
   const bandwidth = count(job, Word.bandwidth);
@@ -140,15 +134,17 @@ function takeOff<T extends number>(rhs: usize, k: i32, couplingPtr: usize, fluxe
   v128.store(at, v128.sub<T>(v128.load(at), light));
 }
 
-/** Variances and neighbours' covariances of fibres k0 … k1 − 1 from Word.normal. */
-export function jointCovariance<T extends number>(job: usize, k0: i32, k1: i32): void {
+/** Variances and neighbours' covariances of fibres k0 … k1 − 1 from Word.normal, or from its factors where Word.band has them. */
+export function jointCovariance<T extends number>(job: usize, k0: i32, k1: i32, factored: bool): void {
   const n = k1 - k0;
   const bandwidth = count(job, Word.bandwidth);
   const rowBytes = (<usize>(bandwidth + 1)) << 4;
   const offset = <usize>k0 * rowBytes;
   const band = pointer(job, Word.band) + offset;
-  memory.copy(band, pointer(job, Word.normal) + offset, <usize>n * rowBytes);
-  factorBand<T>(band, n, bandwidth);
+  if (!factored) {
+    memory.copy(band, pointer(job, Word.normal) + offset, <usize>n * rowBytes);
+    factorBand<T>(band, n, bandwidth);
+  }
   const inverse = pointer(job, Word.inverse) + offset;
   inverseBand<T>(band, n, bandwidth, inverse);
   const variances = pointer(job, Word.variances);

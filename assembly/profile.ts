@@ -1,6 +1,7 @@
 /** The profile on pixels: integrated over each pixel exactly, evaluated at a few nodes of a block of columns,
  * interpolated between them by a polynomial in the lanes. src/reference/profile.ts says why and how well. */
 import { erf } from "./erf";
+import { erfInCells, prepareErfCells } from "./erfCells";
 import { count, pointer, Word, windowOffset, windowRows } from "./job";
 import { loadSpread, spread } from "./lanes";
 import { legendreValue } from "./legendre";
@@ -8,20 +9,35 @@ import { shapeAtColumn, shapePoints, shapeValues, shapeWeights } from "./shape";
 
 const rootHalf: f64 = 0.7071067811865476;
 
-/** Light of a Gaussian of unit integral on pixels `first` … `first + n − 1`; centre and σ in pixels. `outPtr`: n of T. */
-export function gaussianWeights<T extends number>(centre: f64, sigma: f64, first: i32, n: i32, outPtr: usize): void {
+/** Light of a Gaussian of unit integral on pixels `first` … `first + n − 1`; centre and σ in pixels. `outPtr`: n f64. For the
+ * door: to the last digit, whatever it costs. */
+export function gaussianWeights64(centre: f64, sigma: f64, first: i32, n: i32, outPtr: usize): void {
   const scale = rootHalf / sigma;
-  let below = erf((<f64>first - 0.5 - centre) * scale);
-  for (let i: i32 = 0; i < n; i++) {
-    const above = erf((<f64>(first + i) + 0.5 - centre) * scale);
-    store<T>(outPtr + <usize>i * sizeof<T>(), <T>(0.5 * (above - below)));
-    below = above;
+  let below: f64 = 0.0;
+  for (let edge: i32 = 0; edge <= n; edge++) {
+    const here = erf((<f64>(first + edge) - 0.5 - centre) * scale);
+    if (edge > 0) store<f64>(outPtr + ((<usize>(edge - 1)) << 3), 0.5 * (here - below));
+    below = here;
   }
 }
 
-/** For the door and its tests: the same in f64. */
-export function gaussianWeights64(centre: f64, sigma: f64, first: i32, n: i32, outPtr: usize): void {
-  gaussianWeights<f64>(centre, sigma, first, n, outPtr);
+/** The same for a node, to what T holds of it. `outPtr`: n of T. */
+function gaussianAtNode<T extends number>(
+  table: usize,
+  centre: f64,
+  sigma: f64,
+  first: i32,
+  n: i32,
+  outPtr: usize,
+): void {
+  const scale = rootHalf / sigma;
+  const from = <f64>first - 0.5 - centre;
+  let below: f64 = 0.0;
+  for (let edge: i32 = 0; edge <= n; edge++) {
+    const here = erfInCells<T>(table, (from + <f64>edge) * scale);
+    if (edge > 0) store<T>(outPtr + <usize>(edge - 1) * sizeof<T>(), <T>(0.5 * (here - below)));
+    below = here;
+  }
 }
 
 /** Nodes of a block. */
@@ -46,8 +62,10 @@ function nodePlace(blockColumns: i32, node: i32): f64 {
   return 2 * node < n ? -place : place;
 }
 
-/** Lagrange's polynomial through the nodes, for every column of a block: Word.nodeShares, node by node. */
+/** Lagrange's polynomial through the nodes, for every column of a block: Word.nodeShares, node by node; and
+ * for Gaussians the cells of erf. */
 export function prepareNodeShares<T extends number>(job: usize): void {
+  if (pointer(job, Word.shape) == 0) prepareErfCells(pointer(job, Word.shapeTable));
   const blockColumns = count(job, Word.blockColumns);
   let at = pointer(job, Word.nodeShares);
   for (let own: i32 = 0; own < nodeCount(blockColumns); own++) {
@@ -133,7 +151,7 @@ function nodeProfile<T extends number>(job: usize, k: i32, node: i32, nNode: i32
 function rowWeights<T extends number>(job: usize, t: f64, y: f64, width: f64, first: i32, n: i32, outPtr: usize): void {
   const shape = pointer(job, Word.shape);
   if (shape == 0) {
-    gaussianWeights<T>(y, width, first, n, outPtr);
+    gaussianAtNode<T>(pointer(job, Word.shapeTable), y, width, first, n, outPtr);
     return;
   }
   const ny = count(job, Word.ny);

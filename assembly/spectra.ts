@@ -82,16 +82,14 @@ export function storeGroup<T extends number>(
       const valid = isValid(own);
       const paired = valid && isNextRow(job, k) && isValid(flagsOf<T>(job, k + 1, lane));
       const column = x + lane;
-      storeNumber<T>(spectrumAt<T>(job, 0, k, column, tile), pointer(job, Word.fluxes) + at, lane, valid);
-      storeNumber<T>(spectrumAt<T>(job, 1, k, column, tile), pointer(job, Word.variances) + at, lane, valid);
-      storeNumber<T>(
-        spectrumAt<T>(job, 2, k, column, tile),
-        pointer(job, Word.covariancesBelow) + at + 16,
-        lane,
-        paired,
-      );
-      storeNumber<T>(spectrumAt<T>(job, 3, k, column, tile), weighted, lane, valid);
-      storeNumber<T>(spectrumAt<T>(job, 4, k, column, tile), weighted + 16, lane, true);
+      for (let which: i32 = 0; which < 5; which++) {
+        let from = which == 3 ? weighted : weighted + 16;
+        if (which == 0) from = fluxes + at;
+        else if (which == 1) from = variances + at;
+        else if (which == 2) from = covariances + at + 16;
+        const known = which == 4 || (which == 2 ? paired : valid);
+        store<T>(spectrumAt<T>(job, which, k, column, tile), known ? laneAt<T>(from, lane) : <T>NaN);
+      }
       store<i32>(flagsAt(job, k, column, tile), own);
     }
   }
@@ -177,10 +175,6 @@ export function storeRejected(job: usize, x: i32, nValid: i32): void {
       store<u8>(at + <usize>lane, load<u8>(at + <usize>lane) | <u8>(bits >> (lane << 3)));
     }
   }
-}
-
-function storeNumber<T extends number>(to: usize, from: usize, lane: i32, valid: bool): void {
-  store<T>(to, valid ? laneAt<T>(from, lane) : <T>NaN);
 }
 
 function flagsOf<T extends number>(job: usize, k: i32, lane: i32): i32 {

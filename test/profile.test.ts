@@ -1,5 +1,6 @@
 import fc from "fast-check";
 import { describe, expect, it } from "vitest";
+import { ExtractionBench } from "../src/kernels/extraction.js";
 import { loadKernels } from "../src/kernels/module.js";
 import { gaussianWeights as kernelWeights } from "../src/kernels/profile.js";
 import { legendreArgument, legendreValue } from "../src/reference/legendre.js";
@@ -97,6 +98,26 @@ describe("profiles in kernel and reference", () => {
     for (let i = 0; i < expected.flux.length; i++) {
       const scale = Math.abs(expected.flux[i]) + Math.sqrt(expected.variance[i]);
       expect(Math.abs(found.flux[i] - expected.flux[i]) / scale).toBeLessThan(1e-11);
+    }
+  });
+
+  it.each([
+    ["f64", 2 ** -53],
+    ["f32", 2e-8],
+  ] as const)("are at the nodes of %s what its rounding and erf's cells leave of them", (precision, fromCells) => {
+    const { input } = makeScene({ nx: 53, ny: 123, bow: 2.9, pitch: 6.1 });
+    const rows = Int32Array.from({ length: input.nFibre }, (_, k) => k);
+    const wide = { ...input, halfWindow: 14, bandwidth: 6, blockColumns: 16 as const };
+    for (const shrunk of [0.3, 1, 2.7]) {
+      const problem = { ...wide, width: input.width.map((coefficient) => shrunk * coefficient) };
+      const found = new ExtractionBench(kernels, problem, rows, input.nFibre, precision).nodeWeights(16);
+      // In f64 that of positions below 16 px, 2⁻⁵⁰ at a time, four times over; they count as the profile's slope, up to 1.
+      const rounding = precision === "f64" ? 4 * 2 ** -50 : 2 ** -25;
+      const wanted = blockProfiles(problem, 16).weights;
+      wanted.forEach((weight, i) => {
+        expect(Math.abs(found[i] - weight)).toBeLessThan(rounding + fromCells);
+      });
+      expect(Math.max(...wanted)).toBeGreaterThan(0.1);
     }
   });
 

@@ -62,7 +62,7 @@ export enum Word {
   tileBits, // u8, ny × 16
   tileSpectra, // T, 6 × nFibre × 16
   tileFlags, // i32, nFibre × 16
-  shapeTable, // f64, 8 a point
+  shapeTable, // f64, 8 a point; for Gaussians 8 a cell of erf
   needed, // u8, nFibre: whose profiles are wanted
   nodeCentre, // T, nFibre × nNode
   nodeWeights, // T, nFibre × nNode × nWindow

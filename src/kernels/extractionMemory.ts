@@ -38,6 +38,9 @@ export function sharedPlan(input: ExtractionInput, nSlit: number): Plan {
   ];
 }
 
+/** Cells of assembly/erfCells.ts. */
+const nErfCell = 192;
+
 /** What each thread has for itself. */
 export function scratchPlan(input: ExtractionInput, nLane: number): Plan {
   const { ny, nFibre, bandwidth, background, wing } = input;
@@ -84,7 +87,7 @@ export function scratchPlan(input: ExtractionInput, nLane: number): Plan {
     [Word.tileBits, "uint8", 16 * ny],
     [Word.tileSpectra, "lanes", 6 * 16 * nFibre],
     [Word.tileFlags, "int32", 16 * nFibre],
-    [Word.shapeTable, "float64", 8 * (input.shape?.n ?? 0)],
+    [Word.shapeTable, "float64", 8 * (input.shape?.n ?? nErfCell)],
     [Word.needed, "uint8", nFibre],
     [Word.nodeCentre, "lanes", nNode * nFibre],
     [Word.nodeWeights, "lanes", nNode * nFibre * nWindow],
