@@ -1,5 +1,7 @@
 /** The public library. */
 
+export { type Calibrated, calibrateSpectra, type SpectraCalibration } from "./calibration/calibrate.js";
+export { calibratedHdus, calibrationCards } from "./calibration/calibratedHdus.js";
 export { CalibrationError } from "./calibration/errors.js";
 export { type GridRequest, gridWavelength, type Medium, makeGrid, type SpectralGrid } from "./calibration/grid.js";
 export { crowdedLines, joinLines, type LineList, lampLines } from "./calibration/lamps.js";
@@ -7,8 +9,12 @@ export { parseLineFile, readLineFile } from "./calibration/lineFile.js";
 export { type RebinnedSpectra, type RebinOptions, rebinSpectra } from "./calibration/rebin.js";
 export { rebinnedHdus } from "./calibration/rebinFile.js";
 export { airToVacuum, vacuumToAir } from "./calibration/refraction.js";
+export type { Sky } from "./calibration/sky.js";
+export type { FibreCheck } from "./calibration/skyCheck.js";
 export { SKY_LINES, type SkyLine, zeroPointLines } from "./calibration/skyLines.js";
 export { type PixelWavelengths, readProduct, type SpectraProduct } from "./calibration/spectraProduct.js";
+export { measureThroughput, type Throughput } from "./calibration/throughput.js";
+export { readThroughput, throughputHdus, writeThroughput } from "./calibration/throughputFile.js";
 export {
   type CalibrationFrames,
   type CalibrationInput,

@@ -29,6 +29,8 @@ export interface SpectraFileOptions {
   sky?: number[] | undefined;
   /** HDUs that follow the spectra (extraHdus.ts). */
   extra?: OutputHdu[] | undefined;
+  /** Of calibrated spectra: cards for the primary header, and each fibre's throughput [nFibre]. */
+  calibration?: { cards: Card[]; throughput: ArrayLike<number> | null } | undefined;
 }
 
 /** All HDUs of the product, for `writeFits` or `encodeFits`. */
@@ -42,7 +44,7 @@ export function spectraHdus(
   return [
     { kind: "primary", header: primaryCards(extraction, frame, tramlines, options) },
     ...spectrumImages(spectra),
-    { kind: "table", name: "POSITIONS", columns: positionColumns(extraction, tramlines, options.sky ?? []) },
+    { kind: "table", name: "POSITIONS", columns: positionColumns(extraction, tramlines, options) },
     ...(options.extra ?? []),
   ];
 }
@@ -148,13 +150,19 @@ function primaryCards(extraction: Extraction, frame: Frame, tramlines: Tramlines
       { keyword: "SHIFTY", value: alongY, comment: "[pixel] more at the last row" },
     );
   }
+  own.push(...(options.calibration?.cards ?? []));
   const taken = new Set(own.map((card) => card.keyword));
   const carried = inputCards(frame.header).filter((card) => !taken.has(card.keyword));
   return [...carried, ...own, ...historyCards(options.version, options.options, options.inputs)];
 }
 
-function positionColumns({ spectra, shift }: Extraction, tramlines: Tramlines, sky: number[]): OutputColumn[] {
-  const isSky = new Set(sky);
+function positionColumns(
+  { spectra, shift }: Extraction,
+  tramlines: Tramlines,
+  { sky, calibration }: SpectraFileOptions,
+): OutputColumn[] {
+  const isSky = new Set(sky ?? []);
+  const throughput = calibration?.throughput ?? new Float64Array(spectra.nFibre).fill(Number.NaN);
   const role = Array.from(tramlines.fibre, (fibre, k) =>
     tramlines.state[k] === "dead" ? "spare" : isSky.has(fibre) ? "sky" : "target",
   );
@@ -163,7 +171,7 @@ function positionColumns({ spectra, shift }: Extraction, tramlines: Tramlines, s
     { name: "STATE", format: "8A", data: tramlines.state },
     { name: "BLOCK", format: "1J", data: tramlines.block },
     { name: "ROLE", format: "8A", data: role },
-    { name: "THROUGHPUT", format: "1D", data: new Float64Array(spectra.nFibre).fill(Number.NaN) },
+    { name: "THROUGHPUT", format: "1D", data: throughput },
     { name: "MEDIAN_SNR", format: "1D", data: medianSignalToNoise(spectra) },
     { name: "SHIFT", format: "1D", unit: "pixel", data: shiftsApplied(shift, tramlines) },
   ];
