@@ -61,6 +61,24 @@ describe("a team of threads", () => {
     }
   });
 
+  it("touches pages ahead without a change to them, and comes to work afterwards", async () => {
+    for (const kernels of teams) {
+      const bench = kernels.workbench(2 ** 22);
+      const bytes = bench.uint8(2 ** 21 + 7);
+      const expected = Uint8Array.from(bytes, (_, i) => (i * 7919) >> 3);
+      bytes.set(expected);
+      for (let turn = 0; turn < 20; turn++) bench.touchAhead(bytes.byteOffset, bytes.length);
+      // Those who write meanwhile are not disturbed.
+      for (let turn = 1; turn <= 20; turn++) for (let i = 0; i < bytes.length; i += 4096) bytes[i] = expected[i] ^ turn;
+      await new Promise((done) => setTimeout(done, 200));
+      for (let i = 0; i < bytes.length; i += 4096) expected[i] ^= 20;
+      expect(Buffer.compare(bytes, expected)).toBe(0);
+    }
+    const input = roughInput("joint");
+    const [alone, ...shared] = teams.map((kernels) => extracted(openBench(kernels, input, "f32"), input));
+    for (const bytes of shared) expect(bytes.equals(alone)).toBe(true);
+  });
+
   it("may have more threads than there are tiles", () => {
     const { input } = makeScene({ nx: 20 });
     const [alone, , three] = teams.map((kernels) => {

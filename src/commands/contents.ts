@@ -8,6 +8,8 @@ export interface Entry {
   /** What it takes, as the list of commands shows it. */
   takes: string;
   summary: string;
+  /** Whether it has the kernels work on frames as soon as its options are sound. */
+  works?: boolean;
   /** Puts description, arguments, options and action to the command. */
   define: (command: Command) => Promise<void>;
 }
@@ -45,30 +47,35 @@ export const contents: Entry[] = [
   },
   {
     name: "trace",
+    works: true,
     takes: "<FLAT...>",
     summary: "find, name and trace the fibres of a flat",
     define: async (command) => (await import("./trace.js")).addTrace(command),
   },
   {
     name: "extract",
+    works: true,
     takes: "<FRAME>",
     summary: "one spectrum per fibre from a frame",
     define: async (command) => (await import("./extract.js")).addExtract(command),
   },
   {
     name: "compare",
+    works: true,
     takes: "<FRAME>",
     summary: "the methods side by side on a frame",
     define: async (command) => (await import("./compare.js")).addCompare(command),
   },
   {
     name: "verify",
+    works: true,
     takes: "<FRAME>",
     summary: "check the kernels against their reference on a frame",
     define: async (command) => (await import("./verify.js")).addVerify(command),
   },
   {
     name: "recover",
+    works: true,
     takes: "<FRAME>",
     summary: "can the extraction of a frame be trusted",
     define: async (command) => (await import("./recover.js")).addRecover(command),

@@ -3,6 +3,8 @@ import type { Command } from "commander";
 import type { Frame } from "../detector/frame.js";
 import { type Extraction, extractFrame } from "../extraction/extract.js";
 import { writeSpectra } from "../extraction/file.js";
+import { medianSignalToNoise } from "../extraction/snr.js";
+import { imageBytes } from "../kernels/extractionMemory.js";
 import { countFibres, type SpectraSummary, summariseSpectra } from "../report/summary.js";
 import type { Shift } from "../tramlines/shift.js";
 import {
@@ -33,6 +35,7 @@ import {
 } from "./frameOptions.js";
 import {
   frameLines,
+  givenTramlines,
   inputPaths,
   oneOfEach,
   openBench,
@@ -74,8 +77,9 @@ async function extract(path: string, options: ExtractOptions, progress: Progress
   const paths = inputPaths([path, ...extraPaths(options)], options);
   checkOutput(output, { force, inputs: paths });
   const bench = await openBench(paths, options, progress);
-  const frame = await readFrame(path, "science", bench);
-  const traced = await tramlinesFor(frame, options, bench, progress);
+  const given = await givenTramlines(options);
+  const frame = await readFrame(path, "science", bench, given && imageBytes(given.nx, given.ny, given.nFibre));
+  const traced = await tramlinesFor(frame, options, bench, progress, given);
   requireAperture(options.halfAperture, traced);
   const pair = await pairHits(frame, traced.tramlines, options, bench, progress);
   progress.stage(`extracting ${frame.name}`);
@@ -85,7 +89,9 @@ async function extract(path: string, options: ExtractOptions, progress: Progress
     onProgress: progress.share,
   });
   const extras = await measureExtras(frame, traced.tramlines, extraction, options, bench, progress);
+  const signalToNoise = medianSignalToNoise(extraction.spectra);
   const history = {
+    signalToNoise,
     ...{ version, inputs: bench.inputs, sky: bench.spectrograph?.slit?.sky, extra: extras.hdus },
     options: [
       ...methodLines({ ...options, precision: extraction.precision }),
@@ -96,7 +102,7 @@ async function extract(path: string, options: ExtractOptions, progress: Progress
   await uninterrupted(() =>
     writeSpectra(output, extraction, frame, traced.tramlines, history, { force: force === true, inputs: paths }),
   );
-  const summary = summariseSpectra(extraction.spectra, traced.tramlines);
+  const summary = summariseSpectra(extraction.spectra, traced.tramlines, signalToNoise);
   const { assumptions, warnings } = notes(frame, traced, extraction, summary);
   const said = [...facts(traced, extraction, summary, options), ...extrasFacts(pair, extras)];
   return {

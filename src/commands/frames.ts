@@ -75,9 +75,19 @@ export async function openBench(paths: string[], options: FrameOptions, progress
   return { options, spectrograph, calibrations, inputs };
 }
 
-/** One raw frame, corrected, and counted among the bench's inputs. "-" is standard input. */
-export async function readFrame(path: string, role: Role, bench: Bench): Promise<Frame> {
-  return correctFrame(await readRaw(path, bench, true), bench.calibrations, bench.spectrograph, { role });
+/** One raw frame, corrected, and counted among the bench's inputs. "-" is standard input. `workBytes`: what those who work on it
+ * will write into its memory. */
+export async function readFrame(path: string, role: Role, bench: Bench, workBytes = 0): Promise<Frame> {
+  const raw = await readRaw(path, bench, true);
+  touchBehind(raw, workBytes);
+  return correctFrame(raw, bench.calibrations, bench.spectrograph, { role });
+}
+
+/** Other threads touch the memory behind `raw` as far as work on its frame, which takes the place of `raw`, will reach. */
+function touchBehind({ data, memory, room }: RawImage, workBytes: number): void {
+  if (memory === undefined || room === undefined) return;
+  const end = data.byteOffset + data.byteLength;
+  memory.touchAhead(end, room.byteOffset + room.length + workBytes - end);
 }
 
 /** @param forFrame the frame that is made of it, and what works on that, may take its place in memory. */
@@ -98,19 +108,26 @@ export async function traceFlats(
   return traceFlatFiles(flats, bench, { profile, hdu: bench.options.hdu, onStage: (label) => progress.stage(label) });
 }
 
-/** --tramlines or --flat, whichever was given, for `frame`.
+/** What --tramlines names; undefined when it is not given. */
+export async function givenTramlines({ tramlines: file }: TramlineOptions): Promise<Tramlines | undefined> {
+  return file === undefined ? undefined : readTramlines(readOnce(file), file);
+}
+
+/** --tramlines or --flat, whichever was given, for `frame`. `given`: those of --tramlines, where they are read already.
  * @throws UsageError for none or both, TraceError when they come from another readout window. */
 export async function tramlinesFor(
   frame: Frame,
   options: TramlineOptions,
   bench: Bench,
   progress: Progress,
+  given?: Tramlines,
 ): Promise<TracedFor> {
   const { flat, tramlines: file } = options;
+  const tramlines = given ?? (await givenTramlines(options));
   const traced =
-    file === undefined
+    tramlines === undefined
       ? await traceFlats(flat ?? [], bench, progress, options.profile)
-      : { tramlines: await readTramlines(readOnce(file), file), assumptions: [], warnings: [] };
+      : { tramlines, assumptions: [], warnings: [] };
   bench.inputs.push(...fileInputs(file));
   checkGeometry(frame, traced.tramlines, file === undefined ? flat?.join(", ") : file);
   return { ...traced, plan: planFor(traced.tramlines, file ?? flat?.join(", ") ?? "") };

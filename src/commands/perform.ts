@@ -1,7 +1,7 @@
 /** Runs a command's work and says what came of it: a report for people or one JSON object on standard output, what was
  * assumed and what looks wrong on standard error. */
 import { availableParallelism } from "node:os";
-import { mostThreads, useThreads } from "../kernels/module.js";
+import { loadKernels, mostThreads, useThreads } from "../kernels/module.js";
 import type { CommandName, JsonOf } from "./json.js";
 import { openProgress, type Progress } from "./progress.js";
 import { UsageError } from "./usage.js";
@@ -28,6 +28,17 @@ export class ReportedFailure extends Error {
   override readonly name = "ReportedFailure";
 }
 
+function usualThreads(): number {
+  return Math.min(availableParallelism(), mostThreads);
+}
+
+/** Has the kernels compile, and threads start, while the command's own module is loaded and files are looked at. Whoever needs
+ * them hears if that fails. */
+export function startKernels(): void {
+  useThreads(usualThreads());
+  loadKernels().catch(() => {});
+}
+
 export async function perform<C extends CommandName>(
   command: C,
   options: CommonOptions,
@@ -36,7 +47,7 @@ export async function perform<C extends CommandName>(
   if (options.json && options.output === "-") {
     throw new UsageError(`hatchel ${command}: --json and -o - both write to standard output; give -o a file's name.`);
   }
-  useThreads(options.threads ?? Math.min(availableParallelism(), mostThreads));
+  useThreads(options.threads ?? usualThreads());
   const progress = await openProgress(options.quiet === true);
   let outcome: Outcome<C>;
   try {

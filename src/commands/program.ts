@@ -4,7 +4,7 @@
  * prints its help: a script that calls it so has lost its arguments. */
 import { Command, CommanderError } from "commander";
 import { contents } from "./contents.js";
-import { jsonText, ReportedFailure } from "./perform.js";
+import { jsonText, ReportedFailure, startKernels } from "./perform.js";
 import { UsageError, usageError } from "./usage.js";
 import { version } from "./version.js";
 
@@ -36,13 +36,15 @@ async function makeProgram(args: readonly string[]): Promise<Command> {
   const words = args.filter((word) => !word.startsWith("-"));
   const asked = words[0] === "help" ? words[1] : words[0];
   const helps = words[0] === "help" || args.includes("--help");
-  for (const { name, takes, summary, define } of contents) {
+  for (const { name, takes, summary, define, works } of contents) {
     const command = program.command(name).summary(summary);
     if (name !== asked) {
       // Enough for the list of commands, where every one shows that it has options.
       command.argument(takes).option("--json");
       continue;
     }
+    // Threads take as long to start as the command's module to load.
+    if (works && !helps && !args.some((word) => word.startsWith("--threads"))) startKernels();
     await define(command);
     if (helps) command.addHelpText("after", (await import("./json.js")).jsonHelp(name));
   }

@@ -71,7 +71,11 @@ export interface Scatter {
  * absolute deviation and corrected for the cut. Quantised samples are treated right once σ exceeds about 0.5 steps,
  * since the root mean square, not the median deviation, is what converges. NaN without finite samples. */
 export function clippedScatter(values: ArrayLike<number>): Scatter {
-  const samples = finite(values);
+  return clippedScatterInPlace(finite(values));
+}
+
+/** The same of `samples`, all finite, which lose their order. */
+export function clippedScatterInPlace(samples: Float64Array): Scatter {
   let mean = quantileInPlace(samples, 0.5);
   const deviations = new Float64Array(samples.length);
   for (let i = 0; i < samples.length; i++) deviations[i] = Math.abs(samples[i] - mean);

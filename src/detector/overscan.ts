@@ -2,7 +2,7 @@
  * since the level drifts while the frame is read, with the variance it brings to every pixel of its line. */
 import { sectionSize } from "../fits/sections.js";
 import type { Amplifier } from "./amplifiers.js";
-import { clippedScatter, quantileInPlace } from "./clip.js";
+import { clippedScatterInPlace, quantileInPlace } from "./clip.js";
 import { DetectorError } from "./detectorError.js";
 import type { RawImage } from "./raw.js";
 import { fitSmoothLevel } from "./smoothLevel.js";
@@ -42,7 +42,7 @@ export function overscanLevel(raw: RawImage, amplifier: Amplifier): OverscanLeve
       `${raw.name}: the overscan of amplifier ${amplifier.number} holds no value at all; correct its section or give bias_level in the spectrograph file.`,
     );
   }
-  const reach = CLIP_SIGMAS * clippedScatter(offsets(lines, medians)).sigma;
+  const reach = CLIP_SIGMAS * clippedScatterInPlace(offsets(lines, medians)).sigma;
   const kept = keptWithin(lines, medians, reach);
   const means = lineMeans(kept);
   const smooth = fitSmoothLevel(means);
@@ -119,12 +119,13 @@ function offsets({ values, width, count }: Lines, level: Float64Array): Float64A
   return off.subarray(0, n);
 }
 
+/** What is kept moves together within its line: `values` are overwritten. */
 function keptWithin({ values, width, count }: Lines, medians: Float64Array, reach: number): Lines {
-  const kept: Lines = { values: new Float64Array(values.length), width, count: new Int32Array(count.length) };
+  const kept: Lines = { values, width, count: new Int32Array(count.length) };
   for (let line = 0; line < count.length; line++) {
     for (let i = line * width; i < line * width + count[line]; i++) {
       if (!(Math.abs(values[i] - medians[line]) <= reach)) continue;
-      kept.values[line * width + kept.count[line]++] = values[i];
+      values[line * width + kept.count[line]++] = values[i];
     }
   }
   return kept;

@@ -26,23 +26,27 @@ export function adaptTramlines(
   let oneOff: OneOff | null = null;
   let background: SmoothBackground | undefined;
   if (options.shift !== false) {
-    const sample = sampleColumns(kernels, frame, tramlines, shiftSample);
-    const none = options.background === false ? noBackground() : undefined;
-    shift = measureShift(kernels, frame, tramlines, none, sample);
-    if (shift === null) {
-      warnings.push(
-        `${frame.name}: too little light to measure its shift against the flat, so none is applied; spectra are right only if nothing moved since the flat, and by a whole fibre neither, since names are not checked then.`,
-      );
-    } else {
-      adapted = shiftTramlines(tramlines, shift);
-      // Light at dead positions is allowed for, or it would be taken for background.
-      const positions = Array.from(tramlines.state.keys());
-      background = none ?? startBackground(sample, adapted, positions);
-      oneOff = compareOneOff(kernels, frame, adapted, background, sample);
-      if (oneOff === null) warnings.push(`${frame.name}: so few fibres are lit that their names cannot be checked.`);
-      else if (options.checkNames !== false) requireNamesFit(frame, oneOff);
-      const dead = measureDeadLight(kernels, frame, adapted, background, sample);
-      warnings.push(...deadLightWarnings(frame, dead, tramlines.nFibre));
+    const sample = sampleColumns(kernels, frame, tramlines, shiftSample, undefined, frame.memory);
+    try {
+      const none = options.background === false ? noBackground() : undefined;
+      shift = measureShift(kernels, frame, tramlines, none, sample);
+      if (shift === null) {
+        warnings.push(
+          `${frame.name}: too little light to measure its shift against the flat, so none is applied; spectra are right only if nothing moved since the flat, and by a whole fibre neither, since names are not checked then.`,
+        );
+      } else {
+        adapted = shiftTramlines(tramlines, shift);
+        // Light at dead positions is allowed for, or it would be taken for background.
+        const positions = Array.from(tramlines.state.keys());
+        background = none ?? startBackground(sample, adapted, positions);
+        oneOff = compareOneOff(kernels, frame, adapted, background, sample);
+        if (oneOff === null) warnings.push(`${frame.name}: so few fibres are lit that their names cannot be checked.`);
+        else if (options.checkNames !== false) requireNamesFit(frame, oneOff);
+        const dead = measureDeadLight(kernels, frame, adapted, background, sample);
+        warnings.push(...deadLightWarnings(frame, dead, tramlines.nFibre));
+      }
+    } finally {
+      sample.release();
     }
   }
   const tooFaint = options.shift !== false && shift === null;

@@ -4,7 +4,7 @@ import type { Frame } from "../detector/frame.js";
 import type { Precision } from "../kernels/banded.js";
 import { type Kernels, loadKernels } from "../kernels/module.js";
 import { Flag, MaskBit } from "../reference/bits.js";
-import type { ExtractionInput, ExtractionOutput } from "../reference/extract.js";
+import type { ExtractionOutput, ExtractionStart } from "../reference/extract.js";
 import { checkGeometry } from "../tramlines/file.js";
 import type { OneOff } from "../tramlines/oneOff.js";
 import type { Shift } from "../tramlines/shift.js";
@@ -107,7 +107,7 @@ function withHits(frame: Frame, hits: Uint8Array | undefined): Frame {
   return { ...frame, mask: frame.mask.map((bits, i) => (hits[i] === 0 ? bits : bits | MaskBit.cosmic)) };
 }
 
-function finishSpectra(output: ExtractionOutput, tramlines: Tramlines, input: ExtractionInput): Spectra {
+function finishSpectra(output: ExtractionOutput, tramlines: Tramlines, input: ExtractionStart): Spectra {
   const { nFibre, nx } = tramlines;
   tramlines.state.forEach((state, k) => {
     if (state === "dead") output.flags.fill(Flag.dead, k * nx, (k + 1) * nx);

@@ -27,6 +27,8 @@ export interface SpectraFileOptions {
   inputs: { name: string; checksum: string }[];
   /** Slit positions, from 1, whose fibres see sky only. */
   sky?: number[] | undefined;
+  /** What `medianSignalToNoise` says of the spectra, where that is known already. */
+  signalToNoise?: Float64Array | undefined;
   /** HDUs that follow the spectra (extraHdus.ts). */
   extra?: OutputHdu[] | undefined;
   /** Of calibrated spectra: cards for the primary header, and each fibre's throughput [nFibre]. */
@@ -159,7 +161,7 @@ function primaryCards(extraction: Extraction, frame: Frame, tramlines: Tramlines
 function positionColumns(
   { spectra, shift }: Extraction,
   tramlines: Tramlines,
-  { sky, calibration }: SpectraFileOptions,
+  { sky, calibration, signalToNoise = medianSignalToNoise(spectra) }: SpectraFileOptions,
 ): OutputColumn[] {
   const isSky = new Set(sky ?? []);
   const throughput = calibration?.throughput ?? new Float64Array(spectra.nFibre).fill(Number.NaN);
@@ -172,7 +174,7 @@ function positionColumns(
     { name: "BLOCK", format: "1J", data: tramlines.block },
     { name: "ROLE", format: "8A", data: role },
     { name: "THROUGHPUT", format: "1D", data: throughput },
-    { name: "MEDIAN_SNR", format: "1D", data: medianSignalToNoise(spectra) },
+    { name: "MEDIAN_SNR", format: "1D", data: signalToNoise },
     { name: "SHIFT", format: "1D", unit: "pixel", data: shiftsApplied(shift, tramlines) },
   ];
 }

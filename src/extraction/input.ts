@@ -1,6 +1,6 @@
 /** From a frame, its tramlines and the options to what the kernel, and its reference, take. */
 import type { Frame } from "../detector/frame.js";
-import type { ExtractionInput, SmoothBackground } from "../reference/extract.js";
+import type { ExtractionStart, SmoothBackground } from "../reference/extract.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { noBackground } from "./background.js";
 import type { ExtractionOptions } from "./options.js";
@@ -13,7 +13,7 @@ export function extractionInput(
   plan: ExtractionPlan,
   options: ExtractionOptions,
   background: SmoothBackground = noBackground(),
-): ExtractionInput {
+): ExtractionStart {
   const { active } = plan;
   const { profile, degree } = tramlines;
   const method = options.method ?? "joint";
@@ -44,7 +44,6 @@ export function extractionInput(
     growKappa: options.growKappa ?? 2.5,
     minRounds: 2,
     maxRounds: 8,
-    rejected: new Uint8Array(frame.nx * frame.ny),
   };
 }
 

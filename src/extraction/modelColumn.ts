@@ -3,14 +3,14 @@
  * bench, not for this frame's accidents. */
 import type { Column } from "../reference/column.js";
 import { backgroundSeries, emptyColumn } from "../reference/columns.js";
-import type { ExtractionInput, SmoothBackground } from "../reference/extract.js";
+import type { ExtractionStart, SmoothBackground } from "../reference/extract.js";
 import { legendreArgument, legendreBasis } from "../reference/legendre.js";
 import { type BlockProfiles, blockProfiles } from "../reference/profile.js";
 import { pixelVariance } from "../reference/variance.js";
 
 /** An extraction's fit of its frame; `input` has each profile in one window as wide as it is known. */
 export interface FrameFit {
-  input: ExtractionInput;
+  input: ExtractionStart;
   background: SmoothBackground;
   /** Row of `flux` for each fibre of the input. */
   rows: number[];
@@ -37,7 +37,7 @@ export function modelColumns({ input, background, rows, flux }: FrameFit): Colum
 }
 
 /** Columns without light: profiles, background and the ingredients of the noise; nothing is weighted yet. */
-export function profileColumns(input: ExtractionInput, background: SmoothBackground): ColumnSource {
+export function profileColumns(input: ExtractionStart, background: SmoothBackground): ColumnSource {
   let [loaded, block]: [number, BlockProfiles | null] = [-1, null];
   const inY = Array.from({ length: input.ny }, (_, y) => legendreBasis(legendreArgument(y, input.ny), background.nY));
   return (x) => {
@@ -80,7 +80,7 @@ export function backgroundImage(background: SmoothBackground, nx: number, ny: nu
   return image;
 }
 
-function loadNoise({ noise, nx, ny }: ExtractionInput, column: Column, x: number): void {
+function loadNoise({ noise, nx, ny }: ExtractionStart, column: Column, x: number): void {
   for (let y = 0; y < ny; y++) {
     const [at, row] = [y * nx + x, column.margin + y];
     column.bits[row] = 0;

@@ -1,6 +1,6 @@
 /** The passes of an extraction over the frame, the same for kernels and reference: one over all columns that finds
  * cosmic rays; then, where their growth took further pixels, the blocks that hold them once more. */
-import type { ExtractionInput } from "../reference/extract.js";
+import type { ExtractionStart } from "../reference/extract.js";
 import { growRejected } from "./growth.js";
 
 /** Reports of progress on a pass. */
@@ -16,7 +16,7 @@ export interface ColumnRunner {
 }
 
 /** `onProgress`: called with the share of columns done, 0 to 1. */
-export function runPasses(runner: ColumnRunner, input: ExtractionInput, onProgress?: (share: number) => void): void {
+export function runPasses(runner: ColumnRunner, input: ExtractionStart, onProgress?: (share: number) => void): void {
   const { nx, ny, blockColumns } = input;
   const stretch = blockColumns * Math.ceil(nx / (nReport * blockColumns));
   for (let x0 = 0; x0 < nx; x0 += stretch) {

@@ -3,7 +3,7 @@ import type { Frame } from "../detector/frame.js";
 import type { Precision } from "../kernels/banded.js";
 import { ExtractionBench } from "../kernels/extraction.js";
 import type { Kernels } from "../kernels/module.js";
-import type { ExtractionInput, SmoothBackground } from "../reference/extract.js";
+import type { ExtractionStart, SmoothBackground } from "../reference/extract.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { noBackground } from "./background.js";
 import { extractionInput } from "./input.js";
@@ -16,7 +16,7 @@ import { type BackgroundFit, measureBackground } from "./smooth.js";
 /** An extraction ready to run: memory laid out, background and misfit settled. */
 export interface OpenFrame {
   bench: ExtractionBench;
-  input: ExtractionInput;
+  input: ExtractionStart;
   plan: ExtractionPlan;
   precision: Precision;
   /** Null when none was asked for. */
@@ -44,7 +44,7 @@ export function openFrame(
 }
 
 /** Measures ε and has `bench` use it from here on. */
-function settleProfileError(bench: ExtractionBench, input: ExtractionInput): number {
+function settleProfileError(bench: ExtractionBench, input: ExtractionStart): number {
   if (input.kappa === 0) return input.profileError;
   const profileError = measureMisfit(bench, input.nx, input.blockColumns, input.kappa, input.profileError, input.ny);
   bench.setProfileError(profileError);

@@ -39,10 +39,11 @@ export function measureBackground(
 ): BackgroundFit {
   const active = activeFibres(tramlines);
   const nGroup = Math.max(startGroups, Math.ceil(fibreColumns / groupColumns / active.length));
-  const sample = sampleColumns(kernels, frame, tramlines, { nGroup, together: 4 }, wingReach);
+  const sample = sampleColumns(kernels, frame, tramlines, { nGroup, together: 4 }, wingReach, frame.memory);
   const first = start ?? startBackground(sample, tramlines, active);
   const fit = turn(sample, tramlines, active, first, 1, clipSigma);
   const error = fit.error();
+  sample.release();
   if (error < uselessError) return { ...fit, error, warnings: [] };
   const warning = `${frame.name}: the fibres leave too little room to tell scattered light from theirs, so none is taken off; faint fibres may hold some.`;
   return { ...noBackground(), error: Number.NaN, warnings: [warning] };

@@ -3,7 +3,7 @@ import type { Frame } from "../detector/frame.js";
 import { ExtractionBench } from "../kernels/extraction.js";
 import { type Kernels, loadKernels } from "../kernels/module.js";
 import { MaskBit } from "../reference/bits.js";
-import { type ExtractionInput, type ExtractionOutput, extractColumns, type Method } from "../reference/extract.js";
+import { type ExtractionOutput, type ExtractionStart, extractColumns, type Method } from "../reference/extract.js";
 import { settleGrownColumns } from "../reference/grown.js";
 import { blockProfiles } from "../reference/profile.js";
 import { checkGeometry } from "../tramlines/file.js";
@@ -87,7 +87,7 @@ interface Run {
   rejected: Uint8Array;
 }
 
-function runReference(input: ExtractionInput, onProgress: (share: number) => void): Run {
+function runReference(input: ExtractionStart, onProgress: (share: number) => void): Run {
   const n = input.nFibre * input.nx;
   const numbers = () => new Float64Array(n).fill(Number.NaN);
   const output: ExtractionOutput = {
@@ -109,7 +109,7 @@ function runReference(input: ExtractionInput, onProgress: (share: number) => voi
   return { output, rejected };
 }
 
-function compareRuns(kernels: Kernels, input: ExtractionInput, expected: Run, precision: "f32" | "f64"): MethodCheck {
+function compareRuns(kernels: Kernels, input: ExtractionStart, expected: Run, precision: "f32" | "f64"): MethodCheck {
   const bench = openBench(kernels, input, precision);
   runPasses(bench, input);
   const sameColumn = columnsRejectedAlike(bench.rejected, expected.rejected, input);
@@ -148,7 +148,7 @@ function hasPassed(check: MethodCheck, expected: Run): boolean {
   return fluxesAgree && check.rejectedDiffer <= 2 + nRejected / 100 && check.worstVariance <= varianceBound32;
 }
 
-function openBench(kernels: Kernels, input: ExtractionInput, precision: "f32" | "f64"): ExtractionBench {
+function openBench(kernels: Kernels, input: ExtractionStart, precision: "f32" | "f64"): ExtractionBench {
   const rows = Int32Array.from({ length: input.nFibre }, (_, k) => k);
   return new ExtractionBench(kernels, input, rows, input.nFibre, precision);
 }
@@ -176,7 +176,7 @@ function comparePoint(
  * interpolation, weighting and the band's solution), on the light of the fibre and of those that overlap it and on the
  * background; matrix and right-hand side each bring it, and the matrix's inverse, whose norm is below 2 while the
  * fibres stand two widths apart, passes it on. Weights that differ in the seventh digit move a flux by 1e-4 σ at most. */
-function errorBound(input: ExtractionInput, expected: ExtractionOutput, i: number, precision: "f32" | "f64"): number {
+function errorBound(input: ExtractionStart, expected: ExtractionOutput, i: number, precision: "f32" | "f64"): number {
   const sigma = Math.sqrt(expected.variance[i]);
   if (precision === "f64") return relativeBound64 * (Math.abs(expected.flux[i]) + sigma);
   const { nx, nFibre, bandwidth, halfWindow } = input;
@@ -190,7 +190,7 @@ function errorBound(input: ExtractionInput, expected: ExtractionOutput, i: numbe
 }
 
 /** Columns in which both rejected the same pixels; a pixel on the threshold may fall to either side in f32. */
-function columnsRejectedAlike(a: Uint8Array, b: Uint8Array, input: ExtractionInput): Uint8Array {
+function columnsRejectedAlike(a: Uint8Array, b: Uint8Array, input: ExtractionStart): Uint8Array {
   const same = new Uint8Array(input.nx).fill(1);
   for (let i = 0; i < a.length; i++) if (isRejected(a[i]) !== isRejected(b[i])) same[i % input.nx] = 0;
   return same;
@@ -205,7 +205,7 @@ function isRejected(bits: number): boolean {
 }
 
 /** Weights of every fibre at the nodes of some blocks. */
-function compareWeights(bench: ExtractionBench, input: ExtractionInput): number {
+function compareWeights(bench: ExtractionBench, input: ExtractionStart): number {
   let worst = 0;
   const step = input.blockColumns * Math.max(1, Math.floor(input.nx / (input.blockColumns * weightBlocks)));
   for (let x0 = 0; x0 < input.nx; x0 += step) {

@@ -194,7 +194,11 @@ function memoryFor(kernels: Kernels, n: number, scaling: PixelScaling, forFrame:
   const nBytes = decodingBytes(n, scaling);
   if (!forFrame) return { memory: kernels.workbench(nBytes, 1) };
   const memory = reserveFrameRoom(kernels, n, frameBytes(n) + nBytes);
-  return { memory, room: memory.uint8(frameBytes(n)) };
+  const room = memory.uint8(frameBytes(n));
+  // What is not read into but decoded into, then the frame's own.
+  memory.touchAhead(room.byteOffset + room.length, nBytes - (n * Math.abs(scaling.bitpix)) / 8);
+  memory.touchAhead(room.byteOffset, room.length);
+  return { memory, room };
 }
 
 function decodePlain(memory: Workbench, fits: OpenFits, { hdu, nx, ny, scaling }: FoundImage) {

@@ -6,6 +6,7 @@ import type { ShapeTable } from "../reference/shape.js";
 import { packTable, tableStride } from "./coarseTable.js";
 import { ColumnNumber, ColumnWord as Word } from "./columnFit-words.js";
 import { gatherColumns, type SampledFrame } from "./columnGather.js";
+import { borrowRoom } from "./frameRoom.js";
 import type { Kernels, Workbench } from "./module.js";
 
 export { groupColumns, type SampledFrame } from "./columnGather.js";
@@ -61,6 +62,8 @@ export class ColumnSample {
   readonly ny: number;
   readonly nGroup: number;
   private readonly bench: Workbench;
+  /** The frame's memory, while this works there. */
+  private borrowed: Workbench | undefined;
   private readonly numbers: Float64Array;
   private readonly jobs: Int32Array<ArrayBuffer>[];
   private readonly views: Omit<ColumnFits, "groups">;
@@ -82,7 +85,8 @@ export class ColumnSample {
   readonly residual: Float32Array;
 
   /** `firstColumns`: of each group; columns beyond the frame's last count as bad. `most`: the lines that a fit may have at most,
-   * all within 1.5 px of where these run or a neighbour's. `halfWindow`: pixels that profiles reach.
+   * all within 1.5 px of where these run or a neighbour's. `halfWindow`: pixels that profiles reach. `memory`: the frame's own,
+   * to work in, if that is free, until `release`.
    * @throws RangeError when the memory cannot hold it. */
   constructor(
     kernels: Kernels,
@@ -91,6 +95,7 @@ export class ColumnSample {
     private readonly most: SampledLines,
     table: ShapeTable,
     halfWindow: number,
+    memory?: Workbench,
   ) {
     const { nx, ny } = frame;
     const nGroup = firstColumns.length;
@@ -138,10 +143,12 @@ export class ColumnSample {
       nFibre +
       4 * packed.length;
     const nPiece = 21 + kernels.nThread * (scratch.length + 3);
-    this.bench = kernels.workbench(
-      ofAll + 8 * (mostX * mostY + ColumnNumber.count) + kernels.nThread * ofThread,
-      nPiece,
-    );
+    const nBytes = ofAll + 8 * (mostX * mostY + ColumnNumber.count) + kernels.nThread * ofThread;
+    this.borrowed = borrowRoom(kernels, frame, memory, nBytes + 64 * nPiece);
+    this.bench = this.borrowed ?? kernels.workbench(nBytes, nPiece);
+    // As in a memory of its own.
+    if (this.borrowed) this.borrowed.uint8(nBytes + 64 * nPiece).fill(0);
+    this.borrowed?.keepUpTo(frame.mask);
     const { bench } = this;
     const lane = (n: number) => bench.float32(4 * n);
     this.light = lane(nGroup * ny);
@@ -216,6 +223,12 @@ export class ColumnSample {
       return job;
     });
     gatherColumns(frame, this);
+  }
+
+  /** Gives the frame's memory back: nothing of this is valid any more. */
+  release(): void {
+    this.borrowed?.giveBack();
+    this.borrowed = undefined;
   }
 
   /** Fits `lines` to the groups asked for. @throws RangeError when there are more fibres than there is room for. */

@@ -2,13 +2,14 @@
 
 import { MaskBit } from "../reference/bits.js";
 import { marginRows } from "../reference/columns.js";
-import type { ExtractionInput, ExtractionOutput, SmoothBackground } from "../reference/extract.js";
+import type { ExtractionOutput, ExtractionStart, SmoothBackground } from "../reference/extract.js";
 import type { ShapeTable } from "../reference/shape.js";
 import type { Precision } from "./banded.js";
 import type { TileKernel } from "./exports.js";
 import { MethodCode, Numbers, Word } from "./extraction-words.js";
 import { checkInput } from "./extractionChecks.js";
 import { type Piece, type Plan, pieceType, planBytes, scratchPlan, sharedPlan } from "./extractionMemory.js";
+import { borrowRoom } from "./frameRoom.js";
 import type { Kernels, Workbench } from "./module.js";
 
 /** Rows of the frame, nLane numbers each; the first nColumn lanes hold columns. */
@@ -47,7 +48,7 @@ export class ExtractionBench {
    * @throws RangeError when lengths do not fit or the frame is larger than the memory can be. */
   constructor(
     kernels: Kernels,
-    private readonly input: ExtractionInput,
+    private readonly input: ExtractionStart,
     outputRow: Int32Array,
     nSlit: number,
     private readonly precision: Precision,
@@ -59,7 +60,7 @@ export class ExtractionBench {
     const nThread = kernels.nThread;
     const nBytes = planBytes(shared, precision) + nThread * (planBytes(scratch, precision) + 4 * Word.count);
     const nPieces = shared.length + nThread * (scratch.length + 1);
-    const room = memory?.nThread === nThread && borrow(memory, input, nBytes + 64 * nPieces) ? memory : undefined;
+    const room = borrowRoom(kernels, input, memory, nBytes + 64 * nPieces);
     this.borrowed = room;
     this.bench = room ?? kernels.workbench(nBytes, nPieces);
     const { pieces } = this;
@@ -245,7 +246,6 @@ export class ExtractionBench {
     for (const job of this.jobs) for (const [word, value] of counts) job[word] = value;
     if (this.borrowed === undefined) this.copyFrame();
     const arrays: [Word, ArrayLike<number> | undefined][] = [
-      [Word.rejected, input.rejected],
       [Word.bandOfRow, noise.bandOfRow],
       [Word.fixedVariance, noise.fixedVariance],
       [Word.fixedVarianceImage, noise.fixedVarianceImage],
@@ -258,19 +258,14 @@ export class ExtractionBench {
       [Word.background, background.coefficients],
     ];
     for (const [word, values] of arrays) if (values !== undefined) pieces.get(word)!.set(values);
+    if (input.rejected !== undefined) this.rejected.set(input.rejected);
+    else if (this.borrowed !== undefined) this.rejected.fill(0);
     if (input.shape) pieces.get(Word.shape)!.set(packShape(input.shape));
     this.clearRows(outputRow);
     numbers[Numbers.profileError] = input.profileError;
     numbers[Numbers.halfAperture] = input.halfAperture;
     this.setRejection(input.kappa, input.growKappa);
   }
-}
-
-/** Whether electrons and mask lie in `memory`, with `nBytes` behind them to work in, which are then lent. */
-function borrow(memory: Workbench, { electrons, mask }: ExtractionInput, nBytes: number): boolean {
-  const { buffer } = memory.memory;
-  if (electrons.buffer !== buffer || mask.buffer !== buffer || mask.byteOffset < electrons.byteOffset) return false;
-  return buffer.byteLength - (mask.byteOffset + mask.byteLength) > nBytes + 64 && memory.lend(mask);
 }
 
 /** A shape as assembly/shape.ts reads it. */

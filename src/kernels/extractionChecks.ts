@@ -1,9 +1,9 @@
 /** What must hold of an extraction's input before kernels, which check nothing, get to work on it. */
-import type { ExtractionInput } from "../reference/extract.js";
+import type { ExtractionStart } from "../reference/extract.js";
 
 /** `outputRow`: [nFibre] row of the images for each fibre, of `nSlit`.
  * @throws RangeError when lengths do not fit, a width is none, or a row is outside the slit. */
-export function checkInput(input: ExtractionInput, outputRow: Int32Array, nSlit: number): void {
+export function checkInput(input: ExtractionStart, outputRow: Int32Array, nSlit: number): void {
   const { nx, ny, nFibre, noise, background } = input;
   const lengths: [string, ArrayLike<number> | undefined, number][] = [
     ["electrons", input.electrons, nx * ny],

@@ -1,7 +1,7 @@
 /** The pieces of an extraction's memory: how many numbers of which type stand behind each word of extraction-words.ts. */
 import { chunkFibres } from "../reference/chunks.js";
 import { marginRows } from "../reference/columns.js";
-import type { ExtractionInput } from "../reference/extract.js";
+import type { ExtractionStart } from "../reference/extract.js";
 import { blockNodes } from "../reference/profile.js";
 import type { Precision } from "./banded.js";
 import { Numbers, Word } from "./extraction-words.js";
@@ -12,11 +12,13 @@ type PieceType = "lanes" | "float32" | "float64" | "int32" | "uint8";
 /** How many numbers of which type each piece of the memory holds; `lanes` are numbers of the lanes' type. */
 export type Plan = [word: Word, type: PieceType, length: number][];
 
+/** Images of numbers; flags are another. */
+const imageWords = [Word.flux, Word.variance, Word.neighbourCovariance, Word.chi2, Word.backgroundUnder, Word.fitFlux];
+
 /** What all threads read, and the images that they write. */
-export function sharedPlan(input: ExtractionInput, nSlit: number): Plan {
+export function sharedPlan(input: ExtractionStart, nSlit: number): Plan {
   const { nx, ny, nFibre, noise, background } = input;
   const nPixel = nx * ny;
-  const images = [Word.flux, Word.variance, Word.neighbourCovariance, Word.chi2, Word.backgroundUnder, Word.fitFlux];
   return [
     [Word.electrons, "float32", nPixel],
     [Word.mask, "uint8", nPixel],
@@ -32,7 +34,7 @@ export function sharedPlan(input: ExtractionInput, nSlit: number): Plan {
     [Word.outputRow, "int32", nFibre],
     ...(input.shape ? [[Word.shape, "float64", 11 + input.shape.values.length] as Plan[number]] : []),
     [Word.background, "float64", background.coefficients.length],
-    ...images.map((word): Plan[number] => [word, "lanes", nSlit * nx]),
+    ...imageWords.map((word): Plan[number] => [word, "lanes", nSlit * nx]),
     [Word.flags, "int32", nSlit * nx],
     [Word.numbers, "float64", Numbers.count],
   ];
@@ -41,8 +43,13 @@ export function sharedPlan(input: ExtractionInput, nSlit: number): Plan {
 /** Cells of assembly/erfCells.ts. */
 const nErfCell = 192;
 
+/** Bytes of all images that an extraction in single precision writes, rejected pixels included. */
+export function imageBytes(nx: number, ny: number, nSlit: number): number {
+  return nx * ny + 4 * nx * nSlit * (imageWords.length + 1);
+}
+
 /** What each thread has for itself. */
-export function scratchPlan(input: ExtractionInput, nLane: number): Plan {
+export function scratchPlan(input: ExtractionStart, nLane: number): Plan {
   const { ny, nFibre, bandwidth, background, wing } = input;
   const nWindow = 2 * input.halfWindow + 1;
   const nRow = ny + 2 * marginRows(input);

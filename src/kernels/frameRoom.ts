@@ -29,3 +29,18 @@ export function reserveFrameRoom(kernels: Kernels, nPixel: number, leastBytes: n
     return kernels.workbench(leastBytes);
   }
 }
+
+/** `memory`, if `electrons` and `mask` lie in it and `nBytes` behind them are nobody's: those are lent then, as they are, until
+ * they are given back. */
+export function borrowRoom(
+  kernels: Kernels,
+  { electrons, mask }: { electrons: Float32Array; mask: Uint8Array },
+  memory: Workbench | undefined,
+  nBytes: number,
+): Workbench | undefined {
+  if (memory === undefined || memory.nThread !== kernels.nThread) return undefined;
+  const { buffer } = memory.memory;
+  if (electrons.buffer !== buffer || mask.buffer !== buffer || mask.byteOffset < electrons.byteOffset) return undefined;
+  if (buffer.byteLength - (mask.byteOffset + mask.byteLength) <= nBytes + 64) return undefined;
+  return memory.lend(mask) ? memory : undefined;
+}

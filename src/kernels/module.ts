@@ -13,6 +13,8 @@ const MOST_PAGES = 65536;
 /** Threads that scratch is laid out for at the most. */
 export const mostThreads = 16;
 const ALIGN_BYTES = 64;
+/** Less is touched sooner than told. */
+const FEW_BYTES = 2 ** 20;
 
 /** The compiled kernels. Cheap to keep; hold a Workbench only as long as its job lasts. */
 export class Kernels {
@@ -92,6 +94,12 @@ export class Workbench {
     return new Uint8Array(this.buffer, this.reserve(n), n);
   }
 
+  /** Has other threads touch the pages of these bytes, which will be written to, while the caller goes on: on some machines the
+   * first touch of a page takes longer than all that is done to it. Without other threads nothing happens. */
+  touchAhead(byteOffset: number, nBytes: number): void {
+    if (nBytes >= FEW_BYTES) this.team?.touchAhead(this.memory, byteOffset, byteOffset + nBytes);
+  }
+
   /** Lends what is behind `last` to one who keeps results there; false when it is lent already. */
   lend(last: ArrayBufferView): boolean {
     if (this.lent) return false;
@@ -158,14 +166,13 @@ async function loadAlone(
 }
 
 async function loadShared(nThread: number): Promise<Kernels> {
-  const [modules, { Team }] = await Promise.all([
-    Promise.all([
-      compile(new URL("./hatchel.shared.wasm", import.meta.url)),
-      compile(new URL("./hatchel.tracing.shared.wasm", import.meta.url)),
-    ]),
-    import("./team.js"),
+  const compiling = Promise.all([
+    compile(new URL("./hatchel.shared.wasm", import.meta.url)),
+    compile(new URL("./hatchel.tracing.shared.wasm", import.meta.url)),
   ]);
-  return new Kernels(modules, await Team.start(modules, nThread));
+  const { Team } = await import("./team.js");
+  const team = await Team.start(compiling, nThread);
+  return new Kernels(await compiling, team);
 }
 
 /** Node has shared memory and threads; a page only when it is isolated from other origins, and there is no door for it yet. */

@@ -22,15 +22,16 @@ export class Team {
   private served: WeakRef<SharedBench> | undefined;
   private kernels: string[] = [];
 
+  private modules: readonly WebAssembly.Module[] = [];
+
   private constructor(
-    private readonly modules: readonly WebAssembly.Module[],
     /** The caller included. */
     readonly nThread: number,
   ) {}
 
-  /** `nThread` threads, the caller included. `modules`: the kernels, built for shared memory. */
-  static async start(modules: readonly WebAssembly.Module[], nThread: number): Promise<Team> {
-    const team = new Team(modules, nThread);
+  /** `nThread` threads, the caller included; they start while `modules` compile: the kernels, built for shared memory. */
+  static async start(modules: Promise<readonly WebAssembly.Module[]>, nThread: number): Promise<Team> {
+    const team = new Team(nThread);
     const { Worker } = await import("node:worker_threads");
     for (let i = 1; i < nThread; i++) {
       const thread = new Worker(new URL("./worker.js", import.meta.url));
@@ -39,6 +40,7 @@ export class Team {
       thread.on("error", () => {});
       team.threads.push(thread);
     }
+    team.modules = await modules;
     return team;
   }
 
@@ -67,13 +69,29 @@ export class Team {
       throw new Error("A kernel stopped in another thread; this is a defect of the program.");
   }
 
+  /** Has the other threads touch the pages from byte `first` to byte `end` of a memory while the caller goes on; nobody waits for it. */
+  touchAhead(memory: WebAssembly.Memory, first: number, end: number): void {
+    const { threads } = this;
+    if (threads.length === 0) return;
+    this.closeDesk();
+    const share = Math.ceil((end - first) / threads.length);
+    threads.forEach((thread, i) => {
+      thread.postMessage({ memory, touch: [first + i * share, Math.min(end, first + (i + 1) * share)] });
+    });
+  }
+
+  /** Threads leave the desk they wait at, and hear messages again. */
+  private closeDesk(): void {
+    if (this.desk === undefined) return;
+    Atomics.store(this.desk, Desk.turn, CLOSED);
+    Atomics.notify(this.desk, Desk.turn);
+    this.desk = undefined;
+  }
+
   /** The desk of `bench`, with the threads called to it. */
   private serve(bench: SharedBench): Int32Array {
     if (this.desk !== undefined && this.served?.deref() === bench) return this.desk;
-    if (this.desk !== undefined) {
-      Atomics.store(this.desk, Desk.turn, CLOSED);
-      Atomics.notify(this.desk, Desk.turn);
-    }
+    this.closeDesk();
     const desk = new Int32Array(new SharedArrayBuffer(4 * (Desk.jobs + this.nThread)));
     this.kernels = Object.keys(bench.call);
     this.served = new WeakRef(bench);

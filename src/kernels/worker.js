@@ -1,11 +1,15 @@
 /** A thread that helps with a workbench's tiles. Plain JavaScript, since it is found by its file's name in src/ as in dist/.
  *
  * A message brings a memory, the modules and the memory's desk (see team.ts); the thread then waits at the desk for work,
- * deaf to other messages, until the desk is closed. */
+ * deaf to other messages, until the desk is closed. Another kind of message names pages to touch. */
 import { parentPort } from "node:worker_threads";
 import { CLOSED, Desk } from "./desk.js";
 
-parentPort?.on("message", ({ modules, memory, desk, kernels, thread }) => {
+/** Of memory, in bytes: as small as they come. */
+const PAGE_BYTES = 4096;
+
+parentPort?.on("message", ({ modules, memory, desk, kernels, thread, touch }) => {
+  if (touch !== undefined) return touchPages(memory, touch);
   const abort = () => {
     throw new Error("A kernel stopped at an impossible state.");
   };
@@ -13,6 +17,15 @@ parentPort?.on("message", ({ modules, memory, desk, kernels, thread }) => {
   const call = Object.assign({}, ...exports);
   serve(desk, (kernel, job, tile) => call[kernels[kernel]](job, tile), thread);
 });
+
+/** Nothing is changed, whatever others write there meanwhile.
+ * @param {WebAssembly.Memory} memory
+ * @param {[first: number, end: number]} range bytes
+ */
+function touchPages(memory, [first, end]) {
+  const words = new Int32Array(memory.buffer);
+  for (let at = first; at < end; at += PAGE_BYTES) Atomics.or(words, at >> 2, 0);
+}
 
 /**
  * @param {Int32Array} desk

@@ -2,17 +2,17 @@
  * assembly/columns.ts. */
 import { MaskBit } from "./bits.js";
 import type { Column } from "./column.js";
-import type { ExtractionInput, SmoothBackground } from "./extraction.js";
+import type { ExtractionInput, ExtractionStart, SmoothBackground } from "./extraction.js";
 import { legendreArgument, legendreValue } from "./legendre.js";
 import { type BlockProfiles, columnWeights, columnWings, nodeShares, wingShares } from "./profile.js";
 
 /** Rows that a column has beyond each end of the frame: a window and its wing may lie there, and two rows more are looked at. */
-export function marginRows({ halfWindow, wing }: ExtractionInput): number {
+export function marginRows({ halfWindow, wing }: ExtractionStart): number {
   return 2 * halfWindow + 1 + wing + 2;
 }
 
 /** Column `offset` of a block before any pixel is read: profiles in place, nothing good. */
-export function emptyColumn(input: ExtractionInput, block: BlockProfiles, offset: number): Column {
+export function emptyColumn(input: ExtractionStart, block: BlockProfiles, offset: number): Column {
   const nWindow = 2 * input.halfWindow + 1;
   const margin = marginRows(input);
   const nRow = input.ny + 2 * margin;

@@ -15,7 +15,7 @@ import { close, movedBy, openFit, rejectWorst, settleStretch, takeSolution } fro
 import { writeFit, writeRejected } from "./spectra.js";
 import { pixelVariance } from "./variance.js";
 
-export type { ExtractionInput, ExtractionOutput, Method, SmoothBackground } from "./extraction.js";
+export type { ExtractionInput, ExtractionOutput, ExtractionStart, Method, SmoothBackground } from "./extraction.js";
 
 /** Extracts columns x0 … x1 − 1 into `output`. */
 export function extractColumns(input: ExtractionInput, output: ExtractionOutput, x0: number, x1: number): void {

@@ -37,6 +37,9 @@ export interface ExtractionInput extends ProfileInput {
   rejected: Uint8Array;
 }
 
+/** The same before any pass: where `rejected` is absent, nothing is rejected yet. */
+export type ExtractionStart = Omit<ExtractionInput, "rejected"> & Partial<Pick<ExtractionInput, "rejected">>;
+
 /** Images nFibre × nx, index = fibre · nx + x. */
 export interface ExtractionOutput {
   /** e⁻ per dispersion pixel: all the light of the fibre in that column. */

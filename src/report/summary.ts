@@ -79,7 +79,12 @@ function countRow(flags: Int32Array, from: number, end: number, counts: FlagCoun
   return nUsable;
 }
 
-export function summariseSpectra(spectra: Spectra, { state }: Tramlines): SpectraSummary {
+/** `fibreSignalToNoise`: what `medianSignalToNoise` says of them, where that is known already. */
+export function summariseSpectra(
+  spectra: Spectra,
+  { state }: Tramlines,
+  fibreSignalToNoise = medianSignalToNoise(spectra),
+): SpectraSummary {
   const { nFibre, nx, flags } = spectra;
   const counts = Object.fromEntries(FLAGS.map(([name]) => [name, 0])) as FlagCounts;
   const fibreUsableShare = new Float64Array(nFibre);
@@ -89,7 +94,6 @@ export function summariseSpectra(spectra: Spectra, { state }: Tramlines): Spectr
     fibreUsableShare[k] = nUsable / nx;
     if (state[k] !== "dead") nPoint += nx;
   }
-  const fibreSignalToNoise = medianSignalToNoise(spectra);
   const known = Array.from(fibreSignalToNoise).filter(Number.isFinite);
   return {
     nPoint,

@@ -2,7 +2,7 @@
  * fitted as often as need be. */
 import type { Frame } from "../detector/frame.js";
 import { ColumnSample, groupColumns } from "../kernels/columnFit.js";
-import type { Kernels } from "../kernels/module.js";
+import type { Kernels, Workbench } from "../kernels/module.js";
 import { legendreValue } from "../reference/legendre.js";
 import { linesOf, profileTable } from "./profileTable.js";
 import type { Tramlines } from "./tramlines.js";
@@ -19,13 +19,15 @@ export interface SampleSize {
 }
 
 /** Groups of four columns, at most as many as the frame holds without overlap, with room for fits of all fibres of `tramlines`,
- * dead ones too. `wingReach`: σ to which wings are followed; further out they count as background. */
+ * dead ones too. `wingReach`: σ to which wings are followed; further out they count as background. `memory`: the frame's own, to
+ * work in until the sample is released. */
 export function sampleColumns(
   kernels: Kernels,
   frame: Frame,
   tramlines: Tramlines,
   size: SampleSize,
   wingReach = nearReach,
+  memory?: Workbench,
 ): ColumnSample {
   const lines = linesOf(tramlines, Array.from(tramlines.state.keys()));
   const { profile } = tramlines;
@@ -37,7 +39,8 @@ export function sampleColumns(
     }
   }
   const table = profileTable(kernels, profile);
-  return new ColumnSample(kernels, frame, firstColumns(frame.nx, size), lines, table, Math.ceil(reach * widest + 0.5));
+  const halfWindow = Math.ceil(reach * widest + 0.5);
+  return new ColumnSample(kernels, frame, firstColumns(frame.nx, size), lines, table, halfWindow, memory);
 }
 
 /** First columns of the groups, those side by side one after the other. */

@@ -40,6 +40,28 @@ it("gives the same bits, whatever lay in the room, and leaves the frame as it is
   }
 });
 
+it("finds the same shift, names and background there", async () => {
+  const plain = await extractFrame(frame, tramlines);
+  const fresh = await inMemory();
+  const { spectra, shift, oneOff, background } = await extractFrame(fresh, tramlines);
+  expect(plain.shift).not.toBeNull();
+  expect(spectra.flux.buffer).toBe(fresh.memory!.memory.buffer);
+  expect([shift, oneOff]).toEqual([plain.shift, plain.oneOff]);
+  expect(background!.coefficients).toEqual(plain.background!.coefficients);
+  expect(spectra).toEqual(plain.spectra);
+});
+
+it("lends the room again after names that do not fit", async () => {
+  const given = await inMemory();
+  const { nTerm, legendre } = { nTerm: tramlines.degree + 1, legendre: tramlines.legendre.slice() };
+  for (let k = 0; k + 1 < tramlines.nFibre; k++) {
+    legendre.copyWithin(k * nTerm, (k + 1) * nTerm, (k + 2) * nTerm);
+  }
+  await extractFrame(given, { ...tramlines, legendre }).catch(() => {});
+  const { spectra } = await extractFrame(given, tramlines);
+  expect(spectra.flux.buffer).toBe(given.memory!.memory.buffer);
+});
+
 it("keeps the spectra of an earlier extraction when the frame is extracted again", async () => {
   const given = await inMemory();
   const first = await extractFrame(given, tramlines, { shift: false });
