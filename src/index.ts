@@ -21,16 +21,21 @@ export {
   type Calibrations,
   makeCalibrations,
   noCalibrations,
+  type StackReport,
 } from "./detector/calibrations.js";
 export { type CorrectOptions, correctFrame } from "./detector/correct.js";
 export { DetectorError } from "./detector/detectorError.js";
+export { type DetectorFileOptions, detectorHdus, writeDetector } from "./detector/detectorFile.js";
 export { type DetectorGeometry, type Frame, MaskBit, type NoiseIngredients } from "./detector/frame.js";
+export type { FrameList, Frames } from "./detector/frameList.js";
 export { requireSameGeometry } from "./detector/geometry.js";
 export { type CalibrationPaths, loadCalibrations } from "./detector/loadCalibrations.js";
 export { type LookOptions, type LookReport, lookAt } from "./detector/look.js";
 export { type AmplifierNoise, measureNoise, type NoiseFrames, type NoiseMeasurement } from "./detector/noise.js";
 export { noiseWarnings } from "./detector/noiseWarnings.js";
 export type { RawImage } from "./detector/raw.js";
+export { readDetector } from "./detector/readDetector.js";
+export type { StackedFrame } from "./detector/roleStack.js";
 export type { Role } from "./detector/roles.js";
 export { type Comparison, compareMethods, type MethodComparison } from "./extraction/compare.js";
 export { findPairHits, type PairHits } from "./extraction/cosmicPair.js";

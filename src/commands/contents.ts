@@ -46,6 +46,12 @@ export const contents: Entry[] = [
     define: async (command) => (await import("./look.js")).addLook(command),
   },
   {
+    name: "stack",
+    takes: "",
+    summary: "one file of detector calibrations from bias, dark and pixel flat frames",
+    define: async (command) => (await import("./stack.js")).addStack(command),
+  },
+  {
     name: "trace",
     works: true,
     takes: "<FLAT...>",

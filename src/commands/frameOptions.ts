@@ -14,6 +14,8 @@ export interface FrameOptions extends CommonOptions {
   dark?: string[];
   pixelFlat?: string[];
   badPixels?: string;
+  /** A file that 'hatchel stack' wrote, in place of the four. */
+  detector?: string;
   hdu?: number;
 }
 
@@ -44,6 +46,26 @@ export function addCommonOptions(command: Command): Command {
 }
 
 export function addFrameOptions(command: Command): Command {
+  return addCalibrationOptions(
+    command.option(
+      "--detector <file>",
+      "detector calibrations that 'hatchel stack' wrote, in place of the frames below",
+    ),
+  );
+}
+
+/** @throws UsageError for both a file of calibrations and frames to make some of. */
+export function requireOneDetector({ detector, bias, dark, pixelFlat, badPixels }: FrameOptions): void {
+  const frames = { "--bias": bias, "--dark": dark, "--pixel-flat": pixelFlat, "--bad-pixels": badPixels };
+  const given = Object.entries(frames).find(([, files]) => files !== undefined)?.[0];
+  if (detector === undefined || given === undefined) return;
+  throw new UsageError(
+    `hatchel: both --detector and ${given} are given; a file of 'hatchel stack' holds all calibrations: make it with ${given}, or leave it out.`,
+  );
+}
+
+/** What makes detector calibrations. */
+export function addCalibrationOptions(command: Command): Command {
   return command
     .option("--spectrograph <file>", "what is known of detector and slit, in TOML")
     .option("--bias <file...>", "bias frames, combined and taken off")

@@ -18,7 +18,7 @@ import { type ProfiledTracing, traceFlatFiles } from "../tramlines/flatFiles.js"
 import type { ProfileKind } from "../tramlines/profiles.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { RefusalError } from "./failures.js";
-import type { FrameOptions, TramlineOptions } from "./frameOptions.js";
+import { type FrameOptions, requireOneDetector, type TramlineOptions } from "./frameOptions.js";
 import type { Progress } from "./progress.js";
 import { UsageError } from "./usage.js";
 
@@ -51,8 +51,10 @@ export interface TracedFor extends Traced {
 
 /** Every file named on the command line: none of them may be written on. `frames`: those without an option. */
 export function inputPaths(frames: string[], options: FrameOptions & TramlineOptions): string[] {
-  const { spectrograph, bias, dark, pixelFlat, badPixels, flat, tramlines } = options;
-  const lists = [frames, flat, tramlines, spectrograph, bias, dark, pixelFlat, badPixels].flatMap((one) => one ?? []);
+  requireOneDetector(options);
+  const { spectrograph, detector, bias, dark, pixelFlat, badPixels, flat, tramlines } = options;
+  const corrections = [spectrograph, detector, bias, dark, pixelFlat, badPixels];
+  const lists = [frames, flat, tramlines, ...corrections].flatMap((one) => one ?? []);
   const paths = lists.filter((path) => path !== "-");
   if (lists.length - paths.length > 1) {
     throw new UsageError("hatchel: - stands for several files, but standard input holds one; name the others.");
@@ -66,10 +68,12 @@ export async function openBench(paths: string[], options: FrameOptions, progress
   if (missing !== undefined) {
     throw new FitsError("unreadable", "there is no such file", "check the name", { file: missing });
   }
-  const { spectrograph: file, bias, dark, pixelFlat, badPixels, hdu } = options;
+  const { spectrograph: file, detector, bias, dark, pixelFlat, badPixels, hdu } = options;
   const spectrograph = file === undefined ? undefined : await readSpectrograph(file);
   progress.stage("reading calibration frames");
-  const given = Object.entries({ bias, dark, pixelFlat, badPixels, hdu }).filter(([, value]) => value !== undefined);
+  const given = Object.entries({ detector, bias, dark, pixelFlat, badPixels, hdu }).filter(
+    ([, value]) => value !== undefined,
+  );
   const calibrations = await loadCalibrations(Object.fromEntries(given), spectrograph);
   const inputs = [...fileInputs(file), ...calibrations.inputs];
   return { options, spectrograph, calibrations, inputs };
@@ -142,8 +146,17 @@ export function requireTramlineSource(command: string, { flat, tramlines }: Tram
 
 /** What the calibration options come to, as lines for HISTORY. */
 export function frameLines(options: FrameOptions & TramlineOptions): string[] {
-  const { spectrograph, bias, dark, pixelFlat, badPixels, hdu, flat, tramlines } = options;
-  const roles = { flat, tramlines, spectrograph, bias, dark, "pixel-flat": pixelFlat, "bad-pixels": badPixels };
+  const { spectrograph, detector, bias, dark, pixelFlat, badPixels, hdu, flat, tramlines } = options;
+  const roles = {
+    flat,
+    tramlines,
+    spectrograph,
+    detector,
+    bias,
+    dark,
+    "pixel-flat": pixelFlat,
+    "bad-pixels": badPixels,
+  };
   const lines = Object.entries(roles).flatMap(([role, files]) =>
     [files ?? []].flat().map((path) => `${role} ${basename(path)}`),
   );

@@ -6,6 +6,7 @@ import { comparisonKeys, gainKeys } from "./compareJson.js";
 import { planKeys } from "./planJson.js";
 import { rebinKeys } from "./rebinJson.js";
 import { runKeys } from "./runJson.js";
+import { stackKeys } from "./stackJson.js";
 import { tablesKeys } from "./tablesJson.js";
 
 const number = z.number().nullable();
@@ -377,6 +378,8 @@ const demo = z.strictObject({
 
 const rebin = z.strictObject({ ...head("rebin"), ...rebinKeys, ...tail });
 
+const stack = z.strictObject({ ...head("stack"), ...stackKeys, ...tail });
+
 const tables = z.strictObject({ ...head("tables"), ...tablesKeys, ...tail });
 
 const failure = z.strictObject({
@@ -397,6 +400,7 @@ export const jsonSchemas = {
   plan,
   run,
   look,
+  stack,
   trace,
   extract,
   compare,

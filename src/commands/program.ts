@@ -40,7 +40,8 @@ async function makeProgram(args: readonly string[]): Promise<Command> {
     const command = program.command(name).summary(summary);
     if (name !== asked) {
       // Enough for the list of commands, where every one shows that it has options.
-      command.argument(takes).option("--json");
+      if (takes !== "") command.argument(takes);
+      command.option("--json");
       continue;
     }
     // Threads take as long to start as the command's module to load.

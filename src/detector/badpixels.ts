@@ -20,7 +20,7 @@ export function markBadPixels(mask: Uint8Array, image: BadPixelImage, geometry: 
       `${image.name}: ${image.nx} × ${image.ny} pixels, but the assembled frame has ${axis1} × ${axis2}; a bad-pixel image shows the frame without overscan.`,
     );
   }
-  const bad = "pixels" in image ? image.pixels : badAmong(image.data);
+  const bad = badPixelNumbers(image);
   if (2 * bad.length > mask.length) {
     throw new DetectorError(
       `${image.name}: ${bad.length} of ${mask.length} pixels are not 0 and so bad; in a bad-pixel image good pixels are 0.`,
@@ -30,6 +30,11 @@ export function markBadPixels(mask: Uint8Array, image: BadPixelImage, geometry: 
     const turned = (at % axis1) * axis2 + Math.floor(at / axis1);
     mask[dispersionAxis === 1 ? at : turned] |= MaskBit.bad;
   }
+}
+
+/** Numbers, y · nx + x of the image, of the bad pixels; rising. */
+export function badPixelNumbers(image: BadPixelImage): readonly number[] {
+  return "pixels" in image ? image.pixels : badAmong(image.data);
 }
 
 function badAmong(data: Float32Array | Float64Array): number[] {

@@ -5,21 +5,20 @@
  *     dark     D  = Σ(e − B) / Σ t          e⁻/s
  *     response r  = flat / its large-scale shape, flats normalised to their levels first */
 import type { Spectrograph } from "../spectrograph.js";
-import { detectorLayout } from "./amplifiers.js";
-import { type Assembled, assemble, type Region } from "./assemble.js";
+import type { Assembled, Region } from "./assemble.js";
 import { type BadPixelImage, badPixelMask } from "./badpixels.js";
 import { medianOf, thinned } from "./clip.js";
-import { combineFrames, type Stack } from "./combine.js";
+import type { Stack } from "./combine.js";
 import { DetectorError } from "./detectorError.js";
-import { darkSeconds } from "./exposure.js";
 import { type DetectorGeometry, MaskBit } from "./frame.js";
+import type { Frames } from "./frameList.js";
 import { requireSameGeometry } from "./geometry.js";
 import type { NoiseFrames } from "./noise.js";
 import { noiseWarnings } from "./noiseWarnings.js";
-import { halvesOf, type Quiet, quietImage } from "./quiet.js";
-import type { RawImage } from "./raw.js";
-import { percent, refuseImpossible } from "./rawSanity.js";
+import { type Quiet, quietImage } from "./quiet.js";
+import { percent } from "./rawSanity.js";
 import { type PixelResponse, pixelResponse } from "./response.js";
+import { type RoleStack, type RoleTreatment, type StackedFrame, type StackRole, stackRole } from "./roleStack.js";
 import { checkRole, MOST_RESPONSE_SCATTER, type Role } from "./roles.js";
 import { seamWarnings } from "./seams.js";
 
@@ -36,10 +35,21 @@ export interface DarkCurrent {
 }
 
 export interface CalibrationInput {
-  role: "bias" | "dark" | "pixel flat" | "bad pixels";
+  /** "detector": a file of such calibrations (`detectorFile.ts`), made from those behind it. */
+  role: "bias" | "dark" | "pixel flat" | "bad pixels" | "detector";
   name: string;
   /** Of the file's HDU; empty for an image that came from no file. */
   checksum: string;
+}
+
+/** A role's frames, used or left out, and what the stack of them came to. */
+export interface StackReport {
+  role: StackRole;
+  frames: StackedFrame[];
+  /** Median of the stack and of its error, e⁻ per unit of scale: a frame for bias, a second for dark, 1 for pixel flats, which
+   * are scaled to their levels. */
+  level: number;
+  noise: number;
 }
 
 /** All images are ny × nx of the turned frame. */
@@ -48,6 +58,8 @@ export interface Calibrations {
   geometry?: DetectorGeometry;
   /** A frame of that readout, for messages. */
   geometryOf?: string;
+  /** e⁻/ADU, one an amplifier: what the frames were read with. */
+  gains?: number[];
   bias?: Stack;
   /** ADU, one an amplifier: the bias frames' level above the overscan, or above 0 where there is none. */
   zeroLevelAdu?: number[];
@@ -57,15 +69,16 @@ export interface Calibrations {
   response?: PixelResponse;
   /** As it was read: image of the assembled frame, not 0 where a pixel is not to be used. */
   badPixels?: BadPixelImage;
+  /** What became of every frame, role by role. */
+  stacks?: StackReport[];
   /** The frames that went in, in order: for HISTORY. */
   inputs: CalibrationInput[];
   assumptions: string[];
   warnings: string[];
 }
 
-type Frames = Iterable<RawImage> | AsyncIterable<RawImage>;
-
-/** Raw frames by role; iterables are read one by one, so that a raw frame need not stay in memory. */
+/** Raw frames by role. Of a `FrameList` one raw frame is in memory at a time, whatever their number; other iterables are
+ * kept whole while their stack is made. */
 export interface CalibrationFrames {
   bias?: Frames;
   dark?: Frames;
@@ -82,23 +95,24 @@ export function noCalibrations(): Calibrations {
 }
 
 /** Combines the frames of each role.
- * @throws DetectorError for a frame that cannot play its role, and for frames of different readouts. */
+ * @throws DetectorError for a frame that cannot play its role, unless the others can do without it, and for frames of
+ * different readouts. */
 export async function makeCalibrations(frames: CalibrationFrames, spectrograph?: Spectrograph): Promise<Calibrations> {
   const made = noCalibrations();
-  const bias = await assembled(frames.bias, "bias", made, spectrograph);
-  if (bias.length > 0) {
-    made.bias = stackBias(bias, made);
-    made.zeroLevelAdu = zeroLevels(made.bias, bias[0]);
+  const biasFrames = await stackOf("bias", frames.bias, made, spectrograph);
+  if (biasFrames) {
+    made.bias = stackBias(biasFrames, made);
+    made.zeroLevelAdu = zeroLevels(made.bias, biasFrames);
   }
-  const dark = await assembled(frames.dark, "dark", made, spectrograph);
-  if (dark.length > 0) made.dark = stackDark(dark, made);
-  const flats = await assembled(frames.pixelFlat, "pixel flat", made, spectrograph);
-  const pairs: NoiseFrames = { bias: firstTwo(bias), flats: firstTwo(flats) };
+  const darkFrames = await stackOf("dark", frames.dark, made, spectrograph);
+  if (darkFrames) made.dark = stackDark(darkFrames, made);
+  const flats = await stackOf("pixel flat", frames.pixelFlat, made, spectrograph);
+  const pairs: NoiseFrames = { bias: biasFrames?.raws ?? [], flats: flats?.raws ?? [] };
   if (made.zeroLevelAdu) pairs.zeroLevelAdu = made.zeroLevelAdu;
   made.warnings.push(...noiseWarnings(pairs, spectrograph));
-  if (flats.length > 0) {
+  if (flats) {
     made.response = stackFlats(flats, made);
-    made.toldByPixelFlats = flats.length > 1 ? "gains and seams" : "seams";
+    made.toldByPixelFlats = flats.names.length > 1 ? "gains and seams" : "seams";
   }
   if (frames.badPixels) {
     if (made.geometry) badPixelMask(frames.badPixels, made.geometry); // complains early
@@ -108,46 +122,50 @@ export async function makeCalibrations(frames: CalibrationFrames, spectrograph?:
   return made;
 }
 
-interface CalibrationFrame extends Assembled {
-  seconds: number;
-  /** The first two of a role: for gain and read noise. */
-  raw?: RawImage;
-}
-
-function firstTwo(frames: CalibrationFrame[]): RawImage[] {
-  return frames.flatMap(({ raw }) => (raw ? [raw] : []));
-}
-
 /** ADU, one an amplifier. */
-function zeroLevels({ mean }: Stack, { nx, regions }: CalibrationFrame): number[] {
+function zeroLevels({ mean }: Stack, { nx, regions }: RoleStack): number[] {
   return regions.map((region) => medianOf(thinned(cutOut(mean, nx, region))) / region.amplifier.gain);
 }
 
-async function assembled(
+async function stackOf(
+  role: StackRole,
   frames: Frames | undefined,
-  role: "bias" | "dark" | "pixel flat",
   made: Calibrations,
   spectrograph: Spectrograph | undefined,
-): Promise<CalibrationFrame[]> {
-  const list: CalibrationFrame[] = [];
-  if (frames === undefined) return list;
-  for await (const raw of frames) {
-    refuseImpossible(raw, spectrograph);
-    const frame = assemble(raw, detectorLayout(raw, spectrograph));
-    if (made.geometry === undefined) {
-      made.geometry = frame.layout.geometry;
-      made.geometryOf = raw.name;
-    } else requireSameGeometry(made.geometry, made.geometryOf!, frame.layout.geometry, raw.name);
-    requireZeroLevel(frame, role, made);
-    requireReadNoise(frame);
+): Promise<RoleStack | undefined> {
+  if (frames === undefined) return undefined;
+  const stacked = await stackRole(frames, treatmentOf(role, made), spectrograph);
+  if (stacked === undefined) return undefined;
+  made.warnings.push(...stacked.warnings);
+  made.assumptions.push(...stacked.assumptions);
+  made.inputs.push(...stacked.frames.filter(({ used }) => used).map((frame) => inputOf(frame, role)));
+  made.gains ??= stacked.regions.map(({ amplifier }) => amplifier.gain);
+  const { mean, variance } = stacked.stack;
+  const report = { role, frames: stacked.frames, level: medianOf(thinned(mean)) };
+  made.stacks = [...(made.stacks ?? []), { ...report, noise: Math.sqrt(medianOf(thinned(variance))) }];
+  return stacked;
+}
+/** What a role's frames are asked and freed of before they are combined. */
+function treatmentOf(role: StackRole, made: Calibrations): RoleTreatment {
+  return {
+    role,
+    photons: role !== "bias",
+    accept: (raw, frame) => {
+      if (made.geometry === undefined) {
+        made.geometry = frame.layout.geometry;
+        made.geometryOf = raw.name;
+      } else requireSameGeometry(made.geometry, made.geometryOf!, frame.layout.geometry, raw.name);
+      requireZeroLevel(frame, role, made);
+      requireReadNoise(frame);
+    },
     // The check looks at the frame before bias structure is off: a few electrons do not matter to it.
-    made.warnings.push(...checkRole(raw, frame, role), ...frame.layout.warnings);
-    made.assumptions.push(...frame.layout.assumptions);
-    made.inputs.push(inputOf(raw, role));
-    const kept = role !== "dark" && list.length < 2 ? { raw } : {};
-    list.push({ ...frame, ...kept, seconds: darkSeconds(raw) });
-  }
-  return list;
+    warningsOf: (raw, frame) => [...checkRole(raw, frame, role), ...frame.layout.warnings],
+    prepare: (frame, seconds) => {
+      if (role !== "bias") subtractBias(frame, made.bias);
+      if (role === "pixel flat") subtractDark(frame, made.dark, seconds);
+    },
+    scaleOf: (frame, seconds) => (role === "bias" ? 1 : role === "dark" ? seconds : levelOf(frame)),
+  };
 }
 
 function inputOf(raw: { name: string; checksum?: string }, role: CalibrationInput["role"]): CalibrationInput {
@@ -176,30 +194,25 @@ export function requireReadNoise({ name, regions }: Assembled): void {
   );
 }
 
-function stackBias(frames: CalibrationFrame[], made: Calibrations): Stack {
-  const { nx, ny, regions } = frames[0];
-  const scaled = frames.map((frame) => ({ ...frame, scale: 1 }));
-  const stack = combineFrames(scaled, nx, ny, false);
-  warnClipped(frames, stack, "bias", made);
-  const quiet = quietImage({ nx, ny, ...stack, regions, halves: halvesOf(scaled), shared: regions.map(() => 0) });
+function stackBias(frames: RoleStack, made: Calibrations): Stack {
+  const { nx, ny, regions, stack, halves } = frames;
+  warnClipped(frames, "bias", made);
+  const quiet = quietImage({ nx, ny, ...stack, regions, halves, shared: regions.map(() => 0) });
   tellQuiet(frames, quiet, "bias", 1, made);
   return stack;
 }
 
-function stackDark(frames: CalibrationFrame[], made: Calibrations): DarkCurrent {
-  const { nx, ny, regions } = frames[0];
-  for (const frame of frames) subtractBias(frame, made.bias);
-  const scaled = frames.map((frame) => ({ ...frame, scale: frame.seconds }));
-  const stack = combineFrames(scaled, nx, ny, true);
-  warnClipped(frames, stack, "dark", made);
-  const seconds = frames.reduce((sum, frame) => sum + frame.seconds, 0);
-  const biasPerSecond = made.bias ? frames.length / seconds : 0;
+function stackDark(frames: RoleStack, made: Calibrations): DarkCurrent {
+  const { nx, ny, regions, stack, halves, scales } = frames;
+  warnClipped(frames, "dark", made);
+  const seconds = scales.reduce((sum, one) => sum + one, 0);
+  const biasPerSecond = made.bias ? scales.length / seconds : 0;
   const typicalRate = regions.map((region) => Math.max(0, medianOf(thinned(cutOut(stack.mean, nx, region)))));
   const shared = regions.map((region) =>
     made.bias ? biasPerSecond ** 2 * medianOf(thinned(cutOut(made.bias.variance, nx, region))) : 0,
   );
-  const quiet = quietImage({ nx, ny, ...stack, regions, halves: halvesOf(scaled), shared });
-  tellQuiet(frames, quiet, "dark", seconds / frames.length, made);
+  const quiet = quietImage({ nx, ny, ...stack, regions, halves, shared });
+  tellQuiet(frames, quiet, "dark", seconds / scales.length, made);
   const { own } = quiet;
   const dark: DarkCurrent = { rate: stack.mean, rateVariance: stack.variance, biasPerSecond, own, typicalRate };
   regions.forEach((region, k) => {
@@ -211,13 +224,13 @@ function stackDark(frames: CalibrationFrame[], made: Calibrations): DarkCurrent 
   return dark;
 }
 
-function tellQuiet(frames: CalibrationFrame[], quiet: Quiet, role: "bias" | "dark", scale: number, made: Calibrations) {
-  const told = frames[0].regions.filter((_, k) => quiet.isQuiet[k]).map(({ amplifier }) => amplifier.number);
+function tellQuiet(frames: RoleStack, quiet: Quiet, role: "bias" | "dark", scale: number, made: Calibrations) {
+  const told = frames.regions.filter((_, k) => quiet.isQuiet[k]).map(({ amplifier }) => amplifier.number);
   if (told.length === 0) return;
   const worst = scale * Math.max(...quiet.patternBelow.filter((_, k) => quiet.isQuiet[k]));
   const called = told.length === 1 ? `amplifier ${told[0]}` : `amplifiers ${told.join(", ")}`;
   made.assumptions.push(
-    `${frames[0].name}: ${called}: the ${role} frames agree on no difference between pixels over ${worst.toFixed(2)} e⁻ rms, so a smooth ${role}, with the pixels that stand out, is taken off instead of each pixel's own noise.`,
+    `${frames.names[0]}: ${called}: the ${role} frames agree on no difference between pixels over ${worst.toFixed(2)} e⁻ rms, so a smooth ${role}, with the pixels that stand out, is taken off instead of each pixel's own noise.`,
   );
 }
 
@@ -233,26 +246,16 @@ function forEachPixel({ x0, x1, y0, y1 }: Region, nx: number, visit: (at: number
   for (let y = y0; y < y1; y++) for (let at = y * nx + x0; at < y * nx + x1; at++) visit(at);
 }
 
-function stackFlats(frames: CalibrationFrame[], made: Calibrations): PixelResponse {
-  const { nx, ny, regions } = frames[0];
-  for (const frame of frames) {
-    subtractBias(frame, made.bias);
-    subtractDark(frame, made.dark);
-  }
-  const stack = combineFrames(
-    frames.map((frame) => ({ ...frame, scale: levelOf(frame) })),
-    nx,
-    ny,
-    true,
-  );
-  warnClipped(frames, stack, "pixel flat", made);
-  const whole = { name: frames[0].name, nx, ny, electrons: stack.mean, mask: withoutValue(stack.mean), regions };
+function stackFlats(frames: RoleStack, made: Calibrations): PixelResponse {
+  const { nx, ny, regions, stack, names } = frames;
+  warnClipped(frames, "pixel flat", made);
+  const whole = { name: names[0], nx, ny, electrons: stack.mean, mask: withoutValue(stack.mean), regions };
   made.warnings.push(...seamWarnings(whole, true));
   const response = pixelResponse(stack, nx, ny, regions);
   const worst = Math.max(...response.scatter);
   if (!(worst < MOST_RESPONSE_SCATTER)) {
     throw new DetectorError(
-      `${frames.map((frame) => frame.name).join(", ")}: given as pixel flats, but the pixels scatter by ${percent(worst)} about their large-scale shape where a few per cent are expected; ribbons or lines of light cannot serve, give frames of an evenly lit detector.`,
+      `${names.join(", ")}: given as pixel flats, but the pixels scatter by ${percent(worst)} about their large-scale shape where a few per cent are expected; ribbons or lines of light cannot serve, give frames of an evenly lit detector.`,
     );
   }
   return response;
@@ -262,18 +265,18 @@ function withoutValue(image: Float32Array): Uint8Array {
   return Uint8Array.from(image, (value) => (Number.isNaN(value) ? MaskBit.missing : 0));
 }
 
-function levelOf(frame: CalibrationFrame): number {
+function levelOf(frame: Assembled): number {
   return medianOf(thinned(frame.electrons));
 }
 
-function subtractBias(frame: CalibrationFrame, bias: Stack | undefined): void {
+function subtractBias(frame: Assembled, bias: Stack | undefined): void {
   if (bias === undefined) return;
   for (let i = 0; i < frame.electrons.length; i++) frame.electrons[i] -= bias.mean[i];
 }
 
-function subtractDark(frame: CalibrationFrame, dark: DarkCurrent | undefined): void {
-  if (dark === undefined || !(frame.seconds > 0)) return;
-  for (let i = 0; i < frame.electrons.length; i++) frame.electrons[i] -= dark.rate[i] * frame.seconds;
+function subtractDark(frame: Assembled, dark: DarkCurrent | undefined, seconds: number): void {
+  if (dark === undefined || !(seconds > 0)) return;
+  for (let i = 0; i < frame.electrons.length; i++) frame.electrons[i] -= dark.rate[i] * seconds;
 }
 
 function cutOut(image: Float32Array, nx: number, { x0, x1, y0, y1 }: Region): Float32Array {
@@ -282,11 +285,11 @@ function cutOut(image: Float32Array, nx: number, { x0, x1, y0, y1 }: Region): Fl
   return out;
 }
 
-function warnClipped(frames: CalibrationFrame[], { clippedShare }: Stack, role: Role, made: Calibrations): void {
-  clippedShare.forEach((share, i) => {
+function warnClipped({ names, stack }: RoleStack, role: StackRole, made: Calibrations): void {
+  stack.clippedShare.forEach((share, i) => {
     if (share <= MOST_CLIPPED) return;
     made.warnings.push(
-      `${frames[i].name}: ${percent(share)} of its pixels disagree with the other ${role} frames by more than read noise and gain explain; the frame, or the gain or read noise in use, is wrong.`,
+      `${names[i]}: ${percent(share)} of its pixels disagree with the other ${role} frames by more than read noise and gain explain; the frame, or the gain or read noise in use, is wrong.`,
     );
   });
 }

@@ -45,6 +45,7 @@ export function correctFrame(
     ...(raw.warnings ?? []),
     ...layout.warnings,
     ...calibrations.warnings,
+    ...otherGains(frame, calibrations),
     ...untold(frameWarnings(frame), calibrations),
   ];
   if (options.role) warnings.push(...checkRole(raw, frame, options.role));
@@ -73,6 +74,17 @@ function untold(warnings: string[], calibrations: Calibrations): string[] {
   const subject = (sentence: string) => /the read noise of amplifier \d+/.exec(sentence)?.[0];
   const told = calibrations.warnings.map(subject);
   return warnings.filter((sentence) => subject(sentence) === undefined || !told.includes(subject(sentence)));
+}
+
+/** Electrons of another gain are electrons all the same, but the structure of a bias is the electronics'. */
+function otherGains({ name, regions }: Assembled, { gains, geometryOf }: Calibrations): string[] {
+  return regions.flatMap(({ amplifier: { number, gain } }, k) => {
+    const theirs = gains?.[k] ?? gain;
+    if (!(Math.abs(gain / theirs - 1) > 0.01)) return [];
+    return [
+      `${name}: amplifier ${number} has a gain of ${gain} e⁻/ADU, but ${theirs} in the calibration frames (${geometryOf}); take those of the frame's own gain, or give the right gain in the spectrograph file.`,
+    ];
+  });
 }
 
 function darkTime(raw: RawImage, { dark }: Calibrations): number {

@@ -1,11 +1,16 @@
 /** Calibration frames from files. */
+import { statSync } from "node:fs";
 import { readImage } from "../fits/image.js";
 import { readMask } from "../fits/mask.js";
 import type { Spectrograph } from "../spectrograph.js";
 import { type CalibrationFrames, type Calibrations, makeCalibrations } from "./calibrations.js";
+import type { FrameList } from "./frameList.js";
 import type { RawImage } from "./raw.js";
+import { readDetector } from "./readDetector.js";
 
 export interface CalibrationPaths {
+  /** A file of calibrations made before (`writeDetector`), in place of all the others. */
+  detector?: string;
   bias?: string[];
   dark?: string[];
   pixelFlat?: string[];
@@ -15,19 +20,41 @@ export interface CalibrationPaths {
   hdu?: number;
 }
 
-/** Reads and combines the calibration frames, one raw frame in memory at a time.
+/** Reads and combines the calibration frames, one raw frame in memory at a time; more than seven of a role are read twice.
  * @throws FitsError for files that cannot be read, DetectorError for frames that cannot serve. */
 export async function loadCalibrations(paths: CalibrationPaths, spectrograph?: Spectrograph): Promise<Calibrations> {
+  if (paths.detector !== undefined) return withBadPixels(await readDetector(paths.detector), spectrograph);
   const frames: CalibrationFrames = {};
   for (const role of ["bias", "dark", "pixelFlat"] as const) {
     const files = paths[role] ?? [];
-    if (files.length > 0) frames[role] = readEach(files, paths.hdu);
+    if (files.length > 0) frames[role] = filesOf(files, paths.hdu);
   }
   const bad = paths.badPixels ?? spectrograph?.detector.badPixels;
   if (bad !== undefined) frames.badPixels = await readMask(bad);
   return makeCalibrations(frames, spectrograph);
 }
 
-async function* readEach(files: string[], hdu: number | undefined): AsyncGenerator<RawImage> {
-  for (const file of files) yield await readImage(file, hdu === undefined ? {} : { hdu });
+/** A file that holds no bad pixels leaves those of the spectrograph file. */
+async function withBadPixels(made: Calibrations, spectrograph: Spectrograph | undefined): Promise<Calibrations> {
+  const bad = spectrograph?.detector.badPixels;
+  if (made.badPixels !== undefined || bad === undefined) return made;
+  const badPixels = await readMask(bad);
+  const { name, checksum } = badPixels;
+  return { ...made, badPixels, inputs: [...made.inputs, { role: "bad pixels", name, checksum }] };
+}
+
+function filesOf(files: string[], hdu: number | undefined): FrameList {
+  // What is no plain file (a pipe, standard input) gives its bytes once.
+  const once = new Map<string, Promise<RawImage>>();
+  const read = (file: string) => readImage(file, hdu === undefined ? {} : { hdu });
+  return {
+    length: files.length,
+    read: (index) => {
+      const file = files[index];
+      if (file !== "-" && (statSync(file, { throwIfNoEntry: false })?.isFile() ?? true)) return read(file);
+      const kept = once.get(file) ?? read(file);
+      once.set(file, kept);
+      return kept;
+    },
+  };
 }

@@ -64,21 +64,42 @@ export function quietImage(input: QuietInput): Quiet {
   return quiet;
 }
 
-/** Means of the frames with even and odd numbers, scaled alike; undefined for a single frame. */
-export function halvesOf(frames: StackFrame[]): [Float32Array, Float32Array] | undefined {
-  if (frames.length < 2) return undefined;
-  const half = (first: number) => {
-    const sum = new Float32Array(frames[0].electrons.length);
-    let scale = 0;
-    for (let i = first; i < frames.length; i += 2) {
-      const { electrons, mask } = frames[i];
-      scale += frames[i].scale;
-      for (let at = 0; at < sum.length; at++) sum[at] += mask[at] === 0 ? electrons[at] : Number.NaN;
-    }
-    for (let at = 0; at < sum.length; at++) sum[at] /= scale;
-    return sum;
-  };
-  return [half(0), half(1)];
+/** Means of the frames with even and odd numbers, scaled alike; frames are added in order, and not kept. A pixel that one of
+ * them has no good value for is NaN. */
+export class HalfSums {
+  private n = 0;
+  private readonly sums: [Float32Array, Float32Array];
+  private readonly scales: [number, number] = [0, 0];
+
+  constructor(nPixel: number) {
+    this.sums = [new Float32Array(nPixel), new Float32Array(nPixel)];
+  }
+
+  add({ electrons, mask, scale }: Pick<StackFrame, "electrons" | "mask" | "scale">): void {
+    const half = this.n++ % 2;
+    const sum = this.sums[half];
+    this.scales[half] += scale;
+    for (let at = 0; at < sum.length; at++) sum[at] += mask[at] === 0 ? electrons[at] : Number.NaN;
+  }
+
+  /** The means, in the sums' place; undefined of a single frame. */
+  finish(): [Float32Array, Float32Array] | undefined {
+    if (this.n < 2) return undefined;
+    this.sums.forEach((sum, half) => {
+      const scale = this.scales[half];
+      for (let at = 0; at < sum.length; at++) sum[at] /= scale;
+    });
+    return this.sums;
+  }
+}
+
+/** The same of frames that are all there. */
+export function halvesOf(
+  frames: Pick<StackFrame, "electrons" | "mask" | "scale">[],
+): [Float32Array, Float32Array] | undefined {
+  const halves = new HalfSums(frames[0].electrons.length);
+  for (const frame of frames) halves.add(frame);
+  return halves.finish();
 }
 
 interface Smooth {

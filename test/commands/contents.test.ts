@@ -7,7 +7,7 @@ import { jsonSchemas } from "../../src/commands/json.js";
 test.each(contents)("$name takes what the list says", async ({ name, takes, define }) => {
   const command = new Command(name);
   await define(command);
-  expect(command.usage()).toBe(`[options] ${takes}`);
+  expect(command.usage()).toBe(`[options] ${takes}`.trimEnd());
   expect(command.description()).not.toBe("");
 });
 

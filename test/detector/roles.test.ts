@@ -198,9 +198,17 @@ describe("calibrations of another kind", () => {
       (x, y) => 1000 + ((x * 7 + y * 3) % 5) + (x < 100 ? 15 : 0),
     );
     const bias = [frame("dark", {}, "a.fits", 1), odd, frame("dark", {}, "c.fits", 2), frame("dark", {}, "d.fits", 3)];
-    const { warnings } = await makeCalibrations({ bias });
-    expect(warnings.filter((text) => text.includes("disagree"))).toHaveLength(1);
-    expect(warnings.find((text) => text.includes("disagree"))).toMatch(
+    const { warnings, inputs } = await makeCalibrations({ bias });
+    const [, seen, expected] =
+      /^odd\.fits has a level of ([\d.]+) e⁻ where the other bias frames let expect ([\d.]+) e⁻; it is left out, and 3 of the 4 bias frames remain\.$/.exec(
+        warnings[0],
+      )!;
+    // 15 ADU of 1.6 e⁻ on most of the frame, overscan taken off.
+    expect(Math.abs(Number(seen) - Number(expected) - 24)).toBeLessThan(3.3);
+    expect(inputs.map(({ name }) => name)).toEqual(["a.fits", "c.fits", "d.fits"]);
+    const two = await makeCalibrations({ bias: [bias[0], odd] });
+    expect(two.warnings.filter((text) => text.includes("disagree"))).toHaveLength(1);
+    expect(two.warnings.find((text) => text.includes("disagree"))).toMatch(
       /^odd\.fits: \d+ % of its pixels disagree with the other bias frames by more than read noise and gain explain/,
     );
   });
