@@ -10,6 +10,7 @@ import { Flag, type Spectra } from "../extraction/spectra.js";
 import { splineCovariances } from "./bspline.js";
 import { CalibrationError } from "./errors.js";
 import { fitSky, type Sky } from "./sky.js";
+import { type SkyScales, scaleSky } from "./skyScale.js";
 import type { Throughput } from "./throughput.js";
 import { type WavelengthSolution, wavelengthImage } from "./wavelengths.js";
 
@@ -27,6 +28,8 @@ export interface SpectraCalibration {
   throughput?: Throughput;
   /** Rows, from 0, of fibres that see only sky; absent: the sky is left on. */
   skyFibres?: number[];
+  /** Scale the sky's lines in each fibre, group by group. */
+  scaleLines?: boolean;
   /** What to call the frame in messages. */
   name?: string;
 }
@@ -42,13 +45,13 @@ export interface Calibrated {
   throughput: Throughput | null;
   sky: Sky | null;
   /** Where lines were scaled: how far, for each fibre and group of lines. */
-  scaled: null;
+  scaled: SkyScales | null;
   warnings: string[];
 }
 
 /** @throws CalibrationError when solution or throughput belong to another readout, or the sky cannot be made. */
 export function calibrateSpectra(spectra: Spectra, geometryDigest: string, input: SpectraCalibration): Calibrated {
-  const { solution, throughput = null, skyFibres, zeroPoint = null, name = "the frame" } = input;
+  const { solution, throughput = null, skyFibres, scaleLines = false, zeroPoint = null, name = "the frame" } = input;
   requireReadout(name, spectra, geometryDigest, "wavelengths", solution, "reduce an arc");
   if (throughput !== null) {
     requireReadout(name, spectra, geometryDigest, "throughput", throughput, "measure it on a twilight or fibre flat");
@@ -56,16 +59,34 @@ export function calibrateSpectra(spectra: Spectra, geometryDigest: string, input
   const wavelengths = wavelengthImage(solution, zeroPoint?.pixels ?? 0);
   const relative = throughput?.relative ?? null;
   const sky = skyFibres === undefined ? null : fitSky({ spectra, wavelengths, relative, skyFibres }, name);
+  const flat = applied(spectra, wavelengths, throughput, sky);
+  const scaled =
+    sky === null || !scaleLines
+      ? null
+      : scaleSky(flat, wavelengths, solution.medium, sky.spline.fit, sky.values, sky.lines);
+  if (sky !== null && scaled !== null) takeOffScaled(flat, sky, scaled);
   return {
-    spectra: applied(spectra, wavelengths, throughput, sky),
-    ...{ wavelengths, medium: solution.medium, zeroPoint, throughput, sky, scaled: null },
+    spectra: flat,
+    ...{ wavelengths, medium: solution.medium, zeroPoint, throughput, sky, scaled },
     warnings: sky === null ? [] : skyWarnings(sky, name),
   };
 }
 
-function requireReadout(
+/** In place: what the lines are more, or less, in each fibre. */
+function takeOffScaled({ flux, variance }: Spectra, sky: Sky, { extra, variance: uncertain }: SkyScales): void {
+  for (let i = 0; i < flux.length; i++) {
+    flux[i] -= extra[i];
+    variance[i] += uncertain[i];
+    sky.values[i] += extra[i];
+    sky.variance[i] += uncertain[i];
+  }
+}
+
+/** @throws CalibrationError when what is given belongs to another readout than the spectra. `what` and `remedy`: parts of the
+ * sentence. */
+export function requireReadout(
   name: string,
-  { nFibre, nx }: Spectra,
+  { nFibre, nx }: { nFibre: number; nx: number },
   digest: string,
   what: string,
   theirs: { nFibre: number; nx: number; geometryDigest: string },
