@@ -2,6 +2,13 @@
 
 export { type Calibrated, calibrateSpectra, type SpectraCalibration } from "./calibration/calibrate.js";
 export { calibratedHdus, calibrationCards } from "./calibration/calibratedHdus.js";
+export { combinedHdus } from "./calibration/combineFile.js";
+export {
+  type CombinedSpectra,
+  type CombineOptions,
+  combineSpectra,
+  type FrameShare,
+} from "./calibration/combineSpectra.js";
 export { CalibrationError } from "./calibration/errors.js";
 export { type GridRequest, gridWavelength, type Medium, makeGrid, type SpectralGrid } from "./calibration/grid.js";
 export { crowdedLines, joinLines, type LineList, lampLines } from "./calibration/lamps.js";

@@ -2,7 +2,7 @@ import fc from "fast-check";
 import { beforeAll, describe, expect, it } from "vitest";
 import { quantileOfSorted } from "../src/detector/clip.js";
 import { type Kernels, loadKernels } from "../src/kernels/module.js";
-import { median } from "../src/reference/median.js";
+import { median, weightedMedian } from "../src/reference/median.js";
 
 let kernels: Kernels;
 beforeAll(async () => {
@@ -53,4 +53,11 @@ describe("median", () => {
       }),
     );
   });
+});
+
+it("a weighted median parts the weight in two", () => {
+  expect(weightedMedian([5, 1, 9], [1, 1, 1])).toBe(5);
+  expect(weightedMedian([5, 1, 9], [1, 1, 3])).toBe(9);
+  expect(weightedMedian([5, 1, 9], [0, 4, 3])).toBe(1);
+  expect(weightedMedian([], [])).toBeNaN();
 });

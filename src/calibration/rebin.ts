@@ -116,7 +116,7 @@ function meanOfRow(rows: Overlaps, row: ArrayLike<number>): Float64Array {
 }
 
 /** Bits of all pixels under a bin; of a bin that has no value those that took it. */
-function binFlags(rows: Overlaps, positions: Float64Array, usable: Uint8Array, flags: Int32Array): Int32Array {
+export function binFlags(rows: Overlaps, positions: Float64Array, usable: Uint8Array, flags: Int32Array): Int32Array {
   const nx = usable.length;
   return Int32Array.from({ length: rows.nBin }, (_, b) => {
     const low = Math.min(positions[b], positions[b + 1]);

@@ -87,6 +87,12 @@ export const contents: Entry[] = [
     define: async (command) => (await import("./recover.js")).addRecover(command),
   },
   {
+    name: "combine",
+    takes: "<SPECTRA...>",
+    summary: "frames of one field to one set of spectra",
+    define: async (command) => (await import("./combine.js")).addCombine(command),
+  },
+  {
     name: "rebin",
     takes: "<SPECTRA>",
     summary: "spectra on a common wavelength grid",

@@ -2,6 +2,7 @@
  * added under the same `format`; none is renamed or removed. */
 import { z } from "zod";
 import { Flag } from "../reference/bits.js";
+import { combineKeys } from "./combineJson.js";
 import { comparisonKeys, gainKeys } from "./compareJson.js";
 import { planKeys } from "./planJson.js";
 import { rebinKeys } from "./rebinJson.js";
@@ -376,6 +377,8 @@ const demo = z.strictObject({
   ...tail,
 });
 
+const combine = z.strictObject({ ...head("combine"), ...combineKeys, ...tail });
+
 const rebin = z.strictObject({ ...head("rebin"), ...rebinKeys, ...tail });
 
 const stack = z.strictObject({ ...head("stack"), ...stackKeys, ...tail });
@@ -406,6 +409,7 @@ export const jsonSchemas = {
   compare,
   verify,
   recover,
+  combine,
   rebin,
   tables,
   failure,

@@ -40,3 +40,16 @@ export function select(values: Float64Array, n: number, k: number): number {
   }
   return values[k];
 }
+
+/** The value at which half of the weight lies at or below; NaN for an empty list. */
+export function weightedMedian(values: ArrayLike<number>, weights: ArrayLike<number>): number {
+  const order = Array.from({ length: values.length }, (_, i) => i).sort((a, b) => values[a] - values[b]);
+  let half = 0;
+  for (let i = 0; i < weights.length; i++) half += weights[i] / 2;
+  let sum = 0;
+  for (const i of order) {
+    sum += weights[i];
+    if (sum >= half) return values[i];
+  }
+  return Number.NaN;
+}

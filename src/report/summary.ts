@@ -82,7 +82,7 @@ function countRow(flags: Int32Array, from: number, end: number, counts: FlagCoun
 /** `fibreSignalToNoise`: what `medianSignalToNoise` says of them, where that is known already. */
 export function summariseSpectra(
   spectra: Spectra,
-  { state }: Tramlines,
+  { state }: Pick<Tramlines, "state">,
   fibreSignalToNoise = medianSignalToNoise(spectra),
 ): SpectraSummary {
   const { nFibre, nx, flags } = spectra;
