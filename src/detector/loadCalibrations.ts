@@ -1,11 +1,9 @@
 /** Calibration frames from files. */
 import { statSync } from "node:fs";
-import { readImage } from "../fits/image.js";
+import { type FitsImage, readImage } from "../fits/image.js";
 import { readMask } from "../fits/mask.js";
 import type { Spectrograph } from "../spectrograph.js";
 import { type CalibrationFrames, type Calibrations, makeCalibrations } from "./calibrations.js";
-import type { FrameList } from "./frameList.js";
-import type { RawImage } from "./raw.js";
 import { readDetector } from "./readDetector.js";
 
 export interface CalibrationPaths {
@@ -27,7 +25,7 @@ export async function loadCalibrations(paths: CalibrationPaths, spectrograph?: S
   const frames: CalibrationFrames = {};
   for (const role of ["bias", "dark", "pixelFlat"] as const) {
     const files = paths[role] ?? [];
-    if (files.length > 0) frames[role] = filesOf(files, paths.hdu);
+    if (files.length > 0) frames[role] = imageFiles(files, paths.hdu);
   }
   const bad = paths.badPixels ?? spectrograph?.detector.badPixels;
   if (bad !== undefined) frames.badPixels = await readMask(bad);
@@ -43,16 +41,18 @@ async function withBadPixels(made: Calibrations, spectrograph: Spectrograph | un
   return { ...made, badPixels, inputs: [...made.inputs, { role: "bad pixels", name, checksum }] };
 }
 
-function filesOf(files: string[], hdu: number | undefined): FrameList {
-  // What is no plain file (a pipe, standard input) gives its bytes once.
-  const once = new Map<string, Promise<RawImage>>();
-  const read = (file: string) => readImage(file, hdu === undefined ? {} : { hdu });
+/** Files as frames that can be read again. What is no plain file (a pipe, standard input) gives its bytes once, and is kept.
+ * `forFrame`: as for `readImage`. */
+export function imageFiles(files: string[], hdu: number | undefined) {
+  const once = new Map<string, Promise<FitsImage>>();
   return {
     length: files.length,
-    read: (index) => {
+    read: (index: number, forFrame = false): Promise<FitsImage> => {
       const file = files[index];
-      if (file !== "-" && (statSync(file, { throwIfNoEntry: false })?.isFile() ?? true)) return read(file);
-      const kept = once.get(file) ?? read(file);
+      const options = { forFrame, ...(hdu === undefined ? {} : { hdu }) };
+      if (file !== "-" && (statSync(file, { throwIfNoEntry: false })?.isFile() ?? true))
+        return readImage(file, options);
+      const kept = once.get(file) ?? readImage(file, { ...options, forFrame: false });
       once.set(file, kept);
       return kept;
     },

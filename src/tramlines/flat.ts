@@ -45,6 +45,13 @@ export function combineFlats(frames: Frame[]): Flat {
   return { name, nFrame: frames.length, nx: first.nx, ny: first.ny, ...meanOf(frames, first), frame: first };
 }
 
+type FlatLight = Pick<Frame, "electrons" | "mask">;
+
+/** What may be taken for a flat: flats that were combined already, or are to be. */
+export function flatOf(given: Flat | Frame | Frame[]): Flat {
+  return "nUsed" in given ? given : combineFlats([given].flat());
+}
+
 type FlatPixels = Pick<Flat, "electrons" | "mask" | "nUsed">;
 
 /** Of one frame nothing is copied but what it may lack: a mark on pixels without value. */
@@ -67,7 +74,7 @@ function meanOf(frames: Frame[], first: Frame): FlatPixels {
   const electrons = new Float32Array(nx * ny);
   const mask = new Uint8Array(nx * ny);
   const nUsed = new Uint8Array(nx * ny);
-  const levels = frames.map((frame) => relativeLevel(frame, first));
+  const levels = frames.map((frame) => (frame === first ? 1 : flatLevel(frame, first)));
   const light = frames.map((frame) => frame.electrons);
   const bits = frames.map((frame) => frame.mask);
   const values = new Float64Array(frames.length);
@@ -89,7 +96,7 @@ function meanOf(frames: Frame[], first: Frame): FlatPixels {
       mask[at] = shared === 0 ? MaskBit.bad : shared;
       continue;
     }
-    const limit = lowest + KAPPA_PAIR * Math.sqrt(2 * pixelVariance(first, at, lowest) + (0.02 * lowest) ** 2);
+    const limit = lowest + KAPPA_PAIR * Math.sqrt(pairSigma2(first, at, lowest));
     let sum = 0;
     let kept = 0;
     for (let i = 0; i < n; i++) {
@@ -104,8 +111,7 @@ function meanOf(frames: Frame[], first: Frame): FlatPixels {
 }
 
 /** How bright a frame is against another, from the pixels that are bright in both. */
-function relativeLevel(frame: Frame, first: Frame): number {
-  if (frame === first) return 1;
+export function flatLevel(frame: FlatLight, first: FlatLight): number {
   const ratios: number[] = [];
   const step = Math.max(1, Math.floor(frame.electrons.length / 50_000)) | 1;
   let brightest = 0;
@@ -119,6 +125,11 @@ function relativeLevel(frame: Frame, first: Frame): number {
   }
   const level = medianOf(ratios);
   return level > 0.05 && level < 20 ? level : 1;
+}
+
+/** Variance of the difference of two flats at a pixel of `level` electrons, 2 % of it allowed for what is no noise. e⁻². */
+export function pairSigma2(frame: Frame, at: number, level: number): number {
+  return 2 * pixelVariance(frame, at, level) + (0.02 * level) ** 2;
 }
 
 /** Variance of one frame's pixel whose model is `model` electrons, e⁻². */

@@ -4,10 +4,11 @@ import type { Calibrations } from "../detector/calibrations.js";
 import { correctFrame } from "../detector/correct.js";
 import { flatWarnings } from "../detector/flatWarnings.js";
 import type { Frame } from "../detector/frame.js";
+import { imageFiles } from "../detector/loadCalibrations.js";
 import type { RawImage } from "../detector/raw.js";
 import type { Header } from "../fits/header.js";
-import { readImage } from "../fits/image.js";
 import type { Spectrograph } from "../spectrograph.js";
+import { stackFlats } from "./flatStack.js";
 import type { SlitLayout } from "./layout.js";
 import { chooseProfile, type ProfileKind, type TriedProfile } from "./profiles.js";
 import { type Tracing, traceFlat } from "./trace.js";
@@ -48,29 +49,35 @@ export async function traceFlatFiles(
   { calibrations, spectrograph, inputs }: FlatBench,
   { profile, hdu, onStage = () => {} }: FlatFileOptions,
 ): Promise<TracedFlats> {
-  const frames: Frame[] = [];
-  const raws: RawImage[] = [];
-  for (const flat of flats) {
-    onStage(`reading ${basename(flat)}`);
-    // The first two are asked for the gain later on.
-    const raw = await readImage(flat, { hdu, forFrame: raws.length === 2 });
-    inputs.push({ name: raw.name, checksum: raw.checksum });
-    frames.push(correctFrame(raw, calibrations, spectrograph, { role: "fibre flat" }));
-    if (raws.length < 2) raws.push(raw);
-  }
+  const files = imageFiles(flats, hdu);
+  const raws = new Map<number, RawImage>();
+  const sums = new Map<number, { name: string; checksum: string }>();
+  const read = async (index: number): Promise<Frame> => {
+    onStage(`reading ${basename(flats[index])}`);
+    // Two are asked for the gain later on.
+    const forFrame = raws.size === 2 && !raws.has(index);
+    const raw = await files.read(index, forFrame);
+    sums.set(index, { name: raw.name, checksum: raw.checksum });
+    const frame = correctFrame(raw, calibrations, spectrograph, { role: "fibre flat" });
+    if (!forFrame) raws.set(index, raw);
+    return frame;
+  };
+  const { flat, used, ...notes } = await stackFlats({ length: flats.length, read });
+  inputs.push(...used.map((index) => sums.get(index)!));
   onStage("tracing the flat");
   const { layout, warning } = slitLayout(spectrograph);
-  const traced = await traceFlat(frames, layout);
-  const detector = flatWarnings(raws, frames, calibrations, spectrograph);
+  const traced = await traceFlat(flat, layout);
+  const pair = used.flatMap((index) => raws.get(index) ?? []);
+  const detector = flatWarnings(pair, [flat.frame], calibrations, spectrograph);
   onStage("measuring the profile");
-  const { tramlines, tried } = await chooseProfile(frames, traced.tramlines, profile);
+  const { tramlines, tried } = await chooseProfile(flat, traced.tramlines, profile);
   const tracing = { ...traced, tramlines, tried };
   return {
     tramlines,
     tracing,
-    header: frames[0].header,
-    assumptions: [...frames.flatMap((frame) => frame.assumptions), ...traced.assumptions],
-    warnings: [...warning, ...frames.flatMap((frame) => frame.warnings), ...detector, ...traced.warnings],
+    header: flat.frame.header,
+    assumptions: [...notes.assumptions, ...traced.assumptions],
+    warnings: [...warning, ...notes.warnings, ...detector, ...traced.warnings],
   };
 }
 

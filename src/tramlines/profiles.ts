@@ -8,7 +8,7 @@ import { medianOf } from "../detector/clip.js";
 import type { Frame } from "../detector/frame.js";
 import { type Kernels, loadKernels } from "../kernels/module.js";
 import { TraceError } from "./errors.js";
-import { combineFlats, type Flat } from "./flat.js";
+import { type Flat, flatOf } from "./flat.js";
 import { activeFibres, linesOf, profileTable } from "./profileTable.js";
 import { backgroundUnder, heldOutMisfits, type Judged, judgeColumns, meanWithError } from "./shape/judge.js";
 import { type MeasuredShape, measureShape } from "./shape/measure.js";
@@ -48,12 +48,12 @@ const tellingNoise = 0.01;
 /** Gives `tramlines`, traced with Gaussians, the profile of `kind`; auto: Gaussians unless a shape fits held-out columns
  * significantly better, and of the shapes the empirical one unless the Gauss–Hermite series fits them better. */
 export async function chooseProfile(
-  flats: Frame[],
+  flats: Frame[] | Flat,
   tramlines: Tramlines,
   kind: ProfileKind | "auto" = "auto",
 ): Promise<ProfileChoice> {
   const kernels = await loadKernels();
-  const flat = combineFlats(flats);
+  const flat = flatOf(flats);
   const candidates = (kind === "auto" ? simplestFirst : [kind]).flatMap((model) => {
     if (model === "gaussian") return [gaussianCandidate(kernels, flat, tramlines)];
     return candidateOrNone(kernels, flat, tramlines, model, kind === "auto");

@@ -5,7 +5,7 @@ import type { Frame } from "../detector/frame.js";
 import { loadKernels } from "../kernels/module.js";
 import { cutThrough } from "./cut.js";
 import { findPeaks } from "./find.js";
-import { combineFlats, type Flat } from "./flat.js";
+import { type Flat, flatOf } from "./flat.js";
 import type { SlitLayout } from "./layout.js";
 import { flatWarnings, requireFlat } from "./misuse.js";
 import { fibres, type Naming, nameFibres, numberFibres } from "./name.js";
@@ -32,15 +32,15 @@ export interface Tracing {
 /** A fibre with less than this share of the light around it is dim. */
 const DIM_SHARE = 0.3;
 
-/** Traces fibre flats of one readout window. `layout`: the slit; without it fibres are numbered as found.
+/** Traces fibre flats of one readout window, combined already or not. `layout`: the slit; without it fibres are numbered as found.
  * @throws TraceError when the frame is no usable fibre flat, NamingError when fibres cannot be named with certainty. */
 export async function traceFlat(
-  flat: Frame | Frame[],
+  flat: Frame | Frame[] | Flat,
   layout?: SlitLayout,
   options: TraceOptions = {},
 ): Promise<Tracing> {
   const kernels = await loadKernels();
-  const combined = combineFlats([flat].flat());
+  const combined = flatOf(flat);
   requireFlat(kernels, combined);
   const cut = cutThrough(kernels, combined);
   const peaks = findPeaks(kernels, cut, combined.name);
