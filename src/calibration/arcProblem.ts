@@ -3,10 +3,10 @@
  * Columns become t in [−1, 1], wavelengths u = (λ − middle)/half of the approximate range, so that a range that is right reads
  * u = t. Whatever its direction and size, a reading of the arc is
  *
- *     u(t) = a₀ + a₁ [t + q P₂(t) + c P₃(t)],   |a₀| ≤ 0.6,  0.7 ≤ |a₁| ≤ 1.3,  |q| ≤ 0.06,  |c| ≤ 0.015
+ *     u(t) = a₀ + a₁ [t + q P₂(t) + c P₃(t)],   |a₀| ≤ 0.8,  0.7 ≤ |a₁| ≤ 1.4,  |q| ≤ 0.06,  |c| ≤ 0.015
  *
- * shifted by up to 30 % of the range, stretched by up to 30 %, or turned round (a₁ < 0); gratings and grisms bend less than q and c
- * allow. */
+ * shifted by up to 30 % of the range, stretched by up to 30 % (of the true one or of the approximate one), or turned round (a₁ < 0);
+ * gratings and grisms bend less than q and c allow. */
 import { legendreArgument } from "../reference/legendre.js";
 import type { LineList } from "./lamps.js";
 
@@ -21,7 +21,7 @@ export interface IdentifiablePeak {
   fwhm?: number;
 }
 
-export const LIMITS = { shift: 0.6, shortest: 0.7, longest: 1.3, curve: 0.06, cubic: 0.015 };
+export const LIMITS = { shift: 0.8, shortest: 0.7, longest: 1.4, curve: 0.06, cubic: 0.015 };
 
 export interface ArcProblem {
   nx: number;
@@ -41,6 +41,8 @@ export interface ArcProblem {
   lineRank: Float64Array;
   /** nLine + 1: sums of the weights before each line. */
   weightBelow: Float64Array;
+  /** nLine: room for matching, the peak that a line is given to. */
+  owner: Int32Array;
 }
 
 export function arcProblem(
@@ -72,6 +74,7 @@ export function arcProblem(
     weight,
     lineRank: ranksByLamp(index, lines),
     weightBelow,
+    owner: new Int32Array(index.length),
   };
 }
 

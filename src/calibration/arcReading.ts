@@ -10,7 +10,7 @@
 import { factorBand, solveBand } from "../reference/banded.js";
 import { log } from "../reference/log.js";
 import { type ArcProblem, brightnessRatio, LIMITS } from "./arcProblem.js";
-import { bent, lowerBound, type Seed } from "./arcSearch.js";
+import { bent, lowerBound } from "./arcSearch.js";
 
 export interface Reading {
   /** u = a₀ + a₁ [t + q P₂(t) + c P₃(t)]. */
@@ -32,6 +32,13 @@ type Curve = Pick<Reading, "shift" | "stretch" | "curve" | "cubic">;
 /** px, at 1024 columns; wider frames have wider lines. */
 const TOLERANCES = [0.3, 0.6, 1.2];
 const ROUNDS_AT_END = 3;
+/** How far a reading may move beyond the limits, so that one that begins inside does not stop halfway. */
+const BEYOND = 0.1;
+/** Outermost matches that are left out together, and matches that must be left. */
+const MOST_AT_END = 5;
+const LEFT_AT_LEAST = 4;
+/** ln 1/1000. */
+const RARE = -6.9;
 
 export function readingAt(curve: Curve, t: number): number {
   return curve.shift + curve.stretch * bent(t, curve.curve, curve.cubic);
@@ -75,7 +82,7 @@ function follow(problem: ArcProblem, curve: Curve, width: number, line: Int32Arr
 function matchLines(problem: ArcProblem, curve: Curve, width: number, line: Int32Array): number {
   const { t, u } = problem;
   const limit = width * problem.pixel * Math.abs(curve.stretch);
-  const taken = new Map<number, number>();
+  const taken = problem.owner.fill(-1);
   let nMatch = 0;
   for (let i = 0; i < t.length; i++) {
     line[i] = -1;
@@ -85,14 +92,14 @@ function matchLines(problem: ArcProblem, curve: Curve, width: number, line: Int3
     if (j < 0) continue;
     const off = Math.abs(u[j] - here);
     if (!(off <= limit)) continue;
-    const rival = taken.get(j);
-    if (rival !== undefined) {
+    const rival = taken[j];
+    if (rival >= 0) {
       if (Math.abs(u[j] - readingAt(curve, t[rival])) <= off) continue;
       line[rival] = -1;
       nMatch--;
     }
     line[i] = j;
-    taken.set(j, i);
+    taken[j] = i;
     nMatch++;
   }
   return nMatch;
@@ -135,11 +142,10 @@ function scoreOf(problem: ArcProblem, curve: Curve, width: number, line: Int32Ar
   const { peakRank, lineRank, weight, nx } = problem;
   const n = line.length;
   const size = Math.abs(curve.stretch);
-  const margin = 0.01;
   if (
-    Math.abs(curve.shift) > LIMITS.shift + margin ||
-    size < LIMITS.shortest - margin ||
-    size > LIMITS.longest + margin
+    Math.abs(curve.shift) > LIMITS.shift + BEYOND ||
+    size < LIMITS.shortest - BEYOND ||
+    size > LIMITS.longest + BEYOND
   ) {
     return Number.NEGATIVE_INFINITY;
   }
@@ -166,6 +172,43 @@ function nReadings(tau: number): number {
   return apart(2 * LIMITS.shift) * apart(stretches) * apart(2 * LIMITS.curve) * apart(2 * LIMITS.cubic);
 }
 
+/** Peaks in a row, by place, that a reading leaves without lines although it explains most others: so many that chance, which scatters its
+ * false peaks, makes such a row once in a thousand arcs. Then the reading holds for a part of the arc only. */
+export function unexplainedRow(problem: ArcProblem, { line, nMatch }: Reading): { from: number; to: number } | null {
+  const order = Array.from(line.keys()).sort((a, b) => problem.t[a] - problem.t[b]);
+  const n = order.length;
+  const perPeak = log((n - nMatch + 1) / (n + 1));
+  let begin = 0;
+  for (let i = 0; i <= n; i++) {
+    if (i < n && line[order[i]] < 0) continue;
+    if (i > begin && (i - begin) * perPeak + log(n) < RARE) return { from: order[begin], to: order[i - 1] };
+    begin = i + 1;
+  }
+  return null;
+}
+
+/** Peaks at the ends whose lines only they themselves speak for: without the outermost ones on a side the rest of the reading puts them
+ * elsewhere, by more than `apart` (in u), and gives up no more than `margin` nats for it. A cubic bends to reach a false peak. */
+export function unsupportedEnds(problem: ArcProblem, reading: Reading, apart: number, margin: number): number[] {
+  const inOrder = Array.from(reading.line.keys())
+    .filter((i) => reading.line[i] >= 0)
+    .sort((a, b) => problem.t[a] - problem.t[b]);
+  const doubtful = new Set<number>();
+  for (const side of [inOrder, [...inOrder].reverse()]) {
+    const line = reading.line.slice();
+    for (let n = 0; n < MOST_AT_END && inOrder.length - n > LEFT_AT_LEAST; n++) {
+      line[side[n]] = -1;
+      const rest = fitCurve(problem, reading, reading.tolerance, line);
+      const score = scoreOf(problem, reading, reading.tolerance, line, inOrder.length - n - 1);
+      if (reading.score - score >= margin) break;
+      for (const i of side.slice(0, n + 1)) {
+        if (Math.abs(readingAt(rest, problem.t[i]) - problem.u[reading.line[i]]) > apart) doubtful.add(i);
+      }
+    }
+  }
+  return [...doubtful];
+}
+
 /** Readings that start a little off, in every combination of stretch and bend: what a reading could turn into nearby. */
 export function nearbySeeds({ shift, stretch, curve, cubic }: Curve, step: number): Curve[] {
   const seeds: Curve[] = [];
@@ -184,5 +227,3 @@ export function nearbySeeds({ shift, stretch, curve, cubic }: Curve, step: numbe
   }
   return seeds;
 }
-
-export type { Seed };

@@ -16,8 +16,8 @@ export interface Seed {
 const MOST_PEAKS = 50;
 const MOST_LINES = 150;
 const MOST_SEEDS = 500;
-/** Votes that are affordable: some 0.15 s. */
-const BUDGET = 2e7;
+/** Votes that are affordable: some 0.1 s. */
+const BUDGET = 1e7;
 /** px: no finer than this. */
 const FINEST = 0.8;
 const COARSEST = 0.008;
@@ -35,34 +35,42 @@ interface Voters {
 
 export function searchArc(problem: ArcProblem): { seeds: Seed[]; tolerance: number } {
   const tolerance = affordable(problem);
-  const voters = chooseVoters(problem, 3 * tolerance);
-  const nBlock = Math.ceil((2 * LIMITS.shift) / BLOCK);
+  const bin = 1.5 * tolerance;
+  const voters = chooseVoters(problem, 2 * bin);
   const stretches = both(grid(LIMITS.shortest, LIMITS.longest, 2 * tolerance));
-  const best: Seed[] = Array.from({ length: stretches.length * nBlock }, () => ({
-    shift: 0,
-    stretch: 0,
-    curve: 0,
-    cubic: 0,
-    votes: 0,
-  }));
+  const bends = grid(-LIMITS.curve, LIMITS.curve, 2.5 * tolerance).flatMap((curve) =>
+    grid(-LIMITS.cubic, LIMITS.cubic, 4 * tolerance).map((cubic) => ({ curve, cubic })),
+  );
   const place = new Float64Array(voters.t.length);
-  const ballot = new Float32Array(Math.ceil((2 * LIMITS.shift) / (1.5 * tolerance)) + 1);
-  for (const curve of grid(-LIMITS.curve, LIMITS.curve, 2.5 * tolerance)) {
-    for (const cubic of grid(-LIMITS.cubic, LIMITS.cubic, 4 * tolerance)) {
-      for (let i = 0; i < place.length; i++) place[i] = bent(voters.t[i], curve, cubic);
-      stretches.forEach((stretch, s) => {
-        vote(voters, place, stretch, ballot, 1.5 * tolerance);
-        for (let b = 0; b + 1 < ballot.length; b++) {
-          const votes = ballot[b] + ballot[b + 1];
-          const shift = (b + 1) * 1.5 * tolerance - LIMITS.shift;
-          const at = s * nBlock + Math.min(nBlock - 1, Math.floor((shift + LIMITS.shift) / BLOCK));
-          if (votes > best[at].votes) best[at] = { shift, stretch, curve, cubic, votes };
-        }
-      });
+  const ballot = new Float32Array(Math.ceil((2 * LIMITS.shift) / bin) + 1);
+  const perBlock = Math.max(1, Math.round(BLOCK / bin));
+  const nBlock = Math.ceil(ballot.length / perBlock);
+  // Of each stretch and block: the most votes, with which shift and which bends.
+  const most = new Float32Array(stretches.length * nBlock);
+  const mostAt = new Int32Array(2 * most.length);
+  bends.forEach(({ curve, cubic }, bend) => {
+    for (let i = 0; i < place.length; i++) place[i] = bent(voters.t[i], curve, cubic);
+    for (let s = 0; s < stretches.length; s++) {
+      vote(voters, place, stretches[s], ballot, bin);
+      for (let b = 0; b + 1 < ballot.length; b++) {
+        const votes = ballot[b] + ballot[b + 1];
+        const at = s * nBlock + Math.trunc(b / perBlock);
+        if (votes <= most[at]) continue;
+        most[at] = votes;
+        mostAt[2 * at] = b;
+        mostAt[2 * at + 1] = bend;
+      }
     }
-  }
-  const seeds = best.filter((seed) => seed.votes > 0).sort((a, b) => b.votes - a.votes);
-  return { seeds: seeds.slice(0, MOST_SEEDS), tolerance };
+  });
+  const order = Array.from(most.keys()).filter((at) => most[at] > 0);
+  order.sort((a, b) => most[b] - most[a] || a - b);
+  const seeds = order.slice(0, MOST_SEEDS).map((at) => ({
+    shift: (mostAt[2 * at] + 1) * bin - LIMITS.shift,
+    stretch: stretches[Math.floor(at / nBlock)],
+    ...bends[mostAt[2 * at + 1]],
+    votes: most[at],
+  }));
+  return { seeds, tolerance };
 }
 
 /** t + q P₂(t) + c P₃(t). */
@@ -70,17 +78,20 @@ export function bent(t: number, curve: number, cubic: number): number {
   return t + curve * (1.5 * t * t - 0.5) + cubic * (2.5 * t * t - 1.5) * t;
 }
 
+/** Votes of all pairs on the shift's axis, in bins. */
 function vote({ u, gain }: Voters, place: Float64Array, stretch: number, ballot: Float32Array, bin: number): void {
   ballot.fill(0);
-  const end = ballot.length;
+  const nLine = u.length;
+  const end = LIMITS.shift + LIMITS.shift;
   const perBin = 1 / bin;
   for (let i = 0; i < place.length; i++) {
     const zero = stretch * place[i] - LIMITS.shift;
-    const row = i * u.length;
-    for (let j = lowerBound(u, zero); j < u.length; j++) {
-      const b = Math.trunc((u[j] - zero) * perBin);
-      if (b >= end) break;
-      ballot[b] += gain[row + j];
+    const stop = zero + end;
+    const row = i * nLine;
+    for (let j = lowerBound(u, zero); j < nLine; j++) {
+      const here = u[j];
+      if (here >= stop) break;
+      ballot[((here - zero) * perBin) | 0] += gain[row + j];
     }
   }
 }

@@ -1,8 +1,16 @@
 /** Which line of a list is which peak of an arc: of all readings within the limits (arcProblem.ts) the one that explains the peaks best, refused when
  * chance could have made it or when another reading explains them about as well. A wavelength scale read wrongly looks as
  * good as the right one until somebody measures a velocity: right or refused, never a guess. */
-import { type ArcProblem, arcProblem, type IdentifiablePeak, LIMITS } from "./arcProblem.js";
-import { finestTolerance, nearbySeeds, type Reading, readingAt, refineReading } from "./arcReading.js";
+import { type ArcProblem, arcProblem, type IdentifiablePeak } from "./arcProblem.js";
+import {
+  finestTolerance,
+  nearbySeeds,
+  type Reading,
+  readingAt,
+  refineReading,
+  unexplainedRow,
+  unsupportedEnds,
+} from "./arcReading.js";
 import { searchArc } from "./arcSearch.js";
 import { blendPulls } from "./blends.js";
 import { CalibrationError } from "./errors.js";
@@ -106,12 +114,17 @@ function distinct(problem: ArcProblem, readings: Reading[]): Reading[] {
 
 /** Peaks matched in `a` that `b` puts elsewhere. */
 function differing(problem: ArcProblem, a: Reading, b: Reading): number[] {
-  const apart = 2 * Math.max(a.tolerance, 2 * finestTolerance(problem)) * problem.pixel * Math.abs(a.stretch);
+  const apart = apartIn(problem, a);
   const out: number[] = [];
   a.line.forEach((line, i) => {
     if (line >= 0 && Math.abs(readingAt(b, problem.t[i]) - problem.u[line]) > apart) out.push(i);
   });
   return out;
+}
+
+/** u between two places that a reading could not have meant both. */
+function apartIn(problem: ArcProblem, { tolerance, stretch }: Reading): number {
+  return 2 * Math.max(tolerance, 2 * finestTolerance(problem)) * problem.pixel * Math.abs(stretch);
 }
 
 function isOther(problem: ArcProblem, best: Reading, one: Reading): boolean {
@@ -127,6 +140,13 @@ function requireClear(problem: ArcProblem, readings: Reading[], lines: LineList)
       : "no reading fits";
     throw new CalibrationError(
       `The arc's ${n} peaks could not be identified with the ${problem.index.length} lines of the list (${namesOf(lines)}): ${found}; check which lamps were on, and 'range' under [wavelength].`,
+    );
+  }
+  const row = unexplainedRow(problem, best);
+  if (row !== null) {
+    const column = (i: number) => Math.round((problem.t[i] + 1) / problem.pixel) + 1;
+    throw new CalibrationError(
+      `The arc's ${n} peaks read as ${asRange(problem, best)} Å explain none of the peaks between columns ${column(row.from)} and ${column(row.to)}, so that the reading may hold for a part of the arc only; name every lamp that was on, and give a better 'range' under [wavelength].`,
     );
   }
   const other = readings.find((one) => isOther(problem, best, one));
@@ -156,7 +176,7 @@ function identification(
   peaks: readonly IdentifiablePeak[],
   lines: LineList,
 ): Identification {
-  const doubtful = new Set<number>();
+  const doubtful = new Set(unsupportedEnds(problem, best, apartIn(problem, best), CLEAR_MARGIN));
   for (const one of readings.slice(1)) {
     if (best.score - one.score >= CLEAR_MARGIN) break;
     for (const i of differing(problem, best, one)) doubtful.add(i);
@@ -203,5 +223,3 @@ function widthOf(peaks: readonly IdentifiablePeak[]): number {
   const widths = peaks.flatMap(({ fwhm }) => (fwhm !== undefined && fwhm > 0 ? [fwhm] : [])).sort((a, b) => a - b);
   return widths.length > 0 ? widths[widths.length >> 1] : USUAL_FWHM;
 }
-
-export { LIMITS };

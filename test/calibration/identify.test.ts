@@ -9,7 +9,7 @@ import { type Arc, type ArcRecipe, makeArc, roughRange, SETUPS } from "./arcs.js
 
 const OTHERS = ["He", "Ne", "Ar", "Kr", "Xe", "Hg", "Cu"];
 
-const SEEDS = 2;
+const SEEDS = 3;
 
 interface Difficulty extends Partial<ArcRecipe> {
   /** Of the approximate range. */
