@@ -1,5 +1,6 @@
 /** The public library. */
 
+export { type ArcExposure, type ArcLine, type ArcResult, measureWavelengths } from "./calibration/arc.js";
 export { type Calibrated, calibrateSpectra, type SpectraCalibration } from "./calibration/calibrate.js";
 export { calibratedHdus, calibrationCards } from "./calibration/calibratedHdus.js";
 export { combinedHdus } from "./calibration/combineFile.js";
@@ -22,6 +23,20 @@ export { SKY_LINES, type SkyLine, zeroPointLines } from "./calibration/skyLines.
 export { type PixelWavelengths, readProduct, type SpectraProduct } from "./calibration/spectraProduct.js";
 export { measureThroughput, type Throughput } from "./calibration/throughput.js";
 export { readThroughput, throughputHdus, writeThroughput } from "./calibration/throughputFile.js";
+export {
+  readWavelengths,
+  type WavelengthFileOptions,
+  wavelengthHdus,
+  writeWavelengths,
+} from "./calibration/wavelengthFile.js";
+export {
+  columnAt,
+  dispersionAt,
+  fwhmAt,
+  type WavelengthSolution,
+  wavelengthAt,
+  wavelengthImage,
+} from "./calibration/wavelengths.js";
 export {
   type CalibrationFrames,
   type CalibrationInput,

@@ -7,34 +7,37 @@ import * as library from "../src/index.js";
 const VALUES = `
   CalibrationError DetectorError FitsError Flag Header MaskBit NamingError SCENES SKY_LINES SceneError
   SpectrographError TraceError UNUSABLE airToVacuum calibrateSpectra calibratedHdus calibrationCards
-  checkGeometry chooseProfile combineSpectra combinedHdus compareMethods correctFrame countFibres
-  crosstalkHdus crowdedLines detectorHdus ecsvText encodeFits extractFrame fibreTables findPairHits
-  formatSection gridWavelength historyCards inputCards joinLines lampLines listHdus loadCalibrations
-  loadKernels lookAt makeCalibrations makeGrid measureCrosstalk measureNoise measureSingleFibre
-  measureThroughput medianFwhm medianSignalToNoise neglectedShare noCalibrations noiseWarnings
-  parseLineFile parseScene parseSection parseSpectrograph readDetector readImage readLineFile
-  readPositions readProduct readScene readSpectra readSpectrograph readTable readThroughput readTramlines
-  rebinSpectra rebinnedHdus recoverInjected rejectedHdu requireSameGeometry scatteredHdu scoreByDecade
-  scoreCosmicRays scoreLeak scoreTrace sectionSize seenHdu simulateExposure simulationFiles spectraHdus
-  spectrographToml sumFibres summariseSpectra tableHdus targetTables targetsHdu throughputHdus traceFlat
-  tramlineHeights tramlinesHdus useThreads vacuumToAir verifyExtraction writeDetector writeExposure
-  writeFits writeObserverFiles writeSimulation writeSpectra writeThroughput writeTramlines zeroPointLines
+  checkGeometry chooseProfile columnAt combineSpectra combinedHdus compareMethods correctFrame countFibres
+  crosstalkHdus crowdedLines detectorHdus dispersionAt ecsvText encodeFits extractFrame fibreTables
+  findPairHits formatSection fwhmAt gridWavelength historyCards inputCards joinLines lampLines listHdus
+  loadCalibrations loadKernels lookAt makeCalibrations makeGrid measureCrosstalk measureNoise
+  measureSingleFibre measureThroughput measureWavelengths medianFwhm medianSignalToNoise neglectedShare
+  noCalibrations noiseWarnings parseLineFile parseScene parseSection parseSpectrograph readDetector
+  readImage readLineFile readPositions readProduct readScene readSpectra readSpectrograph readTable
+  readThroughput readTramlines readWavelengths rebinSpectra rebinnedHdus recoverInjected rejectedHdu
+  requireSameGeometry scatteredHdu scoreByDecade scoreCosmicRays scoreLeak scoreTrace sectionSize seenHdu
+  simulateExposure simulationFiles spectraHdus spectrographToml sumFibres summariseSpectra tableHdus
+  targetTables targetsHdu throughputHdus traceFlat tramlineHeights tramlinesHdus useThreads vacuumToAir
+  verifyExtraction wavelengthAt wavelengthHdus wavelengthImage writeDetector writeExposure writeFits
+  writeObserverFiles writeSimulation writeSpectra writeThroughput writeTramlines writeWavelengths
+  zeroPointLines
 `;
 
 const TYPES = `
-  AmplifierNoise Calibrated CalibrationFrames CalibrationInput CalibrationPaths Calibrations Card
-  CardValue CellScore ChecksumState CombineOptions CombinedSpectra Comparison CorrectOptions CosmicScore
-  CosmicTruth CrosstalkMatrix DarkScore DecadeScore DetectorFileOptions DetectorGeometry Extraction
-  ExtractionOptions FibreBias FibreCheck FibreCounts FibreState Finding FitsColumn FitsErrorCode FitsImage
-  FitsTable FlagCounts Frame FrameList FrameShare Frames GaussianProfile GridRequest HduSummary LeakScore
-  LineList LoneEstimator LookOptions LookReport Medium Method MethodCheck MethodComparison NoiseFrames
-  NoiseIngredients NoiseMeasurement OutputColumn OutputHdu OutputImage PairHits PixelArray
-  PixelWavelengths Profile ProfileChoice ProfileKind RawImage ReadOptions RebinOptions RebinnedSpectra
-  Recovery RecoveryOptions Role Scene SceneExposure Section SeenLeak SimulatedExposure SimulationFiles
-  SimulationOptions SingleFibreCheck Sky SkyLine SlitLayout Spectra SpectraCalibration SpectraFileOptions
-  SpectraProduct SpectraSummary SpectralGrid Spectrograph SpectrumTable StackReport StackedFrame
-  TableOptions Target TargetSpectra Throughput TraceOptions TraceScore Tracing Tramlines
-  TramlinesFileOptions TrueFlux TrueLine Truth Verdict Verification WriteOptions
+  AmplifierNoise ArcExposure ArcLine ArcResult Calibrated CalibrationFrames CalibrationInput
+  CalibrationPaths Calibrations Card CardValue CellScore ChecksumState CombineOptions CombinedSpectra
+  Comparison CorrectOptions CosmicScore CosmicTruth CrosstalkMatrix DarkScore DecadeScore
+  DetectorFileOptions DetectorGeometry Extraction ExtractionOptions FibreBias FibreCheck FibreCounts
+  FibreState Finding FitsColumn FitsErrorCode FitsImage FitsTable FlagCounts Frame FrameList FrameShare
+  Frames GaussianProfile GridRequest HduSummary LeakScore LineList LoneEstimator LookOptions LookReport
+  Medium Method MethodCheck MethodComparison NoiseFrames NoiseIngredients NoiseMeasurement OutputColumn
+  OutputHdu OutputImage PairHits PixelArray PixelWavelengths Profile ProfileChoice ProfileKind RawImage
+  ReadOptions RebinOptions RebinnedSpectra Recovery RecoveryOptions Role Scene SceneExposure Section
+  SeenLeak SimulatedExposure SimulationFiles SimulationOptions SingleFibreCheck Sky SkyLine SlitLayout
+  Spectra SpectraCalibration SpectraFileOptions SpectraProduct SpectraSummary SpectralGrid Spectrograph
+  SpectrumTable StackReport StackedFrame TableOptions Target TargetSpectra Throughput TraceOptions
+  TraceScore Tracing Tramlines TramlinesFileOptions TrueFlux TrueLine Truth Verdict Verification
+  WavelengthFileOptions WavelengthSolution WriteOptions
 `;
 
 const words = (text: string) => text.trim().split(/\s+/);

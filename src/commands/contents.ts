@@ -66,6 +66,12 @@ export const contents: Entry[] = [
     define: async (command) => (await import("./extract.js")).addExtract(command),
   },
   {
+    name: "arc",
+    takes: "<ARC...>",
+    summary: "the wavelength of every column of every fibre, from arcs",
+    define: async (command) => (await import("./arc.js")).addArc(command),
+  },
+  {
     name: "compare",
     works: true,
     takes: "<FRAME>",

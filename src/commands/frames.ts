@@ -189,7 +189,7 @@ function readOnce(path: string): string | Uint8Array {
 }
 
 /** A file that is no image: its name and the first 16 digits of the SHA-256 of its bytes. None for a pipe. */
-function fileInputs(path: string | undefined): { name: string; checksum: string }[] {
+export function fileInputs(path: string | undefined): { name: string; checksum: string }[] {
   if (path === undefined || path === "-" || !statSync(path).isFile()) return [];
   return [
     { name: basename(path), checksum: createHash("sha256").update(readFileSync(path)).digest("hex").slice(0, 16) },

@@ -2,6 +2,7 @@
  * added under the same `format`; none is renamed or removed. */
 import { z } from "zod";
 import { Flag } from "../reference/bits.js";
+import { arcKeys } from "./arcJson.js";
 import { combineKeys } from "./combineJson.js";
 import { comparisonKeys, gainKeys } from "./compareJson.js";
 import { planKeys } from "./planJson.js";
@@ -385,6 +386,8 @@ const stack = z.strictObject({ ...head("stack"), ...stackKeys, ...tail });
 
 const tables = z.strictObject({ ...head("tables"), ...tablesKeys, ...tail });
 
+const arc = z.strictObject({ ...head("arc"), ...arcKeys, ...tail });
+
 const failure = z.strictObject({
   hatchel: z.string(),
   format: z.literal(1),
@@ -406,6 +409,7 @@ export const jsonSchemas = {
   stack,
   trace,
   extract,
+  arc,
   compare,
   verify,
   recover,

@@ -2,7 +2,7 @@
 import type { Frame } from "../detector/frame.js";
 import type { Kernels } from "../kernels/module.js";
 import type { SmoothBackground } from "../reference/extract.js";
-import { sampleColumns } from "../tramlines/columnSample.js";
+import { type SampleSize, sampleColumns } from "../tramlines/columnSample.js";
 import { deadLightWarnings, measureDeadLight } from "../tramlines/deadLight.js";
 import { compareOneOff, type OneOff, requireNamesFit } from "../tramlines/oneOff.js";
 import { activeFibres, linesOf } from "../tramlines/profileTable.js";
@@ -13,6 +13,9 @@ import { noBackground } from "./background.js";
 import type { Adapted, ExtractionOptions } from "./options.js";
 import { openFrame } from "./settle.js";
 import { startBackground } from "./smooth.js";
+
+/** Columns looked at when the usual ones are dark. */
+const denseSample: SampleSize = { nGroup: 64, together: 1 };
 
 /** @throws TraceError when the frame's light does not tell that fibres are named rightly, or when many dead ones shine. */
 export function adaptTramlines(
@@ -26,10 +29,16 @@ export function adaptTramlines(
   let oneOff: OneOff | null = null;
   let background: SmoothBackground | undefined;
   if (options.shift !== false) {
-    const sample = sampleColumns(kernels, frame, tramlines, shiftSample, undefined, frame.memory);
+    let sample = sampleColumns(kernels, frame, tramlines, shiftSample, undefined, frame.memory);
     try {
       const none = options.background === false ? noBackground() : undefined;
       shift = measureShift(kernels, frame, tramlines, none, sample);
+      if (shift === null) {
+        // An arc of few lines is dark in most columns.
+        sample.release();
+        sample = sampleColumns(kernels, frame, tramlines, denseSample, undefined, frame.memory);
+        shift = measureShift(kernels, frame, tramlines, none, sample);
+      }
       if (shift === null) {
         warnings.push(
           `${frame.name}: too little light to measure its shift against the flat, so none is applied; spectra are right only if nothing moved since the flat, and by a whole fibre neither, since names are not checked then.`,
