@@ -37,6 +37,7 @@ export {
   wavelengthAt,
   wavelengthImage,
 } from "./calibration/wavelengths.js";
+export { type FrameZeroPoint, measureZeroPoint } from "./calibration/zeroPoint.js";
 export {
   type CalibrationFrames,
   type CalibrationInput,

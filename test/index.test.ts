@@ -11,16 +11,16 @@ const VALUES = `
   crosstalkHdus crowdedLines detectorHdus dispersionAt ecsvText encodeFits extractFrame fibreTables
   findPairHits formatSection fwhmAt gridWavelength historyCards inputCards joinLines lampLines listHdus
   loadCalibrations loadKernels lookAt makeCalibrations makeGrid measureCrosstalk measureNoise
-  measureSingleFibre measureThroughput measureWavelengths medianFwhm medianSignalToNoise neglectedShare
-  noCalibrations noiseWarnings parseLineFile parseScene parseSection parseSpectrograph readDetector
-  readImage readLineFile readPositions readProduct readScene readSpectra readSpectrograph readTable
-  readThroughput readTramlines readWavelengths rebinSpectra rebinnedHdus recoverInjected rejectedHdu
-  requireSameGeometry scatteredHdu scoreByDecade scoreCosmicRays scoreLeak scoreTrace sectionSize seenHdu
-  simulateExposure simulationFiles spectraHdus spectrographToml sumFibres summariseSpectra tableHdus
-  targetTables targetsHdu throughputHdus traceFlat tramlineHeights tramlinesHdus useThreads vacuumToAir
-  verifyExtraction wavelengthAt wavelengthHdus wavelengthImage writeDetector writeExposure writeFits
-  writeObserverFiles writeSimulation writeSpectra writeThroughput writeTramlines writeWavelengths
-  zeroPointLines
+  measureSingleFibre measureThroughput measureWavelengths measureZeroPoint medianFwhm medianSignalToNoise
+  neglectedShare noCalibrations noiseWarnings parseLineFile parseScene parseSection parseSpectrograph
+  readDetector readImage readLineFile readPositions readProduct readScene readSpectra readSpectrograph
+  readTable readThroughput readTramlines readWavelengths rebinSpectra rebinnedHdus recoverInjected
+  rejectedHdu requireSameGeometry scatteredHdu scoreByDecade scoreCosmicRays scoreLeak scoreTrace
+  sectionSize seenHdu simulateExposure simulationFiles spectraHdus spectrographToml sumFibres
+  summariseSpectra tableHdus targetTables targetsHdu throughputHdus traceFlat tramlineHeights
+  tramlinesHdus useThreads vacuumToAir verifyExtraction wavelengthAt wavelengthHdus wavelengthImage
+  writeDetector writeExposure writeFits writeObserverFiles writeSimulation writeSpectra writeThroughput
+  writeTramlines writeWavelengths zeroPointLines
 `;
 
 const TYPES = `
@@ -29,15 +29,15 @@ const TYPES = `
   Comparison CorrectOptions CosmicScore CosmicTruth CrosstalkMatrix DarkScore DecadeScore
   DetectorFileOptions DetectorGeometry Extraction ExtractionOptions FibreBias FibreCheck FibreCounts
   FibreState Finding FitsColumn FitsErrorCode FitsImage FitsTable FlagCounts Frame FrameList FrameShare
-  Frames GaussianProfile GridRequest HduSummary LeakScore LineList LoneEstimator LookOptions LookReport
-  Medium Method MethodCheck MethodComparison NoiseFrames NoiseIngredients NoiseMeasurement OutputColumn
-  OutputHdu OutputImage PairHits PixelArray PixelWavelengths Profile ProfileChoice ProfileKind RawImage
-  ReadOptions RebinOptions RebinnedSpectra Recovery RecoveryOptions Role Scene SceneExposure Section
-  SeenLeak SimulatedExposure SimulationFiles SimulationOptions SingleFibreCheck Sky SkyLine SlitLayout
-  Spectra SpectraCalibration SpectraFileOptions SpectraProduct SpectraSummary SpectralGrid Spectrograph
-  SpectrumTable StackReport StackedFrame TableOptions Target TargetSpectra Throughput TraceOptions
-  TraceScore Tracing Tramlines TramlinesFileOptions TrueFlux TrueLine Truth Verdict Verification
-  WavelengthFileOptions WavelengthSolution WriteOptions
+  FrameZeroPoint Frames GaussianProfile GridRequest HduSummary LeakScore LineList LoneEstimator
+  LookOptions LookReport Medium Method MethodCheck MethodComparison NoiseFrames NoiseIngredients
+  NoiseMeasurement OutputColumn OutputHdu OutputImage PairHits PixelArray PixelWavelengths Profile
+  ProfileChoice ProfileKind RawImage ReadOptions RebinOptions RebinnedSpectra Recovery RecoveryOptions
+  Role Scene SceneExposure Section SeenLeak SimulatedExposure SimulationFiles SimulationOptions
+  SingleFibreCheck Sky SkyLine SlitLayout Spectra SpectraCalibration SpectraFileOptions SpectraProduct
+  SpectraSummary SpectralGrid Spectrograph SpectrumTable StackReport StackedFrame TableOptions Target
+  TargetSpectra Throughput TraceOptions TraceScore Tracing Tramlines TramlinesFileOptions TrueFlux
+  TrueLine Truth Verdict Verification WavelengthFileOptions WavelengthSolution WriteOptions
 `;
 
 const words = (text: string) => text.trim().split(/\s+/);
