@@ -6,7 +6,7 @@ import { parseScene, type Scene } from "../../src/simulate/scene.js";
 import type { Tramlines } from "../../src/tramlines/tramlines.js";
 import { frameFromTruth, tramlinesFromTruth } from "../extraction/fromTruth.js";
 
-const SCENE = `name = "arc bench"
+export const ARC_SCENE = `name = "arc bench"
 seed = 21
 clean = true
 [detector]
@@ -60,7 +60,7 @@ seconds = 900
 dispersion_shift = 0.11
 `;
 
-export const arcScene: Scene = parseScene(SCENE, "arc bench");
+export const arcScene: Scene = parseScene(ARC_SCENE, "arc bench");
 
 export interface ExtractedArcs {
   exposures: ArcExposure[];
