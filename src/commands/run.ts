@@ -8,7 +8,7 @@ import type { Ledger } from "../night/ledger.js";
 import { readPlan } from "../night/plan.js";
 import { planKeyLines } from "../night/planKeys.js";
 import { type NightOutcome, runNight } from "../night/run.js";
-import { type FrameSummary, reasonOf } from "../night/summary.js";
+import { type FrameSummary, productOf, reasonOf } from "../night/summary.js";
 import type { Task } from "../night/task.js";
 import { addCommonOptions, outputOption, threadsOption } from "./frameOptions.js";
 import { type NightProgress, openNightProgress } from "./nightProgress.js";
@@ -98,7 +98,7 @@ function heedInterrupts(watches: boolean) {
 function told(task: Task, ending: Ending, options: RunCommandOptions, progress: NightProgress): void {
   progress.end(task);
   if (options.watch !== true || ending.state === "left") return;
-  const product = task.products.join(", ");
+  const product = productOf(task);
   const reason = reasonOf(ending);
   sayLine(reason === null ? `${product}: ${ending.state}` : `${product}: failed: ${reason}`, options, progress);
 }
@@ -113,9 +113,9 @@ function outcomeOf({ summary, endings }: NightOutcome, output: string): Outcome<
   const states = [...endings.values()].map(({ state }) => state);
   const made = states.filter((state) => state === "made").length;
   const kept = states.filter((state) => state === "kept").length;
-  const { night, version: _version, calibrations, frames, nFailed, assumptions, warnings } = summary;
+  const { night, version: _version, calibrations, frames, derived, nFailed, assumptions, warnings } = summary;
   const failed = frames.filter(({ verdict }) => verdict === "failed");
-  const lost = calibrations.filter((one) => !one.made);
+  const lost = [...calibrations, ...derived].filter((one) => !one.made);
   const failures = [
     ...lost.map(({ product, reason }) => `failed: ${product}: ${reason}`),
     ...failed.map(({ frame, reasons }) => `failed: ${frame}: ${reasons.join(" ")}`),
@@ -130,7 +130,7 @@ function outcomeOf({ summary, endings }: NightOutcome, output: string): Outcome<
     ...failures,
     ...doubts,
   ].join("\n");
-  const json = { output, night, made, kept, calibrations, frames, failed: nFailed, assumptions, warnings };
+  const json = { output, night, made, kept, calibrations, frames, derived, failed: nFailed, assumptions, warnings };
   if (nFailed === 0) return { json, text };
   const what = `${counted(nFailed, "product")} could not be made`;
   return {

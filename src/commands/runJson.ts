@@ -4,19 +4,19 @@ import { z } from "zod";
 const number = z.number().nullable();
 const count = z.int().min(0);
 
+const product = z.strictObject({
+  product: z.string().describe("a file, or a folder of files"),
+  made: z.boolean().describe("whether it is there"),
+  reason: z.string().nullable().describe("why it is not there, one sentence"),
+  facts: z.record(z.string(), z.json()).describe("figures of merit, assumptions and warnings of this product"),
+});
+
 export const runKeys = {
   output: z.string().describe("the folder of the products; night.json in it sums them up"),
   night: z.string(),
   made: count.describe("products made by this run"),
   kept: count.describe("products of an earlier run, whose inputs, options and program have not changed"),
-  calibrations: z.array(
-    z.strictObject({
-      product: z.string(),
-      made: z.boolean().describe("whether it is there"),
-      reason: z.string().nullable().describe("why it is not there, one sentence"),
-      facts: z.record(z.string(), z.json()).describe("figures of merit, assumptions and warnings of this product"),
-    }),
-  ),
+  calibrations: z.array(product),
   frames: z.array(
     z.strictObject({
       frame: z.string(),
@@ -33,5 +33,6 @@ export const runKeys = {
       warnings: z.array(z.string()),
     }),
   ),
+  derived: z.array(product).describe("what was made of the spectra: tables"),
   failed: count.describe("products that could not be made"),
 };

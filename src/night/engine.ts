@@ -129,9 +129,9 @@ export class Engine {
       if (kept !== undefined) return { state: "kept", record: kept };
       if (this.stopping) return { state: "left" };
       onStart?.(task);
-      job.products = ledger.roomFor(task);
-      const facts = await make(job);
-      return { state: "made", record: await ledger.accept(task, key, job.products, facts) };
+      const room = ledger.roomFor(task);
+      const facts = await make({ ...job, ...room });
+      return { state: "made", record: await ledger.accept(task, key, room, facts) };
     } catch (error) {
       return { state: "failed", reason: error instanceof Error ? error.message : String(error) };
     }
@@ -154,13 +154,13 @@ export class Engine {
   }
 
   /** Names of inputs are part of it, since products keep them in their HISTORY; their folders are not. */
-  private keyOf({ stage, products }: Task, { inputs, from, options }: Job): string {
+  private keyOf({ stage, products, folder }: Task, { inputs, from, options }: Job): string {
     const named = Object.entries(inputs).map(([role, files]) => [
       role,
       files.map(({ path, digest }) => [basename(path), digest]),
     ]);
     const before = Object.entries(from).map(([name, { digest }]) => [name, digest]);
-    return digestOf([this.options.program, stage, products, options, named, before]);
+    return digestOf([this.options.program, stage, products, folder ?? null, options, named, before]);
   }
 
   private sumOf(path: string): Promise<string> {

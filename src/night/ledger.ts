@@ -9,10 +9,10 @@
  * any moment leaves products whose record does not fit, or fits: never a record whose product is another's. */
 import { randomBytes } from "node:crypto";
 import fs from "node:fs";
-import { basename, join } from "node:path";
+import { basename, dirname, join } from "node:path";
 import { fileDigest } from "./digest.js";
 import { PlanError } from "./plan.js";
-import type { Facts, Task } from "./task.js";
+import type { Facts, Job, Task } from "./task.js";
 
 /** Raised when records of before would be read wrongly. */
 const FORMAT = 1;
@@ -62,7 +62,6 @@ export class Ledger {
     const record = this.read(task.id);
     if (record === undefined || record.key !== key) return undefined;
     const names = record.products.map(({ name }) => name);
-    if (names.join("\n") !== task.products.join("\n")) return undefined;
     const sums = await Promise.all(names.map((name) => fileDigest(this.pathOf(name)).catch(() => "")));
     return record.products.every(({ sha256 }, i) => sha256 === sums[i]) ? record : undefined;
   }
@@ -71,20 +70,30 @@ export class Ledger {
     return join(this.folder, product);
   }
 
-  /** A folder of its own for a task's products. */
-  roomFor(task: Task): string[] {
+  /** Places of its own for a task's products. */
+  roomFor({ products, folder }: Task): Pick<Job, "products" | "folder"> {
     const room = join(this.making, String(++this.nMade));
-    fs.mkdirSync(room);
-    return task.products.map((name) => join(room, name));
+    for (const name of products) fs.mkdirSync(dirname(join(room, name)), { recursive: true });
+    if (folder !== undefined) fs.mkdirSync(join(room, folder), { recursive: true });
+    const paths = { products: products.map((name) => join(room, name)) };
+    return folder === undefined ? paths : { ...paths, folder: join(room, folder) };
   }
 
-  /** Moves what was written to its place, and notes it. */
-  async accept(task: Task, key: string, written: string[], facts: Facts): Promise<TaskRecord> {
-    const sums = await Promise.all(written.map(fileDigest));
-    const products = task.products.map((name, i) => ({ name, sha256: sums[i] }));
-    for (const [i, { name }] of products.entries()) fs.renameSync(written[i], this.pathOf(name));
+  /** Moves what was written to its place, and notes it; takes away what the task made before and makes no more. */
+  async accept(task: Task, key: string, written: Pick<Job, "products" | "folder">, facts: Facts): Promise<TaskRecord> {
+    const inFolder = written.folder === undefined ? [] : fs.readdirSync(written.folder).sort();
+    const names = [...task.products, ...inFolder.map((name) => `${task.folder}/${name}`)];
+    const paths = [...written.products, ...inFolder.map((name) => join(written.folder!, name))];
+    const sums = await Promise.all(paths.map(fileDigest));
+    const before = this.read(task.id)?.products ?? [];
+    for (const [i, name] of names.entries()) {
+      fs.mkdirSync(dirname(this.pathOf(name)), { recursive: true });
+      fs.renameSync(paths[i], this.pathOf(name));
+    }
+    const products = names.map((name, i) => ({ name, sha256: sums[i] }));
     const record: TaskRecord = { format: FORMAT, key, products, facts };
     this.write(this.recordPath(task.id), `${JSON.stringify(record, null, 1)}\n`);
+    for (const { name } of before) if (!names.includes(name)) fs.rmSync(this.pathOf(name), { force: true });
     return record;
   }
 

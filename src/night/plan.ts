@@ -19,6 +19,7 @@ export interface Wanted {
   halfAperture?: number;
   profile: ProfileKind | "auto";
   trustNames: boolean;
+  tables: "off" | "ecsv" | "fits";
 }
 
 /** One field. */
@@ -119,6 +120,7 @@ function named(tree: PlanTree, file: string, home: string): NightPlan {
       ...(wanted.half_aperture === undefined ? {} : { halfAperture: wanted.half_aperture }),
       profile: wanted.profile ?? "auto",
       trustNames: wanted.trust_names ?? false,
+      tables: wanted.tables ?? "off",
     },
   };
 }

@@ -42,6 +42,7 @@ export const planSchema = z.strictObject({
       refine: z.boolean().optional(),
       profile: z.enum(["auto", "gaussian", "hermite", "empirical"]).optional(),
       trust_names: z.boolean().optional(),
+      tables: z.enum(["off", "ecsv", "fits"]).optional(),
     })
     .optional(),
 });
@@ -112,6 +113,10 @@ export const PLAN_KEYS: Record<string, Record<string, Key>> = {
     trust_names: flag(
       "extract a frame even if its light does not tell its fibres' names: each spectrum may then bear another fibre's number (default: false)",
     ),
+    tables: {
+      value: '"off", "ecsv" or "fits"',
+      meaning: 'one table a fibre and target beside the spectra (default: "off")',
+    },
   },
 };
 

@@ -56,6 +56,7 @@ const WANTED: [key: string, value: string][] = [
   ["refine", "true"],
   ["profile", '"auto"'],
   ["trust_names", "false"],
+  ["tables", '"off"'],
 ];
 
 function entry(table: string, key: string, value: string): string {

@@ -3,7 +3,7 @@ import { programDigest } from "./digest.js";
 import { type Ending, Engine } from "./engine.js";
 import { Ledger } from "./ledger.js";
 import type { NightPlan } from "./plan.js";
-import { nightTasks, spectraTask } from "./stages.js";
+import { frameTasks, nightTasks } from "./stages.js";
 import { type NightSummary, summariseNight, summaryText } from "./summary.js";
 import type { Facts, Job, Task } from "./task.js";
 import { watchFolder } from "./watch.js";
@@ -63,7 +63,7 @@ async function watch(plan: NightPlan, engine: Engine, { version, signal, onOther
     known: [...known, ...[plan.badPixels ?? []].flat()],
     hdu: plan.hdu,
     signal,
-    onObject: ({ path, object, name }) => engine.add([spectraTask(plan, version, path, object || name)]),
+    onObject: ({ path, object, name }) => engine.add(frameTasks(plan, version, path, object || name)),
     onOther: onOther ?? (() => {}),
   });
 }

@@ -11,16 +11,37 @@ import type { Json, Maker, Task } from "./task.js";
 export const MAKERS: Record<string, () => Promise<Maker>> = {
   tramlines: async () => (await import("./makeTramlines.js")).makeTramlines,
   spectra: async () => (await import("./makeSpectra.js")).makeSpectra,
+  tables: async () => (await import("./makeTables.js")).makeTables,
 };
 
 /** Seconds on a small detector and one thread: only their ratios matter. */
-const EFFORT = { tramlines: 2, spectra: 0.7 };
+const EFFORT = { tramlines: 2, spectra: 0.7, tables: 0.3 };
 
 /** All tasks, each after those whose products it reads. `version`: the program's. */
 export function nightTasks(plan: NightPlan, version: string): Task[] {
-  const { objects } = plan;
-  const spectra = objects.flatMap(({ name, frames }) => frames.map((frame) => spectraTask(plan, version, frame, name)));
-  return [tramlinesTask(plan, version), ...spectra];
+  const ofFrames = plan.objects.flatMap(({ name, frames }) =>
+    frames.flatMap((frame) => frameTasks(plan, version, frame, name)),
+  );
+  return [tramlinesTask(plan, version), ...ofFrames];
+}
+
+/** Of one object frame, from its spectra on. */
+export function frameTasks(plan: NightPlan, version: string, frame: string, object: string): Task[] {
+  const spectra = spectraTask(plan, version, frame, object);
+  return [spectra, ...tablesTasks(plan, version, spectra)];
+}
+
+function tablesTasks({ wanted }: NightPlan, version: string, { id, products: [product] }: Task): Task[] {
+  if (wanted.tables === "off") return [];
+  const folder = product.replace(/\.fits$/, ".tables");
+  return [
+    {
+      ...{ id: `tables ${product}`, stage: "tables", label: `tables of ${product}` },
+      ...{ inputs: {}, after: [id], products: [], folder },
+      options: { version, form: wanted.tables },
+      effort: EFFORT.tables,
+    },
+  ];
 }
 
 function tramlinesTask(plan: NightPlan, version: string): Task {
@@ -36,8 +57,7 @@ function tramlinesTask(plan: NightPlan, version: string): Task {
   };
 }
 
-/** Of one object frame. */
-export function spectraTask(plan: NightPlan, version: string, frame: string, object: string): Task {
+function spectraTask(plan: NightPlan, version: string, frame: string, object: string): Task {
   const { method, crosstalk, precision, cosmicRays, refine, halfAperture, trustNames } = plan.wanted;
   const stem = stemOf(frame);
   return {

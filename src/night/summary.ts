@@ -27,12 +27,23 @@ export interface FrameSummary {
   warnings: string[];
 }
 
+export interface ProductSummary {
+  /** File name, or a folder's. */
+  product: string;
+  made: boolean;
+  /** Why it is not there. */
+  reason: string | null;
+  facts: Facts;
+}
+
 export interface NightSummary {
   night: string;
   /** The program's version. */
   version: string;
-  calibrations: { product: string; made: boolean; reason: string | null; facts: Facts }[];
+  calibrations: ProductSummary[];
   frames: FrameSummary[];
+  /** What was made of the spectra. */
+  derived: ProductSummary[];
   /** Products that were not made. */
   nFailed: number;
   assumptions: string[];
@@ -42,24 +53,33 @@ export interface NightSummary {
 export function summariseNight(plan: NightPlan, version: string, endings: Map<Task, Ending>): NightSummary {
   const all = [...endings].filter(([, { state }]) => state !== "left");
   const frames = all.filter(([task]) => task.stage === "spectra");
-  const calibrations = all.filter(([task]) => task.stage !== "spectra");
+  const others = (wanted: boolean) =>
+    all.filter(([{ stage }]) => stage !== "spectra" && DERIVED.has(stage) === wanted).map(productSummary);
   const facts = all.map(([, ending]) => factsOf(ending));
   const sentences = (key: "assumptions" | "warnings") =>
     oneOfEach(facts.flatMap((one) => (one[key] ?? []) as string[]));
   return {
     night: plan.name,
     version,
-    calibrations: calibrations.map(([task, ending]) => ({
-      product: task.products.join(", "),
-      made: isThere(ending),
-      reason: reasonOf(ending),
-      facts: factsOf(ending),
-    })),
+    calibrations: others(false),
     frames: frames.map(([task, ending]) => frameSummary(task, ending, facts)),
+    derived: others(true),
     nFailed: all.filter(([, ending]) => !isThere(ending)).length,
     assumptions: sentences("assumptions"),
     warnings: sentences("warnings"),
   };
+}
+
+/** Stages that make products of spectra. */
+const DERIVED = new Set(["tables"]);
+
+function productSummary([task, ending]: [Task, Ending]): ProductSummary {
+  return { product: productOf(task), made: isThere(ending), reason: reasonOf(ending), facts: factsOf(ending) };
+}
+
+/** What a task makes, for people. */
+export function productOf({ products, folder }: Task): string {
+  return [...products, ...(folder === undefined ? [] : [`${folder}/`])].join(", ");
 }
 
 /** night.json. */
@@ -79,7 +99,7 @@ function factsOf(ending: Ending): Facts {
 export function reasonOf(ending: Ending): string | null {
   if (ending.state === "failed") return ending.reason;
   if (ending.state !== "not made") return null;
-  return `it needs ${ending.because.products.join(", ")}, which could not be made (${ending.reason.replace(/\.$/, "")}).`;
+  return `it needs ${productOf(ending.because)}, which could not be made (${ending.reason.replace(/\.$/, "")}).`;
 }
 
 function frameSummary(task: Task, ending: Ending, all: Facts[]): FrameSummary {

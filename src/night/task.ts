@@ -14,8 +14,10 @@ export interface Task {
   inputs: Record<string, string[]>;
   /** Tasks whose products are read. */
   after: string[];
-  /** File names of what it makes. */
+  /** Names of the files that it makes, below the run's folder. */
   products: string[];
+  /** Name of a folder of its own, where the number of files shows only when they are made. */
+  folder?: string;
   /** All else that changes the products. */
   options: Json;
   /** Rough share of the work, for order and for the time that is left. */
@@ -33,6 +35,8 @@ export interface Job {
   from: Record<string, { path: string; digest: string }>;
   /** Absolute paths to write to; nothing is there yet. */
   products: string[];
+  /** The same for a folder of files; it is there, and empty. */
+  folder?: string;
   options: Json;
 }
 

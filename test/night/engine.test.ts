@@ -220,6 +220,24 @@ describe("a failure", () => {
   });
 });
 
+test("a folder of files is kept, checked and swept like a single one", async () => {
+  const task: Task = { ...tasks()[0], products: [], folder: "tables" };
+  const write = (names: string[]) => async (job: Job) => {
+    for (const name of names) writeFileSync(join(job.folder!, name), name);
+    return {};
+  };
+  const files = () => readdirSync(join(out, "tables")).sort();
+  await run([task], write(["1", "2"]));
+  expect(files()).toEqual(["1", "2"]);
+  expect((await run([task], write([]))).made).toEqual([]);
+  rmSync(join(out, "tables/2"));
+  expect((await run([task], write(["1", "3"]))).made).toEqual(["detector"]);
+  expect(files()).toEqual(["1", "3"]);
+  appendFileSync(join(raw, "bias"), "x");
+  await run([task], write(["3"]));
+  expect(files()).toEqual(["3"]);
+});
+
 test("an engine that is stopped finishes what runs and begins nothing more", async () => {
   const ledger = Ledger.open(out);
   const made: string[] = [];
