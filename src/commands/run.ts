@@ -126,7 +126,7 @@ function outcomeOf({ summary, endings }: NightOutcome, output: string): Outcome<
   const count = `${frames.length - failed.length} of ${counted(frames.length, "object frame")} extracted`;
   const text = [
     `${output}: ${night}: ${count}, ${counted(made, "product")} made, ${kept} kept`,
-    ...(frames.length > 0 ? [textTable([HEADING, ...frames.map(row)])] : []),
+    ...(frames.length > 0 ? [frameTable(frames)] : []),
     ...failures,
     ...doubts,
   ].join("\n");
@@ -140,16 +140,20 @@ function outcomeOf({ summary, endings }: NightOutcome, output: string): Outcome<
   };
 }
 
-const HEADING = ["frame", "object", "S/N", "shift px", "rejected", "usable", "verdict"];
-
-function row(frame: FrameSummary): string[] {
-  return [
-    frame.frame,
-    frame.object,
-    fixed(frame.medianSignalToNoise, 1),
-    fixed(frame.shiftPixels, 3),
-    frame.rejectedPixels === null ? "–" : String(frame.rejectedPixels),
-    percentage(frame.usableShare),
-    frame.verdict,
+/** Columns that no frame has a value for are left out. */
+function frameTable(frames: FrameSummary[]): string {
+  const columns: [heading: string, cell: (frame: FrameSummary) => string][] = [
+    ["frame", ({ frame }) => frame],
+    ["object", ({ object }) => object],
+    ["S/N", (one) => fixed(one.medianSignalToNoise, 1)],
+    ["shift px", (one) => fixed(one.shiftPixels, 3)],
+    ["zero point px", (one) => fixed(one.zeroPointPixels, 3)],
+    ["rejected", (one) => (one.rejectedPixels === null ? "–" : String(one.rejectedPixels))],
+    ["usable", (one) => percentage(one.usableShare)],
+    ["sky left", (one) => percentage(one.skyResidual)],
+    ["sky pull", (one) => fixed(one.skyPullAtLines, 2)],
+    ["verdict", ({ verdict }) => verdict],
   ];
+  const shown = columns.filter(([, cell]) => frames.some((frame) => cell(frame) !== "–"));
+  return textTable([shown.map(([heading]) => heading), ...frames.map((frame) => shown.map(([, cell]) => cell(frame)))]);
 }

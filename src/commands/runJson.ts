@@ -28,11 +28,17 @@ export const runKeys = {
       medianSignalToNoise: number.describe("per column, over the fibres' own medians"),
       medianElectrons: number.describe("per column, over all usable points"),
       shiftPixels: number.describe("of the light against the tramlines"),
+      zeroPointPixels: number.describe("of the light along dispersion against the arc's; null when not measured"),
       rejectedPixels: count.nullable().describe("as cosmic rays"),
       usableShare: number,
+      skyResidual: number.describe(
+        "light left in sky fibres between lines when the others foretell them, as a share of the sky",
+      ),
+      skyPullBetweenLines: number.describe("its scatter over the expected one"),
+      skyPullAtLines: number,
       warnings: z.array(z.string()),
     }),
   ),
-  derived: z.array(product).describe("what was made of the spectra: tables"),
+  derived: z.array(product).describe("what was made of the spectra: combined, rebinned, tables"),
   failed: count.describe("products that could not be made"),
 };

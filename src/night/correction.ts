@@ -28,36 +28,49 @@ function keep<T>(name: string, key: string, load: () => Promise<T>): Promise<T> 
 }
 
 /** @throws what reading and combining the calibration frames throw. */
-export async function openCorrection({ inputs, options }: Job): Promise<Correction> {
+export async function openCorrection(job: Job): Promise<Correction> {
+  const { inputs, from, options } = job;
   const hdu = (options as { hdu: number | null }).hdu ?? undefined;
   const [file] = inputs.spectrograph ?? [];
-  const spectrograph =
-    file === undefined ? undefined : await keep("spectrograph", file.digest, () => readSpectrograph(file.path));
+  const spectrograph = await openSpectrograph(job);
+  const detector = from["detector.fits"];
   const { bias, dark, pixelFlat, badPixels } = inputs;
-  const lists = { bias, dark, pixelFlat, badPixels };
+  const lists = { detector: detector && [detector], bias, dark, pixelFlat, badPixels };
   const given = Object.entries(lists).flatMap(([role, files]) => (files === undefined ? [] : [[role, files] as const]));
   const key = JSON.stringify([given, file?.digest, hdu]);
   const calibrations = await keep("calibrations", key, () => {
-    const paths = given.map(([role, files]) => [role, role === "badPixels" ? files[0].path : files.map((f) => f.path)]);
+    const alone = (role: string) => role === "badPixels" || role === "detector";
+    const paths = given.map(([role, files]) => [role, alone(role) ? files[0].path : files.map((f) => f.path)]);
     return loadCalibrations({ ...Object.fromEntries(paths), ...(hdu === undefined ? {} : { hdu }) }, spectrograph);
   });
   return { spectrograph, calibrations, inputs: [...fileInputs(file), ...calibrations.inputs], hdu };
 }
 
+/** What the spectrograph file says. */
+export async function openSpectrograph({ inputs }: Job): Promise<Spectrograph | undefined> {
+  const [file] = inputs.spectrograph ?? [];
+  return file === undefined ? undefined : keep("spectrograph", file.digest, () => readSpectrograph(file.path));
+}
+
+/** A product that several frames need. */
+export function openProduct<T>({ from }: Job, name: string, read: (path: string) => Promise<T>): Promise<T> {
+  const { path, digest } = from[name];
+  return keep(name, digest, () => read(path));
+}
+
 /** The night's tramlines, counted among the correction's inputs. */
-export async function openTramlines({ from }: Job, correction: Correction): Promise<Tramlines> {
-  const file = from["tramlines.fits"];
-  correction.inputs.push(...fileInputs(file));
-  return keep("tramlines", file.digest, () => readTramlines(file.path));
+export async function openTramlines(job: Job, correction: Pick<Correction, "inputs">): Promise<Tramlines> {
+  correction.inputs.push(...fileInputs(job.from["tramlines.fits"]));
+  return openProduct(job, "tramlines.fits", readTramlines);
 }
 
 /** A file that is no image: its name and the first 16 digits of the SHA-256 of its bytes. */
-function fileInputs(file: { path: string; digest: string } | undefined): { name: string; checksum: string }[] {
+export function fileInputs(file: { path: string; digest: string } | undefined): { name: string; checksum: string }[] {
   return file === undefined ? [] : [{ name: basename(file.path), checksum: file.digest.slice(0, 16) }];
 }
 
 /** The files that a frame is corrected with, as lines for HISTORY. */
-export function correctionLines({ inputs, options }: Job): string[] {
+export function correctionLines({ inputs, from, options }: Job): string[] {
   const roles = {
     spectrograph: "spectrograph",
     bias: "bias",
@@ -68,6 +81,7 @@ export function correctionLines({ inputs, options }: Job): string[] {
   const lines = Object.entries(roles).flatMap(([role, word]) =>
     (inputs[role] ?? []).map(({ path }) => `${word} ${basename(path)}`),
   );
+  if (from["detector.fits"] !== undefined) lines.push("detector detector.fits");
   const { hdu } = options as { hdu: number | null };
   return hdu === null ? lines : [...lines, `hdu ${hdu}`];
 }

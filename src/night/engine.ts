@@ -40,18 +40,32 @@ export class Engine {
 
   constructor(private readonly options: EngineOptions) {}
 
-  /** Takes tasks on. @throws RangeError when one reads products of a task that is not there. */
-  add(tasks: readonly Task[]): void {
-    for (const task of tasks) this.tasks.set(task.id, task);
-    for (const { id, after } of tasks) {
-      const missing = after.find((one) => !this.tasks.has(one));
+  /** Takes tasks on; those that are here already, and have not changed, stay as they are. `renewed`: files that may have
+   * changed since they were read.
+   * @throws RangeError when one reads products of a task that is not there. */
+  add(tasks: readonly Task[], renewed: readonly string[] = []): void {
+    for (const path of renewed) this.sums.delete(path);
+    const isNew = tasks.filter((task) => {
+      const known = this.tasks.get(task.id);
+      const same = known !== undefined && JSON.stringify(known) === JSON.stringify(task);
+      return !same || Object.values(task.inputs).some((paths) => paths.some((path) => renewed.includes(path)));
+    });
+    for (const task of isNew) this.tasks.set(task.id, task);
+    for (const { id, after, some = [] } of isNew) {
+      const missing = [...after, ...some].find((one) => !this.tasks.has(one));
       if (missing !== undefined) throw new RangeError(`Task ${id} reads what ${missing} makes, which is no task.`);
-      this.endings.delete(id);
+      this.forget(id);
     }
     this.reckonAhead();
-    // A file may have changed since it was read for an earlier task.
-    this.sums.clear();
     this.advance();
+  }
+
+  /** It is to be done again, and what reads its products. */
+  private forget(id: string): void {
+    this.endings.delete(id);
+    for (const { id: other, after, some = [] } of this.tasks.values()) {
+      if ((after.includes(id) || some.includes(id)) && this.endings.has(other)) this.forget(other);
+    }
   }
 
   /** Resolves when nothing is left to do, with how each task ended, in the order in which they were added. */
@@ -70,11 +84,15 @@ export class Engine {
   }
 
   private advance(): void {
-    for (const task of this.waiting()) {
-      const barred = this.barred(task);
-      if (barred !== undefined) this.end(task, barred);
-    }
-    const ready = this.waiting().filter(({ after }) => after.every((id) => this.recordOf(id) !== undefined));
+    const barred = () =>
+      this.waiting()
+        .map((task) => ({ task, ending: this.barred(task) }))
+        .find(({ ending }) => ending !== undefined);
+    for (let one = barred(); one !== undefined; one = barred()) this.settle(one.task, one.ending!);
+    const ready = this.waiting().filter(
+      ({ after, some = [] }) =>
+        after.every((id) => this.recordOf(id) !== undefined) && some.every((id) => this.endings.has(id)),
+    );
     const order = [...ready].sort((a, b) => this.ahead.get(b.id)! - this.ahead.get(a.id)!);
     for (const task of order.slice(0, Math.max(0, this.options.atOnce - this.running.size))) void this.run(task);
     if (this.running.size === 0 && this.endings.size === this.tasks.size) this.wake();
@@ -85,23 +103,30 @@ export class Engine {
   }
 
   /** Why a task that waits will never begin. */
-  private barred({ after }: Task): Ending | undefined {
+  private barred({ after, some = [] }: Task): Ending | undefined {
     if (this.stopping) return { state: "left" };
     for (const id of after) {
-      const ending = this.endings.get(id);
-      if (ending?.state === "failed") return { state: "not made", because: this.tasks.get(id)!, reason: ending.reason };
-      if (ending?.state === "not made" || ending?.state === "left") return ending;
+      const because = this.becauseOf(id);
+      if (because !== undefined) return because;
     }
-    return undefined;
+    const all = some.map((id) => this.becauseOf(id));
+    return some.length > 0 && all.every((one) => one !== undefined) ? all[0] : undefined;
+  }
+
+  /** Why what hangs on a task cannot be made, when that task ended without its products. */
+  private becauseOf(id: string): Ending | undefined {
+    const ending = this.endings.get(id);
+    if (ending?.state === "failed") return { state: "not made", because: this.tasks.get(id)!, reason: ending.reason };
+    return ending?.state === "not made" || ending?.state === "left" ? ending : undefined;
   }
 
   /** The longest way goes first. Tasks come after those whose products they read, so that going backwards is enough. */
   private reckonAhead(): void {
     this.ahead.clear();
-    for (const { id, after, effort } of [...this.tasks.values()].reverse()) {
+    for (const { id, after, some = [], effort } of [...this.tasks.values()].reverse()) {
       const own = effort + (this.ahead.get(id) ?? 0);
       this.ahead.set(id, own);
-      for (const one of after) this.ahead.set(one, Math.max(own, this.ahead.get(one) ?? 0));
+      for (const one of [...after, ...some]) this.ahead.set(one, Math.max(own, this.ahead.get(one) ?? 0));
     }
   }
 
@@ -137,12 +162,12 @@ export class Engine {
     }
   }
 
-  private async jobOf({ stage, inputs, after, options }: Task): Promise<Job> {
+  private async jobOf({ stage, inputs, after, some = [], options }: Task): Promise<Job> {
     const entries = Object.entries(inputs).map(async ([role, paths]) => {
       const files = paths.map(async (path) => ({ path, digest: await this.sumOf(path) }));
       return [role, await Promise.all(files)] as const;
     });
-    const products = after.flatMap((id) => this.recordOf(id)!.products);
+    const products = [...after, ...some].flatMap((id) => this.recordOf(id)?.products ?? []);
     const from = products.map(({ name, sha256 }) => [name, { path: this.options.ledger.pathOf(name), digest: sha256 }]);
     return {
       stage,
@@ -169,11 +194,17 @@ export class Engine {
     return sum;
   }
 
+  /** What ran has ended. It may have become another task meanwhile, or what it reads may be made anew: then it is done again. */
   private end(task: Task, ending: Ending): void {
     this.running.delete(task.id);
+    const reads = [...task.after, ...(task.some ?? [])];
+    if (this.tasks.get(task.id) === task && reads.every((id) => this.endings.has(id))) this.settle(task, ending);
+    this.advance();
+  }
+
+  private settle(task: Task, ending: Ending): void {
     this.endings.set(task.id, ending);
     this.options.onEnd?.(task, ending);
-    this.advance();
   }
 
   private wake(): void {

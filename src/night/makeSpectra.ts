@@ -1,10 +1,13 @@
-/** One object frame to its spectra. */
+/** One frame to its spectra, as they are extracted: objects, arcs, and evenly lit ones. */
 import { basename } from "node:path";
 import { correctFrame } from "../detector/correct.js";
 import type { Frame } from "../detector/frame.js";
 import { type Extraction, extractFrame } from "../extraction/extract.js";
+import { targetsHdu } from "../extraction/extraHdus.js";
 import { writeSpectra } from "../extraction/file.js";
 import { type Spectra, UNUSABLE } from "../extraction/spectra.js";
+import { neglectedShare, sumFibres, type Target } from "../extraction/targets.js";
+import type { OutputHdu } from "../fits/encode.js";
 import { readImage } from "../fits/image.js";
 import { oneOfEach } from "../oneOfEach.js";
 import { median } from "../reference/median.js";
@@ -14,9 +17,11 @@ import { correctionLines, openCorrection, openTramlines } from "./correction.js"
 import type { Wanted } from "./plan.js";
 import type { Facts, Job } from "./task.js";
 
-interface Options extends Omit<Wanted, "halfAperture" | "profile"> {
+type Method = Pick<Wanted, "method" | "crosstalk" | "precision" | "cosmicRays" | "refine" | "trustNames">;
+
+interface Options extends Method {
   version: string;
-  object: string;
+  role: "arc" | "even light" | "object";
   halfAperture: number | null;
 }
 
@@ -26,20 +31,29 @@ export async function makeSpectra(job: Job): Promise<Facts> {
   const correction = await openCorrection(job);
   const raw = await readImage(path, { hdu: correction.hdu, forFrame: true });
   correction.inputs.push({ name: raw.name, checksum: raw.checksum });
-  const frame = correctFrame(raw, correction.calibrations, correction.spectrograph, { role: "science" });
+  const frame = correctFrame(raw, correction.calibrations, correction.spectrograph, {
+    role: options.role === "arc" ? "arc" : "science",
+  });
   const tramlines = await openTramlines(job, correction);
   const { method, crosstalk, precision, cosmicRays, refine, halfAperture, trustNames } = options;
   const extraction = await extractFrame(frame, tramlines, {
     ...{ method, crosstalk, precision, cosmicRays, refine, checkNames: !trustNames },
     ...(halfAperture === null ? {} : { halfAperture }),
   });
+  const targets = options.role === "object" ? correction.spectrograph?.slit?.targets : undefined;
   await writeSpectra(job.products[0], extraction, frame, tramlines, {
     version: options.version,
     options: [...methodLines(options, extraction), "tramlines tramlines.fits", ...correctionLines(job)],
     inputs: correction.inputs,
     sky: correction.spectrograph?.slit?.sky,
+    extra: targets === undefined ? [] : [summed(extraction, targets)],
   });
-  return { frame: basename(path), object: options.object, ...spectraFacts(frame, tramlines, extraction) };
+  return { frame: basename(path), ...spectraFacts(frame, tramlines, extraction) };
+}
+
+function summed(extraction: Extraction, targets: Target[]): OutputHdu {
+  const sums = sumFibres(extraction.spectra, targets);
+  return targetsHdu(sums, neglectedShare(extraction, sums));
 }
 
 function methodLines(options: Options, { precision }: Extraction): string[] {

@@ -7,7 +7,7 @@ import type { Method } from "../reference/extract.js";
 import { readSpectrograph, type Spectrograph } from "../spectrograph.js";
 import { tomlComplaint, tomlTree } from "../tomlSentences.js";
 import type { ProfileKind } from "../tramlines/profiles.js";
-import { stemOf } from "./frameNames.js";
+import { fileWord, stemOf } from "./frameNames.js";
 import { PLAN_VALUES, type PlanTree, planSchema } from "./planKeys.js";
 
 export interface Wanted {
@@ -19,6 +19,16 @@ export interface Wanted {
   halfAperture?: number;
   profile: ProfileKind | "auto";
   trustNames: boolean;
+  /** Whether spectra get wavelengths; throughput, sky and rebinning need them. */
+  wavelengths: boolean;
+  throughput: "twilight" | "fibre flat" | "off";
+  sky: SkyChoice;
+  combine: boolean;
+  rebin: "off" | "linear" | "log";
+  /** Å for linear, km/s for log. */
+  rebinStep?: number;
+  /** Å, middles of the first and the last bin. */
+  rebinRange?: [number, number];
   tables: "off" | "ecsv" | "fits";
 }
 
@@ -27,7 +37,12 @@ export interface NightObject {
   name: string;
   /** Absolute paths. */
   frames: string[];
+  sky: SkyChoice;
+  /** Into one set of spectra. */
+  combine: boolean;
 }
+
+export type SkyChoice = "on" | "off" | "scaled";
 
 export type CalibrationRole = "bias" | "dark" | "pixelFlat" | "fibreFlat" | "arc" | "twilight";
 
@@ -63,45 +78,48 @@ export async function readPlan(path: string): Promise<NightPlan> {
     const reason = reasons[(error as NodeJS.ErrnoException).code ?? ""] ?? "it cannot be read";
     throw new PlanError(`${path}: ${reason}, but a night plan in TOML was expected; 'hatchel plan' writes one.`);
   }
-  const plan = parsePlan(text, { file: basename(path), folder: dirname(resolve(path)) });
-  return plan.spectrograph === undefined ? plan : knowing(plan, await readSpectrograph(plan.spectrograph));
+  const place = { file: basename(path), folder: dirname(resolve(path)) };
+  const { spectrograph } = treeOf(text, place.file);
+  if (spectrograph === undefined) return parsePlan(text, place);
+  const other = resolve(place.folder, spectrograph);
+  requireFile(other, "'spectrograph'", place.file);
+  return parsePlan(text, place, await readSpectrograph(other));
 }
 
-function knowing(plan: NightPlan, known: Spectrograph): NightPlan {
-  const badPixels = plan.badPixels ?? known.detector.badPixels;
-  if (badPixels !== undefined && !existsSync(badPixels)) {
-    throw new PlanError(
-      `${known.file}: 'detector.bad_pixels' names ${badPixels}, but there is no such file; correct the name or leave it out.`,
-    );
-  }
-  return { ...plan, known, ...(badPixels === undefined ? {} : { badPixels }) };
-}
-
-/** The same from the text itself. `folder`: where its relative paths start. */
-export function parsePlan(text: string, { file, folder }: { file: string; folder: string }): NightPlan {
-  const parsed = tomlTree(text, file);
-  if ("complaint" in parsed) throw new PlanError(parsed.complaint);
-  const result = planSchema.safeParse(parsed.tree);
-  if (!result.success) {
-    throw new PlanError(tomlComplaint(file, parsed.tree, result.error.issues[0], PLAN_VALUES));
-  }
-  const plan = named(result.data, file, folder);
+/** The same from the text itself. `folder`: where its relative paths start; `known`: what the spectrograph file says. */
+export function parsePlan(
+  text: string,
+  { file, folder }: { file: string; folder: string },
+  known?: Spectrograph,
+): NightPlan {
+  const tree = treeOf(text, file);
+  const plan = named(tree, file, folder, known);
   checkFiles(plan);
   checkWanted(plan);
+  checkSky(plan, tree);
   return plan;
 }
 
-function named(tree: PlanTree, file: string, home: string): NightPlan {
+function treeOf(text: string, file: string): PlanTree {
+  const parsed = tomlTree(text, file);
+  if ("complaint" in parsed) throw new PlanError(parsed.complaint);
+  const result = planSchema.safeParse(parsed.tree);
+  if (result.success) return result.data;
+  throw new PlanError(tomlComplaint(file, parsed.tree, result.error.issues[0], PLAN_VALUES));
+}
+
+function named(tree: PlanTree, file: string, home: string, known: Spectrograph | undefined): NightPlan {
   const folder = resolve(home, tree.folder ?? ".");
   const { frames = {}, wanted = {} } = tree;
   const paths = (names: string[] | undefined) => (names ?? []).map((name) => resolve(folder, name));
+  const from = (name: string | undefined) => (name === undefined ? undefined : resolve(home, name));
+  const wavelengths = wanted.wavelengths ?? frames.arc !== undefined;
+  const sky = wanted.sky ?? (wavelengths && (known?.slit?.sky ?? []).length > 1 ? "on" : "off");
+  const even = frames.twilight === undefined ? "fibre flat" : "twilight";
   return {
-    file,
-    name: tree.name ?? basename(folder),
-    folder,
-    ...(tree.spectrograph === undefined ? {} : { spectrograph: resolve(home, tree.spectrograph) }),
-    ...(tree.bad_pixels === undefined ? {} : { badPixels: resolve(home, tree.bad_pixels) }),
-    ...(tree.hdu === undefined ? {} : { hdu: tree.hdu }),
+    ...{ file, folder, name: tree.name ?? basename(folder) },
+    ...given({ spectrograph: from(tree.spectrograph), known, hdu: tree.hdu }),
+    ...given({ badPixels: from(tree.bad_pixels) ?? known?.detector.badPixels }),
     frames: {
       bias: paths(frames.bias),
       dark: paths(frames.dark),
@@ -110,30 +128,46 @@ function named(tree: PlanTree, file: string, home: string): NightPlan {
       arc: paths(frames.arc),
       twilight: paths(frames.twilight),
     },
-    objects: (tree.object ?? []).map((entry) => ({ name: entry.name, frames: paths(entry.frames) })),
+    objects: (tree.object ?? []).map((entry) => ({
+      ...{ name: entry.name, frames: paths(entry.frames) },
+      ...{ sky: entry.sky ?? sky, combine: entry.combine ?? wanted.combine ?? true },
+    })),
     wanted: {
       method: wanted.method ?? "joint",
       crosstalk: wanted.crosstalk ?? true,
       precision: wanted.precision ?? "auto",
       cosmicRays: wanted.cosmic_rays ?? true,
       refine: wanted.refine ?? true,
-      ...(wanted.half_aperture === undefined ? {} : { halfAperture: wanted.half_aperture }),
       profile: wanted.profile ?? "auto",
       trustNames: wanted.trust_names ?? false,
+      wavelengths,
+      throughput: wavelengths ? (wanted.throughput ?? even) : "off",
+      ...{ sky, combine: wanted.combine ?? true },
+      rebin: wanted.rebin ?? "off",
       tables: wanted.tables ?? "off",
+      ...given({ halfAperture: wanted.half_aperture, rebinStep: wanted.rebin_step, rebinRange: wanted.rebin_range }),
     },
   };
 }
 
+type Given<T> = { [K in keyof T]?: Exclude<T[K], undefined> };
+
+/** Without the keys that have no value. */
+function given<T extends object>(entries: T): Given<T> {
+  return Object.fromEntries(Object.entries(entries).filter(([, value]) => value !== undefined)) as Given<T>;
+}
+
+/** @param key what names it, for the message. */
+function requireFile(path: string, key: string, file: string): void {
+  if (existsSync(path)) return;
+  throw new PlanError(`${file}: ${key} names ${path}, but there is no such file; correct the name or leave it out.`);
+}
+
 /** Every file there, none in two roles, no two object frames whose products would bear one name. */
-function checkFiles({ file, spectrograph, badPixels, frames, objects }: NightPlan): void {
+function checkFiles({ file, spectrograph, badPixels, known, frames, objects }: NightPlan): void {
   const roles = new Map<string, string>();
   const take = (path: string, role: string, alone: boolean) => {
-    if (!existsSync(path)) {
-      throw new PlanError(
-        `${file}: ${role} names ${path}, but there is no such file; correct the name or leave it out.`,
-      );
-    }
+    requireFile(path, role, file);
     const other = roles.get(path);
     if (alone && other !== undefined) {
       const finding = other === role ? `${role} names it twice` : `it stands in ${other} and in ${role}`;
@@ -142,28 +176,38 @@ function checkFiles({ file, spectrograph, badPixels, frames, objects }: NightPla
     roles.set(path, role);
   };
   if (spectrograph !== undefined) take(spectrograph, "'spectrograph'", false);
-  if (badPixels !== undefined) take(badPixels, "'bad_pixels'", false);
+  const isKnown = badPixels !== undefined && badPixels === known?.detector.badPixels;
+  if (badPixels !== undefined)
+    take(badPixels, isKnown ? `'detector.bad_pixels' of ${known.file}` : "'bad_pixels'", false);
+  const lines = known?.wavelength?.lines;
+  if (lines !== undefined) take(lines, `'wavelength.lines' of ${known!.file}`, false);
   const keys = { bias: "bias", dark: "dark", pixelFlat: "pixel_flat", fibreFlat: "fibre_flat", arc: "arc" };
   for (const [role, key] of Object.entries({ ...keys, twilight: "twilight" })) {
     for (const path of frames[role as CalibrationRole]) take(path, `'frames.${key}'`, true);
   }
+  for (const { name, frames: list } of objects) for (const path of list) take(path, `object '${name}'`, true);
   const stems = new Map<string, string>();
-  for (const { name, frames } of objects) {
-    for (const path of frames) {
-      take(path, `object '${name}'`, true);
-      const other = stems.get(stemOf(path));
-      if (other !== undefined) {
-        throw new PlanError(
-          `${file}: ${other} and ${path} would both become ${stemOf(path)}.spectra.fits; rename one of them.`,
-        );
-      }
-      stems.set(stemOf(path), path);
+  for (const path of [
+    ...frames.arc,
+    ...frames.twilight,
+    ...frames.fibreFlat,
+    ...objects.flatMap((one) => one.frames),
+  ]) {
+    const other = stems.get(stemOf(path));
+    if (other !== undefined) {
+      throw new PlanError(
+        `${file}: the spectra of ${other} and of ${path} would both be called ${stemOf(path)}; rename one of them.`,
+      );
     }
+    stems.set(stemOf(path), path);
   }
   const names = objects.map(({ name }) => name);
-  const twice = names.find((name, i) => names.indexOf(name) < i);
+  const twice = names.find((name, i) => names.findIndex((one) => fileWord(one) === fileWord(name)) < i);
   if (twice === undefined) return;
-  throw new PlanError(`${file}: two objects are called '${twice}'; put their frames into one, or rename one of them.`);
+  const first = names.find((name) => fileWord(name) === fileWord(twice))!;
+  const finding =
+    first === twice ? `two objects are called '${twice}'` : `objects '${first}' and '${twice}' would become one file`;
+  throw new PlanError(`${file}: ${finding}; put their frames into one, or rename one of them.`);
 }
 
 function checkWanted({ file, frames, objects, wanted }: NightPlan): void {
@@ -182,5 +226,58 @@ function checkWanted({ file, frames, objects, wanted }: NightPlan): void {
   const finding = objects.length === 0 ? "the plan names no fibre flat and no object" : "the plan names no fibre flat";
   throw new PlanError(
     `${file}: ${finding}, and without one nothing tells where the fibres' light runs; add 'frames.fibre_flat'.`,
+  );
+}
+
+/** What needs wavelengths, and what wavelengths need. */
+function checkSky({ file, known, frames, objects, wanted }: NightPlan, tree: PlanTree): void {
+  const refusal = (finding: string, remedy: string) => new PlanError(`${file}: ${finding}; ${remedy}.`);
+  const off = "or set wavelengths = false under [wanted]";
+  if (!wanted.wavelengths) {
+    const needs = {
+      "wanted.throughput": tree.wanted?.throughput,
+      "wanted.rebin": tree.wanted?.rebin,
+      "wanted.sky": wanted.sky,
+    };
+    for (const [key, value] of Object.entries(needs)) {
+      if (value === undefined || value === "off") continue;
+      throw refusal(
+        `'${key}' is "${value}", but no wavelengths are wanted`,
+        "list arcs under [frames], or leave the key out",
+      );
+    }
+  } else {
+    if (frames.arc.length === 0)
+      throw refusal("'wanted.wavelengths' is true, but there is no arc", `list some as 'frames.arc', ${off}`);
+    const { range, lamps = [], lines } = known?.wavelength ?? {};
+    const where = known === undefined ? "and there is no spectrograph file" : `but ${known.file} has no`;
+    const what =
+      range === undefined
+        ? "'wavelength.range'"
+        : lamps.length === 0 && lines === undefined
+          ? "'wavelength.lamps'"
+          : undefined;
+    if (what !== undefined) {
+      const finding = `arcs are to give wavelengths, ${where} ${known === undefined ? `with ${what}` : what}`;
+      throw refusal(finding, `add it, so that their lines can be named, ${off}`);
+    }
+    if (wanted.throughput === "twilight" && frames.twilight.length === 0) {
+      throw refusal(
+        "'wanted.throughput' is \"twilight\", but there is none",
+        "list some as 'frames.twilight', or choose \"fibre flat\"",
+      );
+    }
+  }
+  const wants = objects.find(({ sky }) => sky !== "off");
+  if (wants === undefined) return;
+  const finding = !wanted.wavelengths
+    ? "no wavelengths are wanted"
+    : (known?.slit?.sky ?? []).length < 2
+      ? "fewer than two sky fibres are known"
+      : undefined;
+  if (finding === undefined) return;
+  throw refusal(
+    `the sky is to be taken off '${wants.name}', but ${finding}`,
+    "list the fibres that see the sky alone as 'slit.sky' of the spectrograph file, or set sky = \"off\" under [wanted]",
   );
 }

@@ -42,6 +42,13 @@ export const planSchema = z.strictObject({
       refine: z.boolean().optional(),
       profile: z.enum(["auto", "gaussian", "hermite", "empirical"]).optional(),
       trust_names: z.boolean().optional(),
+      wavelengths: z.boolean().optional(),
+      throughput: z.enum(["twilight", "fibre flat", "off"]).optional(),
+      sky: sky.optional(),
+      combine: z.boolean().optional(),
+      rebin: z.enum(["off", "linear", "log"]).optional(),
+      rebin_step: z.number().positive().optional(),
+      rebin_range: z.tuple([z.number().positive(), z.number().positive()]).optional(),
       tables: z.enum(["off", "ecsv", "fits"]).optional(),
     })
     .optional(),
@@ -113,6 +120,27 @@ export const PLAN_KEYS: Record<string, Record<string, Key>> = {
     trust_names: flag(
       "extract a frame even if its light does not tell its fibres' names: each spectrum may then bear another fibre's number (default: false)",
     ),
+    wavelengths: flag(
+      "from the arcs, by lamps and range of the spectrograph file (default: true where there are arcs)",
+    ),
+    throughput: {
+      value: '"twilight", "fibre flat" or "off"',
+      meaning: "what fibres are compared by (default: twilight where there is one, else the fibre flat)",
+    },
+    sky: {
+      value: '"on", "off" or "scaled"',
+      meaning: 'take off the sky that slit.sky sees (default: "on" where fibres of it are known)',
+    },
+    combine: flag("join the frames of a field into one set of spectra (default: true)"),
+    rebin: {
+      value: '"off", "linear" or "log"',
+      meaning: 'put all fibres on one grid; neighbouring bins then share noise (default: "off")',
+    },
+    rebin_step: { value: "a number over 0", meaning: "Å for linear, km/s for log (default: the median dispersion)" },
+    rebin_range: {
+      value: "two numbers over 0, in Å",
+      meaning: "middles of the first and the last bin (default: all fibres)",
+    },
     tables: {
       value: '"off", "ecsv" or "fits"',
       meaning: 'one table a fibre and target beside the spectra (default: "off")',

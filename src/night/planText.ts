@@ -41,7 +41,9 @@ export function planText(proposal: Proposal, home: string): string {
     ...objects.flatMap((object) => ["", ...objectLines(object)]),
     "",
     "[wanted]",
-    ...WANTED.map(([key, value]) => absent("wanted", key, value)),
+    ...WANTED.map(([key, value]) =>
+      key === "wavelengths" && !proposal.wavelengths ? entry("wanted", key, "false") : absent("wanted", key, value),
+    ),
     "",
   ].join("\n");
 }
@@ -56,6 +58,13 @@ const WANTED: [key: string, value: string][] = [
   ["refine", "true"],
   ["profile", '"auto"'],
   ["trust_names", "false"],
+  ["wavelengths", "true"],
+  ["throughput", '"twilight"'],
+  ["sky", '"on"'],
+  ["combine", "true"],
+  ["rebin", '"off"'],
+  ["rebin_step", "1.0"],
+  ["rebin_range", "[5000, 7000]"],
   ["tables", '"off"'],
 ];
 

@@ -18,6 +18,8 @@ export interface Proposal {
   /** Of the readout that is taken, in the order in which they were exposed. */
   frames: Record<CalibrationRole, FrameHeader[]>;
   objects: { name: string; frames: FrameHeader[] }[];
+  /** Whether the arcs can give wavelengths, by what the spectrograph file says; true without arcs. */
+  wavelengths: boolean;
   /** Frames without a role, and why. */
   left: { name: string; why: string }[];
   /** What was assumed, and what an observer should look at, one sentence each. */
@@ -61,6 +63,9 @@ export async function proposePlan(folder: string, options: { hdu?: number } = {}
   headers.sort((a, b) => compare(a.started, b.started) || compare(a.name, b.name));
   for (const frame of ofOneReadout(headers, proposal)) assign(frame, proposal);
   settleFlats(proposal);
+  const { range, lamps = [], lines } = spectrograph?.wavelength ?? {};
+  const named = range !== undefined && (lamps.length > 0 || lines !== undefined);
+  proposal.wavelengths = named || proposal.frames.arc.length === 0;
   tellWhatIsMissing(proposal, spectrograph);
   return proposal;
 }
@@ -75,6 +80,7 @@ function emptyProposal(folder: string, hdu: number | undefined): Proposal {
     ...(hdu === undefined ? {} : { hdu }),
     frames: { bias: [], dark: [], pixelFlat: [], fibreFlat: [], arc: [], twilight: [] },
     objects: [],
+    wavelengths: true,
     left: [],
     assumptions: [],
     warnings: [],
@@ -208,7 +214,10 @@ function settleFlats(proposal: Proposal): void {
   );
 }
 
-function tellWhatIsMissing({ frames, objects, warnings }: Proposal, spectrograph: Spectrograph | undefined): void {
+function tellWhatIsMissing(
+  { frames, objects, wavelengths, warnings }: Proposal,
+  spectrograph: Spectrograph | undefined,
+): void {
   const { bias, dark, pixelFlat, fibreFlat, arc, twilight } = frames;
   const say = (when: boolean, sentence: string) => when && warnings.push(sentence);
   say(
@@ -229,6 +238,10 @@ function tellWhatIsMissing({ frames, objects, warnings }: Proposal, spectrograph
   );
   say(arc.length === 0, "No arc: the spectra will have no wavelengths, and no sky can be taken off.");
   say(
+    !wavelengths,
+    `${spectrograph === undefined ? "No spectrograph file" : spectrograph.file}: without 'wavelength.range' and 'wavelength.lamps' the arcs' lines cannot be named, so no wavelengths are proposed.`,
+  );
+  say(
     twilight.length === 0,
     "No twilight: fibres are compared by the fibre flat, whose lamp may not light them evenly.",
   );
@@ -237,8 +250,8 @@ function tellWhatIsMissing({ frames, objects, warnings }: Proposal, spectrograph
     "No spectrograph file beside the frames: fibres are numbered as they are found, dead ones not counted, and no fibre is known to see the sky alone.",
   );
   say(
-    spectrograph !== undefined && (spectrograph.slit?.sky.length ?? 0) === 0,
-    `${spectrograph?.file}: 'slit.sky' names no fibres, so no sky can be taken off.`,
+    spectrograph !== undefined && (spectrograph.slit?.sky.length ?? 0) < 2,
+    `${spectrograph?.file}: 'slit.sky' names fewer than two fibres, so no sky can be taken off.`,
   );
   const zero = objects.flatMap((one) => one.frames).filter(({ seconds }) => seconds === 0);
   say(zero.length > 0, `${few(zero.map(({ name }) => name))}: an object frame of 0 s; leave it out if it is a test.`);

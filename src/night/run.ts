@@ -1,9 +1,10 @@
 /** A night plan carried out in a folder: every product made once, kept while what it hangs on is unchanged. */
 import { programDigest } from "./digest.js";
 import { type Ending, Engine } from "./engine.js";
+import { stemOf } from "./frameNames.js";
 import { Ledger } from "./ledger.js";
-import type { NightPlan } from "./plan.js";
-import { frameTasks, nightTasks } from "./stages.js";
+import type { NightObject, NightPlan } from "./plan.js";
+import { laterTasks, nightTasks } from "./stages.js";
 import { type NightSummary, summariseNight, summaryText } from "./summary.js";
 import type { Facts, Job, Task } from "./task.js";
 import { watchFolder } from "./watch.js";
@@ -59,11 +60,21 @@ export async function runNight(plan: NightPlan, folder: string, options: RunOpti
 
 async function watch(plan: NightPlan, engine: Engine, { version, signal, onOther }: RunOptions): Promise<void> {
   const known = plan.objects.flatMap(({ frames }) => frames).concat(Object.values(plan.frames).flat());
+  const fields = new Map(plan.objects.map((object) => [object.name, object]));
   await watchFolder(plan.folder, {
     known: [...known, ...[plan.badPixels ?? []].flat()],
-    hdu: plan.hdu,
-    signal,
-    onObject: ({ path, object, name }) => engine.add(frameTasks(plan, version, path, object || name)),
+    ...{ hdu: plan.hdu, signal },
+    onObject: ({ path, object, name }) => {
+      const field = withFrame(fields.get(object || stemOf(name)), object || stemOf(name), path, plan);
+      fields.set(field.name, field);
+      engine.add(laterTasks(plan, version, field), [path]);
+    },
     onOther: onOther ?? (() => {}),
   });
+}
+
+/** The field with one frame more. */
+function withFrame(field: NightObject | undefined, name: string, path: string, { wanted }: NightPlan): NightObject {
+  const { frames, sky, combine } = field ?? { frames: [], sky: wanted.sky, combine: wanted.combine };
+  return { name, frames: [...frames.filter((one) => one !== path), path], sky, combine };
 }

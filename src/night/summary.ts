@@ -1,10 +1,9 @@
 /** What came of a night: calibrations, frames with their figures, and which of them are doubtful. The same products give the
  * same summary, whenever they were made. */
-import { basename } from "node:path";
 import { oneOfEach } from "../oneOfEach.js";
 import type { Ending } from "./engine.js";
 import type { NightPlan } from "./plan.js";
-import type { Facts, Task } from "./task.js";
+import type { Facts, Json, Task } from "./task.js";
 import { frameVerdict, type Verdict } from "./verdict.js";
 
 export interface FrameSummary {
@@ -22,8 +21,14 @@ export interface FrameSummary {
   medianElectrons: number | null;
   /** Of the light against the tramlines. */
   shiftPixels: number | null;
+  /** Of the light along dispersion against the arc's; null when not measured. */
+  zeroPointPixels: number | null;
   rejectedPixels: number | null;
   usableShare: number | null;
+  /** Of sky fibres foretold by the others: light left between the sky's lines, as a share of it, and scatter over σ. */
+  skyResidual: number | null;
+  skyPullBetweenLines: number | null;
+  skyPullAtLines: number | null;
   warnings: string[];
 }
 
@@ -52,26 +57,46 @@ export interface NightSummary {
 
 export function summariseNight(plan: NightPlan, version: string, endings: Map<Task, Ending>): NightSummary {
   const all = [...endings].filter(([, { state }]) => state !== "left");
-  const frames = all.filter(([task]) => task.stage === "spectra");
-  const others = (wanted: boolean) =>
-    all.filter(([{ stage }]) => stage !== "spectra" && DERIVED.has(stage) === wanted).map(productSummary);
+  const frames = framesOf(all);
+  const others = (part: Task["part"]) => all.filter(([task]) => task.part === part).map(productSummary);
   const facts = all.map(([, ending]) => factsOf(ending));
   const sentences = (key: "assumptions" | "warnings") =>
     oneOfEach(facts.flatMap((one) => (one[key] ?? []) as string[]));
   return {
     night: plan.name,
     version,
-    calibrations: others(false),
-    frames: frames.map(([task, ending]) => frameSummary(task, ending, facts)),
-    derived: others(true),
+    calibrations: others("calibration"),
+    frames: frames.map((frame) => frameSummary(frame, frames)),
+    derived: others("derived"),
     nFailed: all.filter(([, ending]) => !isThere(ending)).length,
     assumptions: sentences("assumptions"),
     warnings: sentences("warnings"),
   };
 }
 
-/** Stages that make products of spectra. */
-const DERIVED = new Set(["tables"]);
+interface FrameEnding {
+  /** Its last task, and how that ended. */
+  task: Task;
+  ending: Ending;
+  /** Of all its tasks together. */
+  facts: Facts;
+}
+
+/** Object frames in the order of the plan. */
+function framesOf(all: [Task, Ending][]): FrameEnding[] {
+  const frames = new Map<string, FrameEnding>();
+  for (const [task, ending] of all.filter(([{ part }]) => part === "frame")) {
+    const before = frames.get(task.frame!)?.facts ?? {};
+    const own = factsOf(ending);
+    const told = ["assumptions", "warnings"].map((key) => [key, [...list(before[key]), ...list(own[key])]]);
+    frames.set(task.frame!, { task, ending, facts: { ...before, ...own, ...Object.fromEntries(told) } });
+  }
+  return [...frames.values()];
+}
+
+function list(value: Json | undefined): string[] {
+  return (value ?? []) as string[];
+}
 
 function productSummary([task, ending]: [Task, Ending]): ProductSummary {
   return { product: productOf(task), made: isThere(ending), reason: reasonOf(ending), facts: factsOf(ending) };
@@ -102,24 +127,26 @@ export function reasonOf(ending: Ending): string | null {
   return `it needs ${productOf(ending.because)}, which could not be made (${ending.reason.replace(/\.$/, "")}).`;
 }
 
-function frameSummary(task: Task, ending: Ending, all: Facts[]): FrameSummary {
-  const facts = factsOf(ending);
+function frameSummary({ task, ending, facts }: FrameEnding, all: FrameEnding[]): FrameSummary {
   const number = (key: string) => (facts[key] ?? null) as number | null;
-  const { object } = task.options as { object: string };
   const failure = reasonOf(ending);
-  const siblings = all.filter((one) => one.object === object && one.frame !== undefined);
+  const siblings = all.filter((one) => one.task.object === task.object).map((one) => one.facts);
   const judged = failure === null ? frameVerdict(facts, siblings) : { verdict: "failed" as const, reasons: [failure] };
   return {
-    frame: basename(task.inputs.frame[0]),
-    object,
+    frame: task.frame!,
+    object: task.object!,
     product: failure === null ? task.products[0] : null,
     ...judged,
     exposureSeconds: number("exposureSeconds"),
     medianSignalToNoise: number("medianSignalToNoise"),
     medianElectrons: number("medianElectrons"),
     shiftPixels: number("shiftPixels"),
+    zeroPointPixels: number("zeroPointPixels"),
     rejectedPixels: number("rejectedPixels"),
     usableShare: number("usableShare"),
-    warnings: (facts.warnings ?? []) as string[],
+    skyResidual: number("skyResidual"),
+    skyPullBetweenLines: number("skyPullBetweenLines"),
+    skyPullAtLines: number("skyPullAtLines"),
+    warnings: list(facts.warnings),
   };
 }

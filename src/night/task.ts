@@ -14,12 +14,19 @@ export interface Task {
   inputs: Record<string, string[]>;
   /** Tasks whose products are read. */
   after: string[];
+  /** The same of tasks of which some may fail: what there is is read, one at least. */
+  some?: string[];
   /** Names of the files that it makes, below the run's folder. */
   products: string[];
   /** Name of a folder of its own, where the number of files shows only when they are made. */
   folder?: string;
   /** All else that changes the products. */
   options: Json;
+  /** Where the summary tells of it: among calibrations, object frames, or what is made of their spectra. */
+  part: "calibration" | "frame" | "derived";
+  /** File name of the object frame, and its field. */
+  frame?: string;
+  object?: string;
   /** Rough share of the work, for order and for the time that is left. */
   effort: number;
 }

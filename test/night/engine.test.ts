@@ -24,7 +24,7 @@ afterEach(() => rmSync(folder, { recursive: true }));
 /** detector ← bias; tramlines ← detector, flat; spectra ← detector, tramlines, frame; field ← spectra. */
 function tasks(options: { method?: string; name?: string } = {}): Task[] {
   const task = (id: string, file: string[], after: string[], more: object = {}): Task => ({
-    ...{ id, stage: "join", label: id, products: [`${id}.txt`], options: null, effort: 1 },
+    ...{ id, stage: "join", label: id, products: [`${id}.txt`], options: null, part: "derived", effort: 1 },
     ...{ inputs: { frame: file.map((name) => join(raw, name)) }, after },
     ...more,
   });
@@ -254,6 +254,54 @@ test("an engine that is stopped finishes what runs and begins nothing more", asy
   ledger.close();
   expect(made).toEqual(["detector.txt", "tramlines.txt"]);
   expect([...endings.values()].map(({ state }) => state)).toEqual(["made", "made", "left", "left", "left", "left"]);
+});
+
+describe("a task that reads what there is of some", () => {
+  const some = () => {
+    const list = tasks();
+    const field = list[list.length - 1];
+    return [...list.slice(0, -1), { ...field, after: [], some: ["spectra s1", "spectra s2"] }];
+  };
+
+  test("is made of the others when one fails, and not made when all do", async () => {
+    writeFileSync(join(raw, "s1"), "broken");
+    const { states, made } = await run(some());
+    expect(states).toMatchObject({ "spectra s1": "failed", field: "made" });
+    expect(made.indexOf("field")).toBeGreaterThan(made.indexOf("spectra s2"));
+    expect(product("field")).toBe(`(${product("spectra s2")}null)`);
+    writeFileSync(join(raw, "s2"), "broken");
+    expect((await run(some())).states.field).toBe("not made");
+  });
+
+  test("is made anew when the missing one comes", async () => {
+    writeFileSync(join(raw, "s1"), "broken");
+    await run(some());
+    writeFileSync(join(raw, "s1"), "s1 ");
+    expect((await run(some())).made.sort()).toEqual(["field", "spectra s1"]);
+    expect(product("field")).toBe(`(${product("spectra s1")}+${product("spectra s2")}null)`);
+  });
+});
+
+test("a task that grows, or whose file is written anew, is done again, with what reads it, and no other", async () => {
+  const ledger = Ledger.open(out);
+  let made: string[] = [];
+  const onStart = ({ id }: Task) => made.push(id);
+  const engine = new Engine({ ledger, program: "1", atOnce: 2, make: joinFiles, onStart });
+  const all = tasks();
+  engine.add(all);
+  await engine.settled();
+  made = [];
+  const field = { ...all[5], after: ["spectra s1", "spectra s2", "spectra s3"] };
+  engine.add([...all.slice(0, 5), field]);
+  await engine.settled();
+  expect(made).toEqual(["field"]);
+  made = [];
+  appendFileSync(join(raw, "s3"), "more");
+  engine.add([...all.slice(0, 5), field], [join(raw, "s3")]);
+  await engine.settled();
+  expect(made).toEqual(["spectra s3", "field"]);
+  expect(product("field")).toContain("s3 more");
+  ledger.close();
 });
 
 test("tasks that come later find what is there", async () => {

@@ -70,7 +70,7 @@ describe("refuses, in one sentence,", () => {
     [
       "products of one name",
       `${FLAT}[[object]]\nname = 'a'\nframes = ['s1.fits', 's1.fits.fz']`,
-      /would both become s1\.spectra\.fits; rename one/,
+      /would both be called s1; rename one/,
     ],
     [
       "two objects of one name",
@@ -96,11 +96,30 @@ describe("refuses, in one sentence,", () => {
     else expect(refusal).toContain(message);
   });
 
+  test.each([
+    ["[wavelength]\nlamps = ['Ne']", "", /but s\.toml has no 'wavelength\.range'; add it, so that/],
+    ["[wavelength]\nrange = [5, 6]", "", /but s\.toml has no 'wavelength\.lamps'; add it, so that/],
+    [
+      "[wavelength]\nrange = [5, 6]\nlamps = ['Ne']",
+      "[wanted]\nthroughput = 'twilight'",
+      /"twilight", but there is none/,
+    ],
+    [
+      "[wavelength]\nrange = [5, 6]\nlamps = ['Ne']",
+      "[[object]]\nname = 'a'\nframes = ['s1.fits']\nsky = 'on'",
+      /taken off 'a', but fewer than two sky fibres/,
+    ],
+  ])("what the spectrograph file %j lacks", async (spectrograph, plan, message) => {
+    writeFileSync(join(folder, "s.toml"), spectrograph);
+    writeFileSync(join(folder, "night.toml"), `spectrograph = "s.toml"\n${FLAT}arc = ["b1.fits"]\n${plan}\n`);
+    await expect(readPlan(join(folder, "night.toml"))).rejects.toThrow(message);
+  });
+
   test("a mask that the spectrograph file names, but that is not there", async () => {
     writeFileSync(join(folder, "night.toml"), `spectrograph = "s.toml"\n${FLAT}`);
     writeFileSync(join(folder, "s.toml"), '[detector]\nbad_pixels = "gone.fits"\n');
     await expect(readPlan(join(folder, "night.toml"))).rejects.toThrow(
-      /^s\.toml: 'detector\.bad_pixels' names .*gone\.fits, but/,
+      /^night\.toml: 'detector\.bad_pixels' of s\.toml names .*gone\.fits, but/,
     );
     writeFileSync(join(folder, "s.toml"), '[detector]\nbad_pixels = "mask.fits"\n');
     expect((await readPlan(join(folder, "night.toml"))).badPixels).toBe(join(folder, "mask.fits"));

@@ -4,7 +4,7 @@ import { mkdirSync, readFileSync, renameSync, rmSync, writeFileSync } from "node
 import { join } from "node:path";
 import { gzipSync } from "node:zlib";
 import { afterAll, describe, expect, test } from "vitest";
-import { parsePlan } from "../../src/night/plan.js";
+import { readPlan } from "../../src/night/plan.js";
 import { planText } from "../../src/night/planText.js";
 import { type Proposal, proposePlan } from "../../src/night/proposal.js";
 import { judgeMissing } from "../judges.js";
@@ -49,7 +49,10 @@ describe("a simulated night", () => {
     expect(proposal.assumptions.join("\n")).toMatch(/spectrograph\.toml is taken as the spectrograph file/);
     // The spectrograph file names its bad pixels itself.
     expect(proposal.badPixels).toBeUndefined();
-    expect(proposal.warnings).toEqual([]);
+    // The scene has one sky fibre.
+    expect(proposal.warnings).toEqual([
+      "spectrograph.toml: 'slit.sky' names fewer than two fibres, so no sky can be taken off.",
+    ]);
   });
 
   test("is the same from its text, wherever the plan lies", async () => {
@@ -57,10 +60,14 @@ describe("a simulated night", () => {
     const proposal = await proposePlan(join(night, "raw"));
     mkdirSync(join(night, "plans"));
     for (const home of [night, join(night, "plans"), join(night, "raw")]) {
-      const plan = parsePlan(planText(proposal, home), { file: "night.toml", folder: home });
+      writeFileSync(join(home, "night.toml"), planText(proposal, home));
+      const plan = await readPlan(join(home, "night.toml"));
       const paths = (list: { path: string }[]) => list.map(({ path }) => path);
       for (const role of Object.values(ROLES)) expect(plan.frames[role]).toEqual(paths(proposal.frames[role]));
-      expect(plan.objects).toEqual(proposal.objects.map(({ name, frames }) => ({ name, frames: paths(frames) })));
+      expect(plan.objects.map(({ name, frames }) => ({ name, frames }))).toEqual(
+        proposal.objects.map(({ name, frames }) => ({ name, frames: paths(frames) })),
+      );
+      expect(plan.wanted).toMatchObject({ wavelengths: true, throughput: "twilight", rebin: "off" });
       expect(plan.spectrograph).toBe(proposal.spectrograph);
     }
   });
@@ -182,6 +189,17 @@ describe("tells", () => {
     expect(spectrograph).toBeUndefined();
     expect(warnings.join("\n")).toMatch(/blue\.toml, red\.toml all read as spectrograph files/);
   });
+});
+
+test("arcs whose lines cannot be named are listed, and no wavelengths proposed", async () => {
+  const folder = keep(freshFolder());
+  await writeFrame(join(folder, "arc.fits"), { IMAGETYP: "arc" });
+  await writeFrame(join(folder, "flat.fits"), { IMAGETYP: "fibre flat" });
+  writeFileSync(join(folder, "bench.toml"), '[wavelength]\nlamps = ["Ne"]\n');
+  const proposal = await proposePlan(folder);
+  expect(proposal.warnings.join("\n")).toMatch(/^bench\.toml: without 'wavelength\.range' and/m);
+  writeFileSync(join(folder, "night.toml"), planText(proposal, folder));
+  expect((await readPlan(join(folder, "night.toml"))).wanted.wavelengths).toBe(false);
 });
 
 test("frames stand in the order in which they were exposed", async () => {
