@@ -115,10 +115,12 @@ function outcomeOf({ summary, endings }: NightOutcome, output: string): Outcome<
   const kept = states.filter((state) => state === "kept").length;
   const { night, version: _version, calibrations, frames, derived, nFailed, assumptions, warnings } = summary;
   const failed = frames.filter(({ verdict }) => verdict === "failed");
-  const lost = [...calibrations, ...derived].filter((one) => !one.made);
+  const lost = (list: typeof derived) =>
+    list.filter((one) => !one.made).map(({ product, reason }) => `failed: ${product}: ${reason}`);
   const failures = [
-    ...lost.map(({ product, reason }) => `failed: ${product}: ${reason}`),
+    ...lost(calibrations),
     ...failed.map(({ frame, reasons }) => `failed: ${frame}: ${reasons.join(" ")}`),
+    ...lost(derived),
   ];
   const doubts = frames
     .filter(({ verdict }) => verdict === "doubtful" || verdict === "bad")

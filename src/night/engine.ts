@@ -103,14 +103,14 @@ export class Engine {
   }
 
   /** Why a task that waits will never begin. */
-  private barred({ after, some = [] }: Task): Ending | undefined {
+  private barred({ after, some = [], least = 1 }: Task): Ending | undefined {
     if (this.stopping) return { state: "left" };
     for (const id of after) {
       const because = this.becauseOf(id);
       if (because !== undefined) return because;
     }
-    const all = some.map((id) => this.becauseOf(id));
-    return some.length > 0 && all.every((one) => one !== undefined) ? all[0] : undefined;
+    const lost = some.flatMap((id) => this.becauseOf(id) ?? []);
+    return some.length > 0 && some.length - lost.length < least ? lost[0] : undefined;
   }
 
   /** Why what hangs on a task cannot be made, when that task ended without its products. */

@@ -148,7 +148,7 @@ class NightTasks {
   private combined(name: string, frames: Task[]): Task {
     const word = fileWord(name);
     return this.task("combined", `combining ${name}`, [], [`${word}.combined.fits`], {
-      ...{ id: `combined ${word}`, some: ids(frames), part: "derived", object: name },
+      ...{ id: `combined ${word}`, some: ids(frames), least: 2, part: "derived", object: name },
       options: { cosmicRays: this.plan.wanted.cosmicRays, products: frames.flatMap(({ products }) => products) },
       effort: EFFORT.combined * frames.length,
     });

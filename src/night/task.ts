@@ -14,8 +14,9 @@ export interface Task {
   inputs: Record<string, string[]>;
   /** Tasks whose products are read. */
   after: string[];
-  /** The same of tasks of which some may fail: what there is is read, one at least. */
+  /** The same of tasks of which some may fail: what there is is read, `least` of them at least (one, if nothing is said). */
   some?: string[];
+  least?: number;
   /** Names of the files that it makes, below the run's folder. */
   products: string[];
   /** Name of a folder of its own, where the number of files shows only when they are made. */

@@ -150,11 +150,15 @@ describe("run", () => {
       expect(run.stdout).toMatch(
         /^failed: sci_01\.fits: .*sci_01\.fits: HDU 0: the file ends after \d+ of \d+ bytes of data/m,
       );
-      expect(run.stderr).toMatch(/^hatchel: 1 product could not be made; the first is sci_01\.fits/m);
+      expect(run.stderr).toMatch(/^hatchel: 2 products could not be made; the first is sci_01\.fits/m);
+      // Of two frames one is left: nothing to combine it with.
+      expect(run.stdout).toMatch(
+        /^failed: north-field\.combined\.fits: it needs sci_01\.spectra\.fits, which could not/m,
+      );
       const quiet = at(["run", "night.toml", "-o", "out", "--quiet"]);
       expect(quiet).toMatchObject({ code: 1, stdout: "" });
       const json = JSON.parse(at(["run", "night.toml", "-o", "out", "--json"]).stdout);
-      expect(jsonSchemas.run.parse(json)).toMatchObject({ failed: 1, made: 0 });
+      expect(jsonSchemas.run.parse(json)).toMatchObject({ failed: 2, made: 0 });
       expect(json.frames[0]).toMatchObject({ verdict: "failed", product: null });
       const same = readFileSync(join(night, "out/sci_02.spectra.fits"));
       expect(same.equals(readFileSync(join(cwd, "whole/sci_02.spectra.fits")))).toBe(true);

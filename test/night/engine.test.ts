@@ -273,6 +273,12 @@ describe("a task that reads what there is of some", () => {
     expect((await run(some())).states.field).toBe("not made");
   });
 
+  test("is not made of fewer than it needs", async () => {
+    writeFileSync(join(raw, "s1"), "broken");
+    const list = some().map((task) => (task.id === "field" ? { ...task, least: 2 } : task));
+    expect((await run(list)).states.field).toBe("not made");
+  });
+
   test("is made anew when the missing one comes", async () => {
     writeFileSync(join(raw, "s1"), "broken");
     await run(some());
