@@ -16,7 +16,7 @@ import { clampedKnots, fitSpline, splineCovariances, splineValues } from "./bspl
 import { CalibrationError } from "./errors.js";
 import { type FixedVariance, fixedVariance, modelVariance } from "./sampleVariance.js";
 import { fitAdaptedSpline, robustFit } from "./splineKnots.js";
-import { columnAt, wavelengthBreaks } from "./wavelengthBreaks.js";
+import { columnBetween, wavelengthBreaks } from "./wavelengthBreaks.js";
 
 export interface Throughput {
   nFibre: number;
@@ -172,7 +172,7 @@ function normalise({ spectra, wavelengths, relative, variance }: Bench, lit: num
 /** NaN where not more than half of the fibres reach. */
 function medianAt(relative: Float64Array, wavelengths: Float64Array, nx: number, lit: number[], wavelength: number) {
   const there = lit.flatMap((k) => {
-    const x = columnAt(wavelengths, k * nx, nx, wavelength);
+    const x = columnBetween(wavelengths, k * nx, nx, wavelength);
     if (Number.isNaN(x)) return [];
     const [low, share] = [Math.min(Math.floor(x), nx - 2), x - Math.min(Math.floor(x), nx - 2)];
     return [relative[k * nx + low] * (1 - share) + relative[k * nx + low + 1] * share];

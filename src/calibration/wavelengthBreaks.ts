@@ -30,7 +30,7 @@ function wavelengthBetween(wavelengths: Float64Array, row: number, nx: number, x
 }
 
 /** Where a fibre sees a wavelength, by linear interpolation between columns; NaN beyond its ends. `row`: its first index. */
-export function columnAt(wavelengths: Float64Array, row: number, nx: number, wavelength: number): number {
+export function columnBetween(wavelengths: Float64Array, row: number, nx: number, wavelength: number): number {
   const rising = wavelengths[row + nx - 1] > wavelengths[row];
   const before = (x: number) => (rising ? wavelengths[row + x] <= wavelength : wavelengths[row + x] >= wavelength);
   if (!before(0) || (before(nx - 1) && wavelengths[row + nx - 1] !== wavelength)) return Number.NaN;

@@ -59,6 +59,12 @@ export const contents: Entry[] = [
     define: async (command) => (await import("./trace.js")).addTrace(command),
   },
   {
+    name: "throughput",
+    takes: "<FRAME...>",
+    summary: "what each fibre passes on, from twilight or fibre flats",
+    define: async (command) => (await import("./throughput.js")).addThroughput(command),
+  },
+  {
     name: "extract",
     works: true,
     takes: "<FRAME>",

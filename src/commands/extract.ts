@@ -8,6 +8,19 @@ import { imageBytes } from "../kernels/extractionMemory.js";
 import { countFibres, type SpectraSummary, summariseSpectra } from "../report/summary.js";
 import type { Shift } from "../tramlines/shift.js";
 import {
+  addCalibrateOptions,
+  type CalibrateOptions,
+  calibrateExtraction,
+  calibrateLines,
+  calibratePaths,
+  calibrationAssumptions,
+  calibrationFacts,
+  calibrationJson,
+  calibrationOf,
+  requireFittingCalibration,
+  requireSkyFibres,
+} from "./calibrateOptions.js";
+import {
   addExtraOptions,
   type ExtraOptions,
   extraLines,
@@ -52,7 +65,7 @@ import { counted, fixed, percentage, textPairs } from "./textTable.js";
 import { fibresText, tracingFacts, tracingJson } from "./trace.js";
 import { version } from "./version.js";
 
-interface ExtractOptions extends FrameOptions, TramlineOptions, MethodOptions, ExtraOptions {
+interface ExtractOptions extends FrameOptions, TramlineOptions, MethodOptions, ExtraOptions, CalibrateOptions {
   output: string;
   force?: boolean;
 }
@@ -63,7 +76,7 @@ export function addExtract(command: Command): void {
     .argument("<FRAME>", "the raw frame; - is standard input")
     .addOption(outputOption("spectra").makeOptionMandatory());
   addTramlineOptions(command);
-  addExtraOptions(addMethodOptions(command)).addOption(forceOption());
+  addCalibrateOptions(addExtraOptions(addMethodOptions(command))).addOption(forceOption());
   addCommonOptions(addFrameOptions(command)).action((frame: string, options: ExtractOptions) =>
     perform("extract", options, (progress) => extract(frame, options, progress)),
   );
@@ -73,30 +86,37 @@ async function extract(path: string, options: ExtractOptions, progress: Progress
   requireTramlineSource("extract", options);
   requireFittingMethod("extract", options);
   requireFittingExtras(options);
+  requireFittingCalibration(options);
   const { output, force } = options;
-  const paths = inputPaths([path, ...extraPaths(options)], options);
+  const paths = inputPaths([path, ...extraPaths(options), ...calibratePaths(options)], options);
   checkOutput(output, { force, inputs: paths });
   const bench = await openBench(paths, options, progress);
+  requireSkyFibres(options, bench);
   const given = await givenTramlines(options);
   const frame = await readFrame(path, "science", bench, given && imageBytes(given.nx, given.ny, given.nFibre));
   const traced = await tramlinesFor(frame, options, bench, progress, given);
   requireAperture(options.halfAperture, traced);
   const pair = await pairHits(frame, traced.tramlines, options, bench, progress);
   progress.stage(`extracting ${frame.name}`);
-  const extraction = await extractFrame(frame, traced.tramlines, {
+  const raw = await extractFrame(frame, traced.tramlines, {
     ...{ ...extractionOptions(options), ...namingOptions(options) },
     ...(pair === undefined ? {} : { knownHits: pair.hits }),
     onProgress: progress.share,
   });
+  const calibrated = await calibrateExtraction(frame, raw, options, bench, progress);
+  const extraction = calibrated === undefined ? raw : { ...raw, spectra: calibrated.spectra };
+  const { hdus, calibration } = calibrationOf(calibrated);
   const extras = await measureExtras(frame, traced.tramlines, extraction, options, bench, progress);
   const signalToNoise = medianSignalToNoise(extraction.spectra);
   const history = {
     signalToNoise,
-    ...{ version, inputs: bench.inputs, sky: bench.spectrograph?.slit?.sky, extra: extras.hdus },
+    ...{ version, inputs: bench.inputs, sky: bench.spectrograph?.slit?.sky, calibration },
+    extra: [...hdus, ...extras.hdus],
     options: [
       ...methodLines({ ...options, precision: extraction.precision }),
       ...frameLines(options),
       ...extraLines(options),
+      ...calibrateLines(options),
     ],
   };
   await uninterrupted(() =>
@@ -104,14 +124,25 @@ async function extract(path: string, options: ExtractOptions, progress: Progress
   );
   const summary = summariseSpectra(extraction.spectra, traced.tramlines, signalToNoise);
   const { assumptions, warnings } = notes(frame, traced, extraction, summary);
-  const said = [...facts(traced, extraction, summary, options), ...extrasFacts(pair, extras)];
+  assumptions.push(...calibrationAssumptions(calibrated, frame.name));
+  const said = [
+    ...facts(traced, extraction, summary, options),
+    ...extrasFacts(pair, extras),
+    ...calibrationFacts(calibrated),
+  ];
   return {
     json: {
       output,
       ...extractJson(frame, traced, extraction, summary, options),
       ...extrasJson(pair, extras),
+      calibration: calibrationJson(calibrated),
       assumptions,
-      warnings: oneOfEach([...warnings, ...(pair?.warnings ?? []), ...extras.warnings]),
+      warnings: oneOfEach([
+        ...warnings,
+        ...(pair?.warnings ?? []),
+        ...extras.warnings,
+        ...(calibrated?.warnings ?? []),
+      ]),
     },
     text: `${output === "-" ? "standard output" : output}: spectra of ${frame.name}\n${textPairs(said)}`,
   };

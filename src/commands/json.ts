@@ -10,6 +10,7 @@ import { rebinKeys } from "./rebinJson.js";
 import { runKeys } from "./runJson.js";
 import { stackKeys } from "./stackJson.js";
 import { tablesKeys } from "./tablesJson.js";
+import { calibrationKeys, throughputKeys } from "./throughputJson.js";
 
 const number = z.number().nullable();
 const count = z.int().min(0);
@@ -204,6 +205,7 @@ const extract = z.strictObject({
     .nullable()
     .describe("cosmic rays found by a second frame; null without --pair"),
   crosstalk: crosstalk.nullable().describe("null for joint unless asked for"),
+  ...calibrationKeys,
   targets: z
     .array(
       z.strictObject({
@@ -380,6 +382,8 @@ const demo = z.strictObject({
 
 const combine = z.strictObject({ ...head("combine"), ...combineKeys, ...tail });
 
+const throughput = z.strictObject({ ...head("throughput"), ...throughputKeys, ...tail });
+
 const rebin = z.strictObject({ ...head("rebin"), ...rebinKeys, ...tail });
 
 const stack = z.strictObject({ ...head("stack"), ...stackKeys, ...tail });
@@ -414,6 +418,7 @@ export const jsonSchemas = {
   verify,
   recover,
   combine,
+  throughput,
   rebin,
   tables,
   failure,

@@ -1,5 +1,5 @@
 import { describe, expect, it } from "vitest";
-import { columnAt, wavelengthBreaks } from "../../src/calibration/wavelengthBreaks.js";
+import { columnBetween, wavelengthBreaks } from "../../src/calibration/wavelengthBreaks.js";
 
 const nx = 50;
 /** Row k: λ = 6000 + 3k + sign·(2x + 0.01x²). */
@@ -26,11 +26,11 @@ describe.each([1, -1])("breaks some pixels apart, sign %i", (sign) => {
 
   it("columns that see a wavelength, between whole ones too", () => {
     const at = (x: number) => 6009 + sign * (2 * x + 0.01 * x * x);
-    expect(columnAt(image, 3 * nx, nx, at(17))).toBeCloseTo(17, 9);
-    expect(columnAt(image, 3 * nx, nx, (at(17) + at(18)) / 2)).toBeCloseTo(17.5, 9);
-    expect(columnAt(image, 3 * nx, nx, at(49))).toBeCloseTo(49, 9);
-    expect(columnAt(image, 3 * nx, nx, at(49.1))).toBeNaN();
-    expect(columnAt(image, 3 * nx, nx, at(-0.1))).toBeNaN();
-    expect(columnAt(image, 2 * nx, nx, 6010)).toBeNaN();
+    expect(columnBetween(image, 3 * nx, nx, at(17))).toBeCloseTo(17, 9);
+    expect(columnBetween(image, 3 * nx, nx, (at(17) + at(18)) / 2)).toBeCloseTo(17.5, 9);
+    expect(columnBetween(image, 3 * nx, nx, at(49))).toBeCloseTo(49, 9);
+    expect(columnBetween(image, 3 * nx, nx, at(49.1))).toBeNaN();
+    expect(columnBetween(image, 3 * nx, nx, at(-0.1))).toBeNaN();
+    expect(columnBetween(image, 2 * nx, nx, 6010)).toBeNaN();
   });
 });
