@@ -13,18 +13,12 @@ import { fitSky, type Sky } from "./sky.js";
 import { type SkyScales, scaleSky } from "./skyScale.js";
 import type { Throughput } from "./throughput.js";
 import { type WavelengthSolution, wavelengthImage } from "./wavelengths.js";
-
-/** Where the light of a frame lies against the arc's, pixels. */
-export interface ZeroPoint {
-  pixels: number;
-  error: number;
-  nLine: number;
-}
+import { type FrameZeroPoint, measureZeroPoint } from "./zeroPoint.js";
 
 export interface SpectraCalibration {
   solution: WavelengthSolution;
-  /** null: not measurable, the arc's wavelengths are taken as they are. */
-  zeroPoint?: ZeroPoint | null;
+  /** Where the light lies against the arc's; measured on sky lines when absent. null: take the arc's wavelengths as they are. */
+  zeroPoint?: FrameZeroPoint | null;
   throughput?: Throughput;
   /** Rows, from 0, of fibres that see only sky; absent: the sky is left on. */
   skyFibres?: number[];
@@ -41,7 +35,8 @@ export interface Calibrated {
   /** nFibre × nx, Å. */
   wavelengths: Float64Array;
   medium: "air" | "vacuum";
-  zeroPoint: ZeroPoint | null;
+  /** null: not measured. */
+  zeroPoint: FrameZeroPoint | null;
   throughput: Throughput | null;
   sky: Sky | null;
   /** Where lines were scaled: how far, for each fibre and group of lines. */
@@ -51,11 +46,12 @@ export interface Calibrated {
 
 /** @throws CalibrationError when solution or throughput belong to another readout, or the sky cannot be made. */
 export function calibrateSpectra(spectra: Spectra, geometryDigest: string, input: SpectraCalibration): Calibrated {
-  const { solution, throughput = null, skyFibres, scaleLines = false, zeroPoint = null, name = "the frame" } = input;
+  const { solution, throughput = null, skyFibres, scaleLines = false, name = "the frame" } = input;
   requireReadout(name, spectra, geometryDigest, "wavelengths", solution, "reduce an arc");
   if (throughput !== null) {
     requireReadout(name, spectra, geometryDigest, "throughput", throughput, "measure it on a twilight or fibre flat");
   }
+  const zeroPoint = input.zeroPoint === undefined ? measureZeroPoint(spectra, solution) : input.zeroPoint;
   const wavelengths = wavelengthImage(solution, zeroPoint?.pixels ?? 0);
   const relative = throughput?.relative ?? null;
   const sky = skyFibres === undefined ? null : fitSky({ spectra, wavelengths, relative, skyFibres }, name);
@@ -68,7 +64,10 @@ export function calibrateSpectra(spectra: Spectra, geometryDigest: string, input
   return {
     spectra: flat,
     ...{ wavelengths, medium: solution.medium, zeroPoint, throughput, sky, scaled },
-    warnings: sky === null ? [] : skyWarnings(sky, name),
+    warnings: [
+      ...(zeroPoint?.warnings ?? []).map((sentence) => `${name}: ${sentence}`),
+      ...(sky === null ? [] : skyWarnings(sky, name)),
+    ],
   };
 }
 

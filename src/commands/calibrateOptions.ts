@@ -133,7 +133,7 @@ export function calibrationAssumptions(calibrated: Calibrated | undefined, name:
   return [
     ...(zeroPoint !== null
       ? []
-      : [`${name}: its light lies where the arc's lay; a zero point on sky lines was not measured.`]),
+      : [`${name}: its light lies where the arc's lay; no sky line was strong enough to measure a zero point on.`]),
     ...(sky !== null && throughput === null
       ? [
           `${name}: all fibres pass on the same share of light, for want of --throughput; the sky comes off wrongly where they do not.`,

@@ -41,7 +41,7 @@ describe("the sky", () => {
     const pulls = { targets: [] as number[], skies: [] as number[], lines: [] as number[] };
     let [left, nLeft] = [0, 0];
     for (const seed of [1, 2, 3]) {
-      const { spectra } = calibrateSpectra(night(seed), DIGEST, { solution, throughput, skyFibres });
+      const { spectra } = calibrateSpectra(night(seed), DIGEST, { solution, zeroPoint: null, throughput, skyFibres });
       for (let i = 0; i < wavelengths.length; i++) {
         const k = Math.floor(i / 512);
         if (Number.isNaN(spectra.flux[i])) continue;
@@ -85,7 +85,13 @@ describe("the sky", () => {
       skyFibres: skyFibres.filter((k) => k !== 16),
     });
     expect(found.values).toEqual(without.values);
-    const { warnings } = calibrateSpectra(withObject, DIGEST, { solution, throughput, skyFibres, name: "sci.fits" });
+    const { warnings } = calibrateSpectra(withObject, DIGEST, {
+      solution,
+      zeroPoint: null,
+      throughput,
+      skyFibres,
+      name: "sci.fits",
+    });
     expect(warnings.join()).toContain(
       "sci.fits: 1 of 9 sky fibres does not see the sky of the others and was left out: 17 (+",
     );
@@ -112,7 +118,7 @@ describe("calibration", () => {
   it("divides flux, variance and covariance by the throughput, and adds the throughput's variance", () => {
     const raw = night(7);
     const uncertain = { ...throughput, variance: relative.map((t) => (0.01 * t) ** 2) };
-    const { spectra } = calibrateSpectra(raw, DIGEST, { solution, throughput: uncertain });
+    const { spectra } = calibrateSpectra(raw, DIGEST, { solution, zeroPoint: null, throughput: uncertain });
     const i = 5 * 512 + 100;
     const t = relative[i];
     expect(spectra.flux[i]).toBeCloseTo(raw.flux[i] / t, 3);
@@ -130,7 +136,7 @@ describe("calibration", () => {
       for (const k of [4, 5, 8, 9]) {
         for (let x = 0; x < 512; x++) raw.flux[k * 512 + x] = truth[k * 512 + x] * sky(wavelengths[k * 512 + x]);
       }
-      const { spectra } = calibrateSpectra(raw, DIGEST, { solution, throughput, skyFibres });
+      const { spectra } = calibrateSpectra(raw, DIGEST, { solution, zeroPoint: null, throughput, skyFibres });
       for (const k of [4, 8]) {
         for (let i = k * 512 + 60; i < k * 512 + 450; i++) {
           if (sky(wavelengths[i]) > 125) continue;
@@ -145,14 +151,14 @@ describe("calibration", () => {
   });
 
   it("moves wavelengths by the zero point", () => {
-    const zeroPoint = { pixels: 0.5, error: 0.01, nLine: 7 };
+    const zeroPoint = { pixels: 0.5, error: 0.01, nLine: 7, warnings: [] };
     const moved = calibrateSpectra(night(8), DIGEST, { solution, zeroPoint });
     expect(moved.wavelengths).toEqual(wavelengthImage(solution, 0.5));
     expect(moved.zeroPoint).toBe(zeroPoint);
   });
 
   it("flags what has no wavelength, and leaves no number there", () => {
-    const { spectra } = calibrateSpectra(night(9), DIGEST, { solution, throughput, skyFibres });
+    const { spectra } = calibrateSpectra(night(9), DIGEST, { solution, zeroPoint: null, throughput, skyFibres });
     expect(spectra.flags[13 * 512 + 9]).toBe(1024 | 4096);
     expect(spectra.flux[13 * 512 + 9]).toBeNaN();
     expect(spectra.variance[13 * 512 + 9]).toBeNaN();

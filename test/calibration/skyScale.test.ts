@@ -67,7 +67,13 @@ const targets = Array.from({ length: 40 }, (_, k) => k).filter((k) => !skyFibres
 const atLine = (wavelength: number) => LINES.some(([at]) => Math.abs(wavelength - at) < 5);
 
 function pulls(vary: boolean, scaleLines: boolean, seed: number): number[] {
-  const { spectra } = calibrateSpectra(frame(vary, seed), DIGEST, { solution, throughput, skyFibres, scaleLines });
+  const { spectra } = calibrateSpectra(frame(vary, seed), DIGEST, {
+    solution,
+    zeroPoint: null,
+    throughput,
+    skyFibres,
+    scaleLines,
+  });
   return targets.flatMap((k) =>
     Array.from({ length: 512 }, (_, x) => k * 512 + x)
       .filter((i) => atLine(wavelengths[i]) && Number.isFinite(spectra.flux[i]))
@@ -92,7 +98,7 @@ describe("lines scaled fibre by fibre", () => {
     const own = (wavelength: number, k: number) =>
       k === 21 ? benchLine(6534, 6000)(wavelength) + benchLine(6301.5, 9000)(wavelength) : 0;
     const scaledOf = (spectra: ReturnType<typeof frame>) =>
-      calibrateSpectra(spectra, DIGEST, { solution, throughput, skyFibres, scaleLines: true }).scaled!;
+      calibrateSpectra(spectra, DIGEST, { solution, zeroPoint: null, throughput, skyFibres, scaleLines: true }).scaled!;
     const [without, withLine] = [scaledOf(frame(false, 3)), scaledOf(frame(false, 3, own))];
     for (const name of ["OH 6-1", "O I 6300"]) {
       const i = 21 * SKY_GROUPS.length + group(name);
@@ -101,7 +107,13 @@ describe("lines scaled fibre by fibre", () => {
   });
 
   it("find the factors that were put in", () => {
-    const { scaled } = calibrateSpectra(frame(true, 4), DIGEST, { solution, throughput, skyFibres, scaleLines: true });
+    const { scaled } = calibrateSpectra(frame(true, 4), DIGEST, {
+      solution,
+      zeroPoint: null,
+      throughput,
+      skyFibres,
+      scaleLines: true,
+    });
     const mean = (name: string) => skyFibres.reduce((sum, k) => sum + factors[k].get(name)!, 0) / skyFibres.length;
     for (const name of ["OH 6-1", "OH 7-2"]) {
       const off = targets.map((k) => {
