@@ -4,6 +4,7 @@ import { calibratedProductHdus } from "../calibration/calibratedFile.js";
 import { readProduct } from "../calibration/spectraProduct.js";
 import { readThroughput } from "../calibration/throughputFile.js";
 import { readWavelengths } from "../calibration/wavelengthFile.js";
+import { type FrameZeroPoint, measureZeroPoint } from "../calibration/zeroPoint.js";
 import { medianSignalToNoise } from "../extraction/snr.js";
 import { writeFits } from "../fits/write.js";
 import { median } from "../reference/median.js";
@@ -21,8 +22,9 @@ export async function makeCalibrated(job: Job): Promise<Facts> {
   const throughput = hasThroughput ? await openProduct(job, "throughput.fits", readThroughput) : undefined;
   const slit = (await openSpectrograph(job))?.slit;
   const digest = product.primaryHeader.text("TRAMGEOM") ?? "";
+  const measured = measureZeroPoint(product.spectra, solution);
   const calibrated = calibrateSpectra(product.spectra, digest, {
-    ...{ solution, name: product.name },
+    ...{ solution, name: product.name, zeroPoint: measured },
     ...(throughput === undefined ? {} : { throughput }),
     ...(sky === "off" ? {} : { skyFibres: (slit?.sky ?? []).map((fibre) => fibre - 1) }),
     scaleLines: sky === "scaled",
@@ -37,8 +39,13 @@ export async function makeCalibrated(job: Job): Promise<Facts> {
     zeroPointPixels: zeroPoint === null ? null : zeroPoint.pixels,
     zeroPointError: zeroPoint === null ? null : finite(zeroPoint.error),
     ...skyFacts(calibrated.sky),
-    warnings: calibrated.warnings,
+    warnings: [...zeroPointWarnings(product.name, measured), ...calibrated.warnings],
   };
+}
+
+function zeroPointWarnings(name: string, measured: FrameZeroPoint | null): string[] {
+  if (measured !== null) return measured.warnings.map((sentence) => `${name}: ${sentence}`);
+  return [`${name}: no line of the night sky tells its zero point, so the arc's wavelengths are taken as they are.`];
 }
 
 /** What is left of sky fibres when the others foretell them. */

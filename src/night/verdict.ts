@@ -9,6 +9,10 @@ const FEW_USABLE = 0.5;
 const SOME_USABLE = 0.9;
 /** Pixels: further, and the flat shows another state of the instrument. */
 const FAR_SHIFT = 1;
+/** Pixels along dispersion: further, and another arc would serve the frame better. */
+const FAR_ZERO_POINT = 1;
+/** Scatter of what is left of the sky's lines over what noise explains. */
+const SKY_PULL = 1.5;
 /** Of the light per second of the field's brightest frame. */
 const DIM_SHARE = 0.5;
 
@@ -23,6 +27,14 @@ export function frameVerdict(facts: Facts, siblings: readonly Facts[]): { verdic
   if (shift === null) doubts.push("too little light to measure its shift against the flat");
   else if (Math.abs(shift) > FAR_SHIFT) {
     doubts.push(`its light lies ${shift.toFixed(2)} px from the flat's; a flat nearer in time would serve it better`);
+  }
+  const zero = facts.zeroPointPixels;
+  if (typeof zero === "number" && Math.abs(zero) > FAR_ZERO_POINT) {
+    doubts.push(`its lines lie ${zero.toFixed(2)} px from the arc's; an arc nearer in time would serve it better`);
+  }
+  const pull = facts.skyPullAtLines;
+  if (typeof pull === "number" && pull > SKY_PULL) {
+    doubts.push(`the sky's lines are left with ${pull.toFixed(1)} times the scatter that noise explains`);
   }
   const dim = dimness(facts, siblings);
   if (dim !== undefined) doubts.push(dim);

@@ -17,6 +17,8 @@ test.each([
   ["few points that can be trusted", { usableShare: 0.4 }, "bad", /^only 40 % of its points/],
   ["fewer than usual", { usableShare: 0.8 }, "doubtful", /^only 80 % of its points/],
   ["a shift of over a pixel", { shiftPixels: -1.2 }, "doubtful", /^its light lies -1\.20 px from the flat's/],
+  ["a zero point of over a pixel", { zeroPointPixels: 1.4 }, "doubtful", /^its lines lie 1\.40 px from the arc's/],
+  ["sky lines that are left", { skyPullAtLines: 2.2 }, "doubtful", /^the sky's lines are left with 2\.2 times/],
   ["no measurable shift", { shiftPixels: null }, "doubtful", /^too little light to measure its shift/],
 ])("%s", (_what, more, grade, reason) => {
   const judged = verdict(more);
