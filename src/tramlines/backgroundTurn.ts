@@ -21,7 +21,7 @@ export function backgroundTurn(sample: ColumnSample, fits: ColumnFits, before: S
   const rows = seenRows(sample);
   const nX = termsAlong(sample.nx, mostX);
   // Terms made for all rows would swing where half of them are left.
-  const nY = Math.max(1, Math.round(termsAlong(sample.ny, mostY) * (rows.length / sample.ny) ** 2));
+  const nY = Math.max(1, Math.round(termsAlong(sample.ny, mostY) * (rows.length / sample.ny)));
   return solve(sumNormal(sample, fits, nX), before, nX, nY, rows);
 }
 

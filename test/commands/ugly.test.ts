@@ -207,14 +207,13 @@ place = "[1:476,1:1024]"
       return y < 198.5 ? true : y > 204 ? false : undefined;
     };
     // The background, told by the rows that are left, moves a cosmic ray here and there over the threshold.
-    expect(misflagged(spectra, lost).length).toBeLessThan(150);
+    expect(misflagged(spectra, lost).length).toBeLessThan(60);
     for (let at = 0; at < 20 * spectra.nx; at++) expect(spectra.flux[at]).toBeNaN();
-    // Scattered light is seen in half of the gaps only, which moves faint fibres by a part of their error.
+    // Scattered light is seen in half of the rows only, which moves faint fibres by a part of their error.
     const off = distances(spectra, (k, x) => lost(k, x) !== false);
     expect(off.length).toBeGreaterThan(45_000);
-    expect(quantile(off, 0.5)).toBeLessThan(0.5);
-    // Beside the lost rows the few terms that are left miss it by more.
-    expect(quantile(off, 0.95)).toBeLessThan(4.5);
+    expect(quantile(off, 0.5)).toBeLessThan(0.3);
+    expect(quantile(off, 0.95)).toBeLessThan(0.8);
   });
 
   test("zero_columns.fits has no value in its 120 lost columns, and the same ones beside them", async () => {
