@@ -1,6 +1,6 @@
 /** Lines identified in one fibre, found again in all others: from fibre to fibre along the slit the pattern moves a little, by what it
  * moved before and by a shift that most of its lines agree on, so that a bowed slit is followed and no line is taken for its
- * neighbour. */
+ * neighbour. A fibre in which another shift does nearly as well is left without lines, for the surface through the others to fill. */
 import { legendreArgument, legendreFitClipped, legendreValue } from "../reference/legendre.js";
 import type { ArcPeak } from "./lineCentres.js";
 
@@ -12,6 +12,9 @@ const reachFwhm = 1.5;
 const firstReachFwhm = 4;
 /** Peaks this near to where a line is expected are it, FWHM. */
 const nearFwhm = 0.4;
+/** The shift that most lines agree on must have this many times the votes of any further than this from it, FWHM. */
+const clearRatio = 1.5;
+const rivalFwhm = 0.6;
 /** Share of the lines, at least, that must be seen again. */
 const leastShare = 0.4;
 const leastLines = 4;
@@ -44,7 +47,7 @@ export function followLines(
       const distance = slit[k] - slit[from];
       const expected = Number.isNaN(rate) ? 0 : rate * distance;
       const reach = (Number.isNaN(rate) ? firstReachFwhm : reachFwhm) * fwhm;
-      const next = again(peaks[k], places, expected, reach, nearFwhm * fwhm, nx);
+      const next = again(peaks[k], places, expected, reach, fwhm, nx);
       if (next === null) continue;
       next.seen.forEach((line, peak) => {
         found[k][peak] = line;
@@ -57,17 +60,19 @@ export function followLines(
   return found;
 }
 
-/** The pattern in another fibre; null when too little of it is there. */
+/** The pattern in another fibre; null when too little of it is there, or when it may lie in more than one place. */
 function again(
   peaks: ArcPeak[],
   places: Place[],
   expected: number,
   reach: number,
-  near: number,
+  fwhm: number,
   nx: number,
 ): { seen: Int32Array; places: Place[]; moved: number } | null {
   const needed = Math.max(leastLines, leastShare * places.length);
-  const shift = commonShift(peaks, places, expected, reach, near);
+  const near = nearFwhm * fwhm;
+  const shift = commonShift(peaks, places, expected, reach, fwhm);
+  if (shift === null) return null;
   let pairs = pairUp(peaks, places, () => shift, near);
   if (pairs.length < needed) return null;
   let moves = (_x: number) => shift;
@@ -88,23 +93,30 @@ function again(
   return { seen, places: moved, moved: moves((nx - 1) / 2) };
 }
 
-/** The shift within `reach` of the expected one that brings most lines onto peaks; of equals the nearest. */
-function commonShift(peaks: ArcPeak[], places: Place[], expected: number, reach: number, near: number): number {
+/** The shift within `reach` of the expected one that brings most lines onto peaks; null when another does nearly as well. */
+function commonShift(peaks: ArcPeak[], places: Place[], expected: number, reach: number, fwhm: number): number | null {
   const shifts = places.flatMap(({ x }) =>
     peaks.map((peak) => peak.x - x).filter((shift) => Math.abs(shift - expected) <= reach),
   );
   shifts.sort((a, b) => a - b);
+  const best = mostVoted(shifts, expected, nearFwhm * fwhm);
+  const others = shifts.filter((shift) => Math.abs(shift - best.shift) > rivalFwhm * fwhm);
+  return best.votes >= clearRatio * mostVoted(others, expected, nearFwhm * fwhm).votes ? best.shift : null;
+}
+
+/** Middle of the most of `sorted` that lie within `width` of each other; of equals the nearest to `expected`. */
+function mostVoted(sorted: number[], expected: number, width: number): { shift: number; votes: number } {
   let [best, most] = [expected, 0];
   let low = 0;
-  for (let high = 0; high < shifts.length; high++) {
-    while (shifts[high] - shifts[low] > near) low++;
-    const middle = shifts[(low + high) >> 1];
+  for (let high = 0; high < sorted.length; high++) {
+    while (sorted[high] - sorted[low] > width) low++;
+    const middle = sorted[(low + high) >> 1];
     const count = high - low + 1;
     if (count > most || (count === most && Math.abs(middle - expected) < Math.abs(best - expected))) {
       [best, most] = [middle, count];
     }
   }
-  return best;
+  return { shift: best, votes: most };
 }
 
 /** Peaks and lines that are each other's nearest. */

@@ -59,4 +59,41 @@ describe("following lines", () => {
       });
     });
   });
+
+  it("leaves out a fibre of nothing but false peaks, as many as may be, and follows a bow of 20 px beyond it", () => {
+    const bowed = (line: number, k: number) => lines[line] + 20 * slit[k] ** 2;
+    const falseFibre = 30;
+    const peaks = Array.from({ length: nFibre }, (_, k) => {
+      if (k !== falseFibre) return [...lines.keys()].map((line) => peak(bowed(line, k) + 0.03 * dice.normal()));
+      const stray = Array.from({ length: 320 }, () => nx * dice.uniform()).sort((a, b) => a - b);
+      return stray.map(peak);
+    });
+    const matches = [...lines.keys()].map((line) => ({ peak: line, line }));
+    followLines(peaks, 5, matches, slit, nx, 2.2).forEach((row, k) => {
+      if (k === falseFibre) expect(row.every((line) => line === -1)).toBe(true);
+      else expect(Array.from(row), `fibre ${k}`).toEqual([...lines.keys()]);
+    });
+  });
+
+  it("tells two close lines apart by the others, and by themselves only when nothing else may be meant", () => {
+    // 2.6 columns apart: either may lie where the other is expected.
+    const pairs = [100, 102.6, 400, 402.6, 700, 702.6];
+    const drift = (k: number) => 20 * slit[k] ** 2;
+    const start = 20;
+    const follow = (all: number[], left: (line: number) => boolean) => {
+      const shown = [...all.keys()].filter(left);
+      const peaks = Array.from({ length: nFibre }, (_, k) => {
+        const seen = k === start + 1 ? shown : [...all.keys()];
+        return seen.map((line) => peak(all[line] + drift(k)));
+      });
+      const matches = [...all.keys()].map((line) => ({ peak: line, line }));
+      return { shown, found: followLines(peaks, start, matches, slit, nx, 2.2) };
+    };
+    // The first of each pair is lost: the second three fit the first three's places as well.
+    const alone = follow([...pairs, 250], (line) => line % 2 === 1 || line === 6);
+    expect(Array.from(alone.found[start + 1])).toEqual([-1, -1, -1, -1]);
+    for (const k of [0, start + 2, nFibre - 1]) expect(Array.from(alone.found[k])).toEqual([0, 1, 2, 3, 4, 5, 6]);
+    const helped = follow([...pairs, 250, 300, 520, 610], (line) => line % 2 === 1 || line >= 6);
+    expect(Array.from(helped.found[start + 1])).toEqual(helped.shown);
+  });
 });
