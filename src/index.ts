@@ -10,10 +10,14 @@ export {
   combineSpectra,
   type FrameShare,
 } from "./calibration/combineSpectra.js";
+export type { DispersionFit } from "./calibration/dispersion.js";
 export { CalibrationError } from "./calibration/errors.js";
-export { type GridRequest, gridWavelength, type Medium, makeGrid, type SpectralGrid } from "./calibration/grid.js";
+export { type GridRequest, gridWavelength, makeGrid, type SpectralGrid } from "./calibration/grid.js";
+export { type IdentifiablePeak, type Identification, identify } from "./calibration/identify.js";
 export { crowdedLines, joinLines, type LineList, lampLines } from "./calibration/lamps.js";
+export type { ArcPeak } from "./calibration/lineCentres.js";
 export { parseLineFile, readLineFile } from "./calibration/lineFile.js";
+export type { Medium } from "./calibration/medium.js";
 export { type RebinnedSpectra, type RebinOptions, rebinSpectra } from "./calibration/rebin.js";
 export { rebinnedHdus } from "./calibration/rebinFile.js";
 export { airToVacuum, vacuumToAir } from "./calibration/refraction.js";

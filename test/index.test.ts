@@ -9,8 +9,8 @@ const VALUES = `
   SpectrographError TraceError UNUSABLE airToVacuum calibrateSpectra calibratedHdus calibrationCards
   checkGeometry chooseProfile columnAt combineSpectra combinedHdus compareMethods correctFrame countFibres
   crosstalkHdus crowdedLines detectorHdus dispersionAt ecsvText encodeFits extractFrame fibreTables
-  findPairHits formatSection fwhmAt gridWavelength historyCards inputCards joinLines lampLines listHdus
-  loadCalibrations loadKernels lookAt makeCalibrations makeGrid measureCrosstalk measureNoise
+  findPairHits formatSection fwhmAt gridWavelength historyCards identify inputCards joinLines lampLines
+  listHdus loadCalibrations loadKernels lookAt makeCalibrations makeGrid measureCrosstalk measureNoise
   measureSingleFibre measureThroughput measureWavelengths measureZeroPoint medianFwhm medianSignalToNoise
   neglectedShare noCalibrations noiseWarnings parseLineFile parseScene parseSection parseSpectrograph
   readDetector readImage readLineFile readPositions readProduct readScene readSpectra readSpectrograph
@@ -24,20 +24,21 @@ const VALUES = `
 `;
 
 const TYPES = `
-  AmplifierNoise ArcExposure ArcLine ArcResult Calibrated CalibrationFrames CalibrationInput
+  AmplifierNoise ArcExposure ArcLine ArcPeak ArcResult Calibrated CalibrationFrames CalibrationInput
   CalibrationPaths Calibrations Card CardValue CellScore ChecksumState CombineOptions CombinedSpectra
   Comparison CorrectOptions CosmicScore CosmicTruth CrosstalkMatrix DarkScore DecadeScore
-  DetectorFileOptions DetectorGeometry Extraction ExtractionOptions FibreBias FibreCheck FibreCounts
-  FibreState Finding FitsColumn FitsErrorCode FitsImage FitsTable FlagCounts Frame FrameList FrameShare
-  FrameZeroPoint Frames GaussianProfile GridRequest HduSummary LeakScore LineList LoneEstimator
-  LookOptions LookReport Medium Method MethodCheck MethodComparison NoiseFrames NoiseIngredients
-  NoiseMeasurement OutputColumn OutputHdu OutputImage PairHits PixelArray PixelWavelengths Profile
-  ProfileChoice ProfileKind RawImage ReadOptions RebinOptions RebinnedSpectra Recovery RecoveryOptions
-  Role Scene SceneExposure Section SeenLeak SimulatedExposure SimulationFiles SimulationOptions
-  SingleFibreCheck Sky SkyLine SlitLayout Spectra SpectraCalibration SpectraFileOptions SpectraProduct
-  SpectraSummary SpectralGrid Spectrograph SpectrumTable StackReport StackedFrame TableOptions Target
-  TargetSpectra Throughput TraceOptions TraceScore Tracing Tramlines TramlinesFileOptions TrueFlux
-  TrueLine Truth Verdict Verification WavelengthFileOptions WavelengthSolution WriteOptions
+  DetectorFileOptions DetectorGeometry DispersionFit Extraction ExtractionOptions FibreBias FibreCheck
+  FibreCounts FibreState Finding FitsColumn FitsErrorCode FitsImage FitsTable FlagCounts Frame FrameList
+  FrameShare FrameZeroPoint Frames GaussianProfile GridRequest HduSummary IdentifiablePeak Identification
+  LeakScore LineList LoneEstimator LookOptions LookReport Medium Method MethodCheck MethodComparison
+  NoiseFrames NoiseIngredients NoiseMeasurement OutputColumn OutputHdu OutputImage PairHits PixelArray
+  PixelWavelengths Profile ProfileChoice ProfileKind RawImage ReadOptions RebinOptions RebinnedSpectra
+  Recovery RecoveryOptions Role Scene SceneExposure Section SeenLeak SimulatedExposure SimulationFiles
+  SimulationOptions SingleFibreCheck Sky SkyLine SlitLayout Spectra SpectraCalibration SpectraFileOptions
+  SpectraProduct SpectraSummary SpectralGrid Spectrograph SpectrumTable StackReport StackedFrame
+  TableOptions Target TargetSpectra Throughput TraceOptions TraceScore Tracing Tramlines
+  TramlinesFileOptions TrueFlux TrueLine Truth Verdict Verification WavelengthFileOptions
+  WavelengthSolution WriteOptions
 `;
 
 const words = (text: string) => text.trim().split(/\s+/);

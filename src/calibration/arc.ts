@@ -15,6 +15,7 @@ import { type Identification, identify } from "./identify.js";
 import type { LineList } from "./lamps.js";
 import { type ArcPeak, findLineCentres } from "./lineCentres.js";
 import { fitLineWidths, type WidthPoint } from "./lineWidths.js";
+import type { Medium } from "./medium.js";
 import { columnAt, dispersionAt, type WavelengthSolution } from "./wavelengths.js";
 
 export interface ArcExposure {
@@ -238,7 +239,7 @@ function noteUse(lines: ArcLine[], { used, residual, dropped, nLine }: Dispersio
   });
 }
 
-function solutionOf(fit: DispersionFit, { nFibre, nx, geometryDigest }: Tramlines, medium: "air" | "vacuum") {
+function solutionOf(fit: DispersionFit, { nFibre, nx, geometryDigest }: Tramlines, medium: Medium) {
   const { degree, legendre, nLine, rms, seenFrom, seenTo, error } = fit;
   return {
     ...{ nFibre, nx, medium, degree, legendre, nLine, rms, seenFrom, seenTo, error, geometryDigest },

@@ -9,6 +9,7 @@
 import { Flag, type Spectra } from "../extraction/spectra.js";
 import { splineCovariances } from "./bspline.js";
 import { CalibrationError } from "./errors.js";
+import type { Medium } from "./medium.js";
 import { fitSky, type Sky } from "./sky.js";
 import { type SkyScales, scaleSky } from "./skyScale.js";
 import type { Throughput } from "./throughput.js";
@@ -34,7 +35,7 @@ export interface Calibrated {
   spectra: Spectra;
   /** nFibre × nx, Å. */
   wavelengths: Float64Array;
-  medium: "air" | "vacuum";
+  medium: Medium;
   /** null: not measured. */
   zeroPoint: FrameZeroPoint | null;
   throughput: Throughput | null;

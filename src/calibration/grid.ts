@@ -8,8 +8,7 @@ import { exp } from "../reference/exp.js";
 import { log } from "../reference/log.js";
 import { medianInPlace } from "../reference/median.js";
 import { CalibrationError } from "./errors.js";
-
-export type Medium = "air" | "vacuum";
+import type { Medium } from "./medium.js";
 
 export interface SpectralGrid {
   kind: "linear" | "log";

@@ -2,9 +2,8 @@
 import { nearestKey } from "../nearestKey.js";
 import { CalibrationError } from "./errors.js";
 import { LAMP_TABLES, type Lamp, tableLines } from "./lampTables.js";
+import type { Medium } from "./medium.js";
 import { airToVacuum, vacuumToAir } from "./refraction.js";
-
-export type Medium = "air" | "vacuum";
 
 /** Lines in rising order of wavelength, a row each. */
 export interface LineList {

@@ -10,7 +10,8 @@
 import { readFile } from "node:fs/promises";
 import { basename } from "node:path";
 import { CalibrationError } from "./errors.js";
-import type { LineList, Medium } from "./lamps.js";
+import type { LineList } from "./lamps.js";
+import type { Medium } from "./medium.js";
 
 const FEWEST = 2;
 const FROM = 2000;

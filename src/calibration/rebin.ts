@@ -2,7 +2,8 @@
  * makes. To be done last and only when a common grid is needed: on their own pixels spectra have independent errors. */
 import { Flag, type Spectra, UNUSABLE } from "../extraction/spectra.js";
 import { median } from "../reference/median.js";
-import { gridEdges, gridWavelength, type Medium, type SpectralGrid } from "./grid.js";
+import { gridEdges, gridWavelength, type SpectralGrid } from "./grid.js";
+import type { Medium } from "./medium.js";
 import { type Overlaps, overlaps, type Reconstruction, rebinCovariance, rebinRow } from "./overlaps.js";
 import { pixelEdges, pixelPositions } from "./pixelEdges.js";
 import type { PixelWavelengths, SpectraProduct } from "./spectraProduct.js";

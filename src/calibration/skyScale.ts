@@ -8,7 +8,7 @@
 import { medianOf } from "../detector/clip.js";
 import type { Spectra } from "../extraction/spectra.js";
 import { type BSpline, splineValues } from "./bspline.js";
-import type { Medium } from "./grid.js";
+import type { Medium } from "./medium.js";
 import { airToVacuum } from "./refraction.js";
 import { isBetween, type SkyLinesSeen } from "./skyCheck.js";
 import { SKY_GROUPS } from "./skyGroups.js";

@@ -14,7 +14,7 @@ import type { Header } from "../fits/header.js";
 import { readImage } from "../fits/image.js";
 import { listHdus } from "../fits/open.js";
 import { type FitsColumn, type FitsTable, readTable } from "../fits/table.js";
-import type { Medium } from "./grid.js";
+import type { Medium } from "./medium.js";
 
 /** Å of every pixel, nFibre × nx; NaN in rows of fibres without a solution. */
 export interface PixelWavelengths {

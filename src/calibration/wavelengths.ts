@@ -4,11 +4,12 @@
  *
  * each fibre with its own Legendre series, whatever fit it came from, so that a reader needs nothing else. */
 import { legendreArgument, legendreValue } from "../reference/legendre.js";
+import type { Medium } from "./medium.js";
 
 export interface WavelengthSolution {
   nFibre: number;
   nx: number;
-  medium: "air" | "vacuum";
+  medium: Medium;
   degree: number;
   /** nFibre × (degree + 1), Å; NaN in rows of fibres without a solution. */
   legendre: Float64Array;

@@ -3,6 +3,7 @@ import { type Command, Option } from "commander";
 import { type ArcExposure, type ArcResult, measureWavelengths } from "../calibration/arc.js";
 import { joinLines, type LineList, lampLines } from "../calibration/lamps.js";
 import { readLineFile } from "../calibration/lineFile.js";
+import type { Medium } from "../calibration/medium.js";
 import { writeWavelengths } from "../calibration/wavelengthFile.js";
 import { extractFrame } from "../extraction/extract.js";
 import type { Header } from "../fits/header.js";
@@ -45,7 +46,7 @@ interface ArcOptions extends FrameOptions, TramlineOptions {
   range?: string[];
   lamps?: string[];
   lines?: string;
-  medium?: "air" | "vacuum";
+  medium?: Medium;
 }
 
 /** What the lines are called by: options before the spectrograph file. */

@@ -1,14 +1,7 @@
 /** hatchel rebin: spectra of all fibres on one wavelength grid. */
 import { type Command, Option } from "commander";
-import {
-  type GridRequest,
-  gridWavelength,
-  LIGHT_SPEED,
-  type Medium,
-  makeGrid,
-  type SpectralGrid,
-} from "../calibration/grid.js";
-import { inMedium } from "../calibration/medium.js";
+import { type GridRequest, gridWavelength, LIGHT_SPEED, makeGrid, type SpectralGrid } from "../calibration/grid.js";
+import { inMedium, type Medium } from "../calibration/medium.js";
 import type { Reconstruction } from "../calibration/overlaps.js";
 import { type RebinnedSpectra, rebinSpectra } from "../calibration/rebin.js";
 import { rebinnedHdus } from "../calibration/rebinFile.js";

@@ -2,6 +2,7 @@
 import { measureWavelengths } from "../calibration/arc.js";
 import { joinLines, type LineList, lampLines } from "../calibration/lamps.js";
 import { readLineFile } from "../calibration/lineFile.js";
+import type { Medium } from "../calibration/medium.js";
 import { readProduct } from "../calibration/spectraProduct.js";
 import { writeWavelengths } from "../calibration/wavelengthFile.js";
 import { oneOfEach } from "../oneOfEach.js";
@@ -44,7 +45,7 @@ export async function makeWavelengths(job: Job): Promise<Facts> {
 
 type Known = NonNullable<Spectrograph["wavelength"]>;
 
-async function lineList({ inputs }: Job, { lamps }: Known, medium: "air" | "vacuum"): Promise<LineList> {
+async function lineList({ inputs }: Job, { lamps }: Known, medium: Medium): Promise<LineList> {
   const [file] = inputs.lines ?? [];
   const own = file === undefined ? [] : [await readLineFile(file.path)];
   return joinLines([...(lamps.length > 0 ? [lampLines(lamps, undefined, medium)] : []), ...own], medium);
