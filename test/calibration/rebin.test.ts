@@ -130,4 +130,22 @@ describe("rebinned spectra", () => {
     // Whole bins of 1.9/1.63 pixels: the sum of their weights' products with the next pixel's, twice.
     expect(joined.variance[middle]).toBeGreaterThan(plain.variance[middle] + 0.02);
   });
+
+  it.each(["rising", "falling"])("say where a bin lies partly off the detector, wavelength %s", (way) => {
+    // Pixels of 2 Å, the outermost ending at 5999 and 6239 Å: bins that lie 5 %, 45 % and wholly beyond either end.
+    const even = image.map((_, i) => (way === "rising" ? 6000 + 2 * (i % nx) : 6238 - 2 * (i % nx)));
+    const ends = (start: number, step: number, n: number) => {
+      const grid: SpectralGrid = { kind: "linear", medium: "air", start, step, n };
+      const { flux, flags } = rebinSpectra({ spectra: make() }, { medium: "air", image: even }, grid).spectra;
+      return [0, n - 1].map((b) => ({ has: !Number.isNaN(flux[b]), flags: flags[b] }));
+    };
+    // Its sound part stands for the rest, and it says so.
+    const little = { has: true, flags: Flag.badPixel };
+    expect(ends(5999.9, 2, 120)).toEqual([little, { has: true, flags: 0 }]);
+    expect(ends(6000.1, 2, 120)).toEqual([{ has: true, flags: 0 }, little]);
+    const much = { has: false, flags: Flag.outside };
+    expect(ends(5999.1, 2, 120)).toEqual([much, { has: true, flags: 0 }]);
+    expect(ends(6000.9, 2, 120)).toEqual([{ has: true, flags: 0 }, much]);
+    expect(ends(5990, 2, 130)).toEqual([much, much]);
+  });
 });

@@ -7,6 +7,7 @@ import { scoreByDecade } from "../../src/report/truth.js";
 import { simulateExposure } from "../../src/simulate/exposure.js";
 import { chooseProfile } from "../../src/tramlines/profiles.js";
 import { linesOf } from "../../src/tramlines/profileTable.js";
+import { measureShift } from "../../src/tramlines/shift.js";
 import type { ShapeProfile, Tramlines } from "../../src/tramlines/tramlines.js";
 import { benchScene, frameOf, weightErrors } from "../tramlines/shape/bench.js";
 import { tramlinesFromTruth } from "./fromTruth.js";
@@ -78,6 +79,26 @@ describe("tramlines and profile made a frame's own", () => {
     expect(adapted.refined).toBe(false);
     expect(adapted.tramlines.profile).toBe(gaussian.profile);
     expect(adapted.shift!.coefficients[0]).toBeLessThan(-0.25);
+  });
+
+  it("find their shift by an arc's few lines, though the columns that are looked at first are dark", () => {
+    const frame = frameOf(exposure);
+    // Light in 80 columns of 300, away from the six places of eight that a sample of twelve groups lies on.
+    const lines = [
+      [30, 60],
+      [185, 212],
+      [232, 258],
+    ];
+    const isLit = (x: number) => lines.some(([from, to]) => x >= from && x < to);
+    const electrons = frame.electrons.map((light, i) => (isLit(i % frame.nx) ? light : 3 * Math.sin(17 * i)));
+    const arc: Frame = { ...frame, name: "arc", electrons };
+    expect(measureShift(kernels, arc, gaussian)).toBeNull();
+    const { shift, warnings } = adaptTramlines(kernels, arc, gaussian, { background: false });
+    expect(warnings.filter((one) => one.includes("too little light"))).toEqual([]);
+    // As the whole frame has it, which a Gaussian profile sees to a few hundredths.
+    const whole = adaptTramlines(kernels, frame, gaussian, { background: false }).shift!;
+    expect(Math.abs(shift!.coefficients[0] - whole.coefficients[0])).toBeLessThan(0.02);
+    expect(Math.abs(shift!.coefficients[0] + 0.3)).toBeLessThan(0.05);
   });
 
   it("say by name that a dark frame cannot tell, and stay", () => {

@@ -4,6 +4,7 @@ import type { Frame } from "../../src/detector/frame.js";
 import { extractFrame } from "../../src/extraction/extract.js";
 import { frameBytes, reserveFrameRoom } from "../../src/kernels/frameRoom.js";
 import { loadKernels } from "../../src/kernels/module.js";
+import { TraceError } from "../../src/tramlines/errors.js";
 import { frameScene } from "./frames.js";
 
 const { frame, tramlines } = frameScene({ seed: 5 }, [2]);
@@ -57,7 +58,11 @@ it("lends the room again after names that do not fit", async () => {
   for (let k = 0; k + 1 < tramlines.nFibre; k++) {
     legendre.copyWithin(k * nTerm, (k + 1) * nTerm, (k + 2) * nTerm);
   }
-  await extractFrame(given, { ...tramlines, legendre }).catch(() => {});
+  const refused = extractFrame(given, { ...tramlines, legendre });
+  await expect(refused).rejects.toThrow(TraceError);
+  await expect(refused).rejects.toThrow(
+    /^scene\.fits: the light would fit better with every fibre one position \w+ than/,
+  );
   const { spectra } = await extractFrame(given, tramlines);
   expect(spectra.flux.buffer).toBe(given.memory!.memory.buffer);
 });
