@@ -44,8 +44,44 @@ export function clampedKnots(breaks: ArrayLike<number>): Float64Array {
 /** The four functions that are not 0 at x (de Boor's recurrence), into `values` [4]. Returns the index of the first, or −1
  * beyond the ends. */
 export function splineBasis(knots: Float64Array, x: number, values: Float64Array): number {
+  const low = cellOf(knots, x, -1);
+  if (low < 0) return -1;
+  fillBasis(knots, low, x, values, 0);
+  return low - DEGREE;
+}
+
+/** The four functions that are not 0 at each of n samples: worth keeping where several fits have the same knots. */
+export interface SplineBases {
+  knots: Float64Array;
+  /** n: index of the first of the four, −1 beyond the ends. */
+  first: Int32Array;
+  /** n × 4. */
+  values: Float64Array;
+}
+
+export function splineBases(knots: Float64Array, x: ArrayLike<number>): SplineBases {
+  const first = new Int32Array(x.length);
+  const values = new Float64Array(x.length * (DEGREE + 1));
+  let low = -1;
+  for (let i = 0; i < x.length; i++) {
+    low = cellOf(knots, x[i], low);
+    first[i] = low < 0 ? -1 : low - DEGREE;
+    if (low >= 0) fillBasis(knots, low, x[i], values, i * (DEGREE + 1));
+  }
+  return { knots, first, values };
+}
+
+/** The last knot that is not above x and begins a cell, −1 beyond the ends; looked for at `near` and beside it first, since samples
+ * mostly come in order. */
+function cellOf(knots: Float64Array, x: number, near: number): number {
   const last = knots.length - DEGREE - 2;
   if (!(x >= knots[DEGREE] && x <= knots[last + 1])) return -1;
+  if (near >= 0) {
+    const to = Math.min(last, near + 1);
+    for (let cell = Math.max(DEGREE, near - 1); cell <= to; cell++) {
+      if (knots[cell] <= x && (cell === last || x < knots[cell + 1])) return cell;
+    }
+  }
   let low = DEGREE;
   let high = last;
   while (low < high) {
@@ -53,19 +89,31 @@ export function splineBasis(knots: Float64Array, x: number, values: Float64Array
     if (knots[middle] <= x) low = middle;
     else high = middle - 1;
   }
-  values[0] = 1;
-  for (let d = 1; d <= DEGREE; d++) {
-    let carried = 0;
-    for (let r = 0; r < d; r++) {
-      const right = knots[low + r + 1];
-      const left = knots[low + 1 - d + r];
-      const share = values[r] / (right - left);
-      values[r] = carried + (right - x) * share;
-      carried = (x - left) * share;
-    }
-    values[d] = carried;
-  }
-  return low - DEGREE;
+  return low;
+}
+
+/** From degree to degree: B_r → B_r (x − t_r)/(t_{r+d} − t_r) + B_{r+1} (t_{r+d+1} − x)/(t_{r+d+1} − t_{r+1}). */
+function fillBasis(knots: Float64Array, low: number, x: number, values: Float64Array, at: number): void {
+  const [left3, left2, left1] = [knots[low - 2], knots[low - 1], knots[low]];
+  const [right1, right2, right3] = [knots[low + 1], knots[low + 2], knots[low + 3]];
+  let share = 1 / (right1 - left1);
+  const line0 = (right1 - x) * share;
+  const line1 = (x - left1) * share;
+  share = line0 / (right1 - left2);
+  const square0 = (right1 - x) * share;
+  let carried = (x - left2) * share;
+  share = line1 / (right2 - left1);
+  const square1 = carried + (right2 - x) * share;
+  const square2 = (x - left1) * share;
+  share = square0 / (right1 - left3);
+  values[at] = (right1 - x) * share;
+  carried = (x - left3) * share;
+  share = square1 / (right2 - left2);
+  values[at + 1] = carried + (right2 - x) * share;
+  carried = (x - left2) * share;
+  share = square2 / (right3 - left1);
+  values[at + 2] = carried + (right3 - x) * share;
+  values[at + 3] = (x - left1) * share;
 }
 
 export function emptyNormal(knots: Float64Array): SplineNormal {
@@ -80,16 +128,24 @@ export function addSamples(
   y: ArrayLike<number>,
   weight: ArrayLike<number>,
 ): void {
-  const values = new Float64Array(DEGREE + 1);
-  const { knots, band, rhs } = normal;
-  for (let i = 0; i < x.length; i++) {
-    if (!(weight[i] > 0)) continue;
-    const first = splineBasis(knots, x[i], values);
-    if (first < 0) continue;
+  addOnBases(normal, splineBases(normal.knots, x), y, weight);
+}
+
+function addOnBases(
+  { band, rhs }: SplineNormal,
+  { first, values }: SplineBases,
+  y: ArrayLike<number>,
+  weight: ArrayLike<number>,
+): void {
+  for (let i = 0; i < first.length; i++) {
+    const from = first[i];
+    if (from < 0 || !(weight[i] > 0)) continue;
+    const at = i * (DEGREE + 1);
     for (let a = 0; a <= DEGREE; a++) {
-      const share = weight[i] * values[a];
-      rhs[first + a] += share * y[i];
-      for (let b = 0; b <= a; b++) band[(first + a) * ROW + a - b] += share * values[b];
+      const share = weight[i] * values[at + a];
+      rhs[from + a] += share * y[i];
+      const diagonal = (from + a) * ROW + a;
+      for (let b = 0; b <= a; b++) band[diagonal - b] += share * values[at + b];
     }
   }
 }
@@ -107,10 +163,18 @@ export function solveNormal({ knots, band, rhs }: SplineNormal): FittedSpline {
   const coef = rhs.slice();
   factorBand(factors, n, REACH);
   solveBand(factors, n, REACH, coef);
-  const covariance = inverseBand(factors, n, REACH);
   // A function that no sample reached: 0 would be a value, and there is none.
   for (let i = 0; i < n; i++) if (factors[i * ROW] === 0) coef[i] = Number.NaN;
-  return { knots, coef, covariance };
+  let covariance: Float64Array | undefined;
+  return {
+    knots,
+    coef,
+    // Fits on the way to another are not asked for it.
+    get covariance() {
+      covariance ??= inverseBand(factors, n, REACH);
+      return covariance;
+    },
+  };
 }
 
 /** Weighted least squares through samples [n]. */
@@ -120,35 +184,53 @@ export function fitSpline(
   y: ArrayLike<number>,
   weight: ArrayLike<number>,
 ): FittedSpline {
-  const normal = emptyNormal(knots);
-  addSamples(normal, x, y, weight);
+  return fitOnBases(splineBases(knots, x), y, weight);
+}
+
+/** The same where the samples' functions are known. */
+export function fitOnBases(bases: SplineBases, y: ArrayLike<number>, weight: ArrayLike<number>): FittedSpline {
+  const normal = emptyNormal(bases.knots);
+  addOnBases(normal, bases, y, weight);
   return solveNormal(normal);
 }
 
 /** s(x) for every x [n]; NaN beyond the ends. */
 export function splineValues({ knots, coef }: BSpline, x: ArrayLike<number>): Float64Array {
-  const values = new Float64Array(DEGREE + 1);
-  return Float64Array.from({ length: x.length }, (_, i) => {
-    const first = splineBasis(knots, x[i], values);
-    if (first < 0) return Number.NaN;
+  return valuesOnBases(splineBases(knots, x), coef);
+}
+
+/** The same where the samples' functions are known. */
+export function valuesOnBases({ first, values }: SplineBases, coef: Float64Array): Float64Array {
+  const out = new Float64Array(first.length);
+  for (let i = 0; i < out.length; i++) {
+    const from = first[i];
+    if (from < 0) {
+      out[i] = Number.NaN;
+      continue;
+    }
     let sum = 0;
-    for (let a = 0; a <= DEGREE; a++) sum += values[a] * coef[first + a];
-    return sum;
-  });
+    for (let a = 0; a <= DEGREE; a++) sum += values[i * (DEGREE + 1) + a] * coef[from + a];
+    out[i] = sum;
+  }
+  return out;
 }
 
 /** Covariance of s(xa_i) with s(xb_i), [n]; their variance when both are the same. NaN beyond the ends. */
 export function splineCovariances(fit: FittedSpline, xa: ArrayLike<number>, xb: ArrayLike<number>): Float64Array {
+  const { knots, coef, covariance } = fit;
   const [a, b] = [new Float64Array(DEGREE + 1), new Float64Array(DEGREE + 1)];
-  return Float64Array.from({ length: xa.length }, (_, i) => {
-    const firstA = splineBasis(fit.knots, xa[i], a);
-    const firstB = splineBasis(fit.knots, xb[i], b);
-    return firstA < 0 || firstB < 0 ? Number.NaN : bilinear(fit, firstA, a, firstB, b);
-  });
+  const out = new Float64Array(xa.length);
+  for (let i = 0; i < out.length; i++) {
+    const firstA = splineBasis(knots, xa[i], a);
+    const firstB = splineBasis(knots, xb[i], b);
+    out[i] = firstA < 0 || firstB < 0 ? Number.NaN : bilinear(covariance, coef, firstA, a, firstB, b);
+  }
+  return out;
 }
 
 function bilinear(
-  { covariance, coef }: FittedSpline,
+  covariance: Float64Array,
+  coef: Float64Array,
   firstA: number,
   a: Float64Array,
   firstB: number,
@@ -168,9 +250,11 @@ function bilinear(
 
 /** Distance of the two knots about each x [n]; NaN beyond the ends. */
 export function cellWidths({ knots }: BSpline, x: ArrayLike<number>): Float64Array {
-  const values = new Float64Array(DEGREE + 1);
-  return Float64Array.from({ length: x.length }, (_, i) => {
-    const first = splineBasis(knots, x[i], values);
-    return first < 0 ? Number.NaN : knots[first + DEGREE + 1] - knots[first + DEGREE];
-  });
+  const out = new Float64Array(x.length);
+  let low = -1;
+  for (let i = 0; i < out.length; i++) {
+    low = cellOf(knots, x[i], low);
+    out[i] = low < 0 ? Number.NaN : knots[low + 1] - knots[low];
+  }
+  return out;
 }

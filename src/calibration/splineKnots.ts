@@ -9,7 +9,14 @@
  * which scatters by less than 1 about 0 if nothing is left; where |z_j| > 3 the cells below B_j are cut to h. Clipping keeps
  * a single wild sample from being taken for a line, which shows in all fibres. Fits weigh by w·min(1, 2.5/|r|·σ) (Huber 1964,
  * Ann. Math. Stat. 35, 73). The limits are choices, tried on simulated nights. */
-import { clampedKnots, type FittedSpline, fitSpline, splineBasis, splineValues } from "./bspline.js";
+import {
+  clampedKnots,
+  type FittedSpline,
+  fitOnBases,
+  type SplineBases,
+  splineBases,
+  valuesOnBases,
+} from "./bspline.js";
 
 const CLIP = 2.5;
 const ASK = 3;
@@ -38,56 +45,65 @@ export function fitAdaptedSpline(
 ): AdaptedSpline {
   const size = new Int32Array(finest.length - 1).fill(2 ** halvings);
   const filled = samplesByCell(samples, finest);
+  const basesNow = () => splineBases(knotsOf(finest, size, filled), samples.x);
   let weight = samples.weight;
-  let fit = robustFit(samples, weight, knotsOf(finest, size, filled));
+  let bases = basesNow();
+  let fit = robustFitOn(bases, samples.y, weight);
   for (let level = halvings - 1; level >= 0; level--) {
+    const width = 2 ** level;
+    const breaks = finest.filter((_, i) => i % width === 0 || i === finest.length - 1);
+    const bumps = splineBases(clampedKnots(breaks), samples.x);
     for (let turn = 0; turn < TURNS; turn++) {
       weight = weigh === undefined ? weight : weigh(fit);
-      const narrowed = narrow(samples, weight, fit, finest, size, 2 ** level);
-      if (narrowed) fit = robustFit(samples, weight, knotsOf(finest, size, filled));
-      else break;
+      if (!narrow(samples.y, weight, valuesOnBases(bases, fit.coef), bumps, size, width)) break;
+      bases = basesNow();
+      fit = robustFitOn(bases, samples.y, weight);
     }
   }
-  return { ...fit, nCell: fit.knots.length - 7 };
+  return Object.assign(fit, { nCell: fit.knots.length - 7 });
 }
 
 /** Three fits, each weighing down what the one before missed. */
 export function robustFit({ x, y }: Samples, weight: Float64Array, knots: Float64Array): FittedSpline {
-  let fit = fitSpline(knots, x, y, weight);
+  return robustFitOn(splineBases(knots, x), y, weight);
+}
+
+function robustFitOn(bases: SplineBases, y: Float64Array, weight: Float64Array): FittedSpline {
+  let fit = fitOnBases(bases, y, weight);
+  const lowered = new Float64Array(weight.length);
   for (let turn = 0; turn < 2; turn++) {
-    const model = splineValues(fit, x);
-    const lowered = weight.map((w, i) => {
+    const model = valuesOnBases(bases, fit.coef);
+    for (let i = 0; i < weight.length; i++) {
+      const w = weight[i];
       const pull = Math.abs(y[i] - model[i]) * Math.sqrt(w);
-      return pull > CLIP ? (w * CLIP) / pull : w;
-    });
-    fit = fitSpline(knots, x, y, lowered);
+      lowered[i] = pull > CLIP ? (w * CLIP) / pull : w;
+    }
+    fit = fitOnBases(bases, y, lowered);
   }
   return fit;
 }
 
-/** Cuts the cells below bumps of width `width` (in finest cells) that the fit left; true if any was. */
+/** Cuts the cells below bumps of width `width` (in finest cells) that the model left; true if any was. */
 function narrow(
-  { x, y }: Samples,
+  y: Float64Array,
   weight: Float64Array,
-  fit: FittedSpline,
-  finest: Float64Array,
+  model: Float64Array,
+  bumps: SplineBases,
   size: Int32Array,
   width: number,
 ): boolean {
-  const breaks = finest.filter((_, i) => i % width === 0 || i === finest.length - 1);
-  const knots = clampedKnots(breaks);
-  const score = new Float64Array(knots.length - 4);
+  const score = new Float64Array(bumps.knots.length - 4);
   const square = new Float64Array(score.length);
-  const model = splineValues(fit, x);
-  const values = new Float64Array(4);
-  for (let i = 0; i < x.length; i++) {
-    const first = weight[i] > 0 && !Number.isNaN(model[i]) ? splineBasis(knots, x[i], values) : -1;
-    if (first < 0) continue;
+  const { values } = bumps;
+  for (let i = 0; i < y.length; i++) {
+    const first = bumps.first[i];
+    if (first < 0 || !(weight[i] > 0) || Number.isNaN(model[i])) continue;
     const root = Math.sqrt(weight[i]);
     const pull = Math.max(-CLIP, Math.min(CLIP, (y[i] - model[i]) * root));
     for (let a = 0; a < 4; a++) {
-      score[first + a] += pull * root * values[a];
-      square[first + a] += weight[i] * values[a] * values[a];
+      const value = values[4 * i + a];
+      score[first + a] += pull * root * value;
+      square[first + a] += weight[i] * value * value;
     }
   }
   let any = false;

@@ -8,6 +8,7 @@ import {
   emptyNormal,
   fitSpline,
   solveNormal,
+  splineBases,
   splineBasis,
   splineCovariances,
   splineValues,
@@ -104,5 +105,19 @@ describe("splines", () => {
       1.25,
       Number.NaN,
     ]);
+  });
+});
+
+describe("functions of many samples at once", () => {
+  it("are those of each sample alone, in whatever order and with gaps", () => {
+    const mixed = Float64Array.from({ length: 400 }, (_, i) => (i % 7 === 0 ? x[(i * 31) % x.length] : 0.5 + i / 28));
+    mixed.set([1, 14.25, Number.NaN, 0, 15, 7, 4.5], 50);
+    const bases = splineBases(knots, mixed);
+    const one = new Float64Array(4);
+    mixed.forEach((at, i) => {
+      const first = splineBasis(knots, at, one);
+      expect(bases.first[i]).toBe(first);
+      if (first >= 0) expect(bases.values.slice(4 * i, 4 * i + 4)).toEqual(one);
+    });
   });
 });
