@@ -89,8 +89,8 @@ test.each(["sci_01", "sci_02"])(
       const spread = 1.4826 * median(pulls[kind].map(Math.abs));
       expect(pulls[kind].length, kind).toBeGreaterThan(500);
       expect(spread, kind).toBeGreaterThan(0.95);
-      // Five sky fibres place the samples of a line no closer than half a column: a spline through them errs a little there.
-      expect(spread, kind).toBeLessThan(kind === "lines" ? 1.2 : 1.15);
+      // At lines 1.14 without scaling: what more there is than noise has no certain cause yet.
+      expect(spread, kind).toBeLessThan(1.15);
     }
   },
 );
