@@ -22,15 +22,21 @@ export interface FixedVariance {
 export function fixedVariance({ nx, flux, variance, flags }: Spectra, fibre: number): FixedVariance {
   const from = fibre * nx;
   const usable = (i: number) => (flags[i] & UNUSABLE) === 0 && variance[i] > 0 && Number.isFinite(flux[i]);
-  const given = Float64Array.from({ length: nx }, (_, x) => (usable(from + x) ? variance[from + x] : Number.NaN));
+  const given = new Float64Array(nx).fill(Number.NaN);
+  const beyondLight = new Float64Array(nx);
+  for (let x = 0; x < nx; x++) {
+    if (!usable(from + x)) continue;
+    given[x] = variance[from + x];
+    beyondLight[x] = Math.max(given[x] - Math.max(flux[from + x], 0), 0);
+  }
   const near = new Float64Array(2 * HALF_WIDTH + 1);
-  const fixed = Float64Array.from({ length: nx }, (_, x) => {
+  const fixed = new Float64Array(nx);
+  for (let x = 0; x < nx; x++) {
+    const to = Math.min(nx - 1, x + HALF_WIDTH);
     let n = 0;
-    for (let i = Math.max(0, x - HALF_WIDTH); i <= Math.min(nx - 1, x + HALF_WIDTH); i++) {
-      if (given[i] > 0) near[n++] = Math.max(given[i] - Math.max(flux[from + i], 0), 0);
-    }
-    return quantileInPlace(near, 0.5, n);
-  });
+    for (let i = Math.max(0, x - HALF_WIDTH); i <= to; i++) if (given[i] > 0) near[n++] = beyondLight[i];
+    fixed[x] = quantileInPlace(near, 0.5, n);
+  }
   return { fixed, given };
 }
 

@@ -122,13 +122,17 @@ function narrow(
 
 /** Samples with weight below each finest break: [nFine + 1], rising. */
 function samplesByCell({ x, weight }: Samples, finest: Float64Array): Int32Array {
+  const last = finest.length - 1;
   const below = new Int32Array(finest.length);
-  const sorted = x.filter((_, i) => weight[i] > 0).sort();
-  let n = 0;
-  for (let i = 0; i < finest.length; i++) {
-    while (n < sorted.length && (sorted[n] < finest[i] || (i === finest.length - 1 && sorted[n] <= finest[i]))) n++;
-    below[i] = n;
+  let cell = 1;
+  for (let i = 0; i < x.length; i++) {
+    if (!(weight[i] > 0 && x[i] <= finest[last])) continue;
+    // The first break above it; neighbouring samples mostly lie in neighbouring cells.
+    while (cell > 0 && x[i] < finest[cell - 1]) cell--;
+    while (cell < last && x[i] >= finest[cell]) cell++;
+    below[cell]++;
   }
+  for (let i = 1; i <= last; i++) below[i] += below[i - 1];
   return below;
 }
 

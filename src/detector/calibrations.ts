@@ -262,7 +262,9 @@ function stackFlats(frames: RoleStack, made: Calibrations): PixelResponse {
 }
 
 function withoutValue(image: Float32Array): Uint8Array {
-  return Uint8Array.from(image, (value) => (Number.isNaN(value) ? MaskBit.missing : 0));
+  const mask = new Uint8Array(image.length);
+  for (let at = 0; at < mask.length; at++) if (Number.isNaN(image[at])) mask[at] = MaskBit.missing;
+  return mask;
 }
 
 function levelOf(frame: Assembled): number {

@@ -13,7 +13,8 @@ export function sortedFinite(values: ArrayLike<number>): Float64Array {
   return finite(values).sort();
 }
 
-function finite(values: ArrayLike<number>): Float64Array {
+/** Finite values, in their order. */
+export function finite(values: ArrayLike<number>): Float64Array {
   const kept = new Float64Array(values.length);
   let n = 0;
   for (let i = 0; i < values.length; i++) {

@@ -33,16 +33,18 @@ export function combineFrames(frames: StackFrame[], nx: number, ny: number, phot
   const clipped = new Float64Array(frames.length);
   const pixel = new PixelStack(frames.length, photons, kappa);
   let nPixel = 0;
+  const electrons = frames.map((frame) => frame.electrons);
+  const masks = frames.map((frame) => frame.mask);
+  const scales = Float64Array.from(frames, ({ scale }) => scale);
   frames[0].regions.forEach((region, k) => {
+    const readVariances = Float64Array.from(frames, ({ regions }) => regions[k].readVariance);
     for (let y = region.y0; y < region.y1; y++) {
       for (let at = y * nx + region.x0; at < y * nx + region.x1; at++) {
         nPixel++;
         pixel.clear();
         for (let i = 0; i < frames.length; i++) {
-          const value = frames[i].electrons[at];
-          if (frames[i].mask[at] === 0 && Number.isFinite(value)) {
-            pixel.add(i, value, frames[i].scale, frames[i].regions[k].readVariance);
-          }
+          const value = electrons[i][at];
+          if (masks[i][at] === 0 && Number.isFinite(value)) pixel.add(i, value, scales[i], readVariances[i]);
         }
         if (pixel.n === 0) continue;
         pixel.combine(clipped);

@@ -1,6 +1,6 @@
 /** Levels of a picture in a few numbers: what a person looks at first, and what the sanity checks judge by. */
 import type { Assembled } from "./assemble.js";
-import { quantileOfSorted, sortedFinite, thinned } from "./clip.js";
+import { finite, quantileInPlace, thinned } from "./clip.js";
 
 export interface Levels {
   /** e⁻ above the zero level: 1, 5, 50, 95 and 99 % of the pixels lie below. */
@@ -14,8 +14,8 @@ export interface Levels {
 }
 
 export function levelsOf(frame: Assembled): Levels {
-  const sorted = sortedFinite(thinned(frame.electrons));
-  const at = (q: number) => quantileOfSorted(sorted, q);
+  const values = finite(thinned(frame.electrons));
+  const at = (q: number) => quantileInPlace(values, q);
   return {
     p1: at(0.01),
     p5: at(0.05),

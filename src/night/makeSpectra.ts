@@ -10,7 +10,7 @@ import { neglectedShare, sumFibres, type Target } from "../extraction/targets.js
 import type { OutputHdu } from "../fits/encode.js";
 import { readImage } from "../fits/image.js";
 import { oneOfEach } from "../oneOfEach.js";
-import { median } from "../reference/median.js";
+import { medianInPlace } from "../reference/median.js";
 import { summariseSpectra } from "../report/summary.js";
 import type { Tramlines } from "../tramlines/tramlines.js";
 import { correctionLines, openCorrection, openTramlines } from "./correction.js";
@@ -90,7 +90,12 @@ function spectraFacts(frame: Frame, tramlines: Tramlines, extraction: Extraction
 
 /** e⁻ per column: median over the usable points of all fibres. */
 function medianFlux({ flux, flags }: Spectra): number {
-  return median(Array.from(flux).filter((value, i) => (flags[i] & UNUSABLE) === 0 && Number.isFinite(value)));
+  const values = new Float64Array(flux.length);
+  let n = 0;
+  for (let i = 0; i < flux.length; i++) {
+    if ((flags[i] & UNUSABLE) === 0 && Number.isFinite(flux[i])) values[n++] = flux[i];
+  }
+  return medianInPlace(values, n);
 }
 
 /** JSON has no NaN. */
